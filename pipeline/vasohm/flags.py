@@ -1,0 +1,90 @@
+"""Every flag once: its code as it stands in the tables, and what it tells the reader."""
+
+from enum import IntFlag
+
+import numpy as np
+
+from vasohm.arrays import AnyArray, IntArray
+
+
+class Flag(IntFlag):
+    """Codes of doubt, one bit each, so that arrays of them can be combined."""
+
+    NONE = 0
+    # points and segments
+    UNRESOLVED = 1 << 0
+    RIM = 1 << 1
+    FAINT = 1 << 2
+    BLURRED = 1 << 3
+    SHORT = 1 << 4
+    INFERRED = 1 << 5
+    TIGHT_BEND = 1 << 6
+    LAW_RANGE = 1 << 7
+    NO_FLOW = 1 << 8
+    CLIPPED = 1 << 9
+    STEEP_WALL = 1 << 10
+    SELF_LOOP = 1 << 11
+    # networks
+    NO_INLET = 1 << 16
+    NO_OUTLET = 1 << 17
+    NO_TERMINALS = 1 << 18
+    MESH = 1 << 19
+    TERMINALS_JOINED = 1 << 20
+    # images
+    TERMINAL_MISSED = 1 << 32
+    EDIT_MISSED = 1 << 33
+    ORIENTATION_TAG = 1 << 34
+    PIXEL_SIZE_SE_UNKNOWN = 1 << 35
+    INVALID_PIXELS = 1 << 36
+    SATURATED = 1 << 37
+    BLANK = 1 << 38
+    SCALE_CONFLICT = 1 << 39
+    BLUR_ASSUMED = 1 << 40
+    PROFILE_ASSUMED = 1 << 41
+    OUT_OF_FOCUS = 1 << 42
+    ASSUMED_BLUR_SPREAD = 1 << 43
+
+
+MEANING: dict[Flag, str] = {
+    Flag.UNRESOLVED: "too thin for the pixel size and blur: the radius is known to worse than 25 %",
+    Flag.RIM: "cut by the field of view or the picture's border",
+    Flag.FAINT: "contrast below three times the noise",
+    Flag.BLURRED: "edges softer than the image's own blur explains: out of focus or two vessels in one",
+    Flag.SHORT: "shorter than its own width: its radius borrows from its neighbours",
+    Flag.INFERRED: "radius interpolated from neighbouring points, not measured here",
+    Flag.TIGHT_BEND: "a bend of less than 5 px radius: the smoothed length is too short here",
+    Flag.LAW_RANGE: "radius or hematocrit outside the range in which the viscosity law was fitted",
+    Flag.NO_FLOW: "dead end, closed ring or balanced bridge: no flow passes",
+    Flag.CLIPPED: "intensities at the limit of the file's scale along the vessel",
+    Flag.STEEP_WALL: "wall slope above 0.09: local Poiseuille flow is more than 1 % off",
+    Flag.SELF_LOOP: "leaves and returns at the same node",
+    Flag.NO_INLET: "no place where blood enters: no resistance",
+    Flag.NO_OUTLET: "no place where blood leaves: no resistance",
+    Flag.NO_TERMINALS: "inlets and outlets are not known: no resistance",
+    Flag.MESH: "the network has loops: inlets and outlets cannot be told from its shape",
+    Flag.TERMINALS_JOINED: "several inlets or outlets were joined to one pressure",
+    Flag.TERMINAL_MISSED: "a terminal of the terminals file is not near any vessel end and was left out",
+    Flag.EDIT_MISSED: "an edit of the edits file is not near any vessel and was left out",
+    Flag.ORIENTATION_TAG: "the file carries an orientation tag; coordinates are those of the stored picture",
+    Flag.PIXEL_SIZE_SE_UNKNOWN: "no uncertainty of the pixel size was given; intervals do not hold one",
+    Flag.INVALID_PIXELS: "pixels that are not finite were taken out of the field of view",
+    Flag.SATURATED: "more than 1 % of the field of view is at the limit of the file's scale",
+    Flag.BLANK: "the picture holds no contrast above its noise",
+    Flag.SCALE_CONFLICT: "the file contradicts the typed pixel size; the typed one was used as the study asks",
+    Flag.BLUR_ASSUMED: "the image cannot tell its own blur; an assumed value was used",
+    Flag.PROFILE_ASSUMED: "the image cannot tell how its vessels are imaged; an assumed profile was used",
+    Flag.OUT_OF_FOCUS: "the blur is wider than the thinnest vessels asked for",
+    Flag.ASSUMED_BLUR_SPREAD: "the uncertainty of the blur is an assumption",
+}
+
+
+def code(flag: Flag) -> str:
+    """Return the code of one flag as it stands in tables."""
+    return str(flag.name).lower()
+
+
+def codes(bits: IntArray) -> AnyArray:
+    """Turn an integer array of combined flags into texts such as ``"rim;short"``; empty where nothing is wrong."""
+    values, where = np.unique(np.asarray(bits, dtype=np.int64), return_inverse=True)
+    texts = [";".join(code(flag) for flag in MEANING if value & flag) for value in values.tolist()]
+    return np.array(texts, dtype=object)[where.reshape(np.shape(bits))]
