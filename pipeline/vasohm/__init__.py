@@ -1,0 +1,1 @@
+"""Vascular resistance with honest uncertainty, from images of vessel beds."""
