@@ -3,6 +3,10 @@
 from dataclasses import dataclass
 from enum import IntEnum
 
+import numpy as np
+from scipy.sparse import coo_array
+from scipy.sparse.csgraph import connected_components
+
 from vasohm.arrays import FloatArray, IntArray, freeze
 
 
@@ -75,3 +79,21 @@ class VesselGraph:
     @property
     def n_points(self) -> int:
         return len(self.x_px)
+
+
+def label_networks(graph: VesselGraph) -> tuple[IntArray, IntArray]:
+    """Number the connected networks from 0 in the order of their first segment.
+
+    Returns
+    -------
+    (n_nodes,) and (n_segments,) int: the network of each node and of each segment. Every node has a segment.
+    """
+    if graph.n_segments == 0:
+        return np.zeros(graph.n_nodes, np.int64), np.zeros(0, np.int64)
+    links = coo_array((np.ones(graph.n_segments), (graph.node_a, graph.node_b)), shape=(graph.n_nodes,) * 2)
+    _, label = connected_components(links, directed=False)
+    _, first = np.unique(label[graph.node_a], return_index=True)
+    order = np.empty(len(first), np.int64)
+    order[np.argsort(first)] = np.arange(len(first))
+    node_network = order[label]
+    return node_network, node_network[graph.node_a]
