@@ -6,10 +6,11 @@ from typing import Any, TypeAlias
 import numpy as np
 from numpy.typing import NDArray
 
-FloatArray: TypeAlias = NDArray[np.float64]
-Float32Array: TypeAlias = NDArray[np.float32]
-IntArray: TypeAlias = NDArray[np.int64]
-BoolArray: TypeAlias = NDArray[np.bool_]
+# The names tell the reader the dtype; numpy's operators lose it too often for a checker to hold it.
+FloatArray: TypeAlias = NDArray[Any]
+Float32Array: TypeAlias = NDArray[Any]
+IntArray: TypeAlias = NDArray[Any]
+BoolArray: TypeAlias = NDArray[Any]
 AnyArray: TypeAlias = NDArray[Any]
 
 

@@ -3,8 +3,16 @@
 from dataclasses import dataclass
 from typing import Literal
 
-from vasohm.arrays import BoolArray, Float32Array, freeze
+import numpy as np
+from scipy import ndimage
+
+from vasohm.arrays import AnyArray, BoolArray, Float32Array, freeze
+from vasohm.errors import ImageError
 from vasohm.flags import Flag
+from vasohm.image.calibrate import ScaledImage
+from vasohm.image.fov import find_field_of_view, mirror_outside
+from vasohm.image.noise import noise_against_brightness
+from vasohm.image.read import RawImage
 
 
 @dataclass(frozen=True, slots=True)
@@ -22,7 +30,6 @@ class ImageQuality:
     """What image.csv says about the picture; intensities in units of `signal`."""
 
     noise: float  # median standard deviation of a pixel of `signal`
-    contrast: float  # NaN until vessels were found
     saturated_fraction: float
     invalid_fraction: float
     exposure_ok: bool
@@ -32,13 +39,14 @@ class ImageQuality:
 class PreparedImage:
     """One channel, ready to be searched; all arrays (h, w).
 
-    `signal` is proportional to the vessel's effect on the light path (for dark vessels the optical density
-    -ln(I / background), for bright ones I - background, in units of the file), about 0 beside vessels,
-    positive in them, and mirrored outside the field of view. `noise_sd` is its pixel standard deviation.
+    `signal` is about 0 beside vessels, positive in them, linear in light (dark vessels: 1 - I / background, the share
+    of light taken away; bright ones: I - background, in units of the file), and mirrored outside the field of view.
+    `noise_sd` is its pixel standard deviation; `picture` the measured channel in 8 bits, for showing only.
     """
 
     signal: Float32Array
     noise_sd: Float32Array
+    picture: AnyArray
     fov: BoolArray
     clipped: BoolArray
     pixel_size_um: float
@@ -50,3 +58,164 @@ class PreparedImage:
 
     def __post_init__(self) -> None:
         freeze(self)
+
+
+LUMINANCE = (0.299, 0.587, 0.114)  # ITU-R BT.601, the weights of JPEG
+CHANNELS = {"red": 0, "green": 1, "blue": 2}
+INVALID_MARGIN_PX = 2  # a pixel beside one that is not finite has been touched by it
+BACKGROUND_RADII = 3.0  # the background is smoothed over this many times the largest vessel radius
+BACKGROUND_LEAST_PX = 16.0
+BACKGROUND_GRID = 4  # the background is smooth: computed on blocks of this edge
+SATURATED_LIMIT = 0.01
+BLANK_SPREAD = 1e-9  # relative spread below which all pixels are one value
+
+
+def prepare(scaled: ScaledImage, settings: PrepareSettings, fov: BoolArray | None) -> PreparedImage:
+    """Choose the channel, find the field of view, flatten the background, and learn the noise.
+
+    Parameters
+    ----------
+    scaled : the picture with its pixel size.
+    settings : channel, polarity, gamma, radii looked for.
+    fov : (h, w) bool field of view given by a person, or None to find it.
+
+    Raises
+    ------
+    ImageError : no finite pixel, or a channel that the picture does not have.
+
+    Notes
+    -----
+    Dark vessels: signal = 1 - I / background, the share of light that the vessel takes away. Blur acts on light, so a
+    blurred absorbing tube keeps its exact profile in this unit, which it does not in optical density. Bright vessels:
+    signal = I - background, in units of the file.
+    """
+    raw = scaled.raw
+    brightness, invalid = _brightness(raw, settings)
+    clipped = _clipped(raw, settings)
+    dark = settings.polarity == "dark"
+    inside = find_field_of_view(brightness, vessels_are_dark=dark) if fov is None else fov
+    valid = inside & ~invalid
+    if not valid.any():
+        msg = "the field of view is empty. Check fov_file, or the picture, which may be black."
+        raise ImageError(msg)
+    sigma = max(BACKGROUND_LEAST_PX, BACKGROUND_RADII * settings.radius_um[1] / scaled.pixel_size_um)
+    background = _background(brightness, valid, sigma, dark=dark)
+    signal = 1 - brightness / background if dark else brightness - background
+    smooth = ndimage.gaussian_filter(brightness, 1.5, mode="nearest")
+    step = 1.0 if raw.white_level is not None else 0.0
+    base, slope = noise_against_brightness(brightness, smooth, valid & ~clipped, step)
+    noise_sd = np.sqrt(base + slope * np.maximum(smooth, 0))
+    if dark:
+        noise_sd = noise_sd / background
+    saturated = float(clipped[valid].mean())
+    flags = scaled.flags | raw.flags
+    if invalid.any():
+        flags |= Flag.INVALID_PIXELS
+    if saturated > SATURATED_LIMIT:
+        flags |= Flag.SATURATED
+    quality = ImageQuality(
+        noise=float(np.median(noise_sd[valid])),
+        saturated_fraction=saturated,
+        invalid_fraction=float(invalid.mean()),
+        exposure_ok=saturated <= SATURATED_LIMIT and not _is_blank(brightness, valid),
+    )
+    if _is_blank(brightness, valid):
+        flags |= Flag.BLANK
+    return PreparedImage(
+        signal=mirror_outside(signal.astype(np.float32), valid),
+        noise_sd=noise_sd.astype(np.float32),
+        picture=_picture(brightness, valid),
+        fov=valid,
+        clipped=clipped,
+        pixel_size_um=scaled.pixel_size_um,
+        pixel_size_se_um=scaled.pixel_size_se_um,
+        pixel_size_source=scaled.pixel_size_source,
+        quality=quality,
+        notes=raw.notes,
+        flags=flags,
+    )
+
+
+def _brightness(raw: RawImage, settings: PrepareSettings) -> tuple[Float32Array, BoolArray]:
+    """Return one channel, linear in light, finite everywhere, and where it was not."""
+    pixels = raw.pixels
+    if pixels.ndim == 2:
+        channel = pixels.astype(np.float32)
+    elif settings.channel == "luminance":
+        channel = pixels[..., :3].astype(np.float32) @ np.array(LUMINANCE, dtype=np.float32)
+    else:
+        index = CHANNELS.get(str(settings.channel), settings.channel)
+        if not isinstance(index, int) or index >= pixels.shape[2]:
+            msg = f"channel {settings.channel!r} asked for, but the picture has {pixels.shape[2]}. Set [image] channel."
+            raise ImageError(msg)
+        channel = pixels[..., index].astype(np.float32)
+    invalid = ~np.isfinite(channel)
+    if invalid.all():
+        msg = "no pixel is a finite number."
+        raise ImageError(msg)
+    if invalid.any():
+        channel = np.where(invalid, np.float32(np.median(channel[~invalid])), channel)
+        invalid = ndimage.binary_dilation(invalid, iterations=INVALID_MARGIN_PX)
+    if settings.gamma != 1:
+        top = raw.white_level or float(channel.max()) or 1.0
+        channel = top * np.clip(channel / top, 0, None) ** settings.gamma
+    return np.asarray(channel, dtype=np.float32), np.asarray(invalid, dtype=bool)
+
+
+def _clipped(raw: RawImage, settings: PrepareSettings) -> BoolArray:
+    """Where the stored value is at the top of the file's scale (or at its bottom, for dark vessels)."""
+    if raw.white_level is None:
+        return np.zeros(raw.pixels.shape[:2], dtype=bool)
+    pixels = raw.pixels
+    if pixels.ndim == 3:
+        index = CHANNELS.get(str(settings.channel), settings.channel)
+        pixels = pixels[..., index] if isinstance(index, int) else pixels.max(axis=2)
+    at_top = pixels >= raw.white_level
+    return np.asarray(at_top | (pixels <= 0) if settings.polarity == "dark" else at_top, dtype=bool)
+
+
+def _is_blank(brightness: Float32Array, valid: BoolArray) -> bool:
+    inside = brightness[valid]
+    return bool(np.ptp(inside) <= BLANK_SPREAD * max(1.0, float(np.abs(inside).max())))
+
+
+def _background(brightness: Float32Array, valid: BoolArray, sigma: float, *, dark: bool) -> Float32Array:
+    """Smooth background from the pixels that are not vessels, inside the field of view only."""
+    grid = BACKGROUND_GRID
+    weight = _block_mean(valid.astype(np.float32), grid)
+    level = _block_mean(np.where(valid, brightness, 0), grid)
+    level = np.divide(level, weight, out=np.zeros_like(level), where=weight > 0)
+    towards = -1.0 if dark else 1.0
+    keep = weight.copy()
+    smooth = level
+    for _ in range(3):
+        spread = ndimage.gaussian_filter(keep, sigma / grid, mode="nearest", truncate=3)
+        smooth = ndimage.gaussian_filter(level * keep, sigma / grid, mode="nearest", truncate=3)
+        smooth = np.divide(smooth, spread, out=np.zeros_like(smooth), where=spread > 1e-4)
+        excess = towards * (level - smooth)
+        used = keep > 0
+        limit = 1.0 * 1.4826 * np.median(np.abs(excess[used])) if used.any() else 0.0
+        keep = np.where(excess > limit, 0, weight)
+    reach = ndimage.gaussian_filter(keep, sigma / grid, mode="nearest", truncate=3) > 1e-4
+    if not reach.all() and reach.any():
+        near = ndimage.distance_transform_edt(~reach, return_distances=False, return_indices=True)
+        smooth = smooth[tuple(near)]
+    full = ndimage.zoom(smooth, grid, order=1, mode="nearest", grid_mode=True)
+    full = full[: brightness.shape[0], : brightness.shape[1]]
+    if dark:
+        full = np.maximum(full, 1e-3 * max(float(np.percentile(brightness[valid], 95)), 1e-30))
+    return np.asarray(full, dtype=np.float32)
+
+
+def _block_mean(values: Float32Array, grid: int) -> Float32Array:
+    height, width = values.shape
+    padded = np.pad(values, ((0, -height % grid), (0, -width % grid)), mode="edge")
+    blocks = padded.reshape(padded.shape[0] // grid, grid, padded.shape[1] // grid, grid)
+    return np.asarray(blocks.mean(axis=(1, 3)), dtype=np.float32)
+
+
+def _picture(brightness: Float32Array, valid: BoolArray) -> AnyArray:
+    """Stretch the measured channel to 8 bits for pictures of the results."""
+    low, high = np.percentile(brightness[valid], [0.5, 99.5])
+    shown = np.clip((brightness - low) / max(float(high - low), 1e-30), 0, 1)
+    return np.where(valid, np.round(255 * shown), 0).astype(np.uint8)

@@ -1,9 +1,19 @@
 """From a prepared picture to a vessel mask, by a registered method."""
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from importlib.metadata import EntryPoint, entry_points
+from typing import Any
+
+import numpy as np
 
 from vasohm.arrays import BoolArray, freeze
+from vasohm.errors import ImageError, PluginError
+from vasohm.image.prepare import PreparedImage
+from vasohm.image.segmenters import hessian, ridge
+
+ENTRY_POINTS = "vasohm.segmenters"
+FULL_SHARE = 0.98  # of the field: a mask that holds everything holds no vessel
 
 
 @dataclass(frozen=True, slots=True)
@@ -25,3 +35,91 @@ class VesselMask:
 
     def __post_init__(self) -> None:
         freeze(self)
+
+
+@dataclass(frozen=True, slots=True)
+class Segmenter:
+    """A method that finds vessels: `find(prepared, parameters) -> bool mask (h, w)`, and where it was published."""
+
+    find: Callable[[PreparedImage, Mapping[str, float]], BoolArray]
+    citation: str
+
+
+SEGMENTERS = {
+    "ridge": Segmenter(ridge.segment_ridges, ridge.CITATION),
+    "hessian": Segmenter(hessian.segment_hessian, hessian.CITATION),
+}
+MASK_METHOD = "mask"  # the sheet's mask_file
+
+
+def segmenter_names() -> tuple[str, ...]:
+    """Names that a study may give as `[segment] method`; plug-ins are named without being imported."""
+    return (*SEGMENTERS, MASK_METHOD, *sorted(point.name for point in entry_points(group=ENTRY_POINTS)))
+
+
+def segment(prepared: PreparedImage, settings: SegmentSettings, given: BoolArray | None) -> VesselMask:
+    """Find the vessels of a prepared picture.
+
+    Parameters
+    ----------
+    prepared : the prepared picture.
+    settings : the method and what it looks for.
+    given : (h, w) bool mask made elsewhere; it is used instead of segmentation.
+
+    Raises
+    ------
+    PluginError : the method is not registered, fails to load, or returns something else than a mask.
+    ImageError : method "mask" without a mask, or a mask that covers the whole field of view.
+    """
+    if given is not None:
+        return _checked(given & prepared.fov, prepared, "mask_file")
+    if settings.method == MASK_METHOD:
+        msg = 'method = "mask" needs a mask_file in the image sheet for this image.'
+        raise ImageError(msg)
+    if not np.any(prepared.signal):
+        return VesselMask(np.zeros(prepared.fov.shape, dtype=bool), settings.method)
+    pixel = prepared.pixel_size_um
+    parameters = {
+        **settings.parameters,
+        "radius_lo_px": settings.radius_um[0] / pixel,
+        "radius_hi_px": settings.radius_um[1] / pixel,
+        "false_alarms_per_mpx": settings.false_alarms_per_mpx,
+    }
+    mask = get_segmenter(settings.method).find(prepared, parameters)
+    if not isinstance(mask, np.ndarray) or mask.shape != prepared.fov.shape or mask.dtype != np.bool_:
+        msg = f"segmenter {settings.method!r} must return a bool array of shape {prepared.fov.shape}."
+        raise PluginError(msg)
+    return _checked(mask & prepared.fov, prepared, settings.method)
+
+
+def get_segmenter(name: str) -> Segmenter:
+    """Look a segmenter up by name, importing a plug-in only now that a study asks for it."""
+    if name in SEGMENTERS:
+        return SEGMENTERS[name]
+    found = [point for point in entry_points(group=ENTRY_POINTS) if point.name == name]
+    if not found:
+        msg = f"segmenter {name!r} is not registered; known are {', '.join(segmenter_names())}."
+        raise PluginError(msg)
+    loaded = _load(found[0])
+    return loaded if isinstance(loaded, Segmenter) else Segmenter(loaded, "no source given")
+
+
+def _load(point: EntryPoint) -> Any:
+    try:
+        loaded = point.load()
+    except Exception as error:
+        owner = point.dist.name if point.dist else "unknown distribution"
+        msg = f"segmenter {point.name!r} of {owner} ({point.value}) does not load: {error}"
+        raise PluginError(msg) from error
+    if not callable(loaded) and not isinstance(loaded, Segmenter):
+        msg = f"segmenter {point.name!r} ({point.value}) is neither a function nor a Segmenter."
+        raise PluginError(msg)
+    return loaded
+
+
+def _checked(mask: BoolArray, prepared: PreparedImage, source: str) -> VesselMask:
+    share = mask.sum() / prepared.fov.sum()
+    if share > FULL_SHARE:
+        msg = f"the vessel mask covers {share:.0%} of the field of view: no background is left to measure against."
+        raise ImageError(msg)
+    return VesselMask(mask, source)

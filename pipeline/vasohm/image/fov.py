@@ -1,0 +1,65 @@
+"""The field of view: where the picture holds tissue, and a fill outside that draws no edge."""
+
+import numpy as np
+from scipy import ndimage
+
+from vasohm.arrays import BoolArray, Float32Array
+
+BLACK_SHARE = 0.12  # of the bright level: a mask or the camera's housing is darker than this, tissue is not
+LEAST_OUTSIDE = 0.005  # of the picture: less than this is dark tissue or dead pixels, no housing
+MIRROR_INSET_PX = 4  # the border itself is shaded; mirrors stand this much further in
+
+
+def find_field_of_view(brightness: Float32Array, *, vessels_are_dark: bool) -> BoolArray:
+    """Find the part of the picture that is not masked off in black.
+
+    Parameters
+    ----------
+    brightness : (h, w) float32, finite, bigger is brighter.
+    vessels_are_dark : with dark vessels the tissue is bright, so a dark border region is outside; with bright
+        vessels dark tissue is normal, and only a border region at exactly the lowest value is outside.
+
+    Returns
+    -------
+    (h, w) bool, True inside; all True where no such region exists.
+    """
+    lowest = float(brightness.min())
+    if vessels_are_dark:
+        smooth = ndimage.uniform_filter(brightness, 5, mode="nearest")
+        dark = smooth < lowest + BLACK_SHARE * (float(np.percentile(smooth, 90)) - lowest)
+    else:
+        dark = ndimage.binary_opening(brightness <= lowest, iterations=3)
+    labels, count = ndimage.label(dark)
+    if count == 0:
+        return np.ones(brightness.shape, dtype=bool)
+    at_border = np.unique(np.concatenate((labels[0], labels[-1], labels[:, 0], labels[:, -1])))
+    outside = np.isin(labels, at_border[at_border > 0])
+    share = outside.mean()
+    if share < LEAST_OUTSIDE or share > 1 - LEAST_OUTSIDE:
+        return np.ones(brightness.shape, dtype=bool)
+    return _largest_filled(~outside)
+
+
+def _largest_filled(inside: BoolArray) -> BoolArray:
+    labels, count = ndimage.label(inside)
+    if count > 1:
+        inside = labels == 1 + np.argmax(np.bincount(labels.ravel())[1:])
+    return np.asarray(ndimage.binary_fill_holes(inside), dtype=bool)
+
+
+def mirror_outside(values: Float32Array, fov: BoolArray) -> Float32Array:
+    """Fill what is outside the field of view with its mirror image, so that filters see no edge there."""
+    if fov.all():
+        return values
+    core = ndimage.distance_transform_edt(fov) > MIRROR_INSET_PX
+    if not core.any():
+        core = fov
+    y, x = np.nonzero(~core)
+    near = ndimage.distance_transform_edt(~core, return_distances=False, return_indices=True)
+    near_y, near_x = near[0][y, x].astype(np.int64), near[1][y, x].astype(np.int64)
+    height, width = fov.shape
+    mirror_y, mirror_x = np.clip(2 * near_y - y, 0, height - 1), np.clip(2 * near_x - x, 0, width - 1)
+    lands = core[mirror_y, mirror_x]
+    filled = values.copy()
+    filled[y, x] = values[np.where(lands, mirror_y, near_y), np.where(lands, mirror_x, near_x)]
+    return filled

@@ -1,0 +1,63 @@
+"""The noise of a picture as a function of its brightness, read from the picture itself."""
+
+import numpy as np
+from scipy import ndimage
+
+from vasohm.arrays import BoolArray, Float32Array, FloatArray
+
+# Immerkaer, Comput Vis Image Underst 1996;64:300: the difference of two Laplacians is blind to planes; its gain is 6
+LAPLACIAN_DIFFERENCE = np.outer([1.0, -2.0, 1.0], [1.0, -2.0, 1.0])
+GAIN = 6.0
+MAD_TO_SD = 1 / 0.6744897501960817  # of a normal distribution
+BRIGHTNESS_BINS = 12
+LEAST_IN_BIN = 50
+
+
+def noise_against_brightness(
+    brightness: Float32Array, smooth: Float32Array, valid: BoolArray, step: float
+) -> tuple[float, float]:
+    """Fit the variance of a pixel as a + b x brightness, both non-negative.
+
+    Parameters
+    ----------
+    brightness, smooth : (h, w) the picture and a smoothed copy that tells the expected brightness.
+    valid : (h, w) bool, where pixels count.
+    step : grey step of the file (0 for floats): rounding alone gives a variance of step^2 / 12.
+
+    Returns
+    -------
+    a (file units squared) and b (file units).
+    """
+    floor = step**2 / 12
+    inside = ndimage.binary_erosion(valid, iterations=2)
+    if inside.sum() < LEAST_IN_BIN:
+        return max(floor, _least_variance(brightness)), 0.0
+    residual = np.abs(ndimage.convolve(brightness, LAPLACIAN_DIFFERENCE.astype(np.float32), mode="nearest"))
+    residual, level = residual[inside] / GAIN, smooth[inside]
+    edges = np.quantile(level, np.linspace(0, 1, BRIGHTNESS_BINS + 1))
+    which = np.clip(np.searchsorted(edges, level, side="right") - 1, 0, BRIGHTNESS_BINS - 1)
+    order = np.argsort(which, kind="stable")
+    groups = np.split(order, np.searchsorted(which[order], np.arange(1, BRIGHTNESS_BINS)))
+    groups = [group for group in groups if len(group) >= LEAST_IN_BIN]
+    variance = np.array([(np.median(residual[group]) * MAD_TO_SD) ** 2 for group in groups])
+    mean = np.array([np.median(level[group]) for group in groups])
+    base, slope = _line(mean, variance)
+    return max(base, floor, _least_variance(brightness)), slope
+
+
+def _least_variance(brightness: Float32Array) -> float:
+    """Return a variance below which float rounding rules; keeps noise-free pictures divisible."""
+    return float((1e-6 * max(float(np.ptp(brightness)), 1e-30)) ** 2)
+
+
+def _line(x: FloatArray, y: FloatArray) -> tuple[float, float]:
+    """Median-of-slopes line (Theil 1950, Sen 1968) with slope and intercept kept non-negative."""
+    if len(x) < 2 or np.ptp(x) == 0:
+        return float(np.median(y)), 0.0
+    i, j = np.triu_indices(len(x), 1)
+    apart = x[j] != x[i]
+    slope = max(0.0, float(np.median((y[j] - y[i])[apart] / (x[j] - x[i])[apart])))
+    base = float(np.median(y - slope * x))
+    if base < 0:
+        return 0.0, max(0.0, float(np.median(y / np.maximum(x, 1e-30))))
+    return base, slope

@@ -1,0 +1,119 @@
+"""Checks of ridge lines on their own averaged cross-profile, and the ribbons that become the vessel mask."""
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy import ndimage, sparse
+from scipy.spatial import cKDTree
+
+from vasohm.arrays import BoolArray, Float32Array, FloatArray, IntArray, freeze
+from vasohm.image.ridges import RidgePixels
+
+AVERAGING_PASSES = 12  # of a three-point mean along the line: a window of about +-5 px
+WEAKER_SIDE = 0.3  # of the stronger: below it is the edge of something, not a vessel
+HOLLOW = 0.8  # of the contrast missing in the middle: two vessels side by side, not one
+HALF_WIDTH_RATIO = 1.2  # the wider half may not exceed this x the narrower: a neighbour stands in the way
+LEAST_HALF_WIDTH_PX = 0.7
+NEIGHBOUR_PX = 1.5  # ridge pixels of one line are no further apart
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Ribbon:
+    """Half width at half height on the averaged profile of each ridge pixel, and whether it looks like a vessel."""
+
+    half_width_px: FloatArray
+    contrast: FloatArray  # of the weaker side, in units of the picture
+    is_vessel: BoolArray
+
+    def __post_init__(self) -> None:
+        freeze(self)
+
+
+def measure_ribbons(image: Float32Array, lines: RidgePixels, reach_px: FloatArray) -> Ribbon:
+    """Measure each ridge pixel on cross-profiles averaged along its line.
+
+    Parameters
+    ----------
+    image : (h, w) the picture in which the lines were found, on the same grid.
+    lines : ridge pixels.
+    reach_px : how far each profile looks to either side, in pixels of this grid.
+    """
+    n = len(lines.row)
+    if n == 0:
+        nothing = np.zeros(0)
+        return Ribbon(nothing, nothing, np.zeros(0, dtype=bool))
+    half = int(np.ceil(reach_px.max()))
+    sides = _averaged_sides(image, lines, half)
+    offsets = np.arange(half + 1)
+    visible = offsets[None, :] <= np.maximum(np.tile(reach_px, 2), 3)[:, None]
+    masked = np.where(visible, sides, np.inf)
+    lowest_at = masked.argmin(axis=1)
+    base = masked[np.arange(2 * n), lowest_at]
+    core = np.maximum(1, np.tile(lines.sigma_px, 2) * 0.75)[:, None]
+    inner = np.where(offsets[None, :] <= core, sides, -np.inf).max(axis=1)
+    peak = np.tile(np.maximum(inner[:n], inner[n:]), 2)
+    middle = np.minimum(sides[:n, 0], sides[n:, 0])
+    width = _half_width(sides, lowest_at, (peak + base) / 2)
+    left, right = width[:n], width[n:]
+    narrow = np.minimum(left, right)
+    half_width = np.minimum((left + right) / 2, HALF_WIDTH_RATIO * narrow + 0.5)
+    height = (peak - base).reshape(2, n)
+    weaker, stronger = height.min(axis=0), height.max(axis=0)
+    hollow = (peak[:n] - middle) / np.maximum(stronger, 1e-12)
+    is_vessel = (weaker >= WEAKER_SIDE * stronger) & (hollow <= HOLLOW) & (weaker > 0)
+    return Ribbon(np.maximum(half_width, LEAST_HALF_WIDTH_PX), weaker, is_vessel)
+
+
+def _averaged_sides(image: Float32Array, lines: RidgePixels, half: int) -> FloatArray:
+    """Profiles (2 n, half + 1) outwards from the ridge, first all on the normal's side, then all on the other.
+
+    Neighbours along a line are averaged side by side: where the normals of two neighbours point opposite ways, the
+    left side of one belongs to the right side of the other.
+    """
+    n = len(lines.row)
+    out = np.arange(half + 1)
+    direction = np.repeat([1.0, -1.0], n)[:, None] * out[None, :]
+    x = np.tile(lines.x_px, 2)[:, None] + direction * np.tile(lines.normal_x, 2)[:, None]
+    y = np.tile(lines.y_px, 2)[:, None] + direction * np.tile(lines.normal_y, 2)[:, None]
+    sides = ndimage.map_coordinates(image, [y, x], order=1, mode="mirror", output=np.float64)
+    pairs = cKDTree(np.column_stack((lines.row, lines.column))).query_pairs(NEIGHBOUR_PX, output_type="ndarray")
+    i, j = pairs[:, 0], pairs[:, 1]
+    same = lines.normal_x[i] * lines.normal_x[j] + lines.normal_y[i] * lines.normal_y[j] >= 0
+    first = np.concatenate((i, i + n))
+    second = np.concatenate((np.where(same, j, j + n), np.where(same, j + n, j)))
+    links = sparse.coo_array((np.ones(len(first)), (first, second)), shape=(2 * n, 2 * n)).tocsr()
+    links = links + links.T + sparse.eye_array(2 * n, format="csr")
+    links = sparse.diags_array(1 / links.sum(axis=1)) @ links
+    for _ in range(AVERAGING_PASSES):
+        sides = links @ sides
+    return sides
+
+
+def _half_width(sides: FloatArray, lowest_at: IntArray, level: FloatArray) -> FloatArray:
+    """Distance at which a profile, walked inwards from its lowest place, first rises to the level."""
+    offsets = np.arange(sides.shape[1])
+    high = (sides >= level[:, None]) & (offsets[None, :] <= lowest_at[:, None])
+    last = sides.shape[1] - 1 - high[:, ::-1].argmax(axis=1)
+    found = high.any(axis=1) & (last < lowest_at)
+    last = np.where(found, last, 0)
+    rows = np.arange(len(sides))
+    inner, outer = sides[rows, last], sides[rows, np.minimum(last + 1, sides.shape[1] - 1)]
+    fall = np.maximum(inner - outer, 1e-12)
+    return np.where(found, last + np.clip((inner - level) / fall, 0, 1), LEAST_HALF_WIDTH_PX)
+
+
+def paint(shape: tuple[int, int], x_px: FloatArray, y_px: FloatArray, radius_px: FloatArray) -> BoolArray:
+    """Union of discs with sub-pixel centres."""
+    mask = np.zeros(shape, dtype=bool)
+    size = np.ceil(radius_px).astype(np.int64)
+    for reach in np.unique(size):
+        these = np.nonzero(size == reach)[0]
+        span = np.arange(-reach - 1, reach + 2)
+        row = np.rint(y_px[these]).astype(np.int64)[:, None, None] + span[None, :, None]
+        column = np.rint(x_px[these]).astype(np.int64)[:, None, None] + span[None, None, :]
+        distance2 = (row - y_px[these, None, None]) ** 2 + (column - x_px[these, None, None]) ** 2
+        inside = distance2 <= radius_px[these, None, None] ** 2
+        inside &= (row >= 0) & (row < shape[0]) & (column >= 0) & (column < shape[1])
+        where = np.nonzero(inside)
+        mask[row[where[0], where[1], 0], column[where[0], 0, where[2]]] = True
+    return mask

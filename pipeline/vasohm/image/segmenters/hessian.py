@@ -1,0 +1,31 @@
+"""The published baseline: a Hessian ridge filter with one threshold, for comparison."""
+
+from collections.abc import Mapping
+
+import numpy as np
+from skimage.filters import apply_hysteresis_threshold, sato
+from skimage.morphology import remove_small_objects
+
+from vasohm.arrays import BoolArray
+from vasohm.image.prepare import PreparedImage
+
+CITATION = "Sato Y et al., Med Image Anal 1998;2:143-168, doi:10.1016/S1361-8415(98)80009-1"
+
+MAD_TO_SD = 1 / 0.6744897501960817
+LOW, HIGH = 4.0, 8.0  # in robust standard deviations of the filter's own response
+LEAST_PX = 20
+N_SCALES = 5
+LARGEST_SIGMA_PX = 8.0
+
+
+def segment_hessian(prepared: PreparedImage, parameters: Mapping[str, float]) -> BoolArray:
+    """Find vessels with the Sato filter and hysteresis; parameters as in the default segmenter."""
+    even = prepared.signal / np.maximum(prepared.noise_sd, np.float32(1e-30))
+    lowest = max(1.0, 0.6 * parameters["radius_lo_px"])
+    highest = min(LARGEST_SIGMA_PX, max(lowest * 1.5, 0.6 * parameters["radius_hi_px"]))
+    response = sato(even, sigmas=np.geomspace(lowest, highest, N_SCALES), black_ridges=False)
+    inside = response[prepared.fov]
+    unit = MAD_TO_SD * float(np.median(np.abs(inside - np.median(inside)))) or 1.0
+    level = (response - np.median(inside)) / unit
+    mask = apply_hysteresis_threshold(np.where(prepared.fov, level, 0), LOW, HIGH)
+    return np.asarray(remove_small_objects(mask, max_size=LEAST_PX), dtype=bool)
