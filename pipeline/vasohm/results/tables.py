@@ -2,17 +2,36 @@
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from typing import Any, Protocol
 
 import networkx as nx
+import numpy as np
 import pandas as pd
 
-from vasohm.arrays import AnyArray, BoolArray
+from vasohm.arrays import AnyArray, BoolArray, FloatArray, IntArray
+from vasohm.flags import Flag, codes
+from vasohm.flow.hydraulics import NetworkFlow
+from vasohm.image.prepare import PreparedImage
+from vasohm.image.segment import VesselMask
+from vasohm.network.graph import NodeKind, VesselClass
+from vasohm.network.morphometry import Morphometry
+from vasohm.network.radius import MeasuredGraph
+from vasohm.results.handed_graph import hand_out_graph
+from vasohm.results.schema import column_names, image_columns
+from vasohm.uncertainty import ln_interval, quadrature
+from vasohm.units import UM_PER_MM
+
+KIND_WORDS = np.array([kind.name.lower() for kind in NodeKind], dtype=object)
+CLASS_WORDS = np.array(["", *(kind.name.lower() for kind in VesselClass if kind)], dtype=object)
+ROLE_WORDS = np.array(["outlet", "", "inlet"], dtype=object)  # role -1, 0, +1
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class ImageTables:
-    """All that one image gives. `tables` has the keys image, networks, segments, nodes, points, branchings, crossings,
-    scenarios; each frame has all its columns, also without rows.
+    """All that one image gives.
+
+    `tables` has the keys image, networks, segments, nodes, points, branchings, crossings, scenarios; each frame has all
+    its columns, also without rows. Missing numbers are NaN, missing texts are empty.
     """
 
     image_id: str
@@ -23,3 +42,336 @@ class ImageTables:
     picture: AnyArray  # (h, w) uint8, the measured channel stretched for showing
     pixel_size_um: float
     notes: tuple[str, ...]
+
+    @property
+    def image(self) -> pd.DataFrame:
+        return self.tables["image"]
+
+    @property
+    def networks(self) -> pd.DataFrame:
+        return self.tables["networks"]
+
+    @property
+    def segments(self) -> pd.DataFrame:
+        return self.tables["segments"]
+
+    @property
+    def nodes(self) -> pd.DataFrame:
+        return self.tables["nodes"]
+
+    @property
+    def points(self) -> pd.DataFrame:
+        return self.tables["points"]
+
+    @property
+    def branchings(self) -> pd.DataFrame:
+        return self.tables["branchings"]
+
+    @property
+    def crossings(self) -> pd.DataFrame:
+        return self.tables["crossings"]
+
+    @property
+    def scenarios(self) -> pd.DataFrame:
+        return self.tables["scenarios"]
+
+
+class ScenarioOutcomes(Protocol):
+    """One entry a network and scenario; network indices count from 0, NaN where undefined."""
+
+    network: IntArray
+    scenario: tuple[str, ...]
+    n_segments_changed: IntArray
+    resistance_before_pa_s_m3: FloatArray
+    resistance_after_pa_s_m3: FloatArray
+    ratio: FloatArray
+    ratio_lo: FloatArray
+    ratio_hi: FloatArray
+    flags: IntArray
+
+
+@dataclass(frozen=True, slots=True)
+class DiscPlace:
+    """Where the optic disc lies, in pixels, and who said so: sheet or image."""
+
+    x_px: float
+    y_px: float
+    radius_px: float
+    source: str
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Findings:
+    """What the stages found in one image."""
+
+    prepared: PreparedImage
+    mask: VesselMask
+    measured: MeasuredGraph
+    flow: NetworkFlow
+    shape: Morphometry
+    scenarios: ScenarioOutcomes
+
+
+def tabulate(
+    image_id: str, design: Mapping[str, str], findings: Findings, disc: DiscPlace | None = None
+) -> ImageTables:
+    """Lay out what was found in one image as the tables of the contract.
+
+    Parameters
+    ----------
+    image_id : the image's name in the sheet.
+    design : the sheet's own columns of this image, in the sheet's order.
+    findings : the nouns of all stages.
+    disc : where the optic disc lies, or None; without one its columns are absent.
+
+    Returns
+    -------
+    Tables with all their columns; ids are indices plus 1. `status` is "empty" where there is no segment.
+
+    Raises
+    ------
+    DomainError : a column of the sheet has the name of an output column.
+    """
+    frames = {
+        "networks": _networks(findings),
+        "segments": _segments(findings),
+        "nodes": _nodes(findings),
+        "points": _points(findings.measured),
+        "branchings": _branchings(findings.shape),
+        "crossings": _crossings(findings.measured),
+        "scenarios": _scenarios(findings.scenarios),
+    }
+    tables = {table: _framed(table, image_id, columns) for table, columns in frames.items()}
+    status = "measured" if findings.measured.graph.n_segments else "empty"
+    image = _image(findings)
+    image.update({"image_id": image_id, "status": status})
+    if disc is not None:
+        image.update(disc_x_px=disc.x_px, disc_y_px=disc.y_px, disc_radius_px=disc.radius_px, disc_source=disc.source)
+    image.update(design)
+    names = [column.name for column in image_columns(design, with_disc=disc is not None)]
+    tables["image"] = pd.DataFrame({name: [image[name]] for name in names})
+    return ImageTables(
+        image_id=image_id,
+        status=status,
+        tables=tables,
+        graph=hand_out_graph(image_id, tables["nodes"], tables["segments"]),
+        mask=findings.mask.pixels,
+        picture=findings.prepared.picture,
+        pixel_size_um=findings.prepared.pixel_size_um,
+        notes=findings.prepared.notes + findings.flow.terminals.notes,
+    )
+
+
+def _framed(table: str, image_id: str, columns: Mapping[str, AnyArray]) -> pd.DataFrame:
+    """Put the columns in the order of the schema, with the image's id before them."""
+    n = len(next(iter(columns.values())))
+    named = {"image_id": np.full(n, image_id, dtype=object), **columns}
+    return pd.DataFrame({name: named[name] for name in column_names(table)})
+
+
+def _segments(findings: Findings) -> dict[str, AnyArray]:
+    measured, flow, shape = findings.measured, findings.flow, findings.shape
+    graph = measured.graph
+    ln_se = quadrature(flow.ln_resistance_random_se, flow.ln_resistance_shared_se)
+    low, high = ln_interval(flow.resistance_pa_s_m3, ln_se)
+    pixel_se_um = measured.length_um * _pixel_rel_se(measured)
+    return {
+        "segment_id": _ids(graph.n_segments),
+        "network_id": shape.segment_network + 1,
+        "node_a": graph.node_a + 1,
+        "node_b": graph.node_b + 1,
+        "vessel_class": CLASS_WORDS[graph.vessel_class],
+        "class_probability": graph.class_probability,
+        "n_points": np.diff(graph.offsets),
+        "length_um": measured.length_um,
+        "length_se_um": quadrature(measured.length_random_se_um, pixel_se_um),
+        "chord_um": measured.chord_um,
+        "tortuosity": shape.tortuosity,
+        "radius_mean_um": shape.radius_mean_um,
+        "radius_sd_um": shape.radius_sd_um,
+        "radius_hydraulic_um": flow.radius_hydraulic_um,
+        "radius_hydraulic_se_um": quadrature(flow.radius_hydraulic_random_se_um, flow.radius_hydraulic_shared_se_um),
+        "hematocrit": flow.hematocrit,
+        "viscosity_mpa_s": flow.viscosity_mpa_s,
+        "resistance_pa_s_m3": flow.resistance_pa_s_m3,
+        "resistance_lo_pa_s_m3": low,
+        "resistance_hi_pa_s_m3": high,
+        "ln_resistance_random_se": flow.ln_resistance_random_se,
+        "ln_resistance_shared_se": flow.ln_resistance_shared_se,
+        "flow_nl_min": flow.flow_nl_min,
+        "pressure_a_mmhg": flow.pressure_mmhg[graph.node_a],
+        "pressure_b_mmhg": flow.pressure_mmhg[graph.node_b],
+        "wall_shear_pa": flow.wall_shear_pa,
+        "resistance_share": flow.share,
+        "flags": codes(graph.segment_flags | measured.segment_flags | flow.segment_flags),
+    }
+
+
+def _points(measured: MeasuredGraph) -> dict[str, AnyArray]:
+    graph = measured.graph
+    n_points = np.diff(graph.offsets)
+    shared_se = np.sqrt(np.sum(np.square(measured.shared), axis=1))
+    pixel_se = np.full(graph.n_points, _pixel_rel_se(measured))
+    return {
+        "segment_id": np.repeat(_ids(graph.n_segments), n_points),
+        "point": np.arange(graph.n_points) - np.repeat(graph.offsets[:-1], n_points) + 1,
+        "s_um": measured.s_um,
+        "x_px": graph.x_px,
+        "y_px": graph.y_px,
+        "radius_um": measured.radius_um,
+        "radius_se_um": measured.radius_um * quadrature(measured.ln_radius_random_se, shared_se, pixel_se),
+        "contrast": measured.contrast,
+        "flags": codes(measured.point_flags),
+    }
+
+
+def _nodes(findings: Findings) -> dict[str, AnyArray]:
+    graph, flow = findings.measured.graph, findings.flow
+    ends = np.concatenate([graph.node_a, graph.node_b])
+    return {
+        "node_id": _ids(graph.n_nodes),
+        "network_id": findings.shape.node_network + 1,
+        "x_px": graph.node_x_px,
+        "y_px": graph.node_y_px,
+        "kind": KIND_WORDS[graph.node_kind],
+        "degree": np.bincount(ends, minlength=graph.n_nodes),
+        "role": ROLE_WORDS[flow.terminals.role + 1],
+        "pressure_mmhg": flow.pressure_mmhg,
+    }
+
+
+def _networks(findings: Findings) -> dict[str, AnyArray]:
+    measured, flow, shape = findings.measured, findings.flow, findings.shape
+    graph, terminals = measured.graph, flow.terminals
+    n = len(shape.network_length_um)
+    ln_se = quadrature(flow.network_ln_resistance_random_se, flow.network_ln_resistance_shared_se)
+    low, high = ln_interval(flow.network_resistance_pa_s_m3, ln_se)
+    vessel_class, probability = _network_class(measured, shape)
+    node_network = shape.node_network
+    return {
+        "network_id": _ids(n),
+        "vessel_class": vessel_class,
+        "class_probability": probability,
+        "n_segments": np.bincount(shape.segment_network, minlength=n),
+        "n_branchings": np.bincount(node_network[graph.node_kind == NodeKind.BRANCHING], minlength=n),
+        "n_inlets": np.bincount(node_network[terminals.role > 0], minlength=n),
+        "n_outlets": np.bincount(node_network[terminals.role < 0], minlength=n),
+        "terminals": np.array(terminals.source, dtype=object),
+        "length_um": shape.network_length_um,
+        "area_um2": shape.network_area_um2,
+        "volume_um3": shape.network_volume_um3,
+        "loops": shape.network_loops,
+        "resistance_pa_s_m3": flow.network_resistance_pa_s_m3,
+        "resistance_lo_pa_s_m3": low,
+        "resistance_hi_pa_s_m3": high,
+        "ln_resistance_random_se": flow.network_ln_resistance_random_se,
+        "ln_resistance_shared_se": flow.network_ln_resistance_shared_se,
+        "flow_nl_min": flow.network_flow_nl_min,
+        "flags": codes(terminals.network_flags | flow.network_flags),
+    }
+
+
+def _network_class(measured: MeasuredGraph, shape: Morphometry) -> tuple[AnyArray, FloatArray]:
+    """Return the class of more than half of each network's length, and its mean probability over that length."""
+    graph, network = measured.graph, shape.segment_network
+    n = len(shape.network_length_um)
+    total = np.bincount(network, measured.length_um, minlength=n)
+    words = np.full(n, "", dtype=object)
+    probability = np.full(n, np.nan)
+    for kind in VesselClass:
+        if kind == VesselClass.NONE:
+            continue
+        length = np.where(graph.vessel_class == kind, measured.length_um, 0.0)
+        held = np.bincount(network, length, minlength=n)
+        most = 2 * held > total
+        weight = np.bincount(network, length * np.nan_to_num(graph.class_probability), minlength=n)
+        words[most] = CLASS_WORDS[kind]
+        probability[most] = weight[most] / held[most]
+    return words, probability
+
+
+def _branchings(shape: Morphometry) -> dict[str, AnyArray]:
+    found = shape.branchings
+    return {
+        "node_id": found.node + 1,
+        "network_id": shape.node_network[found.node] + 1,
+        "parent_segment": found.parent + 1,
+        "child_1_segment": found.child_1 + 1,
+        "child_2_segment": found.child_2 + 1,
+        "radius_parent_um": found.radius_parent_um,
+        "radius_child_1_um": found.radius_child_1_um,
+        "radius_child_2_um": found.radius_child_2_um,
+        "angle_1_deg": found.angle_1_deg,
+        "angle_2_deg": found.angle_2_deg,
+        "angle_total_deg": found.angle_1_deg + found.angle_2_deg,
+        "area_ratio": found.area_ratio,
+        "asymmetry": found.asymmetry,
+        "junction_exponent": found.junction_exponent,
+        "flags": codes(found.flags),
+    }
+
+
+def _crossings(measured: MeasuredGraph) -> dict[str, AnyArray]:
+    found = measured.graph.crossings
+    return {
+        "x_px": found.x_px,
+        "y_px": found.y_px,
+        "segment_over": found.segment_over + 1,
+        "segment_under": found.segment_under + 1,
+        "probability": found.probability,
+    }
+
+
+def _scenarios(outcomes: ScenarioOutcomes) -> dict[str, AnyArray]:
+    return {
+        "network_id": outcomes.network + 1,
+        "scenario": np.array(outcomes.scenario, dtype=object),
+        "n_segments_changed": outcomes.n_segments_changed,
+        "resistance_before_pa_s_m3": outcomes.resistance_before_pa_s_m3,
+        "resistance_after_pa_s_m3": outcomes.resistance_after_pa_s_m3,
+        "ratio": outcomes.ratio,
+        "ratio_lo": outcomes.ratio_lo,
+        "ratio_hi": outcomes.ratio_hi,
+        "flags": codes(outcomes.flags),
+    }
+
+
+def _image(findings: Findings) -> dict[str, Any]:
+    prepared, measured, shape = findings.prepared, findings.measured, findings.shape
+    kind = measured.graph.node_kind
+    flags = prepared.flags | measured.flags | findings.flow.terminals.flags
+    height, width = prepared.signal.shape
+    return {
+        "width_px": width,
+        "height_px": height,
+        "pixel_size_um": prepared.pixel_size_um,
+        "pixel_size_se_um": prepared.pixel_size_se_um,
+        "pixel_size_source": prepared.pixel_size_source,
+        "fov_area_um2": shape.fov_area_um2,
+        "vessel_area_um2": shape.vessel_area_um2,
+        "vessel_area_fraction": shape.vessel_area_um2 / shape.fov_area_um2,
+        "length_um": shape.length_um,
+        "length_density_per_mm": shape.length_um / shape.fov_area_um2 * UM_PER_MM,
+        "n_segments": measured.graph.n_segments,
+        "n_branchings": int(np.sum(kind == NodeKind.BRANCHING)),
+        "n_ends": int(np.sum(kind == NodeKind.END)),
+        "n_networks": len(shape.network_length_um),
+        "radius_mean_um": shape.radius_mean_um_image,
+        "tortuosity_mean": shape.tortuosity_mean,
+        "box_dimension": shape.box_dimension,
+        "blur_px": measured.blur_px,
+        "noise": prepared.quality.noise,
+        "contrast": measured.image_contrast,
+        "focus_ok": None if np.isnan(measured.blur_px) else Flag.OUT_OF_FOCUS not in flags,
+        "exposure_ok": prepared.quality.exposure_ok,
+        "flags": codes(np.array([int(flags)]))[0],
+    }
+
+
+def _ids(n: int) -> IntArray:
+    return np.arange(1, n + 1, dtype=np.int64)
+
+
+def _pixel_rel_se(measured: MeasuredGraph) -> float:
+    """Return 0 where nobody told the pixel size's uncertainty; a flag of the image says so."""
+    return 0.0 if np.isnan(measured.pixel_size_rel_se) else measured.pixel_size_rel_se

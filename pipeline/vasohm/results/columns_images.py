@@ -1,0 +1,104 @@
+"""Columns of the tables that sum up: image, networks, scenarios, failures."""
+
+from vasohm.results.column import Column, count, number, text, truth
+from vasohm.results.columns_vessels import CLASSES, FLAGS, IMAGE_ID, LN_RANDOM_SE, LN_SHARED_SE, NETWORK_ID
+
+IMAGE: tuple[Column, ...] = (
+    IMAGE_ID,
+    text(
+        "status",
+        "measured; or empty, where no vessel was found. Failed images stand in failures.csv.",
+        ("measured", "empty"),
+    ),
+    count("width_px", "Columns of the stored picture.", "{pixel}"),
+    count("height_px", "Rows of the stored picture.", "{pixel}"),
+    number("pixel_size_um", "um", "Edge of a pixel."),
+    number("pixel_size_se_um", "um", "Standard uncertainty of the pixel size (k = 1); empty where nobody told it."),
+    text("pixel_size_source", "Where the pixel size comes from: the sheet, the study, or a carrier in the file."),
+    number("fov_area_um2", "um2", "Area of the field of view."),
+    number("vessel_area_um2", "um2", "Area of the vessel mask inside the field of view."),
+    number("vessel_area_fraction", "1", "Vessel area over the area of the field of view."),
+    number("length_um", "um", "Length of all segments together."),
+    number("length_density_per_mm", "/mm", "Length of all segments over the area of the field of view."),
+    count("n_segments", "Number of vessel segments in the image."),
+    count("n_branchings", "Number of nodes in the image where vessels branch."),
+    count("n_ends", "Number of vessel ends inside the field of view; those cut by its rim are not counted."),
+    count("n_networks", "Number of connected networks in the image."),
+    number("radius_mean_um", "um", "Mean lumen radius over all segments, weighted by length."),
+    number("tortuosity_mean", "1", "Mean tortuosity over all segments, weighted by length."),
+    number(
+        "box_dimension",
+        "1",
+        "Box-counting dimension of the vessels. Depends on resolution and field of view: compare within one set-up.",
+    ),
+    number("blur_px", "{pixel}", "Standard deviation of the Gaussian blur of the picture."),
+    number("noise", "{signal}", "Median standard deviation of a pixel's noise, in the units of contrast."),
+    number(
+        "contrast", "{signal}", "Typical strength with which the image's vessels stand out, in the units of points.csv."
+    ),
+    truth("focus_ok", "The blur is not wider than the thinnest vessels asked for; empty where the blur is not known."),
+    truth("exposure_ok", "At most 1 % of the field of view is at the limit of the file's scale, and it is not blank."),
+    FLAGS,
+)
+
+DISC: tuple[Column, ...] = (
+    number("disc_x_px", "{pixel}", "Centre of the optic disc, to the right."),
+    number("disc_y_px", "{pixel}", "Centre of the optic disc, downwards."),
+    number("disc_radius_px", "{pixel}", "Radius of the optic disc."),
+    text("disc_source", "Where the optic disc comes from: the sheet or the image."),
+)
+
+NETWORKS: tuple[Column, ...] = (
+    IMAGE_ID,
+    NETWORK_ID,
+    text("vessel_class", "Class that holds more than half of the network's length; empty where none does.", CLASSES),
+    number(
+        "class_probability", "1", "Mean probability, weighted by length, that segments of the network's class have it."
+    ),
+    count("n_segments", "Number of segments of the network."),
+    count("n_branchings", "Number of nodes of the network where vessels branch."),
+    count("n_inlets", "Number of nodes of the network where blood enters."),
+    count("n_outlets", "Number of nodes of the network where blood leaves."),
+    text(
+        "terminals",
+        "How inlets and outlets are known: file, from the terminals file; auto, from the network's shape and class; "
+        "estimated; or none, and then there is no resistance.",
+        ("file", "auto", "none", "estimated"),
+    ),
+    number("length_um", "um", "Length of the network's segments together."),
+    number("area_um2", "um2", "Area of the network in the picture: twice the radius, integrated over length."),
+    number("volume_um3", "um3", "Lumen volume of the network: pi times the squared radius, integrated over length."),
+    count("loops", "Number of independent closed loops: segments - nodes + 1."),
+    number(
+        "resistance_pa_s_m3",
+        "Pa.s/m3",
+        "Resistance of the network: pressure at the joined inlets minus that at the joined outlets, over total flow; "
+        "with unequal terminals, dissipated power over squared total inflow.",
+    ),
+    number("resistance_lo_pa_s_m3", "Pa.s/m3", "Lower bound of the 95 % interval of the network's resistance."),
+    number("resistance_hi_pa_s_m3", "Pa.s/m3", "Upper bound of the 95 % interval of the network's resistance."),
+    LN_RANDOM_SE,
+    LN_SHARED_SE,
+    number("flow_nl_min", "nL/min", "Total flow that enters the network at the pressure that the study asks for."),
+    FLAGS,
+)
+
+SCENARIOS: tuple[Column, ...] = (
+    IMAGE_ID,
+    NETWORK_ID,
+    text("scenario", "Name of the scenario in the study file."),
+    count("n_segments_changed", "Number of segments of the network whose radius the scenario changes."),
+    number("resistance_before_pa_s_m3", "Pa.s/m3", "Resistance of the network as measured."),
+    number("resistance_after_pa_s_m3", "Pa.s/m3", "Resistance of the network with the changed radii."),
+    number("ratio", "1", "Resistance after the change over that before."),
+    number("ratio_lo", "1", "Lower bound of the 95 % interval of the ratio."),
+    number("ratio_hi", "1", "Upper bound of the 95 % interval of the ratio."),
+    FLAGS,
+)
+
+FAILURES: tuple[Column, ...] = (
+    IMAGE_ID,
+    text("stage", "Stage of the measurement that did not come to an end."),
+    text("error", "Code of the error; stable between versions."),
+    text("message", "What was wrong, which value, and what to do about it."),
+)

@@ -1,0 +1,159 @@
+"""Columns of the tables that hold the vessels: segments, points, nodes, branchings, crossings."""
+
+from vasohm.results.column import Column, count, number, text
+
+CLASSES = ("arteriole", "venule", "capillary")
+
+IMAGE_ID = text("image_id", "The image, as named in the image sheet.")
+NETWORK_ID = count("network_id", "The connected network, numbered from 1 in the order of its first segment.")
+SEGMENT_ID = count("segment_id", "The vessel segment between two nodes, numbered from 1 within the image.")
+NODE_ID = count("node_id", "The node, numbered from 1 within the image.")
+X = number("x_px", "{pixel}", "Position to the right; centre of the first pixel is 0.")
+Y = number("y_px", "{pixel}", "Position downwards; centre of the first pixel is 0.")
+FLAGS = Column(
+    "flags",
+    "list",
+    "",
+    "Codes of what is doubtful, joined by semicolons; empty where nothing is wrong. Each code's meaning is listed "
+    "with the results.",
+)
+LN_RANDOM_SE = number(
+    "ln_resistance_random_se",
+    "1",
+    "Standard uncertainty of ln(resistance) from causes of its own: noise in radii and lengths. Shrinks when many "
+    "are averaged.",
+)
+LN_SHARED_SE = number(
+    "ln_resistance_shared_se",
+    "1",
+    "Standard uncertainty of ln(resistance) from what the whole image has in common: pixel size, blur, profile, "
+    "hematocrit. Averaging within the image does not shrink it.",
+)
+
+SEGMENTS: tuple[Column, ...] = (
+    IMAGE_ID,
+    SEGMENT_ID,
+    NETWORK_ID,
+    count("node_a", "Node at which the segment's points begin."),
+    count("node_b", "Node at which the segment's points end."),
+    text("vessel_class", "Kind of vessel; empty where it is not said.", CLASSES),
+    number("class_probability", "1", "Probability that the segment's class is right; empty where no class is said."),
+    count("n_points", "Number of centreline points of the segment."),
+    number(
+        "length_um",
+        "um",
+        "Arc length of the smoothed centreline between the two nodes, without the stub inside a parent's lumen.",
+    ),
+    number("length_se_um", "um", "Standard uncertainty of the segment's length, pixel size included (k = 1)."),
+    number("chord_um", "um", "Straight distance between the segment's first and last point."),
+    number("tortuosity", "1", "Arc length over chord; 1 for a straight segment, empty for a closed ring."),
+    number("radius_mean_um", "um", "Mean lumen radius along the segment."),
+    number(
+        "radius_sd_um",
+        "um",
+        "Spread (standard deviation) of the true lumen radius along the segment; measurement noise is taken out.",
+    ),
+    number(
+        "radius_hydraulic_um",
+        "um",
+        "Lumen radius of the uniform tube of equal length and equal resistance: (mean over length of mu(r)/r^4, "
+        "over mu at that radius)^(-1/4). Never above the mean radius for constant viscosity.",
+    ),
+    number(
+        "radius_hydraulic_se_um", "um", "Standard uncertainty of the hydraulic radius, random and shared parts (k = 1)."
+    ),
+    number("hematocrit", "1", "Discharge hematocrit in the segment, as a fraction."),
+    number("viscosity_mpa_s", "mPa.s", "Apparent viscosity at the hydraulic radius, by the law that the study names."),
+    number(
+        "resistance_pa_s_m3",
+        "Pa.s/m3",
+        "Resistance of the segment: (8/pi) times the integral of mu(r)/r^4 over its length (Sutera and Skalak, Annu "
+        "Rev Fluid Mech 1993;25:1-20, doi 10.1146/annurev.fl.25.010193.000245, applied locally).",
+    ),
+    number("resistance_lo_pa_s_m3", "Pa.s/m3", "Lower bound of the 95 % interval of the segment's resistance."),
+    number("resistance_hi_pa_s_m3", "Pa.s/m3", "Upper bound of the 95 % interval of the segment's resistance."),
+    LN_RANDOM_SE,
+    LN_SHARED_SE,
+    number("flow_nl_min", "nL/min", "Flow through the segment, positive from node_a to node_b."),
+    number("pressure_a_mmhg", "mm[Hg]", "Pressure at node_a."),
+    number("pressure_b_mmhg", "mm[Hg]", "Pressure at node_b."),
+    number(
+        "wall_shear_pa",
+        "Pa",
+        "Wall shear stress at the hydraulic radius: 4 mu |Q| / (pi r^3), mu the apparent viscosity.",
+    ),
+    number(
+        "resistance_share",
+        "1",
+        "The segment's share of its network's resistance, d ln(R network) / d ln(R segment), which is its share of the "
+        "dissipated power (Cohn, Proc Am Math Soc 1950;1:316). Shares of a network sum to 1.",
+    ),
+    FLAGS,
+)
+
+POINTS: tuple[Column, ...] = (
+    IMAGE_ID,
+    SEGMENT_ID,
+    count("point", "Number of the point within its segment, from 1 at node_a."),
+    number("s_um", "um", "Arc length from the segment's first point."),
+    X,
+    Y,
+    number("radius_um", "um", "Lumen radius at the point."),
+    number("radius_se_um", "um", "Standard uncertainty of the local lumen radius, random and shared parts (k = 1)."),
+    number(
+        "contrast",
+        "{signal}",
+        "How strongly the vessel stands out at the point: share of light taken away for dark vessels, intensity above "
+        "the background, in units of the file, for bright ones.",
+    ),
+    FLAGS,
+)
+
+NODES: tuple[Column, ...] = (
+    IMAGE_ID,
+    NODE_ID,
+    NETWORK_ID,
+    X,
+    Y,
+    text(
+        "kind",
+        "end; rim, an end where the field of view cuts the vessel; branching; or loop, the seam of a closed ring.",
+        ("end", "rim", "branching", "loop"),
+    ),
+    count("degree", "Number of segment ends that meet at the node."),
+    text("role", "Where blood enters or leaves; empty for all other nodes.", ("inlet", "outlet")),
+    number("pressure_mmhg", "mm[Hg]", "Pressure at the node; empty where no flow is solved."),
+)
+
+BRANCHINGS: tuple[Column, ...] = (
+    IMAGE_ID,
+    NODE_ID,
+    NETWORK_ID,
+    count("parent_segment", "segment_id of the parent."),
+    count("child_1_segment", "segment_id of the wider child."),
+    count("child_2_segment", "segment_id of the narrower child."),
+    number("radius_parent_um", "um", "Lumen radius of the parent near the branching."),
+    number("radius_child_1_um", "um", "Lumen radius of the wider child near the branching."),
+    number("radius_child_2_um", "um", "Lumen radius of the narrower child near the branching."),
+    number("angle_1_deg", "deg", "Angle between the parent's direction, carried on, and the wider child."),
+    number("angle_2_deg", "deg", "Angle between the parent's direction, carried on, and the narrower child."),
+    number("angle_total_deg", "deg", "Sum of the two children's angles to the parent's direction."),
+    number("area_ratio", "1", "Cross-section of both children over the parent's: (r1^2 + r2^2) / r0^2."),
+    number("asymmetry", "1", "Cross-section of the narrower child over the wider one's: (r2 / r1)^2."),
+    number(
+        "junction_exponent",
+        "1",
+        "m with r0^m = r1^m + r2^m (3 by Murray, Proc Natl Acad Sci USA 1926;12:207-214); empty unless the parent is "
+        "wider than both children.",
+    ),
+    FLAGS,
+)
+
+CROSSINGS: tuple[Column, ...] = (
+    IMAGE_ID,
+    X,
+    Y,
+    count("segment_over", "segment_id of the vessel on top, where that can be told; else the lower of the two."),
+    count("segment_under", "segment_id of the vessel beneath, where that can be told; else the higher of the two."),
+    number("probability", "1", "Probability that the two vessels cross here and do not join."),
+)

@@ -1,0 +1,144 @@
+"""The page of one image: the picture, its networks, its first segments."""
+
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from vasohm.results.markup import (
+    Html,
+    flag_codes,
+    flag_meanings,
+    heading,
+    html,
+    interval,
+    link,
+    listing,
+    page,
+    paragraph,
+    picture,
+    shown,
+    table,
+    terms,
+)
+from vasohm.results.methods import CAUTIONS
+from vasohm.results.schema import image_columns
+from vasohm.results.tables import ImageTables
+
+ROWS_SHOWN = 50
+NETWORK_NAMES = (
+    "network",
+    "class",
+    "segments",
+    "terminals",
+    "length (µm)",
+    "resistance (Pa·s/m³), 95 % interval",
+    "flags",
+)
+SEGMENT_NAMES = (
+    "segment",
+    "network",
+    "class",
+    "length (µm)",
+    "hydraulic radius (µm)",
+    "viscosity (mPa·s)",
+    "resistance (Pa·s/m³), 95 % interval",
+    "share",
+    "flags",
+)
+TEXT_NAMES = {"class", "terminals", "flags"}
+
+
+def image_page(tables: ImageTables, *, with_overlay: bool) -> str:
+    """Build the page of one image from its tables."""
+    row = tables.image.iloc[0]
+    alternative = f"Segments of {tables.image_id} at their measured width, coloured by lumen radius"
+    body = [
+        paragraph(link("../../index.html", "All images")),
+        heading(tables.image_id, 1),
+        paragraph("No vessel was found." if tables.status == "empty" else _summary(tables)),
+    ]
+    if with_overlay:
+        body.append(Html(f'<p><a href="overlay.png">{picture("overlay.png", alternative).source}</a></p>'))
+    body += [heading("Networks", 2), _networks(tables.networks), heading("Segments", 2), _segments(tables.segments)]
+    body += [heading("The image", 2), _quality(row)]
+    flags = [row["flags"], *tables.networks["flags"], *tables.segments["flags"]]
+    body += [heading("What the flags mean", 2), flag_meanings(flags)]
+    if tables.notes:
+        body += [heading("Notes", 2), listing(tables.notes)]
+    body += [heading("Cautions", 2), listing(CAUTIONS)]
+    names = sorted(f"{name}.csv" for name, frame in tables.tables.items() if name != "scenarios" or not frame.empty)
+    body += [
+        heading("Files", 2),
+        listing(link(name, name) for name in (*names, "graph.graphml", "mask.tif", "record.json")),
+    ]
+    return page(f"{tables.image_id} - vasohm", body)
+
+
+def _summary(tables: ImageTables) -> str:
+    row = tables.image.iloc[0]
+    return f"{row['n_segments']} segments in {row['n_networks']} networks; pixel size {row['pixel_size_um']:g} µm."
+
+
+def _networks(networks: pd.DataFrame) -> Html:
+    largest = networks.sort_values("length_um", ascending=False, kind="stable").head(ROWS_SHOWN)
+    rows = [
+        (
+            str(row["network_id"]),
+            row["vessel_class"],
+            str(row["n_segments"]),
+            row["terminals"],
+            shown(row["length_um"]),
+            interval(row["resistance_pa_s_m3"], row["resistance_lo_pa_s_m3"], row["resistance_hi_pa_s_m3"]),
+            flag_codes(row["flags"]),
+        )
+        for row in largest.to_dict("records")
+    ]
+    return _shortened(
+        table(NETWORK_NAMES, rows, set(NETWORK_NAMES) - TEXT_NAMES), len(networks), "networks, longest first"
+    )
+
+
+def _segments(segments: pd.DataFrame) -> Html:
+    rows = [
+        (
+            str(row["segment_id"]),
+            str(row["network_id"]),
+            row["vessel_class"],
+            shown(row["length_um"]),
+            Html(f"{shown(row['radius_hydraulic_um']).source} ± {shown(row['radius_hydraulic_se_um'], 2).source}"),
+            shown(row["viscosity_mpa_s"]),
+            interval(row["resistance_pa_s_m3"], row["resistance_lo_pa_s_m3"], row["resistance_hi_pa_s_m3"]),
+            shown(row["resistance_share"]),
+            flag_codes(row["flags"]),
+        )
+        for row in segments.head(ROWS_SHOWN).to_dict("records")
+    ]
+    return _shortened(table(SEGMENT_NAMES, rows, set(SEGMENT_NAMES) - TEXT_NAMES), len(segments), "segments by number")
+
+
+def _shortened(whole: Html, n: int, what: str) -> Html:
+    if n <= ROWS_SHOWN:
+        return whole
+    return Html(
+        paragraph(f"The first {ROWS_SHOWN} of {n} {what}; the rest stand in the CSV files.").source + whole.source
+    )
+
+
+def _quality(row: "pd.Series[Any]") -> Html:
+    """All of image.csv with what each column means."""
+    meanings = {column.name: column.meaning for column in image_columns([], with_disc=True)}
+    pairs = []
+    for name, value in row.items():
+        if name in ("image_id", "status", "flags"):
+            continue
+        said = shown(float(value), 4) if isinstance(value, float) else _words(value)
+        meaning = meanings.get(str(name), "a column of the image sheet")
+        pairs.append((str(name), Html(f"{html(said)} <small>{html(meaning)}</small>")))
+    return terms(pairs)
+
+
+def _words(value: object) -> str:
+    if isinstance(value, bool | np.bool_):
+        return "yes" if value else "no"
+    return "" if value is None else str(value)

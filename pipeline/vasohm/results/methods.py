@@ -1,0 +1,175 @@
+"""The methods paragraph of one study, from the settings that it used, with the sources that it leans on."""
+
+import re
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+from vasohm.flow.rheology import BloodSettings
+from vasohm.flow.terminals import NetworkSettings
+from vasohm.image.prepare import PrepareSettings
+from vasohm.image.segment import SegmentSettings
+from vasohm.network.radius import RadiusSettings
+
+POISEUILLE = (
+    "Sutera SP, Skalak R. The history of Poiseuille's law. Annu Rev Fluid Mech 1993;25:1-20. "
+    "doi:10.1146/annurev.fl.25.010193.000245"
+)
+SHARES = "Cohn RM. The resistance of an electrical network. Proc Am Math Soc 1950;1:316-324."
+UNCERTAINTY = (
+    "JCGM 100:2008. Evaluation of measurement data: guide to the expression of uncertainty in measurement. "
+    "doi:10.59161/JCGM100-2008E"
+)
+ARRAYS = "Harris CR, et al. Array programming with NumPy. Nature 2020;585:357-362. doi:10.1038/s41586-020-2649-2"
+ALGORITHMS = (
+    "Virtanen P, et al. SciPy 1.0: fundamental algorithms for scientific computing in Python. Nat Methods "
+    "2020;17:261-272. doi:10.1038/s41592-019-0686-2"
+)
+PICTURES = "van der Walt S, et al. scikit-image: image processing in Python. PeerJ 2014;2:e453. doi:10.7717/peerj.453"
+
+CAUTIONS: tuple[str, ...] = (
+    (
+        "For research. Results are no basis for the diagnosis or treatment of a person; local rules and licensed "
+        "practice come first."
+    ),
+    (
+        "A two-dimensional picture foreshortens vessels that run out of its plane; a fundus image holds only part of a "
+        "circulation."
+    ),
+    "The resistance of a network that the field of view cuts depends on where it is cut.",
+    (
+        "Viscosity laws come from rat mesentery or glass tubes and hold within the range in which they were fitted; "
+        "segments outside of it carry the flag law_range."
+    ),
+    "Absolute calibres differ between cameras and between programs: compare within one set-up.",
+)
+
+_DOI = re.compile(r"10\.\d{4,9}/[^\s,;]+[^\s,;.)]")
+_YEAR = re.compile(r"\b(1[89]\d\d|20\d\d)\b")
+_WORD = re.compile(r"[A-Za-z]+")
+_TEX = {"&": r"\&", "%": r"\%", "$": r"\$", "#": r"\#", "_": r"\_", "{": "", "}": "", "\\": ""}
+
+
+@dataclass(frozen=True, slots=True)
+class MethodsUsed:
+    """What a study's methods paragraph depends on."""
+
+    version: str
+    prepare: PrepareSettings
+    segment: SegmentSettings
+    radius: RadiusSettings
+    blood: BloodSettings
+    network: NetworkSettings
+    law_citation: str
+    scenario_names: tuple[str, ...]
+
+
+@dataclass(frozen=True, slots=True)
+class Methods:
+    """A paragraph whose marks [1], [2] count through `references`, and what the reader must bear in mind."""
+
+    paragraph: str
+    references: tuple[str, ...]
+    cautions: tuple[str, ...]
+
+
+def describe_methods(used: MethodsUsed) -> Methods:
+    """Write the methods paragraph of a study from its resolved settings.
+
+    Returns
+    -------
+    Plain text with numbered marks, and the sources in the order of their numbers.
+    """
+    cited: list[str] = []
+
+    def mark(source: str) -> str:
+        if source not in cited:
+            cited.append(source)
+        return f"[{cited.index(source) + 1}]"
+
+    low, high = used.segment.radius_um
+    if used.segment.method == "mask":
+        found = "Vessels were taken from masks made elsewhere."
+    else:
+        found = (
+            f"Vessels, {used.prepare.polarity} against their background, were looked for in the {used.prepare.channel} "
+            f"channel by the method {used.segment.method}, for lumen radii from {low:g} to {high:g} µm."
+        )
+    sentences = [
+        (
+            f"Images were measured with vasohm {used.version} on NumPy {mark(ARRAYS)}, SciPy {mark(ALGORITHMS)} and "
+            f"scikit-image {mark(PICTURES)}."
+        ),
+        found,
+        _radius_sentence(used.radius),
+        (
+            "The resistance of a segment is the integral of apparent viscosity over the fourth power of the local "
+            f"radius along its centreline, Poiseuille's law applied locally {mark(POISEUILLE)}."
+        ),
+        _blood_sentence(used.blood, mark(used.law_citation)),
+        _network_sentence(used.network, mark(SHARES)),
+        (
+            f"Standard uncertainties follow the GUM {mark(UNCERTAINTY)}; random causes and those that a whole image "
+            "shares are kept apart, and 95 % intervals of resistances are symmetric in their logarithm."
+        ),
+    ]
+    if used.scenario_names:
+        sentences.append(f"Scenarios: {'; '.join(used.scenario_names)}.")
+    cautions = CAUTIONS
+    if used.radius.plasma_layer_um:
+        cautions += ("Radii are those of the red-cell column with a plasma layer added, whose width is an assumption.",)
+    return Methods(" ".join(sentences), tuple(cited), cautions)
+
+
+def _radius_sentence(radius: RadiusSettings) -> str:
+    blur = "told by each image" if radius.blur_px is None else f"{radius.blur_px:g} px"
+    profile = "told by each image" if radius.profile == "auto" else radius.profile
+    layer = ""
+    if radius.plasma_layer_um:
+        layer = (
+            f" A plasma layer of {radius.plasma_layer_um:g} µm (standard uncertainty {radius.plasma_layer_se_um:g} µm) "
+            "was added to the radius of the red-cell column."
+        )
+    return (
+        "Local lumen radii were found by fitting how a round tube is imaged across each centreline "
+        f"(profile: {profile}; blur: {blur})." + layer
+    )
+
+
+def _blood_sentence(blood: BloodSettings, mark: str) -> str:
+    if blood.law == "constant":
+        return f"The apparent viscosity was {blood.viscosity_mpa_s:g} mPa·s everywhere {mark}."
+    return (
+        f"The apparent viscosity follows the law {blood.law} {mark} at a discharge hematocrit of {blood.hematocrit:g} "
+        f"and a plasma viscosity of {blood.plasma_viscosity_mpa_s:g} mPa·s."
+    )
+
+
+def _network_sentence(network: NetworkSettings, mark: str) -> str:
+    if network.terminals == "none":
+        return "Networks were not solved."
+    where = (
+        "a file" if network.terminals == "file" else "a file where one was given, else the networks' shape and class"
+    )
+    return (
+        f"Inlets and outlets of the networks come from {where}; where no pressure was given they differ by "
+        f"{network.drive_mmhg:g} mmHg. A segment's share of its network's resistance is its share of the dissipated "
+        f"power {mark}."
+    )
+
+
+def bibtex(references: Sequence[str]) -> str:
+    """Write sources as BibTeX entries; their text stands in `note`, year and DOI in their own fields."""
+    entries, keys = [], set[str]()
+    for text in references:
+        doi, year, word = _DOI.search(text), _YEAR.search(text), _WORD.search(text)
+        key = (word.group().lower() if word else "source") + (year.group() if year else "")
+        key = next(k for k in (key, *(f"{key}{letter}" for letter in "abcdefghijklmnop")) if k not in keys)
+        keys.add(key)
+        note = "".join(_TEX.get(letter, letter) for letter in text)
+        lines = [f"@misc{{{key},", f"  note = {{{note}}},"]
+        if year:
+            lines.append(f"  year = {{{year.group()}}},")
+        if doi:
+            lines.append(f"  doi = {{{doi.group()}}},")
+        entries.append("\n".join([*lines, "}"]))
+    return "\n\n".join(entries) + "\n"

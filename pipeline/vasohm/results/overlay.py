@@ -1,0 +1,193 @@
+"""What was measured, drawn on the picture: from the tables, so that the picture shows what the files say."""
+
+from io import BytesIO
+from typing import Literal, TypeAlias
+
+import matplotlib as mpl
+import numpy as np
+import pandas as pd
+from matplotlib.axes import Axes
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.cm import ScalarMappable
+from matplotlib.collections import PolyCollection
+from matplotlib.colors import ListedColormap, LogNorm, Normalize
+from matplotlib.figure import Figure
+from matplotlib.lines import Line2D
+from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter
+from PIL import Image
+
+from vasohm.arrays import AnyArray, BoolArray, FloatArray
+from vasohm.flags import Flag, code
+from vasohm.results.tables import ImageTables
+from vasohm.units import UM_PER_MM
+
+ColourBy: TypeAlias = Literal["radius", "share", "resistance"]
+
+COLOUR_COLUMNS: dict[str, tuple[str, str]] = {  # what colours a segment: its column, the colour bar's label
+    "radius": ("radius_mean_um", "lumen radius (µm)"),
+    "share": ("resistance_share", "share of the network's resistance"),
+    "resistance": ("resistance_pa_s_m3", "resistance (Pa·s/m³)"),
+}
+DARKEST = 0.12  # start of the colour map: its first tenth is lost on a dark picture
+LOGARITHMIC_FROM = 5.0  # ratio of largest to smallest value from which the colours are spread in the logarithm
+DOUBTFUL = (Flag.RIM, Flag.UNRESOLVED)
+LONGEST_SIDE = 2000  # pixels of the drawing
+SHORTEST_SIDE = 900  # a small picture is enlarged so that labels do not hide it
+DPI = 100
+BAR_SHARE = 0.2  # the scale bar is at most this share of the width
+WIDEST_RATIO = 1e4  # of the colours' range; smaller values take the darkest colour
+TICKS = ((1.0, 1.5, 2.0, 3.0, 5.0, 7.0), (1.0, 2.0, 5.0), (1.0,))  # within one decade, two, and more
+GREY = "#d0d0d0"
+
+
+def draw_overlay(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
+    """Draw the segments at their measured width on the grey picture.
+
+    Parameters
+    ----------
+    tables : of one image.
+    colour_by : what colours a segment: its mean lumen radius (um), its share of the network's resistance, or its
+        resistance (Pa s/m3, logarithmic).
+
+    Returns
+    -------
+    A PNG; the same tables give the same bytes. Segments that the field of view cuts or that are too thin for the
+    pixels are drawn paler with a broken outline.
+    """
+    height, width = tables.picture.shape
+    scale = _drawing_scale(height, width)
+    size = np.maximum(np.array([width, height]) * scale, 1.0)
+    letter_pt = max(float(size.max()) / 130, 8.0)  # margins grow with the letters
+    letter = letter_pt * DPI / 72
+    total = size + np.array([9.5 * letter, 3.0 * letter])
+    with mpl.rc_context():
+        mpl.rcdefaults()
+        mpl.rcParams["font.size"] = letter_pt
+        figure = Figure(figsize=tuple(total / DPI), dpi=DPI, facecolor="white")
+        canvas = FigureCanvasAgg(figure)
+        axes = figure.add_axes((0, 3.0 * letter / total[1], size[0] / total[0], size[1] / total[1]))
+        _draw_picture(axes, tables.picture, scale)
+        column, label = COLOUR_COLUMNS[colour_by]
+        norm = _colour_range(tables.segments[column].to_numpy(np.float64))
+        _draw_segments(axes, tables, column, norm)
+        if norm is not None:
+            low_left = ((size[0] + 1.5 * letter) / total[0], (3.0 * letter + 0.05 * size[1]) / total[1])
+            bar = figure.add_axes((*low_left, 1.5 * letter / total[0], 0.9 * size[1] / total[1]))
+            _draw_colour_bar(figure, bar, norm, label)
+        figure.text(0.5 * letter / total[0], 1.5 * letter / total[1], _caption(tables), va="center")
+        length_um = round_length_um(BAR_SHARE * width * tables.pixel_size_um)
+        length_px = length_um / tables.pixel_size_um * scale
+        shown = f"{length_um / UM_PER_MM:g} mm" if length_um >= UM_PER_MM else f"{length_um:g} µm"
+        _draw_scale_bar(figure, size[0] - length_px - 0.5 * letter, 1.5 * letter, length_px=length_px, label=shown)
+        buffer = BytesIO()
+        canvas.print_png(buffer, metadata={"Software": None})  # type: ignore[no-untyped-call]
+    return buffer.getvalue()
+
+
+def _caption(tables: ImageTables) -> str:
+    n_doubtful = int(_is_doubtful(tables.segments).sum())
+    caption = f"{tables.image_id}: {len(tables.segments)} segments"
+    return caption + (f", {n_doubtful} cut by the rim or too thin (pale)" if n_doubtful else "")
+
+
+def _drawing_scale(height: int, width: int) -> float:
+    """Pixels of the drawing a pixel of the picture."""
+    longest = max(height, width)
+    if longest > LONGEST_SIDE:
+        return LONGEST_SIDE / longest
+    return max(1.0, SHORTEST_SIDE / longest)
+
+
+def _draw_picture(axes: Axes, picture: AnyArray, scale: float) -> None:
+    height, width = picture.shape
+    shown: AnyArray = picture
+    if scale < 0.5:  # means of blocks first: cheaper than the plotting library's own resampling
+        shown = np.asarray(Image.fromarray(picture).reduce(int(1 / scale)))
+    extent = (-0.5, width - 0.5, height - 0.5, -0.5)
+    axes.imshow(shown, cmap="gray", vmin=0, vmax=255, extent=extent, aspect="auto", interpolation="nearest")
+    axes.set_axis_off()
+
+
+def _colour_map() -> ListedColormap:
+    """Perceptually uniform and readable without red-green vision."""
+    return ListedColormap(mpl.colormaps["viridis"](np.linspace(DARKEST, 1, 256)))
+
+
+def _colour_range(values: FloatArray) -> Normalize | None:
+    """Range of the colour bar; None where there is nothing to colour by."""
+    known = values[np.isfinite(values) & (values > 0)]
+    if known.size == 0:
+        return None
+    low, high = float(known.min()), float(known.max())
+    if high > LOGARITHMIC_FROM * low:
+        return LogNorm(max(low, high / WIDEST_RATIO), high, clip=True)
+    return Normalize(low, high) if low < high else Normalize(0.9 * low, 1.1 * high)
+
+
+def _draw_colour_bar(figure: Figure, place: Axes, norm: Normalize, label: str) -> None:
+    bar = figure.colorbar(ScalarMappable(norm, _colour_map()), cax=place, label=label)
+    if isinstance(norm, LogNorm):
+        decades = np.log10(float(norm.vmax or 1) / float(norm.vmin or 1))
+        bar.ax.yaxis.set_major_locator(LogLocator(subs=TICKS[min(int(decades), 2)]))
+        bar.ax.yaxis.set_major_formatter(FuncFormatter(lambda value, _: f"{value:g}"))
+        bar.ax.yaxis.set_minor_formatter(NullFormatter())
+
+
+def _draw_segments(axes: Axes, tables: ImageTables, column: str, norm: Normalize | None) -> None:
+    doubtful = _is_doubtful(tables.segments)
+    values = tables.segments[column].to_numpy(np.float64)
+    outlines = _ribbons(tables.points, tables.segments["n_points"].to_numpy(), tables.pixel_size_um)
+    colours = np.tile(mpl.colors.to_rgba(GREY), (len(values), 1))
+    if norm is not None:
+        known = np.isfinite(values) & (values > 0)
+        colours[known] = _colour_map()(norm(values[known]))
+    for chosen, alpha, style in ((~doubtful, 0.75, "solid"), (doubtful, 0.35, (0, (3, 2)))):
+        if not chosen.any():
+            continue
+        faces = colours[chosen]
+        faces[:, 3] = alpha
+        edges = colours[chosen]
+        axes.add_collection(
+            PolyCollection(
+                [outlines[i] for i in np.flatnonzero(chosen)],
+                facecolors=faces,
+                edgecolors=edges,
+                linewidths=0.8,
+                linestyles=[style],
+            ),
+            autolim=False,
+        )
+
+
+def _ribbons(points: pd.DataFrame, n_points: AnyArray, pixel_size_um: float) -> list[FloatArray]:
+    """Outline of each segment's lumen, (2 n, 2) x and y in pixels of the picture."""
+    centre = points[["x_px", "y_px"]].to_numpy(np.float64)
+    radius_px = np.nan_to_num(points["radius_um"].to_numpy(np.float64), nan=0.0) / pixel_size_um
+    ends = np.cumsum(n_points)
+    first, last = np.repeat(ends - n_points, n_points), np.repeat(ends - 1, n_points)
+    index = np.arange(len(centre))
+    along = centre[np.minimum(index + 1, last)] - centre[np.maximum(index - 1, first)]
+    length = np.hypot(along[:, 0], along[:, 1])
+    across = np.column_stack([-along[:, 1], along[:, 0]]) / np.where(length > 0, length, 1.0)[:, None]
+    left, right = centre + across * radius_px[:, None], centre - across * radius_px[:, None]
+    cuts = ends[:-1]
+    return [np.concatenate([a, b[::-1]]) for a, b in zip(np.split(left, cuts), np.split(right, cuts), strict=True)]
+
+
+def _is_doubtful(segments: pd.DataFrame) -> BoolArray:
+    wanted = {code(flag) for flag in DOUBTFUL}
+    return np.array([not wanted.isdisjoint(text.split(";")) for text in segments["flags"]], dtype=bool)
+
+
+def round_length_um(longest_um: float) -> float:
+    """Return the greatest of 1, 2, 5 times a power of ten that is not above `longest_um`."""
+    decade = 10.0 ** np.floor(np.log10(longest_um))
+    return float(max(step * decade for step in (1.0, 2.0, 5.0) if step * decade <= longest_um))
+
+
+def _draw_scale_bar(figure: Figure, left_px: float, middle_px: float, *, length_px: float, label: str) -> None:
+    """Draw the bar below the picture, where it hides nothing; positions in pixels of the drawing."""
+    wide, high = figure.get_size_inches() * DPI
+    left, right, middle = left_px / wide, (left_px + length_px) / wide, middle_px / high
+    figure.add_artist(Line2D([left, right], [middle, middle], color="black", linewidth=4, solid_capstyle="butt"))
+    figure.text(left - 6 / wide, middle, label, ha="right", va="center")

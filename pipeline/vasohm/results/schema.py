@@ -1,0 +1,107 @@
+"""Every output column once: its table, name, type, unit and meaning."""
+
+from collections.abc import Iterable, Mapping
+from typing import Any
+
+from vasohm.errors import DomainError
+from vasohm.results.column import Column, text
+from vasohm.results.columns_images import DISC, FAILURES, IMAGE, NETWORKS, SCENARIOS
+from vasohm.results.columns_vessels import BRANCHINGS, CROSSINGS, NODES, POINTS, SEGMENTS
+
+SCHEMA_VERSION = 1  # goes up with every change of a column
+
+COLUMNS: Mapping[str, tuple[Column, ...]] = {
+    "image": IMAGE,
+    "networks": NETWORKS,
+    "segments": SEGMENTS,
+    "nodes": NODES,
+    "points": POINTS,
+    "branchings": BRANCHINGS,
+    "crossings": CROSSINGS,
+    "scenarios": SCENARIOS,
+    "failures": FAILURES,
+}
+
+TABLE_MEANING: Mapping[str, str] = {
+    "image": "One row an image: morphometry and quality; the sheet's own columns follow.",
+    "networks": "One row a connected network.",
+    "segments": "One row a vessel segment.",
+    "nodes": "One row a node: an end, a rim, a branching or the seam of a ring.",
+    "points": "One row a centreline point, ordered from node_a to node_b of its segment.",
+    "branchings": "One row a bifurcation.",
+    "crossings": "One row a place where two vessels merely cross in the picture.",
+    "scenarios": "One row a network and scenario: what becomes of its resistance when some radii change.",
+    "failures": "One row an image that could not be measured.",
+}
+
+PRIMARY_KEYS: Mapping[str, tuple[str, ...]] = {
+    "image": ("image_id",),
+    "networks": ("image_id", "network_id"),
+    "segments": ("image_id", "segment_id"),
+    "nodes": ("image_id", "node_id"),
+    "points": ("image_id", "segment_id", "point"),
+    "branchings": ("image_id", "node_id"),
+    "scenarios": ("image_id", "network_id", "scenario"),
+    "failures": ("image_id",),
+}
+
+GATHERED: Mapping[str, str] = {  # file at the root: the table whose rows it collects
+    "images_all.csv": "image",
+    "networks_all.csv": "networks",
+    "segments_all.csv": "segments",
+    "branchings_all.csv": "branchings",
+    "crossings_all.csv": "crossings",
+    "scenarios_all.csv": "scenarios",
+}
+
+OWN_IMAGE_NAMES = frozenset(column.name for column in IMAGE + DISC)
+
+
+def column_names(table: str) -> tuple[str, ...]:
+    """Names of a table's columns in their order; for `image` without those of an optic disc and of the sheet."""
+    return tuple(column.name for column in COLUMNS[table])
+
+
+def image_columns(design: Iterable[str], *, with_disc: bool) -> tuple[Column, ...]:
+    """Columns of image.csv: its own, those of an optic disc where there is one, then the sheet's.
+
+    Raises
+    ------
+    DomainError : a column of the sheet has the name of one of ours.
+    """
+    carried = []
+    for name in design:
+        if name in OWN_IMAGE_NAMES:
+            msg = f"column {name!r} of the image sheet has the name of an output column. Rename it in the sheet."
+            raise DomainError(msg)
+        carried.append(text(name, f"Column {name} of the image sheet, as it stands there."))
+    return IMAGE + (DISC if with_disc else ()) + tuple(carried)
+
+
+def describe() -> list[dict[str, str]]:
+    """Return one entry a column of every table: table, name, type, unit and meaning, in the order of the tables."""
+    tables = dict(COLUMNS, image=IMAGE + DISC)
+    return [
+        {"table": table, "name": c.name, "type": c.type, "unit": c.unit, "meaning": c.meaning}
+        for table, columns in tables.items()
+        for c in columns
+    ]
+
+
+def table_schema(columns: Iterable[Column], key: Iterable[str] = ()) -> dict[str, Any]:
+    """Frictionless Table Schema (datapackage.org, version 2) of the columns; units stand under the extra key `unit`."""
+    fields = []
+    for column in columns:
+        field: dict[str, Any] = {"name": column.name, "type": column.type, "description": column.meaning}
+        if column.type == "list":
+            field["delimiter"] = ";"
+        if column.unit:
+            field["unit"] = column.unit
+            field["unitSystem"] = "UCUM"
+        if column.words:
+            field["constraints"] = {"enum": list(column.words)}
+        fields.append(field)
+    schema: dict[str, Any] = {"fields": fields, "missingValues": [""]}
+    if list(key):
+        schema["primaryKey"] = list(key)
+    return schema

@@ -1,0 +1,217 @@
+"""From tables to files: an image's folder appears whole or not at all, with the record beside the tables."""
+
+import errno
+import hashlib
+import json
+import os
+import secrets
+import shutil
+import time
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+from typing import IO, Any
+
+from vasohm.results.column import Column
+from vasohm.results.columns_images import DISC
+from vasohm.results.encode import frame_bytes, graphml_bytes, json_bytes, mask_bytes
+from vasohm.results.image_page import image_page
+from vasohm.results.overlay import draw_overlay
+from vasohm.results.schema import COLUMNS, OWN_IMAGE_NAMES, SCHEMA_VERSION, image_columns
+from vasohm.results.tables import ImageTables
+
+RECORD = "record.json"
+PARTIAL_SUFFIX = ".partial"  # of files and folders that a run has begun and not finished
+RENAME_TRIES = 5  # a virus scanner or an open viewer can hold a file for a moment
+RENAME_WAIT_S = 0.2
+IMAGE_FILES = frozenset(
+    [f"{table}.csv" for table in COLUMNS if table != "failures"]
+    + ["graph.graphml", "mask.tif", "overlay.png", "index.html", RECORD]
+)
+
+
+@dataclass(frozen=True, slots=True)
+class EncodedFile:
+    """A file's bytes; `rows` is None where it is no table."""
+
+    content: bytes
+    rows: int | None = None
+
+
+def write_atomically(path: Path, content: bytes) -> None:
+    """Write a file so that it is at no moment half there: a new one beside it, then a rename."""
+    partial = path.with_name(f".{path.name}.{tag()}{PARTIAL_SUFFIX}")
+    try:
+        _write_durably(partial, content)
+        replace_durably(partial, path)
+    except BaseException:
+        partial.unlink(missing_ok=True)
+        raise
+
+
+def replace_durably(partial: Path, path: Path) -> None:
+    """Rename a file over another in the same folder and make the rename last."""
+    for attempt in range(RENAME_TRIES):
+        try:
+            partial.replace(path)
+            break
+        except PermissionError:
+            if attempt == RENAME_TRIES - 1:
+                raise
+            time.sleep(RENAME_WAIT_S)
+    _sync_folder(path.parent)
+
+
+def write_image(tables: ImageTables, folder: Path, record: Mapping[str, Any], *, overlay: bool) -> None:
+    """Write all files of one image; the folder is complete when its record is there.
+
+    Parameters
+    ----------
+    tables : what was measured.
+    folder : `.../images/IMAGE_ID`; an older one is replaced, files of other names in it are kept.
+    record : what the caller knows: hash of inputs and settings, versions, warnings. Our own keys are schema_version,
+        image_id, status, notes and files.
+    overlay : whether the picture is drawn.
+
+    Raises
+    ------
+    OSError : the folder cannot be written; nothing of it is left half done under its own name.
+    ValueError : a key of `record` is one of our own, or a value that JSON cannot hold.
+    """
+    files = _encode(tables, overlay=overlay)
+    own = {
+        "schema_version": SCHEMA_VERSION,
+        "image_id": tables.image_id,
+        "status": tables.status,
+        "notes": tables.notes,
+        "files": {name: _fingerprint(file) for name, file in files.items()},
+    }
+    taken = sorted(own.keys() & record.keys())
+    if taken:
+        msg = f"record of image {tables.image_id}: keys {', '.join(taken)} are written here; give them other names."
+        raise ValueError(msg)
+    files[RECORD] = EncodedFile(json_bytes({**own, **record}))
+    folder.parent.mkdir(parents=True, exist_ok=True)
+    partial = folder.with_name(f".{folder.name}.{tag()}{PARTIAL_SUFFIX}")
+    partial.mkdir()
+    try:
+        for name, file in files.items():
+            _write_durably(partial / name, file.content)
+        _sync_folder(partial)
+        _put_folder(partial, folder)
+    finally:
+        shutil.rmtree(partial, ignore_errors=True)
+
+
+def read_record(folder: Path) -> dict[str, Any] | None:
+    """Read an image's record, or None where there is none that can be read."""
+    try:
+        record = json.loads((folder / RECORD).read_bytes())
+    except (OSError, ValueError):
+        return None
+    return record if isinstance(record, dict) else None
+
+
+def record_is_whole(folder: Path) -> bool:
+    """Tell whether every file that the record lists is there, byte for byte."""
+    record = read_record(folder)
+    if record is None or folder.is_symlink() or record.get("schema_version") != SCHEMA_VERSION:
+        return False
+    files = record.get("files")
+    if not isinstance(files, dict) or not files:
+        return False
+    try:
+        return all((folder / name).stat().st_size == held["bytes"] for name, held in files.items()) and all(
+            hashlib.sha256((folder / name).read_bytes()).hexdigest() == held["sha256"] for name, held in files.items()
+        )
+    except (OSError, KeyError, TypeError):
+        return False
+
+
+def remove_partials(parent: Path) -> None:
+    """Remove what runs that have died left unfinished in a folder; call it only while no other run writes there."""
+    for path in parent.glob(f".*{PARTIAL_SUFFIX}"):
+        if path.is_dir() and not path.is_symlink():
+            shutil.rmtree(path, ignore_errors=True)
+        else:
+            path.unlink(missing_ok=True)
+
+
+def _encode(tables: ImageTables, *, overlay: bool) -> dict[str, EncodedFile]:
+    """Make the bytes of every file but the record."""
+    files = {}
+    for table, frame in tables.tables.items():
+        if table == "scenarios" and frame.empty:
+            continue
+        columns = _image_table_columns(tables) if table == "image" else COLUMNS[table]
+        files[f"{table}.csv"] = EncodedFile(frame_bytes(frame, columns), len(frame))
+    files["graph.graphml"] = EncodedFile(graphml_bytes(tables.graph))
+    files["mask.tif"] = EncodedFile(mask_bytes(tables.mask, tables.pixel_size_um))
+    if overlay:
+        files["overlay.png"] = EncodedFile(draw_overlay(tables))
+    files["index.html"] = EncodedFile(image_page(tables, with_overlay=overlay).encode())
+    return files
+
+
+def _image_table_columns(tables: ImageTables) -> tuple[Column, ...]:
+    carried = [str(name) for name in tables.image if name not in OWN_IMAGE_NAMES]
+    return image_columns(carried, with_disc=DISC[0].name in tables.image)
+
+
+def _fingerprint(file: EncodedFile) -> dict[str, Any]:
+    held: dict[str, Any] = {"sha256": hashlib.sha256(file.content).hexdigest(), "bytes": len(file.content)}
+    if file.rows is not None:
+        held["rows"] = file.rows
+    return held
+
+
+def _put_folder(partial: Path, folder: Path) -> None:
+    """Give the finished folder its name; into an older one files go one by one, the record out first, in last."""
+    if folder.is_symlink():
+        folder.unlink()
+    try:
+        partial.rename(folder)
+    except OSError as error:
+        if error.errno not in (errno.ENOTEMPTY, errno.EEXIST, errno.EACCES) or not folder.is_dir():
+            raise
+    else:
+        _sync_folder(folder.parent)
+        return
+    (folder / RECORD).unlink(missing_ok=True)
+    _sync_folder(folder)
+    names = sorted((path.name for path in partial.iterdir()), key=lambda name: (name == RECORD, name))
+    for stale in IMAGE_FILES.difference(names):
+        (folder / stale).unlink(missing_ok=True)
+    for name in names:
+        replace_durably(partial / name, folder / name)
+
+
+def _write_durably(path: Path, content: bytes) -> None:
+    with path.open("xb") as file:
+        file.write(content)
+        sync_file(file)
+
+
+def sync_file(file: IO[bytes]) -> None:
+    """Bring what was written to a file onto the disk."""
+    file.flush()
+    os.fsync(file.fileno())
+
+
+def _sync_folder(folder: Path) -> None:
+    """Make renames in a folder survive a power cut, where the system knows how."""
+    if os.name == "nt":
+        return
+    handle = os.open(folder, os.O_RDONLY)
+    try:
+        os.fsync(handle)
+    except OSError as error:
+        if error.errno not in (errno.EINVAL, errno.ENOTSUP):
+            raise
+    finally:
+        os.close(handle)
+
+
+def tag() -> str:
+    """Two processes that write the same name at once must not share a partial file."""
+    return f"{os.getpid()}-{secrets.token_hex(4)}"
