@@ -1,0 +1,62 @@
+"""The whole way of one image, from its files to its tables. Read this first."""
+
+from collections.abc import Callable
+from dataclasses import replace
+
+from vasohm.config.settings import Settings
+from vasohm.config.sheet import ImageSource
+from vasohm.flow.hydraulics import solve_flow
+from vasohm.flow.scenarios import run_scenarios
+from vasohm.flow.terminals import place_terminals
+from vasohm.image.calibrate import calibrate
+from vasohm.image.prepare import prepare
+from vasohm.image.read import RawImage, read_image, read_labels, read_mask
+from vasohm.image.segment import segment
+from vasohm.network.centreline import extend_ends, refine_centrelines
+from vasohm.network.classes import classes_from_labels
+from vasohm.network.crossings import resolve_crossings
+from vasohm.network.edits import apply_edits, forced_places
+from vasohm.network.graph import build_graph
+from vasohm.network.morphometry import describe_shape
+from vasohm.network.radius import measure_radii
+from vasohm.network.skeletonize import skeletonize
+from vasohm.results.tables import DiscPlace, Findings, ImageTables, tabulate
+
+
+def measure_source(source: ImageSource, settings: Settings, stage: Callable[[str], None]) -> ImageTables:
+    """Read one image of the sheet and measure it; `stage` is told the name of each stage as it begins."""
+    stage("read")
+    return measure_pixels(read_image(source.file, settings.read), source, settings, stage)
+
+
+def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage: Callable[[str], None]) -> ImageTables:
+    """Measure a picture that is already in memory; `source` says what a person knows about it."""
+    shape = (raw.pixels.shape[0], raw.pixels.shape[1])
+    given = read_mask(source.mask_file, shape) if source.mask_file else None
+    fov = read_mask(source.fov_file, shape) if source.fov_file else None
+    labels = read_labels(source.class_file, shape) if source.class_file else None
+    stage("prepare")
+    prepared = prepare(calibrate(raw, source.scale, settings.scale), settings.prepare, fov)
+    stage("segment")
+    mask = segment(prepared, settings.segment, given)
+    stage("graph")
+    traced = build_graph(skeletonize(mask, prepared.fov, settings.skeletonize))
+    uncrossed = resolve_crossings(traced, settings.crossings, forced_places(source.edits))
+    graph = extend_ends(refine_centrelines(uncrossed, prepared), prepared)
+    if labels is not None:
+        graph = classes_from_labels(graph, labels)
+    graph, notes, edit_flags = apply_edits(graph, source.edits)
+    prepared = replace(prepared, notes=prepared.notes + notes, flags=prepared.flags | edit_flags)
+    stage("radius")
+    measured = measure_radii(graph, prepared, settings.radius)
+    stage("flow")
+    own = source.hematocrit is not None
+    blood = replace(settings.blood, hematocrit=source.hematocrit) if own else settings.blood
+    terminals = place_terminals(measured, source.terminals, settings.network)
+    flow = solve_flow(measured, terminals, blood)
+    scenarios = run_scenarios(measured, terminals, blood, settings.scenarios)
+    stage("tables")
+    shape_of = describe_shape(measured, mask.pixels, prepared.fov)
+    findings = Findings(prepared, mask, measured, flow, shape_of, scenarios)
+    disc = source.disc and DiscPlace(source.disc.x_px, source.disc.y_px, source.disc.radius_px, "sheet")
+    return tabulate(source.image_id, source.design, findings, disc)
