@@ -1,0 +1,62 @@
+"""Everything that is wrong with a study, at once: each file is opened and decoded, nothing is measured."""
+
+from collections.abc import Iterator
+from pathlib import Path
+
+from vasohm.arrays import AnyArray
+from vasohm.config.settings import Settings
+from vasohm.config.sheet import ImageSource
+from vasohm.config.study_file import Study
+from vasohm.errors import Problem, VasohmError
+from vasohm.flow.rheology import get_law
+from vasohm.image.calibrate import calibrate
+from vasohm.image.read import read_image, read_labels, read_mask
+
+_FIRST_ROW = 2  # of the sheet, after its header
+
+
+def problems_of(study: Study) -> list[Problem]:
+    """Decode all files of a study and return what is wrong, in the order of the sheet.
+
+    A header that promises a picture does not yet hold one: a truncated file shows only when it is decoded.
+    """
+    found = list(_law_problems(study))
+    sheet = study.path.name
+    for row, source in enumerate(study.images, start=_FIRST_ROW):
+        for column, path, fault in _faults(source, study.settings):
+            found.append(Problem(file=sheet, row=row, column=column, value=path.name, message=str(fault)))
+    return found
+
+
+def _law_problems(study: Study) -> Iterator[Problem]:
+    try:
+        get_law(study.settings.blood.law)
+    except VasohmError as fault:
+        yield Problem(file=study.path.name, column="blood.law", value=study.settings.blood.law, message=str(fault))
+
+
+def _faults(source: ImageSource, settings: Settings) -> Iterator[tuple[str, Path, VasohmError]]:
+    try:
+        raw = read_image(source.file, settings.read)
+    except VasohmError as fault:
+        yield "file", source.file, fault
+        return
+    try:
+        calibrate(raw, source.scale, settings.scale)
+    except VasohmError as fault:
+        yield "pixel_size_um", source.file, fault
+    for column, path, read in (
+        ("mask_file", source.mask_file, read_mask),
+        ("fov_file", source.fov_file, read_mask),
+        ("class_file", source.class_file, read_labels),
+    ):
+        if path is None:
+            continue
+        try:
+            read(path, _shape(raw.pixels))
+        except VasohmError as fault:
+            yield column, path, fault
+
+
+def _shape(pixels: AnyArray) -> tuple[int, int]:
+    return pixels.shape[0], pixels.shape[1]

@@ -1,0 +1,125 @@
+"""From the images' folders and the state of a run to the files at the root of the results."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+from vasohm.config.settings import Settings
+from vasohm.errors import Problem, RequestError
+from vasohm.flow.rheology import get_law
+from vasohm.results.methods import Methods, MethodsUsed, describe_methods
+from vasohm.results.pages import Study as StudyAtAGlance
+from vasohm.results.pages import write_study_page
+from vasohm.results.write import record_is_whole
+from vasohm.results.write_study import (
+    Failure,
+    gather_tables,
+    write_datapackage,
+    write_failures,
+    write_references,
+    write_study_json,
+)
+from vasohm.study.ending import EXIT_OK, EXIT_SOME_FAILED
+from vasohm.study.folder import image_folder, probe
+from vasohm.study.marker import hold_marker
+from vasohm.study.outcome import EMPTY, FAILED, MEASURED, PENDING
+from vasohm.study.parts import Part, read_state
+from vasohm.study.state import ImageState, StudyState
+
+_WITH_TABLES = (MEASURED, EMPTY)
+
+
+@dataclass(frozen=True, slots=True)
+class GatherReport:
+    """What was put together, and what is wanting: `damaged` are images whose files are not as they were written."""
+
+    state: StudyState
+    missing: tuple[Part, ...]
+    damaged: tuple[str, ...]
+
+
+def methods_used(settings: Settings, version: str) -> Methods:
+    """Return the methods paragraph, references and cautions of a study."""
+    return describe_methods(
+        MethodsUsed(
+            version=version,
+            prepare=settings.prepare,
+            segment=settings.segment,
+            radius=settings.radius,
+            blood=settings.blood,
+            network=settings.network,
+            law_citation=get_law(settings.blood.law).citation,
+            scenario_names=tuple(scenario.name for scenario in settings.scenarios),
+        )
+    )
+
+
+def write_root(out: Path, state: StudyState) -> None:
+    """Write tables, page, data package and references of a study, and its state last.
+
+    Raises
+    ------
+    OSError
+        When a file cannot be read or written.
+    """
+    image_ids = tuple(image.image_id for image in state.images if image.status in _WITH_TABLES)
+    failures = _failures(state.images)
+    tables = (*gather_tables(out, image_ids), write_failures(out, failures))
+    write_datapackage(out, state.study, tables, image_ids)
+    write_references(out, state.methods.references)
+    write_study_json(out, state.plain())
+    write_study_page(out, StudyAtAGlance(state.study, image_ids, failures, state.methods))
+
+
+def write_state(out: Path, state: StudyState) -> None:
+    """Write failures.csv and study.json alone: quick enough for the end of a run that was interrupted."""
+    write_failures(out, _failures(state.images))
+    write_study_json(out, state.plain())
+
+
+def gather(out: Path) -> GatherReport:
+    """Rebuild the files at the root of a results folder from its images and parts.
+
+    Parameters
+    ----------
+    out : Path
+        The results folder.
+
+    Returns
+    -------
+    GatherReport
+        Its state's exit status is 1 where an image failed or is wanting.
+
+    Raises
+    ------
+    RequestError
+        When nothing has been measured here, parts are mixed, or a run is at work.
+    OSError
+        When a file cannot be read or written.
+    """
+    if not out.is_dir():
+        raise RequestError([Problem(file=str(out), message="is no folder. Give the folder that was --out of measure.")])
+    state, missing = read_state(out)
+    if state is None:
+        message = "holds neither study.json nor parts. Give the folder that was --out of measure."
+        raise RequestError([Problem(file=str(out), message=message)])
+    probe(out)
+    with hold_marker(out / "run", state.study, ""):
+        damaged = tuple(
+            image.image_id
+            for image in state.images
+            if image.status in _WITH_TABLES and not record_is_whole(image_folder(out, image.image_id))
+        )
+        state = state.with_images({image_id: ImageState(image_id, PENDING) for image_id in damaged})
+        wanting = any(image.status in (FAILED, PENDING) for image in state.images)
+        state = replace(state, exit_status=EXIT_SOME_FAILED if wanting or missing else EXIT_OK)
+        write_root(out, state)
+    return GatherReport(state, missing, damaged)
+
+
+def _failures(images: Sequence[ImageState]) -> tuple[Failure, ...]:
+    return tuple(
+        Failure(image.image_id, image.failure.stage, image.failure.error, image.failure.message)
+        for image in images
+        if image.failure is not None
+    )

@@ -1,0 +1,50 @@
+"""What one image came to: small nouns of texts and numbers that pass between processes."""
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+
+from vasohm.config.settings import Settings
+from vasohm.config.sheet import ImageSource
+
+CRASHED = "crashed"  # error of an image whose worker died twice
+MEASURED, EMPTY, FAILED, PENDING = "measured", "empty", "failed", "pending"
+
+
+@dataclass(frozen=True, slots=True)
+class Task:
+    """One image to measure and where its results go."""
+
+    image_id: str
+    source: ImageSource
+    settings: Settings
+    versions: Mapping[str, str]
+    folder: Path  # images/IMAGE_ID
+    trail: Path  # file in which the worker notes each stage, for the case that it dies
+
+
+@dataclass(frozen=True, slots=True)
+class Failure:
+    """Why an image has no tables: one row of failures.csv."""
+
+    stage: str
+    error: str
+    message: str
+
+    @property
+    def attempts(self) -> int:
+        """How often the image was tried: again only where its worker died, and then alone."""
+        return 2 if self.error == CRASHED else 1
+
+
+@dataclass(frozen=True, slots=True)
+class Outcome:
+    """One image's end. `seconds` by stage, `peak_rss_mb` and `traceback` go to run/ only."""
+
+    image_id: str
+    status: str  # measured | empty | failed
+    failure: Failure | None
+    seconds: Mapping[str, float]
+    peak_rss_mb: float | None
+    warnings: tuple[str, ...]
+    traceback: str
