@@ -84,6 +84,7 @@ class Root:
     flow_inwards: bool = True  # blood enters here; else it leaves here (a venule)
     kin: int = 0  # trees of one kin do not touch, those of different kin may cross
     crop_px: float = 0.0  # length of trunk outside the field
+    radius_px: float | None = None  # None: the shape's root_radius_px
 
 
 @dataclass(frozen=True, slots=True)
@@ -202,7 +203,8 @@ def _keep(
 def _grow_trunk(root: Root, shape: TreeShape, ground: Ground, rng: np.random.Generator) -> _Limb | None:
     """First limb of a tree; the part outside the field is straight and never checked."""
     for _ in range(shape.draws):
-        limb = _propose((root.x_px, root.y_px, root.heading), shape.root_radius_px, shape, rng)
+        radius = shape.root_radius_px if root.radius_px is None else root.radius_px
+        limb = _propose((root.x_px, root.y_px, root.heading), radius, shape, rng)
         path = limb.path(root.kin)
         skip = int(np.ceil(2 * path.radius_px + shape.margin_px))
         if len(path.x_px) <= skip + 4:
