@@ -27,8 +27,9 @@ from vasohm.flow.terminals import NetworkSettings, Terminals
 from vasohm.image.prepare import ImageQuality, PreparedImage, PrepareSettings
 from vasohm.image.segment import SegmentSettings, VesselMask
 from vasohm.network.graph import Crossings, NodeKind, VesselClass, VesselGraph
+from vasohm.network.lumenfit import RadiusSettings
 from vasohm.network.morphometry import Branchings, Morphometry
-from vasohm.network.radius import MeasuredGraph, RadiusSettings
+from vasohm.network.radius import MeasuredGraph
 from vasohm.results.cells import guard_text, unguard_text
 from vasohm.results.encode import json_bytes
 from vasohm.results.methods import Methods, MethodsUsed, bibtex, describe_methods

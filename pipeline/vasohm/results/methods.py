@@ -8,7 +8,7 @@ from vasohm.flow.rheology import BloodSettings
 from vasohm.flow.terminals import NetworkSettings
 from vasohm.image.prepare import PrepareSettings
 from vasohm.image.segment import SegmentSettings
-from vasohm.network.radius import RadiusSettings
+from vasohm.network.lumenfit import RadiusSettings
 
 POISEUILLE = (
     "Sutera SP, Skalak R. The history of Poiseuille's law. Annu Rev Fluid Mech 1993;25:1-20. "
