@@ -10,7 +10,7 @@ from vasohm.image.prepare import PrepareSettings
 from vasohm.image.read import ReadSettings
 from vasohm.image.segment import SegmentSettings
 from vasohm.network.crossings import CrossingSettings
-from vasohm.network.radius import RadiusSettings
+from vasohm.network.lumenfit import RadiusSettings
 from vasohm.network.skeletonize import SkeletonizeSettings
 
 
@@ -37,3 +37,15 @@ class Settings:
     network: NetworkSettings
     scenarios: tuple[Scenario, ...]
     output: OutputSettings
+
+
+@dataclass(frozen=True, slots=True)
+class CompareSettings:
+    """What `compare` asks of the results: parsed with the study, used after it was measured."""
+
+    outcomes: tuple[str, ...]  # table.column
+    by: str  # column of the sheet
+    reference: str  # its value that the others are held against
+    covariates: tuple[str, ...]  # columns of the sheet
+    plan_ratio: float | None  # the ratio that a next study should be able to see
+    radius_um: tuple[tuple[float, float], ...]  # classes of calibre, compared apart; empty: all vessels together

@@ -1,0 +1,66 @@
+"""What a study need not say: values that every study shares, and those that each kind of image brings.
+
+Keys are those of the study file, `table.key`. Values are starting points from practice unless a source is named; a
+study that says otherwise wins.
+"""
+
+from collections.abc import Mapping
+from typing import Any
+
+# Shared by all kinds of image.
+DEFAULTS: Mapping[str, Any] = {
+    "image.gamma": 1.0,  # a linear camera
+    "image.max_megapixels": 400.0,
+    "scale.pixel_size_um": None,
+    "scale.pixel_size_se_um": None,
+    "scale.scale_conflict": "stop",
+    "segment.method": "ridge",
+    "segment.false_alarms_per_mpx": 100.0,
+    "segment.crossing_probability": 0.5,  # the more probable reading wins
+    "segment.parameters": {},
+    "radius.profile": "auto",
+    "radius.blur_px": "auto",
+    "radius.plasma_layer_um": 0.0,
+    "radius.plasma_layer_se_um": 0.0,
+    "blood.law": "pries-in-vivo",
+    "blood.hematocrit": 0.45,  # systemic, of healthy adults
+    "blood.plasma_viscosity_mpa_s": 1.2,  # at 37 degrees Celsius
+    "blood.viscosity_mpa_s": 3.0,
+    "blood.hematocrit_split": False,
+    "blood.parameters": {},
+    "network.terminals": "auto",
+    "network.drive_mmhg": 1.0,  # resistance does not depend on it
+    "output.overlay": True,
+}
+
+# Largest vessels asked for: retinal trunks are below 100 um in radius; the field of a microscope holds smaller ones.
+PRESETS: Mapping[str, Mapping[str, Any]] = {
+    "fundus": {  # colour photograph of a retina: blood absorbs green light
+        "image.channel": "green",
+        "image.polarity": "dark",
+        "image.plane": "mean",
+        "segment.radius_um": [4.0, 120.0],
+    },
+    "angiogram": {  # contrast agent or flow signal makes vessels bright
+        "image.channel": "luminance",
+        "image.polarity": "bright",
+        "image.plane": "max",
+        "segment.radius_um": [3.0, 120.0],
+    },
+    "fluorescence": {  # labelled plasma or vessel wall under a microscope
+        "image.channel": "luminance",
+        "image.polarity": "bright",
+        "image.plane": "max",
+        "segment.radius_um": [1.5, 60.0],
+    },
+    "intravital": {  # transmitted or reflected light: columns of red cells absorb green
+        "image.channel": "green",
+        "image.polarity": "dark",
+        "image.plane": "mean",
+        "segment.radius_um": [2.0, 60.0],
+    },
+}
+
+# Dead ends shorter than this are noise of a mask's outline: measured on rods with half a pixel of edge noise.
+SPUR_RADII = 1.2
+SPUR_PX = 3.0

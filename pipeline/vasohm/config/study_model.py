@@ -1,0 +1,297 @@
+"""What a study file may say: every table, key, type and range, and how a wrong one is told."""
+
+import math
+import re
+from collections.abc import Mapping
+from typing import Annotated, Any, Literal, get_args
+
+from pydantic import AfterValidator, BaseModel, ConfigDict, Field, PlainValidator, ValidationError
+from pydantic_core import ErrorDetails, PydanticCustomError
+
+from vasohm.config.names import nearest
+from vasohm.config.presets import PRESETS
+from vasohm.errors import Problem
+from vasohm.flow.rheology import HIGHEST_HEMATOCRIT, law_names
+from vasohm.image.calibrate import LEAST_UM, MOST_UM
+from vasohm.image.segment import segmenter_names
+
+MOST_SHOWN = 60  # characters of a faulty value
+CHANNELS = ("green", "red", "blue", "luminance")
+PLANES = ("max", "mean")
+TYPE_WORDS = {
+    "float_type": "a number",
+    "int_type": "a whole number",
+    "bool_type": "true or false",
+    "string_type": "text in quotes",
+    "list_type": "a list in square brackets",
+    "dict_type": "a table",
+    "model_type": "a table",
+    "finite_number": "a finite number",
+}
+BOUND_WORDS = {
+    "greater_than": ("gt", "greater than"),
+    "greater_than_equal": ("ge", "at least"),
+    "less_than_equal": ("le", "at most"),
+}
+LITERAL = re.compile("'([^']+)'")
+
+
+def _wrong(message: str) -> PydanticCustomError:
+    return PydanticCustomError("vasohm", "{message}", {"message": message})
+
+
+def _one_of(value: object, words: tuple[str, ...], more: str = "") -> str:
+    """Return `value` where it is one of the words; `more` says what else would do."""
+    if isinstance(value, str) and value in words:
+        return value
+    like = nearest(value, words) if isinstance(value, str) else ""
+    hint = f" Did you mean {like!r}?" if like else ""
+    raise _wrong(f"must be one of {', '.join(map(repr, words))}{more}.{hint}")
+
+
+def _word_or_index(value: object, words: tuple[str, ...]) -> int | str:
+    if isinstance(value, int) and not isinstance(value, bool) and value >= 0:
+        return value
+    return _one_of(value, words, " or a number counted from 0")
+
+
+def _blur(value: object) -> float | str:
+    if isinstance(value, int | float) and not isinstance(value, bool) and 0 < value < math.inf:
+        return float(value)
+    return _one_of(value, ("auto",), " or a number of pixels greater than 0")
+
+
+def _radius_range(value: list[float]) -> list[float]:
+    if not 0 < value[0] < value[1]:
+        raise _wrong("must be two radii in um, the smaller first, both greater than 0.")
+    return value
+
+
+def _not_split(value: bool) -> bool:
+    if value:
+        raise _wrong(
+            "is not available: this version does not part hematocrit at branchings. Leave it out or set it to false."
+        )
+    return value
+
+
+def _plain_name(value: str) -> str:
+    if not value.strip() or not value.isprintable():
+        raise _wrong("must be text that can be printed.")
+    return value
+
+
+def _plan_ratio(value: float) -> float:
+    if value == 1:
+        raise _wrong("must differ from 1: a ratio of 1 is no effect to plan for.")
+    return value
+
+
+Positive = Annotated[float, Field(gt=0)]
+NotNegative = Annotated[float, Field(ge=0)]
+Name = Annotated[str, Field(min_length=1, max_length=200), AfterValidator(_plain_name)]
+RadiusRange = Annotated[list[float], Field(min_length=2, max_length=2), AfterValidator(_radius_range)]
+Names = Annotated[list[Name], Field(max_length=100)]
+
+
+class Table(BaseModel):
+    """One table of a study file: strict types, finite numbers, no unknown keys."""
+
+    model_config = ConfigDict(strict=True, extra="forbid", frozen=True, allow_inf_nan=False)
+
+
+class StudyTable(Table):
+    """Of the study itself."""
+
+    name: Name | None = None
+    sheet: Name | None = None
+
+
+class ImageTable(Table):
+    """How pictures are read."""
+
+    preset: Annotated[str, PlainValidator(lambda value: _one_of(value, tuple(PRESETS)))]
+    channel: Annotated[int | str, PlainValidator(lambda value: _word_or_index(value, CHANNELS))] | None = None
+    polarity: Literal["dark", "bright"] | None = None
+    plane: Annotated[int | str, PlainValidator(lambda value: _word_or_index(value, PLANES))] | None = None
+    gamma: Annotated[float, Field(gt=0, le=10)] | None = None
+    max_megapixels: Annotated[float, Field(gt=0, le=100_000)] | None = None
+
+
+class ScaleTable(Table):
+    """Pixel size."""
+
+    pixel_size_um: Annotated[float, Field(ge=LEAST_UM, le=MOST_UM)] | None = None
+    pixel_size_se_um: NotNegative | None = None
+    scale_conflict: Literal["stop", "sheet"] | None = None
+
+
+class SegmentTable(Table):
+    """How vessels are found."""
+
+    method: Annotated[str, PlainValidator(lambda value: _one_of(value, segmenter_names()))] | None = None
+    radius_um: RadiusRange | None = None
+    false_alarms_per_mpx: NotNegative | None = None
+    crossing_probability: Annotated[float, Field(ge=0, le=1)] | None = None
+    parameters: dict[str, float] | None = None
+
+
+class RadiusTable(Table):
+    """How radii are measured."""
+
+    profile: Literal["auto", "slab", "cylinder", "absorber"] | None = None
+    blur_px: Annotated[float | str, PlainValidator(_blur)] | None = None
+    plasma_layer_um: NotNegative | None = None
+    plasma_layer_se_um: NotNegative | None = None
+
+
+class BloodTable(Table):
+    """Blood."""
+
+    law: Annotated[str, PlainValidator(lambda value: _one_of(value, law_names()))] | None = None
+    hematocrit: Annotated[float, Field(ge=0, le=HIGHEST_HEMATOCRIT)] | None = None
+    plasma_viscosity_mpa_s: Positive | None = None
+    viscosity_mpa_s: Positive | None = None
+    hematocrit_split: Annotated[bool, AfterValidator(_not_split)] | None = None
+    parameters: dict[str, float] | None = None
+
+
+class NetworkTable(Table):
+    """Where blood enters and leaves."""
+
+    terminals: Literal["auto", "file", "none"] | None = None
+    drive_mmhg: Positive | None = None
+
+
+class WhereTable(Table):
+    """Which vessels a scenario changes."""
+
+    radius_um_below: Positive | None = None
+    radius_um_above: NotNegative | None = None
+    vessel_class: Literal["arteriole", "venule", "capillary"] | None = None
+
+
+class ScenarioTable(Table):
+    """What if some vessels change their radius."""
+
+    name: Name
+    where: WhereTable = WhereTable()
+    radius_factor: Annotated[float, Field(gt=0, le=10)]
+
+
+class CompareTable(Table):
+    """Which cohorts are compared, in what."""
+
+    outcomes: Annotated[Names, Field(min_length=1)]
+    by: Name
+    reference: Name
+    covariates: Names = []
+    plan_ratio: Annotated[Positive, AfterValidator(_plan_ratio)] | None = None
+    radius_um: list[RadiusRange] = []
+
+
+class OutputTable(Table):
+    """What is written beside the tables."""
+
+    overlay: bool | None = None
+
+
+class StudyModel(Table):
+    """A whole study file."""
+
+    study: StudyTable = StudyTable()
+    image: ImageTable
+    scale: ScaleTable = ScaleTable()
+    segment: SegmentTable = SegmentTable()
+    radius: RadiusTable = RadiusTable()
+    blood: BloodTable = BloodTable()
+    network: NetworkTable = NetworkTable()
+    scenario: list[ScenarioTable] = []
+    compare: CompareTable | None = None
+    output: OutputTable = OutputTable()
+
+
+def parse_model(said: Mapping[str, Any], file: str) -> tuple[StudyModel | None, list[Problem]]:
+    """Check what a study says against its model.
+
+    Parameters
+    ----------
+    said : tables by name.
+    file : where they come from, for the problems.
+
+    Returns
+    -------
+    The model, or None and every problem found.
+    """
+    try:
+        return StudyModel.model_validate(said), []
+    except ValidationError as error:
+        return None, [_problem(detail, file) for detail in error.errors(include_url=False)]
+
+
+def _problem(detail: ErrorDetails, file: str) -> Problem:
+    key = ""
+    for part in detail["loc"]:
+        key += f"[{part + 1}]" if isinstance(part, int) else f"{'.' if key else ''}{part}"
+    value = "" if detail["type"] == "missing" else _shown(detail["input"])
+    return Problem(file, _message(detail), column=key, value=value)
+
+
+def _message(detail: ErrorDetails) -> str:
+    kind, value = detail["type"], _shown(detail["input"])
+    if kind == "extra_forbidden":
+        return _unknown(detail["loc"])
+    if kind == "missing":
+        known = ", ".join(map(repr, PRESETS))
+        return f"is missing. Give [image] a preset: {known}." if detail["loc"][0] == "image" else "is missing."
+    return f"{value} {_rule(detail)}"
+
+
+def _rule(detail: ErrorDetails) -> str:
+    """Say what a value must be."""
+    kind, context = detail["type"], detail.get("ctx", {})
+    if kind in TYPE_WORDS:
+        return f"must be {TYPE_WORDS[kind]}."
+    if kind in BOUND_WORDS:
+        key, words = BOUND_WORDS[kind]
+        return f"must be {words} {context[key]:g}."
+    if kind == "literal_error":
+        known = tuple(LITERAL.findall(str(context["expected"])))
+        like = nearest(str(detail["input"]), known)
+        return f"must be one of {', '.join(map(repr, known))}.{f' Did you mean {like!r}?' if like else ''}"
+    return detail["msg"] if kind == "vasohm" else f"is wrong: {detail['msg']}."
+
+
+def _unknown(place: tuple[int | str, ...]) -> str:
+    """Name the nearest known key of the same table, or the table in which the key would be known."""
+    *tables, word = (part for part in place if isinstance(part, str))
+    known = _keys(tables)
+    like = nearest(word, known)
+    if like:
+        return f"unknown key; the nearest known one is {like!r}."
+    homes = [f"[{name}]" for name in StudyModel.model_fields if word in _keys([name])]
+    if homes:
+        return f"unknown key here; it belongs in {' or '.join(homes)}."
+    return f"unknown key; known here are {', '.join(known)}."
+
+
+def _keys(tables: list[str]) -> tuple[str, ...]:
+    model: type[BaseModel] = StudyModel
+    for name in tables:
+        inner = _model_in(model.model_fields[name].annotation)
+        if inner is None:
+            return ()
+        model = inner
+    return tuple(model.model_fields)
+
+
+def _model_in(annotation: Any) -> type[BaseModel] | None:
+    if isinstance(annotation, type) and issubclass(annotation, BaseModel):
+        return annotation
+    return next((found for part in get_args(annotation) if (found := _model_in(part))), None)
+
+
+def _shown(value: object) -> str:
+    """Write a value as a study file would, shortened."""
+    text = str(value).lower() if isinstance(value, bool) else repr(value)
+    return text if len(text) <= MOST_SHOWN else text[:MOST_SHOWN] + "..."
