@@ -1,0 +1,188 @@
+"""The image's own blur and profile, from its widest vessels."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
+from vasohm.network.jointfit import LN_C, LN_R, Observed, Priors, fit_joint, total_cost
+from vasohm.network.profiles import Optics, ProfileTable, ln_area
+from vasohm.network.shared import (
+    S_RANGE_PX,
+    TAU_RANGE,
+    Marginal,
+    marginalise,
+    optics_response,
+    parameters_of,
+    shifted,
+    table_like,
+)
+
+START_PX = (0.6, 0.9, 1.35, 2.0, 3.0, 4.5)  # blurs tried first
+ROUNDS = 12
+SETTLED = 3e-3  # of ln blur
+SE_FACTOR = 1.3  # the curvature of chi^2 states 10 to 30 % too little (measured on phantoms)
+DECISIVE = 6.0  # difference of log likelihood between slab and cylinder from which the image has told its family
+ODD_SEGMENT = (5.0, 0.35)  # out of focus: ln blur off by so many standard errors, and by so much
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class ImageOptics:
+    """What the image says about its optics.
+
+    `covariance` (k, k) is that of ln of the parameters of `optics`; a typed blur counts with its own uncertainty.
+    `family_told` is false where slab and cylinder explain the picture about equally.
+    """
+
+    optics: Optics
+    covariance: FloatArray
+    family_told: bool
+    theta: FloatArray  # (n_points, B) unknowns of the chosen segments
+    answer: FloatArray  # (n_points, B, k) their change with the optics
+    in_focus: BoolArray  # (n_segments,) of the chosen segments
+
+    def __post_init__(self) -> None:
+        freeze(self)
+
+
+@dataclass(frozen=True, slots=True)
+class OpticsRequest:
+    """Families allowed, and the blur (all of it, px) with its relative uncertainty where it is not to be found."""
+
+    families: tuple[str, ...]
+    blur_px: float | None
+    blur_rel_se: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Fit:
+    optics: Optics
+    theta: FloatArray
+    cost: float
+    marginal: Marginal
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Case:
+    """What is fitted: strips, priors, a table over the range needed, and what may vary."""
+
+    observed: Observed
+    priors: Priors
+    table: ProfileTable
+    request: OpticsRequest
+
+    def free(self, optics: Optics) -> tuple[str, ...]:
+        names = parameters_of(optics)
+        return names if self.request.blur_px is None else names[1:]
+
+
+def estimate_optics(
+    observed: Observed, priors: Priors, table: ProfileTable, start: FloatArray, request: OpticsRequest
+) -> ImageOptics:
+    """Find blur, family and absorption from segments wide enough to show them.
+
+    Parameters
+    ----------
+    observed, priors, start : strips, priors without a prior of contrast, and first unknowns of the chosen segments.
+    table : any table over the range needed.
+    """
+    case = _Case(observed, priors, table, request)
+    families = request.families
+    simple = [family for family in ("slab", "cylinder") if family in families] or ["cylinder"]
+    fits = {family: _refine(case, start, Optics(family, 0.0, _scan(case, start, family)), table) for family in simple}
+    best = min(fits.values(), key=lambda fit: fit.cost)
+    told = len(families) == 1 or len(fits) == 1 or abs(fits["slab"].cost - fits["cylinder"].cost) > DECISIVE
+    if "absorber" in families:
+        absorbing = _absorber(case, best)
+        gain = best.cost - absorbing.cost
+        if len(families) == 1 or gain > 0.5 * np.log(observed.n_points):
+            told |= gain > DECISIVE
+            best = absorbing
+    covariance = np.zeros((len(parameters_of(best.optics)),) * 2)
+    n_free = len(case.free(best.optics))
+    if n_free:
+        information = best.marginal.information[_in_focus(best.marginal)].sum(axis=0)[-n_free:, -n_free:]
+        covariance[-n_free:, -n_free:] = SE_FACTOR**2 * np.linalg.inv(information + 0.25 * np.eye(n_free))
+    if request.blur_px is not None:
+        covariance[0, 0] = request.blur_rel_se**2
+    keep = _in_focus(best.marginal)
+    return ImageOptics(best.optics, covariance, bool(told), best.theta, best.marginal.answer, keep)
+
+
+def _scan(case: _Case, start: FloatArray, family: str) -> float:
+    if case.request.blur_px is not None:
+        return case.request.blur_px
+    costs = []
+    for blur in START_PX:
+        here = table_like(case.table, Optics(family, 0.0, blur))
+        begin = _same_area(start, case.table, here)
+        theta, normal = fit_joint(case.observed, case.priors, here, begin, max_steps=4)
+        costs.append(total_cost(case.observed, case.priors, theta, normal))
+    return START_PX[int(np.argmin(costs))]
+
+
+def _same_area(theta: FloatArray, old: ProfileTable, new: ProfileTable) -> FloatArray:
+    """Give each point the contrast with which the new optics throw as much light as the old."""
+    out = theta.copy()
+    out[:, LN_C] += ln_area(old.optics, theta[:, LN_R])[0] - ln_area(new.optics, theta[:, LN_R])[0]
+    return out
+
+
+def _absorber(case: _Case, best: _Fit) -> _Fit:
+    """Refine from some absorption across the widest vessels, as the better of slab and cylinder suggests."""
+    wide = float(np.exp(np.quantile(best.theta[:, LN_R], 0.9)))
+    tau = 1.0 if best.optics.family == "cylinder" else 3.0
+    optics = Optics("absorber", tau / (2.0 * wide), best.optics.s_px)
+    return _refine(case, best.theta, optics, table_like(case.table, best.optics))
+
+
+def _refine(case: _Case, start: FloatArray, optics: Optics, started: ProfileTable) -> _Fit:
+    """Newton steps in ln blur and ln absorption, each with the unknowns of all points refitted."""
+    observed, priors = case.observed, case.priors
+    here = table_like(case.table, optics)
+    theta, normal = fit_joint(observed, priors, here, _same_area(start, started, here), max_steps=6)
+    wide = float(np.exp(np.quantile(theta[:, LN_R], 0.9)))
+    names, free = parameters_of(optics), case.free(optics)
+    for _ in range(ROUNDS if free else 0):
+        response = optics_response(observed, here, theta, names)
+        marginal = marginalise(observed, priors, theta, normal, response)
+        keep, n = _in_focus(marginal), len(free)
+        information = marginal.information[keep].sum(axis=0)[-n:, -n:]
+        gradient = marginal.gradient[keep].sum(axis=0)[-n:]
+        step = np.clip(np.linalg.solve(information + 1e-3 * np.eye(n), gradient), -0.35, 0.35)
+        for name, ln_step in zip(free, step, strict=True):
+            here = table_like(case.table, _bounded(shifted(here.optics, name, float(ln_step)), wide))
+        theta, normal = fit_joint(observed, priors, here, theta, max_steps=4)
+        if np.all(np.abs(step) < SETTLED):
+            break
+    marginal = marginalise(observed, priors, theta, normal, optics_response(observed, here, theta, names))
+    return _Fit(here.optics, theta, total_cost(observed, priors, theta, normal), marginal)
+
+
+def _bounded(optics: Optics, wide: float) -> Optics:
+    mu = optics.mu_per_px
+    if optics.family == "absorber":
+        mu = float(np.clip(mu, TAU_RANGE[0] / (2 * wide), TAU_RANGE[1] / (2 * wide)))
+    # rounded, so that tables are found again
+    return Optics(optics.family, float(f"{mu:.9g}"), float(f"{np.clip(optics.s_px, *S_RANGE_PX):.9g}"))
+
+
+def _in_focus(marginal: Marginal) -> BoolArray:
+    """Segments whose own blur does not contradict the others'."""
+    shift, se = blur_of_segments(marginal)
+    middle = float(np.median(shift)) if len(shift) else 0.0
+    odd = (np.abs(shift - middle) > ODD_SEGMENT[0] * se) & (np.abs(shift - middle) > ODD_SEGMENT[1])
+    return ~odd if odd.mean() < 0.5 else np.ones(len(odd), np.bool_)
+
+
+def blur_of_segments(marginal: Marginal) -> tuple[FloatArray, FloatArray]:
+    """Return how far each segment's own ln blur lies above the image's, and its standard error."""
+    information = np.maximum(marginal.information[:, 0, 0], 1e-9)
+    return marginal.gradient[:, 0] / information, 1.0 / np.sqrt(information)
+
+
+def choose_segments(radius: FloatArray, length: IntArray, usable: BoolArray, most_points: int) -> IntArray:
+    """Choose segments, widest first and evenly down the sizes, that hold about `most_points` points."""
+    order = np.flatnonzero(usable)[np.argsort(-radius[usable], kind="stable")]
+    stride = max(int(np.ceil(length[order].sum() / most_points)), 1)
+    return np.sort(order[::stride])

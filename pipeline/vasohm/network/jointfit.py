@@ -1,0 +1,285 @@
+"""Blurred tube profiles fitted jointly along each segment: banded Gauss-Newton steps for all segments at once.
+
+Unknowns at every centreline point: ln radius, ln contrast, offset of the axis, background and its slope, and where
+asked for the height of the light reflex on the axis. Priors tie neighbouring points; only ln r has a free stiffness.
+The normal matrix of all points has 2 B diagonals on each side, B the number of unknowns.
+"""
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+from scipy.linalg import cho_solve_banded, cholesky_banded
+
+from vasohm.arrays import AnyArray, BoolArray, Float32Array, FloatArray, IntArray
+from vasohm.network.profiles import ProfileTable, ln_height, tube_strips
+from vasohm.network.strips import CHUNK, Overlaps, Strips
+
+LN_R, LN_C, OFFSET, LEVEL, SLOPE, REFLEX = range(6)
+HUBER = 3.0  # residuals beyond this many standard deviations count linearly
+REFLEX_WIDTH = 0.25  # sd of the light reflex in radii
+CONVERGED = 2e-3  # of ln r; the next Gauss-Newton step would be far smaller
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Observed:
+    """Strips of some points, their weights, and what other vessels lay on them.
+
+    `weights` hold 1 / variance x usability x length of centreline / noise factor; `row_scale` (n_points,) is the
+    part of them that is not 1 / variance.
+    """
+
+    offsets: IntArray  # (n_segments + 1,)
+    segment: IntArray  # (n_points,)
+    strips: tuple[Strips, ...]
+    overlaps: tuple[Overlaps, ...]
+    weights: tuple[Float32Array, ...]
+    row_scale: FloatArray
+
+    @property
+    def n_points(self) -> int:
+        return len(self.segment)
+
+    @property
+    def n_segments(self) -> int:
+        return len(self.offsets) - 1
+
+    def by_segment(self, values: FloatArray) -> FloatArray:
+        """Sum (n_points,) values over each segment."""
+        return np.bincount(self.segment, values, self.n_segments)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Priors:
+    """Gaussian priors as diagonals of their precision matrix: within points, to the next, to the one after next.
+
+    Differences are held near 0 by `diagonals` (3, n_points, B), single unknowns near `mean` by `hold`, both
+    (n_points, B). `bend` holds the same three diagonals of the second difference of ln r at unit stiffness.
+    """
+
+    diagonals: FloatArray
+    bend: FloatArray  # (3, n_points)
+    ln_stiffness: FloatArray  # (n_segments,) of the bend, per radius cubed
+    hold: FloatArray
+    mean: FloatArray
+
+    def full(self, segment: IntArray) -> FloatArray:
+        """Diagonals (3, n_points, B) without the part that holds single unknowns."""
+        out = self.diagonals.copy()
+        out[:, :, LN_R] += np.exp(self.ln_stiffness)[segment] * self.bend
+        return out
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Normal:
+    """Second-order picture of the data's log likelihood at the unknowns."""
+
+    matrix: FloatArray  # (n_points, B, B)
+    gradient: FloatArray  # (n_points, B)
+    cost: FloatArray  # (n_points,)
+
+
+# --- model against data ---------------------------------------------------------------------------------------------
+
+
+def model_strips(table: ProfileTable, half_width: int, theta: FloatArray) -> Float32Array:
+    """Model strips (n, 1 + B, samples): the light itself, then its derivatives by the B unknowns."""
+    n_unknowns = theta.shape[1]
+    x = np.arange(-half_width, half_width + 1, dtype=np.float32)
+    tube = tube_strips(table, half_width, theta[:, LN_R], theta[:, LN_C], theta[:, OFFSET])
+    out = np.empty((len(theta), 1 + n_unknowns, len(x)), np.float32)
+    out[:, 1 + LN_R] = tube[:, 1]
+    out[:, 1 + LN_C] = tube[:, 0]
+    out[:, 1 + OFFSET] = tube[:, 2]
+    out[:, 1 + LEVEL] = 1.0
+    out[:, 1 + SLOPE] = x
+    base = theta[:, LEVEL : SLOPE + 1].astype(np.float32)
+    out[:, 0] = tube[:, 0] + base[:, :1] + base[:, 1:] * x
+    if n_unknowns > REFLEX:
+        high = np.exp(theta[:, LN_C] + ln_height(table.optics, theta[:, LN_R]))
+        width = np.hypot(REFLEX_WIDTH * np.exp(theta[:, LN_R]), table.optics.s_px)
+        high = high * REFLEX_WIDTH * np.exp(theta[:, LN_R]) / width
+        u = (x - theta[:, OFFSET, None]) / width[:, None]
+        out[:, 1 + REFLEX] = -high[:, None] * np.exp(-0.5 * u**2)
+        out[:, 0] += theta[:, REFLEX, None].astype(np.float32) * out[:, 1 + REFLEX]
+    return out
+
+
+def neighbour_light(table: ProfileTable, overlaps: Overlaps, theta: FloatArray) -> FloatArray:
+    """Return the light that other vessels throw on the samples of `overlaps`."""
+    if len(overlaps.sample) == 0:
+        return np.zeros(0)
+    who = theta[overlaps.point]
+    near = np.clip(overlaps.distance_px - who[:, OFFSET], 1.0 - table.half_px, table.half_px - 1.0)
+    light = np.empty(len(near))
+    for low in range(0, len(near), 4 * CHUNK):
+        part = slice(low, low + 4 * CHUNK)
+        light[part] = tube_strips(table, 0, who[part, LN_R], who[part, LN_C], -near[part])[:, 0, 0]
+    return light
+
+
+def normal_equations(
+    observed: Observed, table: ProfileTable, theta: FloatArray, active: BoolArray | None = None
+) -> Normal:
+    """Compare model and strips; points outside `active` (n_points,) are left zero."""
+    n, n_unknowns = theta.shape
+    normal = Normal(np.zeros((n, n_unknowns, n_unknowns)), np.zeros((n, n_unknowns)), np.zeros(n))
+    for strips, overlaps, weights in zip(observed.strips, observed.overlaps, observed.weights, strict=True):
+        y = strips.y
+        if len(overlaps.sample):
+            y = y.copy()
+            np.subtract.at(y.reshape(-1), overlaps.sample, neighbour_light(table, overlaps, theta).astype(np.float32))
+        rows = np.arange(len(strips.points))
+        if active is not None:
+            rows = rows[active[strips.points]]
+        for low in range(0, len(rows), CHUNK):
+            part = rows[low : low + CHUNK]
+            points = strips.points[part]
+            model = model_strips(table, strips.half_width, theta[points])
+            w, residual = weights[part], y[part] - model[:, 0]
+            w, cost = _huber(w, residual, observed.row_scale[points])
+            design = model[:, 1:]
+            weighted = design * w[:, None]
+            normal.matrix[points] = np.matmul(weighted, design.transpose(0, 2, 1))
+            normal.gradient[points] = np.matmul(weighted, residual[:, :, None])[:, :, 0]
+            normal.cost[points] = cost
+    return normal
+
+
+def _huber(w: Float32Array, residual: Float32Array, row_scale: FloatArray) -> tuple[Float32Array, FloatArray]:
+    """Weights lowered for outliers, and the cost of each strip."""
+    scale = np.maximum(row_scale, 1e-12).astype(np.float32)[:, None]
+    squared = w * residual**2
+    beyond = squared > HUBER**2 * scale
+    cost = np.sum(squared, axis=1, dtype=np.float64) / 2
+    if beyond.any():
+        row, _ = np.nonzero(beyond)
+        excess = squared[beyond]
+        unit = np.broadcast_to(scale, w.shape)[beyond]
+        z = np.sqrt(excess / unit)
+        w = w.copy()
+        w[beyond] *= HUBER / z
+        cost += np.bincount(row, unit * (HUBER * z - HUBER**2 / 2) - excess / 2, len(w))
+    return w, cost
+
+
+# --- priors ---------------------------------------------------------------------------------------------------------
+
+
+def difference_diagonals(step: FloatArray, bend: FloatArray, segment: IntArray) -> FloatArray:
+    """Diagonals (3, n, ...) of first differences weighing `step` (n, ...) and second differences weighing `bend`.
+
+    `step[i]` is for points i and i + 1, `bend[i]` for i, i + 1 and i + 2; none reaches over a segment's end.
+    """
+    out = np.zeros((3, *step.shape))
+    extra = (1,) * (step.ndim - 1)
+    one = step[:-1] * (segment[1:] == segment[:-1]).reshape(-1, *extra)
+    out[0, :-1] += one
+    out[0, 1:] += one
+    out[1, :-1] -= one
+    two = bend[:-2] * (segment[2:] == segment[:-2]).reshape(-1, *extra)
+    out[0, :-2] += two
+    out[0, 1:-1] += 4 * two
+    out[0, 2:] += two
+    out[1, :-2] -= 2 * two
+    out[1, 1:-1] -= 2 * two
+    out[2, :-2] += two
+    return out
+
+
+def times(diagonals: FloatArray, theta: FloatArray) -> FloatArray:
+    """Multiply the symmetric matrix given by its diagonals (3, n, ...) with `theta` (n, ...)."""
+    out = diagonals[0] * theta
+    for k in (1, 2):
+        out[:-k] += diagonals[k, :-k] * theta[k:]
+        out[k:] += diagonals[k, :-k] * theta[:-k]
+    return np.asarray(out)
+
+
+def prior_pull(priors: Priors, theta: FloatArray, segment: IntArray) -> tuple[FloatArray, FloatArray]:
+    """Gradient (n, B) of the log prior and its cost (n,) by point."""
+    stiff = times(priors.full(segment), theta)
+    away = theta - priors.mean
+    cost = 0.5 * np.sum(theta * stiff + priors.hold * away**2, axis=1)
+    return -stiff - priors.hold * away, cost
+
+
+# --- solving --------------------------------------------------------------------------------------------------------
+
+
+def factor(matrix: FloatArray, diagonals: FloatArray, hold: FloatArray) -> FloatArray:
+    """Banded Cholesky factor (2 B + 1, n B) of data plus priors, lower form."""
+    n, n_unknowns = hold.shape
+    band = np.zeros((n, n_unknowns, 2 * n_unknowns + 1))
+    for a in range(n_unknowns):
+        for b in range(a + 1):
+            band[:, b, a - b] = matrix[:, a, b]
+    band[:, :, 0] += diagonals[0] + hold
+    band[:, :, n_unknowns] = diagonals[1]
+    band[:, :, 2 * n_unknowns] = diagonals[2]
+    flat = band.reshape(n * n_unknowns, -1).T
+    done: FloatArray = cholesky_banded(flat, overwrite_ab=True, lower=True, check_finite=False)
+    return done
+
+
+def solve(factored: FloatArray, right: FloatArray) -> FloatArray:
+    """Solve for right sides (n, B) or (n, B, k)."""
+    flat = right.reshape(factored.shape[1], *right.shape[2:])
+    answer: AnyArray = cho_solve_banded((factored, True), flat, check_finite=False)
+    return answer.reshape(right.shape)
+
+
+def fit_joint(
+    observed: Observed, priors: Priors, table: ProfileTable, start: FloatArray, *, max_steps: int
+) -> tuple[FloatArray, Normal]:
+    """Find the most probable unknowns (n_points, B) of every segment, and the normal equations there.
+
+    A segment whose step made things worse goes back and is damped ten times more; one whose step is small is done.
+    """
+    segment = observed.segment
+    theta = start.copy()
+    n_unknowns = theta.shape[1]
+    limit = np.array([0.7, 0.7, 1.0, np.inf, np.inf, 0.5])[:n_unknowns]
+    diagonals = priors.full(segment)
+    best = normal_equations(observed, table, theta)
+    pull, prior_cost = prior_pull(priors, theta, segment)
+    cost = observed.by_segment(best.cost + prior_cost)
+    damping = np.zeros(observed.n_segments)
+    running = np.ones(observed.n_segments, np.bool_)
+    coupled = any(len(o.sample) for o in observed.overlaps)
+    for _ in range(max_steps):
+        points = np.flatnonzero(running[segment])
+        if len(points) == 0:
+            break
+        extra = damping[segment[points], None] * np.einsum("nii->ni", best.matrix[points])
+        factored = factor(best.matrix[points], diagonals[:, points], priors.hold[points] + extra)
+        step = np.clip(solve(factored, (best.gradient + pull)[points]), -limit, limit)
+        trial = theta.copy()
+        trial[points] += step
+        if n_unknowns > REFLEX:
+            trial[:, REFLEX] = np.maximum(trial[:, REFLEX], 0.0)
+        found = normal_equations(observed, table, trial, running[segment])
+        new_pull, prior_cost = prior_pull(priors, trial, segment)
+        new_cost = observed.by_segment(found.cost + prior_cost)
+        # light of neighbours changes from step to step: then costs are not comparable to the last digit
+        slack = 1e-9 * np.abs(cost) + (0.5 if coupled else 1e-6)
+        better = running & (new_cost <= cost + slack)
+        take = better[segment]
+        theta[take], pull[take] = trial[take], new_pull[take]
+        best.matrix[take], best.gradient[take] = found.matrix[take], found.gradient[take]
+        best.cost[take] = found.cost[take]
+        cost = np.where(better, new_cost, cost)
+        largest = np.zeros(observed.n_segments)
+        np.maximum.at(largest, segment[points], np.abs(step[:, LN_R]))
+        damping = np.where(running & ~better, np.maximum(damping * 10, 1e-2), damping / 10)
+        running &= ~(better & (largest < CONVERGED)) & (damping < 1e6)
+    return theta, best
+
+
+def with_stiffness(priors: Priors, ln_stiffness: FloatArray) -> Priors:
+    """Return the same priors with another stiffness of ln r (n_segments,)."""
+    return replace(priors, ln_stiffness=ln_stiffness)
+
+
+def total_cost(observed: Observed, priors: Priors, theta: FloatArray, normal: Normal) -> float:
+    """Minus the log posterior, up to a constant."""
+    return float(np.sum(normal.cost + prior_pull(priors, theta, observed.segment)[1]))
