@@ -1,6 +1,6 @@
 """Scenes like the back of an eye: arteriolar and venular trees from an optic disc that cross each other."""
 
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -8,6 +8,9 @@ from vasohm_synthetic.clearance import Field
 from vasohm_synthetic.errors import refuse
 from vasohm_synthetic.scene import Circle, Scene
 from vasohm_synthetic.trees import Root, TreeShape, grow_trees, tree_shape_problems
+
+
+FUNDUS_TREE = TreeShape(root_radius_px=5.5, min_radius_px=1.2, length_ratio=12.0, margin_px=3.0)
 
 
 @dataclass(frozen=True, slots=True)
@@ -24,9 +27,7 @@ class FundusShape:
     trunks_deg: tuple[float, ...] = (-55.0, 55.0, -130.0, 130.0)  # headings of the arteriolar trunks
     venule_offset_deg: float = 27.0  # each venular trunk leaves beside an arteriolar one
     venule_ratio: float = 1.25  # radius of venular over arteriolar trunks
-    tree: TreeShape = field(
-        default_factory=lambda: TreeShape(root_radius_px=5.5, min_radius_px=1.2, length_ratio=12.0, margin_px=3.0)
-    )
+    tree: TreeShape = FUNDUS_TREE
 
 
 def fundus_shape_problems(shape: FundusShape) -> list[str]:

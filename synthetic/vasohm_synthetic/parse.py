@@ -53,6 +53,11 @@ class Fields:
         value = self._convert(key, table.get(key, default), float)
         return default if value is None else float(value)
 
+    def whole(self, table: Mapping[str, Any], key: str, default: int) -> int:
+        """A whole number."""
+        value = self._convert(key, table.get(key, default), int)
+        return default if value is None else int(value)
+
     def text(self, table: Mapping[str, Any], key: str, default: str) -> str:
         """A text."""
         value = self._convert(key, table.get(key, default), str)
@@ -85,7 +90,7 @@ class Fields:
         return value
 
     def build(self, cls: type[Built], table: Any, where: str, **parts: Any) -> Built:
-        """Make a dataclass of plain fields from a table; `parts` are fields already made.
+        """Make a dataclass whose fields all have defaults from a table; `parts` are fields already made.
 
         A field that cannot be understood keeps its default, so that its problem is told once.
         """
@@ -97,11 +102,7 @@ class Fields:
             converted = inner._convert(key, value, hints[key])
             if converted is not None:
                 values[key] = converted
-        try:
-            return cls(**values, **parts)
-        except TypeError as missing:
-            self.problems.append(f"{where}: {str(missing).split(') ')[-1]}")
-            raise _MissingFieldError from missing
+        return cls(**values, **parts)
 
     def _convert(self, key: str, value: Any, hint: Any) -> Any:
         """Turn a TOML value into the type of a field, or tell a problem and return None."""
@@ -113,15 +114,16 @@ class Fields:
                 items = [self._convert(key, item, inner) for item in value]
                 return None if None in items else tuple(items)
             expected = "an array" if length is None else f"an array of {length}"
-        elif hint is float and isinstance(value, (int, float)) and not isinstance(value, bool):
-            if abs(value) < float("inf"):
-                return float(value)
-            expected = "a finite number"
-        elif hint is int and isinstance(value, (int, float)) and not isinstance(value, bool) and value == int(value):
-            return int(value)
+        elif hint in (float, int) and _is_number(value) and (hint is float or value == int(value)):
+            return hint(value)
         elif hint in (bool, str) and isinstance(value, hint):
             return value
         else:
-            expected = {float: "a number", int: "a whole number", bool: "true or false", str: "a text"}[hint]
+            words = {float: "a finite number", int: "a whole number", bool: "true or false", str: "a text"}
+            expected = words[hint]
         self.problems.append(f"{self.where} {key}: must be {expected}, is {value!r}")
         return None
+
+
+def _is_number(value: Any) -> bool:
+    return isinstance(value, (int, float)) and not isinstance(value, bool) and abs(value) < float("inf")

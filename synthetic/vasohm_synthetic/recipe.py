@@ -2,13 +2,13 @@
 
 import tomllib
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import asdict, dataclass, field
 from pathlib import Path
 from typing import Any
 
 from vasohm_synthetic.blood import Blood, blood_problems
 from vasohm_synthetic.errors import RecipeError, refuse
-from vasohm_synthetic.fundus import FundusShape, fundus_shape_problems
+from vasohm_synthetic.fundus import FUNDUS_TREE, FundusShape, fundus_shape_problems
 from vasohm_synthetic.mesh import MeshShape, mesh_shape_problems
 from vasohm_synthetic.optics import Backdrop, Camera, Channel, Optics, optics_problems
 from vasohm_synthetic.parse import Fields, merge, name_problem
@@ -117,7 +117,7 @@ def parse_recipe(table: Mapping[str, Any]) -> Recipe:
     )  # fmt: skip
     recipe = Recipe(
         name=head.text(said, "name", "phantoms"),
-        seed=int(head.number(said, "seed", 0)),
+        seed=head.whole(said, "seed", 0),
         pixel_size_um=head.number(said, "pixel_size_um", 1.0),
         pixel_size_se_um=head.number(said, "pixel_size_se_um", 0.0) or None,
         preset=head.word(said, "preset", "intravital", PRESETS),
@@ -162,17 +162,16 @@ def _images(top: Mapping[str, Any], problems: list[str]) -> tuple[ImageRecipe, .
 def _scene(table: Mapping[str, Any], fields: Fields) -> SceneRecipe:
     said = fields.known(table, ("kind", "width_px", "height_px", "tube", "entry", "tree", "mesh", "fundus"))
     fundus = dict(said.get("fundus", {}))
-    fundus_tree = merge({"root_radius_px": 5.5, "min_radius_px": 1.2, "length_ratio": 12.0, "margin_px": 3.0},
-                        fundus.pop("tree", {}))  # fmt: skip
-    width, height = fields.number(said, "width_px", 512), fields.number(said, "height_px", 512)
+    fundus_tree = merge(asdict(FUNDUS_TREE), fundus.pop("tree", {}))
+    width, height = fields.whole(said, "width_px", 512), fields.whole(said, "height_px", 512)
     tubes = []
     for tube in fields.tables(said, "tube"):
         middle = {"x_px": 0.5 * (width - 1), "y_px": 0.5 * (height - 1), "radius_px": 5.0}
         tubes.append(fields.build(Tube, merge(middle, tube), f"{fields.where} tube"))
     return SceneRecipe(
         kind=fields.word(said, "kind", "tree", KINDS),
-        width_px=int(width),
-        height_px=int(height),
+        width_px=width,
+        height_px=height,
         tubes=tuple(tubes),
         entries=tuple(fields.build(Entry, e, f"{fields.where} entry") for e in fields.tables(said, "entry"))
         or (Entry(),),

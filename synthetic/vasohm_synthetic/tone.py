@@ -10,7 +10,7 @@ from vasohm_synthetic.scene import CLASSES, Scene
 class Tone:
     """Multiply the radius of the chosen vessels; None and "" mean that a condition does not matter."""
 
-    radius_factor: float
+    radius_factor: float = 1.0
     vessel_class: str = ""
     radius_um_below: float | None = None  # of the vessel's mean radius before the change
     radius_um_above: float | None = None

@@ -26,7 +26,7 @@ POINT_COLUMNS = "image_id segment_id point s_um x_px y_px radius_um radius_se_um
 NODE_COLUMNS = "image_id node_id network_id x_px y_px kind degree role pressure_mmhg".split()
 CROSSING_COLUMNS = "image_id x_px y_px segment_over segment_under probability".split()
 NETWORK_COLUMNS = (
-    "image_id network_id vessel_class n_segments n_branchings n_inlets n_outlets terminals length_um area_um2 "
+    "image_id network_id vessel_class class_probability n_segments n_branchings n_inlets n_outlets terminals length_um area_um2 "
     "volume_um3 loops resistance_pa_s_m3 resistance_lo_pa_s_m3 resistance_hi_pa_s_m3 ln_resistance_random_se "
     "ln_resistance_shared_se flow_nl_min flags"
 ).split()
@@ -251,7 +251,8 @@ def _networks(graph: Graph, segments: pd.DataFrame, flow: Flow, pixel_size_um: f
             {
                 "image_id": image_id,
                 "network_id": network + 1,
-                "vessel_class": classes.pop() if len(classes) == 1 else "",
+                "vessel_class": (vessel_class := classes.pop() if len(classes) == 1 else ""),
+                "class_probability": 1.0 if vessel_class else np.nan,
                 "n_segments": len(members),
                 "n_branchings": sum(graph.node_kind[i] == "branching" for i in np.flatnonzero(nodes)),
                 "n_inlets": int(np.sum(graph.role[nodes] == 1)),
