@@ -665,7 +665,7 @@ def test_study_page_tells_failures_cautions_and_every_image(results: Path) -> No
         assert f'href="images/{name}/index.html"' in text
         assert f'src="images/{name}/overlay.png"' in text
     assert (
-        "1.00&nbsp;×&nbsp;10<sup>14</sup> (3.75&nbsp;×&nbsp;10<sup>13</sup> to 2.66&nbsp;×&nbsp;10<sup>14</sup>)"
+        "1.00&nbsp;×&nbsp;10<sup>14</sup> <br>(3.75&nbsp;×&nbsp;10<sup>13</sup> to 2.66&nbsp;×&nbsp;10<sup>14</sup>)"
         in text
     )
     assert '<span id="flag-terminals_joined">' in text

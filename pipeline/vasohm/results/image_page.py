@@ -10,7 +10,6 @@ from vasohm.results.markup import (
     flag_codes,
     flag_meanings,
     heading,
-    html,
     interval,
     link,
     listing,
@@ -19,7 +18,6 @@ from vasohm.results.markup import (
     picture,
     shown,
     table,
-    terms,
 )
 from vasohm.results.methods import CAUTIONS
 from vasohm.results.schema import image_columns
@@ -77,7 +75,7 @@ def image_page(tables: ImageTables, *, with_overlay: bool) -> str:
 
 def _summary(tables: ImageTables) -> str:
     row = tables.image.iloc[0]
-    return f"{row['n_segments']} segments in {row['n_networks']} networks; pixel size {row['pixel_size_um']:g} µm."
+    return f"Segments: {row['n_segments']}; networks: {row['n_networks']}; pixel size: {row['pixel_size_um']:g} µm."
 
 
 def _networks(networks: pd.DataFrame) -> Html:
@@ -128,14 +126,14 @@ def _shortened(whole: Html, n: int, what: str) -> Html:
 def _quality(row: "pd.Series[Any]") -> Html:
     """All of image.csv with what each column means."""
     meanings = {column.name: column.meaning for column in image_columns([], with_disc=True)}
-    pairs = []
+    rows = []
     for name, value in row.items():
         if name in ("image_id", "status", "flags"):
             continue
         said = shown(float(value), 4) if isinstance(value, float) else _words(value)
-        meaning = meanings.get(str(name), "a column of the image sheet")
-        pairs.append((str(name), Html(f"{html(said)} <small>{html(meaning)}</small>")))
-    return terms(pairs)
+        meaning = meanings.get(str(name), f"Column {name} of the image sheet.")
+        rows.append((str(name), said, meaning))
+    return table(("column", "value", "meaning"), rows, ["value"])
 
 
 def _words(value: object) -> str:

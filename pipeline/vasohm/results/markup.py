@@ -21,8 +21,9 @@ a { color: #0b4a8f; }
 table { border-collapse: collapse; font-size: .9rem; width: 100%; }
 th, td { text-align: left; vertical-align: top; padding: .35rem .6rem; border-bottom: 1px solid #c8c8c8; }
 th { background: #f0f0f0; }
-td { overflow-wrap: anywhere; }
-td.number, th.number { text-align: right; white-space: nowrap; font-variant-numeric: tabular-nums; }
+td { overflow-wrap: break-word; max-width: 24rem; }
+td.number, th.number { text-align: right; font-variant-numeric: tabular-nums; }
+td.number { white-space: nowrap; }
 img { max-width: 100%; height: auto; }
 img.small { width: 8rem; }
 dt { font-weight: 600; }
@@ -31,7 +32,7 @@ dd { margin: 0 0 .4rem 0; }
 .alert h2 { margin-top: .5rem; border: 0; }
 @media (max-width: 48rem) {
   table.cards thead { display: none; }
-  table.cards, table.cards tbody, table.cards tr, table.cards td { display: block; }
+  table.cards, table.cards tbody, table.cards tr, table.cards td { display: block; max-width: none; }
   table.cards tr { border: 1px solid #767676; margin-bottom: .8rem; }
   table.cards td.number { text-align: left; white-space: normal; }
   table.cards td[data-name]::before { content: attr(data-name) ": "; font-weight: 600; }
@@ -121,7 +122,7 @@ def interval(value: float, low: float, high: float) -> Html:
     """Show a number with its 95 % interval; empty where it is missing."""
     if math.isnan(value):
         return Html("")
-    return Html(f"{shown(value).source} ({shown(low).source} to {shown(high).source})")
+    return Html(f"{shown(value).source} <br>({shown(low).source} to {shown(high).source})")
 
 
 def flag_codes(flags: str) -> Html:
