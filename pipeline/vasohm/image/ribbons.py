@@ -14,16 +14,24 @@ WEAKER_SIDE = 0.3  # of the stronger: below it is the edge of something, not a v
 HOLLOW = 0.8  # of the contrast missing in the middle: two vessels side by side, not one
 HALF_WIDTH_RATIO = 1.2  # the wider half may not exceed this x the narrower: a neighbour stands in the way
 LEAST_HALF_WIDTH_PX = 0.7
+CLEAR_CONTRAST = 1.2  # in noise units: four times the noise of an averaged profile's height
+TAIL_SHARE = (
+    0.3  # of the strongest contrast nearby: less, and not clear, is a lobe of the filter beside or past a vessel
+)
+TAIL_SIGMAS = 6.0  # the elongated kernels, 3 sigma wide along, cast lobes this far
+BRIDGE_STEPS = 8  # pixels of a line whose shape a crossing or branching spoils are kept between good ones
+BORDER_PX = 12  # and so they are on the way to the border of the field, where one flank is only a mirror image
 NEIGHBOUR_PX = 1.5  # ridge pixels of one line are no further apart
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Ribbon:
-    """Half width at half height on the averaged profile of each ridge pixel, and whether it looks like a vessel."""
+    """Half width at half height on the averaged profile of each ridge pixel, and what that profile looks like."""
 
     half_width_px: FloatArray
     contrast: FloatArray  # of the weaker side, in units of the picture
-    is_vessel: BoolArray
+    is_shaped: BoolArray  # two-sided and not hollow
+    is_clear: BoolArray  # above the noise, or not small beside what is near
 
     def __post_init__(self) -> None:
         freeze(self)
@@ -34,14 +42,14 @@ def measure_ribbons(image: Float32Array, lines: RidgePixels, reach_px: FloatArra
 
     Parameters
     ----------
-    image : (h, w) the picture in which the lines were found, on the same grid.
+    image : (h, w) the picture in which the lines were found, on the same grid, in units of its noise.
     lines : ridge pixels.
     reach_px : how far each profile looks to either side, in pixels of this grid.
     """
     n = len(lines.row)
     if n == 0:
         nothing = np.zeros(0)
-        return Ribbon(nothing, nothing, np.zeros(0, dtype=bool))
+        return Ribbon(nothing, nothing, np.zeros(0, dtype=bool), np.zeros(0, dtype=bool))
     half = int(np.ceil(reach_px.max()))
     sides = _averaged_sides(image, lines, half)
     offsets = np.arange(half + 1)
@@ -60,8 +68,54 @@ def measure_ribbons(image: Float32Array, lines: RidgePixels, reach_px: FloatArra
     height = (peak - base).reshape(2, n)
     weaker, stronger = height.min(axis=0), height.max(axis=0)
     hollow = (peak[:n] - middle) / np.maximum(stronger, 1e-12)
-    is_vessel = (weaker >= WEAKER_SIDE * stronger) & (hollow <= HOLLOW) & (weaker > 0)
-    return Ribbon(np.maximum(half_width, LEAST_HALF_WIDTH_PX), weaker, is_vessel)
+    shaped = (weaker >= WEAKER_SIDE * stronger) & (hollow <= HOLLOW)
+    clear = (weaker > 0) & (
+        (weaker >= CLEAR_CONTRAST) | (weaker >= TAIL_SHARE * _strongest_near(image.shape, lines, weaker))
+    )
+    return Ribbon(np.maximum(half_width, LEAST_HALF_WIDTH_PX), weaker, shaped, clear)
+
+
+def _pairs(lines: RidgePixels) -> IntArray:
+    """Neighbouring ridge pixels (n_pairs, 2)."""
+    return cKDTree(np.column_stack((lines.row, lines.column))).query_pairs(NEIGHBOUR_PX, output_type="ndarray")
+
+
+def _strongest_near(shape: tuple[int, ...], lines: RidgePixels, contrast: FloatArray) -> FloatArray:
+    """Largest contrast of any line within reach of each pixel's own filter."""
+    grid = np.zeros(shape, np.float32)
+    grid[lines.row, lines.column] = contrast
+    strongest = np.zeros(len(contrast))
+    for sigma in np.unique(lines.sigma_px):
+        these = lines.sigma_px == sigma
+        near = ndimage.maximum_filter(grid, size=2 * int(TAIL_SIGMAS * sigma) + 1, mode="constant")
+        strongest[these] = near[lines.row[these], lines.column[these]]
+    return strongest
+
+
+def bridge(
+    lines: RidgePixels, good: BoolArray, half_width_px: FloatArray, near_border: BoolArray, clear: BoolArray
+) -> tuple[BoolArray, FloatArray]:
+    """Keep clear pixels between good ones of the same line, and from a good one to the border of the field.
+
+    Returns
+    -------
+    The larger choice, and half widths in which the added pixels take those of their good neighbours.
+    """
+    pairs = _pairs(lines)
+    links = np.concatenate((pairs, pairs[:, ::-1]))
+    reached, width = good.copy(), np.where(good, half_width_px, 0.0)
+    for _ in range(max(BRIDGE_STEPS, BORDER_PX)):
+        step = links[reached[links[:, 0]] & ~reached[links[:, 1]] & clear[links[:, 1]]]
+        n = len(width)
+        count = np.bincount(step[:, 1], minlength=n)
+        taken = count > 0
+        width[taken] = (np.bincount(step[:, 1], width[step[:, 0]], n)[taken]) / count[taken]
+        reached |= taken
+    lost = reached & ~near_border
+    for _ in range(BRIDGE_STEPS):
+        open_ends = np.bincount(links[:, 0], lost[links[:, 1]] | good[links[:, 1]], len(good)) >= 2
+        lost &= good | open_ends
+    return good | lost | (reached & near_border), width
 
 
 def _averaged_sides(image: Float32Array, lines: RidgePixels, half: int) -> FloatArray:
@@ -76,7 +130,7 @@ def _averaged_sides(image: Float32Array, lines: RidgePixels, half: int) -> Float
     x = np.tile(lines.x_px, 2)[:, None] + direction * np.tile(lines.normal_x, 2)[:, None]
     y = np.tile(lines.y_px, 2)[:, None] + direction * np.tile(lines.normal_y, 2)[:, None]
     sides = ndimage.map_coordinates(image, [y, x], order=1, mode="mirror", output=np.float64)
-    pairs = cKDTree(np.column_stack((lines.row, lines.column))).query_pairs(NEIGHBOUR_PX, output_type="ndarray")
+    pairs = _pairs(lines)
     i, j = pairs[:, 0], pairs[:, 1]
     same = lines.normal_x[i] * lines.normal_x[j] + lines.normal_y[i] * lines.normal_y[j] >= 0
     first = np.concatenate((i, i + n))

@@ -15,9 +15,10 @@ BESIDE_PX = 3  # profiles reach this much further than 2 radii
 LARGEST_SHIFT_RADII = 0.5
 MEDIAN_POINTS = 5
 OFFSET_SIGMA_PX = 1.5
-RIM_RADII = 2.0  # an end this many radii (and RIM_PX) from the border of the field is cut by it
-RIM_PX = 3.0
+RIM_PX = 3.0  # an end this close (and END_RADII) to the border of the field is cut by it
 END_RADII = 2.0  # a skeleton stops about one radius before a round end
+TIP_PX = 4  # and this many pixels more of it are drawn anew
+NEW_POINT_PX = 0.5
 
 
 def refine_centrelines(graph: VesselGraph, prepared: PreparedImage) -> VesselGraph:
@@ -132,27 +133,45 @@ def _to_half(side: FloatArray, radius: FloatArray) -> FloatArray:
 
 
 def extend_ends(graph: VesselGraph, prepared: PreparedImage) -> VesselGraph:
-    """Lead dead ends on to where the contrast falls to half, or to the border of the field, where they become rims."""
+    """Lead dead ends on to where the contrast falls to half, or to the border of the field, where they become rims.
+
+    The last points before an end, where skeletons bend and filters reach past the vessel, are drawn anew.
+    """
     if graph.n_segments == 0:
         return graph
+    graph, cut_px = _without_tips(graph)
     node, _, towards = branch_directions(graph)
     loose = np.nonzero(graph.node_kind[node] == NodeKind.END)[0]
     if len(loose) == 0:
-        return graph
+        return in_fixed_order(graph)
     n = graph.n_segments
     radius = end_radius(graph).T.ravel()[loose]
     tip = np.where(loose < n, graph.offsets[loose % n], graph.offsets[loose % n + 1] - 1)
     x, y = graph.x_px[tip], graph.y_px[tip]
     tx, ty = towards[loose, 0], towards[loose, 1]
-    to_border = _distance_to_border(prepared.fov, (x, y), (tx, ty), RIM_RADII * radius + RIM_PX)
+    reach = cut_px[loose] + END_RADII * radius
+    to_border = _distance_to_border(prepared.fov, (x, y), (tx, ty), reach + RIM_PX)
     is_rim = np.isfinite(to_border)
-    to_end = _distance_to_half(prepared.signal, (x, y), (tx, ty), radius)
-    further = np.where(is_rim, to_border, np.minimum(to_end, END_RADII * radius))
+    to_end = _distance_to_half(prepared.signal, (x, y), (tx, ty), (radius, reach))
+    further = np.where(is_rim, to_border, to_end)
     kind = graph.node_kind.copy()
     kind[node[loose[is_rim]]] = NodeKind.RIM
     node_x, node_y = graph.node_x_px.copy(), graph.node_y_px.copy()
     node_x[node[loose]], node_y[node[loose]] = x + further * tx, y + further * ty
-    return in_fixed_order(_with_tips(graph, (node_x, node_y, kind), loose, further > 0.5))
+    return in_fixed_order(_with_tips(graph, (node_x, node_y, kind), loose, further > NEW_POINT_PX))
+
+
+def _without_tips(graph: VesselGraph) -> tuple[VesselGraph, FloatArray]:
+    """Cut the last points before each dead end; the second value is how many pixels each end (2 n_segments,) lost."""
+    nodes = np.column_stack((graph.node_a, graph.node_b))
+    count = np.diff(graph.offsets)[:, None]
+    cut = np.where(graph.node_kind[nodes] == NodeKind.END, np.ceil(end_radius(graph)) + TIP_PX, 0)
+    cut = np.minimum(cut, (count - 1) // 3).astype(np.int64)
+    segment, k = owner(graph.offsets), position(graph.offsets)
+    keep = (k >= cut[segment, 0]) & (count[segment, 0] - 1 - k >= cut[segment, 1])
+    x, y, seed = graph.x_px[keep], graph.y_px[keep], graph.seed_radius_px[keep]
+    offsets = offsets_of(np.bincount(segment[keep], minlength=graph.n_segments))
+    return replace(graph, x_px=x, y_px=y, seed_radius_px=seed, offsets=offsets), cut.T.ravel().astype(np.float64)
 
 
 def _with_tips(
@@ -198,16 +217,21 @@ def _distance_to_border(
 
 
 def _distance_to_half(
-    signal: Float32Array, at: tuple[FloatArray, FloatArray], along: tuple[FloatArray, FloatArray], radius: FloatArray
+    signal: Float32Array,
+    at: tuple[FloatArray, FloatArray],
+    along: tuple[FloatArray, FloatArray],
+    of: tuple[FloatArray, FloatArray],
 ) -> FloatArray:
-    """Distance at which the signal on each ray first falls below half of what it is behind the tip."""
-    steps = np.arange(-np.ceil(3 * radius.max()) - 3, np.ceil(END_RADII * radius.max()) + 3, 0.5)
+    """Distance at which the signal on each ray first falls below half of what it is behind the tip, at most `reach`."""
+    radius, reach = of
+    steps = np.arange(-np.ceil(3 * radius.max()) - 3, np.ceil(reach.max()) + 1, 0.5)
     profile = np.zeros((len(radius), len(steps)))
     for beside in (-0.4, 0.0, 0.4):
         x = at[0][:, None] + steps * along[0][:, None] - beside * radius[:, None] * along[1][:, None]
         y = at[1][:, None] + steps * along[1][:, None] + beside * radius[:, None] * along[0][:, None]
         profile += ndimage.map_coordinates(signal, [y, x], order=1, mode="nearest", output=np.float64) / 3
-    behind = (steps[None, :] <= -radius[:, None]) & (steps[None, :] >= -3 * radius[:, None] - 3)
+    profile = ndimage.gaussian_filter1d(profile, 1.5, axis=1)
+    behind = (steps[None, :] <= 0) & (steps[None, :] >= -3 * radius[:, None] - 3)
     full = np.where(behind, profile, 0).sum(axis=1) / np.maximum(behind.sum(axis=1), 1)
     low = (profile < 0.5 * full[:, None]) & (steps[None, :] >= 0)
-    return np.where(low.any(axis=1), steps[low.argmax(axis=1)], END_RADII * radius)
+    return np.where(low.any(axis=1), np.minimum(steps[low.argmax(axis=1)], reach), reach)

@@ -13,7 +13,7 @@ from scipy import ndimage
 from vasohm.arrays import BoolArray, Float32Array
 from vasohm.image import bank
 from vasohm.image.prepare import PreparedImage
-from vasohm.image.ribbons import measure_ribbons, paint
+from vasohm.image.ribbons import BORDER_PX, bridge, measure_ribbons, paint
 from vasohm.image.ridges import RidgePixels, Strength, merge_scales, ridge_lines, summed_excess
 
 CITATION = "Chaudhuri S et al., IEEE Trans Med Imaging 1989;8:263-269, doi:10.1109/42.34715 (oriented matched filters)"
@@ -30,7 +30,7 @@ SPARSE_SHARE = 0.5  # of the field must be away from vessels for the flipped pic
 AWAY_PX = 9
 LEAST_PIECE_PX = 8  # ridge pixels left of a line after its checks
 HOLE_PX = 12  # smaller holes in the mask are artefacts of thick junctions
-BUNDLE_SIGMAS = 0.6  # a wide filter whose line is much narrower than itself has answered to a bundle of thin vessels
+BUNDLE_SIGMAS = 0.8  # a wide filter whose line is much narrower than itself has answered to a bundle of thin vessels
 BLOB_SIGMAS = (
     2.2  # side lines lie at 1.8 sigma: what is wider than that has no sides there, it is a dark or bright field
 )
@@ -63,14 +63,13 @@ def segment_ridges(prepared: PreparedImage, parameters: Mapping[str, float]) -> 
     if parameters["false_alarms_per_mpx"] > 0:
         limit = max(limit, EXCESS_SLOPE * np.log(EXCESS_REFERENCE_PX / parameters["false_alarms_per_mpx"]))
     fine = merge_scales([r for r in responses if r.sigma_px <= WIDE_SIGMA_PX])
-    limit *= _texture_factor(fine, prepared.fov, limit)
-    limits = (limit, WIDEST_RATIO * parameters["radius_hi_px"])
+    widest = WIDEST_RATIO * parameters["radius_hi_px"]
+    border = ndimage.distance_transform_edt(np.pad(prepared.fov, 1))[1:-1, 1:-1].astype(np.float32)
     mask = np.zeros(even.shape, dtype=bool)
     wide = [r for r in responses if r.sigma_px >= WIDE_SIGMA_PX]
     if len(wide) > 1:
-        mask |= _paint_group(merge_scales(wide), stack, prepared.fov, limits)
-    free = prepared.fov & ~ndimage.binary_dilation(mask, iterations=1)
-    mask |= _paint_group(fine, stack, free, limits)
+        mask |= _paint_group(merge_scales(wide), stack, border, (limit, widest))
+    mask |= _paint_group(fine, stack, border, (limit, widest))
     mask &= prepared.fov
     mask = ndimage.binary_closing(mask, structure=np.ones((3, 3), dtype=bool)) & prepared.fov
     return _without_small(mask)
@@ -102,27 +101,34 @@ def _texture_factor(found: Strength, fov: BoolArray, limit: float) -> float:
 
 
 def _paint_group(
-    found: Strength, stack: list[Float32Array], where: BoolArray, limits: tuple[float, float]
+    found: Strength, stack: list[Float32Array], border: Float32Array, limits: tuple[float, float]
 ) -> BoolArray:
-    """Ridge lines of one group of scales, checked and painted at full resolution."""
+    """Ridge lines of one group of scales, checked and painted at full resolution.
+
+    `border` (h, w) is the distance to the border of the field, 0 outside; `limits` are the least summed excess of a
+    line and the largest half width of a vessel.
+    """
     limit, largest_px = limits
     factor = 2**found.level
     image = ndimage.gaussian_filter(stack[found.level], 0.7)
-    lines = ridge_lines(found.bright, found, where[::factor, ::factor])
-    lines = lines.keep(summed_excess(lines)[lines.line] >= limit / factor**0.5)
+    lines = ridge_lines(found.bright, found, (border > 0)[::factor, ::factor])
+    limit *= _texture_factor(found, border[::factor, ::factor] > 0, limit / factor**0.5) / factor**0.5
+    lines = lines.keep(summed_excess(lines)[lines.line] >= limit)
     reach = REACH_SIGMAS * lines.sigma_px / factor + REACH_EXTRA_PX
     ribbon = measure_ribbons(image, _on_grid(lines, factor), reach)
     width = ribbon.half_width_px * factor
     sigma = np.maximum(lines.sigma_px, SURE_SIGMA_PX)
-    good = ribbon.is_vessel & (width <= largest_px) & (width <= BLOB_SIGMAS * sigma)
+    good = ribbon.is_shaped & ribbon.is_clear & (width <= largest_px) & (width <= BLOB_SIGMAS * sigma)
     if found.level:
         good &= width >= BUNDLE_SIGMAS * lines.sigma_px
+    near_border = (border <= BORDER_PX)[::factor, ::factor][lines.row, lines.column]
+    good, width = bridge(lines, good, width, near_border, ribbon.is_clear)
     length = factor * np.bincount(lines.line, weights=good, minlength=lines.n_lines)
     mean_width = np.bincount(lines.line, weights=good * width, minlength=lines.n_lines) * factor / np.maximum(length, 1)
     good &= (length >= np.maximum(LEAST_PIECE_PX, LEAST_LENGTH_RADII * mean_width))[lines.line]
     radius = np.minimum(width, CAP_SIGMAS * sigma)[good]
     kept = lines.keep(good)
-    return paint(where.shape, kept.x_px * factor, kept.y_px * factor, radius)
+    return paint(border.shape, kept.x_px * factor, kept.y_px * factor, radius)
 
 
 def _on_grid(lines: RidgePixels, factor: int) -> RidgePixels:
