@@ -1,9 +1,27 @@
-"""What a viscosity law is, and the laws by name."""
+"""What a viscosity law is, the laws by name, and blood: a law with its constants."""
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
+from functools import cache
+from importlib.metadata import EntryPoint, entry_points
+from types import MappingProxyType, ModuleType
 
-from vasohm.arrays import FloatArray
+import numpy as np
+from numpy.typing import ArrayLike
+
+from vasohm.arrays import BoolArray, FloatArray
+from vasohm.errors import DomainError, PluginError
+from vasohm.flow.laws import (
+    constant,
+    haynes_marginal_zone,
+    kiani_hudetz,
+    pries_in_vitro,
+    pries_in_vivo,
+    pries_secomb_surface_layer,
+)
+
+ENTRY_POINT_GROUP = "vasohm.viscosity_laws"
+HIGHEST_HEMATOCRIT = 0.75  # above it cells are packed and no law was measured
 
 
 @dataclass(frozen=True, slots=True)
@@ -21,10 +39,208 @@ class BloodSettings:
 class ViscosityLaw:
     """A published relation of apparent viscosity to radius and hematocrit.
 
-    `viscosity(radius_um, hematocrit, *, plasma_viscosity_mpa_s, parameters)` is elementwise and returns mPa·s.
+    `viscosity(radius_um, hematocrit, *, plasma_viscosity_mpa_s, parameters)` is elementwise (the two arrays broadcast
+    against each other) and returns mPa·s.
     """
 
     viscosity: Callable[..., FloatArray]
     valid_radius_um: tuple[float, float]
     valid_hematocrit: tuple[float, float]
     citation: str  # authors, year, DOI, equation
+
+
+def _published(law: ModuleType) -> ViscosityLaw:
+    return ViscosityLaw(law.viscosity, law.VALID_RADIUS_UM, law.VALID_HEMATOCRIT, law.CITATION)
+
+
+LAWS: Mapping[str, ViscosityLaw] = MappingProxyType(
+    {
+        "constant": _published(constant),
+        "pries-in-vitro": _published(pries_in_vitro),
+        "pries-in-vivo": _published(pries_in_vivo),
+        "pries-secomb-surface-layer": _published(pries_secomb_surface_layer),
+        "kiani-hudetz": _published(kiani_hudetz),
+        "haynes-marginal-zone": _published(haynes_marginal_zone),
+    }
+)
+
+
+@cache
+def load_laws() -> Mapping[str, ViscosityLaw | tuple[EntryPoint, ...]]:
+    """All laws by name: those of this package, and the entry points that other packages register, not yet imported."""
+    laws: dict[str, ViscosityLaw | tuple[EntryPoint, ...]] = dict(LAWS)
+    others = sorted(entry_points(group=ENTRY_POINT_GROUP), key=lambda found: (found.name, found.value))
+    for name in sorted({found.name for found in others}):
+        laws[name] = tuple(found for found in others if found.name == name)
+    return MappingProxyType(laws)
+
+
+def law_names() -> tuple[str, ...]:
+    """Names of all laws that a study can ask for, without importing other packages' laws."""
+    return tuple(load_laws())
+
+
+def get_law(name: str) -> ViscosityLaw:
+    """Return the law of that name, importing it where another package registers it.
+
+    Raises
+    ------
+    PluginError
+        No law has this name, two have it, or the package that registers it fails to give it.
+    """
+    laws = load_laws()
+    if name not in laws:
+        msg = f"no viscosity law {name!r}; there are {', '.join(laws)}."
+        raise PluginError(msg)
+    found = laws[name]
+    if isinstance(found, ViscosityLaw):
+        return found
+    described = " and ".join(_describe(entry) for entry in found)
+    if len(found) > 1 or name in LAWS:
+        msg = f"the viscosity law {name!r} of {described} has a name that is taken; remove one or rename it."
+        raise PluginError(msg)
+    try:
+        value = found[0].load()
+    except Exception as error:
+        msg = f"the viscosity law {described} fails to load: {type(error).__name__}: {error}. Repair or remove it."
+        raise PluginError(msg) from error
+    if isinstance(value, ViscosityLaw):
+        return value
+    if not callable(value):
+        msg = f"the viscosity law {described} is a {type(value).__name__}; it must be a function or a ViscosityLaw."
+        raise PluginError(msg)
+    return ViscosityLaw(value, (0.0, np.inf), (0.0, HIGHEST_HEMATOCRIT), "no source given")
+
+
+def _describe(entry: EntryPoint) -> str:
+    owner = entry.dist.name if entry.dist is not None else "an unnamed distribution"
+    return f"{entry.name!r} ({entry.value}, from {owner})"
+
+
+@dataclass(frozen=True, slots=True)
+class Blood:
+    """A law with its constants: all about blood but radius and hematocrit."""
+
+    law_name: str
+    law: ViscosityLaw
+    plasma_viscosity_mpa_s: float
+    parameters: Mapping[str, float]
+
+    def viscosity(self, radius_um: FloatArray, hematocrit: FloatArray) -> FloatArray:
+        """Apparent viscosity in mPa·s, shape of both arguments broadcast; infinite where no blood can pass.
+
+        Raises
+        ------
+        DomainError
+            A radius that is not positive, or a hematocrit outside 0 to 0.75.
+        PluginError
+            The law returned another shape, not-a-number or a value that is not positive.
+        """
+        _require(radius_um, radius_um > 0, "radius_um", "must be positive")
+        inside = (hematocrit >= 0) & (hematocrit <= HIGHEST_HEMATOCRIT)
+        _require(
+            hematocrit, inside, "hematocrit", f"must lie between 0 and {HIGHEST_HEMATOCRIT} (a fraction, not per cent)"
+        )
+        value = np.asarray(
+            self.law.viscosity(
+                radius_um,
+                hematocrit,
+                plasma_viscosity_mpa_s=self.plasma_viscosity_mpa_s,
+                parameters=self.parameters,
+            )
+        )
+        wanted = np.broadcast_shapes(radius_um.shape, hematocrit.shape)
+        if value.shape != wanted:
+            msg = (
+                f"law {self.law_name!r} returned shape {value.shape} where {wanted} was asked; it must be elementwise."
+            )
+            raise PluginError(msg)
+        if not np.all(value > 0):
+            bad = value[~(value > 0)].flat[0]
+            msg = f"law {self.law_name!r} returned a viscosity of {bad} mPa·s; it must be positive."
+            raise PluginError(msg)
+        return value.astype(np.float64, copy=False)
+
+    def outside_range(self, radius_um: FloatArray, hematocrit: FloatArray) -> BoolArray:
+        """Whether the law is used beyond the radii or hematocrits it was fitted to."""
+        (least_um, most_um), (least, most) = self.law.valid_radius_um, self.law.valid_hematocrit
+        return (radius_um < least_um) | (radius_um > most_um) | (hematocrit < least) | (hematocrit > most)
+
+
+def _require(value: FloatArray, fine: BoolArray, name: str, rule: str) -> None:
+    if not np.all(fine):
+        bad = np.flatnonzero(~fine)
+        msg = f"{name} is {value.flat[bad[0]]} at position {bad[0]} ({bad.size} such values); it {rule}."
+        raise DomainError(msg)
+
+
+def make_blood(settings: BloodSettings) -> Blood:
+    """Find the law that the settings name and give it its constants.
+
+    Raises
+    ------
+    DomainError
+        A plasma viscosity that is not positive.
+    PluginError
+        See `get_law`.
+    """
+    parameters = dict(settings.parameters)
+    if settings.law == "constant":
+        parameters["viscosity_mpa_s"] = settings.viscosity_mpa_s
+    return _blood(settings.law, settings.plasma_viscosity_mpa_s, parameters)
+
+
+def _blood(law: str, plasma_viscosity_mpa_s: float, parameters: Mapping[str, float]) -> Blood:
+    if not 0 < plasma_viscosity_mpa_s < np.inf:
+        msg = f"plasma_viscosity_mpa_s is {plasma_viscosity_mpa_s}; it must be positive (about 1.2 at 37 °C)."
+        raise DomainError(msg)
+    return Blood(law, get_law(law), plasma_viscosity_mpa_s, MappingProxyType(dict(parameters)))
+
+
+def apparent_viscosity(
+    law: str,
+    radius_um: ArrayLike,
+    hematocrit: ArrayLike,
+    *,
+    plasma_viscosity_mpa_s: float = 1.2,
+    parameters: Mapping[str, float] | None = None,
+) -> FloatArray:
+    """Apparent viscosity of blood in a vessel.
+
+    Parameters
+    ----------
+    law : str
+        A registered law: `law_names` lists them.
+    radius_um : array_like
+        Lumen radius in micrometres, positive.
+    hematocrit : array_like
+        Discharge hematocrit, a fraction from 0 to 0.75; broadcasts against `radius_um`.
+    plasma_viscosity_mpa_s : float
+        Viscosity of plasma in mPa·s.
+    parameters : mapping, optional
+        Further constants of the law, such as ``{"viscosity_mpa_s": 3.0}`` of law ``constant``.
+
+    Returns
+    -------
+    array
+        Apparent viscosity in mPa·s, in the shape of both broadcast. Infinite where the law lets no blood pass.
+
+    Raises
+    ------
+    DomainError
+        A radius, hematocrit, plasma viscosity or parameter outside what is defined.
+    PluginError
+        An unknown law, or one of another package that fails.
+
+    Notes
+    -----
+    Outside the range a law was fitted to, its formula is evaluated all the same.
+
+    References
+    ----------
+    Each law carries its own: ``get_law(law).citation``.
+    """
+    blood = _blood(law, plasma_viscosity_mpa_s, parameters or {})
+    radius, cells = np.asarray(radius_um, dtype=np.float64), np.asarray(hematocrit, dtype=np.float64)
+    value: FloatArray = blood.viscosity(radius, cells)[()]
+    return value

@@ -1,10 +1,20 @@
 """Where blood enters and leaves each network."""
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Literal
 
-from vasohm.arrays import FloatArray, IntArray, freeze
+import numpy as np
+
+from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.flags import Flag
+from vasohm.network.along import arc_shares, mean_by, sum_by
+from vasohm.network.graph import NodeKind, VesselClass, label_networks
+from vasohm.network.paths import owner
+from vasohm.network.radius import MeasuredGraph
+
+REACH_PX = 10.0  # a terminal takes an end or rim node no further away
+ROLES = {"inlet": 1, "outlet": -1}
 
 
 @dataclass(frozen=True, slots=True)
@@ -17,7 +27,10 @@ class NetworkSettings:
 
 @dataclass(frozen=True, slots=True)
 class TerminalPoint:
-    """One row of a terminals file; None where a cell is empty."""
+    """One row of a terminals file; None where a cell is empty.
+
+    Flow is positive into the network at an inlet and out of it at an outlet. A pressure rules out a flow.
+    """
 
     x_px: float
     y_px: float
@@ -41,6 +54,135 @@ class Terminals:
     network_flags: IntArray  # (n_networks,)
     notes: tuple[str, ...]  # terminals left out, by position
     flags: Flag  # of the image
+    drive_mmhg: float  # between inlets and outlets where no pressure and no flow is given
 
     def __post_init__(self) -> None:
         freeze(self)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Given:
+    """What the points say, by node."""
+
+    role: IntArray
+    pressure_mmhg: FloatArray
+    flow_nl_min: FloatArray
+    hematocrit: FloatArray
+    notes: tuple[str, ...]
+
+
+def place_terminals(measured: MeasuredGraph, points: Sequence[TerminalPoint], settings: NetworkSettings) -> Terminals:
+    """Give each network its inlets and outlets.
+
+    Parameters
+    ----------
+    measured : MeasuredGraph
+        Its node positions are matched with the points; its radii tell the widest end of a tree.
+    points : sequence of TerminalPoint
+        Each takes the nearest end or rim node within `REACH_PX` (the lower index where two are equally near); one that
+        finds none, or whose node is taken already, is left out and told in `notes`.
+    settings : NetworkSettings
+        ``file`` uses the points alone and ``none`` nothing. ``auto`` uses the points where there are any; else the
+        widest end of each tree is its inlet and its other ends are outlets, the other way round where more than
+        half of the tree's length is venule. A network with loops shows no inlet by its shape and gets none.
+
+    Returns
+    -------
+    Terminals
+    """
+    node_network, segment_network = label_networks(measured.graph)
+    n_networks = int(segment_network.max(initial=-1)) + 1
+    by_shape = settings.terminals == "auto" and not points
+    given = _match(measured, () if settings.terminals == "none" else points)
+    role, mesh = given.role, np.zeros(n_networks, dtype=bool)
+    if by_shape:
+        role, mesh = _roles_by_shape(measured, node_network, segment_network, n_networks)
+    has = [np.bincount(node_network[role == sign], minlength=n_networks) > 0 for sign in (1, -1)]
+    source = np.where(has[0] | has[1], "auto" if by_shape else "file", "none")
+    return Terminals(
+        node_network=node_network,
+        segment_network=segment_network,
+        role=role,
+        pressure_mmhg=given.pressure_mmhg,
+        flow_nl_min=given.flow_nl_min,
+        hematocrit=given.hematocrit,
+        source=tuple(source.tolist()),
+        network_flags=missing_terminals(has[0], has[1]) | np.where(mesh, int(Flag.MESH), 0),
+        notes=given.notes,
+        flags=Flag.TERMINAL_MISSED if given.notes else Flag.NONE,
+        drive_mmhg=settings.drive_mmhg,
+    )
+
+
+def missing_terminals(has_inlet: BoolArray, has_outlet: BoolArray) -> IntArray:
+    """Return flags (n_networks,) of what a network lacks to have a resistance."""
+    lacks = [has_inlet & ~has_outlet, has_outlet & ~has_inlet, ~has_inlet & ~has_outlet]
+    return np.select(lacks, [int(Flag.NO_OUTLET), int(Flag.NO_INLET), int(Flag.NO_TERMINALS)], default=0)
+
+
+def _match(measured: MeasuredGraph, points: Sequence[TerminalPoint]) -> _Given:
+    graph = measured.graph
+    open_ends = np.flatnonzero(np.isin(graph.node_kind, (NodeKind.END, NodeKind.RIM)))
+    role = np.zeros(graph.n_nodes, dtype=np.int64)
+    pressure, flow, hematocrit = (np.full(graph.n_nodes, np.nan) for _ in range(3))
+    notes = []
+    for point in points:
+        away = np.hypot(graph.node_x_px[open_ends] - point.x_px, graph.node_y_px[open_ends] - point.y_px)
+        told = f"{point.role} at x {point.x_px:g}, y {point.y_px:g} px left out:"
+        nearest = away.min(initial=np.inf)
+        if not nearest <= REACH_PX:
+            found = f"the nearest is {nearest:.1f} px away" if open_ends.size else "the image has none"
+            notes.append(f"{told} no vessel end within {REACH_PX:g} px ({found}).")
+            continue
+        node = open_ends[np.argmin(away)]
+        if role[node]:
+            notes.append(f"{told} the nearest vessel end has a terminal already.")
+            continue
+        role[node] = ROLES[point.role]
+        for array, value in (
+            (pressure, point.pressure_mmhg),
+            (flow, point.flow_nl_min if point.pressure_mmhg is None else None),
+            (hematocrit, point.hematocrit),
+        ):
+            array[node] = np.nan if value is None else value
+    return _Given(role, pressure, flow, hematocrit, tuple(notes))
+
+
+def _roles_by_shape(
+    measured: MeasuredGraph, node_network: IntArray, segment_network: IntArray, n_networks: int
+) -> tuple[IntArray, BoolArray]:
+    graph = measured.graph
+    n_nodes_each = np.bincount(node_network, minlength=n_networks)
+    mesh = np.bincount(segment_network, minlength=n_networks) - n_nodes_each + 1 > 0
+    is_open = np.isin(graph.node_kind, (NodeKind.END, NodeKind.RIM))
+    ends = np.flatnonzero(is_open & ~mesh[node_network] & (n_nodes_each[node_network] > 1))
+    radius = _end_radius(measured)[ends]
+    order = np.lexsort((ends, -np.nan_to_num(radius), node_network[ends]))
+    _, first = np.unique(node_network[ends][order], return_index=True)
+    sign = np.where(_is_venular(measured, segment_network, n_networks), -1, 1)
+    role = np.zeros(graph.n_nodes, dtype=np.int64)
+    role[ends] = -sign[node_network[ends]]
+    widest = ends[order[first]]
+    role[widest] = sign[node_network[widest]]
+    return role, mesh
+
+
+def _end_radius(measured: MeasuredGraph) -> FloatArray:
+    """Mean radius (n_nodes,) over the half next to each node of the segment that ends there; for ends of degree 1."""
+    graph = measured.graph
+    segment = owner(graph.offsets)
+    near_a = measured.s_um <= 0.5 * measured.length_um[segment]
+    share = arc_shares(measured)
+    radius = np.full(graph.n_nodes, np.nan)
+    for node, near in ((graph.node_a, near_a), (graph.node_b, ~near_a)):
+        half = mean_by(segment, measured.radius_um, share * near, graph.n_segments)
+        whole = mean_by(segment, measured.radius_um, share, graph.n_segments)
+        radius[node] = np.where(np.isfinite(half), half, whole)
+    return radius
+
+
+def _is_venular(measured: MeasuredGraph, segment_network: IntArray, n_networks: int) -> BoolArray:
+    """Tell whether more than half of a network's length is venule."""
+    venule = np.where(measured.graph.vessel_class == VesselClass.VENULE, measured.length_um, 0.0)
+    half = 0.5 * sum_by(segment_network, measured.length_um, n_networks)
+    return np.asarray(sum_by(segment_network, venule, n_networks) > half)
