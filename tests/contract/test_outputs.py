@@ -23,6 +23,7 @@ from vasohm.errors import DomainError
 from vasohm.flags import Flag
 from vasohm.flow.hydraulics import NetworkFlow
 from vasohm.flow.rheology import BloodSettings
+from vasohm.flow.scenarios import ScenarioOutcomes
 from vasohm.flow.terminals import NetworkSettings, Terminals
 from vasohm.image.prepare import ImageQuality, PreparedImage, PrepareSettings
 from vasohm.image.segment import SegmentSettings, VesselMask
@@ -64,21 +65,6 @@ class Covariance:
 
     def segment_variance(self, gradient: FloatArray) -> FloatArray:
         return np.array([self.variance * float(np.sum(part**2)) for part in np.split(gradient, 3)])
-
-
-@dataclass(frozen=True)
-class Outcomes:
-    """One scenario of the one network."""
-
-    network: IntArray
-    scenario: tuple[str, ...]
-    n_segments_changed: IntArray
-    resistance_before_pa_s_m3: FloatArray
-    resistance_after_pa_s_m3: FloatArray
-    ratio: FloatArray
-    ratio_lo: FloatArray
-    ratio_hi: FloatArray
-    flags: IntArray
 
 
 def whole(*values: int) -> IntArray:
@@ -238,17 +224,17 @@ def make_findings(n_segments: int = 3, scenario: str = "Arterioles dilate") -> F
         notes=("dots per inch ignored",),
         flags=Flag.PIXEL_SIZE_SE_UNKNOWN,
     )
-    n = int(bool(scenario) and n_segments > 0)
-    outcomes = Outcomes(
-        network=whole(0)[:n],
-        scenario=(scenario,)[:n],
-        n_segments_changed=whole(2)[:n],
-        resistance_before_pa_s_m3=real(1e14)[:n],
-        resistance_after_pa_s_m3=real(7e13)[:n],
-        ratio=real(0.7)[:n],
-        ratio_lo=real(0.69)[:n],
-        ratio_hi=real(0.71)[:n],
-        flags=whole(0)[:n],
+    n = 2 * int(bool(scenario) and n_segments > 0)
+    outcomes = ScenarioOutcomes(
+        network=whole(0, 0)[:n],
+        scenario=(scenario, "All dilate")[:n],
+        n_segments_changed=whole(2, 3)[:n],
+        resistance_before_pa_s_m3=real(1e14, 1e14)[:n],
+        resistance_after_pa_s_m3=real(7e13, 5e13)[:n],
+        ratio=real(0.7, 0.5)[:n],
+        ratio_lo=real(0.69, 0.49)[:n],
+        ratio_hi=real(0.71, 0.51)[:n],
+        flags=whole(0, 0)[:n],
     )
     return Findings(
         prepared,
@@ -341,6 +327,10 @@ def test_ids_degrees_classes_and_flags_are_those_of_the_graph() -> None:
     assert tables.networks.loc[0, "class_probability"] == pytest.approx(mean_probability)
     assert tables.image.loc[0, "flags"] == "terminal_missed;pixel_size_se_unknown;blur_assumed"
     assert tables.image.loc[0, ["n_ends", "n_branchings"]].tolist() == [2, 1]
+    assert tables.scenarios[["network_id", "scenario", "n_segments_changed", "ratio"]].to_numpy().tolist() == [
+        [1, "Arterioles dilate", 2, 0.7],
+        [1, "All dilate", 3, 0.5],
+    ]
     # 240 um of vessel in 48000 um2 are 5 mm in 1 mm2
     assert tables.image.loc[0, "length_density_per_mm"] == pytest.approx(5.0)
 

@@ -2,7 +2,7 @@
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Any, Protocol
+from typing import Any
 
 import networkx as nx
 import numpy as np
@@ -11,6 +11,7 @@ import pandas as pd
 from vasohm.arrays import AnyArray, BoolArray, FloatArray, IntArray
 from vasohm.flags import Flag, codes
 from vasohm.flow.hydraulics import NetworkFlow
+from vasohm.flow.scenarios import ScenarioOutcomes
 from vasohm.image.prepare import PreparedImage
 from vasohm.image.segment import VesselMask
 from vasohm.network.graph import NodeKind, VesselClass
@@ -74,20 +75,6 @@ class ImageTables:
     @property
     def scenarios(self) -> pd.DataFrame:
         return self.tables["scenarios"]
-
-
-class ScenarioOutcomes(Protocol):
-    """One entry a network and scenario; network indices count from 0, NaN where undefined."""
-
-    network: IntArray
-    scenario: tuple[str, ...]
-    n_segments_changed: IntArray
-    resistance_before_pa_s_m3: FloatArray
-    resistance_after_pa_s_m3: FloatArray
-    ratio: FloatArray
-    ratio_lo: FloatArray
-    ratio_hi: FloatArray
-    flags: IntArray
 
 
 @dataclass(frozen=True, slots=True)
