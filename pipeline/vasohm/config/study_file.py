@@ -58,7 +58,7 @@ def read_study(path: Path) -> Study:
     ------
     RequestError : every problem of the study file, the sheet, and its terminals and edits files.
     """
-    said = _toml(path)
+    said = read_toml(path)
     return _study(said, path, path.absolute().parent, needs_sheet=True)
 
 
@@ -130,7 +130,8 @@ def _study(said: Mapping[str, Any], path: Path, base: Path, *, needs_sheet: bool
     return Study(values["study.name"], path, settings, images, compare, resolved, (*warnings, *_odd(values, images)))
 
 
-def _toml(path: Path) -> Mapping[str, Any]:
+def read_toml(path: Path) -> Mapping[str, Any]:
+    """Read a TOML file as it stands, unchecked; RequestError where it is none."""
     def failed(message: str, row: int | None = None) -> RequestError:
         return RequestError([Problem(shown(path), message, row=row)])
 
