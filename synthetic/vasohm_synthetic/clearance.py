@@ -85,7 +85,7 @@ class Ground:
         distances = [float(self.field.depth(np.array([x_px]), np.array([y_px]))[0])]
         for kin in {path.kin for path in self._paths}:
             tree, _ = self._points(kin)
-            distances.append(float(tree.query([[x_px, y_px]])[0][0]))
+            distances.append(float(np.min(tree.query(np.array([[x_px, y_px]]))[0])))
         return min(distances)
 
     def fits(self, path: Path, free_px: float) -> bool:

@@ -1,10 +1,14 @@
 """Plane curves sampled finely, and radii along them."""
 
 import numpy as np
+from scipy.interpolate import CubicSpline
 from scipy.ndimage import gaussian_filter1d
 
 from vasohm_synthetic.arrays import FloatArray
 from vasohm_synthetic.scene import AXIS_STEP_PX
+
+_PER_CORRELATION = 6
+_REACH = 18  # four standard deviations of the smoothing
 
 Curve = tuple[FloatArray, FloatArray]
 
@@ -65,12 +69,14 @@ def wander(
 def process(n: int, step_px: float, correlation_px: float, rng: np.random.Generator) -> FloatArray:
     """Gaussian process of unit variance with covariance exp(-d^2 / (2 correlation_px^2)), n equidistant values.
 
-    White noise through a Gaussian of standard deviation a has covariance exp(-d^2 / (4 a^2)).
+    White noise through a Gaussian of standard deviation a has covariance exp(-d^2 / (4 a^2)). It is drawn at
+    `_PER_CORRELATION` values a correlation length, where a cubic spline between them is right to 1e-3.
     """
-    sigma = correlation_px / np.sqrt(2.0) / step_px
-    reach = int(np.ceil(4 * sigma)) + 1
-    white = rng.standard_normal(n + 2 * reach)
-    smooth = gaussian_filter1d(white, sigma, mode="constant", truncate=4.0)
-    kernel = gaussian_filter1d(np.eye(1, 2 * reach + 1, reach)[0], sigma, mode="constant", truncate=4.0)
-    values: FloatArray = smooth[reach : reach + n] / np.sqrt(np.sum(kernel**2))
+    sigma = _PER_CORRELATION / np.sqrt(2.0)
+    coarse_px = correlation_px / _PER_CORRELATION
+    coarse_n = max(4, int(np.ceil((n - 1) * step_px / coarse_px)) + 1)
+    smooth = gaussian_filter1d(rng.standard_normal(coarse_n + 2 * _REACH), sigma, mode="constant", truncate=4.0)
+    kernel = gaussian_filter1d(np.eye(1, 2 * _REACH + 1, _REACH)[0], sigma, mode="constant", truncate=4.0)
+    unit = smooth[_REACH : _REACH + coarse_n] / np.sqrt(np.sum(kernel**2))
+    values: FloatArray = CubicSpline(np.arange(coarse_n) * coarse_px, unit)(np.arange(n) * step_px)
     return values

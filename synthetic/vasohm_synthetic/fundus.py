@@ -9,7 +9,6 @@ from vasohm_synthetic.errors import refuse
 from vasohm_synthetic.scene import Circle, Scene
 from vasohm_synthetic.trees import Root, TreeShape, grow_trees, tree_shape_problems
 
-
 FUNDUS_TREE = TreeShape(root_radius_px=5.5, min_radius_px=1.2, length_ratio=12.0, margin_px=3.0)
 
 
@@ -63,8 +62,7 @@ def fundus_scene(shape: FundusShape, size: tuple[int, int], rng: np.random.Gener
         roots.append(_trunk(disc, heading_deg, "arteriole"))
         roots.append(_trunk(disc, heading_deg + turn * shape.venule_offset_deg, "venule"))
     roots = [
-        replace(root, radius_px=shape.tree.root_radius_px * (shape.venule_ratio if root.kin else 1.0))
-        for root in roots
+        replace(root, radius_px=shape.tree.root_radius_px * (shape.venule_ratio if root.kin else 1.0)) for root in roots
     ]
     ground = Field(size, fov, shape.tree.margin_px)
     return grow_trees(roots, shape.tree, ground, rng, discs=(disc, centre))

@@ -44,8 +44,11 @@ def make_phantoms(recipe: Recipe, out_dir: Path) -> tuple[str, ...]:
     out_dir = Path(out_dir)
     out_dir.mkdir(parents=True, exist_ok=True)
     rows = []
+    beds: dict[str, Scene] = {}
     for image in recipe.images:
-        scene = build_scene(recipe, image)
+        if image.bed not in beds:
+            beds[image.bed] = build_bed(recipe, image)
+        scene = retone(beds[image.bed], image.tones, recipe.pixel_size_um)
         picture = draw(recipe, image, scene)
         tables = truth_tables(
             scene,
@@ -68,10 +71,9 @@ def make_phantoms(recipe: Recipe, out_dir: Path) -> tuple[str, ...]:
     return tuple(image.image_id for image in recipe.images)
 
 
-def build_scene(recipe: Recipe, image: ImageRecipe) -> Scene:
-    """Make the scene of one picture: its bed, in its state of tone."""
-    rng = _stream(recipe.seed, image.bed, _GEOMETRY)
-    return retone(_bed(image.scene, rng), image.tones, recipe.pixel_size_um)
+def build_bed(recipe: Recipe, image: ImageRecipe) -> Scene:
+    """Make the bed of one picture, before any change of tone."""
+    return _bed(image.scene, _stream(recipe.seed, image.bed, _GEOMETRY))
 
 
 def draw(recipe: Recipe, image: ImageRecipe, scene: Scene) -> AnyIntImage:

@@ -40,8 +40,8 @@ def mesh_shape_problems(shape: MeshShape) -> list[str]:
     """Say everything that is impossible about a mesh's shape; empty where nothing is."""
     names = ("spacing_px", "radius_px", "feeder_radius_px", "variation_ratio")
     problems = [f"{n} {getattr(shape, n):g} is not positive" for n in names if not getattr(shape, n) > 0]
-    names = ("radius_sd", "variation_sd", "shortest_px", "margin_px", "gain_sd")
-    problems += [f"{n} {getattr(shape, n):g} is negative" for n in names if not getattr(shape, n) >= 0]
+    not_negative = ("radius_sd", "variation_sd", "shortest_px", "margin_px", "gain_sd")
+    problems += [f"{n} {getattr(shape, n):g} is negative" for n in not_negative if not getattr(shape, n) >= 0]
     checks = [
         (0 <= shape.jitter <= 0.3, f"jitter {shape.jitter:g} is not within 0 and 0.3"),
         (0 <= shape.drop <= 0.5, f"drop {shape.drop:g} is not within 0 and 0.5"),
@@ -83,9 +83,7 @@ def mesh_scene(shape: MeshShape, size: tuple[int, int], rng: np.random.Generator
     return _directed(_draw(chains, xy, shape, rng), size)
 
 
-def _walls(
-    shape: MeshShape, size: tuple[int, int], rng: np.random.Generator
-) -> tuple[FloatArray, list[Edge]]:
+def _walls(shape: MeshShape, size: tuple[int, int], rng: np.random.Generator) -> tuple[FloatArray, list[Edge]]:
     """Corners and walls of jittered hexagonal cells that lie inside the margin."""
     height, width = size
     rows = np.arange(-2, height / (shape.spacing_px * np.sqrt(0.75)) + 3)
@@ -98,9 +96,7 @@ def _walls(
     xy = np.asarray(cells.vertices, float)
     inside = (xy.min(axis=1) >= shape.margin_px) & (xy[:, 0] <= width - 1 - shape.margin_px)
     inside &= xy[:, 1] <= height - 1 - shape.margin_px
-    edges = [
-        (min(a, b), max(a, b)) for a, b in cells.ridge_vertices if min(a, b) >= 0 and inside[a] and inside[b]
-    ]
+    edges = [(min(a, b), max(a, b)) for a, b in cells.ridge_vertices if min(a, b) >= 0 and inside[a] and inside[b]]
     return xy, sorted(edges)
 
 
@@ -173,10 +169,13 @@ def _draw(
     for chain in chains:
         x, y = resample(xy[chain, 0], xy[chain, 1])
         if len(chain) > 2:
-            x, y = resample(*(_smooth(v, SMOOTHING * shape.spacing_px / AXIS_STEP_PX) for v in (x, y)))
+            sigma = SMOOTHING * shape.spacing_px / AXIS_STEP_PX
+            x, y = resample(_smooth(x, sigma), _smooth(y, sigma))
         feeds = {chain[0], chain[-1]} & {len(xy) - 1, len(xy) - 2}
-        radius = shape.feeder_radius_px if feeds else shape.radius_px * np.exp(
-            shape.radius_sd * np.clip(rng.standard_normal(), -2.5, 2.5)
+        radius = (
+            shape.feeder_radius_px
+            if feeds
+            else shape.radius_px * np.exp(shape.radius_sd * np.clip(rng.standard_normal(), -2.5, 2.5))
         )
         s = arc_length(x, y)
         wave = process(len(s), s[-1] / (len(s) - 1), shape.variation_ratio * radius, rng)

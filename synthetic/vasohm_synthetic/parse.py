@@ -16,7 +16,7 @@ def name_problem(image_id: str) -> str:
     """Say what is wrong with an image's name; empty where nothing is."""
     if not re.fullmatch(r"[A-Za-z0-9][A-Za-z0-9._-]{0,99}", image_id) or image_id.endswith("."):
         return f"{image_id!r} must be 1 to 100 of A-Z a-z 0-9 . _ -, begin with a letter or digit, not end in '.'"
-    if image_id.split(".")[0].lower() in _DEVICE_NAMES:
+    if image_id.partition(".")[0].lower() in _DEVICE_NAMES:
         return f"{image_id!r} is the name of a device on some systems"
     return ""
 

@@ -150,9 +150,7 @@ def _images(top: Mapping[str, Any], problems: list[str]) -> tuple[ImageRecipe, .
                 bed=fields.text(said, "bed", image_id),
                 scene=_scene(scene, Fields(f"image {number} scene", problems)),
                 optics=_optics(optics, Fields(f"image {number} optics", problems)),
-                tones=tuple(
-                    fields.build(Tone, tone, f"image {number} tone") for tone in fields.tables(said, "tone")
-                ),
+                tones=tuple(fields.build(Tone, tone, f"image {number} tone") for tone in fields.tables(said, "tone")),
                 design={key: fields.text(said, key, "") for key in DESIGN if key in said},
             )
         )

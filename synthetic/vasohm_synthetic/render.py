@@ -1,7 +1,8 @@
 """From a scene to a picture: exact profiles on a fine grid, joined, blurred, averaged over pixels; then the camera."""
 
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from scipy.ndimage import distance_transform_edt, gaussian_filter
@@ -84,7 +85,7 @@ def _develop(fine: FloatArray, optics: Optics) -> FloatArray:
     return np.exp(-pixels) if optics.polarity == "dark" and not loses_light(optics) else pixels
 
 
-def _fine_fields(scene: Scene, trees: list[cKDTree], tile: _Tile, optics: Optics) -> list[FloatArray]:
+def _fine_fields(scene: Scene, trees: Sequence["cKDTree[Any, Any]"], tile: _Tile, optics: Optics) -> list[FloatArray]:
     """Profile P of all vessels on the tile's fine grid, one a channel: union within a layer, sum over layers."""
     n, degree = optics.supersample, scene.degree
     shape = (tile.h * n, tile.w * n)
@@ -128,7 +129,9 @@ class _Cells:
 CHUNK = 400_000  # cells looked up at once
 
 
-def _cells(vessel: Vessel, tree: cKDTree, tile: _Tile, n: int, open_ends: tuple[bool, bool]) -> Iterator[_Cells]:
+def _cells(
+    vessel: Vessel, tree: "cKDTree[Any, Any]", tile: _Tile, n: int, open_ends: tuple[bool, bool]
+) -> Iterator[_Cells]:
     """Find the fine cells that a vessel may touch, in chunks."""
     ys, xs = np.nonzero(_near_pixels(vessel, tile))
     if not len(ys):
@@ -175,7 +178,7 @@ def _near_pixels(vessel: Vessel, tile: _Tile) -> BoolArray:
 
 
 def _project(
-    vessel: Vessel, tree: cKDTree, x: FloatArray, y: FloatArray, open_ends: tuple[bool, bool]
+    vessel: Vessel, tree: "cKDTree[Any, Any]", x: FloatArray, y: FloatArray, open_ends: tuple[bool, bool]
 ) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
     """Distance of points from a vessel's axis, its radius and cosine there, and how far before an open end they lie."""
     last = len(vessel.x_px) - 1

@@ -34,8 +34,6 @@ def retone(scene: Scene, tones: Sequence[Tone], pixel_size_um: float) -> Scene:
             chosen = tone.vessel_class in ("", vessel.vessel_class)
             chosen &= tone.radius_um_below is None or mean_um < tone.radius_um_below
             chosen &= tone.radius_um_above is None or mean_um >= tone.radius_um_above
-            vessels.append(
-                replace(vessel, radius_px=vessel.radius_px * tone.radius_factor) if chosen else vessel
-            )
+            vessels.append(replace(vessel, radius_px=vessel.radius_px * tone.radius_factor) if chosen else vessel)
         scene = replace(scene, vessels=tuple(vessels))
     return scene

@@ -113,6 +113,43 @@ class _Limb:
         return Path(x, y, float(self.radius.max()), kin)
 
 
+class _Bed:
+    """What has grown so far: nodes, vessels, tips by falling radius, and the ground they take."""
+
+    def __init__(self, field: Field, shape: TreeShape, rng: np.random.Generator) -> None:
+        self.shape = shape
+        self.rng = rng
+        self.ground = Ground(field, shape.gap_px)
+        self.nodes: list[tuple[float, float]] = []
+        self.vessels: list[Vessel] = []
+        self.tips: list[tuple[float, int, _Tip]] = []
+
+    def keep(self, limb: _Limb, node: int, root: Root) -> None:
+        """Accept a limb: it takes its ground, becomes a vessel, and its end a tip."""
+        self.ground.take(limb.path(root.kin))
+        far = len(self.nodes)
+        self.nodes.append((float(limb.x[-1]), float(limb.y[-1])))
+        turn = slice(None) if root.flow_inwards else slice(None, None, -1)
+        self.vessels.append(
+            Vessel(
+                x_px=limb.x[turn].copy(),
+                y_px=limb.y[turn].copy(),
+                radius_px=limb.radius[turn].copy(),
+                node_a=node if root.flow_inwards else far,
+                node_b=far if root.flow_inwards else node,
+                layer=root.layer,
+                vessel_class=root.vessel_class,
+                gain=float(np.exp(self.shape.gain_sd * self.rng.standard_normal())),
+            )
+        )
+        if limb.leaves:
+            return
+        heading = float(np.arctan2(limb.y[-1] - limb.y[-4], limb.x[-1] - limb.x[-4]))
+        nominal = float(np.median(limb.radius)) * (1.0 - 0.5 * self.shape.taper)
+        tip = _Tip(float(limb.x[-1]), float(limb.y[-1]), heading, nominal, far, root)
+        heapq.heappush(self.tips, (-nominal, far, tip))
+
+
 def branching_angles(parent: float, child_1: float, child_2: float) -> tuple[float, float]:
     """Angles in radians between the parent's direction and each child, for least volume (Murray 1926)."""
     p, a, b = parent**4, child_1**4, child_2**4
@@ -136,68 +173,26 @@ def grow_trees(
     discs : tuple[Circle, ...]
         Optic disc and dark centre to be put into the scene; the trees do not heed them.
     """
-    ground = Ground(field, shape.gap_px)
-    nodes: list[tuple[float, float]] = []
-    vessels: list[Vessel] = []
-    tips: list[tuple[float, int, _Tip]] = []
+    bed = _Bed(field, shape, rng)
     for root in roots:
-        trunk = _grow_trunk(root, shape, ground, rng)
+        trunk = _grow_trunk(root, shape, bed.ground, rng)
         if trunk is not None:
-            nodes.append((float(trunk.x[0]), float(trunk.y[0])))
-            _keep(trunk, len(nodes) - 1, root, ground, (nodes, vessels, tips), shape, rng)
-    while tips:
-        tip = heapq.heappop(tips)[2]
-        limbs = _branch(tip, shape, ground, rng)
-        for limb in limbs:
-            _keep(limb, tip.node, tip.root, ground, (nodes, vessels, tips), shape, rng)
-    xy = np.array(nodes, float).reshape(-1, 2)
+            bed.nodes.append((float(trunk.x[0]), float(trunk.y[0])))
+            bed.keep(trunk, len(bed.nodes) - 1, root)
+    while bed.tips:
+        tip = heapq.heappop(bed.tips)[2]
+        for limb in _branch(tip, shape, bed.ground, rng):
+            bed.keep(limb, tip.node, tip.root)
+    xy = np.array(bed.nodes, float).reshape(-1, 2)
     return Scene(
         field.shape,
         xy[:, 0].copy(),
         xy[:, 1].copy(),
-        tuple(vessels),
+        tuple(bed.vessels),
         fov=field.fov,
         disc=discs[0] if discs else None,
         centre=discs[1] if len(discs) > 1 else None,
     )
-
-
-_Grown = tuple[list[tuple[float, float]], list[Vessel], list[tuple[float, int, _Tip]]]
-
-
-def _keep(
-    limb: _Limb,
-    node: int,
-    root: Root,
-    ground: Ground,
-    grown: _Grown,
-    shape: TreeShape,
-    rng: np.random.Generator,
-) -> None:
-    """Accept a limb: it takes its ground, becomes a vessel, and its end a tip."""
-    nodes, vessels, tips = grown
-    ground.take(limb.path(root.kin))
-    nodes.append((float(limb.x[-1]), float(limb.y[-1])))
-    ends = (node, len(nodes) - 1)
-    turn = slice(None) if root.flow_inwards else slice(None, None, -1)
-    vessels.append(
-        Vessel(
-            x_px=limb.x[turn].copy(),
-            y_px=limb.y[turn].copy(),
-            radius_px=limb.radius[turn].copy(),
-            node_a=ends[turn][0],
-            node_b=ends[turn][1],
-            layer=root.layer,
-            vessel_class=root.vessel_class,
-            gain=float(np.exp(shape.gain_sd * rng.standard_normal())),
-        )
-    )
-    if limb.leaves:
-        return
-    heading = float(np.arctan2(limb.y[-1] - limb.y[-4], limb.x[-1] - limb.x[-4]))
-    nominal = float(np.median(limb.radius)) * (1.0 - 0.5 * shape.taper)
-    tip = _Tip(float(limb.x[-1]), float(limb.y[-1]), heading, nominal, len(nodes) - 1, root)
-    heapq.heappush(tips, (-nominal, len(nodes), tip))
 
 
 def _grow_trunk(root: Root, shape: TreeShape, ground: Ground, rng: np.random.Generator) -> _Limb | None:

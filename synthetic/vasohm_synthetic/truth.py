@@ -5,10 +5,11 @@ from typing import Any
 import numpy as np
 import pandas as pd
 from scipy.optimize import brentq
-from scipy.spatial import cKDTree
 
 from vasohm_synthetic.arrays import FloatArray
 from vasohm_synthetic.blood import Blood, blood_problems, viscosity
+from vasohm_synthetic.columns import NETWORK_COLUMNS, NODE_COLUMNS, POINT_COLUMNS, SEGMENT_COLUMNS
+from vasohm_synthetic.crossings import crossing_table
 from vasohm_synthetic.errors import refuse
 from vasohm_synthetic.hydraulics import NL_MIN_PER_M3_S, PA_PER_MMHG, Flow, solve
 from vasohm_synthetic.optics import Optics
@@ -16,20 +17,6 @@ from vasohm_synthetic.profile import central_density
 from vasohm_synthetic.scene import Scene
 from vasohm_synthetic.trace import Graph, Segment, trace
 
-SEGMENT_COLUMNS = (
-    "image_id segment_id network_id node_a node_b vessel_class class_probability n_points length_um length_se_um "
-    "chord_um tortuosity radius_mean_um radius_sd_um radius_hydraulic_um radius_hydraulic_se_um hematocrit "
-    "viscosity_mpa_s resistance_pa_s_m3 resistance_lo_pa_s_m3 resistance_hi_pa_s_m3 ln_resistance_random_se "
-    "ln_resistance_shared_se flow_nl_min pressure_a_mmhg pressure_b_mmhg wall_shear_pa resistance_share flags"
-).split()
-POINT_COLUMNS = "image_id segment_id point s_um x_px y_px radius_um radius_se_um contrast flags".split()
-NODE_COLUMNS = "image_id node_id network_id x_px y_px kind degree role pressure_mmhg".split()
-CROSSING_COLUMNS = "image_id x_px y_px segment_over segment_under probability".split()
-NETWORK_COLUMNS = (
-    "image_id network_id vessel_class class_probability n_segments n_branchings n_inlets n_outlets terminals length_um area_um2 "
-    "volume_um3 loops resistance_pa_s_m3 resistance_lo_pa_s_m3 resistance_hi_pa_s_m3 ln_resistance_random_se "
-    "ln_resistance_shared_se flow_nl_min flags"
-).split()
 TRUTH_STEP_PX = 1.0  # between the points of points.csv
 
 
@@ -74,7 +61,7 @@ def truth_tables(
         "segments": segments,
         "points": _points(graph, pixel_size_um, optics, image_id),
         "nodes": _nodes(graph, flow, image_id),
-        "crossings": _crossings(graph, image_id),
+        "crossings": crossing_table(graph, image_id),
         "networks": _networks(graph, segments, flow, pixel_size_um, image_id),
     }
 
@@ -193,49 +180,6 @@ def _nodes(graph: Graph, flow: Flow, image_id: str) -> pd.DataFrame:
         "pressure_mmhg": flow.pressure_pa / PA_PER_MMHG,
     }
     return pd.DataFrame(table, columns=NODE_COLUMNS)
-
-
-def _crossings(graph: Graph, image_id: str) -> pd.DataFrame:
-    """Places where axes of different layers meet; which lies over cannot be told, so the lower id stands first."""
-    rows = []
-    trees = [cKDTree(np.column_stack((s.x_px, s.y_px))) for s in graph.segments]
-    for i, first in enumerate(graph.segments):
-        for j in range(i + 1, len(graph.segments)):
-            second = graph.segments[j]
-            if first.vessel.layer == second.vessel.layer:
-                continue
-            found: list[tuple[float, float]] = []
-            for a, near in enumerate(trees[i].query_ball_tree(trees[j], 0.5)):
-                found += [point for b in near if (point := _meeting(first, a, second, b)) is not None]
-            for x, y in _apart(found):
-                rows.append((image_id, x, y, i + 1, j + 1, 1.0))
-    return pd.DataFrame(rows, columns=CROSSING_COLUMNS)
-
-
-def _meeting(first: Segment, a: int, second: Segment, b: int) -> tuple[float, float] | None:
-    """Where piece a of one axis meets piece b of another."""
-    if a + 1 >= len(first.x_px) or b + 1 >= len(second.x_px):
-        return None
-    px, py = first.x_px[a], first.y_px[a]
-    ux, uy = first.x_px[a + 1] - px, first.y_px[a + 1] - py
-    vx, vy = second.x_px[b + 1] - second.x_px[b], second.y_px[b + 1] - second.y_px[b]
-    cross = ux * vy - uy * vx
-    if cross == 0:
-        return None
-    wx, wy = second.x_px[b] - px, second.y_px[b] - py
-    t, u = (wx * vy - wy * vx) / cross, (wx * uy - wy * ux) / cross
-    if 0 <= t <= 1 and 0 <= u <= 1:
-        return float(px + t * ux), float(py + t * uy)
-    return None
-
-
-def _apart(points: list[tuple[float, float]]) -> list[tuple[float, float]]:
-    """Drop points that repeat an earlier one."""
-    kept: list[tuple[float, float]] = []
-    for x, y in points:
-        if all(np.hypot(x - kx, y - ky) > 1e-6 for kx, ky in kept):
-            kept.append((x, y))
-    return kept
 
 
 def _networks(graph: Graph, segments: pd.DataFrame, flow: Flow, pixel_size_um: float, image_id: str) -> pd.DataFrame:

@@ -82,7 +82,9 @@ def tube_scene(tubes: Sequence[Tube], shape: tuple[int, int], rng: np.random.Gen
     """
     refuse([f"tube {i}: {problem}" for i, tube in enumerate(tubes, 1) for problem in tube_problems(tube, shape)])
     rng = np.random.default_rng(0) if rng is None else rng
-    vessels, node_x, node_y = [], [], []
+    vessels: list[Vessel] = []
+    node_x: list[float] = []
+    node_y: list[float] = []
     for layer, tube in enumerate(tubes):
         x, y = _axis(tube)
         ends = (0,) if tube.shape == "ring" else (0, -1)
