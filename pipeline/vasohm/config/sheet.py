@@ -113,7 +113,7 @@ def read_sheet(path: Path, covariates: Collection[str] = ()) -> Sheet:
     sources = [_source(row, table.columns, rows) for row in table.rows]
     problems += _repeated_ids(table, shown(path))
     if problems:
-        raise RequestError(problems)
+        raise RequestError(sorted(problems, key=lambda problem: problem.row or 0))
     carried = tuple(name for name in table.columns if name not in KNOWN)
     images = tuple(source for source in sources if source is not None)
     return Sheet(images, table.columns, carried, (*rows.warnings, *_like_numbers(table, shown(path))))
@@ -198,6 +198,7 @@ def _source(row: Row, columns: tuple[str, ...], rows: Rows) -> ImageSource | Non
         rows.needed(row, "file", paths["file"])
     terminals = _companion(row, "terminals_file", paths, rows, read_terminals)
     edits = _companion(row, "edits_file", paths, rows, read_edits)
+    disc = _disc(row, numbers, rows)
     file = paths["file"]
     if file is None:
         return None
@@ -210,7 +211,7 @@ def _source(row: Row, columns: tuple[str, ...], rows: Rows) -> ImageSource | Non
         class_file=paths["class_file"],
         terminals=terminals,
         edits=edits,
-        disc=_disc(row, numbers, rows),
+        disc=disc,
         axial_length_mm=numbers["axial_length_mm"],
         hematocrit=numbers["hematocrit"],
         design={name: row.cells[name] for name in columns if name in DESIGN or name not in KNOWN},

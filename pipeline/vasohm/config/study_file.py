@@ -132,6 +132,7 @@ def _study(said: Mapping[str, Any], path: Path, base: Path, *, needs_sheet: bool
 
 def read_toml(path: Path) -> Mapping[str, Any]:
     """Read a TOML file as it stands, unchecked; RequestError where it is none."""
+
     def failed(message: str, row: int | None = None) -> RequestError:
         return RequestError([Problem(shown(path), message, row=row)])
 
@@ -157,7 +158,7 @@ def read_toml(path: Path) -> Mapping[str, Any]:
         raise failed("its brackets are nested too deeply.") from error
     except ValueError as error:
         line = AT_LINE.search(str(error))
-        raise failed(f"is no valid TOML: {error}", int(line[1]) if line else data.count(b"\n") + 1) from error
+        raise failed(f"is no valid TOML: {error}", int(line[1]) if line else data.rstrip().count(b"\n") + 1) from error
 
 
 def _sheet_name(said: Mapping[str, Any]) -> str:

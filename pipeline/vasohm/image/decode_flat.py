@@ -3,6 +3,7 @@
 import io
 import struct
 import zlib
+from collections.abc import Callable, Mapping
 
 import numpy as np
 from PIL import Image, ImageFile
@@ -15,7 +16,11 @@ from vasohm.errors import ReadError, TruncatedError, UnsupportedPixelsError
 from vasohm.image.decoded import NO_SCALE, Decoded, expand_palette, refuse_too_large
 
 # The formats' own classes, since Image.open has a pixel limit of its own that is not the study's.
-READERS = {"PNG": PngImageFile, "JPEG": JpegImageFile, "BMP": BmpImageFile}
+READERS: Mapping[str, Callable[[io.BytesIO], ImageFile.ImageFile]] = {
+    "PNG": PngImageFile,
+    "JPEG": JpegImageFile,
+    "BMP": BmpImageFile,
+}
 MODES = {"1": 1, "L": 8, "I;16": 16, "I": 16, "P": 8, "RGB": 8, "LA": 8, "RGBA": 8}  # mode -> bits of a sample
 ORIENTATION = 0x0112
 PNG_SIGNATURE_BYTES = 8
@@ -46,8 +51,9 @@ def decode_flat(data: bytes, kind: str, limit_px: float, *, expand_palettes: boo
     if picture.mode not in MODES:
         msg = f"its pixels are {picture.mode}, which have no one brightness. Save it as RGB or grey."
         raise UnsupportedPixelsError(msg)
-    if getattr(picture, "n_frames", 1) > 1:
-        msg = f"it is animated ({picture.n_frames} frames). Save the frames as a TIFF stack."  # type: ignore[union-attr]
+    n_frames = getattr(picture, "n_frames", 1)
+    if n_frames > 1:
+        msg = f"it is animated ({n_frames} frames). Save the frames as a TIFF stack."
         raise UnsupportedPixelsError(msg)
     picture.load()
     notes = _dpi_notes(picture)

@@ -201,7 +201,8 @@ def _brightness(
     planes: AnyArray, page: TiffPage, layout: _Layout, *, expand_palettes: bool
 ) -> tuple[AnyArray, bool, int | None, tuple[str, ...]]:
     """Make bigger brighter, expand palettes and part colours from extra samples."""
-    photometric, notes = page.photometric, ()
+    photometric = page.photometric
+    notes: tuple[str, ...] = ()
     if PHOTOMETRIC_TAG not in page.tags:
         photometric = PHOTOMETRIC.RGB if page.samplesperpixel in {3, 4} else PHOTOMETRIC.MINISBLACK
         notes = (f"no photometric tag: taken for {photometric.name}",)

@@ -60,7 +60,7 @@ class ReadSettings:
 
     plane: int | str  # of a stack: "max", "mean" or a number counted from 0
     max_megapixels: float  # more declared pixels are refused before decoding
-    channel: int | str = "luminance"  # files whose channels are not red, green and blue need a number
+    channel: int | str  # files whose channels are not red, green and blue need a number
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -1,0 +1,376 @@
+"""The study file: strict, complete, and resolved to the last value. TOML is that of toml.io, version 1.0."""
+
+import json
+import pickle
+import textwrap
+import time
+import tomllib
+from collections.abc import Callable, Mapping
+from pathlib import Path
+from typing import Any
+
+import pytest
+
+from vasohm.config.presets import PRESETS
+from vasohm.config.settings import CompareSettings
+from vasohm.config.study_file import Study, ad_hoc_study, read_study, study_from_mapping
+from vasohm.config.study_model import StudyModel
+from vasohm.errors import RequestError
+from vasohm.flow.rheology import law_names
+from vasohm.flow.scenarios import Scenario
+from vasohm.image.segment import segmenter_names
+
+CONFIGS = Path(__file__).parents[2] / "configs"
+SHEET = "image_id,file,subject,group,age_years\na,a.tif,s1,control,61\nb,b.tif,s2,NA,58\n"
+SMALLEST: Mapping[str, Any] = {"image": {"preset": "fundus"}}
+
+
+def study_of(folder: Path, text: str | bytes, sheet: str = SHEET) -> Study:
+    (folder / "images.csv").write_text(sheet)
+    (folder / "study.toml").write_bytes(textwrap.dedent(text).encode() if isinstance(text, str) else text)
+    return read_study(folder / "study.toml")
+
+
+def problems(read: Callable[[], object]) -> list[str]:
+    with pytest.raises(RequestError) as caught:
+        read()
+    return [str(problem) for problem in caught.value.problems]
+
+
+def faults(**tables: Any) -> list[str]:
+    return problems(lambda: study_from_mapping({**SMALLEST, **tables}, Path()))
+
+
+CONTRACT = """
+    [study]
+    name   = "demo"
+    sheet  = "images.csv"
+    [image]
+    preset   = "fundus"
+    channel  = "green"
+    polarity = "dark"
+    plane    = "max"
+    gamma    = 2.2
+    max_megapixels = 100
+    [scale]
+    pixel_size_um    = 7
+    pixel_size_se_um = 0.1
+    scale_conflict = "sheet"
+    [segment]
+    method      = "hessian"
+    radius_um   = [4, 80.0]
+    false_alarms_per_mpx = 30
+    crossing_probability = 0.6
+    parameters = { strictness = 2 }
+    [radius]
+    profile     = "cylinder"
+    blur_px     = 1.5
+    plasma_layer_um = 1.1
+    plasma_layer_se_um = 0.4
+    [blood]
+    law                    = "pries-in-vitro"
+    hematocrit             = 0.4
+    plasma_viscosity_mpa_s = 1.3
+    viscosity_mpa_s        = 4.0
+    hematocrit_split       = false
+    parameters = { core = 1.0 }
+    [network]
+    terminals = "none"
+    drive_mmhg = 2.0
+    [[scenario]]
+    name = "small arterioles dilate"
+    where = { radius_um_below = 10, radius_um_above = 2, vessel_class = "arteriole" }
+    radius_factor = 1.10
+    [[scenario]]
+    name = "all narrow"
+    radius_factor = 0.9
+    [compare]
+    outcomes   = ["networks.resistance_pa_s_m3", "segments.radius_hydraulic_um", "length_density_per_mm"]
+    by         = "group"
+    reference  = "control"
+    covariates = ["age_years"]
+    plan_ratio = 1.20
+    radius_um  = [[2, 10], [10, 40]]
+    [output]
+    overlay = false
+"""
+
+
+def test_every_key_reaches_its_setting(tmp_path: Path) -> None:
+    """A key that is accepted and then dropped is worse than one that is refused."""
+    study = study_of(tmp_path, CONTRACT)
+    chosen = study.settings
+    assert (study.name, study.path) == ("demo", tmp_path / "study.toml")
+    assert [source.image_id for source in study.images] == ["a", "b"]
+    assert (chosen.preset, chosen.output.overlay) == ("fundus", False)
+    assert (chosen.read.plane, chosen.read.max_megapixels, chosen.read.channel) == ("max", 100.0, "green")
+    assert (chosen.prepare.channel, chosen.prepare.polarity, chosen.prepare.gamma) == ("green", "dark", 2.2)
+    assert chosen.prepare.radius_um == chosen.segment.radius_um == (4.0, 80.0)
+    assert (chosen.scale.pixel_size_um, chosen.scale.pixel_size_se_um, chosen.scale.scale_conflict) == (
+        7.0,
+        0.1,
+        "sheet",
+    )
+    assert (chosen.segment.method, chosen.segment.false_alarms_per_mpx) == ("hessian", 30.0)
+    assert (chosen.segment.parameters, chosen.blood.parameters) == ({"strictness": 2.0}, {"core": 1.0})
+    assert chosen.crossings.threshold == 0.6
+    assert (chosen.radius.profile, chosen.radius.blur_px) == ("cylinder", 1.5)
+    assert (chosen.radius.plasma_layer_um, chosen.radius.plasma_layer_se_um) == (1.1, 0.4)
+    assert (chosen.blood.law, chosen.blood.hematocrit) == ("pries-in-vitro", 0.4)
+    assert (chosen.blood.plasma_viscosity_mpa_s, chosen.blood.viscosity_mpa_s) == (1.3, 4.0)
+    assert (chosen.network.terminals, chosen.network.drive_mmhg) == ("none", 2.0)
+    assert chosen.scenarios == (
+        Scenario("small arterioles dilate", 1.1, 10.0, 2.0, "arteriole"),
+        Scenario("all narrow", 0.9, None, None, None),
+    )
+    assert study.compare == CompareSettings(
+        outcomes=("networks.resistance_pa_s_m3", "segments.radius_hydraulic_um", "image.length_density_per_mm"),
+        by="group",
+        reference="control",
+        covariates=("age_years",),
+        plan_ratio=1.2,
+        radius_um=((2.0, 10.0), (10.0, 40.0)),
+    )
+
+
+def test_the_resolved_study_names_the_source_of_every_value(tmp_path: Path) -> None:
+    """Without it nobody could tell what was chosen from what a preset brought; it must go into JSON as it is."""
+    study = study_of(tmp_path, CONTRACT)
+    said = {key for key in study.resolved if not key.startswith("skeletonize")}
+    assert {study.resolved[key]["source"] for key in said} == {"study"}
+    bare = study_from_mapping(SMALLEST, tmp_path)
+    assert set(bare.resolved) == set(study.resolved)
+    assert bare.resolved["image.preset"] == {"value": "fundus", "source": "study"}
+    assert bare.resolved["image.channel"] == {"value": "green", "source": "preset"}
+    assert bare.resolved["blood.hematocrit"] == {"value": 0.45, "source": "default"}
+    assert json.loads(json.dumps(study.resolved, allow_nan=False)) == study.resolved
+    assert pickle.loads(pickle.dumps(study)) == study  # noqa: S301 - our own bytes; settings go to worker processes
+
+
+def test_saying_the_default_changes_nothing() -> None:
+    """A number written as 400 or 400.0, or left out, must not measure everything again."""
+    said = {"image": {"preset": "fundus", "max_megapixels": 400}, "blood": {"hematocrit": 0.45}, "scale": {}}
+    assert repr(study_from_mapping(said, Path()).settings) == repr(study_from_mapping(SMALLEST, Path()).settings)
+
+
+@pytest.mark.parametrize("preset", PRESETS)
+def test_ready_study_files_say_what_their_preset_brings(preset: str, tmp_path: Path) -> None:
+    """A copied file must behave as the preset that it names, and stay true when the preset changes."""
+    text = (CONFIGS / f"{preset}.toml").read_text()
+    study = study_of(tmp_path, text)
+    assert study.settings == study_from_mapping({"image": {"preset": preset}}, tmp_path).settings
+    lines = [line.removeprefix("# ") if "=" in line or "[" in line else line for line in text.split("\n")]
+    with_examples = tomllib.loads("\n".join(lines))
+    del with_examples["study"]
+    study_from_mapping(with_examples, tmp_path)
+
+
+# ---- what must be refused
+
+
+SECTIONS = ("study", "image", "scale", "segment", "radius", "blood", "network", "output")
+ALL_KEYS = [
+    (section, key)
+    for section in SECTIONS
+    for key in StudyModel.model_fields[section].annotation.model_fields  # type: ignore[union-attr]
+]
+NONSENSE = [True, float("nan"), float("inf"), -1, "nonsense", [], {"a": {"b": 1}}, [True, False]]
+SWITCHES = {("output", "overlay"), ("blood", "hematocrit_split")}
+TEXTS = {("study", "name"), ("study", "sheet")}
+
+
+@pytest.mark.parametrize(("table", "key"), ALL_KEYS)
+@pytest.mark.parametrize(
+    "value", [True, float("nan"), float("inf"), -1, "nonsense", [], {"a": {"b": 1}}, [True, False]]
+)
+def test_no_key_takes_nonsense(table: str, key: str, value: object) -> None:
+    """`true` passes as 1 in Python, and TOML has nan and inf: each would shape a number without a word."""
+    is_fine = ((table, key) in SWITCHES and value is True and key == "overlay") or (
+        (table, key) in TEXTS and value == "nonsense"
+    )
+    said = {table: {**SMALLEST.get(table, {}), key: value}}
+    if (table, key) == ("study", "sheet") and is_fine:
+        assert "no such file" in faults(**said)[0]
+    elif is_fine:
+        study_from_mapping({**SMALLEST, **said}, Path())
+    else:
+        assert any(problem.startswith(f"study mapping {table}.{key}") for problem in faults(**said))
+
+
+@pytest.mark.parametrize(("table", "key"), ALL_KEYS)
+def test_misspelt_keys_name_the_nearest_known_one(table: str, key: str) -> None:
+    """A misspelt key that is ignored leaves the default in force."""
+    slip = key[:2] + key[3:] if len(key) > 3 else key + "s"
+    found = faults(**{table: {**SMALLEST.get(table, {}), slip: 1}})
+    assert found == [f"study mapping {table}.{slip}: unknown key; the nearest known one is {key!r}."]
+
+
+FAULTY = {
+    "a table": ({"imag": {}}, "imag: unknown key; the nearest known one is 'image'."),
+    "a key in another table": ({"scale": {"hematocrit": 0.4}}, "it belongs in [blood]."),
+    "an enum": ({"image": {"preset": "fundus", "polarity": "drak"}}, "'drak' must be one of 'dark', 'bright'. Did you"),
+    "a preset": ({"image": {"preset": "fondus"}}, "Did you mean 'fundus'?"),
+    "no preset": ({"image": {}}, "image.preset: is missing. Give [image] a preset: 'fundus', 'angiogram'"),
+    "a channel": ({"image": {"preset": "fundus", "channel": "gren"}}, "Did you mean 'green'?"),
+    "radii turned round": ({"segment": {"radius_um": [5, 4]}}, "must be two radii in um, the smaller first"),
+    "one radius": ({"segment": {"radius_um": [5]}}, "segment.radius_um: [5] is wrong"),
+    "packed cells": ({"blood": {"hematocrit": 0.76}}, "0.76 must be at most 0.75."),
+    "no viscosity": ({"blood": {"plasma_viscosity_mpa_s": 0}}, "0 must be greater than 0."),
+    "a law": ({"blood": {"law": "pries-in-vivi"}}, "Did you mean 'pries-in-vivo'?"),
+    "a segmenter": ({"segment": {"method": "rigde"}}, "Did you mean 'ridge'?"),
+    "a split": ({"blood": {"hematocrit_split": True}}, "true is not available: this version"),
+    "magnification": ({"scale": {"magnification": "bennett"}}, "scale.magnification: unknown key"),
+    "a parameter": ({"segment": {"parameters": {"a": "b"}}}, "segment.parameters.a: 'b' must be a number."),
+    "a scenario's key": (
+        {"scenario": [{"name": "x", "radius_factor": 1.1, "where": {"radius_below": 3}}]},
+        "scenario[1].where.radius_below: unknown key; the nearest known one is 'radius_um_below'.",
+    ),
+    "an empty range": (
+        {"scenario": [{"name": "x", "radius_factor": 1, "where": {"radius_um_below": 3, "radius_um_above": 3}}]},
+        "no radius is above 3 and below 3 um.",
+    ),
+    "scenarios of one name": (
+        {"scenario": [{"name": "x", "radius_factor": 1.1}, {"name": "x", "radius_factor": 0.9}]},
+        "scenario[2].name: 'x' occurs twice.",
+    ),
+}
+
+
+@pytest.mark.parametrize("name", FAULTY)
+def test_faulty_studies_say_what_to_do(name: str) -> None:
+    said, words = FAULTY[name]
+    assert any(words in problem for problem in faults(**said)), faults(**said)
+
+
+def test_known_laws_and_segmenters_are_listed() -> None:
+    (law,) = faults(blood={"law": "water"})
+    assert all(repr(name) in law for name in law_names())
+    (method,) = faults(segment={"method": "by hand"})
+    assert all(repr(name) in method for name in segmenter_names())
+
+
+def test_study_and_sheet_are_told_together(tmp_path: Path) -> None:
+    """Who mends the study file should not find the sheet's faults one run later."""
+    text = '[study]\nsheet = "images.csv"\n[image]\npreset = "fundus"\ngama = 1.0\n'
+    found = problems(lambda: study_of(tmp_path, text, "image_id,file\n..,a.tif\n"))
+    assert [problem.split(":")[0] for problem in found] == ["study.toml image.gama", "images.csv"]
+
+
+COMPARE = {"outcomes": ["networks.resistance_pa_s_m3"], "by": "group", "reference": "control"}
+COMPARISONS = {
+    "an outcome in two tables": (
+        {"outcomes": ["resistance_pa_s_m3"]},
+        "occurs in more than one table. Say networks.resistance_pa_s_m3 or segments.resistance_pa_s_m3.",
+    ),
+    "a misspelt outcome": ({"outcomes": ["networks.resistence_pa_s_m3"]}, "Did you mean networks.resistance_pa_s_m3?"),
+    "an outcome that is text": ({"outcomes": ["segments.vessel_class"]}, "is no number that a table"),
+    "no outcome": ({"outcomes": []}, "compare.outcomes"),
+    "a column that is not there": ({"by": "condition"}, "compare.by: 'condition' is no such column of the image sheet"),
+    "a column of files": ({"by": "file"}, "compare.by: 'file' is no such column"),
+    "a covariate that is not there": ({"covariates": ["age"]}, "compare.covariates: 'age' is no such column"),
+    "a reference that nobody has": (
+        {"reference": "controls"},
+        "'controls' is no value of group; there are NA,",
+    ),
+    "a covariate that is compared": ({"covariates": ["group"]}, "cannot be a covariate too"),
+    "a ratio of one": ({"plan_ratio": 1.0}, "must differ from 1"),
+}
+
+
+@pytest.mark.parametrize("name", COMPARISONS)
+def test_comparisons_are_checked_before_anything_is_measured(name: str, tmp_path: Path) -> None:
+    """A week of computing must not end at a misspelt outcome."""
+    said, words = COMPARISONS[name]
+    (tmp_path / "images.csv").write_text(SHEET)
+    tables = {**SMALLEST, "study": {"sheet": "images.csv"}, "compare": {**COMPARE, **said}}
+    found = problems(lambda: study_from_mapping(tables, tmp_path))
+    assert any(words in problem for problem in found), found
+
+
+def test_a_mask_for_every_image_where_masks_are_the_method(tmp_path: Path) -> None:
+    (tmp_path / "images.csv").write_text("image_id,file,mask_file\na,a.tif,m.png\nb,b.tif,\n")
+    tables = {**SMALLEST, "study": {"sheet": "images.csv"}, "segment": {"method": "mask"}}
+    (problem,) = problems(lambda: study_from_mapping(tables, tmp_path))
+    assert "needs a mask_file for every image; b have none" in problem
+    tables = {**SMALLEST, "study": {"sheet": "images.csv"}, "network": {"terminals": "file"}}
+    assert "a, b have no terminals" in study_from_mapping(tables, tmp_path).warnings[0]
+
+
+BROKEN = {
+    "a key twice": (b"[image]\npreset = 'fundus'\npreset = 'fundus'\n", "study.toml:3: is no valid TOML: "),
+    "an open string": (b"[image]\npreset = 'fundus\n", "study.toml:2: is no valid TOML: "),
+    "a date that is none": (b"[image]\nx = 2020-13-01\n", "study.toml:2: is no valid TOML: "),
+    "deep brackets": (b"x = " + b"[" * 20_000, "study.toml: its brackets are nested too deeply."),
+    "a huge number": (b"x = " + b"9" * 5_000, "study.toml:1: is no valid TOML: "),
+    "UTF-16": ("[image]\n".encode("utf-16"), "study.toml:1: looks like UTF-16"),
+    "Latin-1": ("[image]\n# é\n".encode("latin-1"), "study.toml:2: is not UTF-8"),
+    "binary": (b"\x89PNG\r\n\x1a\n\xff", "study.toml:1: is not UTF-8 text: it is binary"),
+    "NUL": (b"[image]\n\0", "study.toml:2: is no valid TOML: "),
+    "more than 1 MB": (b"#" * 1_000_001, "study.toml: has 1 MB: it is no study file"),
+    "a large exponent": (
+        b"[image]\npreset = 'fundus'\ngamma = 1e400\n",
+        "study.toml image.gamma: inf must be",
+    ),
+    "no sheet": (b"[image]\npreset = 'fundus'\n", "study.toml study.sheet: is missing."),
+    "a sheet elsewhere": (
+        b"[study]\nsheet = '/etc/images.csv'\n[image]\npreset = 'fundus'\n",
+        "study.toml study.sheet: '/etc/images.csv' must be a path relative",
+    ),
+    "a sheet that is not there": (
+        b"[study]\nsheet = 'no.csv'\n[image]\npreset = 'fundus'\n",
+        "no.csv: no such file. Check its name and folder.",
+    ),
+}
+
+
+@pytest.mark.parametrize("name", BROKEN)
+def test_broken_files_name_the_line(name: str, tmp_path: Path) -> None:
+    """Odd but legal, or hostile, TOML must end as a message within two seconds, never as a traceback."""
+    data, words = BROKEN[name]
+    start = time.monotonic()
+    found = problems(lambda: study_of(tmp_path, data))
+    assert any(problem.startswith(words) for problem in found), found
+    assert time.monotonic() - start < 2
+
+
+def test_files_that_are_none(tmp_path: Path) -> None:
+    assert problems(lambda: read_study(tmp_path / "no.toml")) == ["no.toml: no such file."]
+    assert problems(lambda: read_study(tmp_path)) == [f"{tmp_path.name}: is not a file."]
+    (tmp_path / "zero.toml").symlink_to("/dev/zero")
+    assert problems(lambda: read_study(tmp_path / "zero.toml")) == ["zero.toml: is not a file."]
+
+
+def test_a_byte_order_mark_is_no_fault(tmp_path: Path) -> None:
+    assert study_of(tmp_path, b"\xef\xbb\xbf" + textwrap.dedent(CONTRACT).encode()).name == "demo"
+
+
+# ---- images named on the command line
+
+
+def test_ids_from_file_names_are_legal_and_unique(tmp_path: Path) -> None:
+    """Each image needs a folder of its own, on every system."""
+    names = ["a b.tif", "A_B.ome.tif", "x/a b.png", "CON.png", "é.png", "..tif", "a" * 150 + ".tif", "a" * 150 + ".png"]
+    study = ad_hoc_study([Path(name) for name in names], 7.0, "fundus")
+    ids = [source.image_id for source in study.images]
+    assert ids[:6] == ["a_b", "A_B-2", "a_b-3", "image_CON", "image", "image-2"]
+    assert len({name.casefold() for name in ids}) == len(ids)
+    assert max(map(len, ids)) == 100
+    rows = "".join(f"{name},x.tif\n" for name in ids)
+    assert len(study_of(tmp_path, CONTRACT.split("[compare]", maxsplit=1)[0], "image_id,file\n" + rows).images) == len(
+        ids
+    )
+    assert study.settings.scale.pixel_size_um == 7.0
+    assert all(source.file.is_absolute() for source in study.images)
+
+
+def test_faulty_requests_on_the_command_line() -> None:
+    assert problems(lambda: ad_hoc_study([], 7.0, "fundus")) == ["command line: no images."]
+    assert "Did you mean 'fundus'?" in problems(lambda: ad_hoc_study([Path("a.tif")], 7.0, "fundos"))[0]
+    assert "must be at least 0.001" in problems(lambda: ad_hoc_study([Path("a.tif")], 0.0, "fundus"))[0]
+    assert ad_hoc_study([Path("a.tif")], None, "fundus").settings.scale.pixel_size_um is None
+
+
+def test_python_callers_may_give_tuples() -> None:
+    study = study_from_mapping({**SMALLEST, "segment": {"radius_um": (2, 9)}}, Path())
+    assert study.settings.segment.radius_um == (2.0, 9.0)
+    assert study.images == ()
