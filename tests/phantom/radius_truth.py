@@ -97,6 +97,63 @@ def straight_tubes(family, r, sigma, cnr, rng, *, mu=0.0, n=120, length=60, nois
     return Scene(*_with_noise(picture, rng, noise_blur), xs, ys, radii, valid)
 
 
+def varying_tubes(family, tubes, sigma, rng, *, mu=0.0, noise_blur=0.0, off_px=0.0, columns=6):
+    """Straight tubes with any radius along them, each in its own tile, drawn four times finer; unit noise.
+
+    `tubes` is a list of (radius at points 1 px apart, contrast). Given lines lie up to `off_px` beside the axis: a
+    sine of random phase.
+    """
+    fine = 4
+    blocks, valids, xs, ys, radii = [], [], [], [], []
+    widest = max(np.max(r) for r, _ in tubes)
+    longest = max(len(r) for r, _ in tubes)
+    margin = int(2 * widest + 5 * sigma + 12)
+    side = longest + 2 * margin
+    grid = (np.arange(side * fine) + 0.5) / fine - 0.5
+    gy, gx = np.meshgrid(grid, grid, indexing="ij")
+    for radius, contrast in tubes:
+        angle = rng.uniform(0, np.pi)
+        cx, cy = (side - 1) / 2 + rng.uniform(-0.5, 0.5, 2)
+        across = -(gx - cx) * np.sin(angle) + (gy - cy) * np.cos(angle)
+        along = (gx - cx) * np.cos(angle) + (gy - cy) * np.sin(angle)
+        s = np.arange(len(radius)) - (len(radius) - 1) / 2
+        local = np.interp(along, s, radius)
+        sharp = contrast * _fine_light(family, mu, local, np.abs(across), fine)
+        blurred = gaussian_filter(sharp.astype(np.float32), sigma * fine, truncate=5)
+        blocks.append(blurred.reshape(side, fine, side, fine).mean(axis=(1, 3)))
+        seen = (np.abs(along) < len(radius) / 2 + 3) | (np.abs(across) > local + 4 * sigma + 2)
+        valids.append(seen[fine // 2 :: fine, fine // 2 :: fine])
+        top, left = ((len(xs) // columns) * side, (len(xs) % columns) * side)
+        shift = off_px * np.sin(2 * np.pi * (s / 50 + rng.uniform()))
+        xs.append(left + cx + s * np.cos(angle) - shift * np.sin(angle))
+        ys.append(top + cy + s * np.sin(angle) + shift * np.cos(angle))
+        radii.append(np.asarray(radius, float))
+    empty = np.zeros((side, side))
+    while len(blocks) % columns:
+        blocks.append(empty)
+        valids.append(np.ones((side, side), bool))
+    picture, valid = (
+        np.vstack([np.hstack(parts[k : k + columns]) for k in range(0, len(parts), columns)])
+        for parts in (blocks, valids)
+    )
+    return Scene(*_with_noise(picture, rng, noise_blur), xs, ys, radii, valid)
+
+
+def wandering_radius(r, sd, correlation_px, length, rng):
+    """Radius whose logarithm is a Gaussian process with a Gaussian covariance."""
+    s = np.arange(length)
+    covariance = sd**2 * np.exp(-0.5 * ((s[:, None] - s) / correlation_px) ** 2)
+    values, vectors = np.linalg.eigh(covariance)
+    return r * np.exp(vectors @ (np.sqrt(np.maximum(values, 0)) * rng.standard_normal(length)))
+
+
+def _fine_light(family, mu, radius, distance, fine):
+    if family == "slab":  # share of a fine pixel inside the rim
+        return np.clip((radius - distance) * fine + 0.5, 0.0, 1.0)
+    nodes = (np.arange(4) + 0.5) / (4 * fine) - 0.5 / fine
+    return np.mean([light_path(family, mu, radius, np.abs(distance + node)) for node in nodes], axis=0)
+
+
 def _with_noise(picture, rng, noise_blur):
     noise = rng.standard_normal(picture.shape)
     if noise_blur > 0:
@@ -117,7 +174,7 @@ def drawn_tubes(family, lines, sigma, rng, *, mu=0.0, shape, noise_blur=0.0, noi
     for k, (x, y, r, contrast) in enumerate(lines):
         light = _draw(family, mu, (x, y, r), contrast, total.shape, fine)
         if reflex:
-            light = light * (1 - 0.0) - reflex * contrast * _draw_reflex(family, mu, (x, y, r), total.shape, fine)
+            light = light - reflex * contrast * _draw_reflex(family, mu, (x, y, r), total.shape, fine)
         if k in union:
             joined = np.maximum(joined, light)
         else:
@@ -159,14 +216,7 @@ def _draw(family, mu, line, contrast, shape, fine):
     box = _box(line, shape, fine)
     distance, radius = _nearest(line, box, fine)
     out = np.zeros(shape)
-    if family == "slab":  # share of a fine pixel inside the rim
-        seen = np.clip((radius - distance) * fine + 0.5, 0.0, 1.0)
-    else:
-        edge = 0.5 / fine
-        nodes = np.linspace(-edge, edge, 5)
-        seen = np.mean(
-            [light_path(family, mu, radius, np.abs(distance + node)) for node in nodes], axis=0
-        )
+    seen = _fine_light(family, mu, radius, distance, fine)
     out[np.ix_(*box)] = contrast * seen
     return out
 

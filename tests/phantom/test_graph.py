@@ -2,8 +2,8 @@
 
 import numpy as np
 import pytest
-
 from drawing import draw, prepared
+
 from vasohm.image.segment import SegmentSettings, segment
 from vasohm.network.centreline import extend_ends, refine_centrelines
 from vasohm.network.crossings import CrossingSettings, resolve_crossings

@@ -31,6 +31,7 @@ class ScaleResponse:
     bright: Float32Array  # lines brighter than both sides
     dark: Float32Array  # the same for the flipped picture: what noise and texture alone would give
     angle: AnyArray  # uint8 index of the angle of `bright`'s line
+    unit: Float32Array  # the noise that the responses are counted in: bright x unit is a contrast
 
     def __post_init__(self) -> None:
         freeze(self)
@@ -91,7 +92,7 @@ def _respond_at(
         np.maximum(bright, response, out=bright)
         np.maximum(dark, -response, out=dark)
     unit = _noise_unit(np.mean(noise, axis=0), bright.shape)
-    return ScaleResponse(level, sigma * 2**level, bright / unit, dark / unit, angle)
+    return ScaleResponse(level, sigma * 2**level, bright / unit, dark / unit, angle, unit)
 
 
 def _block_noise(response: Float32Array) -> Float32Array:

@@ -13,6 +13,9 @@ AVERAGING_PASSES = 12  # of a three-point mean along the line: a window of about
 WEAKER_SIDE = 0.3  # of the stronger: below it is the edge of something, not a vessel
 HOLLOW = 0.8  # of the contrast missing in the middle: two vessels side by side, not one
 HALF_WIDTH_RATIO = 1.2  # the wider half may not exceed this x the narrower: a neighbour stands in the way
+# From a quarter to three quarters of its height a projected cylinder rises over 0.35 of its half-height half width, a
+# Gaussian shadow over 0.77; blur adds a length of its own
+SOFT_RISE, RISE_PX = 0.45, 1.5
 LEAST_HALF_WIDTH_PX = 0.7
 CLEAR_CONTRAST = 1.2  # in noise units: four times the noise of an averaged profile's height
 TAIL_SHARE = (
@@ -61,14 +64,17 @@ def measure_ribbons(image: Float32Array, lines: RidgePixels, reach_px: FloatArra
     inner = np.where(offsets[None, :] <= core, sides, -np.inf).max(axis=1)
     peak = np.tile(np.maximum(inner[:n], inner[n:]), 2)
     middle = np.minimum(sides[:n, 0], sides[n:, 0])
-    width = _half_width(sides, lowest_at, (peak + base) / 2)
-    left, right = width[:n], width[n:]
+    left, right = _half_width(sides, lowest_at, (peak + base) / 2).reshape(2, n)
+    rise = sum(
+        sign * _half_width(sides, lowest_at, base + share * (peak - base)).reshape(2, n).sum(axis=0) / 2
+        for sign, share in ((1, 0.25), (-1, 0.75))
+    )
     narrow = np.minimum(left, right)
     half_width = np.minimum((left + right) / 2, HALF_WIDTH_RATIO * narrow + 0.5)
     height = (peak - base).reshape(2, n)
     weaker, stronger = height.min(axis=0), height.max(axis=0)
     hollow = (peak[:n] - middle) / np.maximum(stronger, 1e-12)
-    shaped = (weaker >= WEAKER_SIDE * stronger) & (hollow <= HOLLOW)
+    shaped = (weaker >= WEAKER_SIDE * stronger) & (hollow <= HOLLOW) & (rise <= SOFT_RISE * half_width + RISE_PX)
     clear = (weaker > 0) & (
         (weaker >= CLEAR_CONTRAST) | (weaker >= TAIL_SHARE * _strongest_near(image.shape, lines, weaker))
     )

@@ -1,6 +1,7 @@
 """Ridge lines of a bank's response, kept by their summed excess over the noise."""
 
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 from scipy import ndimage
@@ -10,6 +11,7 @@ from vasohm.image.bank import N_ANGLES, ScaleResponse
 
 RIDGE_STEP_PX = 0.55  # a ridge passes through a pixel if the Newton step to it is no longer than this
 LOW_THRESHOLD = 4.1  # in noise units: where a line may begin and end
+CLEAR_SHARE, CLEARLY_SEEN = 0.6, 12.0  # of the strongest scale, and in noise units: enough to speak on width
 EIGHT = np.ones((3, 3), dtype=int)
 
 
@@ -59,31 +61,29 @@ def merge_scales(responses: list[ScaleResponse]) -> Strength:
     """Merge by adjacent pairs of scales, on the finest level among them.
 
     A pair's mean suppresses what answers at one scale only (speckle); the factor sigma^-1/4 lets a thin line stand
-    beside a wide one.
+    beside a wide one. Width and angle are those of the scale with the greatest contrast among those that stand well
+    above their noise: noise falls with scale, so that the clearest answer to a strong thin vessel is too wide.
     """
     level = min(response.level for response in responses)
     shape = next(response.bright.shape for response in responses if response.level == level)
+    bright = [_to_grid(r.bright, shape, 1) for r in responses]
     weight = [np.float32((r.sigma_px / responses[0].sigma_px) ** -0.25) for r in responses]
-    bright = [w * _to_grid(r.bright, shape, 1) for w, r in zip(weight, responses, strict=True)]
-    dark = [w * _to_grid(r.dark, shape, 1) for w, r in zip(weight, responses, strict=True)]
-    if len(responses) == 1:
-        responses, bright, dark = responses * 2, bright * 2, dark * 2
-    best = (bright[0] + bright[1]) / 2
-    flipped = (dark[0] + dark[1]) / 2
-    first_stronger = bright[0] >= bright[1]
-    angles = [_to_grid(r.angle, shape, 0) for r in responses]
-    angle = np.where(first_stronger, angles[0], angles[1])
-    sigma = np.where(first_stronger, responses[0].sigma_px, responses[1].sigma_px).astype(np.float32)
-    for i in range(1, len(responses) - 1):
-        pair = (bright[i] + bright[i + 1]) / 2
-        better = pair > best
-        first_stronger = bright[i] >= bright[i + 1]
-        angle = np.where(better, np.where(first_stronger, angles[i], angles[i + 1]), angle)
-        sizes = np.where(first_stronger, responses[i].sigma_px, responses[i + 1].sigma_px).astype(np.float32)
-        sigma = np.where(better, sizes, sigma)
-        best = np.maximum(best, pair)
-        flipped = np.maximum(flipped, (dark[i] + dark[i + 1]) / 2)
-    return Strength(level, best, flipped, angle.astype(np.uint8), sigma)
+    best, flipped = weight[0] * bright[0], weight[0] * _to_grid(responses[0].dark, shape, 1)
+    if len(responses) > 1:
+        dark = [w * _to_grid(r.dark, shape, 1) for w, r in zip(weight, responses, strict=True)]
+        weighted = [w * z for w, z in zip(weight, bright, strict=True)]
+        best = np.max([a + b for a, b in pairwise(weighted)], axis=0) / 2
+        flipped = np.max([a + b for a, b in pairwise(dark)], axis=0) / 2
+    clear = np.minimum(CLEAR_SHARE * np.max(bright, axis=0), CLEARLY_SEEN)
+    contrast = np.full(shape, -np.inf, np.float32)
+    angle, sigma = np.zeros(shape, np.uint8), np.zeros(shape, np.float32)
+    for response, strength in zip(responses, bright, strict=True):
+        height = np.where(strength >= clear, strength * _to_grid(response.unit, shape, 1), -np.inf)
+        higher = height > contrast
+        contrast = np.where(higher, height, contrast)
+        angle = np.where(higher, _to_grid(response.angle, shape, 0), angle)
+        sigma = np.where(higher, np.float32(response.sigma_px), sigma)
+    return Strength(level, best, flipped, angle, sigma)
 
 
 def _to_grid(values: AnyArray, shape: tuple[int, int], order: int) -> AnyArray:
