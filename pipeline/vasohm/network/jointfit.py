@@ -150,7 +150,7 @@ def _huber(w: Float32Array, residual: Float32Array, row_scale: FloatArray) -> tu
     scale = np.maximum(row_scale, 1e-12).astype(np.float32)[:, None]
     squared = w * residual**2
     beyond = squared > HUBER**2 * scale
-    cost = np.sum(squared, axis=1, dtype=np.float64) / 2
+    cost: FloatArray = np.sum(squared, axis=1, dtype=np.float64) * 0.5
     if beyond.any():
         row, _ = np.nonzero(beyond)
         excess = squared[beyond]

@@ -11,10 +11,10 @@ from vasohm.network.profiles import ProfileTable, ln_height
 from vasohm.network.strips import (
     Frame,
     Overlaps,
+    Owners,
     Picture,
     TubeLines,
     find_overlaps,
-    paint_owners,
     sample_strips,
     weigh_strips,
 )
@@ -35,11 +35,12 @@ NO_REFLEX = 1e-4
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Scene:
-    """A picture, the lines in it, and the covariance of its noise by squared distance."""
+    """A picture, the lines in it, which of them own each pixel, and the noise's covariance by squared distance."""
 
     picture: Picture
     lines: TubeLines
     frame: Frame
+    owners: Owners
     covariance: FloatArray
 
     def __post_init__(self) -> None:
@@ -78,14 +79,13 @@ def observe(
     points, offsets = points_of(scene.lines, segments)
     radius = np.exp(theta[:, LN_R])
     half = np.minimum(radius[points] + WINDOW_BLURS * s + WINDOW_EXTRA_PX, widest_window(table))
-    owners = paint_owners(scene.frame, radius + WINDOW_BLURS * s, scene.shape)
     scale = np.zeros(scene.lines.n_points)
     scale[points] = scene.frame.share_px[points] / noise_factor(table, scene.covariance, theta[points, LN_R])
     number = np.full(scene.lines.n_points, -1, np.int64)
     number[points] = np.arange(len(points))
     strips, overlaps, weights = [], [], []
     for sampled in sample_strips(scene.picture, scene.frame, half, points):
-        found = find_overlaps(sampled, scene.frame, scene.lines, owners, scene.shape)
+        found = find_overlaps(sampled, scene.frame, scene.lines, scene.owners, scene.shape)
         w, usable = weigh_strips(sampled, found, radius, theta[:, OFFSET], s, alone=alone)
         scale[sampled.points] *= usable
         weights.append(w * scale[sampled.points, None].astype(np.float32))

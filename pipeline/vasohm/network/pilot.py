@@ -6,7 +6,7 @@ import numpy as np
 
 from vasohm.arrays import AnyArray, FloatArray, IntArray, freeze
 from vasohm.network.profiles import ProfileTable, ln_area, tube_strips
-from vasohm.network.strips import CHUNK, Frame, Picture, TubeLines, sample_strips
+from vasohm.network.strips import CHUNK, Frame, Owners, Picture, TubeLines, find_overlaps, sample_strips
 
 EVERY = 4  # a guess each so many points
 SEARCH = (0.4, 2.5)  # radii looked for, in seed radii
@@ -30,15 +30,9 @@ class Guess:
         freeze(self)
 
 
-def guess_radii(
-    picture: Picture, frame: Frame, lines: TubeLines, table: ProfileTable, foreign: AnyArray
-) -> Guess:
-    """Guess radius, contrast and offset at every point.
-
-    `foreign` (2, h * w) int holds the lowest and highest segment that claims each pixel, -1 for none: samples that
-    another segment claims are left out.
-    """
-    n = lines.n_points
+def guess_radii(picture: Picture, frame: Frame, lines: TubeLines, table: ProfileTable, owners: Owners) -> Guess:
+    """Guess radius, contrast and offset at every point, leaving out samples that lie on other segments."""
+    n, shape = lines.n_points, picture.precision.shape
     seed = np.maximum(lines.seed_radius_px, 0.5)
     typical = segment_quantile(seed, lines.offsets, 0.8)
     s = table.optics.s_px
@@ -46,7 +40,10 @@ def guess_radii(
     rows = np.flatnonzero((np.arange(n) - lines.offsets[frame.segment]) % 2 == 0)
     found = np.full((5, n), np.nan)
     for strips in sample_strips(picture, frame, half[rows], rows):
-        weights = strips.precision * _unclaimed(strips.points, strips.half_width, frame, picture, foreign)
+        overlaps = find_overlaps(strips, frame, lines, owners, (shape[0], shape[1]))
+        weights = strips.precision.copy()
+        covered = np.abs(overlaps.distance_px) < seed[overlaps.point] + s
+        weights.reshape(-1)[overlaps.sample[covered]] = 0.0
         for low, high in _whole_segments(frame.segment[strips.points]):
             part = slice(low, high)
             centre, mean, weight = _windows(strips.points[part], strips.y[part], weights[part], frame, seed)
@@ -60,20 +57,6 @@ def segment_quantile(values: FloatArray, offsets: IntArray, q: float) -> FloatAr
     segment = np.repeat(np.arange(len(counts)), counts)
     order = np.lexsort((values, segment))
     return np.asarray(values[order][offsets[:-1] + np.floor(q * np.maximum(counts - 1, 0)).astype(np.int64)])
-
-
-def _unclaimed(points: IntArray, half_width: int, frame: Frame, picture: Picture, foreign: AnyArray) -> AnyArray:
-    t = np.arange(-half_width, half_width + 1.0)
-    height, width = picture.precision.shape
-    at_y = np.rint(frame.y[points, None] + frame.normal_y[points, None] * t).astype(np.int64)
-    at_x = np.rint(frame.x[points, None] + frame.normal_x[points, None] * t).astype(np.int64)
-    pixel = np.clip(at_y, 0, height - 1) * width + np.clip(at_x, 0, width - 1)
-    own = frame.segment[points, None]
-    claimed = np.zeros(pixel.shape, np.bool_)
-    for side in foreign:
-        other = side[pixel]
-        claimed |= (other >= 0) & (other != own)
-    return ~claimed
 
 
 def _whole_segments(segment: IntArray) -> list[tuple[int, int]]:

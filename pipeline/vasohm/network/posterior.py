@@ -110,9 +110,7 @@ def point_variance(observed: Observed, priors: Priors, normal: Normal) -> FloatA
     return np.maximum(variance, 0.0)
 
 
-def _block(
-    normal: Normal, diagonals: FloatArray, hold: FloatArray, first: IntArray, whole: FloatArray
-) -> FloatArray:
+def _block(normal: Normal, diagonals: FloatArray, hold: FloatArray, first: IntArray, whole: FloatArray) -> FloatArray:
     """Blocks (n, 2 B, 2 B) of points `first` and the next; where a segment has no next point, unity stands there."""
     b = hold.shape[1]
     second = np.where(whole, first + 1, first)

@@ -166,7 +166,12 @@ def _layer_weights(optics: Optics, radius: FloatArray) -> FloatArray:
     place = half_width * LAYERS_PER_PX
     low = np.floor(place)
     t = place - low
-    lagrange = (-t * (t - 1) * (t - 2) / 6, (t + 1) * (t - 1) * (t - 2) / 2, -(t + 1) * t * (t - 2) / 2, (t + 1) * t * (t - 1) / 6)
+    lagrange = (
+        -t * (t - 1) * (t - 2) / 6,
+        (t + 1) * (t - 1) * (t - 2) / 2,
+        -(t + 1) * t * (t - 2) / 2,
+        (t + 1) * t * (t - 1) / 6,
+    )
     n_layers = int(np.ceil(radius[-1] * LAYERS_PER_PX)) + 4
     row = np.arange(len(radius))[:, None] * n_layers
     spread = np.zeros(len(radius) * n_layers)

@@ -52,9 +52,7 @@ def parameters_of(optics: Optics) -> tuple[str, ...]:
     return ("blur", "absorption") if optics.family == "absorber" else ("blur",)
 
 
-def optics_response(
-    observed: Observed, table: ProfileTable, theta: FloatArray, names: tuple[str, ...]
-) -> Response:
+def optics_response(observed: Observed, table: ProfileTable, theta: FloatArray, names: tuple[str, ...]) -> Response:
     """Respond to ln of blur and of absorption, by differences of the model."""
     others = [table_like(table, shifted(table.optics, name, LN_STEP)) for name in names]
     n, n_unknowns = theta.shape
@@ -92,9 +90,7 @@ class Marginal:
         freeze(self)
 
 
-def marginalise(
-    observed: Observed, priors: Priors, theta: FloatArray, normal: Normal, response: Response
-) -> Marginal:
+def marginalise(observed: Observed, priors: Priors, theta: FloatArray, normal: Normal, response: Response) -> Marginal:
     """Take the unknowns of the points out (Schur complement of the joint normal equations)."""
     factored = factor(normal.matrix, priors.full(observed.segment), priors.hold)
     answer = solve(factored, response.mixed)

@@ -1,11 +1,15 @@
 """Brightness across each centreline, sampled on straight strips, and which of its samples belong to other vessels."""
 
 from dataclasses import dataclass
+from typing import TypeAlias
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy.ndimage import map_coordinates, spline_filter
 
 from vasohm.arrays import BoolArray, Float32Array, FloatArray, IntArray, freeze
+
+Owners: TypeAlias = tuple[NDArray[np.int32], NDArray[np.int32]]  # by pixel (h * w,), see `paint_owners`
 
 TANGENT_REACH = 3  # points on each side; directions must be good to 5 degrees
 JOINED_BLURS, ALONE_BLURS = 1.0, 2.5  # how far beyond its rim a neighbour's samples are taken out, in blurs
@@ -172,8 +176,8 @@ def _pixels(at_y: FloatArray, at_x: FloatArray, shape: tuple[int, ...]) -> tuple
 # --- other vessels --------------------------------------------------------------------------------------------------
 
 
-def paint_owners(frame: Frame, reach_px: FloatArray, shape: tuple[int, int]) -> tuple[IntArray, IntArray]:
-    """Write on each pixel the lowest and the highest point whose strip passes within `reach_px` (n_points,) of its axis.
+def paint_owners(frame: Frame, reach_px: FloatArray, shape: tuple[int, int]) -> Owners:
+    """Write on each pixel the lowest and highest point whose strip covers it within `reach_px` (n_points,).
 
     Points are numbered segment by segment, so the two tell up to two segments a pixel. -1 where there is none.
     """
@@ -187,19 +191,19 @@ def paint_owners(frame: Frame, reach_px: FloatArray, shape: tuple[int, int]) -> 
             pixel, inside = _pixels(at_y, at_x, shape)
             inside &= np.abs(t) <= reach_px[part, None]
             pixels.append(pixel[inside])
-            owners.append(np.broadcast_to(part[:, None], inside.shape)[inside])
-    lowest, highest = (np.full(shape[0] * shape[1], -1, np.int64) for _ in range(2))
+            owners.append(np.broadcast_to(part[:, None], inside.shape)[inside].astype(np.int32))
+    lowest = np.full(shape[0] * shape[1], -1, np.int32)
+    highest = lowest.copy()
     if pixels:
         pixel, owner = np.concatenate(pixels), np.concatenate(owners)
         order = np.argsort(owner, kind="stable")
-        highest[pixel[order]] = owner[order]  # of equal indices the last one stays
-        lowest[pixel[order[::-1]]] = owner[order[::-1]]
+        pixel, owner = pixel[order], owner[order]
+        highest[pixel] = owner  # of equal indices the last one stays
+        lowest[pixel[::-1]] = owner[::-1]
     return lowest, highest
 
 
-def find_overlaps(
-    strips: Strips, frame: Frame, lines: TubeLines, owners: tuple[IntArray, IntArray], shape: tuple[int, int]
-) -> Overlaps:
+def find_overlaps(strips: Strips, frame: Frame, lines: TubeLines, owners: Owners, shape: tuple[int, int]) -> Overlaps:
     """Find the samples of strips that lie on or beside other vessels."""
     t = np.arange(-strips.half_width, strips.half_width + 1, dtype=np.float64)
     samples, points, distances, joined = [], [], [], []
@@ -211,7 +215,7 @@ def find_overlaps(
         own = frame.segment[part, None]
         seen = np.full(pixel.shape, -1, np.int64)
         for owner in owners:
-            other = np.where(inside, owner[pixel], -1)
+            other = np.where(inside, owner[pixel], -1).astype(np.int64)
             theirs = frame.segment[other]
             hit = np.nonzero((other >= 0) & (theirs != own) & (theirs != seen))
             k = other[hit]
@@ -224,15 +228,6 @@ def find_overlaps(
     if not samples:
         return Overlaps.nothing()
     return Overlaps(*(np.concatenate(parts) for parts in (samples, points, distances, joined)))
-
-
-def claim_pixels(frame: Frame, reach_px: FloatArray, shape: tuple[int, int]) -> tuple[IntArray, IntArray]:
-    """Lowest and highest segment within `reach_px` of each pixel (h * w,), -1 where there is none."""
-    lowest, highest = paint_owners(frame, reach_px, shape)
-    return (
-        np.where(lowest >= 0, frame.segment[lowest], -1),
-        np.where(highest >= 0, frame.segment[highest], -1),
-    )
 
 
 def _meet(lines: TubeLines, one: IntArray, other: IntArray) -> BoolArray:

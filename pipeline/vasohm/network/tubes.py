@@ -11,36 +11,40 @@ import numpy as np
 
 from vasohm.arrays import BoolArray, Float32Array, FloatArray, IntArray, freeze
 from vasohm.flags import Flag
-from vasohm.network.blur import ImageOptics, OpticsRequest, blur_of_segments, choose_segments, estimate_optics
+from vasohm.network.blur import blur_of_segments
 from vasohm.network.contrast import (
-    RESOLVED_SE,
     UNKNOWN_SPREAD,
-    ContrastPrior,
-    KnownContrasts,
-    learn_contrast,
     segment_contrasts,
 )
 from vasohm.network.jointfit import (
-    LEVEL,
     LN_C,
     LN_R,
     OFFSET,
-    REFLEX,
     Normal,
     Observed,
     Priors,
     factor,
     fit_joint,
-    normal_equations,
     solve,
     with_stiffness,
 )
+from vasohm.network.learn import (
+    ASSUMED_PSF_PX,
+    ASSUMED_REL_SE,
+    FIRST_REFLEX,
+    PROFILE_SE,
+    RESOLVED_BLURS,
+    ImageKnowledge,
+    TubeSettings,
+    first_unknowns,
+    learn_image,
+    wide_segments,
+)
 from vasohm.network.noise import noise_correlation, noise_factor
-from vasohm.network.observe import Scene, hold_reflex, make_priors, observe, widest_window
+from vasohm.network.observe import Scene, hold_reflex, make_priors, observe
 from vasohm.network.pilot import Guess, guess_radii, segment_quantile
 from vasohm.network.posterior import BandedCovariance, choose_stiffness, evidence, point_variance
 from vasohm.network.profiles import (
-    FAMILIES,
     Optics,
     ProfileTable,
     ln_height,
@@ -49,33 +53,13 @@ from vasohm.network.profiles import (
     profile_table,
     total_blur_px,
 )
-from vasohm.network.shared import Marginal, Response, marginalise, optics_response, parameters_of, table_like
-from vasohm.network.strips import TubeLines, claim_pixels, make_frame, make_picture
+from vasohm.network.shared import Marginal, marginalise, optics_response, parameters_of
+from vasohm.network.strips import TubeLines, make_frame, make_picture, paint_owners
 
-ASSUMED_PSF_PX, ASSUMED_REL_SE = 0.9, 0.25  # where the picture cannot tell: sampled as most microscopes and cameras are
-TYPED_REL_SE = 0.05  # a typed blur comes without uncertainty
-ASSUMED_ABSORPTION_SE = 0.7  # of ln mu, a factor of two
-RESOLVED_BLURS, RESOLVED_PX = 1.5, 1.8  # medians of radius from which a segment shows blur and contrast
-FAMILY_BLURS = 2.5  # some vessel must be so wide before slab and cylinder can be told apart
-MOST_POINTS = 4000  # of resolved segments that are asked for blur, profile and contrast
-FEWEST_SEGMENTS = 3
-WORST_BLUR_SE = 0.25  # of ln blur: beyond, the assumed one is better
-FREE_SPREAD = 10.0  # sd of ln contrast that says nothing, whatever the family's units
-PROFILE_SE = 0.08  # of ln r: half of what slab and cylinder differ by
-REFLEX_BLURS = 3.0  # narrower vessels cannot show a reflex apart from their rims
-REFLEX_SIGNS = (4.0, 0.05)  # a reflex counts from so many standard errors, and from so high
 BLURRED_SIGNS = (5.0, 0.4)  # out of focus: own ln blur above the picture's by so many standard errors, and by so much
 UNRESOLVED_SE = 0.25  # of ln r with the contrast free
 FAINT_CNR = 3.0
-
-
-@dataclass(frozen=True, slots=True)
-class TubeSettings:
-    """How tubes are imaged, as far as the study says; `dark`: a light reflex may lie on the axis."""
-
-    profile: str  # auto | slab | cylinder | absorber
-    blur_px: float | None  # of the optics alone; None: the image tells
-    dark: bool
+NEIGHBOUR_BLURS = 3.5  # beyond its rim a vessel's light is no longer reckoned with
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -115,14 +99,6 @@ class TubeFit:
         freeze(self)
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class _ImageKnowledge:
-    table: ProfileTable
-    covariance: FloatArray  # of ln blur, ln absorption
-    contrast: ContrastPrior
-    flags: Flag
-
-
 def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> TubeFit:
     """Measure the radius at every point of every line.
 
@@ -145,15 +121,17 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
         return _no_tubes(settings)
     scene, table = _open(image, lines, settings)
     guess = _guess(scene, table)
-    known = _learn_image(scene, guess, table, settings)
+    known = learn_image(scene, guess, table, settings)
     theta = _start(scene, _guess(scene, known.table), known)
+    reach = np.exp(theta[:, LN_R]) + NEIGHBOUR_BLURS * known.table.optics.s_px
+    scene = replace(scene, owners=paint_owners(scene.frame, reach, scene.shape))
     everything = np.arange(lines.n_segments)
     observed, _ = observe(scene, everything, theta, known.table, alone=False)
     priors = _priors(observed, known, theta)
     theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=8)
     observed, _ = observe(scene, everything, theta, known.table, alone=False)
-    theta, priors = _add_reflex(observed, known, theta, settings)
-    normal = normal_equations(observed, known.table, theta)
+    theta, priors = _add_reflex(observed, known, theta)
+    theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=3)
     stiffness = choose_stiffness(evidence(observed, priors, theta, normal))
     priors = with_stiffness(priors, stiffness)
     theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=8)
@@ -174,98 +152,21 @@ def _open(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> tuple[S
     table = profile_table(Optics(family, mu, blur), widest, half)
     shape = (image.signal.shape[0], image.signal.shape[1])
     picture = make_picture(image.signal, image.noise_sd, image.valid, image.clipped)
-    lowest, _ = claim_pixels(frame, 1.5 * lines.seed_radius_px + 3 * blur, shape)
-    free = (lowest.reshape(shape) < 0) & (picture.precision > 0)
-    return Scene(picture, lines, frame, noise_correlation(image.signal, image.noise_sd, free)), table
+    owners = paint_owners(frame, 1.5 * lines.seed_radius_px + 3 * blur, shape)
+    free = (owners[0].reshape(shape) < 0) & (picture.precision > 0)
+    return Scene(picture, lines, frame, owners, noise_correlation(image.signal, image.noise_sd, free)), table
 
 
 def _guess(scene: Scene, table: ProfileTable) -> Guess:
-    reach = scene.lines.seed_radius_px + table.optics.s_px
-    foreign = claim_pixels(scene.frame, reach, scene.shape)
-    return guess_radii(scene.picture, scene.frame, scene.lines, table, foreign)
-
-
-def _theta(guess: Guess) -> FloatArray:
-    zero = np.zeros(len(guess.ln_r))
-    return np.stack([guess.ln_r, guess.ln_contrast, guess.offset_px, guess.level, zero], axis=1)
-
-
-def _learn_image(scene: Scene, guess: Guess, table: ProfileTable, settings: TubeSettings) -> _ImageKnowledge:
-    """Ask the resolved segments for blur, profile and contrast."""
-    lines = scene.lines
-    blur = table.optics.s_px
-    radius = np.exp(segment_quantile(guess.ln_r, lines.offsets, 0.5))
-    seen = segment_quantile(guess.detected, lines.offsets, 0.5) > 10.0
-    resolved = seen & (radius > max(RESOLVED_PX, RESOLVED_BLURS * blur)) & (np.diff(lines.offsets) >= 12)
-    segments = choose_segments(radius, np.diff(lines.offsets), resolved, MOST_POINTS)
-    if len(segments) < FEWEST_SEGMENTS:
-        return _nothing_learnt(lines, guess, table, settings)
-    observed, points = observe(scene, segments, _theta(guess), table, alone=True)
-    theta = _theta(guess)[points]
-    unknown = np.full(len(segments), FREE_SPREAD)
-    centre = observed.by_segment(theta[:, LN_C]) / np.diff(observed.offsets)
-    priors = make_priors(observed, table, theta, centre, unknown)
-    told, flags = _tell_optics(observed, priors, table, theta, settings)
-    table = table_like(table, told.optics)
-    normal = normal_equations(observed, table, told.theta)
-    contrast, variance, variance_ln_r = segment_contrasts(observed, priors, told.theta, normal)
-    share = 1.0 / np.diff(observed.offsets)
-    answer = np.stack([observed.by_segment(column) * share for column in told.answer[:, LN_C].T], axis=1)
-    known = KnownContrasts(lines.vessel_class[segments], contrast, variance, answer)
-    known = known.select(told.in_focus & (variance_ln_r < RESOLVED_SE**2))
-    prior = learn_contrast(known, lines.vessel_class, _mean_contrast(lines, guess))
-    return _ImageKnowledge(table, told.covariance, prior, flags)
-
-
-def _tell_optics(
-    observed: Observed, priors: Priors, table: ProfileTable, theta: FloatArray, settings: TubeSettings
-) -> tuple[ImageOptics, Flag]:
-    """Estimate the optics; where the picture does not tell blur or family, assume them and say so."""
-    families = FAMILIES if settings.profile == "auto" else (settings.profile,)
-    flags = Flag.NONE
-    request = OpticsRequest(families, None, 0.0)
-    if settings.blur_px is not None:
-        request = OpticsRequest(families, total_blur_px(settings.blur_px), TYPED_REL_SE)
-        flags |= Flag.ASSUMED_BLUR_SPREAD
-    told = estimate_optics(observed, priors, table, theta, request)
-    if settings.blur_px is None and told.covariance[0, 0] > WORST_BLUR_SE**2:
-        request = OpticsRequest(families, total_blur_px(ASSUMED_PSF_PX), ASSUMED_REL_SE)
-        flags |= Flag.BLUR_ASSUMED | Flag.ASSUMED_BLUR_SPREAD
-        told = estimate_optics(observed, priors, table, theta, request)
-    widest = np.exp(np.quantile(told.theta[:, LN_R], 0.95))
-    if len(families) > 1 and not (told.family_told and widest > FAMILY_BLURS * told.optics.s_px):
-        flags |= Flag.PROFILE_ASSUMED
-        told = estimate_optics(observed, priors, table, theta, replace(request, families=("cylinder",)))
-    return told, flags
-
-
-def _nothing_learnt(
-    lines: TubeLines, guess: Guess, table: ProfileTable, settings: TubeSettings
-) -> _ImageKnowledge:
-    """Too few vessels show anything: what the study says, else what is common."""
-    optics, flags = table.optics, Flag.ASSUMED_BLUR_SPREAD
-    blur_se = TYPED_REL_SE
-    if settings.blur_px is None:
-        flags |= Flag.BLUR_ASSUMED
-        blur_se = ASSUMED_REL_SE
-    if settings.profile == "auto":
-        flags |= Flag.PROFILE_ASSUMED
-    variances = [blur_se**2, ASSUMED_ABSORPTION_SE**2][: len(parameters_of(optics))]
-    nobody = KnownContrasts(np.zeros(0, np.int64), np.zeros(0), np.zeros(0), np.zeros((0, len(variances))))
-    prior = learn_contrast(nobody, lines.vessel_class, _mean_contrast(lines, guess))
-    return _ImageKnowledge(table, np.diag(variances), prior, flags)
-
-
-def _mean_contrast(lines: TubeLines, guess: Guess) -> FloatArray:
-    return segment_quantile(guess.ln_contrast, lines.offsets, 0.5)
+    return guess_radii(scene.picture, scene.frame, scene.lines, table, scene.owners)
 
 
 # --- the fit of all segments ----------------------------------------------------------------------------------------
 
 
-def _start(scene: Scene, guess: Guess, known: _ImageKnowledge) -> FloatArray:
+def _start(scene: Scene, guess: Guess, known: ImageKnowledge) -> FloatArray:
     """First unknowns; the radius of a thin vessel is the one whose light its contrast explains."""
-    theta = _theta(guess)
+    theta = first_unknowns(guess)
     prior, segment = known.contrast, scene.frame.segment
     thin = (guess.ln_r < np.log(RESOLVED_BLURS * known.table.optics.s_px)) & (prior.group[segment] >= 0)
     mean = prior.mean[segment[thin]]
@@ -274,42 +175,25 @@ def _start(scene: Scene, guess: Guess, known: _ImageKnowledge) -> FloatArray:
     return theta
 
 
-def _priors(observed: Observed, known: _ImageKnowledge, theta: FloatArray) -> Priors:
+def _priors(observed: Observed, known: ImageKnowledge, theta: FloatArray) -> Priors:
     return make_priors(observed, known.table, theta, known.contrast.mean, known.contrast.spread)
 
 
-def _add_reflex(
-    observed: Observed, known: _ImageKnowledge, theta: FloatArray, settings: TubeSettings
-) -> tuple[FloatArray, Priors]:
-    """Add the height of a light reflex to the unknowns where wide dark vessels clearly show one."""
-    priors = _priors(observed, known, theta)
-    radius = np.exp(observed.by_segment(theta[:, LN_R]) / np.diff(observed.offsets))
-    wide = radius > REFLEX_BLURS * known.table.optics.s_px
-    if not (settings.dark and wide.any()):
-        return theta, priors
-    more = np.column_stack([theta, np.zeros(len(theta))])
-    normal = normal_equations(observed, known.table, more, wide[observed.segment])
-    matrix, gradient = normal.matrix, normal.gradient
-    response = Response(gradient[:, REFLEX:], matrix[:, REFLEX:, REFLEX:], matrix[:, :REFLEX, REFLEX:])
-    plain = Normal(matrix[:, :REFLEX, :REFLEX], gradient[:, :REFLEX], normal.cost)
-    marginal = marginalise(observed, priors, theta, plain, response)
-    information = np.maximum(marginal.information[:, 0, 0], 1e-9)
-    high = marginal.gradient[:, 0] / information
-    shown = wide & (high > REFLEX_SIGNS[1]) & (high * np.sqrt(information) > REFLEX_SIGNS[0])
-    if not shown.any():
-        return theta, priors
-    more[:, REFLEX] = np.where(shown, np.clip(high, 0.0, 0.6), 0.0)[observed.segment]
+def _add_reflex(observed: Observed, known: ImageKnowledge, theta: FloatArray) -> tuple[FloatArray, Priors]:
+    """Add the height of a light reflex to the unknowns where the picture's wide vessels show one."""
+    wide = wide_segments(observed, theta, known.table.optics)
+    if not (known.reflex and wide.any()):
+        return theta, _priors(observed, known, theta)
+    more = np.column_stack([theta, np.where(wide, FIRST_REFLEX, 0.0)[observed.segment]])
     priors = _priors(observed, known, more)
-    hold_reflex(priors, observed.segment, shown)
+    hold_reflex(priors, observed.segment, wide)
     return more, priors
 
 
 # --- what is known afterwards ---------------------------------------------------------------------------------------
 
 
-def _report(
-    scene: Scene, observed: Observed, known: _ImageKnowledge, fit: tuple[FloatArray, Priors, Normal]
-) -> TubeFit:
+def _report(scene: Scene, observed: Observed, known: ImageKnowledge, fit: tuple[FloatArray, Priors, Normal]) -> TubeFit:
     theta, priors, normal = fit
     optics = known.table.optics
     factored = factor(normal.matrix, priors.full(observed.segment), priors.hold)
@@ -340,7 +224,7 @@ def _report(
 
 
 def _shared_columns(
-    observed: Observed, known: _ImageKnowledge, factored: FloatArray, priors: Priors, marginal: Marginal
+    observed: Observed, known: ImageKnowledge, factored: FloatArray, priors: Priors, marginal: Marginal
 ) -> tuple[FloatArray, tuple[str, ...]]:
     """Change of ln r for one standard uncertainty of each independent cause."""
     prior, segment = known.contrast, observed.segment
@@ -380,9 +264,7 @@ def _point_flags(scene: Scene, observed: Observed, theta: FloatArray, optics: Op
     return flags.astype(np.int64)
 
 
-def _segment_flags(
-    observed: Observed, fit: tuple[FloatArray, Priors, Normal], marginal: Marginal
-) -> IntArray:
+def _segment_flags(observed: Observed, fit: tuple[FloatArray, Priors, Normal], marginal: Marginal) -> IntArray:
     """Unresolved: the radius is known to worse than 25 % once the contrast is free. Blurred: out of focus."""
     theta, priors, normal = fit
     hold = priors.hold.copy()
@@ -390,9 +272,8 @@ def _segment_flags(
     _, _, variance = segment_contrasts(observed, replace(priors, hold=hold), theta, normal)
     shift, se = blur_of_segments(marginal)
     blurred = (shift > BLURRED_SIGNS[0] * se) & (shift > BLURRED_SIGNS[1])
-    flags: IntArray = np.where(variance > UNRESOLVED_SE**2, int(Flag.UNRESOLVED), 0)
-    flags = flags | np.where(blurred, int(Flag.BLURRED), 0)
-    return flags
+    unresolved = variance > UNRESOLVED_SE**2
+    return np.where(unresolved, int(Flag.UNRESOLVED), 0) | np.where(blurred, int(Flag.BLURRED), 0)
 
 
 def _no_tubes(settings: TubeSettings) -> TubeFit:
@@ -403,6 +284,18 @@ def _no_tubes(settings: TubeSettings) -> TubeFit:
     family = "cylinder" if settings.profile == "auto" else settings.profile
     flags = Flag.NONE if settings.blur_px is not None else Flag.BLUR_ASSUMED
     return TubeFit(
-        none, none.copy(), none.copy(), none.copy(), whole.copy(), covariance, np.zeros((0, 1)), ("blur",),
-        blur, ASSUMED_REL_SE * blur, family, float("nan"), 1.0, flags,
+        none,
+        none.copy(),
+        none.copy(),
+        none.copy(),
+        whole.copy(),
+        covariance,
+        np.zeros((0, 1)),
+        ("blur",),
+        blur,
+        ASSUMED_REL_SE * blur,
+        family,
+        float("nan"),
+        1.0,
+        flags,
     )

@@ -1,0 +1,177 @@
+"""What the picture tells of its optics, contrast and light reflexes, from the vessels wide enough to show them."""
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from vasohm.arrays import BoolArray, FloatArray
+from vasohm.flags import Flag
+from vasohm.network.blur import START_PX, ImageOptics, OpticsRequest, choose_segments, estimate_optics
+from vasohm.network.contrast import (
+    RESOLVED_SE,
+    ContrastPrior,
+    KnownContrasts,
+    learn_contrast,
+    segment_contrasts,
+)
+from vasohm.network.jointfit import (
+    LN_C,
+    LN_R,
+    REFLEX,
+    Observed,
+    Priors,
+    normal_equations,
+)
+from vasohm.network.observe import Scene, hold_reflex, make_priors, observe
+from vasohm.network.pilot import Guess, segment_quantile
+from vasohm.network.profiles import (
+    FAMILIES,
+    Optics,
+    ProfileTable,
+    profile_table,
+    total_blur_px,
+)
+from vasohm.network.shared import parameters_of, table_like
+from vasohm.network.strips import TubeLines
+
+ASSUMED_PSF_PX, ASSUMED_REL_SE = 0.9, 0.25  # where the picture cannot tell: sampled as most microscopes and cameras are
+TYPED_REL_SE = 0.05  # a typed blur comes without uncertainty
+ASSUMED_ABSORPTION_SE = 0.7  # of ln mu, a factor of two
+RESOLVED_BLURS, RESOLVED_PX = 1.5, 1.8  # medians of radius from which a segment shows blur and contrast
+FAMILY_BLURS = 2.5  # some vessel must be so wide before slab and cylinder can be told apart
+MOST_POINTS = 3000  # of resolved segments that are asked for blur, profile and contrast
+FEWEST_SEGMENTS = 3
+WORST_BLUR_SE = 0.25  # of ln blur: beyond, the assumed one is better
+FREE_SPREAD = 10.0  # sd of ln contrast that says nothing, whatever the family's units
+PROFILE_SE = 0.08  # of ln r: half of what slab and cylinder differ by
+REFLEX_BLURS = 3.0  # narrower vessels cannot show a reflex apart from their rims
+FIRST_REFLEX = 0.1  # height from which a reflex is searched
+REFLEX_GAIN = 2.0  # of log likelihood a wide segment from which reflexes are believed; noise alone gives about 0.5
+
+
+@dataclass(frozen=True, slots=True)
+class TubeSettings:
+    """How tubes are imaged, as far as the study says; `dark`: a light reflex may lie on the axis."""
+
+    profile: str  # auto | slab | cylinder | absorber
+    blur_px: float | None  # of the optics alone; None: the image tells
+    dark: bool
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class ImageKnowledge:
+    """What all segments share: optics, prior of contrast, whether wide vessels show a light reflex."""
+
+    table: ProfileTable
+    covariance: FloatArray  # of ln blur, ln absorption
+    contrast: ContrastPrior
+    reflex: bool
+    flags: Flag
+
+
+def first_unknowns(guess: Guess) -> FloatArray:
+    """Unknowns (n_points, B) as guessed; no slope of the background, no reflex."""
+    zero = np.zeros(len(guess.ln_r))
+    return np.stack([guess.ln_r, guess.ln_contrast, guess.offset_px, guess.level, zero], axis=1)
+
+
+def learn_image(scene: Scene, guess: Guess, table: ProfileTable, settings: TubeSettings) -> ImageKnowledge:
+    """Ask the resolved segments for blur, profile and contrast."""
+    lines, full = scene.lines, table
+    blur = table.optics.s_px
+    radius = np.exp(segment_quantile(guess.ln_r, lines.offsets, 0.5))
+    seen = segment_quantile(guess.detected, lines.offsets, 0.5) > 10.0
+    resolved = seen & (radius > max(RESOLVED_PX, RESOLVED_BLURS * blur)) & (np.diff(lines.offsets) >= 12)
+    segments = choose_segments(radius, np.diff(lines.offsets), resolved, MOST_POINTS)
+    if len(segments) < FEWEST_SEGMENTS:
+        return _nothing_learnt(lines, guess, table, settings)
+    wide = 1.5 * float(radius[segments].max())
+    table = profile_table(table.optics, wide, int(1.2 * (wide + 3 * max(blur, 3.0) + 3)) + 6)
+    observed, points = observe(scene, segments, first_unknowns(guess), table, alone=True)
+    theta = first_unknowns(guess)[points]
+    free = np.full(len(segments), FREE_SPREAD)
+    priors = make_priors(observed, table, theta, segment_mean(observed, theta[:, LN_C]), free)
+    told, flags = _tell_optics(observed, priors, table, theta, settings)
+    if told.theta.shape[1] > REFLEX:
+        priors = _reflex_priors(observed, table_like(table, told.optics), told.theta)
+    normal = normal_equations(observed, table_like(table, told.optics), told.theta)
+    contrast, variance, variance_ln_r = segment_contrasts(observed, priors, told.theta, normal)
+    answer = np.stack([segment_mean(observed, column) for column in told.answer[:, LN_C].T], axis=1)
+    known = KnownContrasts(lines.vessel_class[segments], contrast, variance, answer)
+    known = known.select(told.in_focus & (variance_ln_r < RESOLVED_SE**2))
+    prior = learn_contrast(known, lines.vessel_class, mean_contrast(lines, guess))
+    return ImageKnowledge(table_like(full, told.optics), told.covariance, prior, told.theta.shape[1] > REFLEX, flags)
+
+
+def _tell_optics(
+    observed: Observed, priors: Priors, table: ProfileTable, theta: FloatArray, settings: TubeSettings
+) -> tuple[ImageOptics, Flag]:
+    """Estimate the optics; where the picture does not tell blur or family, assume them and say so."""
+    families = FAMILIES if settings.profile == "auto" else (settings.profile,)
+    flags = Flag.NONE
+    request = OpticsRequest(families, START_PX, None)
+    if settings.blur_px is not None:
+        request = OpticsRequest(families, (total_blur_px(settings.blur_px),), TYPED_REL_SE)
+        flags |= Flag.ASSUMED_BLUR_SPREAD
+    told = estimate_optics(observed, priors, table, theta, request)
+    if settings.blur_px is None and told.covariance[0, 0] > WORST_BLUR_SE**2:
+        request = OpticsRequest(families, (total_blur_px(ASSUMED_PSF_PX),), ASSUMED_REL_SE)
+        flags |= Flag.BLUR_ASSUMED | Flag.ASSUMED_BLUR_SPREAD
+        told = estimate_optics(observed, priors, table, theta, request)
+    widest = np.exp(np.quantile(told.theta[:, LN_R], 0.95))
+    if len(families) > 1 and not (told.family_told and widest > FAMILY_BLURS * told.optics.s_px):
+        flags |= Flag.PROFILE_ASSUMED
+        request = replace(request, families=("cylinder",))
+        told = estimate_optics(observed, priors, table, theta, request)
+    if settings.dark:
+        told = _with_reflex(observed, table, told, request)
+    return told, flags
+
+
+def _with_reflex(observed: Observed, table: ProfileTable, told: ImageOptics, request: OpticsRequest) -> ImageOptics:
+    """Estimate the optics with a light reflex on the axes of wide vessels, if that explains the picture better."""
+    here = table_like(table, told.optics)
+    wide = wide_segments(observed, told.theta, told.optics)
+    if not wide.any():
+        return told
+    theta = np.column_stack([told.theta, np.where(wide, FIRST_REFLEX, 0.0)[observed.segment]])
+    priors = _reflex_priors(observed, here, theta)
+    again = estimate_optics(observed, priors, here, theta, replace(request, start_px=(told.optics.s_px,)))
+    return again if told.cost - again.cost > REFLEX_GAIN * (wide.sum() + 3) else told
+
+
+def _reflex_priors(observed: Observed, table: ProfileTable, theta: FloatArray) -> Priors:
+    spread = np.full(observed.n_segments, FREE_SPREAD)
+    priors = make_priors(observed, table, theta, segment_mean(observed, theta[:, LN_C]), spread)
+    hold_reflex(priors, observed.segment, wide_segments(observed, theta, table.optics))
+    return priors
+
+
+def wide_segments(observed: Observed, theta: FloatArray, optics: Optics) -> BoolArray:
+    """Segments wide enough to show a reflex apart from their rims."""
+    wide: BoolArray = segment_mean(observed, theta[:, LN_R]) > np.log(REFLEX_BLURS * optics.s_px)
+    return wide
+
+
+def segment_mean(observed: Observed, values: FloatArray) -> FloatArray:
+    """Mean (n_segments,) of (n_points,) values."""
+    return observed.by_segment(values) / np.maximum(np.diff(observed.offsets), 1)
+
+
+def _nothing_learnt(lines: TubeLines, guess: Guess, table: ProfileTable, settings: TubeSettings) -> ImageKnowledge:
+    """Too few vessels show anything: what the study says, else what is common."""
+    optics, flags = table.optics, Flag.ASSUMED_BLUR_SPREAD
+    blur_se = TYPED_REL_SE
+    if settings.blur_px is None:
+        flags |= Flag.BLUR_ASSUMED
+        blur_se = ASSUMED_REL_SE
+    if settings.profile == "auto":
+        flags |= Flag.PROFILE_ASSUMED
+    variances = [blur_se**2, ASSUMED_ABSORPTION_SE**2][: len(parameters_of(optics))]
+    nobody = KnownContrasts(np.zeros(0, np.int64), np.zeros(0), np.zeros(0), np.zeros((0, len(variances))))
+    prior = learn_contrast(nobody, lines.vessel_class, mean_contrast(lines, guess))
+    return ImageKnowledge(table, np.diag(variances), prior, False, flags)
+
+
+def mean_contrast(lines: TubeLines, guess: Guess) -> FloatArray:
+    return segment_quantile(guess.ln_contrast, lines.offsets, 0.5)
