@@ -81,7 +81,9 @@ class ImageSource:
 class Sheet:
     """All rows of an image sheet, the columns that are carried through, and what deserves a second look."""
 
+    file: str  # its name
     images: tuple[ImageSource, ...]
+    lines: Mapping[str, int]  # on which each image_id stands
     columns: tuple[str, ...]
     carried: tuple[str, ...]
     warnings: tuple[str, ...]
@@ -116,7 +118,9 @@ def read_sheet(path: Path, covariates: Collection[str] = ()) -> Sheet:
         raise RequestError(sorted(problems, key=lambda problem: problem.row or 0))
     carried = tuple(name for name in table.columns if name not in KNOWN)
     images = tuple(source for source in sources if source is not None)
-    return Sheet(images, table.columns, carried, (*rows.warnings, *_like_numbers(table, shown(path))))
+    lines = {row.cells["image_id"]: row.line for row in table.rows}
+    warnings = (*rows.warnings, *_like_numbers(table, shown(path)))
+    return Sheet(shown(path), images, lines, table.columns, carried, warnings)
 
 
 def read_terminals(path: Path) -> tuple[TerminalPoint, ...]:

@@ -4,7 +4,7 @@ import re
 import stat
 import tomllib
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -44,6 +44,8 @@ class Study:
     path: Path  # the study file
     settings: Settings
     images: tuple[ImageSource, ...]
+    sheet: str  # name of the image sheet; "" where there is none
+    lines: Mapping[str, int]  # of the sheet, by image_id
     compare: CompareSettings | None
     resolved: Mapping[str, Mapping[str, Any]]
     warnings: tuple[str, ...]
@@ -96,7 +98,7 @@ def ad_hoc_study(images: Sequence[Path], pixel_size_um: float | None, preset: st
     study = _study({"image": {"preset": preset}, "scale": scale}, AD_HOC, Path(), needs_sheet=False)
     named = zip(ids_from_files(images), images, strict=True)
     sources = tuple(_bare_source(name, file.absolute()) for name, file in named)
-    return Study(study.name, study.path, study.settings, sources, None, study.resolved, ())
+    return replace(study, images=sources)
 
 
 def _study(said: Mapping[str, Any], path: Path, base: Path, *, needs_sheet: bool) -> Study:
@@ -125,9 +127,17 @@ def _study(said: Mapping[str, Any], path: Path, base: Path, *, needs_sheet: bool
     if problems:
         raise RequestError(problems)
     images = sheet.images if sheet is not None else ()
-    warnings = sheet.warnings if sheet is not None else ()
-    settings = _settings(values, model.scenario)
-    return Study(values["study.name"], path, settings, images, compare, resolved, (*warnings, *_odd(values, images)))
+    return Study(
+        name=values["study.name"],
+        path=path,
+        settings=_settings(values, model.scenario),
+        images=images,
+        sheet=sheet.file if sheet is not None else "",
+        lines=sheet.lines if sheet is not None else {},
+        compare=compare,
+        resolved=resolved,
+        warnings=(*(sheet.warnings if sheet is not None else ()), *_odd(values, images)),
+    )
 
 
 def read_toml(path: Path) -> Mapping[str, Any]:
