@@ -12,6 +12,7 @@ from vasohm.image.ridges import RidgePixels
 AVERAGING_PASSES = 12  # of a three-point mean along the line: a window of about +-5 px
 WEAKER_SIDE = 0.3  # of the stronger: below it is the edge of something, not a vessel
 HOLLOW = 0.8  # of the contrast missing in the middle: two vessels side by side, not one
+LEAST_FILL = 0.55  # mean height inside the edges over the peak: 1 for a slab, 0.79 for a cylinder, little for a bundle
 HALF_WIDTH_RATIO = 1.2  # the wider half may not exceed this x the narrower: a neighbour stands in the way
 # From a quarter to three quarters of its height a projected cylinder rises over 0.35 of its half-height half width, a
 # Gaussian shadow over 0.77; blur adds a length of its own
@@ -74,7 +75,10 @@ def measure_ribbons(image: Float32Array, lines: RidgePixels, reach_px: FloatArra
     height = (peak - base).reshape(2, n)
     weaker, stronger = height.min(axis=0), height.max(axis=0)
     hollow = (peak[:n] - middle) / np.maximum(stronger, 1e-12)
-    shaped = (weaker >= WEAKER_SIDE * stronger) & (hollow <= HOLLOW) & (rise <= SOFT_RISE * half_width + RISE_PX)
+    inside = offsets[None, :] <= np.tile(half_width, 2)[:, None]
+    fill = np.where(inside, sides - base[:, None], 0).sum(axis=1) / inside.sum(axis=1) / np.maximum(peak - base, 1e-12)
+    shaped = fill.reshape(2, n).min(axis=0) >= LEAST_FILL
+    shaped &= (weaker >= WEAKER_SIDE * stronger) & (hollow <= HOLLOW) & (rise <= SOFT_RISE * half_width + RISE_PX)
     clear = (weaker > 0) & (
         (weaker >= CLEAR_CONTRAST) | (weaker >= TAIL_SHARE * _strongest_near(image.shape, lines, weaker))
     )
