@@ -12,7 +12,7 @@ TREE = [  # a trunk from the left border that branches once into two vessels wit
     (np.array([110.0, 200.0]), np.array([100.0, 50.0]), 4.5),
     (np.array([110.0, 200.0]), np.array([100.0, 160.0]), 4.0),
 ]
-# Thinning and the sampling of profiles are not exactly symmetric on a pixel grid; 1 % of a radius is 4 % of a resistance
+# Thinning and sampling are not exactly symmetric on a pixel grid; 1 % of a radius is 4 % of a resistance
 R_TOLERANCE = 0.04
 
 
