@@ -1,0 +1,210 @@
+"""Viscosity laws against their published formulas, at hematocrits where a misprint shows."""
+
+from importlib.metadata import EntryPoint
+
+import numpy as np
+import pytest
+from beds import published
+
+from vasohm.errors import DomainError, PluginError
+from vasohm.flow import rheology
+from vasohm.flow.rheology import ViscosityLaw, apparent_viscosity, get_law, law_names, load_laws
+
+FORMULA = 1e-9  # published formulas in double precision, evaluated by another program
+ZERO_OF_C_UM = 8.051829446724955  # diameter at which the laws' hematocrit factor is 0/0 as printed
+PLASMA = 1.2
+LAW_OF = {"1992": "pries-in-vitro", "1994": "pries-in-vivo", "2005": "pries-secomb-surface-layer"}
+
+
+def relative(law: str, diameter_um: float, hematocrit: float) -> float:
+    return float(apparent_viscosity(law, diameter_um / 2, hematocrit, plasma_viscosity_mpa_s=PLASMA)) / PLASMA
+
+
+@pytest.mark.parametrize(
+    ("law", "key"),
+    [
+        ("pries-in-vitro", "pries1992_in_vitro"),
+        ("pries-in-vivo", "pries1994_in_vivo"),
+        ("pries-secomb-surface-layer", "pries_secomb_2005_esl"),
+    ],
+)
+def test_the_three_laws_of_pries_give_their_published_values(law, key):
+    """A wrong constant, exponent or bracket of Pries 1992, 1994 or Pries and Secomb 2005 fails here."""
+    rows = published(key)
+    diameter, hematocrit, expected = np.array([(i["D_um"], i["H_D"], value) for i, value in rows]).T
+    found = apparent_viscosity(law, diameter / 2, hematocrit, plasma_viscosity_mpa_s=PLASMA) / PLASMA
+    np.testing.assert_allclose(found, expected, rtol=FORMULA)
+    assert (hematocrit != 0.45).sum() >= 50  # at 0.45 alone an error in C cannot show
+
+
+def test_kiani_and_hudetz_give_their_published_values():
+    rows = published("kiani_hudetz_1991")  # Kiani & Hudetz, Biorheology 1991;28:65
+    diameter, hematocrit, expected = np.array([(i["D_um"], i["H_D"], value) for i, value in rows]).T
+    found = apparent_viscosity("kiani-hudetz", diameter / 2, hematocrit, plasma_viscosity_mpa_s=PLASMA)
+    np.testing.assert_allclose(found, expected, rtol=FORMULA)
+
+
+def test_the_marginal_zone_gives_its_published_values_and_ends_in_the_core():
+    for inputs, expected in published("haynes_1960_marginal_zone"):  # Haynes, Am J Physiol 1960;198:1193
+        parameters = {"core_viscosity_mpa_s": inputs["mu_core"], "marginal_zone_um": inputs["delta_um"]}
+        found = apparent_viscosity(
+            "haynes-marginal-zone",
+            inputs["D_um"] / 2,
+            0.4,
+            plasma_viscosity_mpa_s=inputs["mu_p"],
+            parameters=parameters,
+        )
+        assert found == pytest.approx(expected, rel=FORMULA)
+    bare = {"core_viscosity_mpa_s": 3.5, "marginal_zone_um": 0.0}
+    assert apparent_viscosity("haynes-marginal-zone", 10.0, 0.4, parameters=bare) == pytest.approx(3.5, rel=FORMULA)
+
+
+def test_misprints_in_circulation_are_told_apart():
+    """Each misprinted variant differs from what we return by more than a thousand times the tolerance."""
+    for year, law in LAW_OF.items():
+        variants = published("wrong_variants_do_not_match", units=year)
+        assert len(variants) >= 3
+        for inputs, wrong in variants:
+            assert abs(relative(law, inputs["D_um"], inputs["H_D"]) / wrong - 1.0) > 1000 * FORMULA, inputs
+
+
+def test_laws_pass_smoothly_through_the_diameter_where_their_formula_is_0_over_0():
+    for inputs, expected in published("pries_C_zero_crossing_value"):
+        assert relative("pries-in-vitro", ZERO_OF_C_UM, inputs["H_D"]) == pytest.approx(expected, rel=FORMULA)
+    diameter = ZERO_OF_C_UM * (1 + np.linspace(-1e-7, 1e-7, 20001))
+    for law in LAW_OF.values():
+        step = np.diff(np.log(apparent_viscosity(law, diameter / 2, 0.3)))
+        assert (
+            np.abs(step).max() < 1e-10
+        )  # 1e-11 in ln D times an exponent below 4, and rounding; a lost digit gives more
+
+
+def test_vessels_of_10_um_exceed_glass_tubes_by_a_factor_of_about_4():
+    """Abstract of Pries et al., Circ Res 1994;75:904; without its wall factors the law gives 2.9."""
+    ((inputs, expected),) = published("pries1994_vs_glass_tube")
+    ratio = relative("pries-in-vivo", 10, inputs["H_D"]) / relative("pries-in-vitro", 10, inputs["H_D"])
+    assert ratio == pytest.approx(expected, rel=FORMULA)
+    assert 3.5 < ratio < 4.5
+
+
+def test_without_cells_a_living_vessel_still_has_its_wall():
+    for inputs, expected in published("in_vivo_laws_at_zero_hematocrit"):
+        law = "pries-in-vivo" if inputs["law"] == "Pries 1994" else "pries-secomb-surface-layer"
+        assert relative(law, inputs["D_um"], 0.0) == pytest.approx(expected, rel=FORMULA)
+    assert relative("pries-in-vitro", 10, 0.0) == pytest.approx(1.0, rel=FORMULA)
+
+
+def test_the_whole_reaches_every_law_elementwise():
+    radius, hematocrit = np.array([[2.0], [5.0], [30.0]]), np.array([0.2, 0.45])
+    needed = {
+        "constant": {"viscosity_mpa_s": 3.0},
+        "haynes-marginal-zone": {"core_viscosity_mpa_s": 3.5, "marginal_zone_um": 1.0},
+    }
+    for law in law_names():
+        together = apparent_viscosity(law, radius, hematocrit, parameters=needed.get(law))
+        assert together.shape == (3, 2)
+        one = apparent_viscosity(law, 30.0, 0.45, parameters=needed.get(law))
+        assert np.ndim(one) == 0
+        assert together[2, 1] == one
+        assert get_law(law).citation
+
+
+def test_where_no_cell_passes_viscosity_is_infinite_and_never_negative():
+    assert np.isposinf(apparent_viscosity("pries-in-vivo", 0.5, 0.45))
+    assert np.isposinf(apparent_viscosity("kiani-hudetz", 1.3, 0.45))
+
+
+@pytest.mark.parametrize(
+    ("radius", "hematocrit", "words"),
+    [
+        (0.0, 0.45, r"radius_um is 0.0 at position 0 .*positive"),
+        (np.nan, 0.45, r"radius_um is nan"),
+        ([5.0, -1.0], 0.45, r"radius_um is -1.0 at position 1"),
+        (5.0, 45.0, r"hematocrit is 45.0 .*fraction, not per cent"),
+        (5.0, -0.01, r"hematocrit is -0.01"),
+        (5.0, 0.76, r"hematocrit is 0.76 .*0.75"),
+    ],
+)
+def test_numbers_without_meaning_are_refused_by_name(radius, hematocrit, words):
+    with pytest.raises(DomainError, match=words):
+        apparent_viscosity("pries-in-vivo", radius, hematocrit)
+
+
+def test_constants_without_meaning_are_refused_by_name():
+    with pytest.raises(DomainError, match=r"plasma_viscosity_mpa_s is 0.0"):
+        apparent_viscosity("pries-in-vivo", 5.0, 0.45, plasma_viscosity_mpa_s=0.0)
+    with pytest.raises(DomainError, match=r"law 'constant': viscosity_mpa_s is nan"):
+        apparent_viscosity("constant", 5.0, 0.45)
+    with pytest.raises(DomainError, match=r"core_viscosity_mpa_s is nan"):
+        apparent_viscosity("haynes-marginal-zone", 5.0, 0.45, parameters={"marginal_zone_um": 1.0})
+    with pytest.raises(PluginError, match=r"no viscosity law 'water'; there are constant, .*pries-in-vivo"):
+        apparent_viscosity("water", 5.0, 0.45)
+
+
+def doubled(radius_um, hematocrit, *, plasma_viscosity_mpa_s, parameters):
+    del parameters
+    return 2.0 * plasma_viscosity_mpa_s + 0.0 * radius_um * hematocrit
+
+
+def flat(radius_um, hematocrit, *, plasma_viscosity_mpa_s, parameters):
+    del radius_um, hematocrit, plasma_viscosity_mpa_s, parameters
+    return np.array([1.0, 2.0])
+
+
+def negative(radius_um, hematocrit, *, plasma_viscosity_mpa_s, parameters):
+    del plasma_viscosity_mpa_s, parameters
+    return -radius_um * hematocrit
+
+
+whole_law = ViscosityLaw(doubled, (1.0, 2.0), (0.1, 0.2), "Someone, 2020")
+not_a_law = 3
+
+
+@pytest.fixture
+def registered(monkeypatch):
+    """Laws of another package, found by name."""
+    entries = [
+        EntryPoint(name, f"test_rheology:{value}", rheology.ENTRY_POINT_GROUP)
+        for name, value in [
+            ("doubled", "doubled"),
+            ("flat", "flat"),
+            ("negative", "negative"),
+            ("whole", "whole_law"),
+            ("number", "not_a_law"),
+            ("absent", "nowhere_to_be_found"),
+            ("twice", "doubled"),
+            ("twice", "flat"),
+            ("constant", "doubled"),
+        ]
+    ]
+    monkeypatch.setattr(rheology, "entry_points", lambda group: entries if group == rheology.ENTRY_POINT_GROUP else [])
+    load_laws.cache_clear()
+    yield
+    load_laws.cache_clear()
+
+
+@pytest.mark.usefixtures("registered")
+def test_a_law_of_another_package_is_used_by_name():
+    assert "absent" in law_names()  # found without being imported
+    assert apparent_viscosity("doubled", 5.0, 0.45) == 2.4
+    bare = get_law("doubled")
+    assert bare.citation == "no source given"
+    assert bare.valid_radius_um == (0.0, np.inf)
+    assert get_law("whole") is whole_law
+
+
+@pytest.mark.usefixtures("registered")
+@pytest.mark.parametrize(
+    ("law", "words"),
+    [
+        ("flat", r"law 'flat' returned shape \(2,\) where \(\) was asked"),
+        ("negative", r"law 'negative' returned a viscosity of -2.25 mPa·s"),
+        ("number", r"'number' \(test_rheology:not_a_law, from .*\) is a int"),
+        ("absent", r"'absent' \(test_rheology:nowhere_to_be_found, from .*fails to load: AttributeError"),
+        ("twice", r"has a name that is taken"),
+        ("constant", r"has a name that is taken"),
+    ],
+)
+def test_a_faulty_law_of_another_package_is_named(law, words):
+    with pytest.raises(PluginError, match=words):
+        apparent_viscosity(law, 5.0, 0.45, parameters={"viscosity_mpa_s": 3.0})
