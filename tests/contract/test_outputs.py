@@ -217,6 +217,7 @@ def make_findings(n_segments: int = 3, scenario: str = "Arterioles dilate") -> F
         picture=grey,
         fov=np.ones((HEIGHT, WIDTH), dtype=bool),
         clipped=np.zeros((HEIGHT, WIDTH), dtype=bool),
+        polarity="dark",
         pixel_size_um=PIXEL_UM,
         pixel_size_se_um=math.nan,
         pixel_size_source="sheet",

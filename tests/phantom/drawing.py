@@ -36,6 +36,7 @@ def prepared(picture: np.ndarray) -> PreparedImage:
         picture=np.clip(200 * picture + 20, 0, 255).astype(np.uint8),
         fov=np.ones(picture.shape, dtype=bool),
         clipped=np.zeros(picture.shape, dtype=bool),
+        polarity="bright",
         pixel_size_um=1.0,
         pixel_size_se_um=0.01,
         pixel_size_source="sheet",

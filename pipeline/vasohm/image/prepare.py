@@ -49,6 +49,7 @@ class PreparedImage:
     picture: AnyArray
     fov: BoolArray
     clipped: BoolArray
+    polarity: Literal["dark", "bright"]
     pixel_size_um: float
     pixel_size_se_um: float  # NaN where not known
     pixel_size_source: str
@@ -127,6 +128,7 @@ def prepare(scaled: ScaledImage, settings: PrepareSettings, fov: BoolArray | Non
         picture=_picture(brightness, valid),
         fov=valid,
         clipped=clipped,
+        polarity=settings.polarity,
         pixel_size_um=scaled.pixel_size_um,
         pixel_size_se_um=scaled.pixel_size_se_um,
         pixel_size_source=scaled.pixel_size_source,

@@ -8,10 +8,12 @@ from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.flags import Flag
 from vasohm.image.prepare import PreparedImage
 from vasohm.network.graph import NodeKind, VesselGraph
-from vasohm.network.halfheight import fit_half_heights
+from vasohm.network.learn import TubeSettings
 from vasohm.network.lumen import leave_parents
 from vasohm.network.lumenfit import LumenFit, RadiusCovariance, RadiusSettings
 from vasohm.network.paths import arc_length, owner
+from vasohm.network.strips import TubeLines
+from vasohm.network.tubes import TubeImage, fit_tubes
 
 TIGHT_BEND_PX = 5.0  # bends tighter than this radius lose 6 to 19 % of their length to any smoother
 BEND_WINDOW_PX = 4  # curvature is read over this many points to either side
@@ -82,7 +84,7 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
     -------
     The measured graph; children begin where they leave their parent's lumen.
     """
-    fit = fit_half_heights(graph, prepared, settings)
+    fit = _fit(graph, prepared, settings)
     cut, kept = leave_parents(graph, np.exp(fit.ln_radius))
     pixel = prepared.pixel_size_um
     s_px = arc_length(cut.x_px, cut.y_px, cut.offsets)
@@ -101,6 +103,20 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
         segment_flags=_segment_flags(cut, flags, length_px, radius_um / pixel, random_se),
         blur_px=fit.blur_px, profile=fit.profile,
         image_contrast=float(np.median(fit.contrast[kept])) if kept.any() else np.nan, flags=fit.flags,
+    )  # fmt: skip
+
+
+def _fit(graph: VesselGraph, prepared: PreparedImage, settings: RadiusSettings) -> LumenFit:
+    """Fit how tubes are imaged to the picture along all segments."""
+    image = TubeImage(prepared.signal, prepared.noise_sd, prepared.fov, prepared.clipped)
+    lines = TubeLines(
+        graph.x_px, graph.y_px, graph.offsets, graph.seed_radius_px, graph.vessel_class, graph.node_a, graph.node_b
+    )
+    found = fit_tubes(image, lines, TubeSettings(settings.profile, settings.blur_px, dark=prepared.polarity == "dark"))
+    return LumenFit(
+        ln_radius=found.ln_radius, random_se=found.ln_radius_random_se, contrast=found.contrast,
+        point_flags=found.point_flags, shared=found.shared, shared_causes=found.shared_causes,
+        covariance=found.covariance, noise_sign=1, blur_px=found.blur_px, profile=found.profile, flags=found.flags,
     )  # fmt: skip
 
 
