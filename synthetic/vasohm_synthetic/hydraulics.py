@@ -60,7 +60,8 @@ def solve(ends: tuple[IntArray, IntArray], resistance: FloatArray, role: IntArra
     for network in range(n_networks):
         here = segment_network == network
         inflow = flow[here & (role[node_a] == 1)].sum() - flow[here & (role[node_b] == 1)].sum()
-        total[network], spent[network] = inflow, power[here].sum()
+        if np.isfinite(inflow) and inflow > 0:
+            total[network], spent[network] = inflow, power[here].sum()
     return Flow(
         node_network=node_network,
         segment_network=segment_network,

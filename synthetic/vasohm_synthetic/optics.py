@@ -62,7 +62,7 @@ class Optics:
     absorption_per_px: float = 0.1
     blur_px: float = 1.0
     blur_in: str = "light"
-    reflex: float = 0.0  # height of the bright stripe along the axis, fraction of the profile
+    reflex: float = 0.0  # share of its effect on the light that a vessel loses on its axis
     reflex_width: float = 0.25  # its standard deviation, fraction of the radius
     reflex_radius_px: float = 3.0  # thinner vessels show none
     supersample: int = 4
