@@ -60,6 +60,7 @@ def make_phantoms(recipe: Recipe, out_dir: Path) -> tuple[str, ...]:
         )
         file = f"{image.image_id}.{recipe.file_format}"
         _write_picture(out_dir / file, picture)
+        tables["image"] = _image(recipe, image, scene)
         _write_truth(out_dir / "truth" / image.image_id, tables)
         rows.append({"image_id": image.image_id, "file": file, **_row(recipe, image, scene)})
         if recipe.write_terminals:
@@ -159,6 +160,15 @@ def _row(recipe: Recipe, image: ImageRecipe, scene: Scene) -> dict[str, object]:
             "disc_radius_px": scene.disc.radius_px,
         }
     return row | dict(image.design)
+
+
+def _image(recipe: Recipe, image: ImageRecipe, scene: Scene) -> pd.DataFrame:
+    """Size and scale of the picture: truth of another picture can be told from it."""
+    height, width = scene.shape
+    pixel_size_um = recipe.pixel_size_um
+    return pd.DataFrame(
+        [{"image_id": image.image_id, "width_px": width, "height_px": height, "pixel_size_um": pixel_size_um}]
+    )
 
 
 def _sheet(rows: list[dict[str, object]]) -> str:
