@@ -9,7 +9,15 @@ from frictionless import Schema
 from vasohm.errors import DomainError
 from vasohm.results.column import Column
 from vasohm.results.columns_images import DISC
-from vasohm.results.schema import COLUMNS, PRIMARY_KEYS, column_names, describe, image_columns, table_schema
+from vasohm.results.schema import (
+    COLUMNS,
+    FURTHER_COLUMNS,
+    PRIMARY_KEYS,
+    column_names,
+    describe,
+    image_columns,
+    table_schema,
+)
 
 # Typed from the documented interface, not from the code.
 PROMISED = {
@@ -54,7 +62,9 @@ NO_SUFFIX_UNITS = {"1", "{signal}"}  # ratios and counts; intensities in the pic
 
 
 def all_columns() -> Collection[Column]:
-    return {id(column): column for columns in (*COLUMNS.values(), DISC) for column in columns}.values()
+    return {
+        id(column): column for columns in (*COLUMNS.values(), DISC, *FURTHER_COLUMNS.values()) for column in columns
+    }.values()
 
 
 @pytest.mark.parametrize("table", PROMISED)
@@ -95,7 +105,7 @@ def test_description_lists_every_column_once() -> None:
     """`vasohm columns` would leave a column of the results unexplained."""
     told = [(entry["table"], entry["name"]) for entry in describe()]
     assert len(set(told)) == len(told)
-    written = {(table, name) for table in COLUMNS for name in column_names(table)}
+    written = {(table, column.name) for table, held in (COLUMNS | FURTHER_COLUMNS).items() for column in held}
     assert written | {("image", column.name) for column in DISC} == set(told)
 
 

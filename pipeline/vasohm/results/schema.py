@@ -5,6 +5,7 @@ from typing import Any
 
 from vasohm.errors import DomainError
 from vasohm.results.column import Column, text
+from vasohm.results.columns_appraisal import APPRAISAL
 from vasohm.results.columns_images import DISC, FAILURES, IMAGE, NETWORKS, SCENARIOS
 from vasohm.results.columns_vessels import BRANCHINGS, CROSSINGS, NODES, POINTS, SEGMENTS
 
@@ -21,6 +22,9 @@ COLUMNS: Mapping[str, tuple[Column, ...]] = {
     "scenarios": SCENARIOS,
     "failures": FAILURES,
 }
+
+# Tables that a command other than `measure` writes into a folder of its own.
+FURTHER_COLUMNS: Mapping[str, tuple[Column, ...]] = {**APPRAISAL}
 
 TABLE_MEANING: Mapping[str, str] = {
     "image": "One row an image: morphometry and quality; the sheet's own columns follow.",
@@ -80,7 +84,7 @@ def image_columns(design: Iterable[str], *, with_disc: bool) -> tuple[Column, ..
 
 def describe() -> list[dict[str, str]]:
     """Return one entry a column of every table: table, name, type, unit and meaning, in the order of the tables."""
-    tables = dict(COLUMNS, image=IMAGE + DISC)
+    tables = dict(COLUMNS, image=IMAGE + DISC) | dict(FURTHER_COLUMNS)
     return [
         {"table": table, "name": c.name, "type": c.type, "unit": c.unit, "meaning": c.meaning}
         for table, columns in tables.items()
