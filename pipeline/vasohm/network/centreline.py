@@ -15,7 +15,7 @@ BESIDE_PX = 3  # profiles reach this much further than 2 radii
 LARGEST_SHIFT_RADII = 0.5
 MEDIAN_POINTS = 5
 OFFSET_SIGMA_PX = 1.5
-RIM_PX = 3.0  # an end this close (and END_RADII) to the border of the field is cut by it
+RIM_PX = 3.0  # a vessel seen to within this distance of the border of the field is cut by it
 END_RADII = 2.0  # a skeleton stops about one radius before a round end
 TIP_PX = 4  # and this many pixels more of it are drawn anew
 NEW_POINT_PX = 0.5
@@ -151,8 +151,8 @@ def extend_ends(graph: VesselGraph, prepared: PreparedImage) -> VesselGraph:
     tx, ty = towards[loose, 0], towards[loose, 1]
     reach = cut_px[loose] + END_RADII * radius
     to_border = _distance_to_border(prepared.fov, (x, y), (tx, ty), reach + RIM_PX)
-    is_rim = np.isfinite(to_border)
     to_end = _distance_to_half(prepared.signal, (x, y), (tx, ty), (radius, reach))
+    is_rim = np.isfinite(to_border) & (to_end >= to_border - RIM_PX)  # it ends before the border where contrast does
     further = np.where(is_rim, to_border, to_end)
     kind = graph.node_kind.copy()
     kind[node[loose[is_rim]]] = NodeKind.RIM

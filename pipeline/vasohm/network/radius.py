@@ -63,11 +63,12 @@ class _KeptCovariance:
 
     whole: RadiusCovariance
     kept: BoolArray
+    column: FloatArray  # share of each kept radius that was measured; the rest is the plasma layer
 
     def segment_variance(self, gradient: FloatArray) -> FloatArray:
         """Variance (n_segments,) of sum(gradient * ln r) over the kept points."""
         full = np.zeros(len(self.kept))
-        full[self.kept] = gradient
+        full[self.kept] = gradient * self.column
         return self.whole.segment_variance(full)
 
 
@@ -97,7 +98,7 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
     return MeasuredGraph(
         graph=cut, pixel_size_um=pixel, pixel_size_rel_se=prepared.pixel_size_se_um / pixel, s_um=s_px * pixel,
         radius_um=radius_um, ln_radius_random_se=random_se, shared=shared, shared_causes=causes,
-        covariance=_KeptCovariance(fit.covariance, kept), noise_sign=fit.noise_sign, contrast=fit.contrast[kept],
+        covariance=_KeptCovariance(fit.covariance, kept, 1 - settings.plasma_layer_um / radius_um), noise_sign=fit.noise_sign, contrast=fit.contrast[kept],
         point_flags=flags, length_um=length_px * pixel,
         length_random_se_um=np.full(cut.n_segments, NODE_SE_PX * np.sqrt(2) * pixel), chord_um=chord_px * pixel,
         segment_flags=_segment_flags(cut, flags, length_px, radius_um / pixel, random_se),
