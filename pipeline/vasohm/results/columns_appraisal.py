@@ -71,8 +71,8 @@ _RESISTANCES: tuple[Column, ...] = (
     number(
         "resistance_coverage_95_exact_scale",
         "1",
-        "As resistance_coverage_95, with the pixel size's part taken out of the interval where the pixel size is exactly "
-        "the true one.",
+        "As resistance_coverage_95, with the pixel size's part taken out of the interval where the pixel size is "
+        "exactly the true one.",
     ),
 )
 
