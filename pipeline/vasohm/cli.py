@@ -3,7 +3,7 @@
 # ruff: noqa: PLC0415  a command loads what it needs when it runs, so that --help is there at once
 
 import os
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from contextlib import ExitStack
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -23,8 +23,13 @@ _FOLDER = click.Path(path_type=Path)
 _STUDY = click.argument("study_file", metavar="STUDY.toml", type=click.Path(path_type=Path))
 
 
-def run_command() -> int:
+def run_command(words: Sequence[str] | None = None) -> int:
     """Run the command line; what is wrong with a request is told line by line, without a traceback.
+
+    Parameters
+    ----------
+    words : sequence of str, optional
+        The command's words; those that the process was started with where None.
 
     Returns
     -------
@@ -32,7 +37,7 @@ def run_command() -> int:
         The exit status.
     """
     try:
-        status = commands.main(prog_name="vasohm", standalone_mode=False)
+        status = commands.main(words, prog_name="vasohm", standalone_mode=False)
     except RequestError as wrong:
         _complain(str(problem) for problem in wrong.problems)
         return EXIT_REQUEST
@@ -61,7 +66,11 @@ def commands() -> None:
 @commands.command(epilog=CAUTION)
 @click.argument("sources", metavar="STUDY.toml | IMAGE...", nargs=-1, required=True, type=click.Path(path_type=Path))
 @click.option("--out", required=True, type=_FOLDER, help="Folder for the results.")
-@click.option("--pixel-size", type=float, help="Edge of a pixel in micrometres, where images are named and no study.")
+@click.option(
+    "--pixel-size",
+    type=float,
+    help="Edge of a pixel in micrometres, where images are named and their files do not say it.",
+)
 @click.option("--preset", default="fundus", show_default=True, help="Settings where images are named and no study.")
 @click.option("--workers", type=click.IntRange(min=1), help="Processes; as many as may be used where not given.")
 @click.option("--part", metavar="K/N", help="Measure the images of one part of N only; gather puts parts together.")
@@ -156,9 +165,6 @@ def _study_or_images(
     if studies and pixel_size is not None:
         message = f"is for images named on the command line. Write it into {studies[0]} or its sheet."
         problems.append(Problem(file="--pixel-size", value=str(pixel_size), message=message))
-    if not studies and pixel_size is None:
-        message = "is not given. Say how many micrometres the edge of a pixel is, such as --pixel-size 7.0."
-        problems.append(Problem(file="--pixel-size", message=message))
     if problems:
         raise RequestError(problems)
     if studies:
@@ -247,10 +253,9 @@ def about() -> int:
 @click.option("--out", required=True, type=_FOLDER, help="Folder for the images and their truth.")
 def phantom(recipe_file: Path, out: Path) -> int:
     """Make images of vessels whose radii, lengths and resistances are known exactly."""
+    from vasohm_synthetic.errors import RecipeError
     from vasohm_synthetic.make import make_phantoms
     from vasohm_synthetic.recipe import read_recipe
-
-    from vasohm_synthetic.errors import RecipeError
 
     try:
         make_phantoms(read_recipe(recipe_file), out)

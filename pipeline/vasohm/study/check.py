@@ -21,7 +21,7 @@ def problems_of(study: Study) -> list[Problem]:
     A header that promises a picture does not yet hold one: a truncated file shows only when it is decoded.
     """
     found = list(_law_problems(study))
-    sheet = study.path.name
+    sheet = str(study.resolved["study.sheet"]["value"] or study.path.name)
     for row, source in enumerate(study.images, start=_FIRST_ROW):
         for column, path, fault in _faults(source, study.settings):
             found.append(Problem(file=sheet, row=row, column=column, value=path.name, message=str(fault)))

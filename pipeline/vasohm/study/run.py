@@ -1,5 +1,6 @@
 """One run over the images of a study: what is current is left, the rest is measured, and the folder is made whole."""
 
+import shutil
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import ExitStack
 from dataclasses import dataclass
@@ -147,12 +148,13 @@ class _Run:
         if self._request.part is None:
             for folder in (self._request.out, self._request.out / "images"):
                 remove_partials(folder)
+            for name in self._strangers():
+                self._tell(Event("warning", f"images/{name} is of no image of this study: it is left alone"))
         trails = self._journal.folder / "trails"
         pool = SupervisedPool(measure_and_write, self._request.workers, self._journal.folder / "workers.txt")
         for outcome in pool.run(self._tasks(trails), self._stops, self._note_retry):
             self._note_end(outcome)
-        for trail in trails.glob("*"):
-            trail.unlink()
+        shutil.rmtree(trails, ignore_errors=True)
         state = self._finish()
         stopped = self._why_stopped(state)
         self._tell(Event("end", f"exit status {state.exit_status}; {state.counts}"))
@@ -171,6 +173,10 @@ class _Run:
             self._ended[name] = ImageState(name, str(record.get("status")))
             self._current += 1
             self._tell(Event("current", image_id=name))
+
+    def _strangers(self) -> list[str]:
+        known = {source.image_id for source in self._study.images}
+        return sorted({path.name for path in (self._request.out / "images").glob("*")} - known)
 
     def _stops(self) -> int:
         if self._interrupts.count and not self._stop_told:

@@ -1,0 +1,72 @@
+"""`vasohm check` and the commands that only tell: every problem at once, with its place, and nothing measured."""
+
+from collections.abc import Callable
+from pathlib import Path
+
+import numpy as np
+from conftest import SIZE_PX, DrawnStudy
+from PIL import Image
+
+MakeStudy = Callable[..., DrawnStudy]
+
+
+def test_a_sound_study_is_told_in_one_line(make_study: MakeStudy) -> None:
+    study = make_study(2)
+    checked = study.run("check", study.file)
+    assert checked.status == 0, checked.complained
+    assert checked.told == f"{study.file}: 2 images, no problem found\n"
+    assert {path.name for path in study.folder.iterdir()} == {"study.toml", "images.csv", "image-0.png", "image-1.png"}
+
+
+def test_every_problem_of_the_files_is_told_at_once_with_its_place(make_study: MakeStudy) -> None:
+    """A person who mends one problem at a time would need as many runs as there are problems."""
+    study = make_study(4)
+    cut = study.folder / "image-0.png"
+    cut.write_bytes(cut.read_bytes()[:3000])  # its header still promises the whole picture
+    Image.fromarray(np.zeros((SIZE_PX, SIZE_PX + 4), np.uint8)).save(study.folder / "wide.png")
+    (study.folder / "image-3.png").write_text("<html>log in</html>")
+    rows = {
+        "image-0": "image-0.png,",
+        "image-1": "image-1.png,wide.png",
+        "image-2": "gone.png,",
+        "image-3": "image-3.png,",
+    }
+    study.sheet(rows, "image_id,file,mask_file")
+    checked = study.run("check", study.file)
+    assert checked.status == 2
+    lines = checked.complained.splitlines()
+    assert len(lines) == 4, checked.complained
+    for line, place in zip(
+        lines, ("images.csv:2 file", "images.csv:3 mask_file", "images.csv:4 file", "images.csv:5 file"), strict=True
+    ):
+        assert place in line
+    assert "gone.png" in lines[2]
+    assert f"{SIZE_PX + 4} x {SIZE_PX}" in lines[1]
+
+
+def test_a_missing_pixel_size_is_told_for_each_image(make_study: MakeStudy) -> None:
+    study = make_study(2)
+    study.file.write_text(study.file.read_text().replace("pixel_size_um = 2.0", ""))
+    checked = study.run("check", study.file)
+    assert checked.status == 2
+    assert checked.complained.count("pixel_size_um") >= 2
+
+
+def test_a_study_file_that_is_not_there_is_no_traceback(make_study: MakeStudy, tmp_path: Path) -> None:
+    study = make_study(1)
+    checked = study.run("check", tmp_path / "nowhere.toml")
+    assert checked.status == 2
+    assert "nowhere.toml" in checked.complained
+
+
+def test_what_is_registered_and_what_columns_mean_is_told(make_study: MakeStudy) -> None:
+    study = make_study(1)
+    laws = study.run("laws")
+    assert laws.status == 0
+    assert "pries-in-vivo" in laws.told
+    assert "doi" in laws.told.lower()
+    columns = study.run("columns")
+    assert "  radius_hydraulic_um (number, um): " in columns.told
+    about = study.run("about", SLURM_CPUS_PER_TASK="5")
+    assert "workers: 5 (from SLURM_CPUS_PER_TASK)" in about.told
+    assert str(study.folder) not in about.told
