@@ -5,7 +5,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
-from vasohm.network.jointfit import LN_C, LN_R, Observed, Priors, fit_joint, total_cost
+from vasohm.network.jointfit import LN_C, LN_R, Normal, Observed, Priors, fit_joint, total_cost
 from vasohm.network.profiles import Optics, ProfileTable, ln_area
 from vasohm.network.shared import (
     S_RANGE_PX,
@@ -21,6 +21,7 @@ from vasohm.network.shared import (
 START_PX = (0.65, 1.0, 1.6, 2.6, 4.2)  # blurs tried first
 FIRST_ROUNDS, ROUNDS = 3, 12
 HOPELESS = 40.0  # difference of log likelihood after the first rounds from which a family is not followed further
+LONGEST_STEP, SMALLEST_SHRINK = 0.5, 0.02
 SETTLED = 3e-3  # of ln blur
 SE_FACTOR = 1.3  # the curvature of chi^2 states 10 to 30 % too little (measured on phantoms)
 DECISIVE = 6.0  # difference of log likelihood between slab and cylinder from which the image has told its family
@@ -51,12 +52,14 @@ class ImageOptics:
 class OpticsRequest:
     """Families allowed, blurs (all of it, px) to start from, and the blur's relative uncertainty where it is given.
 
-    A given blur is the only one to start from and stays; its `blur_rel_se` is not None.
+    A given blur is the only one to start from and stays; its `blur_rel_se` is not None. `absorbing`: vessels are seen
+    by what they absorb, so that a cylinder is but an absorber of little absorption and need not be told from it.
     """
 
     families: tuple[str, ...]
     start_px: tuple[float, ...]
     blur_rel_se: float | None
+    absorbing: bool
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -104,7 +107,7 @@ def estimate_optics(
     if "absorber" in families:
         absorbing = _absorber(case, best)
         gain = best.cost - absorbing.cost
-        if len(families) == 1 or gain > 0.5 * np.log(observed.n_points):
+        if len(families) == 1 or gain > (0.0 if request.absorbing else 0.5 * np.log(observed.n_points)):
             told |= gain > DECISIVE
             best = absorbing
     covariance = np.zeros((len(parameters_of(best.optics)),) * 2)
@@ -152,21 +155,49 @@ def _refine(case: _Case, start: FloatArray, optics: Optics, started: ProfileTabl
     here = table_like(case.table, optics)
     theta, normal = fit_joint(observed, priors, here, _same_area(start, started, here), max_steps=6)
     wide = float(np.exp(np.quantile(theta[:, LN_R], 0.9)))
-    names, free = parameters_of(optics), case.free(optics)
-    for _ in range(rounds if free else 0):
-        response = optics_response(observed, here, theta, names)
-        marginal = marginalise(observed, priors, theta, normal, response)
-        keep, n = _in_focus(marginal), len(free)
-        information = marginal.information[keep].sum(axis=0)[-n:, -n:]
-        gradient = marginal.gradient[keep].sum(axis=0)[-n:]
-        step = np.clip(np.linalg.solve(information + 1e-3 * np.eye(n), gradient), -0.35, 0.35)
-        for name, ln_step in zip(free, step, strict=True):
-            here = table_like(case.table, _bounded(shifted(here.optics, name, float(ln_step)), wide))
-        theta, normal = fit_joint(observed, priors, here, theta, max_steps=4)
+    names, n_free = parameters_of(optics), len(case.free(optics))
+    fit = _judge(case, here, theta, normal)
+    shrink = 1.0
+    for _ in range(rounds if n_free else 0):
+        step = np.zeros(len(names))
+        step[-n_free:] = shrink * _newton_step(fit, n_free, wide)
+        stepped = fit.optics
+        for name, ln_step in zip(names, step, strict=True):
+            stepped = _bounded(shifted(stepped, name, float(ln_step)), wide)
+        here = table_like(case.table, stepped)
+        begin = fit.theta + np.clip(fit.marginal.answer @ step, -0.7, 0.7)
+        theta, normal = fit_joint(observed, priors, here, begin, max_steps=4)
+        trial = _judge(case, here, theta, normal)
+        if trial.cost > fit.cost + 1e-3:
+            shrink /= 4
+            if shrink < SMALLEST_SHRINK:
+                break
+            continue
+        fit, shrink = trial, min(4 * shrink, 1.0)
         if np.all(np.abs(step) < SETTLED):
             break
-    marginal = marginalise(observed, priors, theta, normal, optics_response(observed, here, theta, names))
-    return _Fit(here.optics, theta, total_cost(observed, priors, theta, normal), marginal)
+    return fit
+
+
+def _judge(case: _Case, table: ProfileTable, theta: FloatArray, normal: Normal) -> _Fit:
+    response = optics_response(case.observed, table, theta, parameters_of(table.optics))
+    marginal = marginalise(case.observed, case.priors, theta, normal, response)
+    return _Fit(table.optics, theta, total_cost(case.observed, case.priors, theta, normal), marginal)
+
+
+def _newton_step(fit: _Fit, n_free: int, wide: float) -> FloatArray:
+    """Step of the free parameters, the last `n_free`; absorption at its bound does not push further."""
+    keep = _in_focus(fit.marginal)
+    information = fit.marginal.information[keep].sum(axis=0)[-n_free:, -n_free:] + 1e-3 * np.eye(n_free)
+    gradient = fit.marginal.gradient[keep].sum(axis=0)[-n_free:]
+    step = np.linalg.solve(information, gradient)
+    if (
+        fit.optics.family == "absorber"
+        and _bounded(shifted(fit.optics, "absorption", float(step[-1])), wide) == fit.optics
+    ):
+        step[-1] = 0.0
+        step[:-1] = np.linalg.solve(information[:-1, :-1], gradient[:-1])
+    return np.asarray(step * min(1.0, LONGEST_STEP / float(np.abs(step).max())))
 
 
 def _bounded(optics: Optics, wide: float) -> Optics:

@@ -11,7 +11,7 @@ import numpy as np
 from scipy.linalg import cho_solve_banded, cholesky_banded
 
 from vasohm.arrays import AnyArray, BoolArray, Float32Array, FloatArray, IntArray
-from vasohm.network.profiles import ProfileTable, ln_height, tube_strips
+from vasohm.network.profiles import ProfileTable, height_slope, ln_height, tube_strips
 from vasohm.network.strips import CHUNK, Overlaps, Strips
 
 LN_R, LN_C, OFFSET, LEVEL, SLOPE, REFLEX = range(6)
@@ -95,13 +95,26 @@ def model_strips(table: ProfileTable, half_width: int, theta: FloatArray) -> Flo
     base = theta[:, LEVEL : SLOPE + 1].astype(np.float32)
     out[:, 0] = tube[:, 0] + base[:, :1] + base[:, 1:] * x
     if n_unknowns > REFLEX:
-        high = np.exp(theta[:, LN_C] + ln_height(table.optics, theta[:, LN_R]))
-        width = np.hypot(REFLEX_WIDTH * np.exp(theta[:, LN_R]), table.optics.s_px)
-        high = high * REFLEX_WIDTH * np.exp(theta[:, LN_R]) / width
-        u = (x - theta[:, OFFSET, None]) / width[:, None]
-        out[:, 1 + REFLEX] = -high[:, None] * np.exp(-0.5 * u**2)
-        out[:, 0] += theta[:, REFLEX, None].astype(np.float32) * out[:, 1 + REFLEX]
+        _add_reflex(table, x, theta, out)
     return out
+
+
+def _add_reflex(table: ProfileTable, x: Float32Array, theta: FloatArray, out: Float32Array) -> None:
+    """Take a Gaussian streak on the axis, `theta[:, REFLEX]` of the tube's height before blur, from model strips."""
+    optics = table.optics
+    sharp = REFLEX_WIDTH * np.exp(theta[:, LN_R])
+    width = np.hypot(sharp, optics.s_px)
+    height = np.exp(theta[:, LN_C] + ln_height(optics, theta[:, LN_R])) * sharp / width
+    u = ((x - theta[:, OFFSET, None]) / width[:, None]).astype(np.float32)
+    streak = -height[:, None].astype(np.float32) * np.exp(-0.5 * u**2)
+    taken = theta[:, REFLEX, None].astype(np.float32) * streak
+    widening = (sharp / width) ** 2  # d ln width / d ln r
+    growth = (height_slope(optics, theta[:, LN_R]) + 1.0 - widening)[:, None].astype(np.float32)
+    out[:, 0] += taken
+    out[:, 1 + LN_R] += taken * (growth + widening[:, None].astype(np.float32) * u**2)
+    out[:, 1 + LN_C] += taken
+    out[:, 1 + OFFSET] += taken * u / width[:, None].astype(np.float32)
+    out[:, 1 + REFLEX] = streak
 
 
 def neighbour_light(table: ProfileTable, overlaps: Overlaps, theta: FloatArray) -> FloatArray:
@@ -136,7 +149,7 @@ def normal_equations(
             points = strips.points[part]
             model = model_strips(table, strips.half_width, theta[points])
             w, residual = weights[part], y[part] - model[:, 0]
-            w, cost = _huber(w, residual, observed.row_scale[points])
+            w, cost = robust_weights(w, residual, observed.row_scale[points])
             design = model[:, 1:]
             weighted = design * w[:, None]
             normal.matrix[points] = np.matmul(weighted, design.transpose(0, 2, 1))
@@ -145,12 +158,12 @@ def normal_equations(
     return normal
 
 
-def _huber(w: Float32Array, residual: Float32Array, row_scale: FloatArray) -> tuple[Float32Array, FloatArray]:
+def robust_weights(w: Float32Array, residual: Float32Array, row_scale: FloatArray) -> tuple[Float32Array, FloatArray]:
     """Weights lowered for outliers, and the cost of each strip."""
     scale = np.maximum(row_scale, 1e-12).astype(np.float32)[:, None]
     squared = w * residual**2
     beyond = squared > HUBER**2 * scale
-    cost: FloatArray = np.sum(squared, axis=1, dtype=np.float64) * 0.5
+    cost = np.asarray(np.sum(squared, axis=1, dtype=np.float64)) / 2
     if beyond.any():
         row, _ = np.nonzero(beyond)
         excess = squared[beyond]
@@ -255,8 +268,6 @@ def fit_joint(
         step = np.clip(solve(factored, (best.gradient + pull)[points]), -limit, limit)
         trial = theta.copy()
         trial[points] += step
-        if n_unknowns > REFLEX:
-            trial[:, REFLEX] = np.maximum(trial[:, REFLEX], 0.0)
         found = normal_equations(observed, table, trial, running[segment])
         new_pull, prior_cost = prior_pull(priors, trial, segment)
         new_cost = observed.by_segment(found.cost + prior_cost)

@@ -19,10 +19,9 @@ from vasohm.network.jointfit import (
     LN_R,
     REFLEX,
     Observed,
-    Priors,
     normal_equations,
 )
-from vasohm.network.observe import Scene, hold_reflex, make_priors, observe
+from vasohm.network.observe import Expected, Scene, make_priors, observe
 from vasohm.network.pilot import Guess, segment_quantile
 from vasohm.network.profiles import (
     FAMILIES,
@@ -42,9 +41,12 @@ FAMILY_BLURS = 2.5  # some vessel must be so wide before slab and cylinder can b
 MOST_POINTS = 3000  # of resolved segments that are asked for blur, profile and contrast
 FEWEST_SEGMENTS = 3
 WORST_BLUR_SE = 0.25  # of ln blur: beyond, the assumed one is better
-FREE_SPREAD = 10.0  # sd of ln contrast that says nothing, whatever the family's units
+FREE_SPREAD = 300.0  # sd of ln contrast that says nothing, whatever the family's units
 PROFILE_SE = 0.08  # of ln r: half of what slab and cylinder differ by
 REFLEX_BLURS = 3.0  # narrower vessels cannot show a reflex apart from their rims
+LOWEST_REFLEX = 0.05  # median of wide segments from which it is one
+REFLEX_SPREAD, SMALLEST_REFLEX_SPREAD = 0.5, 0.03  # sd: of a vessel that tells itself, and of those that do not
+NO_REFLEX = 1e-3
 FIRST_REFLEX = 0.1  # height from which a reflex is searched
 REFLEX_GAIN = 2.0  # of log likelihood a wide segment from which reflexes are believed; noise alone gives about 0.5
 
@@ -65,7 +67,7 @@ class ImageKnowledge:
     table: ProfileTable
     covariance: FloatArray  # of ln blur, ln absorption
     contrast: ContrastPrior
-    reflex: bool
+    reflex: tuple[float, float] | None  # mean height in all vessels, and its spread; None where there is none
     flags: Flag
 
 
@@ -89,33 +91,35 @@ def learn_image(scene: Scene, guess: Guess, table: ProfileTable, settings: TubeS
     table = profile_table(table.optics, wide, int(1.2 * (wide + 3 * max(blur, 3.0) + 3)) + 6)
     observed, points = observe(scene, segments, first_unknowns(guess), table, alone=True)
     theta = first_unknowns(guess)[points]
-    free = np.full(len(segments), FREE_SPREAD)
-    priors = make_priors(observed, table, theta, segment_mean(observed, theta[:, LN_C]), free)
-    told, flags = _tell_optics(observed, priors, table, theta, settings)
-    if told.theta.shape[1] > REFLEX:
-        priors = _reflex_priors(observed, table_like(table, told.optics), told.theta)
-    normal = normal_equations(observed, table_like(table, told.optics), told.theta)
+    told, reflex, flags = _tell_optics(observed, table, theta, settings)
+    table = table_like(table, told.optics)
+    none = np.zeros(len(segments))
+    priors = make_priors(observed, table, told.theta, reflex or _contrast_unknown(observed, told.theta, none, none + 1))
+    normal = normal_equations(observed, table, told.theta)
     contrast, variance, variance_ln_r = segment_contrasts(observed, priors, told.theta, normal)
     answer = np.stack([segment_mean(observed, column) for column in told.answer[:, LN_C].T], axis=1)
     known = KnownContrasts(lines.vessel_class[segments], contrast, variance, answer)
     known = known.select(told.in_focus & (variance_ln_r < RESOLVED_SE**2))
     prior = learn_contrast(known, lines.vessel_class, mean_contrast(lines, guess))
-    return ImageKnowledge(table_like(full, told.optics), told.covariance, prior, told.theta.shape[1] > REFLEX, flags)
+    common = None if reflex is None else (float(np.median(reflex.reflex)), float(np.min(reflex.reflex_sd)))
+    return ImageKnowledge(table_like(full, told.optics), told.covariance, prior, common, flags)
 
 
 def _tell_optics(
-    observed: Observed, priors: Priors, table: ProfileTable, theta: FloatArray, settings: TubeSettings
-) -> tuple[ImageOptics, Flag]:
+    observed: Observed, table: ProfileTable, theta: FloatArray, settings: TubeSettings
+) -> tuple[ImageOptics, Expected | None, Flag]:
     """Estimate the optics; where the picture does not tell blur or family, assume them and say so."""
     families = FAMILIES if settings.profile == "auto" else (settings.profile,)
     flags = Flag.NONE
-    request = OpticsRequest(families, START_PX, None)
+    request = OpticsRequest(families, START_PX, None, settings.dark)
     if settings.blur_px is not None:
-        request = OpticsRequest(families, (total_blur_px(settings.blur_px),), TYPED_REL_SE)
+        request = OpticsRequest(families, (total_blur_px(settings.blur_px),), TYPED_REL_SE, settings.dark)
         flags |= Flag.ASSUMED_BLUR_SPREAD
+    none = np.zeros(observed.n_segments)
+    priors = make_priors(observed, table, theta, _contrast_unknown(observed, theta, none, none + 1))
     told = estimate_optics(observed, priors, table, theta, request)
     if settings.blur_px is None and told.covariance[0, 0] > WORST_BLUR_SE**2:
-        request = OpticsRequest(families, (total_blur_px(ASSUMED_PSF_PX),), ASSUMED_REL_SE)
+        request = OpticsRequest(families, (total_blur_px(ASSUMED_PSF_PX),), ASSUMED_REL_SE, settings.dark)
         flags |= Flag.BLUR_ASSUMED | Flag.ASSUMED_BLUR_SPREAD
         told = estimate_optics(observed, priors, table, theta, request)
     widest = np.exp(np.quantile(told.theta[:, LN_R], 0.95))
@@ -123,28 +127,48 @@ def _tell_optics(
         flags |= Flag.PROFILE_ASSUMED
         request = replace(request, families=("cylinder",))
         told = estimate_optics(observed, priors, table, theta, request)
+    reflex = None
     if settings.dark:
-        told = _with_reflex(observed, table, told, request)
-    return told, flags
+        told, reflex = _with_reflex(observed, table, told, request)
+    return told, reflex, flags
 
 
-def _with_reflex(observed: Observed, table: ProfileTable, told: ImageOptics, request: OpticsRequest) -> ImageOptics:
-    """Estimate the optics with a light reflex on the axes of wide vessels, if that explains the picture better."""
-    here = table_like(table, told.optics)
+def _with_reflex(
+    observed: Observed, table: ProfileTable, told: ImageOptics, request: OpticsRequest
+) -> tuple[ImageOptics, Expected | None]:
+    """Estimate the optics with light reflexes on the axes, if that explains the wide vessels clearly better.
+
+    Wide vessels tell the height of the reflex by themselves; then narrower ones are given what these have in common.
+    """
     wide = wide_segments(observed, told.theta, told.optics)
     if not wide.any():
-        return told
+        return told, None
+    request = replace(request, start_px=(told.optics.s_px,))
+    none = np.zeros(observed.n_segments)
+    expected = _contrast_unknown(observed, told.theta, none, np.where(wide, REFLEX_SPREAD, NO_REFLEX))
     theta = np.column_stack([told.theta, np.where(wide, FIRST_REFLEX, 0.0)[observed.segment]])
-    priors = _reflex_priors(observed, here, theta)
-    again = estimate_optics(observed, priors, here, theta, replace(request, start_px=(told.optics.s_px,)))
-    return again if told.cost - again.cost > REFLEX_GAIN * (wide.sum() + 3) else told
+    again = _estimate_again(observed, table_like(table, told.optics), theta, expected, request)
+    high = segment_mean(observed, again.theta[:, REFLEX])[wide]
+    common = float(np.median(high))
+    if common < LOWEST_REFLEX or told.cost - again.cost < REFLEX_GAIN * (wide.sum() + 3):
+        return told, None
+    scatter = max(1.4826 * float(np.median(np.abs(high - common))), SMALLEST_REFLEX_SPREAD)
+    expected = _contrast_unknown(observed, again.theta, none + common, np.where(wide, REFLEX_SPREAD, scatter))
+    theta = again.theta.copy()
+    theta[~wide[observed.segment], REFLEX] = common
+    return _estimate_again(observed, table_like(table, again.optics), theta, expected, request), expected
 
 
-def _reflex_priors(observed: Observed, table: ProfileTable, theta: FloatArray) -> Priors:
-    spread = np.full(observed.n_segments, FREE_SPREAD)
-    priors = make_priors(observed, table, theta, segment_mean(observed, theta[:, LN_C]), spread)
-    hold_reflex(priors, observed.segment, wide_segments(observed, theta, table.optics))
-    return priors
+def _estimate_again(
+    observed: Observed, table: ProfileTable, theta: FloatArray, expected: Expected, request: OpticsRequest
+) -> ImageOptics:
+    priors = make_priors(observed, table, theta, expected)
+    return estimate_optics(observed, priors, table, theta, request)
+
+
+def _contrast_unknown(observed: Observed, theta: FloatArray, reflex: FloatArray, reflex_sd: FloatArray) -> Expected:
+    contrast = segment_mean(observed, theta[:, LN_C])
+    return Expected(contrast, np.full(observed.n_segments, FREE_SPREAD), reflex, reflex_sd)
 
 
 def wide_segments(observed: Observed, theta: FloatArray, optics: Optics) -> BoolArray:
@@ -170,7 +194,7 @@ def _nothing_learnt(lines: TubeLines, guess: Guess, table: ProfileTable, setting
     variances = [blur_se**2, ASSUMED_ABSORPTION_SE**2][: len(parameters_of(optics))]
     nobody = KnownContrasts(np.zeros(0, np.int64), np.zeros(0), np.zeros(0), np.zeros((0, len(variances))))
     prior = learn_contrast(nobody, lines.vessel_class, mean_contrast(lines, guess))
-    return ImageKnowledge(table, np.diag(variances), prior, False, flags)
+    return ImageKnowledge(table, np.diag(variances), prior, None, flags)
 
 
 def mean_contrast(lines: TubeLines, guess: Guess) -> FloatArray:

@@ -29,8 +29,7 @@ LEVEL_STEP, SLOPE_STEP = 0.02, 0.002  # in units of the vessel's height
 REFLEX_STEP = 0.02
 RADIUS_STEP = 0.2  # of ln r: only keeps stretches without data from running away
 # standard deviations that hold the mean of a segment, counted once a segment
-OFFSET_PX, RADIUS_SPREAD, LEVEL_SPREAD, SLOPE_SPREAD, REFLEX_SPREAD = 1.5, 1.5, 10.0, 1.0, 0.5
-NO_REFLEX = 1e-4
+OFFSET_PX, RADIUS_SPREAD, LEVEL_SPREAD, SLOPE_SPREAD = 1.5, 1.5, 10.0, 1.0
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -100,13 +99,23 @@ def widest_window(table: ProfileTable) -> float:
     return (table.half_px - 4) / 1.2
 
 
-def make_priors(
-    observed: Observed, table: ProfileTable, theta: FloatArray, mean: FloatArray, spread: FloatArray
-) -> Priors:
+@dataclass(frozen=True, slots=True, eq=False)
+class Expected:
+    """Mean and standard deviation (n_segments,) of what is known of each segment before it is fitted."""
+
+    ln_contrast: FloatArray
+    ln_contrast_sd: FloatArray
+    reflex: FloatArray
+    reflex_sd: FloatArray
+
+    def __post_init__(self) -> None:
+        freeze(self)
+
+
+def make_priors(observed: Observed, table: ProfileTable, theta: FloatArray, expected: Expected) -> Priors:
     """Build the priors around present unknowns `theta` (n_points, B).
 
-    `mean` and `spread` (n_segments,) are those of each segment's ln contrast. Whatever holds a whole segment is
-    counted once, not once a point.
+    Whatever holds a whole segment is counted once, not once a point.
     """
     segment, n = observed.segment, len(theta)
     once = 1.0 / np.maximum(np.diff(observed.offsets), 1)[segment]
@@ -120,23 +129,19 @@ def make_priors(
     step[:, LEVEL] = 1 / (LEVEL_STEP * high) ** 2
     step[:, SLOPE] = 1 / (SLOPE_STEP * high) ** 2
     hold[:, LN_R] = once / RADIUS_SPREAD**2
-    hold[:, LN_C] = once / spread[segment] ** 2
+    hold[:, LN_C] = once / expected.ln_contrast_sd[segment] ** 2
     hold[:, OFFSET] = once / OFFSET_PX**2
     hold[:, LEVEL] = once / (LEVEL_SPREAD * high) ** 2
     hold[:, SLOPE] = once / (SLOPE_SPREAD * high) ** 2
     centre = np.zeros(theta.shape)
     centre[:, LN_R] = theta[:, LN_R]
-    centre[:, LN_C] = mean[segment]
+    centre[:, LN_C] = expected.ln_contrast[segment]
     if theta.shape[1] > REFLEX:
         step[:, REFLEX] = 1 / REFLEX_STEP**2
-        hold[:, REFLEX] = once / REFLEX_SPREAD**2
+        hold[:, REFLEX] = once / expected.reflex_sd[segment] ** 2
+        centre[:, REFLEX] = expected.reflex[segment]
     cubed = np.zeros(n)
     cubed[:-1] = np.maximum(radius[1:], THIN_PX) ** 3  # at the middle of three points
     bends = difference_diagonals(np.zeros(n), cubed, segment)
     stiffness = np.full(observed.n_segments, STIFFNESS)
     return Priors(difference_diagonals(step, bend, segment), bends, stiffness, hold, centre)
-
-
-def hold_reflex(priors: Priors, segment: IntArray, wanted: IntArray) -> None:
-    """Keep the reflex at zero in all segments but those `wanted` (bool, n_segments)."""
-    priors.hold[~wanted[segment], REFLEX] = 1 / NO_REFLEX**2

@@ -97,6 +97,16 @@ def ln_height(optics: Optics, ln_r: FloatArray) -> FloatArray:
     return np.log(-np.expm1(-2.0 * optics.mu_per_px * np.exp(ln_r)))
 
 
+def height_slope(optics: Optics, ln_r: FloatArray) -> FloatArray:
+    """Return the derivative of `ln_height` by ln r."""
+    if optics.family == "slab":
+        return np.zeros_like(ln_r)
+    if optics.family == "cylinder":
+        return np.ones_like(ln_r)
+    tau = 2.0 * optics.mu_per_px * np.exp(ln_r)
+    return np.asarray(tau / np.expm1(tau))
+
+
 def photometric_ln_radius(optics: Optics, ln_k: FloatArray) -> FloatArray:
     """Return the ln r whose tube of unit contrast has the area exp(`ln_k`)."""
     grid = np.linspace(np.log(THINNEST_PX), np.log(1e4), 1200)

@@ -13,6 +13,7 @@ from vasohm.network.jointfit import (
     model_strips,
     neighbour_light,
     prior_pull,
+    robust_weights,
     solve,
 )
 from vasohm.network.profiles import Optics, ProfileTable, profile_table
@@ -70,7 +71,8 @@ def optics_response(observed: Observed, table: ProfileTable, theta: FloatArray, 
             change = np.stack(
                 [model_strips(other, strips.half_width, theta[points])[:, 0] - model[:, 0] for other in others], axis=2
             ) / np.float32(LN_STEP)
-            w, residual = weights[low : low + CHUNK], y[low : low + CHUNK] - model[:, 0]
+            residual = y[low : low + CHUNK] - model[:, 0]
+            w, _ = robust_weights(weights[low : low + CHUNK], residual, observed.row_scale[points])
             weighted = change * w[:, :, None]
             gradient[points] = np.matmul(residual[:, None], weighted)[:, 0]
             curvature[points] = np.matmul(change.transpose(0, 2, 1), weighted)

@@ -31,17 +31,15 @@ from vasohm.network.jointfit import (
 from vasohm.network.learn import (
     ASSUMED_PSF_PX,
     ASSUMED_REL_SE,
-    FIRST_REFLEX,
     PROFILE_SE,
     RESOLVED_BLURS,
     ImageKnowledge,
     TubeSettings,
     first_unknowns,
     learn_image,
-    wide_segments,
 )
 from vasohm.network.noise import noise_correlation, noise_factor
-from vasohm.network.observe import Scene, hold_reflex, make_priors, observe
+from vasohm.network.observe import Expected, Scene, make_priors, observe
 from vasohm.network.pilot import Guess, guess_radii, segment_quantile
 from vasohm.network.posterior import BandedCovariance, choose_stiffness, evidence, point_variance
 from vasohm.network.profiles import (
@@ -130,7 +128,7 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
     priors = _priors(observed, known, theta)
     theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=8)
     observed, _ = observe(scene, everything, theta, known.table, alone=False)
-    theta, priors = _add_reflex(observed, known, theta)
+    priors = _priors(observed, known, theta)
     theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=3)
     stiffness = choose_stiffness(evidence(observed, priors, theta, normal))
     priors = with_stiffness(priors, stiffness)
@@ -172,22 +170,16 @@ def _start(scene: Scene, guess: Guess, known: ImageKnowledge) -> FloatArray:
     mean = prior.mean[segment[thin]]
     theta[thin, LN_R] = photometric_ln_radius(known.table.optics, guess.ln_photometric[thin] - mean)
     theta[thin, LN_C] = mean
+    if known.reflex:
+        theta = np.column_stack([theta, np.full(len(theta), known.reflex[0])])
     return theta
 
 
 def _priors(observed: Observed, known: ImageKnowledge, theta: FloatArray) -> Priors:
-    return make_priors(observed, known.table, theta, known.contrast.mean, known.contrast.spread)
-
-
-def _add_reflex(observed: Observed, known: ImageKnowledge, theta: FloatArray) -> tuple[FloatArray, Priors]:
-    """Add the height of a light reflex to the unknowns where the picture's wide vessels show one."""
-    wide = wide_segments(observed, theta, known.table.optics)
-    if not (known.reflex and wide.any()):
-        return theta, _priors(observed, known, theta)
-    more = np.column_stack([theta, np.where(wide, FIRST_REFLEX, 0.0)[observed.segment]])
-    priors = _priors(observed, known, more)
-    hold_reflex(priors, observed.segment, wide)
-    return more, priors
+    reflex, sd = known.reflex or (0.0, 1.0)
+    every = np.ones(observed.n_segments)
+    expected = Expected(known.contrast.mean, known.contrast.spread, reflex * every, sd * every)
+    return make_priors(observed, known.table, theta, expected)
 
 
 # --- what is known afterwards ---------------------------------------------------------------------------------------
