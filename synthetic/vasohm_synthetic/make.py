@@ -2,6 +2,7 @@
 
 import csv
 import io
+import json
 import zlib
 from pathlib import Path
 
@@ -48,11 +49,11 @@ def make_phantoms(recipe: Recipe, out_dir: Path) -> tuple[str, ...]:
     for image in recipe.images:
         if image.bed not in beds:
             beds[image.bed] = build_bed(recipe, image)
-        scene = retone(beds[image.bed], image.tones, recipe.pixel_size_um)
+        scene = retone(beds[image.bed], image.tones, image.pixel_size_um)
         picture = draw(recipe, image, scene)
         tables = truth_tables(
             scene,
-            recipe.pixel_size_um,
+            image.pixel_size_um,
             recipe.blood,
             image_id=image.image_id,
             drive_mmhg=recipe.drive_mmhg,
@@ -60,7 +61,7 @@ def make_phantoms(recipe: Recipe, out_dir: Path) -> tuple[str, ...]:
         )
         file = f"{image.image_id}.{recipe.file_format}"
         _write_picture(out_dir / file, picture)
-        tables["image"] = _image(recipe, image, scene)
+        tables["image"] = _image(image, scene)
         _write_truth(out_dir / "truth" / image.image_id, tables)
         rows.append({"image_id": image.image_id, "file": file, **_row(recipe, image, scene)})
         if recipe.write_terminals:
@@ -89,7 +90,7 @@ def study_text(recipe: Recipe) -> str:
     blood = recipe.blood
     low, high = recipe.radius_um
     return f"""[study]
-name  = "{recipe.name}"
+name  = {json.dumps(recipe.name, ensure_ascii=False)}
 sheet = "images.csv"
 
 [image]
@@ -150,9 +151,9 @@ def _root(entry: Entry, number: int, size: tuple[int, int]) -> Root:
 
 
 def _row(recipe: Recipe, image: ImageRecipe, scene: Scene) -> dict[str, object]:
-    row: dict[str, object] = {"pixel_size_um": recipe.pixel_size_um}
+    row: dict[str, object] = {"pixel_size_um": image.pixel_size_um}
     if recipe.pixel_size_se_um is not None:
-        row["pixel_size_se_um"] = recipe.pixel_size_se_um
+        row["pixel_size_se_um"] = recipe.pixel_size_se_um * image.pixel_size_um / recipe.pixel_size_um
     if scene.disc is not None:
         row |= {
             "disc_x_px": scene.disc.x_px,
@@ -162,10 +163,10 @@ def _row(recipe: Recipe, image: ImageRecipe, scene: Scene) -> dict[str, object]:
     return row | dict(image.design)
 
 
-def _image(recipe: Recipe, image: ImageRecipe, scene: Scene) -> pd.DataFrame:
+def _image(image: ImageRecipe, scene: Scene) -> pd.DataFrame:
     """Size and scale of the picture: truth of another picture can be told from it."""
     height, width = scene.shape
-    pixel_size_um = recipe.pixel_size_um
+    pixel_size_um = image.pixel_size_um
     return pd.DataFrame(
         [{"image_id": image.image_id, "width_px": width, "height_px": height, "pixel_size_um": pixel_size_um}]
     )

@@ -57,6 +57,7 @@ class ImageRecipe:
 
     image_id: str
     bed: str
+    pixel_size_um: float
     scene: SceneRecipe
     optics: Optics
     tones: tuple[Tone, ...]
@@ -115,10 +116,11 @@ def parse_recipe(table: Mapping[str, Any]) -> Recipe:
             "write_terminals",
         ),
     )  # fmt: skip
+    pixel_size_um = head.number(said, "pixel_size_um", 1.0)
     recipe = Recipe(
         name=head.text(said, "name", "phantoms"),
         seed=head.whole(said, "seed", 0),
-        pixel_size_um=head.number(said, "pixel_size_um", 1.0),
+        pixel_size_um=pixel_size_um,
         pixel_size_se_um=head.number(said, "pixel_size_se_um", 0.0) or None,
         preset=head.word(said, "preset", "intravital", PRESETS),
         radius_um=head.pair(said, "radius_um", (1.0, 50.0)),
@@ -126,14 +128,14 @@ def parse_recipe(table: Mapping[str, Any]) -> Recipe:
         drive_mmhg=head.number(said, "drive_mmhg", 1.0),
         write_terminals=head.flag(said, "write_terminals", default=True),
         blood=fields.build(Blood, top.get("blood", {}), "blood"),
-        images=_images(top, fields.problems),
+        images=_images(top, pixel_size_um, fields.problems),
     )
-    fields.problems.extend(_recipe_problems(recipe))
+    fields.problems.extend(recipe_problems(recipe))
     refuse(fields.problems)
     return recipe
 
 
-def _images(top: Mapping[str, Any], problems: list[str]) -> tuple[ImageRecipe, ...]:
+def _images(top: Mapping[str, Any], pixel_size_um: float, problems: list[str]) -> tuple[ImageRecipe, ...]:
     images = []
     entries = top.get("image", [])
     if not isinstance(entries, list) or not entries:
@@ -141,13 +143,14 @@ def _images(top: Mapping[str, Any], problems: list[str]) -> tuple[ImageRecipe, .
         return ()
     for number, entry in enumerate(entries, 1):
         fields = Fields(f"image {number}", problems)
-        said = fields.known(entry, ("image_id", "bed", "scene", "optics", "tone", *DESIGN))
+        said = fields.known(entry, ("image_id", "bed", "scene", "optics", "tone", "pixel_size_um", *DESIGN))
         image_id = fields.text(said, "image_id", f"phantom-{number:02d}")
         scene, optics = (merge(top.get(part, {}), said.get(part, {})) for part in ("scene", "optics"))
         images.append(
             ImageRecipe(
                 image_id=image_id,
                 bed=fields.text(said, "bed", image_id),
+                pixel_size_um=fields.number(said, "pixel_size_um", pixel_size_um),
                 scene=_scene(scene, Fields(f"image {number} scene", problems)),
                 optics=_optics(optics, Fields(f"image {number} optics", problems)),
                 tones=tuple(fields.build(Tone, tone, f"image {number} tone") for tone in fields.tables(said, "tone")),
@@ -203,7 +206,7 @@ def _optics(table: Mapping[str, Any], fields: Fields) -> Optics:
     return fields.build(Optics, said, fields.where, **parts)
 
 
-def _recipe_problems(recipe: Recipe) -> list[str]:
+def recipe_problems(recipe: Recipe) -> list[str]:
     """Say which values are impossible, after all keys were understood."""
     checks = [
         (recipe.pixel_size_um > 0, f"phantom pixel_size_um: {recipe.pixel_size_um:g} is not positive"),
@@ -226,6 +229,8 @@ def _recipe_problems(recipe: Recipe) -> list[str]:
         if image.image_id.casefold() in seen:
             problems.append(f"{where} image_id: {image.image_id!r} is there twice")
         seen.add(image.image_id.casefold())
+        if not image.pixel_size_um > 0 and image.pixel_size_um != recipe.pixel_size_um:
+            problems.append(f"{where} pixel_size_um: {image.pixel_size_um:g} is not positive")
         problems += [f"{where} {problem}" for problem in _scene_problems(image.scene)]
         problems += [f"{where} optics: {problem}" for problem in optics_problems(image.optics)]
         problems += [f"{where} tone: {problem}" for tone in image.tones for problem in tone_problems(tone)]

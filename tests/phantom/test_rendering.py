@@ -4,13 +4,14 @@ from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
+import pandas as pd
 import pytest
 from PIL import Image
 from scipy.special import erf
 
 from vasohm_synthetic.backdrop import digitise
 from vasohm_synthetic.curves import process
-from vasohm_synthetic.make import build_bed, draw
+from vasohm_synthetic.make import build_bed, draw, make_phantoms
 from vasohm_synthetic.optics import Backdrop, Camera, Channel, Optics
 from vasohm_synthetic.recipe import read_recipe
 from vasohm_synthetic.render import render, render_vessels
@@ -251,6 +252,20 @@ def test_demonstration_pictures_come_from_their_recipe():
         difference = np.abs(picture.astype(int) - np.asarray(stored, int))
     one_level = 1  # another numerical library may round the other way
     assert difference.max() <= one_level
+
+
+@pytest.mark.slow
+def test_whole_demonstration_comes_from_its_recipe(tmp_path):
+    """Every picture and every terminal of the demonstration, and the rows of its sheet."""
+    names = make_phantoms(read_recipe(CONFIGS / "phantom-demo.toml"), tmp_path)
+    one_level = 1
+    for name in names:
+        with Image.open(CONFIGS / "demo" / f"{name}.png") as stored, Image.open(tmp_path / f"{name}.png") as made:
+            assert np.abs(np.asarray(made, int) - np.asarray(stored, int)).max() <= one_level
+        terminals = (pd.read_csv(folder / f"{name}_terminals.csv") for folder in (CONFIGS / "demo", tmp_path))
+        pd.testing.assert_frame_equal(*terminals)
+    stored, made = (pd.read_csv(folder / "images.csv") for folder in (CONFIGS / "demo", tmp_path))
+    pd.testing.assert_frame_equal(stored.loc[stored["image_id"] != "retina", made.columns], made)
 
 
 def test_vessel_must_be_possible():
