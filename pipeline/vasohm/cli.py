@@ -169,7 +169,7 @@ def _study_or_images(
         raise RequestError(problems)
     if studies:
         return read_study(studies[0]), (*only, *(str(other) for other in others))
-    return ad_hoc_study(others, pixel_size, preset), only
+    return ad_hoc_study([other.absolute() for other in others], pixel_size, preset), only
 
 
 @commands.command()
@@ -178,6 +178,7 @@ def check(study_file: Path) -> int:
     """Read all files of a study, measure nothing, and name every problem at once."""
     from vasohm.config.study_file import read_study
     from vasohm.study.check import problems_of
+    from vasohm.study.progress import counted
 
     study = read_study(study_file)
     for warning in study.warnings:
@@ -185,7 +186,7 @@ def check(study_file: Path) -> int:
     problems = problems_of(study)
     if problems:
         raise RequestError(problems)
-    click.echo(f"{study_file}: {len(study.images)} images, no problem found")
+    click.echo(f"{study_file}: {counted(len(study.images), 'image')}, no problem found")
     return EXIT_OK
 
 
@@ -200,6 +201,24 @@ def gather(out: Path) -> int:
     for line in gathered_lines(report, out):
         click.echo(line)
     return report.state.exit_status
+
+
+@commands.command()
+@click.argument("results", metavar="DIR", type=_FOLDER)
+@click.option("--truth", required=True, type=_FOLDER, help="Folder with the truth of the images: IMAGE_ID/points.csv …")
+@click.option("--out", type=_FOLDER, help="Folder for the tables and the picture; nothing is written where not given.")
+def appraise(results: Path, truth: Path, out: Path | None) -> int:
+    """Tell how far what was measured in DIR is from the truth, and what can be trusted."""
+    from vasohm.study.appraise import appraise as hold_against_truth
+    from vasohm.study.appraise import write_appraisal
+    from vasohm.study.certificate import summary_lines
+
+    appraisal = hold_against_truth(results, truth)
+    if out is not None:
+        write_appraisal(appraisal, out)
+    for line in summary_lines(appraisal):
+        click.echo(line)
+    return EXIT_OK
 
 
 @commands.command()
@@ -260,7 +279,8 @@ def phantom(recipe_file: Path, out: Path) -> int:
     try:
         make_phantoms(read_recipe(recipe_file), out)
     except RecipeError as wrong:
-        raise RequestError([Problem(file=str(recipe_file), message=problem) for problem in wrong.problems]) from None
+        _complain(wrong.problems)
+        return EXIT_REQUEST
     click.echo(f"phantoms are in {out}")
     return EXIT_OK
 

@@ -237,7 +237,7 @@ def _hindrance(blood: Blood, radius_um: FloatArray, hematocrit: FloatArray) -> F
 
 
 def _exponent(blood: Blood, table: pd.DataFrame, hematocrit: FloatArray) -> FloatArray:
-    """d ln R / d ln r at each segment's measured hydraulic radius; 0 where there is none."""
+    """Slope d ln R / d ln r at each segment's measured hydraulic radius; 0 where there is none."""
     radius_um = table["radius_hydraulic_um"].to_numpy(np.float64)
     known = np.isfinite(radius_um) & (radius_um > 0)
     radius_um = np.where(known, radius_um, 1.0)
