@@ -73,7 +73,7 @@ MEANING: dict[Flag, str] = {
     Flag.SCALE_CONFLICT: "the file contradicts the typed pixel size; the typed one was used as the study asks",
     Flag.BLUR_ASSUMED: "the image cannot tell its own blur; an assumed value was used",
     Flag.PROFILE_ASSUMED: "the image cannot tell how its vessels are imaged; an assumed profile was used",
-    Flag.OUT_OF_FOCUS: "the blur is wider than the thinnest vessels asked for",
+    Flag.OUT_OF_FOCUS: "the blur is wider than 1.5 px and than the thinnest vessels asked for",
     Flag.ASSUMED_BLUR_SPREAD: "the uncertainty of the blur is an assumption",
 }
 

@@ -97,8 +97,7 @@ def _read(folder: Path) -> _Measured | None:
     known = row[["blur_px", "noise", "contrast"]].astype(float)
     if not (np.isfinite(known).all() and (known > 0).all()):
         return None
-    record = json.loads((folder / "record.json").read_text(encoding="utf-8"))
-    profile = str(record.get("image", {}).get("profile", UNKNOWN_PROFILE))
+    profile = str(row.get("profile", UNKNOWN_PROFILE))
     return _Measured(
         folder.name, row, segments, int(networks["loops"].max()), profile if profile in PROFILES else UNKNOWN_PROFILE
     )

@@ -258,7 +258,7 @@ def make_methods() -> Methods:
         version="0.1.0",
         prepare=PrepareSettings(channel="green", polarity="dark", gamma=1.0, radius_um=(4.0, 120.0)),
         segment=SegmentSettings(method="ridge", radius_um=(4.0, 120.0), false_alarms_per_mpx=10.0, parameters={}),
-        radius=RadiusSettings(profile="auto", blur_px=None, plasma_layer_um=1.0, plasma_layer_se_um=0.5),
+        radius=RadiusSettings(profile="auto", blur_px=None, plasma_layer_um=1.0, plasma_layer_se_um=0.5, least_radius_um=2.0),
         blood=BloodSettings(
             law="constant", hematocrit=0.45, plasma_viscosity_mpa_s=1.2, viscosity_mpa_s=3.0, parameters={}
         ),

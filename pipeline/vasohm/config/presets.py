@@ -15,7 +15,7 @@ DEFAULTS: Mapping[str, Any] = {
     "scale.pixel_size_se_um": None,
     "scale.scale_conflict": "stop",
     "segment.method": "ridge",
-    "segment.false_alarms_per_mpx": 100.0,
+    "segment.false_alarms_per_mpx": 30.0,
     "segment.crossing_probability": 0.5,  # the more probable reading wins
     "segment.parameters": {},
     "radius.profile": "auto",

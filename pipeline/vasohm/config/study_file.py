@@ -309,6 +309,7 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
             None if blur_px == "auto" else blur_px,
             values["radius.plasma_layer_um"],
             values["radius.plasma_layer_se_um"],
+            low,
         ),
         blood=BloodSettings(
             values["blood.law"],

@@ -15,6 +15,7 @@ class RadiusSettings:
     blur_px: float | None  # None: the image tells
     plasma_layer_um: float  # added to the radius of a red-cell column
     plasma_layer_se_um: float
+    least_radius_um: float  # thinnest vessels asked for: tells what blur is out of focus
 
 
 class RadiusCovariance(Protocol):

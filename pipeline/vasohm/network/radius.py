@@ -19,6 +19,7 @@ TIGHT_BEND_PX = 5.0  # bends tighter than this radius lose 6 to 19 % of their le
 BEND_WINDOW_PX = 4  # curvature is read over this many points to either side
 SHORT_RADII = 2.0  # shorter than its own width
 NODE_SE_PX = 0.5  # standard uncertainty of where a segment ends along itself
+SHARP_PX = 1.5  # a well sampled sharp picture has a blur of 0.5 to 1.5 px: that much is never out of focus
 UNRESOLVED_SE = 0.25  # of ln r
 
 
@@ -103,7 +104,7 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
         length_random_se_um=np.full(cut.n_segments, NODE_SE_PX * np.sqrt(2) * pixel), chord_um=chord_px * pixel,
         segment_flags=_segment_flags(cut, flags, length_px, radius_um / pixel, random_se),
         blur_px=fit.blur_px, profile=fit.profile,
-        image_contrast=float(np.median(fit.contrast[kept])) if kept.any() else np.nan, flags=fit.flags,
+        image_contrast=float(np.median(fit.contrast[kept])) if kept.any() else np.nan, flags=fit.flags | _focus(fit, settings, pixel),
     )  # fmt: skip
 
 
@@ -119,6 +120,11 @@ def _fit(graph: VesselGraph, prepared: PreparedImage, settings: RadiusSettings) 
         point_flags=found.point_flags, shared=found.shared, shared_causes=found.shared_causes,
         covariance=found.covariance, noise_sign=1, blur_px=found.blur_px, profile=found.profile, flags=found.flags,
     )  # fmt: skip
+
+
+def _focus(fit: LumenFit, settings: RadiusSettings, pixel_size_um: float) -> Flag:
+    sharp_px = max(SHARP_PX, settings.least_radius_um / pixel_size_um)
+    return Flag.OUT_OF_FOCUS if fit.blur_px > sharp_px else Flag.NONE
 
 
 def _with_plasma_layer(

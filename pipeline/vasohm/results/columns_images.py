@@ -31,6 +31,7 @@ IMAGE: tuple[Column, ...] = (
         "1",
         "Box-counting dimension of the vessels. Depends on resolution and field of view: compare within one set-up.",
     ),
+    text("profile", "How tubes are imaged here: slab, cylinder or absorber; empty without vessels."),
     number("blur_px", "{pixel}", "Standard deviation of the Gaussian blur of the picture."),
     number("noise", "{signal}", "Median standard deviation of a pixel's noise, in the units of contrast."),
     number(

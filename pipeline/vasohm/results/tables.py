@@ -346,6 +346,7 @@ def _image(findings: Findings) -> dict[str, Any]:
         "radius_mean_um": shape.radius_mean_um_image,
         "tortuosity_mean": shape.tortuosity_mean,
         "box_dimension": shape.box_dimension,
+        "profile": measured.profile if measured.graph.n_segments else "",
         "blur_px": measured.blur_px,
         "noise": prepared.quality.noise,
         "contrast": measured.image_contrast,
