@@ -47,8 +47,8 @@ def run_command(words: Sequence[str] | None = None) -> int:
     except click.ClickException as wrong:
         wrong.show()
         return wrong.exit_code
-    except BrokenPipeError:  # whoever read our lines has gone: say no more, not even at the end of the process
-        os.dup2(os.open(os.devnull, os.O_WRONLY), 1)
+    except BrokenPipeError:  # whoever read our lines has gone
+        _say_no_more(1)
         return EXIT_SOME_FAILED
     except OSError as fault:
         name = Path(os.fsdecode(fault.filename)).name if fault.filename else "the results"
@@ -121,8 +121,11 @@ def measure(  # noqa: PLR0913  the options of the command
     from vasohm.study.progress import closing_lines
 
     lines = closing_lines(report, out, in_parts=request.part is not None)
-    for line in lines[-1:] if quiet else lines:
-        click.echo(line)
+    try:
+        for line in lines[-1:] if quiet else lines:
+            click.echo(line)
+    except OSError:  # the results are whole, and study.json says how it ended
+        _say_no_more(1)
     return report.state.exit_status
 
 
@@ -286,7 +289,15 @@ def phantom(recipe_file: Path, out: Path) -> int:
 
 
 def _say(line: str) -> None:
-    click.echo(line, err=True)
+    try:
+        click.echo(line, err=True)
+    except OSError:  # a full disk or a closed pipe at the other end must not end a run
+        _say_no_more(2)
+
+
+def _say_no_more(descriptor: int) -> None:
+    """Let nothing more be written to standard output or error, not even what is flushed at the end."""
+    os.dup2(os.open(os.devnull, os.O_WRONLY), descriptor)
 
 
 def _complain(lines: Iterable[str]) -> None:

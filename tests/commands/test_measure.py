@@ -326,6 +326,20 @@ def test_workers_and_parts_give_the_same_bytes(make_study: MakeStudy, tmp_path: 
     assert "parts of 2 and of 3 are mixed" in mixed.complained
 
 
+def test_parts_of_an_edited_study_can_all_be_run_again(make_study: MakeStudy, tmp_path: Path) -> None:
+    """A part that refused because the other is older would lock the folder for both."""
+    study, out = make_study(1), tmp_path / "out"
+    for part in ("1/2", "2/2"):
+        assert study.measure(out, "--part", part).status == 0
+    study.file.write_text(study.file.read_text().replace("[3.0, 12.0]", "[3.0, 13.0]"))
+    assert study.measure(out, "--part", "1/2").status == 0
+    mixed = study.run("gather", out)
+    assert mixed.status == 2
+    assert "differs from 1-of-2.json in configuration" in mixed.complained
+    assert study.measure(out, "--part", "2/2").status == 0
+    assert study.run("gather", out).status == 0
+
+
 def test_two_runs_never_share_a_folder(make_study: MakeStudy, tmp_path: Path) -> None:
     study, out = make_study(1), tmp_path / "out"
     slow = {"SLOW_S": "300", "MARK": str(tmp_path / "slow")}
@@ -422,6 +436,10 @@ def test_a_study_is_measured_in_a_bare_surrounding(make_study: MakeStudy, tmp_pa
     )
     assert run.returncode == 0, run.stderr
     assert states(out) == dict.fromkeys(study.ids, "measured")
+    with Path("/dev/full").open("w") as full:
+        words = [sys.executable, "-m", "vasohm", "measure", study.file, "--out", tmp_path / "other"]
+        assert subprocess.run(words, stdout=full, stderr=full, check=False).returncode == 0
+    assert contents(tmp_path / "other") == contents(out)
 
 
 @pytest.mark.slow

@@ -103,6 +103,16 @@ def read_state(out: Path) -> tuple[StudyState | None, tuple[Part, ...]]:
     return _joined(read, missing), missing
 
 
+def states_before(out: Path) -> dict[str, ImageState]:
+    """Return the last known state of each image; of parts that do not fit together too, since each will run anew."""
+    found: dict[str, ImageState] = {}
+    for path in (out / "study.json", *_part_files(out)):
+        plain = read_json(path)
+        if plain is not None:
+            found |= {image.image_id: image for image in state_from(plain, path.name).images}
+    return found
+
+
 def _joined(read: Mapping[Path, Mapping[str, Any]], missing: tuple[Part, ...]) -> StudyState:
     states = [state_from(plain, f"parts/{path.name}") for path, plain in read.items()]
     sheet = [str(image_id) for image_id in next(iter(read.values()))["sheet"]]

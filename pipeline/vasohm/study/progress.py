@@ -148,13 +148,18 @@ def failures_by_reason(images: Sequence[ImageState]) -> list[str]:
     return [printable(line) for line in lines]
 
 
+def counted(count: int, word: str) -> str:
+    """Return a count with its word in the singular or plural."""
+    return f"{count} {word}" if count == 1 else f"{count} {word}s"
+
+
 def _counts_line(state: StudyState, current: int) -> str:
     counts = state.counts
     words = [f"{counts[MEASURED]} measured", f"{counts[EMPTY]} empty", f"{counts[FAILED]} failed"]
     if counts[PENDING]:
         words.append(f"{counts[PENDING]} not measured yet")
     skipped = f" ({current} were current)" if current else ""
-    return f"{sum(counts.values())} images: {', '.join(words)}{skipped}; exit status {state.exit_status}"
+    return f"{counted(sum(counts.values()), 'image')}: {', '.join(words)}{skipped}; exit status {state.exit_status}"
 
 
 def _worth_a_line(event: Event) -> str:

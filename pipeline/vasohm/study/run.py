@@ -20,7 +20,7 @@ from vasohm.study.interrupt import Interrupts, StopNowError
 from vasohm.study.journal import Journal
 from vasohm.study.marker import hold_marker
 from vasohm.study.outcome import EMPTY, FAILED, MEASURED, PENDING, Outcome, Task
-from vasohm.study.parts import Part, read_state, remove_parts, write_part
+from vasohm.study.parts import Part, remove_parts, states_before, write_part
 from vasohm.study.pool import SupervisedPool
 from vasohm.study.state import ImageState, StudyState
 from vasohm.study.worker import measure_and_write
@@ -70,7 +70,7 @@ def decide(study: Study, request: RunRequest) -> Iterator[Decision]:
     if request.out.is_dir():
         if not request.force:
             refuse_other_study(request.out, study.name)
-        before = _states_before(request.out)
+        before = states_before(request.out)
     versions = versions_used(study.settings)
     for source in selected:
         name = source.image_id
@@ -135,7 +135,7 @@ class _Run:
         self._journal = journal
         self._interrupts = interrupts
         self._versions = versions_used(study.settings)
-        self._before = _states_before(request.out)
+        self._before = states_before(request.out)
         self._ended: dict[str, ImageState] = {}
         self._current = 0
         self._io_failures = 0
@@ -293,8 +293,3 @@ def _reason(
     if not reason and not record_is_whole(folder):
         return "its files are not as they were written"
     return reason
-
-
-def _states_before(out: Path) -> dict[str, ImageState]:
-    state, _ = read_state(out)
-    return {} if state is None else {image.image_id: image for image in state.images}

@@ -8,6 +8,7 @@ import time
 import traceback
 import warnings
 from collections.abc import Iterable
+from contextlib import suppress
 from pathlib import Path
 from typing import Any
 
@@ -127,8 +128,11 @@ def _free(folder: Path) -> str:
 
 def _hidden(text: str, folders: Iterable[Path]) -> str:
     """Take the paths of this machine out of a text that will be passed on."""
-    for folder in sorted({*folders, Path.cwd(), Path.home()}, key=lambda path: -len(str(path))):
-        if len(folder.parts) > 1:
+    known = {str(folder) for folder in folders} | {os.path.expanduser("~")}  # noqa: PTH111  Path.home() may raise
+    with suppress(FileNotFoundError):  # the working folder may be gone
+        known.add(str(Path.cwd()))
+    for folder in sorted(known, key=len, reverse=True):
+        if len(folder) > 1:
             text = text.replace(f"{folder}{os.sep}", "")
     return text
 
