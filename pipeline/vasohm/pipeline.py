@@ -50,13 +50,18 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     stage("radius")
     measured = measure_radii(graph, prepared, settings.radius)
     stage("flow")
-    own = source.hematocrit is not None
-    blood = replace(settings.blood, hematocrit=source.hematocrit) if own else settings.blood
+    blood = settings.blood
+    if source.hematocrit is not None:
+        blood = replace(blood, hematocrit=source.hematocrit)
     terminals = place_terminals(measured, source.terminals, settings.network)
     flow = solve_flow(measured, terminals, blood)
     scenarios = run_scenarios(measured, terminals, blood, settings.scenarios)
     stage("tables")
     shape_of = describe_shape(measured, mask.pixels, prepared.fov)
     findings = Findings(prepared, mask, measured, flow, shape_of, scenarios)
-    disc = source.disc and DiscPlace(source.disc.x_px, source.disc.y_px, source.disc.radius_px, "sheet")
-    return tabulate(source.image_id, source.design, findings, disc)
+    return tabulate(source.image_id, source.design, findings, _told_disc(source))
+
+
+def _told_disc(source: ImageSource) -> DiscPlace | None:
+    disc = source.disc
+    return None if disc is None else DiscPlace(disc.x_px, disc.y_px, disc.radius_px, "sheet")

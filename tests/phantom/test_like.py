@@ -30,7 +30,15 @@ def results(folder, *, polarity="dark", loops=0, **image):
     configuration = {key: {"value": value, "source": "study"} for key, value in study.items()}
     (folder / "study.json").write_text(json.dumps({"configuration": configuration}))
     (one / "record.json").write_text("{}")
-    row = {"width_px": 200, "height_px": 180, "pixel_size_um": 2.0, "profile": "slab", "blur_px": 1.3, "noise": 0.02, "contrast": 0.3}
+    row = {
+        "width_px": 200,
+        "height_px": 180,
+        "pixel_size_um": 2.0,
+        "profile": "slab",
+        "blur_px": 1.3,
+        "noise": 0.02,
+        "contrast": 0.3,
+    }
     pd.DataFrame([{"image_id": "007", **row, **image}]).to_csv(one / "image.csv", index=False)
     radius = np.geomspace(4.0, 20.0, 30)
     segments = {"radius_mean_um": radius, "radius_sd_um": 0.06 * radius, "length_um": 12 * radius}

@@ -97,15 +97,27 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
     random_se, shared, causes = _with_plasma_layer(fit, kept, radius_um, settings)
     flags = fit.point_flags[kept]
     return MeasuredGraph(
-        graph=cut, pixel_size_um=pixel, pixel_size_rel_se=prepared.pixel_size_se_um / pixel, s_um=s_px * pixel,
-        radius_um=radius_um, ln_radius_random_se=random_se, shared=shared, shared_causes=causes,
-        covariance=_KeptCovariance(fit.covariance, kept, 1 - settings.plasma_layer_um / radius_um), noise_sign=fit.noise_sign, contrast=fit.contrast[kept],
-        point_flags=flags, length_um=length_px * pixel,
-        length_random_se_um=np.full(cut.n_segments, NODE_SE_PX * np.sqrt(2) * pixel), chord_um=chord_px * pixel,
+        graph=cut,
+        pixel_size_um=pixel,
+        pixel_size_rel_se=prepared.pixel_size_se_um / pixel,
+        s_um=s_px * pixel,
+        radius_um=radius_um,
+        ln_radius_random_se=random_se,
+        shared=shared,
+        shared_causes=causes,
+        covariance=_KeptCovariance(fit.covariance, kept, 1 - settings.plasma_layer_um / radius_um),
+        noise_sign=fit.noise_sign,
+        contrast=fit.contrast[kept],
+        point_flags=flags,
+        length_um=length_px * pixel,
+        length_random_se_um=np.full(cut.n_segments, NODE_SE_PX * np.sqrt(2) * pixel),
+        chord_um=chord_px * pixel,
         segment_flags=_segment_flags(cut, flags, length_px, radius_um / pixel, random_se),
-        blur_px=fit.blur_px, profile=fit.profile,
-        image_contrast=float(np.median(fit.contrast[kept])) if kept.any() else np.nan, flags=fit.flags | _focus(fit, settings, pixel),
-    )  # fmt: skip
+        blur_px=fit.blur_px,
+        profile=fit.profile,
+        image_contrast=float(np.median(fit.contrast[kept])) if kept.any() else np.nan,
+        flags=fit.flags | _focus(fit, settings, pixel),
+    )
 
 
 def _fit(graph: VesselGraph, prepared: PreparedImage, settings: RadiusSettings) -> LumenFit:
