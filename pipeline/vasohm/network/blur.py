@@ -19,9 +19,10 @@ from vasohm.network.shared import (
 )
 
 START_PX = (0.65, 1.0, 1.6, 2.6, 4.2)  # blurs tried first
-FIRST_ROUNDS, ROUNDS = 3, 12
+FIRST_ROUNDS, ROUNDS = 3, 10
 HOPELESS = 40.0  # difference of log likelihood after the first rounds from which a family is not followed further
-LONGEST_STEP, SMALLEST_SHRINK = 0.5, 0.02
+LONGEST_STEP, SMALLEST_SHRINK = 0.5, 0.05
+NOTHING_GAINED = 0.02  # of log likelihood by a short step
 SETTLED = 3e-3  # of ln blur
 SE_FACTOR = 1.3  # the curvature of chi^2 states 10 to 30 % too little (measured on phantoms)
 DECISIVE = 6.0  # difference of log likelihood between slab and cylinder from which the image has told its family
@@ -173,8 +174,9 @@ def _refine(case: _Case, start: FloatArray, optics: Optics, started: ProfileTabl
             if shrink < SMALLEST_SHRINK:
                 break
             continue
+        gained = fit.cost - trial.cost
         fit, shrink = trial, min(4 * shrink, 1.0)
-        if np.all(np.abs(step) < SETTLED):
+        if (gained < NOTHING_GAINED and np.all(np.abs(step) < 10 * SETTLED)) or np.all(np.abs(step) < SETTLED):
             break
     return fit
 

@@ -24,8 +24,8 @@ CONVERGED = 2e-3  # of ln r; the next Gauss-Newton step would be far smaller
 class Observed:
     """Strips of some points, their weights, and what other vessels lay on them.
 
-    `weights` hold 1 / variance x usability x length of centreline / noise factor; `row_scale` (n_points,) is the
-    part of them that is not 1 / variance.
+    `weights` hold 1 / stated variance x usability x length of centreline / noise factor. `row_scale` (n_points,) is
+    weight times true variance of a sample: 0 where a strip is not usable, less than 1 where samples share noise.
     """
 
     offsets: IntArray  # (n_segments + 1,)
@@ -117,17 +117,23 @@ def _add_reflex(table: ProfileTable, x: Float32Array, theta: FloatArray, out: Fl
     out[:, 1 + REFLEX] = streak
 
 
-def neighbour_light(table: ProfileTable, overlaps: Overlaps, theta: FloatArray) -> FloatArray:
-    """Return the light that other vessels throw on the samples of `overlaps`."""
+def without_neighbours(
+    table: ProfileTable, strips: Strips, overlaps: Overlaps, theta: FloatArray, active: BoolArray | None = None
+) -> Float32Array:
+    """Return the strips less the light that other vessels throw on their samples; those not `active` may keep it."""
+    if active is not None:
+        overlaps = overlaps.select(active[strips.points[overlaps.sample // strips.y.shape[1]]])
     if len(overlaps.sample) == 0:
-        return np.zeros(0)
+        return strips.y
     who = theta[overlaps.point]
     near = np.clip(overlaps.distance_px - who[:, OFFSET], 1.0 - table.half_px, table.half_px - 1.0)
     light = np.empty(len(near))
     for low in range(0, len(near), 4 * CHUNK):
         part = slice(low, low + 4 * CHUNK)
         light[part] = tube_strips(table, 0, who[part, LN_R], who[part, LN_C], -near[part])[:, 0, 0]
-    return light
+    y = strips.y.copy()
+    np.subtract.at(y.reshape(-1), overlaps.sample, light.astype(np.float32))
+    return y
 
 
 def normal_equations(
@@ -137,13 +143,10 @@ def normal_equations(
     n, n_unknowns = theta.shape
     normal = Normal(np.zeros((n, n_unknowns, n_unknowns)), np.zeros((n, n_unknowns)), np.zeros(n))
     for strips, overlaps, weights in zip(observed.strips, observed.overlaps, observed.weights, strict=True):
-        y = strips.y
-        if len(overlaps.sample):
-            y = y.copy()
-            np.subtract.at(y.reshape(-1), overlaps.sample, neighbour_light(table, overlaps, theta).astype(np.float32))
         rows = np.arange(len(strips.points))
         if active is not None:
             rows = rows[active[strips.points]]
+        y = without_neighbours(table, strips, overlaps, theta, active)
         for low in range(0, len(rows), CHUNK):
             part = rows[low : low + CHUNK]
             points = strips.points[part]
@@ -265,7 +268,8 @@ def fit_joint(
             break
         extra = damping[segment[points], None] * np.einsum("nii->ni", best.matrix[points])
         factored = factor(best.matrix[points], diagonals[:, points], priors.hold[points] + extra)
-        step = np.clip(solve(factored, (best.gradient + pull)[points]), -limit, limit)
+        step = solve(factored, (best.gradient + pull)[points])
+        step /= _overlong(step / limit, segment[points], observed.n_segments)[segment[points], None]
         trial = theta.copy()
         trial[points] += step
         found = normal_equations(observed, table, trial, running[segment])
@@ -284,6 +288,16 @@ def fit_joint(
         damping = np.where(running & ~better, np.maximum(damping * 10, 1e-2), damping / 10)
         running &= ~(better & (largest < CONVERGED)) & (damping < 1e6)
     return theta, best
+
+
+def _overlong(step: FloatArray, segment: IntArray, n_segments: int) -> FloatArray:
+    """How many times each segment's longest step (in units of the limit) is too long; 1 where it is not.
+
+    A segment's step is shortened as a whole: clipped point by point it would tear the smoothness it has to keep.
+    """
+    longest = np.ones(n_segments)
+    np.maximum.at(longest, segment, np.abs(step).max(axis=1))
+    return longest
 
 
 def with_stiffness(priors: Priors, ln_stiffness: FloatArray) -> Priors:

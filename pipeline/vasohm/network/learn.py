@@ -21,8 +21,9 @@ from vasohm.network.jointfit import (
     Observed,
     normal_equations,
 )
-from vasohm.network.observe import Expected, Scene, make_priors, observe
-from vasohm.network.pilot import Guess, segment_quantile
+from vasohm.network.observe import Scene, observe
+from vasohm.network.pilot import Guess, bridge, segment_quantile
+from vasohm.network.priors import Expected, make_priors
 from vasohm.network.profiles import (
     FAMILIES,
     Optics,
@@ -48,7 +49,7 @@ LOWEST_REFLEX = 0.05  # median of wide segments from which it is one
 REFLEX_SPREAD, SMALLEST_REFLEX_SPREAD = 0.5, 0.03  # sd: of a vessel that tells itself, and of those that do not
 NO_REFLEX = 1e-3
 FIRST_REFLEX = 0.1  # height from which a reflex is searched
-REFLEX_GAIN = 2.0  # of log likelihood a wide segment from which reflexes are believed; noise alone gives about 0.5
+REFLEX_GAIN = 4.0  # of log likelihood a wide segment from which reflexes are believed; noise alone gives about 0.5
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,7 +91,7 @@ def learn_image(scene: Scene, guess: Guess, table: ProfileTable, settings: TubeS
     wide = 1.5 * float(radius[segments].max())
     table = profile_table(table.optics, wide, int(1.2 * (wide + 3 * max(blur, 3.0) + 3)) + 6)
     observed, points = observe(scene, segments, first_unknowns(guess), table, alone=True)
-    theta = first_unknowns(guess)[points]
+    theta = bridge(first_unknowns(guess)[points], observed.row_scale > 0, observed.segment)
     told, reflex, flags = _tell_optics(observed, table, theta, settings)
     table = table_like(table, told.optics)
     none = np.zeros(len(segments))

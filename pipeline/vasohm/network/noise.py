@@ -1,17 +1,16 @@
-"""Noise of neighbouring pixels is not independent: how much it widens the scatter of a fitted radius."""
+"""Noise of neighbouring pixels is not independent: its covariance from pixels on which no vessel lies."""
 
 import numpy as np
 from scipy.fft import irfft2, next_fast_len, rfft2
 from scipy.ndimage import binary_dilation, uniform_filter
 
 from vasohm.arrays import BoolArray, Float32Array, FloatArray
-from vasohm.network.profiles import ProfileTable, ln_area, tube_strips
 
-LAGS_PX = 8  # beyond these nothing is looked for
-BACKGROUND_PX = 25  # slower changes are background: level and slope of each strip take them up
+LAGS_PX = 20  # beyond these nothing is looked for
+BACKGROUND_PX = 81  # slower changes are background: level and slope of each strip take them up
 LARGEST_TILE_PX = 1024
 FEWEST_PIXELS = 2000
-OUTLIER, ODD_PX = 4.5, 3  # standard deviations of a pixel, and of means over so many px: vessels nobody outlined
+OUTLIER, ODD_PX = 4.5, 3  # standard deviations of a pixel from which it and so many px around it are left out
 MEDIAN_OF_NORMAL = 0.6745  # median absolute value of a standard normal number
 
 
@@ -41,8 +40,7 @@ def noise_correlation(signal: Float32Array, noise_sd: Float32Array, free: BoolAr
     own = 1.0 / (1.0 - 1.0 / np.maximum(share * BACKGROUND_PX**2, 2.0))
     z = np.where(inside, (value - level) * np.sqrt(own) / np.where(inside, noise_sd[tile], 1.0), 0.0)
     typical = float(np.median(np.abs(z[inside]))) / MEDIAN_OF_NORMAL
-    odd = uniform_filter(np.where(inside, z, 0.0), ODD_PX) > OUTLIER / ODD_PX * typical
-    inside &= ~binary_dilation(odd | (np.abs(z) > OUTLIER * typical), iterations=ODD_PX)
+    inside &= ~binary_dilation(np.abs(z) > OUTLIER * typical, iterations=ODD_PX)
     if inside.sum() < FEWEST_PIXELS:
         return white
     return _radial_covariance(np.where(inside, z, 0.0), inside)
@@ -81,39 +79,3 @@ def _radial_covariance(z: FloatArray, inside: BoolArray) -> FloatArray:
     if len(empty):
         covariance[empty[0] :] = 0.0
     return covariance
-
-
-def noise_factor(table: ProfileTable, covariance: FloatArray, ln_r: FloatArray) -> FloatArray:
-    """Variance of a radius fitted under this noise over that under independent noise of the stated size.
-
-    F(r) = sum over lags along and across of covariance x a(across) / a(0), a the autocorrelation of the influence
-    that each sample of a strip has on ln r.
-    """
-    if not covariance[1:].any():
-        return np.full(ln_r.shape, covariance[0])
-    s = table.optics.s_px
-    grid = np.linspace(np.log(0.3 * s), np.log(min(table.radius_max_px, max(40.0 * s, 2.0))), 14)
-    lag = np.arange(-LAGS_PX, LAGS_PX + 1)
-    squared = lag[:, None] ** 2 + lag**2
-    pair = np.where(squared <= LAGS_PX**2, covariance[np.minimum(squared, LAGS_PX**2)], 0.0).sum(axis=0)
-    factor = [_influence_autocorrelation(table, l) @ pair for l in grid]
-    return np.interp(ln_r, grid, np.maximum(factor, 0.2 * covariance[0]))
-
-
-def _influence_autocorrelation(table: ProfileTable, l: float) -> FloatArray:
-    """a(lag) / a(0) for lags -LAGS_PX..LAGS_PX at one ln r."""
-    s = table.optics.s_px
-    half = min(int(np.ceil(np.exp(l) + 3 * s + 3)), table.half_px - 1)
-    ln_k, _ = ln_area(table.optics, np.array([l]))
-    strip = tube_strips(table, half, np.array([l]), -ln_k, np.zeros(1))[0].astype(np.float64)
-    x = np.arange(-half, half + 1.0)
-    columns = [strip[1], strip[2], np.ones_like(x), x]
-    if np.exp(l) > 1.5 * s:  # below, the contrast is known from other vessels
-        columns.append(strip[0])
-    influence = np.linalg.pinv(np.column_stack(columns))[0]
-    full = np.correlate(influence, influence, "full")
-    middle = len(influence) - 1
-    out = np.zeros(2 * LAGS_PX + 1)
-    reach = min(LAGS_PX, middle)
-    out[LAGS_PX - reach : LAGS_PX + reach + 1] = full[middle - reach : middle + reach + 1] / full[middle]
-    return out

@@ -4,7 +4,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from vasohm.arrays import AnyArray, FloatArray, IntArray, freeze
+from vasohm.arrays import AnyArray, BoolArray, FloatArray, IntArray, freeze
 from vasohm.network.profiles import ProfileTable, ln_area, tube_strips
 from vasohm.network.strips import CHUNK, Frame, Owners, Picture, TubeLines, find_overlaps, sample_strips
 
@@ -135,12 +135,32 @@ def _spread(found: FloatArray, table: ProfileTable, lines: TubeLines, frame: Fra
         last = np.searchsorted(own, own, side="right") - 1
         around = np.clip(np.arange(len(at))[:, None] + np.arange(-2, 3), first[:, None], last[:, None])
         smooth = np.median(found[:, at][:, around], axis=2)
-        # beyond its outermost guesses a segment keeps their values: stretch the axis so that segments do not mix
-        key = np.arange(n) + (n + 10.0) * frame.segment
-        ends = np.searchsorted(own, frame.segment, side="left"), np.searchsorted(own, frame.segment, side="right")
-        some = ends[1] > ends[0]
-        place = np.clip(key[some], key[at[ends[0][some]]], key[at[ends[1][some] - 1]])
-        for target, values in zip((ln_r, area, offset, level, score), smooth, strict=True):
-            target[some] = np.interp(place, key[at], values)
+        some, drawn = draw_along(smooth, at, frame.segment)
+        for target, values in zip((ln_r, area, offset, level, score), drawn, strict=True):
+            target[some] = values
     contrast = area - ln_area(table.optics, ln_r)[0]
     return Guess(ln_r, contrast, area, offset, level, score)
+
+
+def draw_along(values: FloatArray, at: IntArray, segment: IntArray) -> tuple[BoolArray, FloatArray]:
+    """Draw values (k, n_known) at points `at` out linearly along each segment, constant beyond its outermost.
+
+    Returns
+    -------
+    (n_points,) whether a point's segment has any value, and (k, n_such_points).
+    """
+    own = segment[at]
+    first, last = np.searchsorted(own, segment, side="left"), np.searchsorted(own, segment, side="right")
+    some = last > first
+    key = np.arange(len(segment)) + (len(segment) + 10.0) * segment  # far apart, so that segments do not mix
+    place = np.clip(key[some], key[at[first[some]]], key[at[last[some] - 1]])
+    return some, np.array([np.interp(place, key[at], row) for row in values]).reshape(len(values), len(place))
+
+
+def bridge(theta: FloatArray, usable: BoolArray, segment: IntArray) -> FloatArray:
+    """Give points whose strips are not usable what their neighbours along the segment start from."""
+    out = theta.copy()
+    if usable.any():
+        some, drawn = draw_along(theta[usable].T, np.flatnonzero(usable), segment)
+        out[some] = drawn.T
+    return out

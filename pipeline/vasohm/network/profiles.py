@@ -234,26 +234,32 @@ def tube_strips(
     radial, radial_slope = _hermite(place - xi_low, XI_STEP)
     across, across_slope = _hermite(fine - phase, 1.0 / PHASES)
     ln_k, dln_k = ln_area(table.optics, ln_r)
-    area = np.exp(ln_k + ln_contrast)[:, None, None]
-    value = area * _outer(radial, across)
-    by_ln_r = area * (rho2 / root)[:, None, None] * _outer(radial_slope, across) + dln_k[:, None, None] * value
-    weights = np.concatenate([value, by_ln_r, -area * _outer(radial, across_slope)], axis=1)
-    return np.matmul(weights.astype(np.float32), _corners(table, half_width, xi_low, phase, whole.astype(np.int64)))
+    area = np.exp(ln_k + ln_contrast)
+    weights = np.empty((3, 16, len(area)))
+    weights[0] = _outer(area * radial, across)
+    weights[1] = _outer(area * (rho2 / root) * radial_slope, across)
+    weights[1] += dln_k * weights[0]
+    weights[2] = _outer(-area * radial, across_slope)
+    rows = _corners(table, half_width, xi_low, phase, whole.astype(np.int64))
+    return np.matmul(np.ascontiguousarray(weights.transpose(2, 0, 1), np.float32), rows)
 
 
 def _hermite(t: FloatArray, step: float) -> tuple[FloatArray, FloatArray]:
-    """Weights (n, 2 ends, value and slope) of the cubic through two ends, and of its derivative."""
+    """Weights (4, n): value and slope at one end, then at the other, of a cubic and of its derivative."""
     u = 1.0 - t
-    value = np.stack([(1 + 2 * t) * u**2, step * t * u**2, t**2 * (1 + 2 * u), -step * t**2 * u], axis=1)
-    slope = np.stack([-6 * t * u / step, u * (u - 2 * t), 6 * t * u / step, t * (t - 2 * u)], axis=1)
-    return value.reshape(-1, 2, 2), slope.reshape(-1, 2, 2)
+    value = np.stack([(1 + 2 * t) * u**2, step * t * u**2, t**2 * (1 + 2 * u), -step * t**2 * u])
+    slope = np.stack([-6 * t * u / step, u * (u - 2 * t), 6 * t * u / step, t * (t - 2 * u)])
+    return value, slope
 
 
 def _outer(radial: FloatArray, across: FloatArray) -> FloatArray:
-    """Weights (n, 1, 16) in the order (end in xi, end in x, channel)."""
-    # channels are (value, by xi, by x, by both): the x part varies slower
-    both = radial[:, :, None, None, :] * across[:, None, :, :, None]
-    return both.reshape(-1, 1, 16)
+    """Weights (16, n) in the order (end in xi, end in x, channel)."""
+    out = np.empty((16, radial.shape[1]))
+    for k in range(16):
+        # channels are (value, by xi, by x, by both): the x part varies slower
+        xi_end, x_end, by_x, by_xi = k >> 3, (k >> 2) & 1, (k >> 1) & 1, k & 1
+        np.multiply(radial[2 * xi_end + by_xi], across[2 * x_end + by_x], out=out[k])
+    return out
 
 
 def _corners(table: ProfileTable, half_width: int, xi_low: AnyArray, phase: AnyArray, start: AnyArray) -> Float32Array:

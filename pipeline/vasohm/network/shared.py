@@ -11,10 +11,10 @@ from vasohm.network.jointfit import (
     Priors,
     factor,
     model_strips,
-    neighbour_light,
     prior_pull,
     robust_weights,
     solve,
+    without_neighbours,
 )
 from vasohm.network.profiles import Optics, ProfileTable, profile_table
 from vasohm.network.strips import CHUNK
@@ -61,10 +61,7 @@ def optics_response(observed: Observed, table: ProfileTable, theta: FloatArray, 
     gradient, curvature = np.zeros((n, k)), np.zeros((n, k, k))
     mixed = np.zeros((n, n_unknowns, k))
     for strips, overlaps, weights in zip(observed.strips, observed.overlaps, observed.weights, strict=True):
-        y = strips.y
-        if len(overlaps.sample):
-            y = y.copy()
-            np.subtract.at(y.reshape(-1), overlaps.sample, neighbour_light(table, overlaps, theta).astype(np.float32))
+        y = without_neighbours(table, strips, overlaps, theta)
         for low in range(0, len(strips.points), CHUNK):
             points = strips.points[low : low + CHUNK]
             model = model_strips(table, strips.half_width, theta[points])

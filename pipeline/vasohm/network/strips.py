@@ -100,6 +100,10 @@ class Overlaps:
     def __post_init__(self) -> None:
         freeze(self)
 
+    def select(self, keep: BoolArray) -> "Overlaps":
+        """Return those that are kept."""
+        return Overlaps(self.sample[keep], self.point[keep], self.distance_px[keep], self.joined[keep])
+
     @staticmethod
     def nothing() -> "Overlaps":
         return Overlaps(np.zeros(0, np.int64), np.zeros(0, np.int64), np.zeros(0), np.zeros(0, np.bool_))

@@ -16,6 +16,7 @@ from vasohm.network.contrast import (
     UNKNOWN_SPREAD,
     segment_contrasts,
 )
+from vasohm.network.correlated import noise_factor
 from vasohm.network.jointfit import (
     LN_C,
     LN_R,
@@ -31,6 +32,7 @@ from vasohm.network.jointfit import (
 from vasohm.network.learn import (
     ASSUMED_PSF_PX,
     ASSUMED_REL_SE,
+    FREE_SPREAD,
     PROFILE_SE,
     RESOLVED_BLURS,
     ImageKnowledge,
@@ -38,10 +40,11 @@ from vasohm.network.learn import (
     first_unknowns,
     learn_image,
 )
-from vasohm.network.noise import noise_correlation, noise_factor
-from vasohm.network.observe import Expected, Scene, make_priors, observe
-from vasohm.network.pilot import Guess, guess_radii, segment_quantile
+from vasohm.network.noise import noise_correlation
+from vasohm.network.observe import Scene, observe
+from vasohm.network.pilot import Guess, bridge, guess_radii, segment_quantile
 from vasohm.network.posterior import BandedCovariance, choose_stiffness, evidence, point_variance
+from vasohm.network.priors import Expected, make_priors
 from vasohm.network.profiles import (
     Optics,
     ProfileTable,
@@ -57,6 +60,7 @@ from vasohm.network.strips import TubeLines, make_frame, make_picture, paint_own
 BLURRED_SIGNS = (5.0, 0.4)  # out of focus: own ln blur above the picture's by so many standard errors, and by so much
 UNRESOLVED_SE = 0.25  # of ln r with the contrast free
 FAINT_CNR = 3.0
+USUAL_CNR = 8.0  # height of vessels over the noise, before any is measured
 NEIGHBOUR_BLURS = 3.5  # beyond its rim a vessel's light is no longer reckoned with
 
 
@@ -122,9 +126,16 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
     known = learn_image(scene, guess, table, settings)
     theta = _start(scene, _guess(scene, known.table), known)
     reach = np.exp(theta[:, LN_R]) + NEIGHBOUR_BLURS * known.table.optics.s_px
-    scene = replace(scene, owners=paint_owners(scene.frame, reach, scene.shape))
+    noise = noise_factor(
+        known.table,
+        scene.covariance,
+        _typical_cnr(scene, theta, known.table.optics),
+        float(np.median(known.contrast.spread)),
+    )
+    scene = replace(scene, owners=paint_owners(scene.frame, reach, scene.shape), noise=noise)
     everything = np.arange(lines.n_segments)
     observed, _ = observe(scene, everything, theta, known.table, alone=False)
+    theta = bridge(theta, observed.row_scale > 0, observed.segment)
     priors = _priors(observed, known, theta)
     theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=8)
     observed, _ = observe(scene, everything, theta, known.table, alone=False)
@@ -152,7 +163,9 @@ def _open(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> tuple[S
     picture = make_picture(image.signal, image.noise_sd, image.valid, image.clipped)
     owners = paint_owners(frame, 1.5 * lines.seed_radius_px + 3 * blur, shape)
     free = (owners[0].reshape(shape) < 0) & (picture.precision > 0)
-    return Scene(picture, lines, frame, owners, noise_correlation(image.signal, image.noise_sd, free)), table
+    covariance = noise_correlation(image.signal, image.noise_sd, free)
+    noise = noise_factor(table, covariance, USUAL_CNR * float(np.sqrt(covariance[0])), FREE_SPREAD)
+    return Scene(picture, lines, frame, owners, covariance, noise), table
 
 
 def _guess(scene: Scene, table: ProfileTable) -> Guess:
@@ -173,6 +186,14 @@ def _start(scene: Scene, guess: Guess, known: ImageKnowledge) -> FloatArray:
     if known.reflex:
         theta = np.column_stack([theta, np.full(len(theta), known.reflex[0])])
     return theta
+
+
+def _typical_cnr(scene: Scene, theta: FloatArray, optics: Optics) -> float:
+    height, width = scene.shape
+    row = np.clip(np.rint(scene.frame.y).astype(np.int64), 0, height - 1)
+    column = np.clip(np.rint(scene.frame.x).astype(np.int64), 0, width - 1)
+    cnr = np.exp(theta[:, LN_C] + ln_height(optics, theta[:, LN_R])) * np.sqrt(scene.picture.precision[row, column])
+    return float(np.clip(np.median(cnr), 1.0, 1e3))
 
 
 def _priors(observed: Observed, known: ImageKnowledge, theta: FloatArray) -> Priors:
@@ -196,7 +217,7 @@ def _report(scene: Scene, observed: Observed, known: ImageKnowledge, fit: tuple[
     shared, causes = _shared_columns(observed, known, factored, priors, marginal)
     psf = optical_blur_px(optics.s_px)
     blur_se = float(np.sqrt(known.covariance[0, 0])) * optics.s_px**2 / max(psf, 0.3)
-    factors = noise_factor(known.table, scene.covariance, theta[:, LN_R])
+    factors = scene.noise.at(theta[:, LN_R])
     return TubeFit(
         theta[:, LN_R].copy(),
         np.sqrt(point_variance(observed, priors, normal)),
