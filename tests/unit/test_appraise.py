@@ -286,8 +286,7 @@ def test_smallest_resolved_radius() -> None:
         4.5: "resolved",
         9.0: "biased",
     }
-    third_of_an_octave = 2 ** (1 / 3)
-    assert 3 / third_of_an_octave < appraisal.summary["smallest_resolved_radius_px"] <= 3
+    assert appraisal.summary["smallest_resolved_radius_px"] == pytest.approx(3, rel=ROUNDING)
 
 
 def test_places_pair_one_to_one_within_5_px() -> None:

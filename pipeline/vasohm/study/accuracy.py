@@ -184,6 +184,7 @@ def _resolution(points: pd.DataFrame) -> pd.DataFrame:
             {
                 "radius_from_px": FINE_EDGES_PX[fine - 1],
                 "radius_to_px": FINE_EDGES_PX[fine],
+                "radius_least_px": _column(here, "radius_px").min() if len(here) else np.nan,
                 "radius_px": _median(_column(here, "radius_px")),
                 **figures,
                 "ln_radius_q16": low,
@@ -195,7 +196,7 @@ def _resolution(points: pd.DataFrame) -> pd.DataFrame:
 
 
 def smallest_resolved_px(resolution: pd.DataFrame) -> float:
-    """Radius from which on vessels are resolved: the least bin that is, as is the next wider one that can be told.
+    """Radius from which on vessels are resolved: the least of a bin that is, as is the next wider one that can be told.
 
     Returns
     -------
@@ -205,7 +206,7 @@ def smallest_resolved_px(resolution: pd.DataFrame) -> float:
     told = resolution[resolution["verdict"] != "too few"]
     resolved = (told["verdict"] == "resolved").to_numpy()
     steady = resolved & np.append(resolved[1:], True)
-    return float(told["radius_from_px"].to_numpy()[np.argmax(steady)]) if steady.any() else np.nan
+    return float(told["radius_least_px"].to_numpy()[np.argmax(steady)]) if steady.any() else np.nan
 
 
 def _image_row(image: Deviations) -> dict[str, Any]:

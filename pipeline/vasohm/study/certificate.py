@@ -103,9 +103,10 @@ def _resistance_lines(summary: Mapping[str, Any]) -> list[str]:
         for name, word in words.items():
             if name in part:
                 ratio = part[name]
+                spread = f", spread x/÷ {_factor(ratio['ln_sd'])} (without outliers {_factor(ratio['ln_scatter'])})"
                 lines.append(
-                    f"  {word} over true: geometric mean {ratio['geometric_mean']:.3g}, median {ratio['median']:.3g}, "
-                    f"spread x/÷ {_factor(ratio['ln_sd'])} (without outliers {_factor(ratio['ln_scatter'])})"
+                    f"  {word} over true: geometric mean {ratio['geometric_mean']:.3g}, median {ratio['median']:.3g}"
+                    + (spread if part["n_compared"] > 1 else "")
                 )
         lines.append(
             f"  resistance: error/stated {_figure(part['ln_resistance_rms_z'])}, inside the stated 95 % interval "
