@@ -244,7 +244,7 @@ def _summary(
         "smallest_resolved_radius_px": smallest,
         "smallest_resolved_radius_um": smallest * sizes_um[0] if len(set(sizes_um)) == 1 else np.nan,
         "length": {name: float(total[name]) for name in names},
-        "radius": {name: float(total[name]) for name in _radius_figures(all_images.points)},
+        "radius": _radius_figures(all_images.points),
         "segments": _ratios(all_images.segments, ("length_ratio", "radius_hydraulic_ratio", "resistance_ratio")),
         "networks": _ratios(all_images.networks, ("resistance_ratio",)),
         **{name: _part(counts | _scores(counts, name), name) for name in ("branchings", "crossings")},
