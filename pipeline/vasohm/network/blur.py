@@ -18,7 +18,7 @@ from vasohm.network.shared import (
     table_like,
 )
 
-START_PX = (0.65, 1.0, 1.6, 2.6, 4.2)  # blurs tried first
+START_PX = (0.75, 1.3, 2.2, 3.8)  # blurs tried first
 FIRST_ROUNDS, ROUNDS = 3, 10
 HOPELESS = 40.0  # difference of log likelihood after the first rounds from which a family is not followed further
 LONGEST_STEP, SMALLEST_SHRINK = 0.5, 0.05
@@ -124,15 +124,16 @@ def estimate_optics(
 
 def _first(case: _Case, start: FloatArray, family: str) -> _Fit:
     """Try the blurs to start from, then take a few Newton steps from the best."""
-    costs, blurs = [], case.request.start_px
+    tried, blurs = [], case.request.start_px
     if len(blurs) == 1:
         return _refine(case, start, Optics(family, 0.0, blurs[0]), case.table, FIRST_ROUNDS)
     for blur in blurs:
         here = table_like(case.table, Optics(family, 0.0, blur))
-        begin = _same_area(start, case.table, here)
-        theta, normal = fit_joint(case.observed, case.priors, here, begin, max_steps=3)
-        costs.append(total_cost(case.observed, case.priors, theta, normal))
-    return _refine(case, start, Optics(family, 0.0, blurs[int(np.argmin(costs))]), case.table, FIRST_ROUNDS)
+        theta, normal = fit_joint(case.observed, case.priors, here, _same_area(start, case.table, here), max_steps=3)
+        tried.append((total_cost(case.observed, case.priors, theta, normal), blur, theta))
+    _, blur, theta = min(tried, key=lambda one: one[0])
+    optics = Optics(family, 0.0, blur)
+    return _refine(case, theta, optics, table_like(case.table, optics), FIRST_ROUNDS)
 
 
 def _same_area(theta: FloatArray, old: ProfileTable, new: ProfileTable) -> FloatArray:

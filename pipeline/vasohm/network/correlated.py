@@ -43,7 +43,7 @@ def noise_factor(table: ProfileTable, covariance: FloatArray, cnr: float, contra
     ----------
     covariance : of pixels by squared distance, in units of the stated variance.
     cnr : height of a typical vessel over the stated standard deviation.
-    contrast_sd : of the prior of ln contrast: noise on the scale of whole vessels hurts the more, the better it is known.
+    contrast_sd : of the prior of ln contrast: the better it is known, the more hurts noise on the scale of a vessel.
 
     Notes
     -----

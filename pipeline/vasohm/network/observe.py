@@ -7,6 +7,7 @@ import numpy as np
 from vasohm.arrays import FloatArray, IntArray, freeze
 from vasohm.network.correlated import NoiseFactor
 from vasohm.network.jointfit import LN_R, OFFSET, Observed
+from vasohm.network.pilot import segment_quantile
 from vasohm.network.profiles import ProfileTable
 from vasohm.network.strips import (
     Frame,
@@ -19,6 +20,7 @@ from vasohm.network.strips import (
     weigh_strips,
 )
 
+WIDEST_SEEDS = 2.6  # a strip that seems wider shows something other than its vessel
 WINDOW_BLURS, WINDOW_EXTRA_PX = 3.0, 3.0  # strips reach r + 3 s + 3 px: wider ones gain 6 % and meet neighbours
 
 
@@ -71,13 +73,15 @@ def observe(
     half = np.minimum(radius[points] + WINDOW_BLURS * s + WINDOW_EXTRA_PX, widest_window(table))
     scale = np.zeros(scene.lines.n_points)
     scale[points] = scene.frame.share_px[points] / scene.noise.at(theta[points, LN_R])
+    seed = segment_quantile(scene.lines.seed_radius_px, scene.lines.offsets, 0.8)
+    widest = (WIDEST_SEEDS * seed + 2 * s)[scene.frame.segment]
     number = np.full(scene.lines.n_points, -1, np.int64)
     number[points] = np.arange(len(points))
     strips, overlaps, weights = [], [], []
     for sampled in sample_strips(scene.picture, scene.frame, half, points):
         found = find_overlaps(sampled, scene.frame, scene.lines, scene.owners, scene.shape)
         w, usable = weigh_strips(sampled, found, radius, theta[:, OFFSET], s, alone=alone)
-        scale[sampled.points] *= usable
+        scale[sampled.points] *= usable & (radius[sampled.points] < widest[sampled.points])
         weights.append(w * scale[sampled.points, None].astype(np.float32))
         strips.append(sampled.renumbered(number))
         lit = np.abs(found.distance_px) < radius[found.point] + WINDOW_BLURS * s + 1

@@ -126,12 +126,8 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
     known = learn_image(scene, guess, table, settings)
     theta = _start(scene, _guess(scene, known.table), known)
     reach = np.exp(theta[:, LN_R]) + NEIGHBOUR_BLURS * known.table.optics.s_px
-    noise = noise_factor(
-        known.table,
-        scene.covariance,
-        _typical_cnr(scene, theta, known.table.optics),
-        float(np.median(known.contrast.spread)),
-    )
+    cnr, contrast_sd = _typical_cnr(scene, theta, known.table.optics), float(np.median(known.contrast.spread))
+    noise = noise_factor(known.table, scene.covariance, cnr, contrast_sd)
     scene = replace(scene, owners=paint_owners(scene.frame, reach, scene.shape), noise=noise)
     everything = np.arange(lines.n_segments)
     observed, _ = observe(scene, everything, theta, known.table, alone=False)
