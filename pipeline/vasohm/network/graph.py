@@ -8,7 +8,7 @@ from scipy.sparse import coo_array
 from scipy.sparse.csgraph import connected_components
 
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
-from vasohm.network.paths import arc_length, offsets_of, owner, position, resample, twice
+from vasohm.network.paths import arc_length, offsets_of, owner, position, resample, tangents, twice
 from vasohm.network.skeletonize import Skeleton
 from vasohm.network.tracing import END, SEAM, trace
 
@@ -85,11 +85,13 @@ class VesselGraph:
 
 
 NO_CROSSINGS = Crossings(np.zeros(0), np.zeros(0), np.zeros(0, np.int64), np.zeros(0, np.int64), np.zeros(0))
-JUNCTION_RADII = 1.1  # inside this many radii of a junction a skeleton bends towards the branch: not a centreline
+JUNCTION_RADII = (
+    2.2  # inside this many radii of a junction lumens overlap and skeletons bend: no direction is read there
+)
 DIRECTION_RADII = 2.0  # the direction of a branch is taken over this many radii, at least DIRECTION_LEAST_PX
 DIRECTION_LEAST_PX = 4.0
 MERGE_RADII = 0.75  # branchings closer together than this share of the local radius are one
-CENTRE_WEIGHT = 0.05  # holds the meeting point of nearly parallel branches near the skeleton's junction
+CENTRE_WEIGHT = 0.1  # holds the meeting point of nearly parallel branches near the skeleton's junction
 
 
 def build_graph(skeleton: Skeleton) -> VesselGraph:
@@ -202,7 +204,16 @@ def end_radius(graph: VesselGraph) -> FloatArray:
 
 
 def centre_junctions(graph: VesselGraph) -> VesselGraph:
-    """Move each branching to the least-squares meeting point of its branches and lead them straight into it."""
+    """Move each branching to where its branches meet and lead them straight into it."""
+    x, y = meeting_points(graph)
+    return _lead_in(replace(graph, node_x_px=x, node_y_px=y))
+
+
+def meeting_points(graph: VesselGraph) -> tuple[FloatArray, FloatArray]:
+    """Least-squares meeting point of the branches at each branching, wide ones first; other nodes where they are.
+
+    A branching stays where it is if its branches are too nearly parallel to say better.
+    """
     node, start, towards = branch_directions(graph)
     radius = end_radius(graph).T.ravel()
     at_branching = graph.node_kind[node] == NodeKind.BRANCHING
@@ -223,8 +234,20 @@ def centre_junctions(graph: VesselGraph) -> VesselGraph:
     np.maximum.at(widest, node, radius)
     moved = graph.node_kind == NodeKind.BRANCHING
     moved &= np.hypot(x - graph.node_x_px, y - graph.node_y_px) <= widest + 2
-    x, y = np.where(moved, x, graph.node_x_px), np.where(moved, y, graph.node_y_px)
-    return _lead_in(replace(graph, node_x_px=x, node_y_px=y))
+    return np.where(moved, x, graph.node_x_px), np.where(moved, y, graph.node_y_px)
+
+
+def shift_sideways(graph: VesselGraph, offset_px: FloatArray) -> VesselGraph:
+    """Move every point along its normal (-dy, dx), branchings with them, and put ends at branchings on their nodes."""
+    tx, ty = tangents(graph.x_px, graph.y_px, graph.offsets)
+    x, y = graph.x_px - offset_px * ty, graph.y_px + offset_px * tx
+    shifted = replace(graph, x_px=x.copy(), y_px=y.copy())  # a noun freezes its arrays
+    node_x, node_y = meeting_points(shifted)
+    for ends, nodes in ((graph.offsets[:-1], graph.node_a), (graph.offsets[1:] - 1, graph.node_b)):
+        on_node = graph.node_kind[nodes] == NodeKind.BRANCHING
+        x[ends[on_node]], y[ends[on_node]] = node_x[nodes[on_node]], node_y[nodes[on_node]]
+        node_x[nodes[~on_node]], node_y[nodes[~on_node]] = x[ends[~on_node]], y[ends[~on_node]]
+    return replace(graph, x_px=x, y_px=y, node_x_px=node_x, node_y_px=node_y)
 
 
 def branch_directions(graph: VesselGraph) -> tuple[IntArray, FloatArray, FloatArray]:

@@ -40,7 +40,6 @@ ASSUMED_ABSORPTION_SE = 0.7  # of ln mu, a factor of two
 RESOLVED_BLURS, RESOLVED_PX = 1.5, 1.8  # medians of radius from which a segment shows blur and contrast
 FAMILY_BLURS = 2.5  # some vessel must be so wide before slab and cylinder can be told apart
 MOST_POINTS = 2400  # of resolved segments that are asked for blur, profile and contrast
-FEWEST_SEGMENTS = 3
 WORST_BLUR_SE = 0.25  # of ln blur: beyond, the assumed one is better
 FREE_SPREAD = 300.0  # sd of ln contrast that says nothing, whatever the family's units
 PROFILE_SE = 0.08  # of ln r: half of what slab and cylinder differ by
@@ -86,7 +85,7 @@ def learn_image(scene: Scene, guess: Guess, table: ProfileTable, settings: TubeS
     seen = segment_quantile(guess.detected, lines.offsets, 0.5) > 10.0
     resolved = seen & (radius > max(RESOLVED_PX, RESOLVED_BLURS * blur)) & (np.diff(lines.offsets) >= 12)
     segments = choose_segments(radius, np.diff(lines.offsets), resolved, MOST_POINTS)
-    if len(segments) < FEWEST_SEGMENTS:
+    if len(segments) == 0:
         return _nothing_learnt(lines, guess, table, settings)
     wide = 1.5 * float(radius[segments].max())
     table = profile_table(table.optics, wide, int(1.2 * (wide + 3 * max(blur, 3.0) + 3)) + 6)

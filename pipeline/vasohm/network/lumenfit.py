@@ -32,6 +32,7 @@ class LumenFit:
 
     ln_radius: FloatArray  # (n_points,)
     random_se: FloatArray  # (n_points,) of ln r
+    offset_px: FloatArray  # (n_points,) of the axis from the given centreline, along (-dy, dx)
     contrast: FloatArray  # (n_points,)
     point_flags: IntArray  # (n_points,)
     shared: FloatArray  # (n_points, n_causes)

@@ -10,6 +10,7 @@ LAGS_PX = 20  # beyond these nothing is looked for
 BACKGROUND_PX = 81  # slower changes are background: level and slope of each strip take them up
 LARGEST_TILE_PX = 1024
 FEWEST_PIXELS = 2000
+LEAST_VARIANCE = 0.05  # of the stated one, so that a picture without any noise does not stop the fit
 OUTLIER, ODD_PX = 4.5, 3  # standard deviations of a pixel from which it and so many px around it are left out
 MEDIAN_OF_NORMAL = 0.6745  # median absolute value of a standard normal number
 
@@ -78,4 +79,5 @@ def _radial_covariance(z: FloatArray, inside: BoolArray) -> FloatArray:
     empty = seen[doubtful[seen] & (seen > 0)]
     if len(empty):
         covariance[empty[0] :] = 0.0
+    covariance[0] = max(covariance[0], LEAST_VARIANCE)
     return covariance

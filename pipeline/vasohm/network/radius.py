@@ -7,7 +7,7 @@ import numpy as np
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.flags import Flag
 from vasohm.image.prepare import PreparedImage
-from vasohm.network.graph import NodeKind, VesselGraph
+from vasohm.network.graph import NodeKind, VesselGraph, shift_sideways
 from vasohm.network.learn import TubeSettings
 from vasohm.network.lumen import leave_parents
 from vasohm.network.lumenfit import LumenFit, RadiusCovariance, RadiusSettings
@@ -87,7 +87,7 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
     The measured graph; children begin where they leave their parent's lumen.
     """
     fit = _fit(graph, prepared, settings)
-    cut, kept = leave_parents(graph, np.exp(fit.ln_radius))
+    cut, kept = leave_parents(shift_sideways(graph, fit.offset_px), np.exp(fit.ln_radius))
     pixel = prepared.pixel_size_um
     s_px = arc_length(cut.x_px, cut.y_px, cut.offsets)
     length_px = s_px[cut.offsets[1:] - 1] if cut.n_segments else np.zeros(0)
@@ -128,10 +128,19 @@ def _fit(graph: VesselGraph, prepared: PreparedImage, settings: RadiusSettings) 
     )
     found = fit_tubes(image, lines, TubeSettings(settings.profile, settings.blur_px, dark=prepared.polarity == "dark"))
     return LumenFit(
-        ln_radius=found.ln_radius, random_se=found.ln_radius_random_se, contrast=found.contrast,
-        point_flags=found.point_flags, shared=found.shared, shared_causes=found.shared_causes,
-        covariance=found.covariance, noise_sign=1, blur_px=found.blur_px, profile=found.profile, flags=found.flags,
-    )  # fmt: skip
+        ln_radius=found.ln_radius,
+        random_se=found.ln_radius_random_se,
+        offset_px=found.offset_px,
+        contrast=found.contrast,
+        point_flags=found.point_flags,
+        shared=found.shared,
+        shared_causes=found.shared_causes,
+        covariance=found.covariance,
+        noise_sign=1,
+        blur_px=found.blur_px,
+        profile=found.profile,
+        flags=found.flags,
+    )
 
 
 def _focus(fit: LumenFit, settings: RadiusSettings, pixel_size_um: float) -> Flag:
