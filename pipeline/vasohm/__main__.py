@@ -10,6 +10,7 @@ def main() -> None:
     """Run the command line and leave with its exit status."""
     for number in (signal.SIGINT, signal.SIGTERM):
         signal.signal(number, _leave)
+    _fill_standard_streams()
     from vasohm.cli import run_command  # noqa: PLC0415  after the signals are met
 
     sys.exit(run_command())
@@ -19,6 +20,13 @@ def _leave(number: int, _frame: FrameType | None) -> None:
     """End at once: a run with images at work has handlers of its own, and every file is written whole or not at all."""
     os.write(2, b"vasohm: interrupted\n")
     os._exit(128 + number)
+
+
+def _fill_standard_streams() -> None:
+    """Open what the caller closed (``>&-``), for workers too, or a pipe would get its number and be written over."""
+    while (descriptor := os.open(os.devnull, os.O_RDWR)) <= 2:
+        os.set_inheritable(descriptor, True)
+    os.close(descriptor)
 
 
 if __name__ == "__main__":

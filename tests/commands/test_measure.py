@@ -425,6 +425,7 @@ def test_a_study_is_measured_in_a_bare_surrounding(make_study: MakeStudy, tmp_pa
         [
             "env",
             "-i",
+            f"PYTHONPATH={os.environ.get('PYTHONPATH', '')}",
             "sh",
             "-c",
             f"ulimit -n 64; exec {sys.executable} -m vasohm measure {study.file} --out {out} >&-",
@@ -446,7 +447,7 @@ def test_a_study_is_measured_in_a_bare_surrounding(make_study: MakeStudy, tmp_pa
 def test_killed_at_any_write_the_same_command_gives_the_same_bytes(
     make_study: MakeStudy, tmp_path: Path, undisturbed: dict[str, str]
 ) -> None:
-    """Kill the whole group after ever longer times, many times, into one folder, until it comes through."""
+    """Kill the whole group after ever longer times: half-written files must never pass for whole ones."""
     study = make_study()
     for delay_s in np.linspace(0.5, 6.0, 24):
         out = tmp_path / "out"

@@ -173,7 +173,8 @@ class SupervisedPool:
         try:
             pid, *stages = task.trail.read_text(encoding="utf-8").split()
         except (OSError, ValueError):
-            return "start", "a worker did not start"
+            ended = [child.exitcode for child in self._children if child.exitcode]
+            return "start", f"a worker did not start, {_end_in_words(ended[0])}" if ended else "a worker did not start"
         for child in self._children:
             if str(child.pid) == pid:
                 child.join(_POLL_S)
