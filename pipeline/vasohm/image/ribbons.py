@@ -10,7 +10,7 @@ from vasohm.arrays import BoolArray, Float32Array, FloatArray, IntArray, freeze
 from vasohm.image.ridges import RidgePixels
 
 AVERAGING_PASSES = 12  # of a three-point mean along the line: a window of about +-5 px
-WEAKER_SIDE = 0.3  # of the stronger: below it is the edge of something, not a vessel
+WEAKER_SIDE = 0.5  # of the stronger: below it is the edge of something, not a vessel
 HOLLOW = 0.8  # of the contrast missing in the middle: two vessels side by side, not one
 LEAST_FILL = 0.55  # mean height inside the edges over the peak: 1 for a slab, 0.79 for a cylinder, little for a bundle
 HALF_WIDTH_RATIO = 1.2  # the wider half may not exceed this x the narrower: a neighbour stands in the way

@@ -29,6 +29,7 @@ TEXTURE_STEPS = (1.0, 1.25, 1.5, 1.75, 2.0, 2.5, 3.0)
 SPARSE_SHARE = 0.5  # of the field must be away from vessels for the flipped picture to tell anything
 AWAY_PX = 9
 LEAST_PIECE_PX = 8  # ridge pixels left of a line after its checks
+LEAST_ALONE_PX = 20  # extent of a piece that touches no other: shorter ones are specks of texture
 HOLE_PX = 12  # smaller holes in the mask are artefacts of thick junctions
 BUNDLE_SIGMAS = 0.8  # a wide filter whose line is much narrower than itself has answered to a bundle of thin vessels
 BLOB_SIGMAS = (
@@ -144,7 +145,6 @@ def _without_small(mask: BoolArray) -> BoolArray:
         size = np.bincount(holes.ravel())
         size[0] = HOLE_PX + 1
         mask = mask | (size[holes] <= HOLE_PX)
-    pieces, count = ndimage.label(mask, structure=np.ones((3, 3), dtype=bool))
-    size = np.bincount(pieces.ravel())
-    size[0] = 0
-    return np.asarray(size[pieces] >= LEAST_PIECE_PX, dtype=bool)
+    pieces, _ = ndimage.label(mask, structure=np.ones((3, 3), dtype=bool))
+    extent = [np.hypot(*(part.stop - part.start for part in box)) for box in ndimage.find_objects(pieces)]
+    return np.asarray(np.array([0.0, *extent])[pieces] >= LEAST_ALONE_PX, dtype=bool)
