@@ -8,6 +8,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy.ndimage import gaussian_filter
+from scipy.spatial import cKDTree
 from scipy.special import ndtr
 
 
@@ -37,7 +38,7 @@ def gaussian_profile(family, mu, r, s, x):
     return bell @ weight
 
 
-def pixel_profile(family, mu, r, sigma, angle, x_max):
+def pixel_profile(family, mu, r, sigma, *, angle, x_max):
     """(x, profile) on a fine grid: optics and the pixel's projections |cos| and |sin| wide."""
     step = 1.0 / 64
     x = np.arange(-int(x_max * 64), int(x_max * 64) + 1) * step
@@ -45,9 +46,7 @@ def pixel_profile(family, mu, r, sigma, angle, x_max):
     for width in (abs(np.cos(angle)), abs(np.sin(angle))):
         if width > step:
             integral = np.concatenate([[0.0], np.cumsum(0.5 * (profile[1:] + profile[:-1])) * step])
-            profile = (
-                np.interp(x + width / 2, x, integral) - np.interp(x - width / 2, x, integral)
-            ) / width
+            profile = (np.interp(x + width / 2, x, integral) - np.interp(x - width / 2, x, integral)) / width
     return x, profile
 
 
@@ -84,7 +83,7 @@ def straight_tubes(family, r, sigma, cnr, rng, *, mu=0.0, n=120, length=60, nois
         cx, cy = (side - 1) / 2 + rng.uniform(-0.5, 0.5, 2)
         nx, ny = -np.sin(angle), np.cos(angle)
         distance = (grid_x - cx) * nx + (grid_y - cy) * ny
-        x, profile = pixel_profile(family, mu, r, sigma, angle, margin)
+        x, profile = pixel_profile(family, mu, r, sigma, angle=angle, x_max=margin)
         scale = cnr / height(family, mu, r) * np.exp(contrast_sd * rng.standard_normal())
         top, left = (k // columns) * side, (k % columns) * side
         picture[top : top + side, left : left + side] = scale * np.interp(distance, x, profile, right=0, left=0)
@@ -172,7 +171,7 @@ def drawn_tubes(family, lines, sigma, rng, *, mu=0.0, shape, noise_blur=0.0, noi
     total = np.zeros((shape[0] * fine, shape[1] * fine))
     joined = np.zeros_like(total)
     for k, (x, y, r, contrast) in enumerate(lines):
-        light = _draw(family, mu, (x, y, r), contrast, total.shape, fine)
+        light = _draw(family, mu, (x, y, r), contrast, shape=total.shape, fine=fine)
         if reflex:
             light = light - reflex * contrast * _draw_reflex(family, mu, (x, y, r), total.shape, fine)
         if k in union:
@@ -191,9 +190,7 @@ def drawn_tubes(family, lines, sigma, rng, *, mu=0.0, shape, noise_blur=0.0, noi
 
 
 def _nearest(line, box, fine):
-    """Signed nothing, just distance and radius: of each fine pixel in a box to a polyline resampled at 1/8 px."""
-    from scipy.spatial import cKDTree
-
+    """Distance of each fine pixel in a box to a polyline resampled at 1/8 px, and the radius there."""
     x, y, r = line
     s = np.concatenate([[0], np.cumsum(np.hypot(np.diff(x), np.diff(y)))])
     u = np.linspace(0, s[-1], int(s[-1] * 8) + 2)
@@ -212,7 +209,7 @@ def _box(line, shape, fine):
     return rows, columns
 
 
-def _draw(family, mu, line, contrast, shape, fine):
+def _draw(family, mu, line, contrast, *, shape, fine):
     box = _box(line, shape, fine)
     distance, radius = _nearest(line, box, fine)
     out = np.zeros(shape)

@@ -10,6 +10,7 @@ from vasohm.network.jointfit import LN_C, LN_R, Normal, Observed, Priors, factor
 RESOLVED_SE = 0.05  # of ln r: segments known better tell their contrast
 SMALLEST_SPREAD = 0.03  # of ln contrast between segments
 FEW, SPREAD_OF_FEW = 4, 0.5  # with fewer segments the spread is not measured but assumed
+MOST_ODD = 0.1  # share of segments that may be left out as odd
 UNKNOWN_SPREAD = 1.0  # sd of ln contrast where nothing is known
 
 
@@ -91,6 +92,8 @@ def _population(value: FloatArray, variance: FloatArray) -> tuple[float, float, 
     middle = np.median(value)
     scale = max(1.4826 * float(np.median(np.abs(value - middle))), SMALLEST_SPREAD)
     keep = np.abs(value - middle) < 4 * np.sqrt(scale**2 + variance)
+    if keep.mean() < 1 - MOST_ODD:  # too many to be odd: vessels of this picture do differ so much
+        keep = np.ones(n, np.bool_)
     between = SMALLEST_SPREAD**2
     for _ in range(10):
         weight = keep / (variance + between)

@@ -39,6 +39,7 @@ from vasohm.network.learn import (
     TubeSettings,
     first_unknowns,
     learn_image,
+    segment_mean,
 )
 from vasohm.network.noise import noise_correlation
 from vasohm.network.observe import Scene, observe
@@ -48,6 +49,7 @@ from vasohm.network.priors import Expected, make_priors
 from vasohm.network.profiles import (
     Optics,
     ProfileTable,
+    ln_area,
     ln_height,
     optical_blur_px,
     photometric_ln_radius,
@@ -172,13 +174,20 @@ def _guess(scene: Scene, table: ProfileTable) -> Guess:
 
 
 def _start(scene: Scene, guess: Guess, known: ImageKnowledge) -> FloatArray:
-    """First unknowns; the radius of a thin vessel is the one whose light its contrast explains."""
+    """First unknowns; the radius of a thin vessel is the one whose light its contrast explains.
+
+    Where no vessel tells the contrast, a thin one starts from the radius of its outline: a guess of its own would be
+    anywhere along the line on which radius and contrast give the same picture.
+    """
     theta = first_unknowns(guess)
-    prior, segment = known.contrast, scene.frame.segment
-    thin = (guess.ln_r < np.log(RESOLVED_BLURS * known.table.optics.s_px)) & (prior.group[segment] >= 0)
-    mean = prior.mean[segment[thin]]
-    theta[thin, LN_R] = photometric_ln_radius(known.table.optics, guess.ln_photometric[thin] - mean)
-    theta[thin, LN_C] = mean
+    optics, prior, segment = known.table.optics, known.contrast, scene.frame.segment
+    thin = guess.ln_r < np.log(RESOLVED_BLURS * optics.s_px)
+    told = prior.group[segment] >= 0
+    outlined = np.log(segment_quantile(scene.lines.seed_radius_px, scene.lines.offsets, 0.5))[segment]
+    light, mean = guess.ln_photometric, prior.mean[segment]
+    radius = np.where(told, photometric_ln_radius(optics, light - mean), outlined)
+    contrast = np.where(told, mean, light - ln_area(optics, outlined)[0])
+    theta[thin, LN_R], theta[thin, LN_C] = radius[thin], contrast[thin]
     if known.reflex:
         theta = np.column_stack([theta, np.full(len(theta), known.reflex[0])])
     return theta
@@ -195,7 +204,9 @@ def _typical_cnr(scene: Scene, theta: FloatArray, optics: Optics) -> float:
 def _priors(observed: Observed, known: ImageKnowledge, theta: FloatArray) -> Priors:
     reflex, sd = known.reflex or (0.0, 1.0)
     every = np.ones(observed.n_segments)
-    expected = Expected(known.contrast.mean, known.contrast.spread, reflex * every, sd * every)
+    own = segment_mean(observed, theta[:, LN_C])
+    contrast = np.where(known.contrast.group >= 0, known.contrast.mean, own)
+    expected = Expected(contrast, known.contrast.spread, reflex * every, sd * every)
     return make_priors(observed, known.table, theta, expected)
 
 
