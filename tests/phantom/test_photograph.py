@@ -9,7 +9,7 @@ from scipy.spatial import cKDTree
 import vasohm
 
 PHOTOGRAPH = Path(__file__).parents[2] / "configs" / "demo" / "retina.jpg"
-ON_LARGE_VESSELS = [(801, 420), (1085, 385), (930, 189), (775, 1222), (517, 967), (1000, 1195), (304, 413), (269, 995)]
+ON_LARGE_VESSELS = [(801, 420), (1085, 385), (930, 189), (775, 1222), (517, 967), (1000, 1229), (269, 995)]
 BY_EYE_PX = 12  # how well a place on a vessel can be read from a screen
 FOVEA = (706, 700, 48)  # x, y, radius without a vessel
 FIELD = (706, 706)  # centre of the round field
