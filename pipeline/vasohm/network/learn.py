@@ -48,7 +48,10 @@ LOWEST_REFLEX = 0.05  # median of wide segments from which it is one
 REFLEX_SPREAD, SMALLEST_REFLEX_SPREAD = 0.5, 0.03  # sd: of a vessel that tells itself, and of those that do not
 NO_REFLEX = 1e-3
 FIRST_REFLEX = 0.1  # height from which a reflex is searched
-REFLEX_GAIN = 4.0  # of log likelihood a wide segment from which reflexes are believed; noise alone gives about 0.5
+REFLEX_GAIN = (
+    10.0,
+    0.08,
+)  # of log likelihood, and of it a point, from which reflexes are believed; noise gives 0.02 to 0.05
 
 
 @dataclass(frozen=True, slots=True)
@@ -150,7 +153,10 @@ def _with_reflex(
     again = _estimate_again(observed, table_like(table, told.optics), theta, expected, request)
     high = segment_mean(observed, again.theta[:, REFLEX])[wide]
     common = float(np.median(high))
-    if common < LOWEST_REFLEX or told.cost - again.cost < REFLEX_GAIN * (wide.sum() + 3):
+    if (
+        common < LOWEST_REFLEX
+        or told.cost - again.cost < REFLEX_GAIN[0] + REFLEX_GAIN[1] * wide[observed.segment].sum()
+    ):
         return told, None
     scatter = max(1.4826 * float(np.median(np.abs(high - common))), SMALLEST_REFLEX_SPREAD)
     expected = _contrast_unknown(observed, again.theta, none + common, np.where(wide, REFLEX_SPREAD, scatter))

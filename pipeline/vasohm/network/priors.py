@@ -14,7 +14,7 @@ THIN_PX = 0.7  # below, stiffness no longer falls with the radius
 CONTRAST_STEP = 0.005
 OFFSET_BEND_PX = 0.008
 LEVEL_STEP, SLOPE_STEP = 0.02, 0.002  # in units of the vessel's height
-REFLEX_STEP = 0.02
+REFLEX_STEP = 0.01
 RADIUS_STEP, UNSEEN_RADIUS_STEP = 0.2, 0.03  # of ln r: keeps it from running away, most where no strip is usable
 # standard deviations that hold the mean of a segment, counted once a segment
 OFFSET_PX, RADIUS_SPREAD, LEVEL_SPREAD, SLOPE_SPREAD = 1.5, 0.8, 10.0, 1.0
