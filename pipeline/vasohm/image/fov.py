@@ -6,6 +6,7 @@ from scipy import ndimage
 from vasohm.arrays import BoolArray, Float32Array
 
 BLACK_SHARE = 0.12  # of the bright level: a mask or the camera's housing is darker than this, tissue is not
+BLACK_RATIO = 0.25  # of the tissue's brightness: what is brighter lets light through and is no mask
 LEAST_OUTSIDE = 0.005  # of the picture: less than this is dark tissue or dead pixels, no housing
 MIRROR_INSET_PX = 4  # the border itself is shaded; mirrors stand this much further in
 
@@ -37,6 +38,8 @@ def find_field_of_view(brightness: Float32Array, *, vessels_are_dark: bool) -> B
     share = outside.mean()
     if share < LEAST_OUTSIDE or share > 1 - LEAST_OUTSIDE:
         return np.ones(brightness.shape, dtype=bool)
+    if vessels_are_dark and np.median(brightness[outside]) > BLACK_RATIO * np.median(brightness[~outside]):
+        return np.ones(brightness.shape, dtype=bool)  # a wide vessel that leaves the picture on both sides
     return _largest_filled(~outside)
 
 
