@@ -9,7 +9,7 @@ from vasohm.study.cores import usable_cores
 from vasohm.study.current import PACKAGES
 from vasohm.study.state import environment
 
-_OPTIONAL = {"pydicom": "DICOM files", "imagecodecs": "further compressions of TIFF", "numba": "faster loops"}
+_OPTIONAL = {"imagecodecs": "further compressions of TIFF, LZW among them"}
 _CODECS = ("jpg", "zlib", "libtiff", "webp", "jpg_2000")
 
 
