@@ -77,7 +77,7 @@ def test_radii_and_resistances_of_many_pictures(family, mu, sigma):
     for k, (promised, bias) in enumerate(zip(RMSE_PROMISED, BIAS_PROMISED, strict=True)):
         error = np.concatenate(errors[k])
         chance = 2 * rms([e.mean() for e in errors[k] if len(e)]) / np.sqrt(12)  # spread of pictures' means
-        assert rms(error) < promised * 1.1, (BINS_PX[k], rms(error))
+        assert rms(error) < promised * max(1.0, sigma) * 1.1, (BINS_PX[k], rms(error))  # promised at 1 px of blur
         assert abs(error.mean()) < bias + chance, (BINS_PX[k], error.mean())
         assert 0.87 < np.mean(np.concatenate(inside[k])) <= 1.0, BINS_PX[k]
     assert abs(np.mean(np.concatenate(ln_r))) < 0.03

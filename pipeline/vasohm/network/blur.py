@@ -109,7 +109,7 @@ def estimate_optics(
         absorbing = _absorber(case, best)
         gain = best.cost - absorbing.cost
         free = request.absorbing and best.optics.family == "cylinder"
-        if len(families) == 1 or gain > (0.0 if free else 0.5 * np.log(observed.n_points)):
+        if len(families) == 1 or gain > (0.0 if free else np.log(observed.n_points)):
             told |= gain > DECISIVE
             best = absorbing
     covariance = np.zeros((len(parameters_of(best.optics)),) * 2)
