@@ -8,12 +8,9 @@ from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.flags import Flag
 from vasohm.image.prepare import PreparedImage
 from vasohm.network.graph import NodeKind, VesselGraph, shift_sideways
-from vasohm.network.learn import TubeSettings
 from vasohm.network.lumen import leave_parents
-from vasohm.network.lumenfit import LumenFit, RadiusCovariance, RadiusSettings
+from vasohm.network.lumenfit import DrawnCovariance, LumenFit, RadiusCovariance, RadiusSettings, fit_lumens
 from vasohm.network.paths import arc_length, owner
-from vasohm.network.strips import TubeLines
-from vasohm.network.tubes import TubeImage, fit_tubes
 
 TIGHT_BEND_PX = 5.0  # bends tighter than this radius lose 6 to 19 % of their length to any smoother
 BEND_WINDOW_PX = 4  # curvature is read over this many points to either side
@@ -58,21 +55,6 @@ class MeasuredGraph:
         freeze(self)
 
 
-@dataclass(frozen=True, slots=True, eq=False)
-class _KeptCovariance:
-    """The covariance of a graph some of whose points were cut off."""
-
-    whole: RadiusCovariance
-    kept: BoolArray
-    column: FloatArray  # share of each kept radius that was measured; the rest is the plasma layer
-
-    def segment_variance(self, gradient: FloatArray) -> FloatArray:
-        """Variance (n_segments,) of sum(gradient * ln r) over the kept points."""
-        full = np.zeros(len(self.kept))
-        full[self.kept] = gradient * self.column
-        return self.whole.segment_variance(full)
-
-
 def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusSettings) -> MeasuredGraph:
     """Measure radius and length of every segment.
 
@@ -86,7 +68,7 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
     -------
     The measured graph; children begin where they leave their parent's lumen.
     """
-    fit = _fit(graph, prepared, settings)
+    fit = fit_lumens(graph, prepared, settings)
     cut, kept = leave_parents(shift_sideways(graph, fit.offset_px), np.exp(fit.ln_radius))
     pixel = prepared.pixel_size_um
     s_px = arc_length(cut.x_px, cut.y_px, cut.offsets)
@@ -105,7 +87,9 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
         ln_radius_random_se=random_se,
         shared=shared,
         shared_causes=causes,
-        covariance=_KeptCovariance(fit.covariance, kept, 1 - settings.plasma_layer_um / radius_um),
+        covariance=DrawnCovariance(
+            fit.covariance, len(kept), np.nonzero(kept)[0], 1 - settings.plasma_layer_um / radius_um
+        ),
         noise_sign=fit.noise_sign,
         contrast=fit.contrast[kept],
         point_flags=flags,
@@ -117,29 +101,6 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
         profile=fit.profile,
         image_contrast=float(np.median(fit.contrast[kept])) if kept.any() else np.nan,
         flags=fit.flags | _focus(fit, settings, pixel),
-    )
-
-
-def _fit(graph: VesselGraph, prepared: PreparedImage, settings: RadiusSettings) -> LumenFit:
-    """Fit how tubes are imaged to the picture along all segments."""
-    image = TubeImage(prepared.signal, prepared.noise_sd, prepared.fov, prepared.clipped)
-    lines = TubeLines(
-        graph.x_px, graph.y_px, graph.offsets, graph.seed_radius_px, graph.vessel_class, graph.node_a, graph.node_b
-    )
-    found = fit_tubes(image, lines, TubeSettings(settings.profile, settings.blur_px, dark=prepared.polarity == "dark"))
-    return LumenFit(
-        ln_radius=found.ln_radius,
-        random_se=found.ln_radius_random_se,
-        offset_px=found.offset_px,
-        contrast=found.contrast,
-        point_flags=found.point_flags,
-        shared=found.shared,
-        shared_causes=found.shared_causes,
-        covariance=found.covariance,
-        noise_sign=1,
-        blur_px=found.blur_px,
-        profile=found.profile,
-        flags=found.flags,
     )
 
 
