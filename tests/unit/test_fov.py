@@ -31,6 +31,18 @@ def test_dark_tissue_between_bright_vessels_is_inside():
     assert find_field_of_view(picture, vessels_are_dark=False).all()
 
 
+def test_vessels_on_a_background_without_noise_are_not_the_field():
+    """Wrong if the exactly black background of a counting camera were taken for the outside."""
+    picture = np.zeros((96, 96), np.float32)
+    picture[40:50] = 100.0
+    picture[:, 20:26] = 80.0
+    assert find_field_of_view(picture, vessels_are_dark=False).all()
+
+
+def test_a_constant_picture_is_all_field():
+    assert find_field_of_view(np.full((40, 40), 7.0, np.float32), vessels_are_dark=False).all()
+
+
 def test_the_mirror_image_draws_no_edge():
     """A straight ramp stays a ramp folded at the border: no step that a filter could take for a vessel."""
     truth = round_field()

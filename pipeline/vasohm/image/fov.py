@@ -2,12 +2,14 @@
 
 import numpy as np
 from scipy import ndimage
+from skimage.morphology import convex_hull_image
 
 from vasohm.arrays import BoolArray, Float32Array
 
 BLACK_SHARE = 0.12  # of the bright level: a mask or the camera's housing is darker than this, tissue is not
 BLACK_RATIO = 0.25  # of the tissue's brightness: what is brighter lets light through and is no mask
 LEAST_OUTSIDE = 0.005  # of the picture: less than this is dark tissue or dead pixels, no housing
+SOLID_SHARE = 0.8  # of its convex hull: a round or straight-edged field, also one with a notch
 MIRROR_INSET_PX = 4  # the border itself is shaded; mirrors stand this much further in
 
 
@@ -24,6 +26,8 @@ def find_field_of_view(brightness: Float32Array, *, vessels_are_dark: bool) -> B
     -------
     (h, w) bool, True inside; all True where no such region exists.
     """
+    if np.ptp(brightness) == 0:
+        return np.ones(brightness.shape, dtype=bool)
     lowest = float(brightness.min())
     if vessels_are_dark:
         smooth = ndimage.uniform_filter(brightness, 5, mode="nearest")
@@ -40,7 +44,17 @@ def find_field_of_view(brightness: Float32Array, *, vessels_are_dark: bool) -> B
         return np.ones(brightness.shape, dtype=bool)
     if vessels_are_dark and np.median(brightness[outside]) > BLACK_RATIO * np.median(brightness[~outside]):
         return np.ones(brightness.shape, dtype=bool)  # a wide vessel that leaves the picture on both sides
-    return _largest_filled(~outside)
+    inside = _largest_filled(~outside)
+    if not vessels_are_dark and not _is_solid(inside):
+        return np.ones(brightness.shape, dtype=bool)  # background without noise: what is left are the vessels
+    return inside
+
+
+def _is_solid(inside: BoolArray) -> bool:
+    """Whether the region nearly fills its convex hull, as the opening of a camera or a scanner does."""
+    step = max(1, min(inside.shape) // 128)
+    small = inside[::step, ::step]
+    return bool(small.any() and small.sum() > SOLID_SHARE * convex_hull_image(small).sum())
 
 
 def _largest_filled(inside: BoolArray) -> BoolArray:

@@ -178,7 +178,7 @@ def _clipped(raw: RawImage, settings: PrepareSettings) -> BoolArray:
 
 def _is_blank(brightness: Float32Array, valid: BoolArray) -> bool:
     inside = brightness[valid]
-    return bool(np.ptp(inside) <= BLANK_SPREAD * max(1.0, float(np.abs(inside).max())))
+    return bool(np.ptp(inside) <= BLANK_SPREAD * float(np.abs(inside).max()))
 
 
 def _background(brightness: Float32Array, valid: BoolArray, sigma: float, *, dark: bool) -> Float32Array:

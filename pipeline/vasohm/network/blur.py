@@ -201,7 +201,8 @@ def _newton_step(fit: _Fit, n_free: int, wide: float) -> FloatArray:
     ):
         step[-1] = 0.0
         step[:-1] = np.linalg.solve(information[:-1, :-1], gradient[:-1])
-    return np.asarray(step * min(1.0, LONGEST_STEP / float(np.abs(step).max())))
+    longest = float(np.abs(step).max())
+    return np.asarray(step if longest <= LONGEST_STEP else step * (LONGEST_STEP / longest))
 
 
 def _bounded(optics: Optics, wide: float) -> Optics:

@@ -191,10 +191,9 @@ def rebuild(
 
 
 def end_radius(graph: VesselGraph) -> FloatArray:
-    """Return the seed radius near both ends of each segment, (n_segments, 2): the median over its end thirds.
+    """Return the seed radius of each segment for both of its ends, (n_segments, 2): the median over its middle.
 
-    Near a junction the distance to the outline is that of the junction, not of the branch, so the third is read
-    from the far side.
+    Near a junction the distance to the outline is that of the junction, not of the branch.
     """
     count = np.diff(graph.offsets)
     pick = np.array([1 / 3, 1 / 2, 2 / 3])[None, :]
@@ -331,15 +330,20 @@ def in_fixed_order(graph: VesselGraph) -> VesselGraph:
     points = start + np.where(turned, size - 1 - k, k)
     new_index = np.empty(graph.n_segments, np.int64)
     new_index[order] = np.arange(graph.n_segments)
-    crossings = graph.crossings
+    mapped = np.sort(new_index[np.column_stack((graph.crossings.segment_over, graph.crossings.segment_under))], axis=1)
+    by_row = np.lexsort((graph.crossings.x_px, graph.crossings.y_px))
     return replace(
         graph, node_x_px=graph.node_x_px[by_place], node_y_px=graph.node_y_px[by_place],
         node_kind=graph.node_kind[by_place], node_a=a[order], node_b=b[order], offsets=new_offsets,
         x_px=graph.x_px[points], y_px=graph.y_px[points], seed_radius_px=graph.seed_radius_px[points],
         vessel_class=graph.vessel_class[order], class_probability=graph.class_probability[order],
         segment_flags=graph.segment_flags[order],
-        crossings=replace(
-            crossings, segment_over=new_index[crossings.segment_over], segment_under=new_index[crossings.segment_under]
+        crossings=Crossings(
+            graph.crossings.x_px[by_row],
+            graph.crossings.y_px[by_row],
+            mapped[by_row, 0],  # which is over cannot be told from geometry: the lower index stands first
+            mapped[by_row, 1],
+            graph.crossings.probability[by_row],
         ),
     )  # fmt: skip
 
