@@ -41,11 +41,11 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     mask = segment(prepared, settings.segment, given)
     stage("graph")
     traced = build_graph(skeletonize(mask, prepared.fov, settings.skeletonize))
-    uncrossed = resolve_crossings(traced, settings.crossings, forced_places(source.edits))
+    uncrossed, places_met = resolve_crossings(traced, settings.crossings, forced_places(source.edits))
     graph = extend_ends(refine_centrelines(uncrossed, prepared), prepared)
     if labels is not None:
         graph = classes_from_labels(graph, labels)
-    graph, notes, edit_flags = apply_edits(graph, source.edits)
+    graph, notes, edit_flags = apply_edits(graph, source.edits, places_met)
     prepared = replace(prepared, notes=prepared.notes + notes, flags=prepared.flags | edit_flags)
     stage("radius")
     measured = measure_radii(graph, prepared, settings.radius)

@@ -62,7 +62,7 @@ def test_resistance_goes_with_the_inverse_cube_of_the_pixel_size(picture, plain)
 
 
 def test_the_negative_with_the_other_polarity(picture, plain):
-    """Dark vessels on bright ground are the same vessels; the dark signal is divided by its background, hence no bytes."""
+    """Dark vessels on bright ground are the same vessels, but for a signal that is divided by its background."""
     negative = 400 - picture
     dark = measure(negative, preset="fundus")
     assert network_resistance(dark) == pytest.approx(network_resistance(plain), rel=R_TOLERANCE)

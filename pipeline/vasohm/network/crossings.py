@@ -1,6 +1,7 @@
 """Where vessels merely cross in the picture: two branchings a short bridge apart, or one node of four arms."""
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
+from collections.abc import Set as AbstractSet
 from dataclasses import dataclass, replace
 from itertools import pairwise
 
@@ -8,6 +9,7 @@ import numpy as np
 
 from vasohm.arrays import BoolArray, FloatArray, IntArray
 from vasohm.network.graph import (
+    NO_CROSSINGS,
     Crossings,
     NodeKind,
     VesselGraph,
@@ -23,6 +25,7 @@ BRIDGE_PX = 6.0
 # the limit usually drawn between "goes on" and "turns" (common practice, no source).
 TURN_LIMIT_DEG = 30.0
 TURN_SPREAD_DEG = 6.0
+FORCE_REACH_PX = 10.0  # as every point of an edits file
 RADIUS_WEIGHT = 2.0  # per unit of ln(radius ratio) along one vessel: a vessel keeps its width across a crossing
 
 
@@ -47,7 +50,7 @@ class Candidate:
 
 def resolve_crossings(
     graph: VesselGraph, settings: CrossingSettings, forced: Sequence[tuple[float, float, bool]] = ()
-) -> VesselGraph:
+) -> tuple[VesselGraph, tuple[bool, ...]]:
     """Join the arms of vessels that cross and take the node away.
 
     Parameters
@@ -58,9 +61,16 @@ def resolve_crossings(
 
     Returns
     -------
-    The graph in its fixed order, with `crossings` filled.
+    The graph in its fixed order, with `crossings` filled; and for each forced place whether four arms meet near it.
     """
-    candidates = [_force(candidate, forced) for candidate in find_candidates(graph)]
+    candidates = find_candidates(graph)
+    met = []
+    for x, y, is_crossing in forced:
+        distance = [float(np.hypot(c.x_px - x, c.y_px - y)) for c in candidates]
+        nearest = int(np.argmin(distance)) if distance else -1
+        met.append(bool(distance) and distance[nearest] <= FORCE_REACH_PX)
+        if met[-1]:
+            candidates[nearest] = replace(candidates[nearest], probability=1.0 if is_crossing else 0.0)
     candidates.sort(key=lambda c: (-c.probability, c.y_px, c.x_px))
     taken: set[int] = set()
     accepted = []
@@ -68,17 +78,11 @@ def resolve_crossings(
         if candidate.probability >= settings.threshold and taken.isdisjoint(candidate.nodes):
             taken.update(candidate.nodes)
             accepted.append(candidate)
-    return in_fixed_order(_join(graph, accepted)) if accepted else graph
-
-
-def _force(candidate: Candidate, forced: Sequence[tuple[float, float, bool]]) -> Candidate:
-    for x, y, is_crossing in forced:
-        if np.hypot(candidate.x_px - x, candidate.y_px - y) <= FORCE_REACH_PX:
-            return replace(candidate, probability=1.0 if is_crossing else 0.0)
-    return candidate
-
-
-FORCE_REACH_PX = 10.0  # as every point of an edits file
+    if not accepted:
+        return graph, tuple(met)
+    partner = dict(pair for c in accepted for a, b in c.pairs for pair in ((a, b), (b, a)))
+    joined, new_of = join_ends(graph, partner, {c.bridge for c in accepted})
+    return in_fixed_order(replace(joined, crossings=_table(accepted, new_of, graph.n_segments))), tuple(met)
 
 
 def find_candidates(graph: VesselGraph) -> list[Candidate]:
@@ -133,73 +137,75 @@ def _turn_deg(into: FloatArray, other_into: FloatArray, across: FloatArray) -> f
     return float(max(*turns, whole) if len(turns) > 1 else whole)
 
 
-def _join(graph: VesselGraph, accepted: list[Candidate]) -> VesselGraph:
-    """Put the segments of each vessel together across its crossings."""
+def join_ends(
+    graph: VesselGraph, partner: Mapping[int, int], bridges: AbstractSet[int]
+) -> tuple[VesselGraph, IntArray]:
+    """Put segments together at their ends, and leave the bridges out.
+
+    Parameters
+    ----------
+    graph : the graph; nodes at which segments are joined vanish, the way across is drawn straight.
+    partner : end -> end, both ways; an end is a segment's index (its first point), or that plus n (its last).
+    bridges : segments that vanish.
+
+    Returns
+    -------
+    The graph, its crossings emptied and its order not fixed; and the new index of each old segment, -1 for a bridge.
+    """
     n = graph.n_segments
-    partner: dict[int, int] = {}
-    for candidate in accepted:
-        for a, b in candidate.pairs:
-            partner[a], partner[b] = b, a
-    bridges = {candidate.bridge for candidate in accepted}
     chains = _chains(n, partner, bridges)
-    near, x, y, seed = _trimmed(graph, partner)
-    pieces_x, pieces_y, pieces_seed, node_a, node_b, kind, members = [], [], [], [], [], graph.node_kind.copy(), []
-    node_x, node_y = graph.node_x_px.tolist(), graph.node_y_px.tolist()
-    kinds = kind.tolist()
-    for chain, closed in chains:
-        indices = [near[segment] if forward else near[segment][::-1] for segment, forward in chain]
-        points = np.concatenate(indices)
-        px, py = x[points], y[points]
-        if closed:
-            px, py, points = np.append(px, px[0]), np.append(py, py[0]), np.append(points, points[0])
-            node_x.append(float(px[0]))
-            node_y.append(float(py[0]))
-            kinds.append(int(NodeKind.LOOP))
-            node_a.append(len(node_x) - 1)
-            node_b.append(len(node_x) - 1)
-        else:
-            node_a.append(_outer_node(graph, chain[0], first=True))
-            node_b.append(_outer_node(graph, chain[-1], first=False))
-        pieces_x.append(px)
-        pieces_y.append(py)
-        pieces_seed.append(seed[points])
-        members.append([segment for segment, _ in chain])
-    offsets = offsets_of(np.array([len(piece) for piece in pieces_x]))
-    new_x, new_y, offsets, (new_seed,) = resample(
-        np.concatenate(pieces_x), np.concatenate(pieces_y), offsets, (np.concatenate(pieces_seed),)
-    )
+    ends, node_x, node_y, kind = [], [*graph.node_x_px], [*graph.node_y_px], [*graph.node_kind]
     new_of = np.full(n, -1, np.int64)
-    for index, chain_members in enumerate(members):
-        new_of[chain_members] = index
-    lead = np.array([chain_members[0] for chain_members in members])
-    used, compact = np.unique(np.array([node_a, node_b]), return_inverse=True)
-    compact = compact.reshape(2, -1)
-    return VesselGraph(
-        graph.shape, np.array(node_x)[used], np.array(node_y)[used], np.array(kinds)[used], compact[0], compact[1],
-        offsets, twice(new_x, offsets), twice(new_y, offsets), new_seed, graph.vessel_class[lead],
-        graph.class_probability[lead],
-        np.array([np.bitwise_or.reduce(graph.segment_flags[m]) for m in members], dtype=np.int64),
-        _table(accepted, new_of, n),
-    )  # fmt: skip
-
-
-def _trimmed(graph: VesselGraph, partner: dict[int, int]) -> tuple[list[IntArray], FloatArray, FloatArray, FloatArray]:
-    """Return each segment's point indices without the node at a crossing: the way across is drawn straight."""
-    n = graph.n_segments
-    return (
-        [
-            np.arange(graph.offsets[i] + (i in partner), graph.offsets[i + 1] - (i + n in partner))
-            if graph.offsets[i + 1] - graph.offsets[i] > 2
-            else np.arange(graph.offsets[i], graph.offsets[i + 1])
-            for i in range(n)
-        ],
-        graph.x_px,
-        graph.y_px,
-        graph.seed_radius_px,
+    drawn: list[IntArray] = []
+    for index, (chain, closed) in enumerate(chains):
+        points = np.concatenate(
+            [_points(graph, partner, segment)[:: 1 if forward else -1] for segment, forward in chain]
+        )
+        if closed:
+            points = np.append(points, points[0])
+            ends.append((len(node_x), len(node_x)))
+            node_x.append(graph.x_px[points[0]])
+            node_y.append(graph.y_px[points[0]])
+            kind.append(NodeKind.LOOP)
+        else:
+            ends.append((_outer_node(graph, chain[0], first=True), _outer_node(graph, chain[-1], first=False)))
+        drawn.append(points)
+        new_of[[segment for segment, _ in chain]] = index
+    every, offsets = np.concatenate(drawn), offsets_of(np.array([len(points) for points in drawn]))
+    x, y, offsets, (seed,) = resample(graph.x_px[every], graph.y_px[every], offsets, (graph.seed_radius_px[every],))
+    used, compact = np.unique(np.array(ends), return_inverse=True)
+    compact = compact.reshape(-1, 2)
+    lead = np.array([chain[0][0] for chain, _ in chains])
+    flags = np.zeros(len(chains), np.int64)
+    np.bitwise_or.at(flags, new_of[new_of >= 0], graph.segment_flags[new_of >= 0])
+    joined = VesselGraph(
+        shape=graph.shape,
+        node_x_px=np.array(node_x)[used],
+        node_y_px=np.array(node_y)[used],
+        node_kind=np.array(kind, dtype=np.int64)[used],
+        node_a=compact[:, 0],
+        node_b=compact[:, 1],
+        offsets=offsets,
+        x_px=twice(x, offsets),
+        y_px=twice(y, offsets),
+        seed_radius_px=seed,
+        vessel_class=graph.vessel_class[lead],
+        class_probability=graph.class_probability[lead],
+        segment_flags=flags,
+        crossings=NO_CROSSINGS,
     )
+    return joined, new_of
 
 
-def _chains(n: int, partner: dict[int, int], bridges: set[int]) -> list[tuple[list[tuple[int, bool]], bool]]:
+def _points(graph: VesselGraph, partner: Mapping[int, int], segment: int) -> IntArray:
+    """Indices of a segment's points, without the node at a joined end."""
+    first, stop = int(graph.offsets[segment]), int(graph.offsets[segment + 1])
+    if stop - first > 2:
+        first, stop = first + (segment in partner), stop - (segment + graph.n_segments in partner)
+    return np.arange(first, stop)
+
+
+def _chains(n: int, partner: Mapping[int, int], bridges: AbstractSet[int]) -> list[tuple[list[tuple[int, bool]], bool]]:
     """Follow partners from end to end: lists of (segment, forward), and whether the chain closes on itself."""
     seen: BoolArray = np.zeros(n, dtype=bool)
     chains = []

@@ -11,6 +11,7 @@ from vasohm.network.graph import NodeKind, VesselGraph, shift_sideways
 from vasohm.network.lumen import leave_parents
 from vasohm.network.lumenfit import DrawnCovariance, LumenFit, RadiusCovariance, RadiusSettings, fit_lumens
 from vasohm.network.paths import arc_length, owner
+from vasohm.uncertainty import quadrature
 
 TIGHT_BEND_PX = 5.0  # bends tighter than this radius lose 6 to 19 % of their length to any smoother
 BEND_WINDOW_PX = 4  # curvature is read over this many points to either side
@@ -96,7 +97,7 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
         length_um=length_px * pixel,
         length_random_se_um=np.full(cut.n_segments, NODE_SE_PX * np.sqrt(2) * pixel),
         chord_um=chord_px * pixel,
-        segment_flags=_segment_flags(cut, flags, length_px, radius_um / pixel, random_se),
+        segment_flags=_segment_flags(cut, flags, length_px, radius_um / pixel, quadrature(random_se, *shared.T)),
         blur_px=fit.blur_px,
         profile=fit.profile,
         image_contrast=float(np.median(fit.contrast[kept])) if kept.any() else np.nan,
@@ -122,7 +123,7 @@ def _with_plasma_layer(
 
 
 def _segment_flags(
-    graph: VesselGraph, point_flags: IntArray, length_px: FloatArray, radius_px: FloatArray, random_se: FloatArray
+    graph: VesselGraph, point_flags: IntArray, length_px: FloatArray, radius_px: FloatArray, total_se: FloatArray
 ) -> IntArray:
     """What most of a segment's points say, and what its ends and its shape say."""
     n = graph.n_segments
@@ -134,7 +135,7 @@ def _segment_flags(
         flags[share > 0.5] |= flag
     mean_radius = np.bincount(segment, radius_px, n) / counts
     flags[length_px < SHORT_RADII * mean_radius] |= Flag.SHORT
-    flags[np.bincount(segment, random_se, n) / counts > UNRESOLVED_SE] |= Flag.UNRESOLVED
+    flags[np.bincount(segment, total_se, n) / counts > UNRESOLVED_SE] |= Flag.UNRESOLVED
     rim = (graph.node_kind[graph.node_a] == NodeKind.RIM) | (graph.node_kind[graph.node_b] == NodeKind.RIM)
     flags[rim] |= Flag.RIM
     flags[(graph.node_a == graph.node_b) & (graph.node_kind[graph.node_a] == NodeKind.BRANCHING)] |= Flag.SELF_LOOP

@@ -38,6 +38,9 @@ BLOB_SIGMAS = (
 CAP_SIGMAS = 1.6
 SURE_SIGMA_PX = 2.8  # below it neighbouring scales answer so alike that the stronger says little about width
 WIDEST_RATIO = 1.25  # half widths beyond this multiple of the largest radius asked for are not vessels
+NARROWEST_RATIO = (
+    0.6  # and below this share of the smallest: half-height widths of projected tubes are 0.87 of the lumen's
+)
 LEAST_LENGTH_RADII = 4.0  # a vessel is longer than it is wide
 REACH_SIGMAS = 3.0
 REACH_EXTRA_PX = 3.0
@@ -64,13 +67,13 @@ def segment_ridges(prepared: PreparedImage, parameters: Mapping[str, float]) -> 
     if parameters["false_alarms_per_mpx"] > 0:
         limit = max(limit, EXCESS_SLOPE * np.log(EXCESS_REFERENCE_PX / parameters["false_alarms_per_mpx"]))
     fine = merge_scales([r for r in responses if r.sigma_px <= WIDE_SIGMA_PX])
-    widest = WIDEST_RATIO * parameters["radius_hi_px"]
+    widths = (NARROWEST_RATIO * parameters["radius_lo_px"], WIDEST_RATIO * parameters["radius_hi_px"])
     border = ndimage.distance_transform_edt(np.pad(prepared.fov, 1))[1:-1, 1:-1].astype(np.float32)
     mask = np.zeros(even.shape, dtype=bool)
     wide = [r for r in responses if r.sigma_px >= WIDE_SIGMA_PX]
     if len(wide) > 1:
-        mask |= _paint_group(merge_scales(wide), stack, border, (limit, widest))
-    mask |= _paint_group(fine, stack, border, (limit, widest))
+        mask |= _paint_group(merge_scales(wide), stack, border, (limit, *widths))
+    mask |= _paint_group(fine, stack, border, (limit, *widths))
     mask &= prepared.fov
     mask = ndimage.binary_closing(mask, structure=np.ones((3, 3), dtype=bool)) & prepared.fov
     return _without_small(mask)
@@ -102,14 +105,14 @@ def _texture_factor(found: Strength, fov: BoolArray, limit: float) -> float:
 
 
 def _paint_group(
-    found: Strength, stack: list[Float32Array], border: Float32Array, limits: tuple[float, float]
+    found: Strength, stack: list[Float32Array], border: Float32Array, limits: tuple[float, float, float]
 ) -> BoolArray:
     """Ridge lines of one group of scales, checked and painted at full resolution.
 
     `border` (h, w) is the distance to the border of the field, 0 outside; `limits` are the least summed excess of a
-    line and the largest half width of a vessel.
+    line and the smallest and largest half width of a vessel.
     """
-    limit, largest_px = limits
+    limit, smallest_px, largest_px = limits
     factor = 2**found.level
     image = ndimage.gaussian_filter(stack[found.level], 0.7)
     lines = ridge_lines(found.bright, found, (border > 0)[::factor, ::factor])
@@ -119,7 +122,13 @@ def _paint_group(
     ribbon = measure_ribbons(image, _on_grid(lines, factor), reach)
     width = ribbon.half_width_px * factor
     sigma = np.maximum(lines.sigma_px, SURE_SIGMA_PX)
-    good = ribbon.is_shaped & ribbon.is_clear & (width <= largest_px) & (width <= BLOB_SIGMAS * sigma)
+    good = (
+        ribbon.is_shaped
+        & ribbon.is_clear
+        & (width >= smallest_px)
+        & (width <= largest_px)
+        & (width <= BLOB_SIGMAS * sigma)
+    )
     if found.level:
         good &= width >= BUNDLE_SIGMAS * lines.sigma_px
     near_border = (border <= BORDER_PX)[::factor, ::factor][lines.row, lines.column]
