@@ -112,6 +112,7 @@ def make_measured(n_segments: int) -> MeasuredGraph:
         pixel_size_rel_se=PIXEL_REL_SE,
         s_um=np.concatenate([np.linspace(0, one, N) for one in length]) if n_segments else real(),
         radius_um=radius,
+        column=np.ones(len(radius)),
         ln_radius_random_se=np.full(len(radius), 0.03),
         shared=np.full((len(radius), 1), 0.02),
         shared_causes=("blur",),

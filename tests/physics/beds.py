@@ -74,6 +74,7 @@ def bed(
     shared: np.ndarray | None = None,
     noise_sign: int = -1,
     errors: type = IndependentErrors,
+    plasma_layer_um: float = 0.0,
 ) -> MeasuredGraph:
     """Return a measured graph with exactly these vessels; node kinds follow from the degree unless given."""
     a, b = (np.array([getattr(vessel, end) for vessel in vessels], dtype=np.int64) for end in "ab")
@@ -109,12 +110,14 @@ def bed(
         crossings=Crossings(np.zeros(0), np.zeros(0), none, none.copy(), np.zeros(0)),
     )
     first, last = offsets[:-1], offsets[1:] - 1
+    radius_um = np.concatenate([np.zeros(0), *(vessel.radius_um for vessel in vessels)])
     return MeasuredGraph(
         graph=graph,
         pixel_size_um=pixel_size_um,
         pixel_size_rel_se=pixel_size_rel_se,
         s_um=np.concatenate([np.zeros(0), *arcs]),
-        radius_um=np.concatenate([np.zeros(0), *(vessel.radius_um for vessel in vessels)]),
+        radius_um=radius_um,
+        column=1.0 - plasma_layer_um / radius_um,
         ln_radius_random_se=point_se,
         shared=columns,
         shared_causes=tuple(f"cause {k}" for k in range(columns.shape[1])),

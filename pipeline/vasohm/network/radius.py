@@ -36,6 +36,7 @@ class MeasuredGraph:
     pixel_size_rel_se: float  # NaN where not known
     s_um: FloatArray  # (n_points,) arc length from the segment's first point
     radius_um: FloatArray  # (n_points,)
+    column: FloatArray  # (n_points,) share of each radius that was measured, the rest is a plasma layer; 1 without one
     ln_radius_random_se: FloatArray  # (n_points,)
     shared: FloatArray  # (n_points, n_causes)
     shared_causes: tuple[str, ...]
@@ -77,7 +78,8 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
     first, last = cut.offsets[:-1], cut.offsets[1:] - 1
     chord_px = np.hypot(cut.x_px[last] - cut.x_px[first], cut.y_px[last] - cut.y_px[first])
     radius_um = np.exp(fit.ln_radius[kept]) * pixel + settings.plasma_layer_um
-    random_se, shared, causes = _with_plasma_layer(fit, kept, radius_um, settings)
+    column = 1 - settings.plasma_layer_um / radius_um
+    random_se, shared, causes = _with_plasma_layer(fit, kept, radius_um, column, settings)
     flags = fit.point_flags[kept]
     return MeasuredGraph(
         graph=cut,
@@ -85,12 +87,11 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
         pixel_size_rel_se=prepared.pixel_size_se_um / pixel,
         s_um=s_px * pixel,
         radius_um=radius_um,
+        column=column,
         ln_radius_random_se=random_se,
         shared=shared,
         shared_causes=causes,
-        covariance=DrawnCovariance(
-            fit.covariance, len(kept), np.nonzero(kept)[0], 1 - settings.plasma_layer_um / radius_um
-        ),
+        covariance=DrawnCovariance(fit.covariance, len(kept), np.nonzero(kept)[0], column),
         noise_sign=fit.noise_sign,
         contrast=fit.contrast[kept],
         point_flags=flags,
@@ -111,10 +112,9 @@ def _focus(fit: LumenFit, settings: RadiusSettings, pixel_size_um: float) -> Fla
 
 
 def _with_plasma_layer(
-    fit: LumenFit, kept: BoolArray, radius_um: FloatArray, settings: RadiusSettings
+    fit: LumenFit, kept: BoolArray, radius_um: FloatArray, column: FloatArray, settings: RadiusSettings
 ) -> tuple[FloatArray, FloatArray, tuple[str, ...]]:
     """Relative doubt of the lumen from that of the red-cell column and of the layer around it."""
-    column = 1 - settings.plasma_layer_um / radius_um
     random_se, shared, causes = fit.random_se[kept] * column, fit.shared[kept] * column[:, None], fit.shared_causes
     if settings.plasma_layer_se_um > 0:
         shared = np.column_stack((shared, settings.plasma_layer_se_um / radius_um))
