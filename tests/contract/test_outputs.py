@@ -259,7 +259,9 @@ def make_methods() -> Methods:
         version="0.1.0",
         prepare=PrepareSettings(channel="green", polarity="dark", gamma=1.0, radius_um=(4.0, 120.0)),
         segment=SegmentSettings(method="ridge", radius_um=(4.0, 120.0), false_alarms_per_mpx=10.0, parameters={}),
-        radius=RadiusSettings(profile="auto", blur_px=None, plasma_layer_um=1.0, plasma_layer_se_um=0.5, least_radius_um=2.0),
+        radius=RadiusSettings(
+            profile="auto", blur_px=None, plasma_layer_um=1.0, plasma_layer_se_um=0.5, least_radius_um=2.0
+        ),
         blood=BloodSettings(
             law="constant", hematocrit=0.45, plasma_viscosity_mpa_s=1.2, viscosity_mpa_s=3.0, parameters={}
         ),
@@ -311,6 +313,16 @@ def test_tables_have_the_promised_columns_with_and_without_rows() -> None:
         "disc_radius_px",
         "disc_source",
     ]
+
+
+def test_radii_of_points_take_from_the_pixel_size_what_was_measured_with_it() -> None:
+    """A plasma layer in micrometres does not grow with the pixel: half of a radius takes half of the pixel's doubt."""
+    findings = make_findings()
+    half = replace(findings.measured, column=np.full(len(findings.measured.radius_um), 0.5))
+    for measured, part in ((findings.measured, 1.0), (half, 0.5)):
+        points = tabulate("a", {}, replace(findings, measured=measured)).points
+        expected = math.hypot(0.03, 0.02, part * PIXEL_REL_SE)  # JCGM 100:2008, eq. 10
+        np.testing.assert_allclose(points["radius_se_um"] / points["radius_um"], expected, rtol=1e-12)
 
 
 def test_ids_degrees_classes_and_flags_are_those_of_the_graph() -> None:

@@ -436,6 +436,29 @@ def test_doubt_of_a_network_random_and_shared():
     assert found.network_ln_resistance_shared_se[0] == pytest.approx(np.linalg.norm(moves), rel=1e-3)
 
 
+def test_a_plasma_layer_does_not_grow_with_the_pixel():
+    """Radii of (column x pixel size + layer): the stated part of the pixel size against a difference of the chain."""
+    layer_um, rel_se, step = 1.5, 0.03, 1e-4
+
+    def measured(scale, **more):
+        vessels = [
+            Vessel(v.a, v.b, v.path_px, (v.radius_um - layer_um) * scale + layer_um) for v in y_vessels((6.0, 4.0, 3.0))
+        ]
+        return bed(Y_NODES, vessels, pixel_size_um=scale, plasma_layer_um=layer_um, **more)
+
+    for how in (newtonian(), blood("pries-in-vivo")):
+        found = flow_of(measured(1.0, pixel_size_rel_se=rel_se), how=how)
+        wide, narrow = (flow_of(measured(np.exp(sign * step)), how=how) for sign in (1, -1))
+        per_um = (wide.radius_hydraulic_um - narrow.radius_hydraulic_um) / (2 * step)
+        of_segments = np.log(wide.resistance_pa_s_m3 / narrow.resistance_pa_s_m3) / (2 * step)
+        of_network = np.log(wide.network_resistance_pa_s_m3 / narrow.network_resistance_pa_s_m3) / (2 * step)
+        tolerance = 1e-5  # a one-sided difference with 1e-6 inside, a central one with 1e-4 here
+        np.testing.assert_allclose(found.ln_resistance_shared_se, rel_se * np.abs(of_segments), rtol=tolerance)
+        np.testing.assert_allclose(found.network_ln_resistance_shared_se, rel_se * np.abs(of_network), rtol=tolerance)
+        np.testing.assert_allclose(found.radius_hydraulic_shared_se_um, rel_se * per_um, rtol=tolerance)
+    assert found.network_ln_resistance_shared_se[0] < 0.8 * 3 * rel_se  # what a whole radius would give is refused
+
+
 def test_one_image_with_every_oddity():
     """A tree, a single vessel, a mesh, a closed ring, a self-loop and a dead end; none harms another."""
     nodes = [*Y_NODES, (300, 300), (400, 300), (50, 300), (90, 300), (70, 340), (50, 400), (150, 400), (200, 400)]

@@ -142,7 +142,8 @@ def measure_resistance(
     that `measured.noise_sign` states, each bounded by `LARGEST_LN_CORRECTION`. A lognormal radius gives 1 + 10 v for
     p = -4 when its mean is held and 1 + 8 v when its median is held, as here. V comes from the covariance along the
     segment with the gradient d ln R / d ln r of each point, and the shared causes and the pixel size (d ln R / d ln
-    pixel size = 1 + mean p) follow to first order (JCGM 100:2008, eq. 13).
+    pixel size = 1 + mean p c, c being `measured.column`: a plasma layer does not grow with the pixel) follow to first
+    order (JCGM 100:2008, eq. 13).
 
     A radius or a viscosity that is not positive and finite leaves its segment without resistance.
     """
@@ -153,7 +154,7 @@ def measure_resistance(
     viscosity = blood.viscosity(radius_um, hematocrit)
     per_exponent = radius_um / np.abs(_exponent(blood, radius_um, hematocrit, viscosity))
     pixel_size_rel_se = np.nan_to_num(measured.pixel_size_rel_se)
-    scale = (mean.exponent * pixel_size_rel_se)[:, None]
+    scale = (mean.of_pixel_size * pixel_size_rel_se)[:, None]
     length_var = np.square(measured.length_random_se_um / length_um)
     flags = np.where(blood.outside_range(radius_um, hematocrit), int(Flag.LAW_RANGE), 0)
     flags |= np.where(_steep_wall(measured, radius_factor), int(Flag.STEEP_WALL), 0)
@@ -179,7 +180,7 @@ class _Mean:
     ln_mean: FloatArray
     ln_variance: FloatArray
     ln_causes: FloatArray  # (n_segments, n_causes)
-    exponent: FloatArray  # d ln mean / d ln r of all points together
+    of_pixel_size: FloatArray  # d ln mean / d ln pixel size
     ln_radius_range: tuple[FloatArray, FloatArray, FloatArray]  # least, mean, most
 
 
@@ -212,7 +213,7 @@ def _integrate(measured: MeasuredGraph, blood: Blood, hematocrit: FloatArray, ra
         ln_mean=np.log(mean) - measured.noise_sign * median_shift,
         ln_variance=ln_variance,
         ln_causes=np.stack(causes, axis=1) if causes else np.zeros((n, 0)),
-        exponent=sum_by(segment, gradient, n),
+        of_pixel_size=sum_by(segment, gradient * measured.column, n),
         ln_radius_range=(least, mean_by(segment, ln_radius, share, n), most),
     )
 

@@ -198,7 +198,7 @@ def _points(measured: MeasuredGraph) -> dict[str, AnyArray]:
     graph = measured.graph
     n_points = np.diff(graph.offsets)
     shared_se = np.sqrt(np.sum(np.square(measured.shared), axis=1))
-    pixel_se = np.full(graph.n_points, _pixel_rel_se(measured))
+    pixel_se = measured.column * _pixel_rel_se(measured)  # a plasma layer does not grow with the pixel
     return {
         "segment_id": np.repeat(_ids(graph.n_segments), n_points),
         "point": np.arange(graph.n_points) - np.repeat(graph.offsets[:-1], n_points) + 1,
