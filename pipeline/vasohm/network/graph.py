@@ -237,15 +237,30 @@ def meeting_points(graph: VesselGraph) -> tuple[FloatArray, FloatArray]:
 
 
 def shift_sideways(graph: VesselGraph, offset_px: FloatArray) -> VesselGraph:
-    """Move every point along its normal (-dy, dx), branchings with them, and put ends at branchings on their nodes."""
+    """Move every point along its normal (-dy, dx), and branchings to where the moved branches meet.
+
+    The points inside a junction are spread evenly on the straight way to its node, as nothing is seen of a single
+    branch's axis there. No point is added or lost.
+    """
     tx, ty = tangents(graph.x_px, graph.y_px, graph.offsets)
     x, y = graph.x_px - offset_px * ty, graph.y_px + offset_px * tx
     shifted = replace(graph, x_px=x.copy(), y_px=y.copy())  # a noun freezes its arrays
     node_x, node_y = meeting_points(shifted)
-    for ends, nodes in ((graph.offsets[:-1], graph.node_a), (graph.offsets[1:] - 1, graph.node_b)):
-        on_node = graph.node_kind[nodes] == NodeKind.BRANCHING
-        x[ends[on_node]], y[ends[on_node]] = node_x[nodes[on_node]], node_y[nodes[on_node]]
-        node_x[nodes[~on_node]], node_y[nodes[~on_node]] = x[ends[~on_node]], y[ends[~on_node]]
+    near, _ = _junction_window(shifted)
+    segment, k = owner(graph.offsets), position(graph.offsets)
+    first, last = graph.offsets[:-1], graph.offsets[1:] - 1
+    for side, nodes, end, inward, from_end in (
+        (0, graph.node_a, first, 1, k),
+        (1, graph.node_b, last, -1, last[segment] - first[segment] - k),
+    ):
+        at_branching = graph.node_kind[nodes] == NodeKind.BRANCHING
+        node_x[nodes[~at_branching]], node_y[nodes[~at_branching]] = x[end[~at_branching]], y[end[~at_branching]]
+        inside = at_branching[segment] & (from_end < near[segment, side])
+        outer = (end + inward * near[:, side])[segment[inside]]
+        share = from_end[inside] / near[segment[inside], side]
+        node = nodes[segment[inside]]
+        x[inside] = node_x[node] + share * (shifted.x_px[outer] - node_x[node])
+        y[inside] = node_y[node] + share * (shifted.y_px[outer] - node_y[node])
     return replace(graph, x_px=x, y_px=y, node_x_px=node_x, node_y_px=node_y)
 
 

@@ -6,7 +6,7 @@ import numpy as np
 
 from vasohm.arrays import BoolArray, FloatArray
 from vasohm.flags import Flag
-from vasohm.network.blur import START_PX, ImageOptics, OpticsRequest, choose_segments, estimate_optics
+from vasohm.network.blur import START_PX, ImageOptics, OpticsRequest, advantage, choose_segments, estimate_optics
 from vasohm.network.contrast import (
     RESOLVED_SE,
     ContrastPrior,
@@ -155,7 +155,8 @@ def _with_reflex(
     common = float(np.median(high))
     if (
         common < LOWEST_REFLEX
-        or told.cost - again.cost < REFLEX_GAIN[0] + REFLEX_GAIN[1] * wide[observed.segment].sum()
+        or advantage(again.point_cost, told.point_cost, np.exp(told.theta[:, LN_R]))
+        < REFLEX_GAIN[0] + REFLEX_GAIN[1] * wide[observed.segment].sum()
     ):
         return told, None
     scatter = max(1.4826 * float(np.median(np.abs(high - common))), SMALLEST_REFLEX_SPREAD)
