@@ -9,7 +9,7 @@ import pandas as pd
 from vasohm.arrays import AnyArray, BoolArray, FloatArray, IntArray
 from vasohm.flow.rheology import Blood
 from vasohm.network.along import sum_by
-from vasohm.study.matching import Feet, Pieces, Track, feet, pair_places, pieces, track
+from vasohm.study.matching import LEAST_REACH_PX, Feet, Pieces, Track, feet, pair_places, pieces, track
 from vasohm.uncertainty import quadrature
 from vasohm.units import M_PER_UM, PA_S_PER_MPA_S
 
@@ -173,10 +173,21 @@ def _segments(measured: Bed, match: _Match, basis: _Basis) -> pd.DataFrame:
     ]
     moved = found.true_length_px > 0  # a vessel that lets no blood pass is infinite times its length
     total = sum_by(owner[moved], (0.5 * (hindrance[0] + hindrance[1]) * found.true_length_px)[moved], n)
-    mean = _ratio(total, true_px)
-    radius_um = _radius_of(basis.blood, mean, cells)
-    length_ratio = _ratio(length_px * px_um, true_px * true_px_um)
     length_um = table["length_um"].to_numpy(np.float64)
+    length_ratio = _ratio(length_px * px_um, true_px * true_px_um)
+    mean = _ratio(total, true_px)
+    partner = _whole_partners(match, owner, n)
+    one = partner >= 0
+    if one.any():
+        at_points = _hindrance(
+            basis.blood, match.true.radius_px * true_px_um, _of_segment(partner, cells, match.true)[match.true.segment]
+        )
+        n_true = int(match.true.segment.max()) + 1
+        long_px = sum_by(match.true.segment, match.true.weight_px, n_true)
+        whole = _ratio(sum_by(match.true.segment, at_points * match.true.weight_px, n_true), long_px)
+        mean[one] = whole[partner[one]]
+        length_ratio[one] = length_um[one] / (long_px[partner[one]] * true_px_um)
+    radius_um = _radius_of(basis.blood, mean, cells)
     resistance = 8.0 / np.pi * PA_S_PER_MPA_S / M_PER_UM**3 * mean * _ratio(length_um, length_ratio)
     matched = _ratio(length_px, whole_px)
     scale_ln_se = basis.scale_rel_se * np.abs(1.0 + _exponent(basis.blood, table, cells))
@@ -191,6 +202,42 @@ def _segments(measured: Bed, match: _Match, basis: _Basis) -> pd.DataFrame:
         "left_out": _left_out(~(matched >= LEAST_IN_COMMON), ~np.isfinite(compared["ln_resistance_ratio"])),
     }
     return table.assign(**held_against)
+
+
+def _whole_partners(match: _Match, owner: IntArray, n: int) -> IntArray:
+    """True segment (n,) that a measured one covers from end to end, -1 where there is none.
+
+    Such a pair is compared whole: on the stretch in common a segment can only be too long, never too short.
+    """
+    found = match.pieces
+    partner = np.full(n, -1)
+    if not len(owner):
+        return partner
+    low, high, longest = np.full(n, np.inf), np.full(n, -np.inf), np.zeros(n)
+    one = np.full(n, np.iinfo(np.int64).max)
+    other = np.full(n, -1)
+    np.minimum.at(one, owner, found.true_segment)
+    np.maximum.at(other, owner, found.true_segment)
+    for point in (found.begin, found.begin + 1):
+        np.minimum.at(low, owner, match.on_truth.s_px[point])
+        np.maximum.at(high, owner, match.on_truth.s_px[point])
+        np.maximum.at(longest, owner, match.on_truth.radius_px[point])
+    end = np.zeros(int(match.true.segment.max()) + 1)
+    np.maximum.at(end, match.true.segment, match.true.s_px)
+    slack = np.maximum(LEAST_REACH_PX, longest)
+    single = one == other
+    whole = single & (low <= slack) & (end[np.where(single, one, 0)] - high <= slack)
+    partner[whole] = one[whole]
+    counts = np.bincount(partner[whole], minlength=len(end))
+    partner[whole & (counts[np.maximum(partner, 0)] > 1)] = -1
+    return partner
+
+
+def _of_segment(partner: IntArray, values: FloatArray, true: Track) -> FloatArray:
+    """Hand the values of measured segments to their true partners; the first value where a true one has none."""
+    given = np.full(int(true.segment.max()) + 1, values[0])
+    given[partner[partner >= 0]] = values[partner >= 0]
+    return given
 
 
 def _compared(table: pd.DataFrame, true_pa_s_m3: FloatArray, scale_ln_se: FloatArray) -> dict[str, FloatArray]:
