@@ -24,6 +24,7 @@ class Flag(IntFlag):
     CLIPPED = 1 << 9
     STEEP_WALL = 1 << 10
     SELF_LOOP = 1 << 11
+    NO_INTERVAL = 1 << 12
     # networks
     NO_INLET = 1 << 16
     NO_OUTLET = 1 << 17
@@ -58,6 +59,7 @@ MEANING: dict[Flag, str] = {
     Flag.CLIPPED: "intensities at the limit of the file's scale along the vessel",
     Flag.STEEP_WALL: "wall slope above 0.09: local Poiseuille flow is more than 1 % off",
     Flag.SELF_LOOP: "leaves and returns at the same node",
+    Flag.NO_INTERVAL: "the uncertainty of the resistance is too large to bound it",
     Flag.NO_INLET: "no place where blood enters: no resistance",
     Flag.NO_OUTLET: "no place where blood leaves: no resistance",
     Flag.NO_TERMINALS: "inlets and outlets are not known: no resistance",

@@ -325,6 +325,18 @@ def test_radii_of_points_take_from_the_pixel_size_what_was_measured_with_it() ->
         np.testing.assert_allclose(points["radius_se_um"] / points["radius_um"], expected, rtol=1e-12)
 
 
+def test_what_cannot_be_bounded_has_no_bounds_and_says_so() -> None:
+    """A bound of infinity is no number, and an empty cell without a reason is a riddle."""
+    findings = make_findings()
+    hopeless = replace(findings.flow, ln_resistance_random_se=real(0.03, 500.0, np.nan))
+    tables = tabulate("a", {}, replace(findings, flow=hopeless))
+    assert tables.segments["flags"].tolist() == ["", "no_interval", "rim;short;no_flow"]
+    bounds = tables.segments[["resistance_lo_pa_s_m3", "resistance_hi_pa_s_m3"]].notna()
+    assert bounds.to_numpy().tolist() == [[True, True], [False, False], [False, False]]
+    doubtful = replace(findings.flow, network_ln_resistance_shared_se=real(500.0))
+    assert "no_interval" in tabulate("a", {}, replace(findings, flow=doubtful)).networks.loc[0, "flags"]
+
+
 def test_ids_degrees_classes_and_flags_are_those_of_the_graph() -> None:
     """An id off by one would join a radius to its neighbour's length."""
     tables = make_tables()

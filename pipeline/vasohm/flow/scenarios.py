@@ -15,7 +15,7 @@ from vasohm.flow.terminals import Terminals
 from vasohm.network.along import sum_by
 from vasohm.network.graph import VesselClass
 from vasohm.network.radius import MeasuredGraph
-from vasohm.uncertainty import ln_interval, quadrature
+from vasohm.uncertainty import ln_interval, no_interval, quadrature
 
 
 @dataclass(frozen=True, slots=True)
@@ -128,7 +128,7 @@ def run_scenarios(
         ratio=ratio,
         ratio_lo=ratio_lo,
         ratio_hi=ratio_hi,
-        flags=flags.ravel(),
+        flags=flags.ravel() | np.where(no_interval(ratio, ratio_lo), int(Flag.NO_INTERVAL), 0),
     )
 
 

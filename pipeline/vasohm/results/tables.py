@@ -19,7 +19,7 @@ from vasohm.network.morphometry import Morphometry
 from vasohm.network.radius import MeasuredGraph
 from vasohm.results.handed_graph import hand_out_graph
 from vasohm.results.schema import column_names, image_columns
-from vasohm.uncertainty import ln_interval, quadrature
+from vasohm.uncertainty import ln_interval, no_interval, quadrature
 from vasohm.units import UM_PER_MM
 
 KIND_WORDS = np.array([kind.name.lower() for kind in NodeKind], dtype=object)
@@ -161,6 +161,7 @@ def _segments(findings: Findings) -> dict[str, AnyArray]:
     graph = measured.graph
     ln_se = quadrature(flow.ln_resistance_random_se, flow.ln_resistance_shared_se)
     low, high = ln_interval(flow.resistance_pa_s_m3, ln_se)
+    unbounded = np.where(no_interval(flow.resistance_pa_s_m3, low), int(Flag.NO_INTERVAL), 0)
     pixel_se_um = measured.length_um * _pixel_rel_se(measured)
     return {
         "segment_id": _ids(graph.n_segments),
@@ -190,7 +191,7 @@ def _segments(findings: Findings) -> dict[str, AnyArray]:
         "pressure_b_mmhg": flow.pressure_mmhg[graph.node_b],
         "wall_shear_pa": flow.wall_shear_pa,
         "resistance_share": flow.share,
-        "flags": codes(graph.segment_flags | measured.segment_flags | flow.segment_flags),
+        "flags": codes(graph.segment_flags | measured.segment_flags | flow.segment_flags | unbounded),
     }
 
 
@@ -233,6 +234,7 @@ def _networks(findings: Findings) -> dict[str, AnyArray]:
     n = len(shape.network_length_um)
     ln_se = quadrature(flow.network_ln_resistance_random_se, flow.network_ln_resistance_shared_se)
     low, high = ln_interval(flow.network_resistance_pa_s_m3, ln_se)
+    unbounded = np.where(no_interval(flow.network_resistance_pa_s_m3, low), int(Flag.NO_INTERVAL), 0)
     vessel_class, probability = _network_class(measured, shape)
     node_network = shape.node_network
     return {
@@ -254,7 +256,7 @@ def _networks(findings: Findings) -> dict[str, AnyArray]:
         "ln_resistance_random_se": flow.network_ln_resistance_random_se,
         "ln_resistance_shared_se": flow.network_ln_resistance_shared_se,
         "flow_nl_min": flow.network_flow_nl_min,
-        "flags": codes(terminals.network_flags | flow.network_flags),
+        "flags": codes(terminals.network_flags | flow.network_flags | unbounded),
     }
 
 
