@@ -15,8 +15,8 @@ from vasohm.flow.kirchhoff import solve_flows
 from vasohm.flow.poiseuille import SegmentResistances, measure_resistance
 from vasohm.flow.rheology import BloodSettings, make_blood
 from vasohm.flow.terminals import Terminals, missing_terminals
-from vasohm.network.along import sum_by
 from vasohm.network.graph import NodeKind, VesselGraph
+from vasohm.network.groups import sum_by
 from vasohm.network.radius import MeasuredGraph
 from vasohm.units import M_PER_UM, NL_MIN_PER_M3_S, PA_PER_MMHG, PA_S_PER_MPA_S
 

@@ -9,7 +9,8 @@ from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.errors import DomainError
 from vasohm.flags import Flag
 from vasohm.flow.rheology import Blood
-from vasohm.network.along import arc_shares, mean_by, sum_by
+from vasohm.network.along import arc_shares
+from vasohm.network.groups import mean_by, sum_by
 from vasohm.network.paths import owner
 from vasohm.network.radius import MeasuredGraph
 from vasohm.uncertainty import COVERAGE_FACTOR_95, quadrature
@@ -104,7 +105,7 @@ class SegmentResistances:
     hematocrit: FloatArray  # (n_segments,)
     resistance_pa_s_m3: FloatArray
     ln_random_se: FloatArray
-    ln_shared: FloatArray  # (n_segments, n_causes + 1)
+    ln_shared: FloatArray  # (n_segments, n_causes + 2)
     radius_hydraulic_um: FloatArray
     radius_hydraulic_random_se_um: FloatArray
     radius_hydraulic_shared_se_um: FloatArray
@@ -142,19 +143,22 @@ def measure_resistance(
     that `measured.noise_sign` states, each bounded by `LARGEST_LN_CORRECTION`. A lognormal radius gives 1 + 10 v for
     p = -4 when its mean is held and 1 + 8 v when its median is held, as here. V comes from the covariance along the
     segment with the gradient d ln R / d ln r of each point, and the shared causes and the pixel size (d ln R / d ln
-    pixel size = 1 + mean p c, c being `measured.column`: a plasma layer does not grow with the pixel) follow to first
-    order (JCGM 100:2008, eq. 13).
+    pixel size = 1 + mean p c, c being `measured.column`: a plasma layer does not grow with the pixel) and the hematocrit
+    (mean of d ln μ / d H) follow to first order (JCGM 100:2008, eq. 13).
 
     A radius or a viscosity that is not positive and finite leaves its segment without resistance.
     """
     length_um = np.maximum(measured.length_um, LEAST_LENGTH_PX * measured.pixel_size_um)
     mean = _integrate(measured, blood, hematocrit, radius_factor)
     radius_um = _hydraulic_radius(blood, hematocrit, mean)
-    # R/L depends on the hydraulic radius with the exponent of r there, so its doubt is that of R/L over the exponent.
+    # R/L depends on the hydraulic radius with the exponent of r there, so its doubt is that of R/L over the exponent;
+    # of the hematocrit it takes only what the viscosity at that radius does not.
     viscosity = blood.viscosity(radius_um, hematocrit)
     per_exponent = radius_um / np.abs(_exponent(blood, radius_um, hematocrit, viscosity))
-    pixel_size_rel_se = np.nan_to_num(measured.pixel_size_rel_se)
-    scale = (mean.of_pixel_size * pixel_size_rel_se)[:, None]
+    of_viscosity = blood.ln_change_with_hematocrit(radius_um, hematocrit, viscosity)
+    of_length = np.zeros(mean.ln_causes.shape)
+    of_length[:, -2] = np.nan_to_num(measured.pixel_size_rel_se)
+    of_radius = np.column_stack([mean.ln_causes[:, :-1], mean.ln_causes[:, -1] - of_viscosity])
     length_var = np.square(measured.length_random_se_um / length_um)
     flags = np.where(blood.outside_range(radius_um, hematocrit), int(Flag.LAW_RANGE), 0)
     flags |= np.where(_steep_wall(measured, radius_factor), int(Flag.STEEP_WALL), 0)
@@ -163,10 +167,10 @@ def measure_resistance(
         hematocrit=np.array(hematocrit, dtype=np.float64),
         resistance_pa_s_m3=_in_si(length_um * np.exp(mean.ln_mean)) + unknown,
         ln_random_se=np.sqrt(mean.ln_variance + length_var) + unknown,
-        ln_shared=np.hstack([mean.ln_causes, scale + pixel_size_rel_se]) + unknown[:, None],
+        ln_shared=mean.ln_causes + of_length + unknown[:, None],
         radius_hydraulic_um=radius_um + unknown,
         radius_hydraulic_random_se_um=per_exponent * np.sqrt(mean.ln_variance) + unknown,
-        radius_hydraulic_shared_se_um=per_exponent * quadrature(*np.hstack([mean.ln_causes, scale]).T) + unknown,
+        radius_hydraulic_shared_se_um=per_exponent * quadrature(*of_radius.T) + unknown,
         viscosity_mpa_s=viscosity + unknown,
         flags=np.where(mean.defined, flags, int(Flag.LAW_RANGE)),
     )
@@ -179,8 +183,7 @@ class _Mean:
     defined: BoolArray  # (n_segments,)
     ln_mean: FloatArray
     ln_variance: FloatArray
-    ln_causes: FloatArray  # (n_segments, n_causes)
-    of_pixel_size: FloatArray  # d ln mean / d ln pixel size
+    ln_causes: FloatArray  # (n_segments, n_causes + 2) its change for one standard uncertainty of each shared cause
     ln_radius_range: tuple[FloatArray, FloatArray, FloatArray]  # least, mean, most
 
 
@@ -207,13 +210,14 @@ def _integrate(measured: MeasuredGraph, blood: Blood, hematocrit: FloatArray, ra
     ln_radius = np.log(radius)
     np.minimum.at(least, segment, ln_radius)
     np.maximum.at(most, segment, ln_radius)
-    causes = [sum_by(segment, gradient * cause, n) for cause in measured.shared.T]
+    pixel_size = measured.column * np.nan_to_num(measured.pixel_size_rel_se)
+    by_point = [gradient * cause for cause in (*measured.shared.T, pixel_size)]
+    by_point.append(part / mean[segment] * blood.ln_change_with_hematocrit(radius, cells, viscosity))
     return _Mean(
         defined=defined,
         ln_mean=np.log(mean) - measured.noise_sign * median_shift,
         ln_variance=ln_variance,
-        ln_causes=np.stack(causes, axis=1) if causes else np.zeros((n, 0)),
-        of_pixel_size=sum_by(segment, gradient * measured.column, n),
+        ln_causes=np.stack([sum_by(segment, moved, n) for moved in by_point], axis=1),
         ln_radius_range=(least, mean_by(segment, ln_radius, share, n), most),
     )
 

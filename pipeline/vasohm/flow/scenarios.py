@@ -12,8 +12,8 @@ from vasohm.flow.hydraulics import Circulation, circulate, entering_hematocrit
 from vasohm.flow.poiseuille import SegmentResistances, measure_resistance
 from vasohm.flow.rheology import BloodSettings, make_blood
 from vasohm.flow.terminals import Terminals
-from vasohm.network.along import sum_by
 from vasohm.network.graph import VesselClass
+from vasohm.network.groups import sum_by
 from vasohm.network.radius import MeasuredGraph
 from vasohm.uncertainty import ln_interval, no_interval, quadrature
 

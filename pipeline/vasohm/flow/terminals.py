@@ -8,8 +8,9 @@ import numpy as np
 
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.flags import Flag
-from vasohm.network.along import arc_shares, mean_by, sum_by
+from vasohm.network.along import arc_shares
 from vasohm.network.graph import NodeKind, VesselClass, label_networks
+from vasohm.network.groups import mean_by, sum_by
 from vasohm.network.paths import owner
 from vasohm.network.radius import MeasuredGraph
 

@@ -8,6 +8,7 @@ from scipy import ndimage
 from vasohm.arrays import BoolArray, Float32Array, FloatArray, IntArray
 from vasohm.image.prepare import PreparedImage
 from vasohm.network.graph import NodeKind, VesselGraph, branch_directions, centre_junctions, end_radius, in_fixed_order
+from vasohm.network.groups import median_by
 from vasohm.network.paths import offsets_of, owner, position, resample, running_median, smooth, tangents, twice
 
 ROUNDS = 3
@@ -19,6 +20,7 @@ RIM_PX = 3.0  # a vessel seen to within this distance of the border of the field
 END_RADII = 2.0  # a skeleton stops about one radius before a round end
 TIP_PX = 4  # and this many pixels more of it are drawn anew
 NEW_POINT_PX = 0.5
+LEAST_POINTS = 4  # a segment keeps at least so many
 
 
 def refine_centrelines(graph: VesselGraph, prepared: PreparedImage) -> VesselGraph:
@@ -139,7 +141,7 @@ def extend_ends(graph: VesselGraph, prepared: PreparedImage) -> VesselGraph:
     """
     if graph.n_segments == 0:
         return graph
-    graph, cut_px = _without_tips(graph)
+    graph, cut_px = _without_tips(graph, prepared)
     node, _, towards = branch_directions(graph)
     loose = np.nonzero(graph.node_kind[node] == NodeKind.END)[0]
     if len(loose) == 0:
@@ -161,17 +163,32 @@ def extend_ends(graph: VesselGraph, prepared: PreparedImage) -> VesselGraph:
     return in_fixed_order(_with_tips(graph, (node_x, node_y, kind), loose, further > NEW_POINT_PX))
 
 
-def _without_tips(graph: VesselGraph) -> tuple[VesselGraph, FloatArray]:
-    """Cut the last points before each dead end; the second value is how many pixels each end (2 n_segments,) lost."""
+def _without_tips(graph: VesselGraph, prepared: PreparedImage) -> tuple[VesselGraph, FloatArray]:
+    """Cut what lies past each dead end, and the last points before it.
+
+    A filter's lobes can lead a line past the end of a strong vessel: first all points go from which on the signal
+    stays below half of the segment's own. The second value is how many pixels each end (2 n_segments,) lost.
+    """
     nodes = np.column_stack((graph.node_a, graph.node_b))
     count = np.diff(graph.offsets)[:, None]
-    cut = np.where(graph.node_kind[nodes] == NodeKind.END, np.ceil(end_radius(graph)) + TIP_PX, 0)
-    cut = np.minimum(cut, (count - 1) // 3).astype(np.int64)
     segment, k = owner(graph.offsets), position(graph.offsets)
-    keep = (k >= cut[segment, 0]) & (count[segment, 0] - 1 - k >= cut[segment, 1])
+    signal = ndimage.gaussian_filter(prepared.signal, 1.0, mode="nearest")
+    row = np.clip(np.rint(graph.y_px), 0, graph.shape[0] - 1).astype(np.int64)
+    column = np.clip(np.rint(graph.x_px), 0, graph.shape[1] - 1).astype(np.int64)
+    on_axis = signal[row, column].astype(np.float64)
+    seen = on_axis >= 0.5 * median_by(segment, on_axis, graph.n_segments)[segment]
+    from_end = np.column_stack((k, count[segment, 0] - 1 - k))
+    past = np.column_stack(
+        [np.minimum.reduceat(np.where(seen, side, count[segment, 0]), graph.offsets[:-1]) for side in from_end.T]
+    )
+    cut = np.minimum(past + np.ceil(end_radius(graph)) + TIP_PX, past + (count - 1 - past.sum(axis=1)[:, None]) // 3)
+    cut = np.where((graph.node_kind[nodes] == NodeKind.END) & (past < count // 2), cut, 0)
+    cut = np.where(count - cut.sum(axis=1)[:, None] >= LEAST_POINTS, cut, 0).astype(np.int64)
+    keep = (from_end >= cut[segment]).all(axis=1)
     x, y, seed = graph.x_px[keep], graph.y_px[keep], graph.seed_radius_px[keep]
     offsets = offsets_of(np.bincount(segment[keep], minlength=graph.n_segments))
-    return replace(graph, x_px=x, y_px=y, seed_radius_px=seed, offsets=offsets), cut.T.ravel().astype(np.float64)
+    lost = np.maximum(cut - past, 0).T.ravel().astype(np.float64)
+    return replace(graph, x_px=x, y_px=y, seed_radius_px=seed, offsets=offsets), lost
 
 
 def _with_tips(
