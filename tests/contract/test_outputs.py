@@ -263,7 +263,12 @@ def make_methods() -> Methods:
             profile="auto", blur_px=None, plasma_layer_um=1.0, plasma_layer_se_um=0.5, least_radius_um=2.0
         ),
         blood=BloodSettings(
-            law="constant", hematocrit=0.45, plasma_viscosity_mpa_s=1.2, viscosity_mpa_s=3.0, parameters={}
+            law="constant",
+            hematocrit=0.45,
+            hematocrit_se=0.0,
+            plasma_viscosity_mpa_s=1.2,
+            viscosity_mpa_s=3.0,
+            parameters={},
         ),
         network=NetworkSettings(terminals="auto", drive_mmhg=1.0),
         law_citation="no source given",

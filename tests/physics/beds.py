@@ -138,9 +138,9 @@ def bed(
 
 def newtonian(viscosity_mpa_s: float = 3.0) -> BloodSettings:
     """Blood of one viscosity."""
-    return BloodSettings("constant", 0.45, 1.2, viscosity_mpa_s, {})
+    return BloodSettings("constant", 0.45, 0.0, 1.2, viscosity_mpa_s, {})
 
 
-def blood(law: str, hematocrit: float = 0.45) -> BloodSettings:
+def blood(law: str, hematocrit: float = 0.45, hematocrit_se: float = 0.0) -> BloodSettings:
     """Blood after a published law, plasma of 1.2 mPa.s."""
-    return BloodSettings(law, hematocrit, 1.2, 3.0, {})
+    return BloodSettings(law, hematocrit, hematocrit_se, 1.2, 3.0, {})

@@ -8,7 +8,7 @@ from fluids.friction import one_phase_dP
 from vasohm.errors import DomainError
 from vasohm.flags import Flag
 from vasohm.flow.poiseuille import LARGEST_LN_CORRECTION, measure_resistance, segment_resistance
-from vasohm.flow.rheology import BloodSettings, apparent_viscosity, make_blood
+from vasohm.flow.rheology import apparent_viscosity, make_blood
 from vasohm.units import M_PER_UM, NL_MIN_PER_M3_S, PA_PER_MMHG, PA_S_PER_MPA_S
 
 ROUNDING = 32 * np.finfo(float).eps
@@ -172,7 +172,7 @@ def test_resistance_per_radius_and_per_pixel_size_follow_the_local_exponent():
             shared=np.full((41, 1), 0.01),
         )
         found = resistances(tube, blood(law))
-        np.testing.assert_allclose(found.ln_shared[0] / 0.01, [exponent, of_pixel], rtol=tolerance)
+        np.testing.assert_allclose(found.ln_shared[0, :2] / 0.01, [exponent, of_pixel], rtol=tolerance)
 
 
 def test_resistance_scales_with_the_pixel_size_to_the_power_minus_3():
@@ -184,6 +184,32 @@ def test_resistance_scales_with_the_pixel_size_to_the_power_minus_3():
             for size in (1.0, factor)
         )
         assert other / one == pytest.approx(ratio, rel=FORMULA)
+
+
+@pytest.mark.parametrize("law", ["pries-in-vitro", "pries-in-vivo", "pries-secomb-surface-layer", "constant"])
+@pytest.mark.parametrize("hematocrit", [0.0, 0.3, 0.75])
+def test_the_hematocrit_moves_all_viscosities_together(law, hematocrit):
+    """JCGM 100:2008, eq. 13: the stated part against a difference of R itself, at the ends of the range too."""
+    se, step = 0.02, 1e-4
+    inward = step if hematocrit < 0.5 else -step
+    vessels = [straight(TUBE, 0, 1, np.linspace(9, 4, 41)), straight(TUBE, 0, 1, 20.0)]
+    tubes = bed(TUBE, vessels)
+    found = resistances(tubes, blood(law, hematocrit, se))
+    there, farther = (resistances(tubes, blood(law, hematocrit + k * inward)) for k in (1, 2))
+    # three points, one-sided: exact to the second order in the step
+    slope = (4 * np.log(there.resistance_pa_s_m3) - np.log(farther.resistance_pa_s_m3)) / (2 * inward)
+    slope -= 3 * np.log(found.resistance_pa_s_m3) / (2 * inward)
+    np.testing.assert_allclose(found.ln_shared[:, 1], se * slope, rtol=1e-4, atol=1e-9)
+    per_um = (4 * there.radius_hydraulic_um - farther.radius_hydraulic_um - 3 * found.radius_hydraulic_um) / (
+        2 * inward
+    )
+    np.testing.assert_allclose(found.radius_hydraulic_shared_se_um, se * np.abs(per_um), rtol=1e-3, atol=1e-7)
+    assert (found.ln_shared[:, 1] == 0).all() == (law == "constant")
+
+
+def test_a_hematocrit_cannot_be_known_to_less_than_nothing():
+    with pytest.raises(DomainError, match=r"hematocrit_se is -0.1"):
+        make_blood(blood("pries-in-vivo", 0.45, -0.1))
 
 
 def test_combined_uncertainty_of_one_tube():
@@ -288,6 +314,6 @@ def test_a_segment_without_length_joins_its_nodes():
 
 
 def test_a_graph_without_vessels_gives_empty_arrays():
-    found = resistances(bed([], []), BloodSettings("pries-in-vivo", 0.45, 1.2, 3.0, {}))
+    found = resistances(bed([], []), blood("pries-in-vivo"))
     assert found.resistance_pa_s_m3.shape == (0,)
-    assert found.ln_shared.shape == (0, 1)
+    assert found.ln_shared.shape == (0, 2)

@@ -35,7 +35,7 @@ Tables = dict[str, pd.DataFrame]
 
 
 def the_law(law: str = "constant") -> Blood:
-    return make_blood(BloodSettings(law, HEMATOCRIT, 1.2, VISCOSITY_MPA_S, {}))
+    return make_blood(BloodSettings(law, HEMATOCRIT, 0.0, 1.2, VISCOSITY_MPA_S, {}))
 
 
 def bed(tables: Tables, *, pixel_se_um: float = np.nan) -> Bed:

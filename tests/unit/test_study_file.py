@@ -70,6 +70,7 @@ CONTRACT = """
     [blood]
     law                    = "pries-in-vitro"
     hematocrit             = 0.4
+    hematocrit_se          = 0.02
     plasma_viscosity_mpa_s = 1.3
     viscosity_mpa_s        = 4.0
     hematocrit_split       = false
@@ -117,7 +118,7 @@ def test_every_key_reaches_its_setting(tmp_path: Path) -> None:
     assert chosen.crossings.threshold == 0.6
     assert (chosen.radius.profile, chosen.radius.blur_px) == ("cylinder", 1.5)
     assert (chosen.radius.plasma_layer_um, chosen.radius.plasma_layer_se_um) == (1.1, 0.4)
-    assert (chosen.blood.law, chosen.blood.hematocrit) == ("pries-in-vitro", 0.4)
+    assert (chosen.blood.law, chosen.blood.hematocrit, chosen.blood.hematocrit_se) == ("pries-in-vitro", 0.4, 0.02)
     assert (chosen.blood.plasma_viscosity_mpa_s, chosen.blood.viscosity_mpa_s) == (1.3, 4.0)
     assert (chosen.network.terminals, chosen.network.drive_mmhg) == ("none", 2.0)
     assert chosen.scenarios == (
@@ -215,6 +216,7 @@ FAULTY = {
     "a channel": ({"image": {"preset": "fundus", "channel": "gren"}}, "Did you mean 'green'?"),
     "radii turned round": ({"segment": {"radius_um": [5, 4]}}, "must be two radii in um, the smaller first"),
     "one radius": ({"segment": {"radius_um": [5]}}, "segment.radius_um: [5] is wrong"),
+    "doubt below nothing": ({"blood": {"hematocrit_se": -0.01}}, "-0.01 must be at least 0."),
     "packed cells": ({"blood": {"hematocrit": 0.76}}, "0.76 must be at most 0.75."),
     "no viscosity": ({"blood": {"plasma_viscosity_mpa_s": 0}}, "0 must be greater than 0."),
     "a law": ({"blood": {"law": "pries-in-vivi"}}, "Did you mean 'pries-in-vivo'?"),

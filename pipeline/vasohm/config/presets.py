@@ -24,6 +24,7 @@ DEFAULTS: Mapping[str, Any] = {
     "radius.plasma_layer_se_um": 0.0,
     "blood.law": "pries-in-vivo",
     "blood.hematocrit": 0.45,  # systemic, of healthy adults
+    "blood.hematocrit_se": 0.0,
     "blood.plasma_viscosity_mpa_s": 1.2,  # at 37 degrees Celsius
     "blood.viscosity_mpa_s": 3.0,
     "blood.hematocrit_split": False,

@@ -314,6 +314,7 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
         blood=BloodSettings(
             values["blood.law"],
             values["blood.hematocrit"],
+            values["blood.hematocrit_se"],
             values["blood.plasma_viscosity_mpa_s"],
             values["blood.viscosity_mpa_s"],
             values["blood.parameters"],

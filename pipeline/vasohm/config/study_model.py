@@ -150,6 +150,7 @@ class BloodTable(Table):
 
     law: Annotated[str, PlainValidator(lambda value: _one_of(value, law_names()))] | None = None
     hematocrit: Annotated[float, Field(ge=0, le=HIGHEST_HEMATOCRIT)] | None = None
+    hematocrit_se: Annotated[float, Field(ge=0, le=HIGHEST_HEMATOCRIT)] | None = None
     plasma_viscosity_mpa_s: Positive | None = None
     viscosity_mpa_s: Positive | None = None
     hematocrit_split: Annotated[bool, AfterValidator(_not_split)] | None = None

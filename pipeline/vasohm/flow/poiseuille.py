@@ -143,8 +143,8 @@ def measure_resistance(
     that `measured.noise_sign` states, each bounded by `LARGEST_LN_CORRECTION`. A lognormal radius gives 1 + 10 v for
     p = -4 when its mean is held and 1 + 8 v when its median is held, as here. V comes from the covariance along the
     segment with the gradient d ln R / d ln r of each point, and the shared causes and the pixel size (d ln R / d ln
-    pixel size = 1 + mean p c, c being `measured.column`: a plasma layer does not grow with the pixel) and the hematocrit
-    (mean of d ln μ / d H) follow to first order (JCGM 100:2008, eq. 13).
+    pixel size = 1 + mean p c, c being `measured.column`: a plasma layer does not grow with the pixel) and the
+    hematocrit (mean of d ln μ / d H) follow to first order (JCGM 100:2008, eq. 13).
 
     A radius or a viscosity that is not positive and finite leaves its segment without resistance.
     """

@@ -22,14 +22,19 @@ from vasohm.flow.laws import (
 
 ENTRY_POINT_GROUP = "vasohm.viscosity_laws"
 HIGHEST_HEMATOCRIT = 0.75  # above it cells are packed and no law was measured
+HEMATOCRIT_STEP = 1e-6  # of a one-sided difference: slopes to about 1e-6
 
 
 @dataclass(frozen=True, slots=True)
 class BloodSettings:
-    """Blood as the study file describes it; `hematocrit` is the discharge hematocrit entering the network."""
+    """Blood as the study file describes it; `hematocrit` is the discharge hematocrit entering the network.
+
+    `hematocrit_se` is its standard uncertainty, and that of a hematocrit which sheet or terminals give instead.
+    """
 
     law: str
     hematocrit: float
+    hematocrit_se: float
     plasma_viscosity_mpa_s: float
     viscosity_mpa_s: float  # of law "constant"
     parameters: Mapping[str, float]
@@ -125,6 +130,7 @@ class Blood:
     law: ViscosityLaw
     plasma_viscosity_mpa_s: float
     parameters: Mapping[str, float]
+    hematocrit_se: float  # of every hematocrit alike
 
     def viscosity(self, radius_um: FloatArray, hematocrit: FloatArray) -> FloatArray:
         """Apparent viscosity in mPa·s, shape of both arguments broadcast; infinite where no blood can pass.
@@ -161,6 +167,21 @@ class Blood:
             raise PluginError(msg)
         return value.astype(np.float64, copy=False)
 
+    def ln_change_with_hematocrit(
+        self, radius_um: FloatArray, hematocrit: FloatArray, viscosity_mpa_s: FloatArray
+    ) -> FloatArray:
+        """Change of ln viscosity for one standard uncertainty of the hematocrit; `viscosity_mpa_s` is that of both.
+
+        By a one-sided difference towards the middle of the range of hematocrit; 0 where no blood can pass.
+        """
+        if self.hematocrit_se == 0.0:
+            return np.zeros(np.shape(viscosity_mpa_s))
+        step = np.where(hematocrit < 0.5 * HIGHEST_HEMATOCRIT, HEMATOCRIT_STEP, -HEMATOCRIT_STEP)
+        moved = self.viscosity(radius_um, hematocrit + step)
+        both = np.isfinite(moved) & np.isfinite(viscosity_mpa_s)
+        ratio = np.divide(moved, viscosity_mpa_s, out=np.ones(both.shape), where=both)
+        return np.asarray(np.log(ratio) / step * self.hematocrit_se)
+
     def outside_range(self, radius_um: FloatArray, hematocrit: FloatArray) -> BoolArray:
         """Whether the law is used beyond the radii or hematocrits it was fitted to."""
         (least_um, most_um), (least, most) = self.law.valid_radius_um, self.law.valid_hematocrit
@@ -180,21 +201,26 @@ def make_blood(settings: BloodSettings) -> Blood:
     Raises
     ------
     DomainError
-        A plasma viscosity that is not positive.
+        A plasma viscosity that is not positive, or an uncertainty of the hematocrit that is negative.
     PluginError
         See `get_law`.
     """
     parameters = dict(settings.parameters)
     if settings.law == "constant":
         parameters["viscosity_mpa_s"] = settings.viscosity_mpa_s
-    return _blood(settings.law, settings.plasma_viscosity_mpa_s, parameters)
+    if not 0 <= settings.hematocrit_se < np.inf:
+        msg = f"hematocrit_se is {settings.hematocrit_se}; a standard uncertainty is 0 or more."
+        raise DomainError(msg)
+    return _blood(settings.law, settings.plasma_viscosity_mpa_s, parameters, settings.hematocrit_se)
 
 
-def _blood(law: str, plasma_viscosity_mpa_s: float, parameters: Mapping[str, float]) -> Blood:
+def _blood(
+    law: str, plasma_viscosity_mpa_s: float, parameters: Mapping[str, float], hematocrit_se: float = 0.0
+) -> Blood:
     if not 0 < plasma_viscosity_mpa_s < np.inf:
         msg = f"plasma_viscosity_mpa_s is {plasma_viscosity_mpa_s}; it must be positive (about 1.2 at 37 °C)."
         raise DomainError(msg)
-    return Blood(law, get_law(law), plasma_viscosity_mpa_s, MappingProxyType(dict(parameters)))
+    return Blood(law, get_law(law), plasma_viscosity_mpa_s, MappingProxyType(dict(parameters)), hematocrit_se)
 
 
 def apparent_viscosity(

@@ -178,7 +178,7 @@ def _mismatches(measured: Bed, true: Bed) -> list[Problem]:
 def _blood(configuration: Mapping[str, Any], results_dir: Path) -> tuple[Blood, float]:
     """Blood and hematocrit as the study was measured with them."""
     try:
-        names = ("law", "hematocrit", "plasma_viscosity_mpa_s", "viscosity_mpa_s", "parameters")
+        names = ("law", "hematocrit", "hematocrit_se", "plasma_viscosity_mpa_s", "viscosity_mpa_s", "parameters")
         settings = BloodSettings(**{name: configuration[f"blood.{name}"]["value"] for name in names})
         return make_blood(settings), float(settings.hematocrit)
     except (KeyError, TypeError, ValueError) as fault:
