@@ -140,10 +140,11 @@ def test_truth_that_does_not_belong_is_refused(measured: Path, tmp_path: Path, d
 
 
 def test_folders_that_are_none_are_refused(measured: Path, tmp_path: Path) -> None:
-    """The folder above the truth is told where the truth is, with exit status 2; a folder without results is none."""
-    above = run("appraise", measured / "results", "--truth", measured / "made", "--out", tmp_path / "out")
-    assert above.returncode == 2
-    assert f"Give {measured / 'made' / 'truth'}." in above.stderr
+    """The folder of phantoms serves as well as the truth in it; one without truth, and one without results, do not."""
+    assert run("appraise", measured / "results", "--truth", measured / "made").returncode == 0
+    none = run("appraise", measured / "results", "--truth", tmp_path, "--out", tmp_path / "out")
+    assert none.returncode == 2
+    assert "holds no truth" in none.stderr
     assert not (tmp_path / "out").exists()
     with pytest.raises(RequestError, match=r"holds no study\.json"):
         appraise(tmp_path, measured / "made" / "truth")

@@ -19,6 +19,9 @@ HALF_WIDTH_RATIO = 1.2  # the wider half may not exceed this x the narrower: a n
 SOFT_RISE, RISE_PX = 0.45, 1.5
 LEAST_HALF_WIDTH_PX = 0.7
 CLEAR_CONTRAST = 1.2  # in noise units: four times the noise of an averaged profile's height
+GAP_SHARE = 0.3  # of the height on both sides along the line: less is a gap between two vessels
+GAP_LEAST = 4.0  # noise units: a fainter line is not seen well enough to tell its gaps
+GAP_PASSES, GAP_STEPS, GAP_CORE_PX = 3, 14, 1
 TAIL_SHARE = (
     0.3  # of the strongest contrast nearby: less, and not clear, is a lobe of the filter beside or past a vessel
 )
@@ -55,7 +58,7 @@ def measure_ribbons(image: Float32Array, lines: RidgePixels, reach_px: FloatArra
         nothing = np.zeros(0)
         return Ribbon(nothing, nothing, np.zeros(0, dtype=bool), np.zeros(0, dtype=bool))
     half = int(np.ceil(reach_px.max()))
-    sides = _averaged_sides(image, lines, half)
+    sides_here, sides = _averaged_sides(image, lines, half)
     offsets = np.arange(half + 1)
     visible = offsets[None, :] <= np.maximum(np.tile(reach_px, 2), 3)[:, None]
     masked = np.where(visible, sides, np.inf)
@@ -79,8 +82,10 @@ def measure_ribbons(image: Float32Array, lines: RidgePixels, reach_px: FloatArra
     fill = np.where(inside, sides - base[:, None], 0).sum(axis=1) / inside.sum(axis=1) / np.maximum(peak - base, 1e-12)
     shaped = fill.reshape(2, n).min(axis=0) >= LEAST_FILL
     shaped &= (weaker >= WEAKER_SIDE * stronger) & (hollow <= HOLLOW) & (rise <= SOFT_RISE * half_width + RISE_PX)
-    clear = (weaker > 0) & (
-        (weaker >= CLEAR_CONTRAST) | (weaker >= TAIL_SHARE * _strongest_near(image.shape, lines, weaker))
+    clear = (
+        ~_in_gap(lines, sides_here, base, n)
+        & (weaker > 0)
+        & ((weaker >= CLEAR_CONTRAST) | (weaker >= TAIL_SHARE * _strongest_near(image.shape, lines, weaker)))
     )
     return Ribbon(np.maximum(half_width, LEAST_HALF_WIDTH_PX), weaker, shaped, clear)
 
@@ -100,6 +105,23 @@ def _strongest_near(shape: tuple[int, ...], lines: RidgePixels, contrast: FloatA
         near = ndimage.maximum_filter(grid, size=2 * int(TAIL_SIGMAS * sigma) + 1, mode="constant")
         strongest[these] = near[lines.row[these], lines.column[these]]
     return strongest
+
+
+def _in_gap(lines: RidgePixels, sides: FloatArray, base: FloatArray, n: int) -> BoolArray:
+    """Pixels where a line has next to no height of its own, but has it on both sides along the line.
+
+    An elongated filter joins two vessels that end near each other. Height is held against its closing along the line
+    (the smaller of what is reached on either side), so that a thin branch beside a thick vessel is no gap.
+    """
+    height = (sides[:, : GAP_CORE_PX + 1].mean(axis=1) - base).reshape(2, n).mean(axis=0)
+    pairs = _pairs(lines)
+    closed = height.copy()
+    for reach in (np.maximum, np.minimum):
+        for _ in range(GAP_STEPS):
+            best = reach(closed[pairs[:, 0]], closed[pairs[:, 1]])
+            reach.at(closed, pairs[:, 0], best)
+            reach.at(closed, pairs[:, 1], best)
+    return (height < GAP_SHARE * closed) & (closed > GAP_LEAST)
 
 
 def bridge(
@@ -128,11 +150,11 @@ def bridge(
     return good | lost | (reached & near_border), width
 
 
-def _averaged_sides(image: Float32Array, lines: RidgePixels, half: int) -> FloatArray:
-    """Profiles (2 n, half + 1) outwards from the ridge, first all on the normal's side, then all on the other.
+def _averaged_sides(image: Float32Array, lines: RidgePixels, half: int) -> tuple[FloatArray, FloatArray]:
+    """Profiles (2 n, half + 1) outwards from the ridge, averaged a little and much.
 
-    Neighbours along a line are averaged side by side: where the normals of two neighbours point opposite ways, the
-    left side of one belongs to the right side of the other.
+    First come all on the normal's side, then all on the other. Neighbours along a line are averaged side by side:
+    where their normals point opposite ways, the left side of one belongs to the right side of the other.
     """
     n = len(lines.row)
     out = np.arange(half + 1)
@@ -148,9 +170,12 @@ def _averaged_sides(image: Float32Array, lines: RidgePixels, half: int) -> Float
     links = sparse.coo_array((np.ones(len(first)), (first, second)), shape=(2 * n, 2 * n)).tocsr()
     links = links + links.T + sparse.eye_array(2 * n, format="csr")
     links = sparse.diags_array(1 / links.sum(axis=1)) @ links
-    for _ in range(AVERAGING_PASSES):
+    for _ in range(GAP_PASSES):
         sides = links @ sides
-    return sides
+    here = sides
+    for _ in range(AVERAGING_PASSES - GAP_PASSES):
+        sides = links @ sides
+    return here, sides
 
 
 def _half_width(sides: FloatArray, lowest_at: IntArray, level: FloatArray) -> FloatArray:

@@ -35,7 +35,7 @@ def appraise(results_dir: Path, truth_dir: Path) -> Appraisal:
         Folder that was `--out` of `measure`.
     truth_dir : Path
         Folder with one folder an image: `IMAGE_ID/image.csv, segments.csv, points.csv, nodes.csv, crossings.csv,
-        networks.csv`, with the columns of the results, as phantoms have them in `truth`.
+        networks.csv`, with the columns of the results, or the folder of phantoms, which holds it as `truth`.
 
     Returns
     -------
@@ -58,6 +58,8 @@ def appraise(results_dir: Path, truth_dir: Path) -> Appraisal:
     of error over stated uncertainty, and by how often the stated intervals hold the truth (JCGM 100:2008, 6.2.2).
     """
     state = _state(results_dir)
+    if not any(truth_dir.glob("*/points.csv")) and (truth_dir / "truth").is_dir():
+        truth_dir = truth_dir / "truth"  # the folder of phantoms itself was named
     truth_ids = _truth_ids(truth_dir)
     finished = [image.image_id for image in state.images if image.status in (MEASURED, EMPTY)]
     common = [image_id for image_id in finished if image_id in truth_ids]
@@ -114,9 +116,7 @@ def _state(results_dir: Path) -> StudyState:
 def _truth_ids(truth_dir: Path) -> set[str]:
     found = {path.parent.name for path in truth_dir.glob("*/points.csv")}
     if not found:
-        inside = truth_dir / "truth"
-        where = f"Give {inside}." if inside.is_dir() else "Give the folder truth that phantoms come with."
-        message = f"holds no truth: there is no IMAGE_ID/points.csv in it. {where}"
+        message = "holds no truth: there is no IMAGE_ID/points.csv in it. Give the folder of phantoms."
         raise RequestError([Problem(file=str(truth_dir), message=message)])
     return found
 
