@@ -1,7 +1,7 @@
 """From a measured graph with terminals to flow, pressure, shares and each network's resistance."""
 
 from collections.abc import Hashable, Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import cast
 
 import numpy as np
@@ -12,6 +12,7 @@ from vasohm.errors import DomainError, NetworkError
 from vasohm.flags import Flag
 from vasohm.flow.boundaries import Boundary, make_boundary
 from vasohm.flow.kirchhoff import solve_flows
+from vasohm.flow.medians import ln_median_shift, pressure_drives
 from vasohm.flow.poiseuille import SegmentResistances, measure_resistance
 from vasohm.flow.rheology import BloodSettings, make_blood
 from vasohm.flow.terminals import Terminals, missing_terminals
@@ -58,6 +59,7 @@ class NetworkFlow:
 class Circulation:
     """Pressures, flows and shares for given segment resistances, in SI units; NaN in networks without solution."""
 
+    boundary: Boundary  # without the networks that lack an inlet or an outlet
     pressure_pa: FloatArray  # (n_nodes,)
     flow_m3_s: FloatArray  # (n_segments,)
     share: FloatArray  # (n_segments,)
@@ -99,6 +101,10 @@ def solve_flow(measured: MeasuredGraph, terminals: Terminals, blood: BloodSettin
     d ln R / d ln R_i (exact for one drop of pressure, or flows given at all terminals) and sum to 1. The random part
     of var(ln R) is Σ w² var(ln R_i); what all segments share moves ln R by Σ w d ln R_i per cause.
 
+    Segments stand at their medians, and so do their flows and the pressures. The network's R stands at its own median,
+    off that of the segments together by `vasohm.flow.medians.ln_median_shift`; so does the flow of a network that
+    pressures drive, which then is the drop of pressure over R.
+
     References
     ----------
     Cohn RM (1950) The resistance of an electrical network. Proc Am Math Soc 1:316-324,
@@ -108,6 +114,7 @@ def solve_flow(measured: MeasuredGraph, terminals: Terminals, blood: BloodSettin
     resistances = measure_resistance(measured, make_blood(blood), hematocrit, np.ones(measured.graph.n_segments))
     circulation = circulate(measured.graph, resistances.resistance_pa_s_m3, terminals)
     random_se, shared = network_doubt(terminals, circulation, resistances)
+    network_resistance, network_flow_m3_s = at_medians(measured, terminals, circulation, resistances)
     flow = circulation.flow_m3_s
     at_radius = resistances.viscosity_mpa_s / resistances.radius_hydraulic_um**3
     wall_shear_pa = 4.0 / np.pi * np.abs(flow) * at_radius * PA_S_PER_MPA_S / M_PER_UM**3
@@ -126,10 +133,10 @@ def solve_flow(measured: MeasuredGraph, terminals: Terminals, blood: BloodSettin
         share=circulation.share,
         segment_flags=measured.segment_flags | resistances.flags | _flow_flags(measured.graph, flow),
         pressure_mmhg=circulation.pressure_pa / PA_PER_MMHG,
-        network_resistance_pa_s_m3=circulation.network_resistance_pa_s_m3,
+        network_resistance_pa_s_m3=network_resistance,
         network_ln_resistance_random_se=random_se,
         network_ln_resistance_shared_se=np.sqrt(np.square(shared).sum(axis=1)),
-        network_flow_nl_min=circulation.network_flow_m3_s * NL_MIN_PER_M3_S,
+        network_flow_nl_min=network_flow_m3_s * NL_MIN_PER_M3_S,
         network_flags=circulation.network_flags,
     )
 
@@ -168,15 +175,18 @@ def circulate(graph: VesselGraph, resistance_pa_s_m3: FloatArray, terminals: Ter
     -------
     Circulation
     """
-    boundary = make_boundary(terminals)
+    made = make_boundary(terminals)
     n = len(terminals.source)
     of_node, of_segment = terminals.node_network, terminals.segment_network
     has = [np.bincount(of_node[terminals.role == sign], minlength=n) > 0 for sign in (1, -1)]
     complete = has[0] & has[1]
-    fixed = np.where(complete[of_node], boundary.pressure_pa, np.nan)
-    inflow = np.where(complete[of_node], boundary.inflow_m3_s, 0.0)
+    boundary = replace(
+        made,
+        pressure_pa=np.where(complete[of_node], made.pressure_pa, np.nan),
+        inflow_m3_s=np.where(complete[of_node], made.inflow_m3_s, 0.0),
+    )
     ends = (graph.node_a, graph.node_b)
-    pressure, flow = solve_flows(ends, resistance_pa_s_m3, fixed, inflow)
+    pressure, flow = solve_flows(ends, resistance_pa_s_m3, boundary.pressure_pa, boundary.inflow_m3_s)
     net = np.bincount(ends[0], flow, graph.n_nodes) - np.bincount(ends[1], flow, graph.n_nodes)
     through = sum_by(of_node, np.where(terminals.role != 0, np.maximum(net, 0.0), 0.0), n)
     flow = np.where(np.abs(flow) <= NO_FLOW_SHARE * through[of_segment], 0.0, flow)
@@ -186,6 +196,7 @@ def circulate(graph: VesselGraph, resistance_pa_s_m3: FloatArray, terminals: Ter
     share = np.divide(power, dissipated[of_segment], out=np.full(flow.shape, np.nan), where=flows[of_segment])
     is_loop = ends[0] == ends[1]
     return Circulation(
+        boundary=boundary,
         pressure_pa=pressure,
         flow_m3_s=np.where(complete[of_segment] | is_loop, flow, np.nan),
         share=share,
@@ -202,6 +213,17 @@ def _network_flags(
     flags = terminals.network_flags | missing_terminals(*has)
     flags = flags | np.where(boundary.assumed & flows, int(Flag.TERMINALS_JOINED), 0)
     return np.asarray(flags | np.where(stalled, int(Flag.NO_FLOW), 0), dtype=np.int64)
+
+
+def at_medians(
+    measured: MeasuredGraph, terminals: Terminals, circulation: Circulation, resistances: SegmentResistances
+) -> tuple[FloatArray, FloatArray]:
+    """Resistance and flow (n_networks,) of each network at their medians, from those of segments at theirs."""
+    shift = ln_median_shift(measured.graph, terminals, circulation.boundary, resistances, circulation.share)
+    factor = np.exp(measured.noise_sign * shift)
+    flow = circulation.network_flow_m3_s
+    by_pressure = pressure_drives(terminals, circulation.boundary)
+    return circulation.network_resistance_pa_s_m3 * factor, np.where(by_pressure, flow / factor, flow)
 
 
 def network_doubt(

@@ -8,7 +8,7 @@ import numpy as np
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.errors import DomainError
 from vasohm.flags import Flag
-from vasohm.flow.hydraulics import Circulation, circulate, entering_hematocrit
+from vasohm.flow.hydraulics import Circulation, at_medians, circulate, entering_hematocrit
 from vasohm.flow.poiseuille import SegmentResistances, measure_resistance
 from vasohm.flow.rheology import BloodSettings, make_blood
 from vasohm.flow.terminals import Terminals
@@ -57,6 +57,7 @@ class _State:
 
     resistances: SegmentResistances
     circulation: Circulation
+    network_resistance_pa_s_m3: FloatArray  # (n_networks,)
 
     def weighted(self, ln_change: FloatArray) -> FloatArray:
         """Share of each segment times its change of ln R; 0 where no blood passes."""
@@ -100,7 +101,9 @@ def run_scenarios(
 
     def state(radius_factor: FloatArray) -> _State:
         resistances = measure_resistance(measured, made, hematocrit, radius_factor)
-        return _State(resistances, circulate(measured.graph, resistances.resistance_pa_s_m3, terminals))
+        circulation = circulate(measured.graph, resistances.resistance_pa_s_m3, terminals)
+        network_resistance, _ = at_medians(measured, terminals, circulation, resistances)
+        return _State(resistances, circulation, network_resistance)
 
     before = state(np.ones(measured.graph.n_segments))
     network, shape = terminals.segment_network, (len(terminals.source), len(scenarios))
@@ -111,12 +114,12 @@ def run_scenarios(
         chosen = _chosen(scenario, before.resistances.radius_hydraulic_um, measured.graph.vessel_class)
         after = state(np.where(chosen, scenario.radius_factor, 1.0))
         changed[:, column] = np.bincount(network[chosen], minlength=shape[0])
-        after_r[:, column] = after.circulation.network_resistance_pa_s_m3
+        after_r[:, column] = after.network_resistance_pa_s_m3
         ln_se[:, column] = _ln_ratio_se(before, after, network, shape[0])
         beyond = chosen & (after.resistances.flags & int(Flag.LAW_RANGE) > 0)
         flags[:, column] = np.where(np.bincount(network[beyond], minlength=shape[0]) > 0, int(Flag.LAW_RANGE), 0)
         flags[:, column] |= after.circulation.network_flags
-    before_r = np.repeat(before.circulation.network_resistance_pa_s_m3, shape[1])
+    before_r = np.repeat(before.network_resistance_pa_s_m3, shape[1])
     ratio = after_r.ravel() / before_r
     ratio_lo, ratio_hi = ln_interval(ratio, ln_se.ravel())
     return ScenarioOutcomes(
