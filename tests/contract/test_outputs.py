@@ -127,7 +127,7 @@ def make_measured(n_segments: int) -> MeasuredGraph:
         blur_px=1.2 if n_segments else math.nan,
         profile="cylinder",
         image_contrast=0.2,
-        flags=Flag.BLUR_ASSUMED,
+        flags=Flag.PROFILE_ASSUMED,
     )
 
 
@@ -254,18 +254,18 @@ def make_tables(
     return tabulate(image_id, DESIGN, make_findings(n_segments, scenario), disc)
 
 
-def make_methods() -> Methods:
+def make_methods(law: str = "constant", method: str = "ridge", n_masked: int = 0) -> Methods:
     used = MethodsUsed(
         version="0.1.0",
         prepare=PrepareSettings(channel="green", polarity="dark", gamma=1.0, radius_um=(4.0, 120.0)),
-        segment=SegmentSettings(method="ridge", radius_um=(4.0, 120.0), false_alarms_per_mpx=10.0, parameters={}),
+        segment=SegmentSettings(method=method, radius_um=(4.0, 120.0), false_alarms_per_mpx=10.0, parameters={}),
         radius=RadiusSettings(
             profile="auto", blur_px=None, plasma_layer_um=1.0, plasma_layer_se_um=0.5, least_radius_um=2.0
         ),
         blood=BloodSettings(
-            law="constant",
+            law=law,
             hematocrit=0.45,
-            hematocrit_se=0.0,
+            hematocrit_se=0.02,
             plasma_viscosity_mpa_s=1.2,
             viscosity_mpa_s=3.0,
             parameters={},
@@ -273,6 +273,8 @@ def make_methods() -> Methods:
         network=NetworkSettings(terminals="auto", drive_mmhg=1.0),
         law_citation="no source given",
         scenario_names=(HOSTILE,),
+        n_images=3,
+        n_masked=n_masked,
     )
     return describe_methods(used)
 
@@ -356,7 +358,7 @@ def test_ids_degrees_classes_and_flags_are_those_of_the_graph() -> None:
     lengths = tables.segments["length_um"]
     mean_probability = (0.9 * lengths[0] + 0.8 * lengths[1]) / (lengths[0] + lengths[1])
     assert tables.networks.loc[0, "class_probability"] == pytest.approx(mean_probability)
-    assert tables.image.loc[0, "flags"] == "terminal_missed;pixel_size_se_unknown;blur_assumed"
+    assert tables.image.loc[0, "flags"] == "terminal_missed;pixel_size_se_unknown;profile_assumed"
     assert tables.image.loc[0, ["n_ends", "n_branchings"]].tolist() == [2, 1]
     assert tables.scenarios[["network_id", "scenario", "n_segments_changed", "ratio"]].to_numpy().tolist() == [
         [1, "Arterioles dilate", 2, 0.7],
@@ -532,6 +534,22 @@ def test_overlay_shows_the_segments_at_their_width() -> None:
         assert outside > 0.01 or inside < 0.99
 
 
+@pytest.mark.parametrize("radius_um", [0.35, 175.0])
+def test_one_doubtful_segment_does_not_stretch_the_colours(radius_um: float) -> None:
+    """One false segment would make all vessels look alike. Common practice of drawing, no source."""
+    tables = make_tables()  # its third segment is cut by the rim
+    drawn = []
+    for radius in (6.0, radius_um):
+        segments = tables.segments.assign(radius_mean_um=[10.0, 8.0, radius])
+        one = replace(tables, tables={**tables.tables, "segments": segments})
+        drawn.append(np.asarray(Image.open(BytesIO(draw_overlay(one))).convert("RGB")).astype(int))
+    scale = 900 / WIDTH
+    first, second = (tuple(int((at + 0.5) * scale) for at in place) for place in ((50, 35), (35, 65)))  # y, x in lumina
+    assert (drawn[0][first] == drawn[1][first]).all()
+    assert (drawn[0][second] == drawn[1][second]).all()
+    assert np.abs(drawn[0][first] - drawn[0][second]).max() > 100  # 10 and 8 um stay far apart
+
+
 @pytest.mark.parametrize("colour_by", ["radius", "share", "resistance"])
 @pytest.mark.parametrize("n_segments", [0, 3])
 def test_overlay_is_drawn_for_every_colouring_and_for_nothing(colour_by: ColourBy, n_segments: int) -> None:
@@ -691,6 +709,41 @@ def test_study_page_tells_failures_cautions_and_every_image(results: Path) -> No
     )
     assert '<span id="flag-terminals_joined">' in text
     assert "plasma layer" in text
+
+
+def test_the_methods_say_what_was_done_and_caution_against_what_was_used() -> None:
+    """A paragraph goes into print as it is: a method that was not used must not stand in it."""
+    assert "by the method ridge" in make_methods().paragraph
+    some = make_methods(n_masked=1).paragraph
+    assert "by the method ridge" in some
+    assert "1 of the 3 images were taken from masks made elsewhere" in some
+    for every in (make_methods(n_masked=3), make_methods(method="mask", n_masked=3)):
+        assert "taken from masks made elsewhere" in every.paragraph
+        assert "ridge" not in every.paragraph
+    constant, fitted = make_methods("constant"), make_methods("pries-in-vivo")
+    assert "hematocrit of 0.45 (standard uncertainty 0.02)" in fitted.paragraph
+    assert any("rat mesentery or glass tubes" in caution for caution in fitted.cautions)
+    assert not any("rat mesentery" in caution for caution in constant.cautions)
+    assert any("One viscosity was taken for all vessels" in caution for caution in constant.cautions)
+
+
+def test_a_blur_that_the_picture_does_not_tell_says_nothing_of_its_focus() -> None:
+    """An assumed blur in the table would be taken for a measured one."""
+    findings = make_findings()
+    for flag in (Flag.BLUR_ASSUMED, Flag.ASSUMED_BLUR_SPREAD):
+        measured = replace(findings.measured, flags=flag | Flag.OUT_OF_FOCUS)
+        image = tabulate("a", {}, replace(findings, measured=measured)).image.iloc[0]
+        assert np.isnan(image["blur_px"])
+        assert image["focus_ok"] is None
+        assert "out_of_focus" not in image["flags"]
+    blurred = replace(findings.measured, flags=Flag.OUT_OF_FOCUS)
+    image = tabulate("a", {}, replace(findings, measured=blurred)).image.iloc[0]
+    assert (image["blur_px"], image["focus_ok"]) == (1.2, False)
+    bare = make_findings(0)
+    nothing = replace(bare, measured=replace(bare.measured, blur_px=0.9, flags=Flag.NONE))
+    image = tabulate("a", {}, nothing).image.iloc[0]
+    assert np.isnan(image["blur_px"])
+    assert image["focus_ok"] is None
 
 
 def test_every_mark_of_the_methods_has_its_reference() -> None:

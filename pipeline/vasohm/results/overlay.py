@@ -1,5 +1,6 @@
 """What was measured, drawn on the picture: from the tables, so that the picture shows what the files say."""
 
+import textwrap
 from io import BytesIO
 from typing import Literal, TypeAlias
 
@@ -16,7 +17,7 @@ from matplotlib.lines import Line2D
 from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter
 from PIL import Image
 
-from vasohm.arrays import AnyArray, BoolArray, FloatArray
+from vasohm.arrays import AnyArray, BoolArray, FloatArray, IntArray
 from vasohm.flags import Flag, code
 from vasohm.results.tables import ImageTables
 from vasohm.units import UM_PER_MM
@@ -30,7 +31,14 @@ COLOUR_COLUMNS: dict[str, tuple[str, str]] = {  # what colours a segment: its co
 }
 DARKEST = 0.12  # start of the colour map: its first tenth is lost on a dark picture
 LOGARITHMIC_FROM = 5.0  # ratio of largest to smallest value from which the colours are spread in the logarithm
-DOUBTFUL = (Flag.RIM, Flag.UNRESOLVED)
+DOUBTFUL = (Flag.RIM, Flag.UNRESOLVED, Flag.INFERRED)
+COLOURED_SHARES = (0.02, 0.98)  # of the length of the sound segments, between which the colours are spread
+OPAQUE, PALE, STUB = 0.75, 0.5, 0.6  # opacity of sound segments, of doubtful ones, of stubs inside a parent
+WHITE_PALE, WHITE_STUB = 0.65, 0.35  # this share of their colour is white: over a dark vessel they are light too
+LEAST_STUB_PX = 0.5  # a shorter gap between a node and a segment's first point does not show
+LETTER_WIDTH = 0.55  # of a letter's height, on average
+CAPTION_SHARE = 0.65  # of the width; the rest is the scale bar's
+LINE_SPACING = 1.4  # of a letter's height
 LONGEST_SIDE = 2000  # pixels of the drawing
 SHORTEST_SIDE = 900  # a small picture is enlarged so that labels do not hide it
 DPI = 100
@@ -51,43 +59,62 @@ def draw_overlay(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
 
     Returns
     -------
-    A PNG; the same tables give the same bytes. Segments that the field of view cuts or that are too thin for the
-    pixels are drawn paler with a broken outline.
+    A PNG; the same tables give the same bytes. The colours are spread over the middle 96 % of the length of the
+    segments that are not doubtful; arrows at the colour bar tell of values beyond. Segments that the field of view
+    cuts, that are too thin for the pixels, or whose radius is interpolated are drawn pale with a broken outline, and
+    the stub between a branching and a child's first point, which carries no resistance, in a lighter tone.
     """
     height, width = tables.picture.shape
     scale = _drawing_scale(height, width)
     size = np.maximum(np.array([width, height]) * scale, 1.0)
     letter_pt = max(float(size.max()) / 130, 8.0)  # margins grow with the letters
     letter = letter_pt * DPI / 72
-    total = size + np.array([9.5 * letter, 3.0 * letter])
+    caption = _caption(tables, int(CAPTION_SHARE * size[0] / (LETTER_WIDTH * letter)))
+    foot = (1.6 + LINE_SPACING * len(caption)) * letter  # pixels below the picture
+    total = size + np.array([9.5 * letter, foot])
     with mpl.rc_context():
         mpl.rcdefaults()
         mpl.rcParams["font.size"] = letter_pt
         figure = Figure(figsize=tuple(total / DPI), dpi=DPI, facecolor="white")
         canvas = FigureCanvasAgg(figure)
-        axes = figure.add_axes((0, 3.0 * letter / total[1], size[0] / total[0], size[1] / total[1]))
+        axes = figure.add_axes((0, foot / total[1], size[0] / total[0], size[1] / total[1]))
         _draw_picture(axes, tables.picture, scale)
         column, label = COLOUR_COLUMNS[colour_by]
-        norm = _colour_range(tables.segments[column].to_numpy(np.float64))
-        _draw_segments(axes, tables, column, norm)
+        values = tables.segments[column].to_numpy(np.float64)
+        norm = _colour_range(values, tables.segments)
+        _draw_segments(axes, tables, values, norm)
         if norm is not None:
-            low_left = ((size[0] + 1.5 * letter) / total[0], (3.0 * letter + 0.05 * size[1]) / total[1])
+            low_left = ((size[0] + 1.5 * letter) / total[0], (foot + 0.05 * size[1]) / total[1])
             bar = figure.add_axes((*low_left, 1.5 * letter / total[0], 0.9 * size[1] / total[1]))
-            _draw_colour_bar(figure, bar, norm, label)
-        figure.text(0.5 * letter / total[0], 1.5 * letter / total[1], _caption(tables), va="center")
+            _draw_colour_bar(figure, bar, norm, label, _beyond(values, norm))
+        figure.text(
+            0.5 * letter / total[0],
+            0.5 * foot / total[1],
+            "\n".join(caption),
+            va="center",
+            linespacing=LINE_SPACING,
+        )
         length_um = round_length_um(BAR_SHARE * width * tables.pixel_size_um)
         length_px = length_um / tables.pixel_size_um * scale
         shown = f"{length_um / UM_PER_MM:g} mm" if length_um >= UM_PER_MM else f"{length_um:g} µm"
-        _draw_scale_bar(figure, size[0] - length_px - 0.5 * letter, 1.5 * letter, length_px=length_px, label=shown)
+        _draw_scale_bar(figure, size[0] - length_px - 0.5 * letter, 0.5 * foot, length_px=length_px, label=shown)
         buffer = BytesIO()
         canvas.print_png(buffer, metadata={"Software": None})  # type: ignore[no-untyped-call]
     return buffer.getvalue()
 
 
-def _caption(tables: ImageTables) -> str:
+def _caption(tables: ImageTables, letters: int) -> list[str]:
+    """Return the caption in lines of at most so many letters."""
     n_doubtful = int(_is_doubtful(tables.segments).sum())
-    caption = f"{tables.image_id}: {len(tables.segments)} segments"
-    return caption + (f", {n_doubtful} cut by the rim or too thin (pale)" if n_doubtful else "")
+    caption = f"{tables.image_id}: {len(tables.segments)} segments."
+    if n_doubtful:
+        caption += (
+            f" Pale with a broken outline: {n_doubtful} whose radius is doubtful, being cut by the rim of the picture, "
+            "too thin for the pixels, or interpolated."
+        )
+    if len(tables.branchings):
+        caption += " Lighter pieces at branchings lie inside the wider vessel and are not measured."
+    return textwrap.wrap(caption, max(letters, 20))
 
 
 def _drawing_scale(height: int, width: int) -> float:
@@ -113,19 +140,45 @@ def _colour_map() -> ListedColormap:
     return ListedColormap(mpl.colormaps["viridis"](np.linspace(DARKEST, 1, 256)))
 
 
-def _colour_range(values: FloatArray) -> Normalize | None:
-    """Range of the colour bar; None where there is nothing to colour by."""
-    known = values[np.isfinite(values) & (values > 0)]
-    if known.size == 0:
+def _colour_range(values: FloatArray, segments: pd.DataFrame) -> Normalize | None:
+    """Range of the colour bar; None where there is nothing to colour by.
+
+    One false segment, far thinner or wider than all vessels, must not make the others look alike: doubtful segments
+    have no say where there are others, and what is left counts by its length.
+    """
+    known = _is_known(values)
+    sound = known & ~_is_doubtful(segments)
+    chosen = sound if sound.any() else known
+    if not chosen.any():
         return None
-    low, high = float(known.min()), float(known.max())
+    order = np.argsort(values[chosen], kind="stable")
+    sorted_values = values[chosen][order]
+    length = np.nan_to_num(segments["length_um"].to_numpy(np.float64)[chosen][order])
+    reached = np.cumsum(length) - 0.5 * length
+    shares = np.array(COLOURED_SHARES) * length.sum()
+    low, high = (float(value) for value in np.interp(shares, reached, sorted_values))
     if high > LOGARITHMIC_FROM * low:
         return LogNorm(max(low, high / WIDEST_RATIO), high, clip=True)
-    return Normalize(low, high) if low < high else Normalize(0.9 * low, 1.1 * high)
+    return Normalize(low, high, clip=True) if low < high else Normalize(0.9 * low, 1.1 * high, clip=True)
 
 
-def _draw_colour_bar(figure: Figure, place: Axes, norm: Normalize, label: str) -> None:
-    bar = figure.colorbar(ScalarMappable(norm, _colour_map()), cax=place, label=label)
+def _beyond(values: FloatArray, norm: Normalize) -> Literal["neither", "min", "max", "both"]:
+    """Ends of the colour bar beyond which there are values."""
+    known = values[_is_known(values)]
+    below, above = bool((known < (norm.vmin or 0)).any()), bool((known > (norm.vmax or 0)).any())
+    if below and above:
+        return "both"
+    return "min" if below else "max" if above else "neither"
+
+
+def _is_known(values: FloatArray) -> BoolArray:
+    return np.asarray(np.isfinite(values) & (values > 0))
+
+
+def _draw_colour_bar(
+    figure: Figure, place: Axes, norm: Normalize, label: str, beyond: Literal["neither", "min", "max", "both"]
+) -> None:
+    bar = figure.colorbar(ScalarMappable(norm, _colour_map()), cax=place, label=label, extend=beyond, extendfrac=0.03)
     if isinstance(norm, LogNorm):
         decades = np.log10(float(norm.vmax or 1) / float(norm.vmin or 1))
         bar.ax.yaxis.set_major_locator(LogLocator(subs=TICKS[min(int(decades), 2)]))
@@ -133,30 +186,69 @@ def _draw_colour_bar(figure: Figure, place: Axes, norm: Normalize, label: str) -
         bar.ax.yaxis.set_minor_formatter(NullFormatter())
 
 
-def _draw_segments(axes: Axes, tables: ImageTables, column: str, norm: Normalize | None) -> None:
+def _draw_segments(axes: Axes, tables: ImageTables, values: FloatArray, norm: Normalize | None) -> None:
     doubtful = _is_doubtful(tables.segments)
-    values = tables.segments[column].to_numpy(np.float64)
     outlines = _ribbons(tables.points, tables.segments["n_points"].to_numpy(), tables.pixel_size_um)
     colours = np.tile(mpl.colors.to_rgba(GREY), (len(values), 1))
     if norm is not None:
-        known = np.isfinite(values) & (values > 0)
+        known = _is_known(values)
         colours[known] = _colour_map()(norm(values[known]))
-    for chosen, alpha, style in ((~doubtful, 0.75, "solid"), (doubtful, 0.35, (0, (3, 2)))):
-        if not chosen.any():
-            continue
-        faces = colours[chosen]
-        faces[:, 3] = alpha
-        edges = colours[chosen]
-        axes.add_collection(
-            PolyCollection(
-                [outlines[i] for i in np.flatnonzero(chosen)],
-                facecolors=faces,
-                edgecolors=edges,
-                linewidths=0.8,
-                linestyles=[style],
-            ),
-            autolim=False,
-        )
+    stubs, owners = _stubs(tables)
+    _draw_outlines(axes, stubs, _lightened(colours[owners], WHITE_STUB), alpha=STUB)
+    colours[doubtful] = _lightened(colours[doubtful], WHITE_PALE)
+    for chosen, alpha, style in ((doubtful, PALE, (0, (3, 2))), (~doubtful, OPAQUE, "solid")):
+        shapes = [outlines[i] for i in np.flatnonzero(chosen)]
+        _draw_outlines(axes, shapes, colours[chosen], alpha=alpha, style=style)
+
+
+def _lightened(colours: FloatArray, white: float) -> FloatArray:
+    return white + (1 - white) * colours
+
+
+def _draw_outlines(
+    axes: Axes,
+    outlines: list[FloatArray],
+    colours: FloatArray,
+    *,
+    alpha: float,
+    style: str | tuple[int, tuple[int, int]] | None = None,
+) -> None:
+    """Fill the outlines; they are edged where a style of line is given."""
+    if not outlines:
+        return
+    faces = colours.copy()
+    faces[:, 3] = alpha
+    drawn = PolyCollection(
+        outlines,
+        facecolors=faces,
+        edgecolors=colours if style else "none",
+        linewidths=0.8 if style else 0.0,
+        linestyles=[style or "solid"],
+    )
+    axes.add_collection(drawn, autolim=False)
+
+
+def _stubs(tables: ImageTables) -> tuple[list[FloatArray], IntArray]:
+    """Outline of each piece between a node and the segment that begins beyond its lumen; and the segment's index."""
+    segments = tables.segments
+    n_points = segments["n_points"].to_numpy(np.int64)
+    last = np.cumsum(n_points) - 1
+    points = tables.points[["x_px", "y_px"]].to_numpy(np.float64)
+    radius_px = np.nan_to_num(tables.points["radius_um"].to_numpy(np.float64)) / tables.pixel_size_um
+    nodes = tables.nodes[["x_px", "y_px"]].to_numpy(np.float64)
+    outlines, owners = [], []
+    for column, ends in (("node_a", last - n_points + 1), ("node_b", last)):
+        for segment, (node, end) in enumerate(zip(segments[column].to_numpy(np.int64) - 1, ends, strict=True)):
+            along = points[end] - nodes[node]
+            length = float(np.hypot(*along))
+            if length < LEAST_STUB_PX:
+                continue
+            across = np.array([-along[1], along[0]]) / length * radius_px[end]
+            outlines.append(
+                np.array([nodes[node] + across, points[end] + across, points[end] - across, nodes[node] - across])
+            )
+            owners.append(segment)
+    return outlines, np.array(owners, dtype=np.int64)
 
 
 def _ribbons(points: pd.DataFrame, n_points: AnyArray, pixel_size_um: float) -> list[FloatArray]:
