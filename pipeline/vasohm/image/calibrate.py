@@ -40,7 +40,7 @@ class ScaledImage:
     raw: RawImage
     pixel_size_um: float
     pixel_size_se_um: float
-    pixel_size_source: str  # sheet | study | ome | imagej | dicom
+    pixel_size_source: str  # sheet | study | ome | imagej
     flags: Flag
 
 

@@ -32,12 +32,17 @@ IMAGE: tuple[Column, ...] = (
         "Box-counting dimension of the vessels. Depends on resolution and field of view: compare within one set-up.",
     ),
     text("profile", "How tubes are imaged here: slab, cylinder or absorber; empty without vessels."),
-    number("blur_px", "{pixel}", "Standard deviation of the Gaussian blur of the picture."),
+    number(
+        "blur_px",
+        "{pixel}",
+        "Standard deviation of the Gaussian blur of the picture, as its vessels tell it; empty without vessels and "
+        "where it was typed or assumed.",
+    ),
     number("noise", "{signal}", "Median standard deviation of a pixel's noise, in the units of contrast."),
     number(
         "contrast", "{signal}", "Typical strength with which the image's vessels stand out, in the units of points.csv."
     ),
-    truth("focus_ok", "The blur is not wider than the thinnest vessels asked for; empty where the blur is not known."),
+    truth("focus_ok", "The blur is not wider than the thinnest vessels asked for; empty where blur_px is."),
     truth("exposure_ok", "At most 1 % of the field of view is at the limit of the file's scale, and it is not blank."),
     FLAGS,
 )
@@ -74,13 +79,19 @@ NETWORKS: tuple[Column, ...] = (
         "resistance_pa_s_m3",
         "Pa.s/m3",
         "Resistance of the network: pressure at the joined inlets minus that at the joined outlets, over total flow; "
-        "with unequal terminals, dissipated power over squared total inflow.",
+        "with unequal terminals, dissipated power over squared total inflow. It is the median of what its segments' "
+        "doubt allows, which lies off that of segments at their medians.",
     ),
     number("resistance_lo_pa_s_m3", "Pa.s/m3", "Lower bound of the 95 % interval of the network's resistance."),
     number("resistance_hi_pa_s_m3", "Pa.s/m3", "Upper bound of the 95 % interval of the network's resistance."),
     LN_RANDOM_SE,
     LN_SHARED_SE,
-    number("flow_nl_min", "nL/min", "Total flow that enters the network at the pressure that the study asks for."),
+    number(
+        "flow_nl_min",
+        "nL/min",
+        "Total flow that enters the network: at the pressures that its terminals give or else the study asks for, as "
+        "median like the resistance; or the flow that the terminals give.",
+    ),
     FLAGS,
 )
 

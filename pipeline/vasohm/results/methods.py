@@ -26,6 +26,14 @@ ALGORITHMS = (
 )
 PICTURES = "van der Walt S, et al. scikit-image: image processing in Python. PeerJ 2014;2:e453. doi:10.7717/peerj.453"
 
+LAW_CAUTION = (
+    "A viscosity law holds within the range in which it was fitted, most laws in rat mesentery or glass tubes; "
+    "segments outside of it carry the flag law_range."
+)
+ONE_VISCOSITY_CAUTION = (
+    "One viscosity was taken for all vessels: that blood resists differently in narrow ones, and with its hematocrit, "
+    "is left out."
+)
 CAUTIONS: tuple[str, ...] = (
     (
         "For research. Results are no basis for the diagnosis or treatment of a person; local rules and licensed "
@@ -36,10 +44,7 @@ CAUTIONS: tuple[str, ...] = (
         "circulation."
     ),
     "The resistance of a network that the field of view cuts depends on where it is cut.",
-    (
-        "Viscosity laws come from rat mesentery or glass tubes and hold within the range in which they were fitted; "
-        "segments outside of it carry the flag law_range."
-    ),
+    LAW_CAUTION,
     "Absolute calibres differ between cameras and between programs: compare within one set-up.",
 )
 
@@ -61,6 +66,8 @@ class MethodsUsed:
     network: NetworkSettings
     law_citation: str
     scenario_names: tuple[str, ...]
+    n_images: int
+    n_masked: int  # images that came with a vessel mask made elsewhere
 
 
 @dataclass(frozen=True, slots=True)
@@ -86,20 +93,12 @@ def describe_methods(used: MethodsUsed) -> Methods:
             cited.append(source)
         return f"[{cited.index(source) + 1}]"
 
-    low, high = used.segment.radius_um
-    if used.segment.method == "mask":
-        found = "Vessels were taken from masks made elsewhere."
-    else:
-        found = (
-            f"Vessels, {used.prepare.polarity} against their background, were looked for in the {used.prepare.channel} "
-            f"channel by the method {used.segment.method}, for lumen radii from {low:g} to {high:g} µm."
-        )
     sentences = [
         (
             f"Images were measured with vasohm {used.version} on NumPy {mark(ARRAYS)}, SciPy {mark(ALGORITHMS)} and "
             f"scikit-image {mark(PICTURES)}."
         ),
-        found,
+        _vessel_sentence(used),
         _radius_sentence(used.radius),
         (
             "The resistance of a segment is the integral of apparent viscosity over the fourth power of the local "
@@ -114,10 +113,26 @@ def describe_methods(used: MethodsUsed) -> Methods:
     ]
     if used.scenario_names:
         sentences.append(f"Scenarios: {'; '.join(used.scenario_names)}.")
-    cautions = CAUTIONS
+    constant = used.blood.law == "constant"
+    cautions = tuple(ONE_VISCOSITY_CAUTION if constant and one == LAW_CAUTION else one for one in CAUTIONS)
     if used.radius.plasma_layer_um:
         cautions += ("Radii are those of the red-cell column with a plasma layer added, whose width is an assumption.",)
     return Methods(" ".join(sentences), tuple(cited), cautions)
+
+
+def _vessel_sentence(used: MethodsUsed) -> str:
+    if used.segment.method == "mask" or 0 < used.n_images == used.n_masked:
+        return "Vessels were taken from masks made elsewhere."
+    low, high = used.segment.radius_um
+    found = (
+        f"Vessels, {used.prepare.polarity} against their background, were looked for in the {used.prepare.channel} "
+        f"channel by the method {used.segment.method}, for lumen radii from {low:g} to {high:g} µm."
+    )
+    if used.n_masked:
+        found += (
+            f" Those of {used.n_masked} of the {used.n_images} images were taken from masks made elsewhere instead."
+        )
+    return found
 
 
 def _radius_sentence(radius: RadiusSettings) -> str:
@@ -138,9 +153,10 @@ def _radius_sentence(radius: RadiusSettings) -> str:
 def _blood_sentence(blood: BloodSettings, mark: str) -> str:
     if blood.law == "constant":
         return f"The apparent viscosity was {blood.viscosity_mpa_s:g} mPa·s everywhere {mark}."
+    doubt = f" (standard uncertainty {blood.hematocrit_se:g})" if blood.hematocrit_se else ""
     return (
-        f"The apparent viscosity follows the law {blood.law} {mark} at a discharge hematocrit of {blood.hematocrit:g} "
-        f"and a plasma viscosity of {blood.plasma_viscosity_mpa_s:g} mPa·s."
+        f"The apparent viscosity follows the law {blood.law} {mark} at a discharge hematocrit of {blood.hematocrit:g}"
+        f"{doubt} and a plasma viscosity of {blood.plasma_viscosity_mpa_s:g} mPa·s."
     )
 
 

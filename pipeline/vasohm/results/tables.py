@@ -24,6 +24,7 @@ from vasohm.units import UM_PER_MM
 
 KIND_WORDS = np.array([kind.name.lower() for kind in NodeKind], dtype=object)
 CLASS_WORDS = np.array(["", *(kind.name.lower() for kind in VesselClass if kind)], dtype=object)
+BLUR_NOT_TOLD = Flag.BLUR_ASSUMED | Flag.ASSUMED_BLUR_SPREAD  # assumed, or typed in the study
 ROLE_WORDS = np.array(["outlet", "", "inlet"], dtype=object)  # role -1, 0, +1
 
 
@@ -329,6 +330,9 @@ def _image(findings: Findings) -> dict[str, Any]:
     prepared, measured, shape = findings.prepared, findings.measured, findings.shape
     kind = measured.graph.node_kind
     flags = prepared.flags | measured.flags | findings.flow.terminals.flags
+    tells_blur = bool(measured.graph.n_segments) and not measured.flags & BLUR_NOT_TOLD
+    if not tells_blur:  # nothing here says whether the picture is sharp
+        flags &= ~Flag.OUT_OF_FOCUS
     height, width = prepared.signal.shape
     return {
         "width_px": width,
@@ -349,10 +353,10 @@ def _image(findings: Findings) -> dict[str, Any]:
         "tortuosity_mean": shape.tortuosity_mean,
         "box_dimension": shape.box_dimension,
         "profile": measured.profile if measured.graph.n_segments else "",
-        "blur_px": measured.blur_px,
+        "blur_px": measured.blur_px if tells_blur else np.nan,
         "noise": prepared.quality.noise,
         "contrast": measured.image_contrast,
-        "focus_ok": None if np.isnan(measured.blur_px) else Flag.OUT_OF_FOCUS not in flags,
+        "focus_ok": Flag.OUT_OF_FOCUS not in flags if tells_blur else None,
         "exposure_ok": prepared.quality.exposure_ok,
         "flags": codes(np.array([int(flags)]))[0],
     }

@@ -4,7 +4,7 @@ from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 
-from vasohm.config.settings import Settings
+from vasohm.config.study_file import Study
 from vasohm.errors import Problem, RequestError
 from vasohm.flow.rheology import get_law
 from vasohm.results.methods import Methods, MethodsUsed, describe_methods
@@ -38,8 +38,9 @@ class GatherReport:
     damaged: tuple[str, ...]
 
 
-def methods_used(settings: Settings, version: str) -> Methods:
+def methods_used(study: Study, version: str) -> Methods:
     """Return the methods paragraph, references and cautions of a study."""
+    settings = study.settings
     return describe_methods(
         MethodsUsed(
             version=version,
@@ -50,6 +51,8 @@ def methods_used(settings: Settings, version: str) -> Methods:
             network=settings.network,
             law_citation=get_law(settings.blood.law).citation,
             scenario_names=tuple(scenario.name for scenario in settings.scenarios),
+            n_images=len(study.images),
+            n_masked=sum(source.mask_file is not None for source in study.images),
         )
     )
 

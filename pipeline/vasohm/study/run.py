@@ -235,7 +235,7 @@ class _Run:
             study=self._study.name,
             configuration=self._study.resolved,
             versions=self._versions,
-            methods=methods_used(self._study.settings, self._versions["vasohm"]),
+            methods=methods_used(self._study, self._versions["vasohm"]),
             warnings=tuple(self._study.warnings),
             images=images,
             exit_status=interrupted or (EXIT_SOME_FAILED if failed else EXIT_OK),
