@@ -271,16 +271,21 @@ def about() -> int:
 
 
 @commands.command()
-@click.argument("recipe_file", metavar="RECIPE.toml", type=click.Path(path_type=Path))
+@click.argument("recipe_file", metavar="[RECIPE.toml]", required=False, type=click.Path(path_type=Path))
+@click.option("--like", type=_FOLDER, help="Make phantoms like the images of these results, instead of a recipe's.")
 @click.option("--out", required=True, type=_FOLDER, help="Folder for the images and their truth.")
-def phantom(recipe_file: Path, out: Path) -> int:
+def phantom(recipe_file: Path | None, like: Path | None, out: Path) -> int:
     """Make images of vessels whose radii, lengths and resistances are known exactly."""
     from vasohm_synthetic.errors import RecipeError
+    from vasohm_synthetic.like import recipe_like
     from vasohm_synthetic.make import make_phantoms
     from vasohm_synthetic.recipe import read_recipe
 
+    if (recipe_file is None) == (like is None):
+        _complain(["give either a recipe or --like RESULTS_DIR."])
+        return EXIT_REQUEST
     try:
-        make_phantoms(read_recipe(recipe_file), out)
+        make_phantoms(read_recipe(recipe_file) if recipe_file else recipe_like(like or out), out)
     except RecipeError as wrong:
         _complain(wrong.problems)
         return EXIT_REQUEST
