@@ -18,7 +18,7 @@ def main() -> None:
 
 def _leave(number: int, _frame: FrameType | None) -> None:
     """End at once: a run with images at work has handlers of its own, and every file is written whole or not at all."""
-    os.write(2, b"vasohm: interrupted\n")
+    os.write(2, b"vasohm: interrupted. What was finished is kept; the same command carries on from there.\n")
     os._exit(128 + number)
 
 

@@ -269,6 +269,19 @@ def test_an_interrupted_run_is_carried_on_by_the_same_command(
     assert contents(out) == undisturbed
 
 
+def test_an_interrupt_while_workers_start_is_no_traceback(make_study: MakeStudy, tmp_path: Path) -> None:
+    """Workers that took a Ctrl-C of the terminal for their own would die in their imports and be told as crashes."""
+    study, out = make_study(2), tmp_path / "out"
+    run = study.start("measure", study.file, "--out", out, "--workers", 2)
+    wait_for(lambda: len(workers_of(run.pid)) >= 2)
+    os.killpg(run.pid, signal.SIGINT)
+    told, complained = run.communicate(timeout=DEADLINE_S)
+    assert run.returncode == 130, complained
+    assert "Traceback" not in told + complained
+    assert "retry" not in complained
+    assert "the same command carries on" in told
+
+
 def test_a_second_interrupt_ends_at_once_and_leaves_no_worker(make_study: MakeStudy, tmp_path: Path) -> None:
     study, out = make_study(2), tmp_path / "out"
     slow = {"SLOW_S": "300", "MARK": str(tmp_path / "slow")}

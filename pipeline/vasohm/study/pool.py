@@ -16,6 +16,7 @@ from collections.abc import Callable, Iterable, Iterator
 from concurrent.futures import FIRST_COMPLETED, Future, ProcessPoolExecutor, wait
 from concurrent.futures.process import BrokenProcessPool
 from contextlib import contextmanager
+from multiprocessing import resource_tracker
 from multiprocessing.process import BaseProcess
 from pathlib import Path
 
@@ -104,7 +105,7 @@ class SupervisedPool:
                     deadline = time.monotonic() + GRACE_S
                 if not self._running or stops() > 1 or time.monotonic() > deadline:
                     return
-                yield from self._collect(on_retry)
+                yield from self._collect(_tell_nobody if stops() else on_retry)
         finally:
             self._end(by_force=bool(self._running))
 
@@ -121,6 +122,7 @@ class SupervisedPool:
 
     def _submit(self, task: Task) -> None:
         task.trail.unlink(missing_ok=True)
+        resource_tracker.ensure_running()  # its start lets signals through again: the hold must come after it
         with signals_held(), _one_thread_each():
             if self._executor is None:
                 self._executor = ProcessPoolExecutor(
@@ -191,6 +193,10 @@ class SupervisedPool:
         self._executor = None
         self._children.clear()
         self._running.clear()
+
+
+def _tell_nobody(_task: Task, _how: str) -> None:
+    """After a request to stop nothing is run again, so that there is nothing to tell."""
 
 
 def _failed(task: Task, failure: Failure) -> Outcome:
