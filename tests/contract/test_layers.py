@@ -11,7 +11,7 @@ PACKAGE = Path(__file__).parents[2] / "pipeline" / "vasohm"
 SYNTHETIC = Path(__file__).parents[2] / "synthetic" / "vasohm_synthetic"
 
 LAYERS = (
-    "arrays errors units flags uncertainty",
+    "arrays errors units flags uncertainty plugins",
     "image",
     "network",
     "flow",

@@ -1,14 +1,11 @@
 """Viscosity laws against their published formulas, at hematocrits where a misprint shows."""
 
-from importlib.metadata import EntryPoint
-
 import numpy as np
 import pytest
 from beds import published
 
 from vasohm.errors import DomainError, PluginError
-from vasohm.flow import rheology
-from vasohm.flow.rheology import ViscosityLaw, apparent_viscosity, get_law, law_names, load_laws
+from vasohm.flow.rheology import apparent_viscosity, get_law, law_names
 
 FORMULA = 1e-9  # published formulas in double precision, evaluated by another program
 ZERO_OF_C_UM = 8.051829446724955  # diameter at which the laws' hematocrit factor is 0/0 as printed
@@ -137,74 +134,7 @@ def test_constants_without_meaning_are_refused_by_name():
         apparent_viscosity("constant", 5.0, 0.45)
     with pytest.raises(DomainError, match=r"core_viscosity_mpa_s is nan"):
         apparent_viscosity("haynes-marginal-zone", 5.0, 0.45, parameters={"marginal_zone_um": 1.0})
-    with pytest.raises(PluginError, match=r"no viscosity law 'water'; there are constant, .*pries-in-vivo"):
+    with pytest.raises(
+        PluginError, match=r"no viscosity law 'water' is registered; there are constant, .*pries-in-vivo"
+    ):
         apparent_viscosity("water", 5.0, 0.45)
-
-
-def doubled(radius_um, hematocrit, *, plasma_viscosity_mpa_s, parameters):
-    del parameters
-    return 2.0 * plasma_viscosity_mpa_s + 0.0 * radius_um * hematocrit
-
-
-def flat(radius_um, hematocrit, *, plasma_viscosity_mpa_s, parameters):
-    del radius_um, hematocrit, plasma_viscosity_mpa_s, parameters
-    return np.array([1.0, 2.0])
-
-
-def negative(radius_um, hematocrit, *, plasma_viscosity_mpa_s, parameters):
-    del plasma_viscosity_mpa_s, parameters
-    return -radius_um * hematocrit
-
-
-whole_law = ViscosityLaw(doubled, (1.0, 2.0), (0.1, 0.2), "Someone, 2020")
-not_a_law = 3
-
-
-@pytest.fixture
-def registered(monkeypatch):
-    """Laws of another package, found by name."""
-    entries = [
-        EntryPoint(name, f"test_rheology:{value}", rheology.ENTRY_POINT_GROUP)
-        for name, value in [
-            ("doubled", "doubled"),
-            ("flat", "flat"),
-            ("negative", "negative"),
-            ("whole", "whole_law"),
-            ("number", "not_a_law"),
-            ("absent", "nowhere_to_be_found"),
-            ("twice", "doubled"),
-            ("twice", "flat"),
-            ("constant", "doubled"),
-        ]
-    ]
-    monkeypatch.setattr(rheology, "entry_points", lambda group: entries if group == rheology.ENTRY_POINT_GROUP else [])
-    load_laws.cache_clear()
-    yield
-    load_laws.cache_clear()
-
-
-@pytest.mark.usefixtures("registered")
-def test_a_law_of_another_package_is_used_by_name():
-    assert "absent" in law_names()  # found without being imported
-    assert apparent_viscosity("doubled", 5.0, 0.45) == 2.4
-    bare = get_law("doubled")
-    assert bare.citation == "no source given"
-    assert bare.valid_radius_um == (0.0, np.inf)
-    assert get_law("whole") is whole_law
-
-
-@pytest.mark.usefixtures("registered")
-@pytest.mark.parametrize(
-    ("law", "words"),
-    [
-        ("flat", r"law 'flat' returned shape \(2,\) where \(\) was asked"),
-        ("negative", r"law 'negative' returned a viscosity of -2.25 mPa·s"),
-        ("number", r"'number' \(test_rheology:not_a_law, from .*\) is a int"),
-        ("absent", r"'absent' \(test_rheology:nowhere_to_be_found, from .*fails to load: AttributeError"),
-        ("twice", r"has a name that is taken"),
-        ("constant", r"has a name that is taken"),
-    ],
-)
-def test_a_faulty_law_of_another_package_is_named(law, words):
-    with pytest.raises(PluginError, match=words):
-        apparent_viscosity(law, 5.0, 0.45, parameters={"viscosity_mpa_s": 3.0})

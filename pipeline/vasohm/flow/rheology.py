@@ -2,8 +2,6 @@
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
-from functools import cache
-from importlib.metadata import EntryPoint, entry_points
 from types import MappingProxyType, ModuleType
 
 import numpy as np
@@ -19,8 +17,8 @@ from vasohm.flow.laws import (
     pries_in_vivo,
     pries_secomb_surface_layer,
 )
+from vasohm.plugins import PluginKind, load_plugin, plugin_names, refuse_plugin
 
-ENTRY_POINT_GROUP = "vasohm.viscosity_laws"
 HIGHEST_HEMATOCRIT = 0.75  # above it cells are packed and no law was measured
 HEMATOCRIT_STEP = 1e-6  # of a one-sided difference: slopes to about 1e-6
 
@@ -70,19 +68,12 @@ LAWS: Mapping[str, ViscosityLaw] = MappingProxyType(
 )
 
 
-@cache
-def load_laws() -> Mapping[str, ViscosityLaw | tuple[EntryPoint, ...]]:
-    """All laws by name: those of this package, and the entry points that other packages register, not yet imported."""
-    laws: dict[str, ViscosityLaw | tuple[EntryPoint, ...]] = dict(LAWS)
-    others = sorted(entry_points(group=ENTRY_POINT_GROUP), key=lambda found: (found.name, found.value))
-    for name in sorted({found.name for found in others}):
-        laws[name] = tuple(found for found in others if found.name == name)
-    return MappingProxyType(laws)
+PLUGINS = PluginKind("vasohm.viscosity_laws", "viscosity law", tuple(LAWS))
 
 
 def law_names() -> tuple[str, ...]:
     """Names of all laws that a study can ask for, without importing other packages' laws."""
-    return tuple(load_laws())
+    return plugin_names(PLUGINS)
 
 
 def get_law(name: str) -> ViscosityLaw:
@@ -93,33 +84,14 @@ def get_law(name: str) -> ViscosityLaw:
     PluginError
         No law has this name, two have it, or the package that registers it fails to give it.
     """
-    laws = load_laws()
-    if name not in laws:
-        msg = f"no viscosity law {name!r}; there are {', '.join(laws)}."
-        raise PluginError(msg)
-    found = laws[name]
-    if isinstance(found, ViscosityLaw):
-        return found
-    described = " and ".join(_describe(entry) for entry in found)
-    if len(found) > 1 or name in LAWS:
-        msg = f"the viscosity law {name!r} of {described} has a name that is taken; remove one or rename it."
-        raise PluginError(msg)
-    try:
-        value = found[0].load()
-    except Exception as error:
-        msg = f"the viscosity law {described} fails to load: {type(error).__name__}: {error}. Repair or remove it."
-        raise PluginError(msg) from error
+    value = load_plugin(PLUGINS, name)
+    if value is None:
+        return LAWS[name]
     if isinstance(value, ViscosityLaw):
         return value
     if not callable(value):
-        msg = f"the viscosity law {described} is a {type(value).__name__}; it must be a function or a ViscosityLaw."
-        raise PluginError(msg)
+        raise refuse_plugin(PLUGINS, name, value, "a function or a ViscosityLaw")
     return ViscosityLaw(value, (0.0, np.inf), (0.0, HIGHEST_HEMATOCRIT), "no source given")
-
-
-def _describe(entry: EntryPoint) -> str:
-    owner = entry.dist.name if entry.dist is not None else "an unnamed distribution"
-    return f"{entry.name!r} ({entry.value}, from {owner})"
 
 
 @dataclass(frozen=True, slots=True)

@@ -2,8 +2,6 @@
 
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
-from importlib.metadata import EntryPoint, entry_points
-from typing import Any
 
 import numpy as np
 
@@ -11,8 +9,8 @@ from vasohm.arrays import BoolArray, freeze
 from vasohm.errors import ImageError, PluginError
 from vasohm.image.prepare import PreparedImage
 from vasohm.image.segmenters import hessian, ridge
+from vasohm.plugins import PluginKind, load_plugin, plugin_names, refuse_plugin
 
-ENTRY_POINTS = "vasohm.segmenters"
 FULL_SHARE = 0.98  # of the field: a mask that holds everything holds no vessel
 
 
@@ -50,11 +48,12 @@ SEGMENTERS = {
     "hessian": Segmenter(hessian.segment_hessian, hessian.CITATION),
 }
 MASK_METHOD = "mask"  # the sheet's mask_file
+PLUGINS = PluginKind("vasohm.segmenters", "segmenter", (*SEGMENTERS, MASK_METHOD))
 
 
 def segmenter_names() -> tuple[str, ...]:
     """Names that a study may give as `[segment] method`; plug-ins are named without being imported."""
-    return (*SEGMENTERS, MASK_METHOD, *sorted(point.name for point in entry_points(group=ENTRY_POINTS)))
+    return plugin_names(PLUGINS)
 
 
 def segment(prepared: PreparedImage, settings: SegmentSettings, given: BoolArray | None) -> VesselMask:
@@ -93,28 +92,23 @@ def segment(prepared: PreparedImage, settings: SegmentSettings, given: BoolArray
 
 
 def get_segmenter(name: str) -> Segmenter:
-    """Look a segmenter up by name, importing a plug-in only now that a study asks for it."""
-    if name in SEGMENTERS:
+    """Look a segmenter up by name, importing a plug-in only now that a study asks for it.
+
+    Raises
+    ------
+    PluginError : nobody has this name, two have it, or it fails to load; "mask" is none, the sheet gives it.
+    """
+    value = load_plugin(PLUGINS, name)
+    if value is None and name in SEGMENTERS:
         return SEGMENTERS[name]
-    found = [point for point in entry_points(group=ENTRY_POINTS) if point.name == name]
-    if not found:
-        msg = f"segmenter {name!r} is not registered; known are {', '.join(segmenter_names())}."
+    if isinstance(value, Segmenter):
+        return value
+    if value is None:
+        msg = f"{name!r} is the sheet's mask_file and no segmenter; there are {', '.join(SEGMENTERS)}."
         raise PluginError(msg)
-    loaded = _load(found[0])
-    return loaded if isinstance(loaded, Segmenter) else Segmenter(loaded, "no source given")
-
-
-def _load(point: EntryPoint) -> Any:
-    try:
-        loaded = point.load()
-    except Exception as error:
-        owner = point.dist.name if point.dist else "unknown distribution"
-        msg = f"segmenter {point.name!r} of {owner} ({point.value}) does not load: {error}"
-        raise PluginError(msg) from error
-    if not callable(loaded) and not isinstance(loaded, Segmenter):
-        msg = f"segmenter {point.name!r} ({point.value}) is neither a function nor a Segmenter."
-        raise PluginError(msg)
-    return loaded
+    if not callable(value):
+        raise refuse_plugin(PLUGINS, name, value, "a function or a Segmenter")
+    return Segmenter(value, "no source given")
 
 
 def _checked(mask: BoolArray, prepared: PreparedImage, source: str) -> VesselMask:

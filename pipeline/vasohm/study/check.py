@@ -11,6 +11,7 @@ from vasohm.errors import Problem, VasohmError
 from vasohm.flow.rheology import get_law
 from vasohm.image.calibrate import calibrate
 from vasohm.image.read import read_image, read_labels, read_mask
+from vasohm.image.segment import MASK_METHOD, get_segmenter
 
 _FIRST_ROW = 2  # of the sheet, after its header
 
@@ -20,7 +21,7 @@ def problems_of(study: Study) -> list[Problem]:
 
     A header that promises a picture does not yet hold one: a truncated file shows only when it is decoded.
     """
-    found = list(_law_problems(study))
+    found = list(_plugin_problems(study))
     sheet = str(study.resolved["study.sheet"]["value"] or study.path.name)
     for row, source in enumerate(study.images, start=_FIRST_ROW):
         for column, path, fault in _faults(source, study.settings):
@@ -28,11 +29,17 @@ def problems_of(study: Study) -> list[Problem]:
     return found
 
 
-def _law_problems(study: Study) -> Iterator[Problem]:
+def _plugin_problems(study: Study) -> Iterator[Problem]:
+    law, method = study.settings.blood.law, study.settings.segment.method
     try:
-        get_law(study.settings.blood.law)
+        get_law(law)
     except VasohmError as fault:
-        yield Problem(file=study.path.name, column="blood.law", value=study.settings.blood.law, message=str(fault))
+        yield Problem(file=study.path.name, column="blood.law", value=law, message=str(fault))
+    try:
+        if method != MASK_METHOD:
+            get_segmenter(method)
+    except VasohmError as fault:
+        yield Problem(file=study.path.name, column="segment.method", value=method, message=str(fault))
 
 
 def _faults(source: ImageSource, settings: Settings) -> Iterator[tuple[str, Path, VasohmError]]:
