@@ -8,6 +8,7 @@ from PIL import Image
 from scipy.ndimage import gaussian_filter
 
 import vasohm
+from vasohm.errors import RequestError
 from vasohm.results.write import record_is_whole, write_image
 
 PIXEL_SIZE_UM = 2.0
@@ -34,4 +35,40 @@ def test_vessels_where_there_are_none_are_written_without_bounds(tmp_path: Path,
         is_bounded = np.isfinite(low) & np.isfinite(high)
         assert (low.notna() == high.notna()).all()
         assert (table["flags"].str.contains("no_interval") == (is_known & ~is_bounded)).all()
-    assert found.segments["flags"].str.contains("no_interval").any()
+
+
+GREY = np.full((40, 40), 100, np.uint8)
+
+
+@pytest.mark.parametrize(
+    ("pixels", "words"),
+    [
+        (GREY * 1j, "an array of complex128 is no picture"),
+        (GREY.astype(object), "an array of object is no picture"),
+        (GREY.astype(str), "an array of <U3 is no picture"),
+        (None, "an array of object is no picture"),
+        (GREY[:0], r"an array of shape \(0, 40\) holds no pixel"),
+        (GREY[0], r"an array of shape \(40,\) is no picture: \[y, x\]"),
+        (np.stack([GREY, GREY], axis=2), r"an array of shape \(40, 40, 2\) is no picture"),
+    ],
+)
+def test_an_array_that_is_no_picture_is_refused_in_words(pixels: object, words: str) -> None:
+    with pytest.raises(RequestError, match=words):
+        vasohm.measure_image(pixels, pixel_size_um=PIXEL_SIZE_UM)  # type: ignore[arg-type]
+
+
+@pytest.mark.parametrize("hematocrit", [-0.01, 45.0, np.nan])
+def test_a_hematocrit_out_of_range_is_refused_at_once(hematocrit: float) -> None:
+    """Per cent taken for a fraction is the usual slip; it must not surface after a minute of measuring."""
+    with pytest.raises(RequestError, match=r"hematocrit is .*; give a fraction between 0 and 0.75, not per cent"):
+        vasohm.measure_image(GREY, pixel_size_um=PIXEL_SIZE_UM, hematocrit=hematocrit)
+
+
+def test_colour_with_and_without_opacity_is_the_same_picture() -> None:
+    light = np.random.default_rng(0).normal(150.0, 2.0, (64, 64))
+    light[28:36] -= 40.0
+    colour = np.clip(np.stack([light, light, light], axis=2), 0, 255).astype(np.uint8)
+    opaque = np.concatenate([colour, np.full((64, 64, 1), 255, np.uint8)], axis=2)
+    plain, with_opacity = (vasohm.measure_image(one, pixel_size_um=PIXEL_SIZE_UM) for one in (colour, opaque))
+    assert len(plain.segments) > 0
+    assert plain.segments.equals(with_opacity.segments)

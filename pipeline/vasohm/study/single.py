@@ -11,6 +11,7 @@ from vasohm.config.sheet import Disc, ImageSource, read_edits, read_terminals
 from vasohm.config.study_file import Study, read_toml, study_from_mapping
 from vasohm.errors import Problem, RequestError
 from vasohm.flags import Flag
+from vasohm.flow.rheology import HIGHEST_HEMATOCRIT
 from vasohm.image.calibrate import TypedScale
 from vasohm.image.read import RawImage, read_image
 from vasohm.pipeline import measure_pixels
@@ -54,7 +55,8 @@ def measure_image(  # noqa: PLR0913  one keyword a column of the sheet and a sec
     Parameters
     ----------
     image : path, or array [y, x] or [y, x, colour]
-        The picture; of an array bigger is brighter.
+        The picture, truth values, whole or real numbers; of an array bigger is brighter, and a fourth colour, the
+        opacity, plays no part.
     pixel_size_um, pixel_size_se_um : float, µm
         Edge of a pixel and its standard uncertainty. A file may tell the first itself.
     preset : str
@@ -75,10 +77,13 @@ def measure_image(  # noqa: PLR0913  one keyword a column of the sheet and a sec
     Raises
     ------
     RequestError
-        A wrong value of a keyword or of `study`, all of them at once.
+        A wrong value of a keyword or of `study`, or an array that is no picture.
     ReadError, ScaleError, MaskError, ImageError
         A file that is no picture, no pixel size, a mask that does not fit, a picture that cannot be measured.
     """
+    if hematocrit is not None and not 0 <= hematocrit <= HIGHEST_HEMATOCRIT:
+        problem = f"hematocrit is {hematocrit!r}; give a fraction between 0 and {HIGHEST_HEMATOCRIT}, not per cent."
+        raise RequestError([Problem("measure_image", problem)])
     sections = dict(zip(SECTIONS, (scale, segment, radius, blood, network, scenario), strict=True))
     settings = _resolved(study, preset, sections).settings
     source = ImageSource(
@@ -131,8 +136,14 @@ def _disc(x: float | None, y: float | None, radius: float | None) -> Disc | None
 def _from_array(pixels: AnyArray) -> RawImage:
     """Take an array as it is; integers tell their own white level."""
     pixels = np.array(pixels)
+    if pixels.dtype.kind not in "buif":
+        problem = f"an array of {pixels.dtype} is no picture: truth values, whole or real numbers are needed."
+        raise RequestError([Problem("measure_image", problem)])
+    if pixels.size == 0:
+        problem = f"an array of shape {pixels.shape} holds no pixel."
+        raise RequestError([Problem("measure_image", problem)])
     if pixels.ndim not in (2, 3) or (pixels.ndim == 3 and pixels.shape[2] not in (3, 4)):
-        problem = f"an array of shape {pixels.shape} is no picture: [y, x] or [y, x, 3] is needed."
+        problem = f"an array of shape {pixels.shape} is no picture: [y, x], [y, x, 3] or [y, x, 4] is needed."
         raise RequestError([Problem("measure_image", problem)])
     if pixels.ndim == 3:
         pixels = pixels[..., :3]
