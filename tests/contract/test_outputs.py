@@ -33,11 +33,13 @@ from vasohm.network.morphometry import Branchings, Morphometry
 from vasohm.network.radius import MeasuredGraph
 from vasohm.results.cells import guard_text, unguard_text
 from vasohm.results.encode import json_bytes
+from vasohm.results.image_page import image_page
 from vasohm.results.methods import Methods, MethodsUsed, bibtex, describe_methods
 from vasohm.results.overlay import ColourBy, draw_overlay, round_length_um
-from vasohm.results.pages import Study, write_study_page
+from vasohm.results.pages import Study, images_without_resistance, lines_without_resistance, write_study_page
 from vasohm.results.schema import COLUMNS, column_names
 from vasohm.results.tables import DiscPlace, Findings, ImageTables, tabulate
+from vasohm.results.wording import pixel_size_words
 from vasohm.results.write import read_record, record_is_whole, remove_partials, write_image
 from vasohm.results.write_study import (
     Failure,
@@ -744,6 +746,32 @@ def test_a_blur_that_the_picture_does_not_tell_says_nothing_of_its_focus() -> No
     image = tabulate("a", {}, nothing).image.iloc[0]
     assert np.isnan(image["blur_px"])
     assert image["focus_ok"] is None
+
+
+def test_pages_tell_scale_order_and_why_there_is_no_resistance(tmp_path: Path) -> None:
+    """Who reads only the page must learn how sure the scale is, and why the main result is missing."""
+    tables = make_tables("a")
+    page = image_page(tables, with_overlay=False)
+    assert "pixel size: 2 µm, its uncertainty is not told, from the image sheet" in page
+    assert pixel_size_words(7.0, 0.7, "study") == "7 µm ± 0.7 µm (k = 1), from [scale] of the study"
+    assert 'href="#flag-terminals_joined"' not in page  # how it was done, no doubt; explained once at the end
+    assert page.index("No doubt, and therefore not marked") < page.index('<span id="flag-terminals_joined">')
+    order = [page.index(f'<td data-name="share" class="number">{share}</td>') for share in ("0.600", "0.400", "0")]
+    assert order == sorted(order)
+    assert "has no resistance" not in page
+    networks = tables.networks.assign(resistance_pa_s_m3=math.nan, flags="no_terminals;mesh")
+    lacking = replace(tables, tables={**tables.tables, "networks": networks})
+    why = (
+        "inlets and outlets are not known; the network has loops: inlets and outlets cannot be told from its shape. "
+        "Name them in a terminals_file of the image sheet."
+    )
+    assert f"The longest network (number 1, 3 of 3 segments) has no resistance: {why}" in image_page(
+        lacking, with_overlay=False
+    )
+    write_image(lacking, tmp_path / "images/a", {}, overlay=False)
+    gather_tables(tmp_path, ["a"])
+    found = images_without_resistance(tmp_path)
+    assert lines_without_resistance(found, 1) == [f"1 of 1 image without resistance of the longest network (a): {why}"]
 
 
 def test_every_mark_of_the_methods_has_its_reference() -> None:

@@ -22,6 +22,7 @@ from vasohm.results.markup import (
 from vasohm.results.methods import CAUTIONS
 from vasohm.results.schema import image_columns
 from vasohm.results.tables import ImageTables
+from vasohm.results.wording import pixel_size_words, why_no_resistance
 
 ROWS_SHOWN = 50
 NETWORK_NAMES = (
@@ -55,10 +56,12 @@ def image_page(tables: ImageTables, *, with_overlay: bool) -> str:
         paragraph(link("../../index.html", "All images")),
         heading(tables.image_id, 1),
         paragraph("No vessel was found." if tables.status == "empty" else _summary(tables)),
+        _without_resistance(tables.networks),
     ]
     if with_overlay:
         body.append(Html(f'<p><a href="overlay.png">{picture("overlay.png", alternative).source}</a></p>'))
-    body += [heading("Networks", 2), _networks(tables.networks), heading("Segments", 2), _segments(tables.segments)]
+    body += [heading("Networks", 2), _networks(tables.networks), heading("Segments", 2)]
+    body.append(_segments(tables.segments, tables.networks))
     body += [heading("The image", 2), _quality(row)]
     flags = [row["flags"], *tables.networks["flags"], *tables.segments["flags"]]
     body += [heading("What the flags mean", 2), flag_meanings(flags)]
@@ -75,11 +78,27 @@ def image_page(tables: ImageTables, *, with_overlay: bool) -> str:
 
 def _summary(tables: ImageTables) -> str:
     row = tables.image.iloc[0]
-    return f"Segments: {row['n_segments']}; networks: {row['n_networks']}; pixel size: {row['pixel_size_um']:g} µm."
+    size = pixel_size_words(row["pixel_size_um"], row["pixel_size_se_um"], row["pixel_size_source"])
+    return f"Segments: {row['n_segments']}; networks: {row['n_networks']}; pixel size: {size}."
+
+
+def _without_resistance(networks: pd.DataFrame) -> Html:
+    """Say why the longest network has no resistance; nothing where it has one."""
+    if networks.empty:
+        return Html("")
+    longest = _longest_first(networks).iloc[0]
+    why = why_no_resistance(float(longest["resistance_pa_s_m3"]), longest["flags"])
+    if not why:
+        return Html("")
+    share = f"{longest['n_segments']} of {networks['n_segments'].sum()} segments"
+    return paragraph(f"The longest network (number {longest['network_id']}, {share}) has no resistance: {why}")
+
+
+def _longest_first(networks: pd.DataFrame) -> pd.DataFrame:
+    return networks.sort_values("length_um", ascending=False, kind="stable")
 
 
 def _networks(networks: pd.DataFrame) -> Html:
-    largest = networks.sort_values("length_um", ascending=False, kind="stable").head(ROWS_SHOWN)
     rows = [
         (
             str(row["network_id"]),
@@ -90,14 +109,25 @@ def _networks(networks: pd.DataFrame) -> Html:
             interval(row["resistance_pa_s_m3"], row["resistance_lo_pa_s_m3"], row["resistance_hi_pa_s_m3"]),
             flag_codes(row["flags"]),
         )
-        for row in largest.to_dict("records")
+        for row in _longest_first(networks).head(ROWS_SHOWN).to_dict("records")
     ]
     return _shortened(
         table(NETWORK_NAMES, rows, set(NETWORK_NAMES) - TEXT_NAMES), len(networks), "networks, longest first"
     )
 
 
-def _segments(segments: pd.DataFrame) -> Html:
+def _segments(segments: pd.DataFrame, networks: pd.DataFrame) -> Html:
+    """Those first that matter most: of the longest network, by share of its resistance, else by length."""
+    length = networks.set_index("network_id")["length_um"]
+    keys = pd.DataFrame(
+        {
+            "network": -segments["network_id"].map(length),
+            "number": segments["network_id"],
+            "share": -segments["resistance_share"].fillna(0.0),
+            "length": -segments["length_um"],
+        }
+    )
+    weightiest = segments.loc[keys.sort_values([str(name) for name in keys], kind="stable").index]
     rows = [
         (
             str(row["segment_id"]),
@@ -110,9 +140,10 @@ def _segments(segments: pd.DataFrame) -> Html:
             shown(row["resistance_share"]),
             flag_codes(row["flags"]),
         )
-        for row in segments.head(ROWS_SHOWN).to_dict("records")
+        for row in weightiest.head(ROWS_SHOWN).to_dict("records")
     ]
-    return _shortened(table(SEGMENT_NAMES, rows, set(SEGMENT_NAMES) - TEXT_NAMES), len(segments), "segments by number")
+    order = "segments: longest network first, within it by share of the network's resistance, else by length"
+    return _shortened(table(SEGMENT_NAMES, rows, set(SEGMENT_NAMES) - TEXT_NAMES), len(segments), order)
 
 
 def _shortened(whole: Html, n: int, what: str) -> Html:

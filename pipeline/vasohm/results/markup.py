@@ -5,10 +5,11 @@ from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from html import escape
 
-from vasohm.flags import MEANING, code
+from vasohm.flags import MEANING, Flag, code
 
 POLICY = "default-src 'none'; img-src 'self'; style-src 'unsafe-inline'; base-uri 'none'; form-action 'none'"
 FLAG_MEANING = {code(flag): meaning for flag, meaning in MEANING.items()}
+FACTS = {code(Flag.TERMINALS_JOINED)}  # flags that tell how a thing was done and cast no doubt: explained, not marked
 
 STYLE = """
 :root { color-scheme: light; }
@@ -25,7 +26,7 @@ td { overflow-wrap: break-word; max-width: 24rem; }
 td.number, th.number { text-align: right; font-variant-numeric: tabular-nums; }
 td.number { white-space: nowrap; }
 img { max-width: 100%; height: auto; }
-img.small { width: 8rem; }
+img.small { width: 16rem; max-width: 40vw; }
 dt { font-weight: 600; }
 dd { margin: 0 0 .4rem 0; }
 .alert { border-left: .4rem solid #a30000; background: #fdf1f0; padding: .2rem 1rem; }
@@ -126,17 +127,24 @@ def interval(value: float, low: float, high: float) -> Html:
 
 
 def flag_codes(flags: str) -> Html:
-    """Turn the flags of one cell into links, each to its meaning on the same page."""
-    codes = [flag for flag in flags.split(";") if flag]
+    """Turn the doubts of one cell into links, each to its meaning on the same page."""
+    codes = [flag for flag in flags.split(";") if flag and flag not in FACTS]
     return Html(", ".join(f'<a href="#flag-{html(c)}">{html(c)}</a>' for c in codes))
 
 
 def flag_meanings(flags: Iterable[str]) -> Html:
-    """Meaning of every flag that occurs in the cells, in the order of the registry."""
+    """Meaning of every flag that occurs in the cells, in the order of the registry; last those that are no doubt."""
     found = {flag for cell in flags for flag in cell.split(";") if flag}
-    if not found:
-        return paragraph("No flag is set.")
-    anchors = [
-        (Html(f'<span id="flag-{name}">{name}</span>'), FLAG_MEANING[name]) for name in FLAG_MEANING if name in found
-    ]
-    return terms(anchors)
+    doubts, facts = found - FACTS, found & FACTS
+    told = _meanings(doubts) if doubts else paragraph("No doubt is marked.")
+    if facts:
+        lead = paragraph("No doubt, and therefore not marked on the pages; it stands in the tables all the same:")
+        told = Html(told.source + lead.source + _meanings(facts).source)
+    return told
+
+
+def _meanings(found: Iterable[str]) -> Html:
+    names = set(found)
+    return terms(
+        (Html(f'<span id="flag-{name}">{name}</span>'), FLAG_MEANING[name]) for name in FLAG_MEANING if name in names
+    )

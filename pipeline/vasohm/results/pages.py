@@ -13,6 +13,7 @@ from vasohm.results.markup import (
     flag_codes,
     flag_meanings,
     heading,
+    html,
     interval,
     link,
     listing,
@@ -23,11 +24,13 @@ from vasohm.results.markup import (
     table,
 )
 from vasohm.results.methods import Methods
+from vasohm.results.wording import SCALE_SOURCES, why_no_resistance
 from vasohm.results.write import write_atomically
 from vasohm.results.write_study import Failure
 from vasohm.units import UM_PER_MM
 
 DESIGN_NAMES = ("subject", "eye", "group", "condition", "time")
+IDS_SHOWN = 5
 ROOT_FILES = (
     "images_all.csv",
     "networks_all.csv",
@@ -71,7 +74,10 @@ def write_study_page(out_dir: Path, study: Study) -> None:
     OSError : an image's tables cannot be read, or the page cannot be written.
     """
     glances = [_glance(out_dir / "images" / image_id) for image_id in study.image_ids]
-    body = [heading(study.name, 1), paragraph(_counts(study, glances)), _failures(study.failures)]
+    body = [heading(study.name, 1), paragraph(_counts(study, glances))]
+    lacking = [(glance.image["image_id"], why) for glance in glances if (why := _why_none(glance.largest))]
+    body += [paragraph(line) for line in lines_without_resistance(lacking, len(glances))]
+    body.append(_failures(study.failures))
     body += [heading("Cautions", 2), listing(study.methods.cautions)]
     body += [heading("Images", 2), _images(glances)]
     flags = [g.image["flags"] for g in glances] + [g.largest["flags"] for g in glances if g.largest]
@@ -81,6 +87,42 @@ def write_study_page(out_dir: Path, study: Study) -> None:
     files = [name for name in ROOT_FILES if (out_dir / name).exists()]
     body += [heading("Files", 2), listing(link(name, name) for name in files)]
     write_atomically(out_dir / "index.html", page(f"{study.name} - vasohm", body).encode())
+
+
+def images_without_resistance(out_dir: Path) -> list[tuple[str, str]]:
+    """Images whose longest network has no resistance, each with the reason, from the gathered networks.
+
+    Raises
+    ------
+    OSError : the table cannot be read.
+    """
+    longest: dict[str, dict[str, str]] = {}
+    for row in _read(out_dir / "networks_all.csv"):
+        before = longest.get(row["image_id"])
+        if before is None or _number(row["length_um"]) > _number(before["length_um"]):
+            longest[row["image_id"]] = row
+    return [(image_id, why) for image_id, row in longest.items() if (why := _why_none(row))]
+
+
+def lines_without_resistance(lacking: Sequence[tuple[str, str]], n_images: int) -> list[str]:
+    """Tell in one line a reason which images have no resistance of their longest network, the first by name."""
+    by_reason: dict[str, list[str]] = {}
+    for image_id, why in lacking:
+        by_reason.setdefault(why, []).append(image_id)
+    return [
+        f"{len(ids)} of {n_images} image{'s' if n_images != 1 else ''} without resistance of the longest network "
+        f"({named(ids)}): {why}"
+        for why, ids in by_reason.items()
+    ]
+
+
+def named(ids: Sequence[str]) -> str:
+    """Name the first few of many images."""
+    return ", ".join(ids[:IDS_SHOWN]) + (f" and {len(ids) - IDS_SHOWN} more" if len(ids) > IDS_SHOWN else "")
+
+
+def _why_none(network: Mapping[str, str] | None) -> str:
+    return why_no_resistance(_number(network["resistance_pa_s_m3"]), network["flags"]) if network else ""
 
 
 def _counts(study: Study, glances: Sequence[_Glance]) -> str:
@@ -102,6 +144,7 @@ def _failures(failures: Sequence[Failure]) -> Html:
 def _images(glances: Sequence[_Glance]) -> Html:
     design = [name for name in DESIGN_NAMES if any(glance.image.get(name) for glance in glances)]
     numbers = (
+        "pixel size (µm)",
         "segments",
         "length (mm)",
         "median radius (µm)",
@@ -123,18 +166,27 @@ def _line(glance: _Glance, design: Sequence[str]) -> list[str | Html]:
     if glance.largest is not None:
         columns = ("resistance_pa_s_m3", "resistance_lo_pa_s_m3", "resistance_hi_pa_s_m3")
         resistance = interval(*(_number(glance.largest[name]) for name in columns))
+        if _why_none(glance.largest):
+            resistance = "none"
         flags = ";".join(dict.fromkeys(filter(None, f"{flags};{glance.largest['flags']}".split(";"))))
     return [
         thumbnail,
         link(f"{target}index.html", image["image_id"]),
         image["status"],
         *(image.get(name, "") for name in design),
+        _pixel_size(image),
         image["n_segments"],
         shown(_number(image["length_um"]) / UM_PER_MM),
         shown(glance.median_radius_um),
         resistance,
         flag_codes(flags),
     ]
+
+
+def _pixel_size(image: Mapping[str, str]) -> Html:
+    size, se = shown(_number(image["pixel_size_um"])), shown(_number(image["pixel_size_se_um"]), 2)
+    source = html(SCALE_SOURCES.get(image["pixel_size_source"], image["pixel_size_source"]))
+    return Html(f"{size.source}{f' ± {se.source}' if se.source else ''} <br>({source})")
 
 
 def _glance(folder: Path) -> _Glance:

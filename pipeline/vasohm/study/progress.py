@@ -10,6 +10,7 @@ from rich.console import Console
 from rich.markup import escape
 from rich.progress import BarColumn, MofNCompleteColumn, Progress, TextColumn, TimeRemainingColumn
 
+from vasohm.results.pages import images_without_resistance, lines_without_resistance, named
 from vasohm.study.ending import CAUTION
 from vasohm.study.events import Event
 from vasohm.study.gather import GatherReport
@@ -21,7 +22,6 @@ from vasohm.study.state import ImageState, StudyState
 LINE_EVERY_S = 30.0
 LINE_EVERY_FRACTION = 0.05
 _ENDS = ("measured", "empty", "failed", "current")
-_IDS_SHOWN = 5
 _STILL_RUNNING = "Images at work may finish; interrupt again to stop at once."
 
 
@@ -107,12 +107,13 @@ def closing_lines(report: RunReport, out: Path, *, in_parts: bool) -> list[str]:
         Whether this was one part of several.
     """
     state = report.state
-    lines = failures_by_reason(state.images)
+    lines = _failed_and_empty(state.images, "" if in_parts else str(out / "failures.csv"))
     if report.stopped:
         lines.append(f"Stopped: {report.stopped}. What was finished is kept; the same command carries on from there.")
     elif in_parts:
         lines.append(f"When all parts have ended, put them together: vasohm gather {out}")
     else:
+        lines += _without_resistance(state.images, out)
         lines.append(f"Look at {out / 'index.html'}")
     lines.append(CAUTION)
     lines.append(_counts_line(state, report.current))
@@ -121,12 +122,13 @@ def closing_lines(report: RunReport, out: Path, *, in_parts: bool) -> list[str]:
 
 def gathered_lines(report: GatherReport, out: Path) -> list[str]:
     """Return what is said after gathering: what is wanting first, the counts and the exit status last."""
-    lines = failures_by_reason(report.state.images)
+    lines = failures_by_reason(report.state.images) + _empty(report.state.images)
     lines += [
         f"part {part.number}/{part.of} is missing: run measure with --part {part.number}/{part.of}"
         for part in report.missing
     ]
     lines += [f"{name}: its files are not as they were written: run measure again" for name in report.damaged]
+    lines += _without_resistance(report.state.images, out)
     lines.append(f"Look at {out / 'index.html'}")
     lines.append(CAUTION)
     lines.append(_counts_line(report.state, 0))
@@ -135,17 +137,40 @@ def gathered_lines(report: GatherReport, out: Path) -> list[str]:
 
 def failures_by_reason(images: Sequence[ImageState]) -> list[str]:
     """Return one line for each reason of failure, with the first images it met."""
+    lines = []
+    for error, failed in _by_reason(images).items():
+        example = failed[0].failure
+        names = named([image.image_id for image in failed])
+        lines.append(f"failed, {error}: {len(failed)} ({names})" + (f": {example.message}" if example else ""))
+    return [printable(line) for line in lines]
+
+
+def _by_reason(images: Sequence[ImageState]) -> dict[str, list[ImageState]]:
     by_reason: dict[str, list[ImageState]] = {}
     for image in images:
         if image.failure is not None:
             by_reason.setdefault(image.failure.error, []).append(image)
-    lines = []
-    for error, failed in sorted(by_reason.items()):
-        names = ", ".join(image.image_id for image in failed[:_IDS_SHOWN])
-        more = f" and {len(failed) - _IDS_SHOWN} more" if len(failed) > _IDS_SHOWN else ""
-        example = failed[0].failure
-        lines.append(f"failed, {error}: {len(failed)} ({names}{more})" + (f": {example.message}" if example else ""))
-    return [printable(line) for line in lines]
+    return dict(sorted(by_reason.items()))
+
+
+def _failed_and_empty(images: Sequence[ImageState], table: str) -> list[str]:
+    """Name failed and empty images; why each failed was said when it did, and stands in `table` where there is one."""
+    reasons = [
+        f"{error} {len(failed)} ({named([image.image_id for image in failed])})"
+        for error, failed in _by_reason(images).items()
+    ]
+    failed = [f"failed: {', '.join(reasons)}{f'; why stands in {table}' if table else ''}"] if reasons else []
+    return [printable(line) for line in failed] + _empty(images)
+
+
+def _empty(images: Sequence[ImageState]) -> list[str]:
+    ids = [image.image_id for image in images if image.status == EMPTY]
+    return [f"empty, no vessel was found: {len(ids)} ({named(ids)})"] if ids else []
+
+
+def _without_resistance(images: Sequence[ImageState], out: Path) -> list[str]:
+    measured = sum(image.status in (MEASURED, EMPTY) for image in images)
+    return lines_without_resistance(images_without_resistance(out), measured)
 
 
 def counted(count: int, word: str) -> str:
