@@ -197,7 +197,9 @@ def test_an_image_that_fails_now_leaves_no_tables(make_study: MakeStudy, tmp_pat
     asked = study.measure(out, "--dry-run")
     assert asked.told.splitlines()[0] == "image-0 run: failed before (not_an_image)"
     only = study.measure(out, "--only", "image-1")
-    assert only.status == 0
+    assert only.status == 1  # one value tells all of the folder: failures.csv has a row
+    assert only.told.splitlines()[-1].endswith("1 failed (1 were current); exit status 1")
+    assert json.loads((out / "study.json").read_text())["exit_status"] == 1
     assert failures(out)["image-0"]["error"] == "not_an_image"  # still told, though not tried
 
 

@@ -34,7 +34,7 @@ class Holder:
     born: str  # the process's start as the kernel counts it; "" where it does not tell
     machine: str
     since: str  # UTC
-    token: str
+    token: str  # tells two runs of one process apart, where `_read` is compared with a holder
 
 
 @contextmanager

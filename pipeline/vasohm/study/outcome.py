@@ -31,11 +31,6 @@ class Failure:
     error: str
     message: str
 
-    @property
-    def attempts(self) -> int:
-        """How often the image was tried: again only where its worker died, and then alone."""
-        return 2 if self.error == CRASHED else 1
-
 
 @dataclass(frozen=True, slots=True)
 class Outcome:

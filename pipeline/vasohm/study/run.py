@@ -44,7 +44,6 @@ class RunReport:
     """How a run ended: `state` is what study.json or the part's file holds."""
 
     state: StudyState
-    selected: int
     current: int
     stopped: str  # why images were left, "" where none were
 
@@ -158,7 +157,7 @@ class _Run:
         state = self._finish()
         stopped = self._why_stopped(state)
         self._tell(Event("end", f"exit status {state.exit_status}; {state.counts}"))
-        return RunReport(state, len(self._selected), self._current, stopped)
+        return RunReport(state, self._current, stopped)
 
     def _tasks(self, trails: Path) -> Iterator[Task]:
         for source in self._selected:
@@ -230,7 +229,7 @@ class _Run:
         part = self._request.part
         mine = [s for s in self._study.images if part is None or part.takes(s.image_id)]
         images = tuple(self._ended.get(source.image_id) or self._standing(source) for source in mine)
-        failed = any(image.status == FAILED for image in self._ended.values())
+        failed = any(image.status == FAILED for image in images)  # also of those that --only left out
         return StudyState(
             study=self._study.name,
             configuration=self._study.resolved,
