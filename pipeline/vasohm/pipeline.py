@@ -40,7 +40,7 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     stage("segment")
     mask = segment(prepared, settings.segment, given)
     stage("graph")
-    traced = build_graph(skeletonize(mask, prepared.fov, settings.skeletonize))
+    traced = build_graph(skeletonize(mask, prepared, settings.skeletonize))
     uncrossed, places_met = resolve_crossings(traced, settings.crossings, forced_places(source.edits))
     graph = extend_ends(refine_centrelines(uncrossed, prepared), prepared)
     if labels is not None:

@@ -17,7 +17,7 @@ LENGTH_TOLERANCE = 0.005  # what is promised for bends of 30 px radius or more
 def graph_of(picture, forced=()) -> VesselGraph:
     image = prepared(picture)
     mask = segment(image, SegmentSettings("ridge", (1.0, 10.0), 30.0, {}), None)
-    skeleton = skeletonize(mask, image.fov, SkeletonizeSettings(1.2, 3.0))
+    skeleton = skeletonize(mask, image, SkeletonizeSettings(1.2, 3.0))
     graph, _ = resolve_crossings(build_graph(skeleton), CrossingSettings(0.5), forced)
     return extend_ends(refine_centrelines(graph, image), image)
 

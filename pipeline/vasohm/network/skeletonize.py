@@ -7,7 +7,9 @@ from scipy import ndimage
 from skimage import morphology
 
 from vasohm.arrays import BoolArray, Float32Array, IntArray, freeze
+from vasohm.image.prepare import PreparedImage
 from vasohm.image.segment import VesselMask
+from vasohm.network.attach import attach_ends
 from vasohm.network.tracing import END, JUNCTION, Trace, trace
 
 
@@ -25,7 +27,6 @@ class Skeleton:
 
     pixels: BoolArray
     distance_px: Float32Array
-    fov: BoolArray
 
     def __post_init__(self) -> None:
         freeze(self)
@@ -34,17 +35,25 @@ class Skeleton:
 PRUNING_ROUNDS = 3  # a spur on a spur needs a second look; more never changed a picture in trials
 
 
-def skeletonize(mask: VesselMask, fov: BoolArray, settings: SkeletonizeSettings) -> Skeleton:
+def skeletonize(mask: VesselMask, prepared: PreparedImage, settings: SkeletonizeSettings) -> Skeleton:
     """Thin the mask to centre lines (Zhang & Suen, Commun ACM 1984;27:236) and drop the spurs of its outline.
 
     Parameters
     ----------
     mask : where vessels are.
-    fov : (h, w) bool field of view.
+    prepared : the picture: its signal shows where a vessel goes on in a gap of the mask.
     settings : how long a spur may be.
     """
-    distance = ndimage.distance_transform_edt(np.pad(mask.pixels, 1))[1:-1, 1:-1].astype(np.float32)
-    pixels = morphology.skeletonize(mask.pixels.copy())  # it refuses read-only arrays
+    pixels, distance = _thin(mask.pixels, settings)
+    whole = attach_ends(mask.pixels, trace(pixels), distance, prepared.signal)
+    if not np.array_equal(whole, mask.pixels):
+        pixels, distance = _thin(whole, settings)
+    return Skeleton(pixels, distance)
+
+
+def _thin(mask: BoolArray, settings: SkeletonizeSettings) -> tuple[BoolArray, Float32Array]:
+    distance = ndimage.distance_transform_edt(np.pad(mask, 1))[1:-1, 1:-1].astype(np.float32)
+    pixels = morphology.skeletonize(mask.copy())  # it refuses read-only arrays
     for _ in range(PRUNING_ROUNDS):
         spurs = _spurs(trace(pixels), distance, settings)
         if not len(spurs[0]):
@@ -52,7 +61,7 @@ def skeletonize(mask: VesselMask, fov: BoolArray, settings: SkeletonizeSettings)
         pixels = pixels.copy()
         pixels[spurs] = False
         pixels = morphology.skeletonize(pixels)
-    return Skeleton(pixels, distance, fov)
+    return pixels, distance
 
 
 def _spurs(traced: Trace, distance: Float32Array, settings: SkeletonizeSettings) -> tuple[IntArray, IntArray]:
