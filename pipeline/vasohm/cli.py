@@ -180,11 +180,11 @@ def _study_or_images(
 def check(study_file: Path) -> int:
     """Read all files of a study, measure nothing, and name every problem at once."""
     from vasohm.config.study_file import read_study
-    from vasohm.study.check import problems_of
+    from vasohm.study.check import not_yet_used, problems_of
     from vasohm.study.progress import counted
 
     study = read_study(study_file)
-    for warning in study.warnings:
+    for warning in (*study.warnings, *not_yet_used(study)):
         _say(warning)
     problems = problems_of(study)
     if problems:

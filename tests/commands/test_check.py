@@ -18,6 +18,25 @@ def test_a_sound_study_is_told_in_one_line(make_study: MakeStudy) -> None:
     assert {path.name for path in study.folder.iterdir()} == {"study.toml", "images.csv", "image-0.png", "image-1.png"}
 
 
+def test_what_this_version_does_not_use_is_told_and_is_no_problem(make_study: MakeStudy) -> None:
+    """Nobody should wait for a comparison, or for a correction by eye length, that never comes."""
+    study = make_study(2)
+    rows = {"image-0": "image-0.png,a,23.5,40,40,9", "image-1": "image-1.png,b,,,,"}
+    study.sheet(rows, "image_id,file,group,axial_length_mm,disc_x_px,disc_y_px,disc_radius_px")
+    compare = '[compare]\noutcomes = ["networks.resistance_pa_s_m3"]\nby = "group"\nreference = "a"\n'
+    study.file.write_text(study.file.read_text() + compare)
+    checked = study.run("check", study.file)
+    assert checked.status == 0, checked.complained
+    lines = checked.complained.splitlines()
+    assert len(lines) == 3
+    for line, words in zip(
+        lines, ("[compare]", "axial_length_mm", "disc_x_px, disc_y_px, disc_radius_px"), strict=True
+    ):
+        assert words in line
+    assert "not part of this version" in lines[0]
+    assert checked.told.endswith("2 images, no problem found\n")
+
+
 def test_every_problem_of_the_files_is_told_at_once_with_its_place(make_study: MakeStudy) -> None:
     """A person who mends one problem at a time would need as many runs as there are problems."""
     study = make_study(4)
