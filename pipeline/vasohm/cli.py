@@ -19,6 +19,16 @@ if TYPE_CHECKING:
     from vasohm.study.run import RunReport, RunRequest
 
 
+def _number(_ctx: click.Context, _option: click.Parameter, text: str | None) -> float | None:
+    """Read a number; a decimal comma is told for what it is."""
+    from vasohm.config.csv_table import CellError, Range, parse_number
+
+    try:
+        return None if text is None else parse_number(text, Range())
+    except CellError as wrong:
+        raise click.BadParameter(str(wrong)) from None
+
+
 _FOLDER = click.Path(path_type=Path)
 _STUDY = click.argument("study_file", metavar="STUDY.toml", type=click.Path(path_type=Path))
 
@@ -68,7 +78,8 @@ def commands() -> None:
 @click.option("--out", required=True, type=_FOLDER, help="Folder for the results.")
 @click.option(
     "--pixel-size",
-    type=float,
+    metavar="NUMBER",
+    callback=_number,
     help="Edge of a pixel in micrometres, where images are named and their files do not say it.",
 )
 @click.option("--preset", default="fundus", show_default=True, help="Settings where images are named and no study.")
@@ -168,6 +179,9 @@ def _study_or_images(
     if studies and pixel_size is not None:
         message = f"is for images named on the command line. Write it into {studies[0]} or its sheet."
         problems.append(Problem(file="--pixel-size", value=str(pixel_size), message=message))
+    if not studies:
+        absent = [other for other in others if not other.exists()]
+        problems += [Problem(file=str(other), message="no such file. Check its name and folder.") for other in absent]
     if problems:
         raise RequestError(problems)
     if studies:

@@ -89,3 +89,20 @@ def test_what_is_registered_and_what_columns_mean_is_told(make_study: MakeStudy)
     about = study.run("about", SLURM_CPUS_PER_TASK="5")
     assert "workers: 5 (from SLURM_CPUS_PER_TASK)" in about.told
     assert str(study.folder) not in about.told
+
+
+def test_what_is_wrong_with_the_words_of_the_command_is_told_before_anything_is_done(make_study: MakeStudy) -> None:
+    """Results among the pictures, or a failed run for a slip of the keyboard, would cost the person their time."""
+    study = make_study(1)
+    before = {path.name for path in study.folder.iterdir()}
+    for words, told in (
+        (("measure", study.file, "--out", study.folder), "holds the study's own images.csv. Give --out a folder of"),
+        (("measure", "image-0.png", "--out", ".", "--pixel-size", "2"), "holds the study's own image-0.png."),
+        (("measure", "sub/gone.png", "--out", "out"), "vasohm: sub/gone.png: no such file."),
+        (("measure", "image-0.png", "--out", "out", "--pixel-size", "1,25"), "decimal comma? Write 1.25."),
+        (("check", "image-0.png"), "image-0.png: is an image, where a study file (.toml) is wanted."),
+    ):
+        ended = study.run(*words)
+        assert ended.status == 2, ended
+        assert told in ended.complained
+        assert {path.name for path in study.folder.iterdir()} == before

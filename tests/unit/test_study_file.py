@@ -215,7 +215,13 @@ FAULTY = {
     "no preset": ({"image": {}}, "image.preset: is missing. Give [image] a preset: 'fundus', 'angiogram'"),
     "a channel": ({"image": {"preset": "fundus", "channel": "gren"}}, "Did you mean 'green'?"),
     "radii turned round": ({"segment": {"radius_um": [5, 4]}}, "must be two radii in um, the smaller first"),
-    "one radius": ({"segment": {"radius_um": [5]}}, "segment.radius_um: [5] is wrong"),
+    "decimal commas": (
+        {"segment": {"radius_um": [3, 0, 40, 0]}},
+        "has 4 numbers where 2 are needed. Are those decimal",
+    ),
+    "per cent": ({"blood": {"hematocrit": 45}}, "at most 0.75. It is a fraction, not per cent: write 0.45."),
+    "a single scenario": ({"scenario": {"name": "x"}}, "Write [[scenario]], with two brackets."),
+    "one radius": ({"segment": {"radius_um": [5]}}, "[5] has 1 number where 2 are needed."),
     "doubt below nothing": ({"blood": {"hematocrit_se": -0.01}}, "-0.01 must be at least 0."),
     "packed cells": ({"blood": {"hematocrit": 0.76}}, "0.76 must be at most 0.75."),
     "no viscosity": ({"blood": {"plasma_viscosity_mpa_s": 0}}, "0 must be greater than 0."),
@@ -300,6 +306,15 @@ def test_a_mask_for_every_image_where_masks_are_the_method(tmp_path: Path) -> No
 
 
 BROKEN = {
+    "a word without quotes": (
+        b"[image]\npreset = fundus\n",
+        'study.toml:2: is no valid TOML: Invalid value (at line 2, column 10). Text needs quotes: preset = "fundus".',
+    ),
+    "a decimal comma": (
+        b"[scale]\npixel_size_um = 1,25 # of the camera\n",
+        "study.toml:2: is no valid TOML: Expected newline or end of document after a statement (at line 2, column 18).",
+    ),
+    "an image": (b"\x89PNG\r\n\x1a\n\0\0\0\rIHDR", "study.toml: is an image, where a study file (.toml) is wanted."),
     "a key twice": (b"[image]\npreset = 'fundus'\npreset = 'fundus'\n", "study.toml:3: is no valid TOML: "),
     "an open string": (b"[image]\npreset = 'fundus\n", "study.toml:2: is no valid TOML: "),
     "a date that is none": (b"[image]\nx = 2020-13-01\n", "study.toml:2: is no valid TOML: "),
@@ -321,7 +336,7 @@ BROKEN = {
     ),
     "a sheet that is not there": (
         b"[study]\nsheet = 'no.csv'\n[image]\npreset = 'fundus'\n",
-        "no.csv: no such file. Check its name and folder.",
+        "no.csv: no such file (looked for '",
     ),
 }
 
@@ -336,8 +351,15 @@ def test_broken_files_name_the_line(name: str, tmp_path: Path) -> None:
     assert time.monotonic() - start < 2
 
 
+def test_a_decimal_comma_is_told_for_what_it_is(tmp_path: Path) -> None:
+    found = problems(lambda: study_of(tmp_path, b"[scale]\npixel_size_um = 1,25 # of the camera\n"))
+    assert found[0].endswith("Is that a decimal comma? Write 1.25.")
+
+
 def test_files_that_are_none(tmp_path: Path) -> None:
-    assert problems(lambda: read_study(tmp_path / "no.toml")) == ["no.toml: no such file."]
+    assert problems(lambda: read_study(tmp_path / "no.toml")) == [
+        f"no.toml: no such file (looked for '{tmp_path / 'no.toml'}')."
+    ]
     assert problems(lambda: read_study(tmp_path)) == [f"{tmp_path.name}: is not a file."]
     (tmp_path / "zero.toml").symlink_to("/dev/zero")
     assert problems(lambda: read_study(tmp_path / "zero.toml")) == ["zero.toml: is not a file."]

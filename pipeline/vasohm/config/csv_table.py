@@ -43,6 +43,7 @@ class Range:
     least: float = -math.inf
     most: float = math.inf
     is_open: bool = False
+    note: str = ""  # what to say beside it to one who is outside
 
     def __contains__(self, value: float) -> bool:
         return (value > self.least if self.is_open else value >= self.least) and value <= self.most
@@ -106,7 +107,7 @@ def parse_number(text: str, allowed: Range) -> float:
         msg = f"{shown_cell(text)} is too large for a number."
         raise CellError(msg)
     if value not in allowed:
-        msg = f"{shown_cell(text)} must be {allowed}."
+        msg = f"{shown_cell(text)} must be {allowed}.{f' {allowed.note}' if allowed.note else ''}"
         raise CellError(msg)
     return value
 

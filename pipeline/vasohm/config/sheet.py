@@ -21,7 +21,7 @@ T = TypeVar("T")
 
 POSITIVE = Range(least=0, is_open=True)
 NOT_NEGATIVE = Range(least=0)
-HEMATOCRIT = Range(least=0, most=HIGHEST_HEMATOCRIT)
+HEMATOCRIT = Range(least=0, most=HIGHEST_HEMATOCRIT, note="It is a fraction, not per cent.")
 NUMBERS: Mapping[str, Range] = {
     "pixel_size_um": Range(LEAST_UM, MOST_UM),
     "pixel_size_se_um": NOT_NEGATIVE,
@@ -330,7 +330,7 @@ def _like_numbers(table: CsvTable, file: str) -> list[str]:
 def _bytes(path: Path) -> bytes:
     try:
         if not path.is_file():
-            reason = "is not a file" if path.exists() else "no such file"
+            reason = "is not a file" if path.exists() else f"no such file (looked for {str(path)!r})"
             raise RequestError([Problem(shown(path), f"{reason}. Check its name and folder.")])
         size = path.stat().st_size
         if size > MOST_BYTES:

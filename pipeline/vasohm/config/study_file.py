@@ -19,7 +19,7 @@ from vasohm.flow.scenarios import Scenario
 from vasohm.flow.terminals import NetworkSettings
 from vasohm.image.calibrate import ScaleSettings, TypedScale
 from vasohm.image.prepare import PrepareSettings
-from vasohm.image.read import ReadSettings, shown
+from vasohm.image.read import MAGIC, ReadSettings, shown
 from vasohm.image.segment import MASK_METHOD, SegmentSettings
 from vasohm.network.crossings import CrossingSettings
 from vasohm.network.lumenfit import RadiusSettings
@@ -29,6 +29,9 @@ from vasohm.results.schema import COLUMNS
 MOST_BYTES = 1_000_000
 OUTCOME_TABLES = ("image", "networks", "segments")  # those that give one value an image and class
 AT_LINE = re.compile(r"\(at line (\d+), column \d+\)")
+BARE_COMMA = re.compile(r"\s*[\w.-]+\s*=\s*([+-]?\d+),(\d+)\s*(?:#.*)?$")
+BARE_WORD = re.compile(r"\s*([\w.-]+)\s*=\s*([^\W\d][\w ./-]*?)\s*(?:#.*)?$")
+HEAD_BYTES = 64
 AD_HOC = Path("command line")
 MAPPING = Path("study mapping")
 
@@ -150,11 +153,17 @@ def read_toml(path: Path) -> Mapping[str, Any]:
         status = path.stat()
         if not stat.S_ISREG(status.st_mode):
             raise failed("is not a file.")
+        with path.open("rb") as stream:
+            head = stream.read(HEAD_BYTES)
+        if b"\0" in head and head.startswith(tuple(MAGIC)):
+            raise failed("is an image, where a study file (.toml) is wanted. Only measure takes images by name.")
         if status.st_size > MOST_BYTES:
             raise failed(f"has {status.st_size / 1e6:.3g} MB: it is no study file, which has at most 1 MB.")
         data = path.read_bytes()
     except FileNotFoundError as error:
-        raise failed("no such file.") from error
+        raise failed(
+            f"no such file (looked for {str(path)!r})." if path.name != str(path) else "no such file."
+        ) from error
     except OSError as error:
         raise failed(f"cannot be read: {error.strerror}.") from error
     if data.startswith((b"\xff\xfe", b"\xfe\xff")):
@@ -168,7 +177,20 @@ def read_toml(path: Path) -> Mapping[str, Any]:
         raise failed("its brackets are nested too deeply.") from error
     except ValueError as error:
         line = AT_LINE.search(str(error))
-        raise failed(f"is no valid TOML: {error}", int(line[1]) if line else data.rstrip().count(b"\n") + 1) from error
+        row = int(line[1]) if line else data.rstrip().count(b"\n") + 1
+        raise failed(f"is no valid TOML: {error}{_toml_hint(path, data, row)}", row) from error
+
+
+def _toml_hint(path: Path, data: bytes, row: int) -> str:
+    """Say what the usual slips are, where one of them is seen in the line."""
+    if path.suffix.lower() in {".csv", ".tsv"}:
+        return ". Is that the image sheet? Give the study file that names it."
+    said = data.decode("utf-8-sig").splitlines()[row - 1 : row]
+    if said and (comma := BARE_COMMA.match(said[0])):
+        return f". Is that a decimal comma? Write {comma[1]}.{comma[2]}."
+    if said and (word := BARE_WORD.match(said[0])):
+        return f'. Text needs quotes: {word[1]} = "{word[2].strip()}".'
+    return ""
 
 
 def _sheet_name(said: Mapping[str, Any]) -> str:

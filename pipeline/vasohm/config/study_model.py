@@ -33,6 +33,8 @@ BOUND_WORDS = {
     "greater_than_equal": ("ge", "at least"),
     "less_than_equal": ("le", "at most"),
 }
+LENGTH_KINDS = ("too_short", "too_long", "string_too_short", "string_too_long")
+MOST_PERCENT = 100
 LITERAL = re.compile("'([^']+)'")
 
 
@@ -252,15 +254,42 @@ def _rule(detail: ErrorDetails) -> str:
     """Say what a value must be."""
     kind, context = detail["type"], detail.get("ctx", {})
     if kind in TYPE_WORDS:
-        return f"must be {TYPE_WORDS[kind]}."
+        hint = f" Write [[{detail['loc'][-1]}]], with two brackets." if _is_bare_table(detail) else ""
+        return f"must be {TYPE_WORDS[kind]}.{hint}"
     if kind in BOUND_WORDS:
         key, words = BOUND_WORDS[kind]
-        return f"must be {words} {context[key]:g}."
+        return f"must be {words} {context[key]:g}.{_fraction_hint(detail)}"
+    if kind in LENGTH_KINDS:
+        return _length_rule(detail["input"], context)
     if kind == "literal_error":
         known = tuple(LITERAL.findall(str(context["expected"])))
         like = nearest(str(detail["input"]), known)
         return f"must be one of {', '.join(map(repr, known))}.{f' Did you mean {like!r}?' if like else ''}"
     return detail["msg"] if kind == "vasohm" else f"is wrong: {detail['msg']}."
+
+
+def _length_rule(value: object, context: Mapping[str, Any]) -> str:
+    least = context.get("min_length")
+    has = len(value) if isinstance(value, str | list) else 0
+    needed = int(context["min_length"] if least is not None else context["max_length"])
+    if not isinstance(value, list):
+        return f"has {has} characters where {'at least' if least is not None else 'at most'} {needed} are needed."
+    numbers = all(isinstance(item, int | float) for item in value)
+    word = ("number" if numbers and value else "entry") if has == 1 else ("numbers" if numbers and value else "entries")
+    is_split = numbers and has == 2 * needed and all(isinstance(item, int) for item in value[1::2])
+    hint = " Are those decimal commas? Write 3.5 and not 3,5." if is_split else ""
+    return f"has {has} {word} where {needed} {'is' if needed == 1 else 'are'} needed.{hint}"
+
+
+def _is_bare_table(detail: ErrorDetails) -> bool:
+    """Tell whether a table stands where an array of tables is meant."""
+    return detail["type"] == "list_type" and isinstance(detail["input"], Mapping) and len(detail["loc"]) == 1
+
+
+def _fraction_hint(detail: ErrorDetails) -> str:
+    value = detail["input"]
+    is_percent = str(detail["loc"][-1]).startswith("hematocrit") and isinstance(value, int | float) and value > 1
+    return f" It is a fraction, not per cent: write {value / 100:g}." if is_percent and value <= MOST_PERCENT else ""
 
 
 def _unknown(place: tuple[int | str, ...]) -> str:

@@ -67,7 +67,8 @@ def calibrate(raw: RawImage, typed: TypedScale, settings: ScaleSettings) -> Scal
     else:
         ignored = "".join(f"; {note}" for note in raw.notes if "ignored" in note)
         msg = (
-            f"no pixel size found (looked in {SOURCES}{ignored}). Give pixel_size_um in the image sheet or in [scale]."
+            f"no pixel size found (looked in {SOURCES}{ignored}). Give pixel_size_um in the image sheet or in [scale], "
+            "or --pixel-size where images are named on the command line."
         )
         raise ScaleError(msg)
     _check_range(pixel_size_um, source)

@@ -51,6 +51,7 @@ MASK_LIMIT = 4  # a mask of more than so many times the image's pixels is refuse
 LABEL_NEIGHBOURS = 0.3  # in label images fewer neighbouring pixels than this share differ, in photographs more
 MOST_LABEL = 3
 MESSAGE_CHARS = 200
+COPY_AGAIN = " It is cut short: copy it again from where it came."
 CUT_WORDS = re.compile("truncated|incomplete|ended before|failed to read|premature|unexpected end", re.IGNORECASE)
 
 
@@ -217,15 +218,16 @@ def _decode(path: Path, data: bytes, limit_px: float, *, expand_palettes: bool) 
                 return decode_tiff(data, limit_px, expand_palettes=expand_palettes)
             return decode_flat(data, kind, limit_px, expand_palettes=expand_palettes)
     except VasohmError as error:
-        msg = f"{name}: {error}"
+        msg = f"{name}: {error}{COPY_AGAIN if isinstance(error, TruncatedError) else ''}"
         raise type(error)(msg) from error
     except Exception as error:
         text = re.sub(r"\s+", " ", str(error)).strip()[:MESSAGE_CHARS] or type(error).__name__
         if "imagecodecs" in text:
+            text = re.sub(r"<\w+\.(\w+): \d+>", r"\1", text)
             msg = f'{name}: its compression needs more decoders ({text}): pip install "vasohm[codecs]".'
             raise UnsupportedPixelsError(msg) from error
         is_cut = CUT_WORDS.search(text)
-        msg = f"{name}: the {kind} cannot be decoded: {text}."
+        msg = f"{name}: the {kind} cannot be decoded: {text}.{COPY_AGAIN if is_cut else ''}"
         raise (TruncatedError if is_cut else ReadError)(msg) from error
 
 

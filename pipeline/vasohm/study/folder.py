@@ -2,7 +2,7 @@
 
 import os
 import secrets
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from pathlib import Path
 
 from vasohm.errors import Problem, RequestError
@@ -60,6 +60,22 @@ def refuse_other_study(out: Path, study: str) -> None:
                 "take this one over (images of the other study are removed)."
             )
             raise RequestError([Problem(file=str(out), message=message)])
+
+
+def refuse_own_inputs(out: Path, study: str, inputs: Iterable[Path]) -> None:
+    """Refuse a folder that holds what is to be measured, unless results of this study lie in it already.
+
+    Raises
+    ------
+    RequestError
+        Naming the first input that lies there.
+    """
+    place = out.resolve()
+    lies_there = next((path for path in inputs if path.parent.resolve() in (place, place / "images")), None)
+    if lies_there is None or study in _owners(out):
+        return
+    message = f"holds the study's own {lies_there.name}. Give --out a folder of its own, as in {out / 'results'}."
+    raise RequestError([Problem(file=str(out), message=message)])
 
 
 def claim(out: Path, study: str, image_ids: frozenset[str]) -> None:

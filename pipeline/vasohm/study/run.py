@@ -14,7 +14,15 @@ from vasohm.results.write import read_record, record_is_whole, remove_partials
 from vasohm.study.current import content_key, reason_to_run, versions_used
 from vasohm.study.ending import EXIT_OK, EXIT_SOME_FAILED
 from vasohm.study.events import Event, Kind, Listener
-from vasohm.study.folder import claim, image_folder, probe, refuse_other_study, remove_image, run_folder
+from vasohm.study.folder import (
+    claim,
+    image_folder,
+    probe,
+    refuse_other_study,
+    refuse_own_inputs,
+    remove_image,
+    run_folder,
+)
 from vasohm.study.gather import methods_used, write_root, write_state
 from vasohm.study.interrupt import Interrupts, StopNowError
 from vasohm.study.journal import Journal
@@ -65,6 +73,7 @@ def decide(study: Study, request: RunRequest) -> Iterator[Decision]:
         When ``--only`` names an image that the study does not have, or the folder holds another study.
     """
     selected = _select(study, request)
+    refuse_own_inputs(request.out, study.name, _inputs(study))
     before = {}
     if request.out.is_dir():
         if not request.force:
@@ -103,6 +112,7 @@ def run_study(study: Study, request: RunRequest, listeners: Sequence[Listener]) 
         When the files at the root of the results folder cannot be written.
     """
     _select(study, request)  # what is wrong with it is told before the folder is touched
+    refuse_own_inputs(request.out, study.name, _inputs(study))
     probe(request.out)
     if not request.force:
         refuse_other_study(request.out, study.name)
@@ -262,6 +272,14 @@ class _Run:
     def _tell(self, event: Event) -> None:
         for listener in self._listeners:
             listener(event)
+
+
+def _inputs(study: Study) -> Iterator[Path]:
+    """Sheet and pictures of a study."""
+    sheet = study.resolved["study.sheet"]["value"]
+    if sheet:
+        yield study.path.parent / sheet
+    yield from (source.file for source in study.images)
 
 
 def _select(study: Study, request: RunRequest) -> list[ImageSource]:
