@@ -5,6 +5,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
+from vasohm.network.groups import median_by
 from vasohm.network.jointfit import LN_C, LN_R, Normal, Observed, Priors, fit_joint, total_cost
 from vasohm.network.profiles import Optics, ProfileTable, ln_area
 from vasohm.network.shared import (
@@ -26,8 +27,7 @@ NOTHING_GAINED = 0.02  # of log likelihood by a short step
 SETTLED = 3e-3  # of ln blur
 SE_FACTOR = 1.3  # the curvature of chi^2 states 10 to 30 % too little (measured on phantoms)
 DECISIVE = 6.0  # difference of log likelihood between slab and cylinder from which the image has told its family
-STRIP_BESIDE_PX = 6.0  # strips reach about this much further than the radius
-ODD_STRIP = 2.5  # cost over the median strip's; 20 samples of pure noise stay below 2 in 99.9 of 100 strips
+ODD_STRIP = 4.0  # times the cost of the segment's median strip: noise alone never gives so much
 ODD_SEGMENT = (5.0, 0.35)  # out of focus: ln blur off by so many standard errors, and by so much
 
 
@@ -108,11 +108,11 @@ def estimate_optics(
             fits[family] = _refine(case, fit.theta, fit.optics, table_like(table, fit.optics), ROUNDS)
     best, told = next(iter(fits.values())), len(families) == 1 or len(fits) == 1
     if len(fits) > 1:
-        gain = advantage(fits["cylinder"].point_cost, fits["slab"].point_cost, np.exp(fits["slab"].theta[:, LN_R]))
+        gain = advantage(fits["cylinder"].point_cost, fits["slab"].point_cost, observed.segment)
         best, told = fits["cylinder" if gain > 0 else "slab"], told or abs(gain) > DECISIVE
     if "absorber" in families:
         absorbing = _absorber(case, best)
-        gain = advantage(absorbing.point_cost, best.point_cost, np.exp(best.theta[:, LN_R]))
+        gain = advantage(absorbing.point_cost, best.point_cost, observed.segment)
         free = request.absorbing and best.optics.family == "cylinder"
         if len(families) == 1 or gain > (0.0 if free else np.log(observed.n_points)):
             told |= gain > DECISIVE
@@ -128,18 +128,19 @@ def estimate_optics(
     return ImageOptics(best.optics, covariance, bool(told), best.point_cost, best.theta, best.marginal.answer, keep)
 
 
-def advantage(of: FloatArray, over: FloatArray, radius: FloatArray) -> float:
+def advantage(of: FloatArray, over: FloatArray, segment: IntArray) -> float:
     """Difference of log likelihood by which one model explains the strips better than another.
 
-    Strips that neither explains (a vessel beside that was not found, a fold, dust) do not vote: with one of them a
-    wrong profile can gain more than with all the others together. Costs (n_points,) grow with the length of the
-    strips, that is with `radius` (n_points,) in pixels.
+    Strips that neither explains, though it explains most of their segment (a vessel beside that was not found, a fold,
+    dust), do not vote: with one of them a wrong profile can gain more than with all the others together. What is wrong
+    along whole segments, as a light reflex is, does count. All arguments are (n_points,).
     """
-    least = np.minimum(of, over) / (radius + STRIP_BESIDE_PX)
+    least = np.minimum(of, over)
     seen = least > 0
     if not seen.any():
         return 0.0
-    votes = seen & (least <= ODD_STRIP * float(np.median(least[seen])))
+    usual = median_by(segment[seen], least[seen], int(segment.max()) + 1)
+    votes = seen & (least <= ODD_STRIP * np.nan_to_num(usual)[segment])
     return float(np.sum(over[votes] - of[votes]))
 
 

@@ -142,11 +142,13 @@ def _with_reflex(
     """Estimate the optics with light reflexes on the axes, if that explains the wide vessels clearly better.
 
     Wide vessels tell the height of the reflex by themselves; then narrower ones are given what these have in common.
+    Light is reflected by round surfaces: a slab with a reflex is not asked for unless the study says slab.
     """
     wide = wide_segments(observed, told.theta, told.optics)
     if not wide.any():
         return told, None
-    request = replace(request, start_px=(told.optics.s_px,))
+    round_ones = tuple(family for family in request.families if family != "slab") or request.families
+    request = replace(request, start_px=(told.optics.s_px,), families=round_ones)
     none = np.zeros(observed.n_segments)
     expected = _contrast_unknown(observed, told.theta, none, np.where(wide, REFLEX_SPREAD, NO_REFLEX))
     theta = np.column_stack([told.theta, np.where(wide, FIRST_REFLEX, 0.0)[observed.segment]])
@@ -155,7 +157,7 @@ def _with_reflex(
     common = float(np.median(high))
     if (
         common < LOWEST_REFLEX
-        or advantage(again.point_cost, told.point_cost, np.exp(told.theta[:, LN_R]))
+        or advantage(again.point_cost, told.point_cost, observed.segment)
         < REFLEX_GAIN[0] + REFLEX_GAIN[1] * wide[observed.segment].sum()
     ):
         return told, None
