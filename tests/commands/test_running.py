@@ -72,9 +72,7 @@ def run_pool(
 
 @pytest.mark.parametrize("workers", [1, 2])
 def test_a_killed_worker_costs_its_own_image_and_no_other(tmp_path: Path, workers: int) -> None:
-    """A neighbour of a dying worker dies with it and is tried again, so that one that dies once is sure of a second
-    try only where it has no neighbour.
-    """
+    """Wrong if one death stopped the run. A neighbour dies too, so one that dies once must have none to be sure."""
     fate = {"1-fine": "measured", "2-die": "failed", "3-fine": "measured", "5-quit": "failed", "6-fine": "measured"}
     if workers == 1:
         fate["4-die-once"] = "measured"
@@ -82,8 +80,9 @@ def test_a_killed_worker_costs_its_own_image_and_no_other(tmp_path: Path, worker
     assert {name: one.status for name, one in outcomes.items()} == fate
     failure = outcomes["2-die"].failure
     assert (failure.error, failure.stage) == ("crashed", "segment")
-    assert "SIGKILL" in failure.message
-    assert "exit status 0" in outcomes["5-quit"].failure.message
+    if workers == 1:  # else both may have gone down with a neighbour, whose signal was the first to be seen
+        assert "SIGKILL" in failure.message
+        assert "exit status 0" in outcomes["5-quit"].failure.message
     assert set(fate) - {"1-fine", "3-fine", "6-fine"} <= set(retried)  # with 2 workers a neighbour is a suspect too
 
 

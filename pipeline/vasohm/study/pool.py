@@ -26,6 +26,8 @@ from vasohm.study.outcome import CRASHED, FAILED, Failure, Outcome, Task
 
 GRACE_S = 30.0  # that running images have after the first request to stop
 _POLL_S = 0.1
+_REAPING_S = 2.0  # for a dead worker to be told of
+_REAPING_S = 2.0
 _ORPHAN_STATUS = 70  # EX_SOFTWARE of sysexits.h; seen by nobody, since the parent is gone
 _DEATHS = 2  # in company, then alone
 
@@ -179,8 +181,7 @@ class SupervisedPool:
             return "start", f"a worker did not start, {_end_in_words(ended[0])}" if ended else "a worker did not start"
         for child in self._children:
             if str(child.pid) == pid:
-                child.join(_POLL_S)
-                return stages[-1], _end_in_words(child.exitcode)
+                return stages[-1], _end_in_words(_exit_code(child))
         return stages[-1], "it ended without a word"
 
     def _end(self, *, by_force: bool) -> None:
@@ -209,6 +210,15 @@ def _failed(task: Task, failure: Failure) -> Outcome:
         warnings=(),
         traceback="",
     )
+
+
+def _exit_code(child: BaseProcess) -> int | None:
+    """Wait for how a worker ended: the pool's own thread may be reaping it at this moment and tells a little later."""
+    patience = time.monotonic() + _REAPING_S
+    while child.exitcode is None and time.monotonic() < patience:
+        child.join(_POLL_S)
+        time.sleep(_POLL_S / 10)
+    return child.exitcode
 
 
 def _end_in_words(exit_code: int | None) -> str:
