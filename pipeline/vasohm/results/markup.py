@@ -14,7 +14,7 @@ FACTS = {code(Flag.TERMINALS_JOINED)}  # flags that tell how a thing was done an
 STYLE = """
 :root { color-scheme: light; }
 body { font: 16px/1.5 system-ui, sans-serif; color: #1a1a1a; background: #fff; margin: 0 auto; padding: 1rem;
-  max-width: 76rem; }
+  max-width: 92rem; }
 h1 { font-size: 1.6rem; line-height: 1.2; overflow-wrap: anywhere; }
 h2 { font-size: 1.2rem; margin-top: 2rem; border-bottom: 1px solid #767676; }
 a { color: #0b4a8f; }
@@ -26,7 +26,7 @@ td { overflow-wrap: break-word; max-width: 24rem; }
 td.number, th.number { text-align: right; font-variant-numeric: tabular-nums; }
 td.number { white-space: nowrap; }
 img { max-width: 100%; height: auto; }
-img.small { width: 16rem; max-width: 40vw; }
+img.small { width: 10rem; max-width: 40vw; }
 dt { font-weight: 600; }
 dd { margin: 0 0 .4rem 0; }
 .alert { border-left: .4rem solid #a30000; background: #fdf1f0; padding: .2rem 1rem; }
