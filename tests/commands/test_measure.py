@@ -341,6 +341,21 @@ def test_workers_and_parts_give_the_same_bytes(make_study: MakeStudy, tmp_path: 
     assert "parts of 2 and of 3 are mixed" in mixed.complained
 
 
+def test_the_order_of_the_sheet_changes_no_image(make_study: MakeStudy, tmp_path: Path) -> None:
+    """Wrong if a result hung on which image was measured before it; the joined tables follow the sheet."""
+    study = make_study(3, method="ridge")
+    assert study.measure(tmp_path / "one").status == 0
+    study.sheet({name: f"{name}.png" for name in reversed(study.ids)})
+    assert study.measure(tmp_path / "other").status == 0
+
+    def of_images(out: Path) -> dict[str, str]:
+        return {name: held for name, held in contents(out).items() if name.startswith("images/")}
+
+    assert of_images(tmp_path / "other") == of_images(tmp_path / "one")
+    first = [(tmp_path / out / "images_all.csv").read_text().splitlines()[1:] for out in ("one", "other")]
+    assert first[0] == first[1][::-1]
+
+
 def test_parts_of_an_edited_study_can_all_be_run_again(make_study: MakeStudy, tmp_path: Path) -> None:
     """A part that refused because the other is older would lock the folder for both."""
     study, out = make_study(1), tmp_path / "out"
