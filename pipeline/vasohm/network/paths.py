@@ -6,7 +6,6 @@ from scipy import ndimage
 from vasohm.arrays import FloatArray, IntArray
 
 TWICING_SIGMA_PX = 2.5  # length bias below 0.2 % for bends wider than 30 px radius
-PAD = 10  # 4 sigma: what the kernel reaches over a path's end
 
 
 def owner(offsets: IntArray) -> IntArray:
