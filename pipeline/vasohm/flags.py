@@ -31,6 +31,10 @@ class Flag(IntFlag):
     NO_TERMINALS = 1 << 18
     MESH = 1 << 19
     TERMINALS_JOINED = 1 << 20
+    TERMINALS_ESTIMATED = 1 << 21
+    MONTE_CARLO = 1 << 22
+    FEWER_DRAWS = 1 << 23
+    OUT_OF_REACH = 1 << 24
     # images
     TERMINAL_MISSED = 1 << 32
     EDIT_MISSED = 1 << 33
@@ -65,6 +69,11 @@ MEANING: dict[Flag, str] = {
     Flag.NO_TERMINALS: "inlets and outlets are not known: no resistance",
     Flag.MESH: "the network has loops: inlets and outlets cannot be told from its shape",
     Flag.TERMINALS_JOINED: "several inlets or outlets were joined to one pressure",
+    Flag.TERMINALS_ESTIMATED: "where blood enters and leaves, and how much, was estimated from targets, not known",
+    Flag.MONTE_CARLO: "the interval of the resistance comes from random draws",
+    Flag.FEWER_DRAWS: "the network is too large for the draws asked for: fewer were made, or none and the interval is that of "
+    "first order",
+    Flag.OUT_OF_REACH: "no radius factor of the chosen vessels gives the wanted ratio of resistances",
     Flag.TERMINAL_MISSED: "a terminal of the terminals file is not near any vessel end and was left out",
     Flag.EDIT_MISSED: "an edit of the edits file is not near any vessel and was left out",
     Flag.ORIENTATION_TAG: "the file carries an orientation tag; coordinates are those of the stored picture",
