@@ -14,7 +14,8 @@ from hypothesis import strategies as st
 
 from vasohm.errors import DomainError, NetworkError
 from vasohm.flags import Flag
-from vasohm.flow.hydraulics import SolvedNetwork, circulate, solve_flow, solve_network
+from vasohm.flow.circulation import circulate
+from vasohm.flow.hydraulics import SolvedNetwork, solve_flow, solve_network
 from vasohm.flow.kirchhoff import solve_flows
 from vasohm.flow.poiseuille import segment_resistance
 from vasohm.flow.rheology import apparent_viscosity

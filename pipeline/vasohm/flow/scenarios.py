@@ -8,7 +8,8 @@ import numpy as np
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.errors import DomainError
 from vasohm.flags import Flag
-from vasohm.flow.hydraulics import Circulation, at_medians, circulate, entering_hematocrit
+from vasohm.flow.circulation import Circulation, circulate, entering_hematocrit
+from vasohm.flow.hydraulics import at_medians
 from vasohm.flow.poiseuille import SegmentResistances, measure_resistance
 from vasohm.flow.rheology import BloodSettings, make_blood
 from vasohm.flow.terminals import Terminals
