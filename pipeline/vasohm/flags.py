@@ -71,8 +71,7 @@ MEANING: dict[Flag, str] = {
     Flag.TERMINALS_JOINED: "several inlets or outlets were joined to one pressure",
     Flag.TERMINALS_ESTIMATED: "where blood enters and leaves, and how much, was estimated from targets, not known",
     Flag.MONTE_CARLO: "the interval of the resistance comes from random draws",
-    Flag.FEWER_DRAWS: "the network is too large for the draws asked for: fewer were made, or none and the interval is that of "
-    "first order",
+    Flag.FEWER_DRAWS: "the network is too large for all the draws asked for: fewer were made, or none",
     Flag.OUT_OF_REACH: "no radius factor of the chosen vessels gives the wanted ratio of resistances",
     Flag.TERMINAL_MISSED: "a terminal of the terminals file is not near any vessel end and was left out",
     Flag.EDIT_MISSED: "an edit of the edits file is not near any vessel and was left out",

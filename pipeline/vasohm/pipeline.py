@@ -5,6 +5,7 @@ from dataclasses import replace
 
 from vasohm.config.settings import Settings
 from vasohm.config.sheet import ImageSource
+from vasohm.flow.estimated_ends import estimate_ends
 from vasohm.flow.hydraulics import solve_flow
 from vasohm.flow.scenarios import run_scenarios
 from vasohm.flow.terminals import place_terminals
@@ -53,7 +54,8 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     blood = settings.blood
     if source.hematocrit is not None:
         blood = replace(blood, hematocrit=source.hematocrit)
-    terminals = place_terminals(measured, source.terminals, settings.network)
+    placed = place_terminals(measured, source.terminals, settings.network)
+    terminals = estimate_ends(measured, placed, blood, settings.targets)
     flow = solve_flow(measured, terminals, blood)
     scenarios = run_scenarios(measured, terminals, blood, settings.scenarios)
     stage("tables")

@@ -233,6 +233,7 @@ def make_findings(n_segments: int = 3, scenario: str = "Arterioles dilate") -> F
         network=whole(0, 0)[:n],
         scenario=(scenario, "All dilate")[:n],
         n_segments_changed=whole(2, 3)[:n],
+        radius_factor=real(1.1, 1.2)[:n],
         resistance_before_pa_s_m3=real(1e14, 1e14)[:n],
         resistance_after_pa_s_m3=real(7e13, 5e13)[:n],
         ratio=real(0.7, 0.5)[:n],

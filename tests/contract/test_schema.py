@@ -32,7 +32,7 @@ PROMISED = {
     "networks": """image_id, network_id, vessel_class, class_probability, n_segments, n_branchings, n_inlets, n_outlets,
         terminals, length_um, area_um2, volume_um3, loops, resistance_pa_s_m3, resistance_lo_pa_s_m3,
         resistance_hi_pa_s_m3, ln_resistance_random_se, ln_resistance_shared_se, flow_nl_min, flags""",
-    "scenarios": """image_id, network_id, scenario, n_segments_changed, resistance_before_pa_s_m3,
+    "scenarios": """image_id, network_id, scenario, n_segments_changed, radius_factor, resistance_before_pa_s_m3,
         resistance_after_pa_s_m3, ratio, ratio_lo, ratio_hi, flags""",
     "branchings": """image_id, node_id, network_id, parent_segment, child_1_segment, child_2_segment, radius_parent_um,
         radius_child_1_um, radius_child_2_um, angle_1_deg, angle_2_deg, angle_total_deg, area_ratio, asymmetry,

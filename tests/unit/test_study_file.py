@@ -12,10 +12,12 @@ from typing import Any
 import pytest
 
 from vasohm.config.presets import PRESETS
-from vasohm.config.settings import CompareSettings
+from vasohm.config.settings import CompareSettings, OutputSettings
 from vasohm.config.study_file import Study, ad_hoc_study, read_study, study_from_mapping
 from vasohm.config.study_model import StudyModel
 from vasohm.errors import RequestError
+from vasohm.flow.estimated_ends import EndTargets
+from vasohm.flow.monte_carlo import IntervalSettings
 from vasohm.flow.rheology import law_names
 from vasohm.flow.scenarios import Scenario
 from vasohm.image.segment import segmenter_names
@@ -76,8 +78,15 @@ CONTRACT = """
     hematocrit_split       = false
     parameters = { core = 1.0 }
     [network]
-    terminals = "none"
+    terminals = "estimate"
     drive_mmhg = 2.0
+    target_wall_shear_pa = { arteriole = 5, capillary = 3.0, venule = 1.6 }
+    target_wall_shear_sd_pa = 2.0
+    target_pressure_mmhg = 31
+    target_pressure_sd_mmhg = 8.0
+    intervals = "monte-carlo"
+    draws = 400
+    seed = 7
     [[scenario]]
     name = "small arterioles dilate"
     where = { radius_um_below = 10, radius_um_above = 2, vessel_class = "arteriole" }
@@ -85,6 +94,9 @@ CONTRACT = """
     [[scenario]]
     name = "all narrow"
     radius_factor = 0.9
+    [[scenario]]
+    name = "how much wider"
+    wanted_ratio = 0.8
     [compare]
     outcomes   = ["networks.resistance_pa_s_m3", "segments.radius_hydraulic_um", "length_density_per_mm"]
     by         = "group"
@@ -94,6 +106,7 @@ CONTRACT = """
     radius_um  = [[2, 10], [10, 40]]
     [output]
     overlay = false
+    colour = "share"
 """
 
 
@@ -104,7 +117,7 @@ def test_every_key_reaches_its_setting(tmp_path: Path) -> None:
     assert (study.name, study.path) == ("demo", tmp_path / "study.toml")
     assert [source.image_id for source in study.images] == ["a", "b"]
     assert (study.sheet, study.lines) == ("images.csv", {"a": 2, "b": 3})
-    assert (chosen.preset, chosen.output.overlay) == ("fundus", False)
+    assert (chosen.preset, chosen.output) == ("fundus", OutputSettings(overlay=False, colour="share"))
     assert (chosen.read.plane, chosen.read.max_megapixels, chosen.read.channel) == ("max", 100.0, "green")
     assert (chosen.prepare.channel, chosen.prepare.polarity, chosen.prepare.gamma) == ("green", "dark", 2.2)
     assert chosen.prepare.radius_um == chosen.segment.radius_um == (4.0, 80.0)
@@ -120,10 +133,14 @@ def test_every_key_reaches_its_setting(tmp_path: Path) -> None:
     assert (chosen.radius.plasma_layer_um, chosen.radius.plasma_layer_se_um) == (1.1, 0.4)
     assert (chosen.blood.law, chosen.blood.hematocrit, chosen.blood.hematocrit_se) == ("pries-in-vitro", 0.4, 0.02)
     assert (chosen.blood.plasma_viscosity_mpa_s, chosen.blood.viscosity_mpa_s) == (1.3, 4.0)
-    assert (chosen.network.terminals, chosen.network.drive_mmhg) == ("none", 2.0)
+    assert (chosen.network.terminals, chosen.network.drive_mmhg) == ("estimate", 2.0)
+    mean = (5 + 3 + 1.6) / 3  # of vessels without a class
+    assert chosen.targets == EndTargets((mean, 5.0, 1.6, 3.0), 2.0, (31.0, 31.0, 31.0, 31.0), 8.0)
+    assert chosen.intervals == IntervalSettings("monte-carlo", 400, 7)
     assert chosen.scenarios == (
         Scenario("small arterioles dilate", 1.1, 10.0, 2.0, "arteriole"),
         Scenario("all narrow", 0.9, None, None, None),
+        Scenario("how much wider", None, None, None, None, 0.8),
     )
     assert study.compare == CompareSettings(
         outcomes=("networks.resistance_pa_s_m3", "segments.radius_hydraulic_um", "image.length_density_per_mm"),
@@ -237,6 +254,30 @@ FAULTY = {
     "an empty range": (
         {"scenario": [{"name": "x", "radius_factor": 1, "where": {"radius_um_below": 3, "radius_um_above": 3}}]},
         "no radius is above 3 and below 3 um.",
+    ),
+    "a scenario without a question": (
+        {"scenario": [{"name": "x"}]},
+        "scenario[1]: give either radius_factor, or wanted_ratio",
+    ),
+    "a scenario with two questions": (
+        {"scenario": [{"name": "x", "radius_factor": 1.1, "wanted_ratio": 0.8}]},
+        "scenario[1]: give either radius_factor, or wanted_ratio",
+    ),
+    "a wanted ratio that is there": (
+        {"scenario": [{"name": "x", "wanted_ratio": 1}]},
+        "scenario[1].wanted_ratio: 1 must differ from 1",
+    ),
+    "estimates without a target": (
+        {"network": {"terminals": "estimate", "target_pressure_mmhg": 30}},
+        'network.target_wall_shear_pa: is missing: terminals = "estimate" draws',
+    ),
+    "a target for no class": (
+        {"network": {"target_pressure_mmhg": {"arteriol": 30}}},
+        "Did you mean 'arteriole'?",
+    ),
+    "a target that is no pressure": (
+        {"network": {"target_pressure_mmhg": {"arteriole": -30}}},
+        "must be a number greater than 0, or a table of them with keys among arteriole, venule, capillary.",
     ),
     "scenarios of one name": (
         {"scenario": [{"name": "x", "radius_factor": 1.1}, {"name": "x", "radius_factor": 0.9}]},

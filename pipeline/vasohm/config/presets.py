@@ -31,7 +31,15 @@ DEFAULTS: Mapping[str, Any] = {
     "blood.parameters": {},
     "network.terminals": "auto",
     "network.drive_mmhg": 1.0,  # resistance does not depend on it
+    "network.target_wall_shear_pa": None,
+    "network.target_wall_shear_sd_pa": None,  # half of the targets' mean
+    "network.target_pressure_mmhg": None,
+    "network.target_pressure_sd_mmhg": None,  # half of the targets' mean
+    "network.intervals": "auto",
+    "network.draws": 1000,  # a bound of a 95 % interval then errs by about 3 % of its width
+    "network.seed": 0,
     "output.overlay": True,
+    "output.colour": "radius",
 }
 
 # Largest vessels asked for: retinal trunks are below 100 um in radius; the field of a microscope holds smaller ones.

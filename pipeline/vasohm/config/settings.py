@@ -2,6 +2,8 @@
 
 from dataclasses import dataclass
 
+from vasohm.flow.estimated_ends import EndTargets
+from vasohm.flow.monte_carlo import IntervalSettings
 from vasohm.flow.rheology import BloodSettings
 from vasohm.flow.scenarios import Scenario
 from vasohm.flow.terminals import NetworkSettings
@@ -12,6 +14,7 @@ from vasohm.image.segment import SegmentSettings
 from vasohm.network.crossings import CrossingSettings
 from vasohm.network.lumenfit import RadiusSettings
 from vasohm.network.skeletonize import SkeletonizeSettings
+from vasohm.results.overlay import ColourBy
 
 
 @dataclass(frozen=True, slots=True)
@@ -19,6 +22,7 @@ class OutputSettings:
     """What is written beside the tables."""
 
     overlay: bool
+    colour: ColourBy
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,6 +39,8 @@ class Settings:
     radius: RadiusSettings
     blood: BloodSettings
     network: NetworkSettings
+    targets: EndTargets | None  # of networks whose ends are estimated
+    intervals: IntervalSettings
     scenarios: tuple[Scenario, ...]
     output: OutputSettings
 

@@ -8,14 +8,15 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
+from vasohm.config.flow_settings import end_targets, scenario_problems, scenarios_asked, target_problems
 from vasohm.config.names import ids_from_files, nearest
 from vasohm.config.presets import DEFAULTS, PRESETS, SPUR_PX, SPUR_RADII
 from vasohm.config.settings import CompareSettings, OutputSettings, Settings
 from vasohm.config.sheet import DESIGN, ImageSource, Sheet, read_sheet
 from vasohm.config.study_model import CompareTable, ScenarioTable, StudyModel, parse_model
 from vasohm.errors import Problem, RequestError
+from vasohm.flow.monte_carlo import IntervalSettings
 from vasohm.flow.rheology import BloodSettings
-from vasohm.flow.scenarios import Scenario
 from vasohm.flow.terminals import NetworkSettings
 from vasohm.image.calibrate import ScaleSettings, TypedScale
 from vasohm.image.prepare import PrepareSettings
@@ -118,13 +119,14 @@ def _study(said: Mapping[str, Any], path: Path, base: Path, *, needs_sheet: bool
         )
     if model is None:
         raise RequestError(problems)
-    problems += _scenario_problems(model.scenario, file)
+    problems += scenario_problems(model.scenario, file)
     compare = None
     if model.compare is not None:
         compare, compare_problems = _compare(model.compare, sheet, file)
         problems += compare_problems
     resolved = _resolve(model, path)
     values = {key: entry["value"] for key, entry in resolved.items()}
+    problems += target_problems(values, file)
     if sheet is not None:
         problems += _mask_problems(values, sheet, file)
     if problems:
@@ -213,19 +215,6 @@ def _sheet(name: str, file: str, base: Path, covariates: tuple[str, ...]) -> tup
         return read_sheet(base / name, covariates), []
     except RequestError as error:
         return None, list(error.problems)
-
-
-def _scenario_problems(scenarios: Sequence[ScenarioTable], file: str) -> Iterator[Problem]:
-    names: set[str] = set()
-    for at, scenario in enumerate(scenarios, start=1):
-        if scenario.name in names:
-            message = f"{scenario.name!r} occurs twice. Name each scenario otherwise."
-            yield Problem(file, message, column=f"scenario[{at}].name", value=scenario.name)
-        names.add(scenario.name)
-        below, above = scenario.where.radius_um_below, scenario.where.radius_um_above
-        if below is not None and above is not None and above >= below:
-            message = f"no radius is above {above:g} and below {below:g} um."
-            yield Problem(file, message, column=f"scenario[{at}].where", value=f"{above:g}, {below:g}")
 
 
 def _compare(table: CompareTable, sheet: Sheet | None, file: str) -> tuple[CompareSettings, list[Problem]]:
@@ -342,11 +331,10 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
             values["blood.parameters"],
         ),
         network=NetworkSettings(values["network.terminals"], values["network.drive_mmhg"]),
-        scenarios=tuple(
-            Scenario(s.name, s.radius_factor, s.where.radius_um_below, s.where.radius_um_above, s.where.vessel_class)
-            for s in scenarios
-        ),
-        output=OutputSettings(values["output.overlay"]),
+        targets=end_targets(values),
+        intervals=IntervalSettings(values["network.intervals"], values["network.draws"], values["network.seed"]),
+        scenarios=scenarios_asked(scenarios),
+        output=OutputSettings(values["output.overlay"], values["output.colour"]),
     )
 
 

@@ -11,9 +11,12 @@ from pydantic_core import ErrorDetails, PydanticCustomError
 from vasohm.config.names import nearest
 from vasohm.config.presets import PRESETS
 from vasohm.errors import Problem
+from vasohm.flow.monte_carlo import LEAST_DRAWS
 from vasohm.flow.rheology import HIGHEST_HEMATOCRIT, law_names
+from vasohm.flow.scenarios import WIDEST_FACTOR
 from vasohm.image.calibrate import LEAST_UM, MOST_UM
 from vasohm.image.segment import segmenter_names
+from vasohm.results.columns_vessels import CLASSES
 
 MOST_SHOWN = 60  # characters of a faulty value
 CHANNELS = ("green", "red", "blue", "luminance")
@@ -69,6 +72,18 @@ def _radius_range(value: list[float]) -> list[float]:
     return value
 
 
+def _by_class(value: object) -> float | dict[str, float]:
+    """One positive number for all vessels, or one a class."""
+    given = value if isinstance(value, dict) else {"": value}
+    numbers = [number for number in given.values() if isinstance(number, int | float) and not isinstance(number, bool)]
+    words = ", ".join(CLASSES)
+    if not numbers or len(numbers) < len(given) or not all(0 < number < math.inf for number in numbers):
+        raise _wrong(f"must be a number greater than 0, or a table of them with keys among {words}.")
+    if isinstance(value, dict):
+        return {_one_of(name, CLASSES): float(number) for name, number in value.items()}
+    return float(numbers[0])
+
+
 def _not_split(value: bool) -> bool:
     if value:
         raise _wrong(
@@ -80,6 +95,12 @@ def _not_split(value: bool) -> bool:
 def _plain_name(value: str) -> str:
     if not value.strip() or not value.isprintable():
         raise _wrong("must be text that can be printed.")
+    return value
+
+
+def _wanted_ratio(value: float) -> float:
+    if value == 1:
+        raise _wrong("must differ from 1: a ratio of 1 is what the vessels have already.")
     return value
 
 
@@ -160,10 +181,17 @@ class BloodTable(Table):
 
 
 class NetworkTable(Table):
-    """Where blood enters and leaves."""
+    """Where blood enters and leaves, and how intervals are found."""
 
-    terminals: Literal["auto", "file", "none"] | None = None
+    terminals: Literal["auto", "file", "none", "estimate"] | None = None
     drive_mmhg: Positive | None = None
+    target_wall_shear_pa: Annotated[float | dict[str, float], PlainValidator(_by_class)] | None = None
+    target_wall_shear_sd_pa: Positive | None = None
+    target_pressure_mmhg: Annotated[float | dict[str, float], PlainValidator(_by_class)] | None = None
+    target_pressure_sd_mmhg: Positive | None = None
+    intervals: Literal["auto", "delta", "monte-carlo"] | None = None
+    draws: Annotated[int, Field(ge=LEAST_DRAWS, le=100_000)] | None = None
+    seed: Annotated[int, Field(ge=0, lt=2**63)] | None = None
 
 
 class WhereTable(Table):
@@ -179,7 +207,8 @@ class ScenarioTable(Table):
 
     name: Name
     where: WhereTable = WhereTable()
-    radius_factor: Annotated[float, Field(gt=0, le=10)]
+    radius_factor: Annotated[float, Field(gt=0, le=WIDEST_FACTOR)] | None = None
+    wanted_ratio: Annotated[Positive, AfterValidator(_wanted_ratio)] | None = None
 
 
 class CompareTable(Table):
@@ -197,6 +226,7 @@ class OutputTable(Table):
     """What is written beside the tables."""
 
     overlay: bool | None = None
+    colour: Literal["radius", "share", "resistance", "uncertainty"] | None = None
 
 
 class StudyModel(Table):

@@ -1,6 +1,6 @@
-"""What becomes of the network when some vessels change their radius."""
+"""What becomes of the network when some vessels change their radius, and by how much they must for a wanted effect."""
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -18,20 +18,26 @@ from vasohm.network.groups import sum_by
 from vasohm.network.radius import MeasuredGraph
 from vasohm.uncertainty import ln_interval, no_interval, quadrature
 
+WIDEST_FACTOR = 10.0  # on a radius, that a study may ask for or be told; its inverse is the narrowest
+LN_RATIO_ROUNDING = 1e-10  # of ln ratio, at which the search for a factor ends
+SEARCH_TURNS = 60  # bisection alone narrows the widest bracket to rounding in fewer
+
 
 @dataclass(frozen=True, slots=True)
 class Scenario:
-    """Multiply the radius of the chosen vessels; None in a condition means it does not matter.
+    """Change the radius of the chosen vessels; None in a condition means it does not matter.
 
     A vessel is chosen where its hydraulic radius is below `radius_um_below`, not below `radius_um_above`, and its class
-    is `vessel_class`.
+    is `vessel_class`. Either `radius_factor` is given, or `wanted_ratio`: then each network is told the factor that
+    brings its resistance to this multiple of what it was.
     """
 
     name: str
-    radius_factor: float
+    radius_factor: float | None
     radius_um_below: float | None
     radius_um_above: float | None
     vessel_class: str | None
+    wanted_ratio: float | None = None
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -41,6 +47,7 @@ class ScenarioOutcomes:
     network: IntArray  # from 0
     scenario: tuple[str, ...]
     n_segments_changed: IntArray
+    radius_factor: FloatArray  # as given, or as found for a wanted ratio
     resistance_before_pa_s_m3: FloatArray
     resistance_after_pa_s_m3: FloatArray
     ratio: FloatArray  # after over before
@@ -95,7 +102,8 @@ def run_scenarios(
     -----
     Errors of the radii act before and after alike, so most of the doubt cancels in the ratio: its ln moves with a
     segment's ln R by the segment's share after less its share before, and with each shared cause, the pixel size among
-    them, by the difference of its effects on the two (first order, JCGM 100:2008, eq. 13).
+    them, by the difference of its effects on the two (first order, JCGM 100:2008, eq. 13). Where a ratio is wanted, the
+    interval is that of the ratio at the factor found.
     """
     hematocrit = entering_hematocrit(terminals, blood.hematocrit)
     made = make_blood(blood)
@@ -108,18 +116,20 @@ def run_scenarios(
 
     before = state(np.ones(measured.graph.n_segments))
     network, shape = terminals.segment_network, (len(terminals.source), len(scenarios))
-    changed = np.zeros(shape, dtype=np.int64)
-    after_r, ln_se = np.full(shape, np.nan), np.full(shape, np.nan)
-    flags = np.zeros(shape, dtype=np.int64)
+    changed, flags = np.zeros(shape, dtype=np.int64), np.zeros(shape, dtype=np.int64)
+    factor, after_r, ln_se = (np.full(shape, np.nan) for _ in range(3))
     for column, scenario in enumerate(scenarios):
         chosen = _chosen(scenario, before.resistances.radius_hydraulic_um, measured.graph.vessel_class)
-        after = state(np.where(chosen, scenario.radius_factor, 1.0))
         changed[:, column] = np.bincount(network[chosen], minlength=shape[0])
-        after_r[:, column] = after.network_resistance_pa_s_m3
+        own = _own_factors(scenario, before, chosen, network, state)
+        known = np.isfinite(own) | ~np.isfinite(before.network_resistance_pa_s_m3)
+        after = state(np.where(chosen, np.nan_to_num(own, nan=1.0)[network], 1.0))
+        factor[:, column] = own
+        after_r[:, column] = np.where(known, after.network_resistance_pa_s_m3, np.nan)
         ln_se[:, column] = _ln_ratio_se(before, after, network, shape[0])
         beyond = chosen & (after.resistances.flags & int(Flag.LAW_RANGE) > 0)
         flags[:, column] = np.where(np.bincount(network[beyond], minlength=shape[0]) > 0, int(Flag.LAW_RANGE), 0)
-        flags[:, column] |= after.circulation.network_flags
+        flags[:, column] |= after.circulation.network_flags | np.where(known, 0, int(Flag.OUT_OF_REACH))
     before_r = np.repeat(before.network_resistance_pa_s_m3, shape[1])
     ratio = after_r.ravel() / before_r
     ratio_lo, ratio_hi = ln_interval(ratio, ln_se.ravel())
@@ -127,6 +137,7 @@ def run_scenarios(
         network=np.repeat(np.arange(shape[0]), shape[1]),
         scenario=tuple(scenario.name for scenario in scenarios) * shape[0],
         n_segments_changed=changed.ravel(),
+        radius_factor=factor.ravel(),
         resistance_before_pa_s_m3=before_r,
         resistance_after_pa_s_m3=after_r.ravel(),
         ratio=ratio,
@@ -137,8 +148,12 @@ def run_scenarios(
 
 
 def _chosen(scenario: Scenario, radius_um: FloatArray, vessel_class: IntArray) -> BoolArray:
-    if not (np.isfinite(scenario.radius_factor) and scenario.radius_factor > 0):
-        msg = f"scenario {scenario.name!r}: radius_factor is {scenario.radius_factor}; it must be positive and finite."
+    for name, value in (("radius_factor", scenario.radius_factor), ("wanted_ratio", scenario.wanted_ratio)):
+        if value is not None and not (np.isfinite(value) and value > 0):
+            msg = f"scenario {scenario.name!r}: {name} is {value}; it must be positive and finite."
+            raise DomainError(msg)
+    if (scenario.radius_factor is None) == (scenario.wanted_ratio is None):
+        msg = f"scenario {scenario.name!r}: give either radius_factor or wanted_ratio."
         raise DomainError(msg)
     chosen = np.isfinite(radius_um)
     if scenario.radius_um_below is not None:
@@ -154,6 +169,46 @@ def _chosen(scenario: Scenario, radius_um: FloatArray, vessel_class: IntArray) -
             raise DomainError(msg)
         chosen &= vessel_class == VesselClass[scenario.vessel_class.upper()]
     return chosen
+
+
+def _own_factors(
+    scenario: Scenario, before: _State, chosen: BoolArray, network: IntArray, state: Callable[[FloatArray], _State]
+) -> FloatArray:
+    """Factor (n_networks,) on the radii of each network's chosen vessels; NaN where no factor gives the wanted ratio.
+
+    Resistance falls as vessels widen, so the ln of the factor lies between 0 and that of `WIDEST_FACTOR`, or its
+    negative: a secant search kept inside that bracket, for all networks at once. A network that the narrowest vessels
+    close has a ratio beyond all bounds there.
+    """
+    n = len(before.network_resistance_pa_s_m3)
+    if scenario.radius_factor is not None:
+        return np.full(n, scenario.radius_factor)
+    ln_wanted = float(np.log(scenario.wanted_ratio or 1.0))
+    known = np.isfinite(before.network_resistance_pa_s_m3) & (np.bincount(network[chosen], minlength=n) > 0)
+
+    def excess(ln_factor: FloatArray) -> FloatArray:
+        after = state(np.where(chosen, np.exp(ln_factor)[network], 1.0)).network_resistance_pa_s_m3
+        ratio = np.log(after / before.network_resistance_pa_s_m3)
+        return np.where(known, np.where(np.isfinite(ratio), ratio, np.inf) - ln_wanted, 0.0)
+
+    most = -np.sign(ln_wanted) * np.log(WIDEST_FACTOR)
+    near, far = np.zeros(n), np.full(n, most)  # a bracket: the excess changes its sign between the two
+    near_excess, far_excess = np.full(n, -ln_wanted), excess(far)
+    reached = known & (np.sign(far_excess) != np.sign(near_excess))
+    found = far
+    for _ in range(SEARCH_TURNS):
+        with np.errstate(invalid="ignore", divide="ignore"):
+            secant = near - near_excess * (far - near) / (far_excess - near_excess)
+        inside = np.isfinite(secant) & np.isfinite(far_excess)
+        found = np.where(inside, secant, 0.5 * (near + far))
+        here = np.where(reached, excess(np.where(reached, found, 0.0)), 0.0)
+        if np.all(np.abs(here) < LN_RATIO_ROUNDING):
+            break
+        beyond = np.sign(here) == np.sign(far_excess)
+        # an end that stays is given half of its excess, so that the bracket closes from both sides (Illinois rule)
+        near, near_excess = np.where(beyond, near, found), np.where(beyond, 0.5 * near_excess, here)
+        far, far_excess = np.where(beyond, found, far), np.where(beyond, here, 0.5 * far_excess)
+    return np.where(reached, np.exp(found), np.nan)
 
 
 def _ln_ratio_se(before: _State, after: _State, network: IntArray, n_networks: int) -> FloatArray:

@@ -9,20 +9,21 @@ import numpy as np
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.flags import Flag
 from vasohm.network.along import arc_shares
-from vasohm.network.graph import NodeKind, VesselClass, label_networks
+from vasohm.network.graph import NodeKind, VesselClass, VesselGraph, label_networks
 from vasohm.network.groups import mean_by, sum_by
 from vasohm.network.paths import owner
 from vasohm.network.radius import MeasuredGraph
 
 REACH_PX = 10.0  # a terminal takes an end or rim node no further away
 ROLES = {"inlet": 1, "outlet": -1}
+ESTIMATED = "estimated"  # source of networks whose ends `vasohm.flow.estimated_ends` is to find, or has found
 
 
 @dataclass(frozen=True, slots=True)
 class NetworkSettings:
     """Which terminals are used, and the pressure between inlets and outlets where they say none."""
 
-    terminals: Literal["auto", "file", "none"]
+    terminals: Literal["auto", "file", "none", "estimate"]
     drive_mmhg: float
 
 
@@ -51,7 +52,7 @@ class Terminals:
     pressure_mmhg: FloatArray  # (n_nodes,) NaN where not given
     flow_nl_min: FloatArray  # (n_nodes,) NaN where not given
     hematocrit: FloatArray  # (n_nodes,) NaN where not given
-    source: tuple[str, ...]  # per network: file | auto | none
+    source: tuple[str, ...]  # per network: file | auto | none | estimated
     network_flags: IntArray  # (n_networks,)
     notes: tuple[str, ...]  # terminals left out, by position
     flags: Flag  # of the image
@@ -86,6 +87,8 @@ def place_terminals(measured: MeasuredGraph, points: Sequence[TerminalPoint], se
         ``file`` uses the points alone and ``none`` nothing. ``auto`` uses the points where there are any; else the
         widest end of each tree is its inlet and its other ends are outlets, the other way round where more than
         half of the tree's length is venule. A network with loops shows no inlet by its shape and gets none.
+        ``estimate`` does as ``auto``, and marks for `vasohm.flow.estimated_ends` the networks that have an end of
+        which neither the points nor the shape say anything.
 
     Returns
     -------
@@ -93,13 +96,19 @@ def place_terminals(measured: MeasuredGraph, points: Sequence[TerminalPoint], se
     """
     node_network, segment_network = label_networks(measured.graph)
     n_networks = int(segment_network.max(initial=-1)) + 1
-    by_shape = settings.terminals == "auto" and not points
+    by_shape = settings.terminals in {"auto", "estimate"} and not points
     given = _match(measured, () if settings.terminals == "none" else points)
     role, mesh = given.role, np.zeros(n_networks, dtype=bool)
     if by_shape:
         role, mesh = _roles_by_shape(measured, node_network, segment_network, n_networks)
     has = [np.bincount(node_network[role == sign], minlength=n_networks) > 0 for sign in (1, -1)]
     source = np.where(has[0] | has[1], "auto" if by_shape else "file", "none")
+    flags = missing_terminals(has[0], has[1]) | np.where(mesh, int(Flag.MESH), 0)
+    if settings.terminals == "estimate":
+        bare = open_ends(measured.graph) & (role == 0)
+        unknown = np.bincount(node_network[bare], minlength=n_networks) > 0
+        source = np.where(unknown, ESTIMATED, source)
+        flags = np.where(unknown, int(Flag.TERMINALS_ESTIMATED), flags)
     return Terminals(
         node_network=node_network,
         segment_network=segment_network,
@@ -108,7 +117,7 @@ def place_terminals(measured: MeasuredGraph, points: Sequence[TerminalPoint], se
         flow_nl_min=given.flow_nl_min,
         hematocrit=given.hematocrit,
         source=tuple(source.tolist()),
-        network_flags=missing_terminals(has[0], has[1]) | np.where(mesh, int(Flag.MESH), 0),
+        network_flags=np.asarray(flags, dtype=np.int64),
         notes=given.notes,
         flags=Flag.TERMINAL_MISSED if given.notes else Flag.NONE,
         drive_mmhg=settings.drive_mmhg,
@@ -121,21 +130,26 @@ def missing_terminals(has_inlet: BoolArray, has_outlet: BoolArray) -> IntArray:
     return np.select(lacks, [int(Flag.NO_OUTLET), int(Flag.NO_INLET), int(Flag.NO_TERMINALS)], default=0)
 
 
+def open_ends(graph: VesselGraph) -> BoolArray:
+    """Whether blood can enter or leave at each node (n_nodes,): an end, or a rim where the field of view cuts."""
+    return np.isin(graph.node_kind, (NodeKind.END, NodeKind.RIM))
+
+
 def _match(measured: MeasuredGraph, points: Sequence[TerminalPoint]) -> _Given:
     graph = measured.graph
-    open_ends = np.flatnonzero(np.isin(graph.node_kind, (NodeKind.END, NodeKind.RIM)))
+    ends = np.flatnonzero(open_ends(graph))
     role = np.zeros(graph.n_nodes, dtype=np.int64)
     pressure, flow, hematocrit = (np.full(graph.n_nodes, np.nan) for _ in range(3))
     notes = []
     for point in points:
-        away = np.hypot(graph.node_x_px[open_ends] - point.x_px, graph.node_y_px[open_ends] - point.y_px)
+        away = np.hypot(graph.node_x_px[ends] - point.x_px, graph.node_y_px[ends] - point.y_px)
         told = f"{point.role} at x {point.x_px:g}, y {point.y_px:g} px left out:"
         nearest = away.min(initial=np.inf)
         if not nearest <= REACH_PX:
-            found = f"the nearest is {nearest:.1f} px away" if open_ends.size else "the image has none"
+            found = f"the nearest is {nearest:.1f} px away" if ends.size else "the image has none"
             notes.append(f"{told} no vessel end within {REACH_PX:g} px ({found}).")
             continue
-        node = open_ends[np.argmin(away)]
+        node = ends[np.argmin(away)]
         if role[node]:
             notes.append(f"{told} the nearest vessel end has a terminal already.")
             continue
@@ -155,9 +169,8 @@ def _roles_by_shape(
     graph = measured.graph
     n_nodes_each = np.bincount(node_network, minlength=n_networks)
     mesh = np.bincount(segment_network, minlength=n_networks) - n_nodes_each + 1 > 0
-    is_open = np.isin(graph.node_kind, (NodeKind.END, NodeKind.RIM))
-    ends = np.flatnonzero(is_open & ~mesh[node_network] & (n_nodes_each[node_network] > 1))
-    radius = _end_radius(measured)[ends]
+    ends = np.flatnonzero(open_ends(graph) & ~mesh[node_network] & (n_nodes_each[node_network] > 1))
+    radius = end_radius(measured)[ends]
     order = np.lexsort((ends, -np.nan_to_num(radius), node_network[ends]))
     _, first = np.unique(node_network[ends][order], return_index=True)
     sign = np.where(_is_venular(measured, segment_network, n_networks), -1, 1)
@@ -168,7 +181,7 @@ def _roles_by_shape(
     return role, mesh
 
 
-def _end_radius(measured: MeasuredGraph) -> FloatArray:
+def end_radius(measured: MeasuredGraph) -> FloatArray:
     """Mean radius (n_nodes,) over the half next to each node of the segment that ends there; for ends of degree 1."""
     graph = measured.graph
     segment = owner(graph.offsets)

@@ -100,6 +100,12 @@ SCENARIOS: tuple[Column, ...] = (
     NETWORK_ID,
     text("scenario", "Name of the scenario in the study file."),
     count("n_segments_changed", "Number of segments of the network whose radius the scenario changes."),
+    number(
+        "radius_factor",
+        "1",
+        "Factor on the radii of those segments: the study file's, or the one that brings about its wanted ratio; empty "
+        "where none does.",
+    ),
     number("resistance_before_pa_s_m3", "Pa.s/m3", "Resistance of the network as measured."),
     number("resistance_after_pa_s_m3", "Pa.s/m3", "Resistance of the network with the changed radii."),
     number("ratio", "1", "Resistance after the change over that before."),

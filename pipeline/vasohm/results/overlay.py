@@ -22,7 +22,7 @@ from vasohm.flags import Flag, code
 from vasohm.results.tables import ImageTables
 from vasohm.units import UM_PER_MM
 
-ColourBy: TypeAlias = Literal["radius", "share", "resistance"]
+ColourBy: TypeAlias = Literal["radius", "share", "resistance", "uncertainty"]
 
 COLOUR_COLUMNS: dict[str, tuple[str, str]] = {  # what colours a segment: its column, the colour bar's label
     "radius": ("radius_mean_um", "lumen radius (µm)"),

@@ -317,6 +317,7 @@ def _scenarios(outcomes: ScenarioOutcomes) -> dict[str, AnyArray]:
         "network_id": outcomes.network + 1,
         "scenario": np.array(outcomes.scenario, dtype=object),
         "n_segments_changed": outcomes.n_segments_changed,
+        "radius_factor": outcomes.radius_factor,
         "resistance_before_pa_s_m3": outcomes.resistance_before_pa_s_m3,
         "resistance_after_pa_s_m3": outcomes.resistance_after_pa_s_m3,
         "ratio": outcomes.ratio,
