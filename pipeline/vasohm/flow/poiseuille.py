@@ -154,7 +154,7 @@ def measure_resistance(
     # R/L depends on the hydraulic radius with the exponent of r there, so its doubt is that of R/L over the exponent;
     # of the hematocrit it takes only what the viscosity at that radius does not.
     viscosity = blood.viscosity(radius_um, hematocrit)
-    per_exponent = radius_um / np.abs(_exponent(blood, radius_um, hematocrit, viscosity))
+    per_exponent = radius_um / np.abs(local_exponent(blood, radius_um, hematocrit, viscosity))
     of_viscosity = blood.ln_change_with_hematocrit(radius_um, hematocrit, viscosity)
     of_length = np.zeros(mean.ln_causes.shape)
     of_length[:, -2] = np.nan_to_num(measured.pixel_size_rel_se)
@@ -195,7 +195,7 @@ def _integrate(measured: MeasuredGraph, blood: Blood, hematocrit: FloatArray, ra
     radius = np.where(usable, radius, 1.0)
     viscosity = blood.viscosity(radius, cells)
     usable &= np.isfinite(viscosity)
-    exponent = np.where(usable, _exponent(blood, radius, cells, viscosity), 0.0)
+    exponent = np.where(usable, local_exponent(blood, radius, cells, viscosity), 0.0)
     viscosity = np.where(usable, viscosity, 1.0)
     variance = np.nan_to_num(np.square(measured.ln_radius_random_se))
     correction = np.minimum(0.5 * exponent**2 * variance, LARGEST_LN_CORRECTION)
@@ -222,7 +222,7 @@ def _integrate(measured: MeasuredGraph, blood: Blood, hematocrit: FloatArray, ra
     )
 
 
-def _exponent(blood: Blood, radius_um: FloatArray, hematocrit: FloatArray, viscosity_mpa_s: FloatArray) -> FloatArray:
+def local_exponent(blood: Blood, radius_um: FloatArray, hematocrit: FloatArray, viscosity_mpa_s: FloatArray) -> FloatArray:
     """Return d ln(μ r⁻⁴) / d ln r, at least `STEEPEST_EXPONENT`; `viscosity_mpa_s` is μ at the given radii."""
     wider = blood.viscosity(radius_um * (1.0 + LN_STEP), hematocrit)
     finite = np.isfinite(viscosity_mpa_s)
