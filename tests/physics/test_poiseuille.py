@@ -1,5 +1,7 @@
 """Resistance of one segment against closed forms, and its doubt against the rules of uncertainty."""
 
+import dataclasses
+
 import numpy as np
 import pytest
 from beds import CommonErrors, Vessel, bed, blood, newtonian, published, straight
@@ -307,6 +309,24 @@ def test_a_segment_beyond_its_law_is_flagged_and_one_that_nothing_passes_has_no_
     np.testing.assert_array_equal(np.isnan(found.resistance_pa_s_m3), [False, True, False])
 
 
+@pytest.mark.parametrize("law", ["pries-in-vivo", "kiani-hudetz", "constant"])
+def test_doubt_of_plasma_viscosity_reaches_resistance(law):
+    """Against differences of the chain: whole for relative laws, in part for an absolute one."""
+    measured, se = bed(TUBE, [straight(TUBE, 0, 1, 6.0)]), 0.08
+
+    def ln_resistance(plasma):
+        how = dataclasses.replace(blood(law, 0.3), plasma_viscosity_mpa_s=plasma)
+        return np.log(resistances(measured, how).resistance_pa_s_m3[0])
+
+    found = resistances(measured, dataclasses.replace(blood(law, 0.3), plasma_viscosity_se_mpa_s=se))
+    slope = (ln_resistance(1.2 + 1e-4) - ln_resistance(1.2 - 1e-4)) / 2e-4
+    assert found.ln_shared[0, -1] == pytest.approx(se * slope, rel=1e-5, abs=1e-12)
+    part = {"pries-in-vivo": 1.0, "constant": 0.0}.get(law, slope * 1.2)
+    assert slope * 1.2 == pytest.approx(part, abs=1e-6)
+    assert (0.0 < part < 1.0) == (law == "kiani-hudetz")
+    assert found.radius_hydraulic_shared_se_um[0] == pytest.approx(0.0, abs=1e-5)  # a uniform tube's radius is its own
+
+
 def test_a_segment_without_length_joins_its_nodes():
     vessel = Vessel(0, 1, np.array([[5.0, 5.0], [5.0, 5.0]]), np.array([10.0, 10.0]))
     found = resistances(bed([(5, 5), (5, 5)], [vessel]))
@@ -316,4 +336,4 @@ def test_a_segment_without_length_joins_its_nodes():
 def test_a_graph_without_vessels_gives_empty_arrays():
     found = resistances(bed([], []), blood("pries-in-vivo"))
     assert found.resistance_pa_s_m3.shape == (0,)
-    assert found.ln_shared.shape == (0, 2)
+    assert found.ln_shared.shape == (0, 3)

@@ -74,6 +74,7 @@ CONTRACT = """
     hematocrit             = 0.4
     hematocrit_se          = 0.02
     plasma_viscosity_mpa_s = 1.3
+    plasma_viscosity_se_mpa_s = 0.08
     viscosity_mpa_s        = 4.0
     hematocrit_split       = false
     parameters = { core = 1.0 }
@@ -133,6 +134,7 @@ def test_every_key_reaches_its_setting(tmp_path: Path) -> None:
     assert (chosen.radius.plasma_layer_um, chosen.radius.plasma_layer_se_um) == (1.1, 0.4)
     assert (chosen.blood.law, chosen.blood.hematocrit, chosen.blood.hematocrit_se) == ("pries-in-vitro", 0.4, 0.02)
     assert (chosen.blood.plasma_viscosity_mpa_s, chosen.blood.viscosity_mpa_s) == (1.3, 4.0)
+    assert chosen.blood.plasma_viscosity_se_mpa_s == 0.08
     assert (chosen.network.terminals, chosen.network.drive_mmhg) == ("estimate", 2.0)
     mean = (5 + 3 + 1.6) / 3  # of vessels without a class
     assert chosen.targets == EndTargets((mean, 5.0, 1.6, 3.0), 2.0, (31.0, 31.0, 31.0, 31.0), 8.0)

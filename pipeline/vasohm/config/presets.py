@@ -26,6 +26,7 @@ DEFAULTS: Mapping[str, Any] = {
     "blood.hematocrit": 0.45,  # systemic, of healthy adults
     "blood.hematocrit_se": 0.0,
     "blood.plasma_viscosity_mpa_s": 1.2,  # at 37 degrees Celsius
+    "blood.plasma_viscosity_se_mpa_s": 0.0,
     "blood.viscosity_mpa_s": 3.0,
     "blood.hematocrit_split": False,
     "blood.parameters": {},

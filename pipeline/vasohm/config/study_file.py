@@ -329,6 +329,7 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
             values["blood.plasma_viscosity_mpa_s"],
             values["blood.viscosity_mpa_s"],
             values["blood.parameters"],
+            plasma_viscosity_se_mpa_s=values["blood.plasma_viscosity_se_mpa_s"],
         ),
         network=NetworkSettings(values["network.terminals"], values["network.drive_mmhg"]),
         targets=end_targets(values),

@@ -175,6 +175,7 @@ class BloodTable(Table):
     hematocrit: Annotated[float, Field(ge=0, le=HIGHEST_HEMATOCRIT)] | None = None
     hematocrit_se: Annotated[float, Field(ge=0, le=HIGHEST_HEMATOCRIT)] | None = None
     plasma_viscosity_mpa_s: Positive | None = None
+    plasma_viscosity_se_mpa_s: NotNegative | None = None
     viscosity_mpa_s: Positive | None = None
     hematocrit_split: Annotated[bool, AfterValidator(_not_split)] | None = None
     parameters: dict[str, float] | None = None

@@ -143,7 +143,7 @@ def at_medians(
 def network_doubt(
     terminals: Terminals, circulation: Circulation, resistances: SegmentResistances
 ) -> tuple[FloatArray, FloatArray]:
-    """Random standard uncertainty (n_networks,) of ln R and its change (n_networks, n_causes + 1) per shared cause."""
+    """Random standard uncertainty (n_networks,) of ln R and its change (n_networks, n_causes + 3) per shared cause."""
     n = len(terminals.source)
     known = np.isfinite(circulation.network_resistance_pa_s_m3)
     blank = np.where(known, 0.0, np.nan)

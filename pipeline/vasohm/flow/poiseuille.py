@@ -99,13 +99,14 @@ class SegmentResistances:
     """What each segment resists, and how far that is known; NaN where a segment has no resistance.
 
     `ln_shared` holds one column a cause that all segments have in common: the change of ln R for one standard
-    uncertainty of it. The causes are those of `MeasuredGraph.shared`, then the pixel size.
+    uncertainty of it. The causes are those of `MeasuredGraph.shared`, then the pixel size, the hematocrit and the
+    viscosity of plasma.
     """
 
     hematocrit: FloatArray  # (n_segments,)
     resistance_pa_s_m3: FloatArray
     ln_random_se: FloatArray
-    ln_shared: FloatArray  # (n_segments, n_causes + 2)
+    ln_shared: FloatArray  # (n_segments, n_causes + 3)
     radius_hydraulic_um: FloatArray
     radius_hydraulic_random_se_um: FloatArray
     radius_hydraulic_shared_se_um: FloatArray
@@ -144,7 +145,8 @@ def measure_resistance(
     p = -4 when its mean is held and 1 + 8 v when its median is held, as here. V comes from the covariance along the
     segment with the gradient d ln R / d ln r of each point, and the shared causes and the pixel size (d ln R / d ln
     pixel size = 1 + mean p c, c being `measured.column`: a plasma layer does not grow with the pixel) and the
-    hematocrit (mean of d ln μ / d H) follow to first order (JCGM 100:2008, eq. 13).
+    hematocrit and plasma (means of d ln μ / d H and d ln μ / d ln of plasma's) follow to first order (JCGM 100:2008,
+    eq. 13).
 
     A radius or a viscosity that is not positive and finite leaves its segment without resistance.
     """
@@ -155,10 +157,13 @@ def measure_resistance(
     # of the hematocrit it takes only what the viscosity at that radius does not.
     viscosity = blood.viscosity(radius_um, hematocrit)
     per_exponent = radius_um / np.abs(local_exponent(blood, radius_um, hematocrit, viscosity))
-    of_viscosity = blood.ln_change_with_hematocrit(radius_um, hematocrit, viscosity)
+    of_viscosity = [
+        change(radius_um, hematocrit, viscosity)
+        for change in (blood.ln_change_with_hematocrit, blood.ln_change_with_plasma)
+    ]
     of_length = np.zeros(mean.ln_causes.shape)
-    of_length[:, -2] = np.nan_to_num(measured.pixel_size_rel_se)
-    of_radius = np.column_stack([mean.ln_causes[:, :-1], mean.ln_causes[:, -1] - of_viscosity])
+    of_length[:, -3] = np.nan_to_num(measured.pixel_size_rel_se)
+    of_radius = np.column_stack([mean.ln_causes[:, :-2], mean.ln_causes[:, -2:] - np.stack(of_viscosity, axis=1)])
     length_var = np.square(measured.length_random_se_um / length_um)
     flags = np.where(blood.outside_range(radius_um, hematocrit), int(Flag.LAW_RANGE), 0)
     flags |= np.where(_steep_wall(measured, radius_factor), int(Flag.STEEP_WALL), 0)
@@ -183,7 +188,7 @@ class _Mean:
     defined: BoolArray  # (n_segments,)
     ln_mean: FloatArray
     ln_variance: FloatArray
-    ln_causes: FloatArray  # (n_segments, n_causes + 2) its change for one standard uncertainty of each shared cause
+    ln_causes: FloatArray  # (n_segments, n_causes + 3) its change for one standard uncertainty of each shared cause
     ln_radius_range: tuple[FloatArray, FloatArray, FloatArray]  # least, mean, most
 
 
@@ -212,7 +217,8 @@ def _integrate(measured: MeasuredGraph, blood: Blood, hematocrit: FloatArray, ra
     np.maximum.at(most, segment, ln_radius)
     pixel_size = measured.column * np.nan_to_num(measured.pixel_size_rel_se)
     by_point = [gradient * cause for cause in (*measured.shared.T, pixel_size)]
-    by_point.append(part / mean[segment] * blood.ln_change_with_hematocrit(radius, cells, viscosity))
+    changes = (blood.ln_change_with_hematocrit, blood.ln_change_with_plasma)
+    by_point += [part / mean[segment] * change(radius, cells, viscosity) for change in changes]
     return _Mean(
         defined=defined,
         ln_mean=np.log(mean) - measured.noise_sign * median_shift,
@@ -222,7 +228,9 @@ def _integrate(measured: MeasuredGraph, blood: Blood, hematocrit: FloatArray, ra
     )
 
 
-def local_exponent(blood: Blood, radius_um: FloatArray, hematocrit: FloatArray, viscosity_mpa_s: FloatArray) -> FloatArray:
+def local_exponent(
+    blood: Blood, radius_um: FloatArray, hematocrit: FloatArray, viscosity_mpa_s: FloatArray
+) -> FloatArray:
     """Return d ln(μ r⁻⁴) / d ln r, at least `STEEPEST_EXPONENT`; `viscosity_mpa_s` is μ at the given radii."""
     wider = blood.viscosity(radius_um * (1.0 + LN_STEP), hematocrit)
     finite = np.isfinite(viscosity_mpa_s)

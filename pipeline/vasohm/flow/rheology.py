@@ -1,7 +1,7 @@
 """What a viscosity law is, the laws by name, and blood: a law with its constants."""
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from types import MappingProxyType, ModuleType
 
 import numpy as np
@@ -21,6 +21,7 @@ from vasohm.plugins import PluginKind, load_plugin, plugin_names, refuse_plugin
 
 HIGHEST_HEMATOCRIT = 0.75  # above it cells are packed and no law was measured
 HEMATOCRIT_STEP = 1e-6  # of a one-sided difference: slopes to about 1e-6
+PLASMA_STEP = 1e-6  # relative, of a one-sided difference
 
 
 @dataclass(frozen=True, slots=True)
@@ -36,6 +37,7 @@ class BloodSettings:
     plasma_viscosity_mpa_s: float
     viscosity_mpa_s: float  # of law "constant"
     parameters: Mapping[str, float]
+    plasma_viscosity_se_mpa_s: float = 0.0  # standard uncertainty of the viscosity of plasma
 
 
 @dataclass(frozen=True, slots=True)
@@ -103,6 +105,7 @@ class Blood:
     plasma_viscosity_mpa_s: float
     parameters: Mapping[str, float]
     hematocrit_se: float  # of every hematocrit alike
+    plasma_viscosity_se_mpa_s: float = 0.0
 
     def viscosity(self, radius_um: FloatArray, hematocrit: FloatArray) -> FloatArray:
         """Apparent viscosity in mPa·s, shape of both arguments broadcast; infinite where no blood can pass.
@@ -154,6 +157,21 @@ class Blood:
         ratio = np.divide(moved, viscosity_mpa_s, out=np.ones(both.shape), where=both)
         return np.asarray(np.log(ratio) / step * self.hematocrit_se)
 
+    def ln_change_with_plasma(
+        self, radius_um: FloatArray, hematocrit: FloatArray, viscosity_mpa_s: FloatArray
+    ) -> FloatArray:
+        """Change of ln viscosity for one standard uncertainty of plasma viscosity; `viscosity_mpa_s` is that of both.
+
+        By a one-sided difference; 0 where no blood can pass.
+        """
+        if self.plasma_viscosity_se_mpa_s == 0.0:
+            return np.zeros(np.shape(viscosity_mpa_s))
+        thicker = replace(self, plasma_viscosity_mpa_s=self.plasma_viscosity_mpa_s * (1.0 + PLASMA_STEP))
+        moved = thicker.viscosity(radius_um, hematocrit)
+        both = np.isfinite(moved) & np.isfinite(viscosity_mpa_s)
+        ratio = np.divide(moved, viscosity_mpa_s, out=np.ones(both.shape), where=both)
+        return np.asarray(np.log(ratio) / PLASMA_STEP * self.plasma_viscosity_se_mpa_s / self.plasma_viscosity_mpa_s)
+
     def outside_range(self, radius_um: FloatArray, hematocrit: FloatArray) -> BoolArray:
         """Whether the law is used beyond the radii or hematocrits it was fitted to."""
         (least_um, most_um), (least, most) = self.law.valid_radius_um, self.law.valid_hematocrit
@@ -173,17 +191,19 @@ def make_blood(settings: BloodSettings) -> Blood:
     Raises
     ------
     DomainError
-        A plasma viscosity that is not positive, or an uncertainty of the hematocrit that is negative.
+        A plasma viscosity that is not positive, or an uncertainty that is negative.
     PluginError
         See `get_law`.
     """
     parameters = dict(settings.parameters)
     if settings.law == "constant":
         parameters["viscosity_mpa_s"] = settings.viscosity_mpa_s
-    if not 0 <= settings.hematocrit_se < np.inf:
-        msg = f"hematocrit_se is {settings.hematocrit_se}; a standard uncertainty is 0 or more."
-        raise DomainError(msg)
-    return _blood(settings.law, settings.plasma_viscosity_mpa_s, parameters, settings.hematocrit_se)
+    for name in ("hematocrit_se", "plasma_viscosity_se_mpa_s"):
+        if not 0 <= getattr(settings, name) < np.inf:
+            msg = f"{name} is {getattr(settings, name)}; a standard uncertainty is 0 or more."
+            raise DomainError(msg)
+    made = _blood(settings.law, settings.plasma_viscosity_mpa_s, parameters, settings.hematocrit_se)
+    return replace(made, plasma_viscosity_se_mpa_s=settings.plasma_viscosity_se_mpa_s)
 
 
 def _blood(
