@@ -11,6 +11,8 @@ from vasohm_synthetic.trees import Root, TreeShape, grow_trees, tree_shape_probl
 
 FUNDUS_TREE = TreeShape(root_radius_px=5.5, min_radius_px=1.2, length_ratio=12.0, margin_px=3.0)
 
+MAX_TRUNKS = 12  # arteriolar ones that find room around a disc
+
 
 @dataclass(frozen=True, slots=True)
 class FundusShape:
@@ -35,11 +37,62 @@ def fundus_shape_problems(shape: FundusShape) -> list[str]:
         (0 <= shape.fov_radius <= 1, f"fov_radius {shape.fov_radius:g} is not within 0 and 1"),
         (shape.disc_radius_px > 0, f"disc_radius_px {shape.disc_radius_px:g} is not positive"),
         (shape.centre_radius > 0, f"centre_radius {shape.centre_radius:g} is not positive"),
-        (len(shape.trunks_deg) > 0, "trunks_deg is empty"),
+        (0 < len(shape.trunks_deg) <= MAX_TRUNKS, f"trunks_deg holds {len(shape.trunks_deg)}, not 1 to {MAX_TRUNKS}"),
         (shape.venule_ratio > 0, f"venule_ratio {shape.venule_ratio:g} is not positive"),
     ]
     problems = [problem for fine, problem in checks if not fine]
     return problems + [f"tree: {problem}" for problem in tree_shape_problems(shape.tree)]
+
+
+def fundus_fit_problems(shape: FundusShape, size: tuple[int, int]) -> list[str]:
+    """Say why a possible fundus does not fit into a picture of `size` (h, w); empty where it does."""
+    if fundus_shape_problems(shape):
+        return []
+    disc, centre = _places(shape, size)
+    field = _field_of_view(shape, size) or Circle(0.5 * size[1], 0.5 * size[0], 0.5 * min(size))
+    trunk = shape.tree.root_radius_px * max(1.0, shape.venule_ratio)
+    picture = f"{size[1]} x {size[0]} px"
+    checks = [
+        (
+            8 * trunk < field.radius_px,
+            f"a field of view of {field.radius_px:.0f} px in {picture} is too small for trunks of {trunk:g} px",
+        ),
+        (
+            4 * disc.radius_px < 3 * field.radius_px,
+            f"disc_radius_px {disc.radius_px:g} is too large for a field of view of {field.radius_px:.0f} px",
+        ),
+        (
+            _within(disc, shape, size),
+            f"disc_x {shape.disc_x:g}, disc_y {shape.disc_y:g} lies outside the field of view",
+        ),
+        (
+            _within(centre, shape, size),
+            f"centre_x {shape.centre_x:g}, centre_y {shape.centre_y:g} lies outside the field of view",
+        ),
+    ]
+    return [problem for fine, problem in checks if not fine]
+
+
+def _field_of_view(shape: FundusShape, size: tuple[int, int]) -> Circle | None:
+    height, width = size
+    return Circle(0.5 * (width - 1), 0.5 * (height - 1), shape.fov_radius * min(size)) if shape.fov_radius else None
+
+
+def _places(shape: FundusShape, size: tuple[int, int]) -> tuple[Circle, Circle]:
+    """Optic disc and dark centre."""
+    height, width = size
+    return (
+        Circle(shape.disc_x * width, shape.disc_y * height, shape.disc_radius_px),
+        Circle(shape.centre_x * width, shape.centre_y * height, shape.centre_radius * min(size)),
+    )
+
+
+def _within(place: Circle, shape: FundusShape, size: tuple[int, int]) -> bool:
+    field = _field_of_view(shape, size)
+    inside = 0 <= place.x_px < size[1] and 0 <= place.y_px < size[0]
+    if field is not None:
+        inside &= bool(np.hypot(place.x_px - field.x_px, place.y_px - field.y_px) < field.radius_px)
+    return inside
 
 
 def fundus_scene(shape: FundusShape, size: tuple[int, int], rng: np.random.Generator) -> Scene:
@@ -48,14 +101,11 @@ def fundus_scene(shape: FundusShape, size: tuple[int, int], rng: np.random.Gener
     Raises
     ------
     RecipeError
-        When the shape is impossible.
+        When the shape is impossible or does not fit into the picture.
     """
-    refuse(fundus_shape_problems(shape))
-    height, width = size
-    side = min(size)
-    fov = Circle(0.5 * (width - 1), 0.5 * (height - 1), shape.fov_radius * side) if shape.fov_radius else None
-    disc = Circle(shape.disc_x * width, shape.disc_y * height, shape.disc_radius_px)
-    centre = Circle(shape.centre_x * width, shape.centre_y * height, shape.centre_radius * side)
+    refuse(fundus_shape_problems(shape) + fundus_fit_problems(shape, size))
+    fov = _field_of_view(shape, size)
+    disc, centre = _places(shape, size)
     roots = []
     for number, heading_deg in enumerate(shape.trunks_deg):
         turn = 1.0 if number % 2 else -1.0

@@ -14,6 +14,7 @@ from PIL import Image
 from vasohm_synthetic.arrays import AnyIntImage
 from vasohm_synthetic.backdrop import digitise
 from vasohm_synthetic.clearance import Field
+from vasohm_synthetic.errors import RecipeError, refuse
 from vasohm_synthetic.fundus import fundus_scene
 from vasohm_synthetic.mesh import OUTSIDE_PX, mesh_scene
 from vasohm_synthetic.recipe import DESIGN, Entry, ImageRecipe, Recipe, SceneRecipe
@@ -40,16 +41,14 @@ def make_phantoms(recipe: Recipe, out_dir: Path) -> tuple[str, ...]:
     Raises
     ------
     RecipeError
-        When a scene cannot be made.
+        When a scene cannot be made, before anything is written; or when the folder is a file, or holds a study that
+        is none of phantoms.
     """
     out_dir = Path(out_dir)
-    out_dir.mkdir(parents=True, exist_ok=True)
+    scenes = _scenes(recipe)
+    _take_over(out_dir)
     rows = []
-    beds: dict[str, Scene] = {}
-    for image in recipe.images:
-        if image.bed not in beds:
-            beds[image.bed] = build_bed(recipe, image)
-        scene = retone(beds[image.bed], image.tones, image.pixel_size_um)
+    for image, scene in zip(recipe.images, scenes, strict=True):
         picture = draw(recipe, image, scene)
         tables = truth_tables(
             scene,
@@ -71,6 +70,40 @@ def make_phantoms(recipe: Recipe, out_dir: Path) -> tuple[str, ...]:
     _write(out_dir / "images.csv", _sheet(rows))
     _write(out_dir / "study.toml", study_text(recipe))
     return tuple(image.image_id for image in recipe.images)
+
+
+def _scenes(recipe: Recipe) -> list[Scene]:
+    """Make the scene of every picture, and tell all that cannot be made at once, by image."""
+    beds: dict[str, Scene] = {}
+    scenes, problems = [], []
+    for image in recipe.images:
+        try:
+            if image.bed not in beds:
+                beds[image.bed] = build_bed(recipe, image)
+            scene = beds[image.bed]
+            for number, tone in enumerate(image.tones, 1):
+                toned = retone(scene, [tone], image.pixel_size_um)
+                if all(a is b for a, b in zip(scene.vessels, toned.vessels, strict=True)):
+                    problems.append(f"image {image.image_id!r} tone {number}: changes no vessel; none is of its kind")
+                scene = toned
+            scenes.append(scene)
+        except RecipeError as wrong:
+            problems += [f"image {image.image_id!r}: {problem}" for problem in wrong.problems]
+    refuse(problems)
+    return scenes
+
+
+def _take_over(out_dir: Path) -> None:
+    """Create the folder, unless it is one whose files are not ours to write over."""
+    if out_dir.exists() and not out_dir.is_dir():
+        refuse([f"{out_dir}: is a file. Give another folder"])
+    held = [name for name in ("study.toml", "images.csv") if (out_dir / name).exists()]
+    if held and not (out_dir / "truth").is_dir():
+        refuse([f"{out_dir}: holds {' and '.join(held)} that no phantoms belong to. Give another folder"])
+    try:
+        out_dir.mkdir(parents=True, exist_ok=True)
+    except OSError as fault:
+        refuse([f"{out_dir}: cannot be created: {fault.strerror}. Give another folder"])
 
 
 def build_bed(recipe: Recipe, image: ImageRecipe) -> Scene:

@@ -11,9 +11,10 @@ from vasohm_synthetic.arrays import FloatArray, IntArray
 from vasohm_synthetic.curves import arc_length, process, resample
 from vasohm_synthetic.errors import refuse
 from vasohm_synthetic.hydraulics import networks_of, solve
-from vasohm_synthetic.scene import AXIS_STEP_PX, Scene, Vessel
+from vasohm_synthetic.scene import AXIS_STEP_PX, MAX_LN_SD, Scene, Vessel
 
 OUTSIDE_PX = 20.0  # the feeders go on so far beyond the border, for the blur
+LEAST_RATIO = 0.5  # a radius cannot vary within a fraction of itself
 SMOOTHING = 0.12  # of the spacing: rounds the corners where two cell walls became one vessel
 
 Edge = tuple[int, int]
@@ -40,14 +41,27 @@ def mesh_shape_problems(shape: MeshShape) -> list[str]:
     """Say everything that is impossible about a mesh's shape; empty where nothing is."""
     names = ("spacing_px", "radius_px", "feeder_radius_px", "variation_ratio")
     problems = [f"{n} {getattr(shape, n):g} is not positive" for n in names if not getattr(shape, n) > 0]
-    not_negative = ("radius_sd", "variation_sd", "shortest_px", "margin_px", "gain_sd")
+    not_negative = ("shortest_px", "margin_px")
     problems += [f"{n} {getattr(shape, n):g} is negative" for n in not_negative if not getattr(shape, n) >= 0]
+    problems += [
+        f"{n} {getattr(shape, n):g} is not within 0 and {MAX_LN_SD:g}"
+        for n in ("radius_sd", "variation_sd", "gain_sd")
+        if not 0 <= getattr(shape, n) <= MAX_LN_SD
+    ]
     checks = [
         (0 <= shape.jitter <= 0.3, f"jitter {shape.jitter:g} is not within 0 and 0.3"),
         (0 <= shape.drop <= 0.5, f"drop {shape.drop:g} is not within 0 and 0.5"),
         (
             shape.spacing_px > 8 * shape.radius_px,
             f"radius_px {shape.radius_px:g} leaves no room between vessels {shape.spacing_px:g} px apart",
+        ),
+        (
+            shape.spacing_px > 2 * shape.feeder_radius_px,
+            f"feeder_radius_px {shape.feeder_radius_px:g} is wider than cells {shape.spacing_px:g} px apart",
+        ),
+        (
+            shape.variation_ratio >= LEAST_RATIO,
+            f"variation_ratio {shape.variation_ratio:g} is below {LEAST_RATIO:g}",
         ),
     ]
     return problems + [problem for fine, problem in checks if not fine]

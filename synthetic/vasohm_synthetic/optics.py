@@ -7,6 +7,10 @@ PROFILES = ("slab", "cylinder", "absorber")
 POLARITIES = ("dark", "bright")
 BLUR_IN = ("light", "density")
 MAX_DENSITY = 5.0  # 0.7 % of the light is left
+MAX_BLUR_PX = 50.0  # wider blurs leave no vessel to be seen, and would fill the memory
+MAX_NOISE_BLUR_PX = 20.0
+MAX_TEXTURE_PX = 500.0
+MAX_PHOTONS = 1e12  # the noise is 1e-6 then
 
 
 @dataclass(frozen=True, slots=True)
@@ -89,7 +93,7 @@ def optics_problems(optics: Optics) -> list[str]:
         ),
         (optics.reference_radius_px > 0, f"reference_radius_px {optics.reference_radius_px:g} is not positive"),
         (optics.absorption_per_px > 0, f"absorption_per_px {optics.absorption_per_px:g} is not positive"),
-        (optics.blur_px >= 0, f"blur_px {optics.blur_px:g} is negative"),
+        (0 <= optics.blur_px <= MAX_BLUR_PX, _beyond("blur_px", optics.blur_px, MAX_BLUR_PX)),
         (0 <= optics.reflex <= 1, f"reflex {optics.reflex:g} is not within 0 and 1"),
         (optics.reflex_width > 0, f"reflex_width {optics.reflex_width:g} is not positive"),
         (1 <= optics.supersample <= 16, f"supersample {optics.supersample} is not within 1 and 16"),
@@ -97,15 +101,28 @@ def optics_problems(optics: Optics) -> list[str]:
         (0 <= backdrop.vignette < 1, f"vignette {backdrop.vignette:g} is not within 0 and 1"),
         (abs(backdrop.slope) < 2, f"slope {backdrop.slope:g} makes the background negative"),
         (backdrop.texture_sd >= 0, f"texture_sd {backdrop.texture_sd:g} is negative"),
-        (backdrop.texture_px > 0, f"texture_px {backdrop.texture_px:g} is not positive"),
-        (backdrop.centre < 1, f"centre {backdrop.centre:g} makes the background negative"),
-        (camera.photons >= 0, f"photons {camera.photons:g} is negative"),
+        (0 < backdrop.texture_px <= MAX_TEXTURE_PX, _beyond("texture_px", backdrop.texture_px, MAX_TEXTURE_PX)),
+        (backdrop.disc >= 0, f"disc {backdrop.disc:g} is negative"),
+        (0 <= backdrop.centre < 1, f"centre {backdrop.centre:g} is not within 0 and 1"),
+        (0 <= camera.photons <= MAX_PHOTONS, _beyond("photons", camera.photons, MAX_PHOTONS)),
         (camera.noise_sd >= 0, f"noise_sd {camera.noise_sd:g} is negative"),
-        (camera.noise_blur_px >= 0, f"noise_blur_px {camera.noise_blur_px:g} is negative"),
+        (
+            0 <= camera.noise_blur_px <= MAX_NOISE_BLUR_PX,
+            _beyond("noise_blur_px", camera.noise_blur_px, MAX_NOISE_BLUR_PX),
+        ),
         (camera.bits in (8, 16), f"bits {camera.bits} is neither 8 nor 16"),
     ]
     checks += [
         (0 < channel.background <= 1, f"background {channel.background:g} is not within 0 and 1")
         for channel in optics.channels
     ]
+    checks += [
+        (gain >= 0, f"gains {vessel_class} {gain:g} is negative")
+        for channel in optics.channels
+        for vessel_class, gain in channel.gains.items()
+    ]
     return [problem for fine, problem in checks if not fine]
+
+
+def _beyond(name: str, value: float, most: float) -> str:
+    return f"{name} {value:g} is not within 0 and {most:g}"

@@ -1,7 +1,9 @@
 """Strict reading of tables: unknown keys, wrong types and wrong words become problems, never exceptions."""
 
 import difflib
+import math
 import re
+import reprlib
 import types
 from collections.abc import Mapping, Sequence
 from dataclasses import fields as dataclass_fields
@@ -81,6 +83,14 @@ class Fields:
         value = self._convert(key, table.get(key, default), tuple[float, float])
         return default if value is None else (float(value[0]), float(value[1]))
 
+    def table(self, table: Mapping[str, Any], key: str) -> Mapping[str, Any]:
+        """A table, empty where there is none."""
+        value = table.get(key, {})
+        if not isinstance(value, Mapping):
+            self.problems.append(f"{self.where} {key}: must be a table, is {value!r}".strip())
+            return {}
+        return value
+
     def tables(self, table: Mapping[str, Any], key: str) -> list[Mapping[str, Any]]:
         """An array of tables, empty where there is none."""
         value = table.get(key, [])
@@ -89,15 +99,18 @@ class Fields:
             return []
         return value
 
-    def build(self, cls: type[Built], table: Any, where: str, **parts: Any) -> Built:
-        """Make a dataclass whose fields all have defaults from a table; `parts` are fields already made.
+    def build(
+        self, cls: type[Built], table: Any, where: str, *, fallback: Mapping[str, Any] | None = None, **parts: Any
+    ) -> Built:
+        """Make a dataclass from a table; `parts` are fields already made.
 
-        A field that cannot be understood keeps its default, so that its problem is told once.
+        A field that is absent or cannot be understood keeps its default, or what `fallback` holds in its place, so
+        that its problem is told once.
         """
         inner = Fields(where, self.problems)
         hints = get_type_hints(cls)
         names = [f.name for f in dataclass_fields(cls) if f.name not in parts]  # type: ignore[arg-type]
-        values = {}
+        values = dict(fallback or {})
         for key, value in inner.known(table, names).items():
             converted = inner._convert(key, value, hints[key])
             if converted is not None:
@@ -121,9 +134,14 @@ class Fields:
         else:
             words = {float: "a finite number", int: "a whole number", bool: "true or false", str: "a text"}
             expected = words[hint]
-        self.problems.append(f"{self.where} {key}: must be {expected}, is {value!r}")
+        self.problems.append(f"{self.where} {key}: must be {expected}, is {reprlib.repr(value)}")
         return None
 
 
 def _is_number(value: Any) -> bool:
-    return isinstance(value, (int, float)) and not isinstance(value, bool) and abs(value) < float("inf")
+    if isinstance(value, bool) or not isinstance(value, (int, float)):
+        return False
+    try:
+        return math.isfinite(float(value))
+    except OverflowError:  # a whole number of more than 308 digits
+        return False

@@ -8,10 +8,11 @@ from typing import Any
 
 from vasohm_synthetic.blood import Blood, blood_problems
 from vasohm_synthetic.errors import RecipeError, refuse
-from vasohm_synthetic.fundus import FUNDUS_TREE, FundusShape, fundus_shape_problems
+from vasohm_synthetic.fundus import FUNDUS_TREE, FundusShape, fundus_fit_problems, fundus_shape_problems
 from vasohm_synthetic.mesh import MeshShape, mesh_shape_problems
 from vasohm_synthetic.optics import Backdrop, Camera, Channel, Optics, optics_problems
 from vasohm_synthetic.parse import Fields, merge, name_problem
+from vasohm_synthetic.scene import CLASSES, MAX_SIDE_PX
 from vasohm_synthetic.tone import Tone, tone_problems
 from vasohm_synthetic.trees import TreeShape, tree_shape_problems
 from vasohm_synthetic.tubes import Tube, tube_problems
@@ -21,7 +22,6 @@ SIDES = ("left", "right", "top", "bottom")
 PRESETS = ("fundus", "angiogram", "fluorescence", "intravital")
 FILE_FORMATS = ("png", "tif")
 DESIGN = ("subject", "eye", "group", "condition", "time", "note")
-MAX_SIDE_PX = 30_000
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,12 +90,15 @@ def read_recipe(path: Path) -> Recipe:
         When the file is missing or no TOML, a key is unknown, or a value impossible; with all problems found.
     """
     try:
-        table = tomllib.loads(Path(path).read_text(encoding="utf-8"))
+        return parse_recipe(tomllib.loads(Path(path).read_text(encoding="utf-8")))
     except FileNotFoundError:
         raise RecipeError([f"{path}: there is no such file"]) from None
+    except OSError as fault:
+        raise RecipeError([f"{path}: cannot be read: {fault.strerror}"]) from None
     except (tomllib.TOMLDecodeError, UnicodeDecodeError) as wrong:
         raise RecipeError([f"{path}: is no TOML: {wrong}"]) from None
-    return parse_recipe(table)
+    except RecipeError as wrong:
+        raise RecipeError([f"{path}: {problem}" for problem in wrong.problems]) from None
 
 
 def parse_recipe(table: Mapping[str, Any]) -> Recipe:
@@ -138,6 +141,7 @@ def parse_recipe(table: Mapping[str, Any]) -> Recipe:
 def _images(top: Mapping[str, Any], pixel_size_um: float, problems: list[str]) -> tuple[ImageRecipe, ...]:
     images = []
     entries = top.get("image", [])
+    common = {part: Fields("", problems).table(top, part) for part in ("scene", "optics")}
     if not isinstance(entries, list) or not entries:
         problems.append("image: a recipe needs one or more [[image]] tables")
         return ()
@@ -145,7 +149,9 @@ def _images(top: Mapping[str, Any], pixel_size_um: float, problems: list[str]) -
         fields = Fields(f"image {number}", problems)
         said = fields.known(entry, ("image_id", "bed", "scene", "optics", "tone", "pixel_size_um", *DESIGN))
         image_id = fields.text(said, "image_id", f"phantom-{number:02d}")
-        scene, optics = (merge(top.get(part, {}), said.get(part, {})) for part in ("scene", "optics"))
+        own = {part: fields.table(said, part) for part in common}
+        scene, optics = (merge(common[part], own[part]) for part in ("scene", "optics"))
+        problems += [f"image {number} scene {problem}" for problem in _misplaced(own["scene"], scene)]
         images.append(
             ImageRecipe(
                 image_id=image_id,
@@ -160,21 +166,42 @@ def _images(top: Mapping[str, Any], pixel_size_um: float, problems: list[str]) -
     return tuple(images)
 
 
+def _misplaced(own: Mapping[str, Any], merged: Mapping[str, Any]) -> list[str]:
+    """What a scene asks for that its kind does not have; an image of another kind than the rest replaces theirs."""
+    kind = merged.get("kind")
+    if kind is None:
+        return [f"kind: not given; take one of {', '.join(KINDS)}"]
+    parts = {"tube": "tubes", "entry": "tree", "tree": "tree", "mesh": "mesh", "fundus": "fundus"}
+    told = own if "kind" in own else merged
+    problems = [
+        f"{part}: has no effect on kind {kind!r}, it belongs to kind {owner!r}"
+        for part, owner in parts.items()
+        if part in told and owner != kind and kind in KINDS
+    ]
+    if kind == "tubes" and "tube" not in merged:
+        problems.append("tube: there is none; give [[scene.tube]], or tube = [] for a picture without vessels")
+    return problems
+
+
 def _scene(table: Mapping[str, Any], fields: Fields) -> SceneRecipe:
     said = fields.known(table, ("kind", "width_px", "height_px", "tube", "entry", "tree", "mesh", "fundus"))
-    fundus = dict(said.get("fundus", {}))
-    fundus_tree = merge(asdict(FUNDUS_TREE), fundus.pop("tree", {}))
+    fundus = dict(fields.table(said, "fundus"))
+    fundus_tree = merge(asdict(FUNDUS_TREE), Fields(f"{fields.where} fundus", fields.problems).table(fundus, "tree"))
+    fundus.pop("tree", None)
     width, height = fields.whole(said, "width_px", 512), fields.whole(said, "height_px", 512)
     tubes = []
-    for tube in fields.tables(said, "tube"):
+    for number, tube in enumerate(fields.tables(said, "tube"), 1):
         middle = {"x_px": 0.5 * (width - 1), "y_px": 0.5 * (height - 1), "radius_px": 5.0}
-        tubes.append(fields.build(Tube, merge(middle, tube), f"{fields.where} tube"))
+        tubes.append(fields.build(Tube, tube, f"{fields.where} tube {number}", fallback=middle))
     return SceneRecipe(
         kind=fields.word(said, "kind", "tree", KINDS),
         width_px=width,
         height_px=height,
         tubes=tuple(tubes),
-        entries=tuple(fields.build(Entry, e, f"{fields.where} entry") for e in fields.tables(said, "entry"))
+        entries=tuple(
+            fields.build(Entry, entry, f"{fields.where} entry {number}")
+            for number, entry in enumerate(fields.tables(said, "entry"), 1)
+        )
         or (Entry(),),
         tree=fields.build(TreeShape, said.get("tree", {}), f"{fields.where} tree"),
         mesh=fields.build(MeshShape, said.get("mesh", {}), f"{fields.where} mesh"),
@@ -191,13 +218,12 @@ def _optics(table: Mapping[str, Any], fields: Fields) -> Optics:
     said = dict(table)
     channels = []
     for channel in fields.tables(said, "channel"):
-        gains = channel.get("gains", {})
         known = Fields(f"{fields.where} channel gains", fields.problems)
-        known.known(gains, ("arteriole", "venule", "capillary"))
+        gains = known.known(channel.get("gains", {}), ("arteriole", "venule", "capillary"))
         clean = {key: known.number(gains, key, 1.0) for key in gains}
         rest = {key: value for key, value in channel.items() if key != "gains"}
         channels.append(fields.build(Channel, rest, f"{fields.where} channel", gains=clean))
-    parts = {
+    parts: dict[str, Any] = {
         "backdrop": fields.build(Backdrop, said.pop("backdrop", {}), f"{fields.where} backdrop"),
         "camera": fields.build(Camera, said.pop("camera", {}), f"{fields.where} camera"),
         "channels": tuple(channels) or (Channel(),),
@@ -234,6 +260,11 @@ def recipe_problems(recipe: Recipe) -> list[str]:
         problems += [f"{where} {problem}" for problem in _scene_problems(image.scene)]
         problems += [f"{where} optics: {problem}" for problem in optics_problems(image.optics)]
         problems += [f"{where} tone: {problem}" for tone in image.tones for problem in tone_problems(tone)]
+        if image.optics.polarity != recipe.images[0].optics.polarity:
+            problems.append(
+                f"{where} optics: polarity {image.optics.polarity!r} is not that of image 1; the study file beside the "
+                "images holds one for all: make two recipes"
+            )
     beds: dict[str, SceneRecipe] = {}
     for number, image in enumerate(recipe.images, 1):
         if beds.setdefault(image.bed, image.scene) != image.scene:
@@ -253,7 +284,8 @@ def _scene_problems(scene: SceneRecipe) -> list[str]:
             problems += [f"scene tube {number}: {problem}" for problem in tube_problems(tube, size)]
     elif scene.kind == "tree":
         problems += [f"scene tree: {problem}" for problem in tree_shape_problems(scene.tree)]
-        problems += [f"scene entry: {problem}" for entry in scene.entries for problem in _entry_problems(entry)]
+        for number, entry in enumerate(scene.entries, 1):
+            problems += [f"scene entry {number}: {problem}" for problem in _entry_problems(entry)]
         widest = max([scene.tree.root_radius_px] + [e.radius_px or 0.0 for e in scene.entries])
         if 4 * widest > min(size):
             problems.append(f"scene tree: root radius {widest:g} px is too large for {size[1]} x {size[0]} px")
@@ -261,6 +293,7 @@ def _scene_problems(scene: SceneRecipe) -> list[str]:
         problems += [f"scene mesh: {problem}" for problem in mesh_shape_problems(scene.mesh)]
     else:
         problems += [f"scene fundus: {problem}" for problem in fundus_shape_problems(scene.fundus)]
+        problems += [f"scene fundus: {problem}" for problem in fundus_fit_problems(scene.fundus, size)]
     return problems
 
 
@@ -269,6 +302,7 @@ def _entry_problems(entry: Entry) -> list[str]:
         (entry.side in SIDES, f"side {entry.side!r} is none of {SIDES}"),
         (0.05 <= entry.at <= 0.95, f"at {entry.at:g} is not within 0.05 and 0.95"),
         (abs(entry.turn_deg) <= 45, f"turn_deg {entry.turn_deg:g} is not within -45 and 45"),
+        (entry.vessel_class in CLASSES, f"vessel_class {entry.vessel_class!r} is none of {CLASSES}"),
         (entry.radius_px is None or entry.radius_px > 0, f"radius_px {entry.radius_px} is not positive"),
     ]
     return [problem for fine, problem in checks if not fine]

@@ -9,6 +9,8 @@ from vasohm_synthetic.errors import refuse
 
 AXIS_STEP_PX = 0.25  # a chord of this length lies within 0.001 px of a bend of 10 px radius
 CLASSES = ("", "arteriole", "venule", "capillary")
+MAX_LN_SD = 1.0  # of the logarithm of a radius or a contrast: a factor of 7 within two of them
+MAX_SIDE_PX = 30_000
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -22,6 +22,12 @@ def tone_problems(tone: Tone) -> list[str]:
         (0.1 <= tone.radius_factor <= 5, f"radius_factor {tone.radius_factor:g} is not within 0.1 and 5"),
         (tone.vessel_class in CLASSES, f"vessel_class {tone.vessel_class!r} is none of {CLASSES}"),
     ]
+    low, high = tone.radius_um_above, tone.radius_um_below
+    checks += [
+        (low is None or low >= 0, f"radius_um_above {low} is negative"),
+        (high is None or high > 0, f"radius_um_below {high} is not positive"),
+        (low is None or high is None or low < high, f"radius_um_above {low} is not less than radius_um_below {high}"),
+    ]
     return [problem for fine, problem in checks if not fine]
 
 

@@ -8,7 +8,8 @@ import numpy as np
 from vasohm_synthetic.arrays import FloatArray
 from vasohm_synthetic.clearance import Field, Ground, Path
 from vasohm_synthetic.curves import Curve, arc_length, process, resample, wander
-from vasohm_synthetic.scene import AXIS_STEP_PX, Circle, Scene, Vessel
+from vasohm_synthetic.errors import refuse
+from vasohm_synthetic.scene import AXIS_STEP_PX, MAX_LN_SD, MAX_SIDE_PX, Circle, Scene, Vessel
 
 
 @dataclass(frozen=True, slots=True)
@@ -36,6 +37,11 @@ class TreeShape:
     draws: int = 40  # proposals for a branching before the tip is left an end
 
 
+MAX_LENGTH_RATIO = 200.0  # longer segments leave every picture before they branch
+MAX_DRAWS = 10_000
+LEAST_RATIO = 0.5  # a radius cannot vary within a fraction of itself
+
+
 def tree_shape_problems(shape: TreeShape) -> list[str]:
     """Say everything that is impossible about a tree's shape; empty where nothing is."""
     positive = {
@@ -45,29 +51,42 @@ def tree_shape_problems(shape: TreeShape) -> list[str]:
         "bend_radius_px": shape.bend_radius_px,
         "variation_ratio": shape.variation_ratio,
     }
-    not_negative = {
-        "exponent_sd": shape.exponent_sd,
-        "angle_sd_deg": shape.angle_sd_deg,
-        "length_sd": shape.length_sd,
-        "variation_sd": shape.variation_sd,
-        "gap_px": shape.gap_px,
-        "margin_px": shape.margin_px,
-        "gain_sd": shape.gain_sd,
+    at_most = {
+        "exponent_sd": (shape.exponent_sd, 1.0),
+        "angle_sd_deg": (shape.angle_sd_deg, 45.0),
+        "length_sd": (shape.length_sd, MAX_LN_SD),
+        "variation_sd": (shape.variation_sd, MAX_LN_SD),
+        "gap_px": (shape.gap_px, float(MAX_SIDE_PX)),
+        "margin_px": (shape.margin_px, float(MAX_SIDE_PX)),
+        "gain_sd": (shape.gain_sd, MAX_LN_SD),
     }
     problems = [f"{name} {value:g} is not positive" for name, value in positive.items() if not value > 0]
-    problems += [f"{name} {value:g} is negative" for name, value in not_negative.items() if not value >= 0]
+    problems += [
+        f"{name} {value:g} is not within 0 and {most:g}"
+        for name, (value, most) in at_most.items()
+        if not 0 <= value <= most
+    ]
     checks = [
         (
             shape.min_radius_px <= shape.root_radius_px,
-            f"min_radius_px {shape.min_radius_px:g} is above root_radius_px",
+            f"min_radius_px {shape.min_radius_px:g} is above root_radius_px {shape.root_radius_px:g}",
         ),
+        (
+            shape.bend_radius_px > shape.root_radius_px,
+            f"bend_radius_px {shape.bend_radius_px:g} is not above root_radius_px {shape.root_radius_px:g}",
+        ),
+        (
+            shape.variation_ratio >= LEAST_RATIO,
+            f"variation_ratio {shape.variation_ratio:g} is below {LEAST_RATIO:g}",
+        ),
+        (shape.length_ratio <= MAX_LENGTH_RATIO, f"length_ratio {shape.length_ratio:g} is above {MAX_LENGTH_RATIO:g}"),
         (2.0 <= shape.exponent <= 5.0, f"exponent {shape.exponent:g} is not within 2 and 5"),
         (
             0 < shape.asymmetry[0] <= shape.asymmetry[1] <= 1,
             f"asymmetry {list(shape.asymmetry)} is no range within 0 and 1",
         ),
         (0 <= shape.taper < 1, f"taper {shape.taper:g} is not within 0 and 1"),
-        (shape.draws >= 1, f"draws {shape.draws} is below 1"),
+        (1 <= shape.draws <= MAX_DRAWS, f"draws {shape.draws} is not within 1 and {MAX_DRAWS}"),
     ]
     return problems + [problem for fine, problem in checks if not fine]
 
@@ -172,13 +191,25 @@ def grow_trees(
         Picture, field of view and margin.
     discs : tuple[Circle, ...]
         Optic disc and dark centre to be put into the scene; the trees do not heed them.
+
+    Raises
+    ------
+    RecipeError
+        When a trunk finds no room.
     """
     bed = _Bed(field, shape, rng)
-    for root in roots:
+    roomless = []
+    for number, root in enumerate(roots, 1):
         trunk = _grow_trunk(root, shape, bed.ground, rng)
-        if trunk is not None:
-            bed.nodes.append((float(trunk.x[0]), float(trunk.y[0])))
-            bed.keep(trunk, len(bed.nodes) - 1, root)
+        if trunk is None:
+            roomless.append(
+                f"trunk {number} of {len(roots)}, from x {root.x_px:.0f}, y {root.y_px:.0f} px, finds no room: "
+                "move it, make it narrower or the picture larger, or change the seed"
+            )
+            continue
+        bed.nodes.append((float(trunk.x[0]), float(trunk.y[0])))
+        bed.keep(trunk, len(bed.nodes) - 1, root)
+    refuse(roomless)
     while bed.tips:
         tip = heapq.heappop(bed.tips)[2]
         for limb in _branch(tip, shape, bed.ground, rng):

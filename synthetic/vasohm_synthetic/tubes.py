@@ -8,9 +8,11 @@ import numpy as np
 from vasohm_synthetic.arrays import FloatArray
 from vasohm_synthetic.curves import Curve, arc, arc_length, process, resample, sinusoid, straight
 from vasohm_synthetic.errors import refuse
-from vasohm_synthetic.scene import CLASSES, Scene, Vessel
+from vasohm_synthetic.scene import CLASSES, MAX_LN_SD, MAX_SIDE_PX, Scene, Vessel
 
 TUBE_SHAPES = ("straight", "arc", "sine", "ring")
+LEAST_CORRELATION_PX = 0.5  # a radius cannot vary from one step of the axis to the next
+LONGEST_PX = 10.0 * MAX_SIDE_PX
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,26 +45,76 @@ class Tube:
 def tube_problems(tube: Tube, shape: tuple[int, int]) -> list[str]:
     """Say everything that is impossible about a tube in a picture of `shape`; empty where nothing is."""
     end = tube.radius_px if tube.radius_end_px is None else tube.radius_end_px
+    widest = max(tube.radius_px, end)
     checks = [
         (tube.shape in TUBE_SHAPES, f"shape {tube.shape!r} is none of {TUBE_SHAPES}"),
         (tube.radius_px > 0, f"radius_px {tube.radius_px:g} is not positive"),
-        (end > 0, f"radius_end_px {end:g} is not positive"),
-        (2 * max(tube.radius_px, end) < min(shape), f"radius_px {max(tube.radius_px, end):g} does not fit {shape}"),
-        (tube.length_px > 1, f"length_px {tube.length_px:g} is not above 1"),
+        (tube.radius_end_px is None or end > 0, f"radius_end_px {end:g} is not positive"),
         (
-            tube.shape not in ("arc", "ring") or tube.bend_radius_px > max(tube.radius_px, end),
-            f"bend_radius_px {tube.bend_radius_px:g} is not above the tube's radius",
+            2 * widest < min(shape),
+            f"radius_px {widest:g} does not fit {_size(shape)}",
+        ),
+        (1 < tube.length_px <= LONGEST_PX, f"length_px {tube.length_px:g} is not within 1 and {LONGEST_PX:g}"),
+        (_reaches(tube, shape), f"x_px {tube.x_px:g}, y_px {tube.y_px:g} lies wholly outside {_size(shape)}"),
+        (
+            tube.shape not in ("arc", "ring") or widest < tube.bend_radius_px <= LONGEST_PX,
+            f"bend_radius_px {tube.bend_radius_px:g} is not within the tube's radius and {LONGEST_PX:g}",
+        ),
+        (
+            tube.shape != "arc" or tube.length_px < 2 * (np.pi * tube.bend_radius_px - widest),
+            f"length_px {tube.length_px:g} closes the arc of bend_radius_px {tube.bend_radius_px:g}: take shape 'ring'",
+        ),
+        (
+            tube.shape != "sine" or _sharpest_px(tube) > widest,
+            f"amplitude_px {tube.amplitude_px:g} and period_px {tube.period_px:g} bend the tube within its own radius",
         ),
         (tube.period_px > 0, f"period_px {tube.period_px:g} is not positive"),
-        (tube.amplitude_px >= 0, f"amplitude_px {tube.amplitude_px:g} is negative"),
-        (tube.variation_sd >= 0, f"variation_sd {tube.variation_sd:g} is negative"),
-        (tube.variation_px > 0, f"variation_px {tube.variation_px:g} is not positive"),
+        (
+            0 <= tube.amplitude_px <= MAX_SIDE_PX,
+            f"amplitude_px {tube.amplitude_px:g} is not within 0 and {MAX_SIDE_PX}",
+        ),
+        (
+            0 <= tube.variation_sd <= MAX_LN_SD,
+            f"variation_sd {tube.variation_sd:g} is not within 0 and {MAX_LN_SD:g}",
+        ),
+        (
+            tube.variation_px >= LEAST_CORRELATION_PX,
+            f"variation_px {tube.variation_px:g} is below {LEAST_CORRELATION_PX:g}",
+        ),
         (0 <= tube.narrowing < 1, f"narrowing {tube.narrowing:g} is not within 0 and 1"),
         (tube.narrowing_px > 0, f"narrowing_px {tube.narrowing_px:g} is not positive"),
+        (
+            tube.narrowing == 0 or tube.narrowing_px <= _length_px(tube),
+            f"narrowing_px {tube.narrowing_px:g} is longer than the tube ({_length_px(tube):g} px)",
+        ),
         (tube.vessel_class in CLASSES, f"vessel_class {tube.vessel_class!r} is none of {CLASSES}"),
         (tube.gain > 0, f"gain {tube.gain:g} is not positive"),
     ]
     return [problem for fine, problem in checks if not fine]
+
+
+def _length_px(tube: Tube) -> float:
+    return 2 * np.pi * tube.bend_radius_px if tube.shape == "ring" else tube.length_px
+
+
+def _sharpest_px(tube: Tube) -> float:
+    """Radius of curvature at the crest of a sine: 1 over its second derivative."""
+    if not (tube.period_px > 0 and tube.amplitude_px > 0):
+        return np.inf
+    return float((tube.period_px / (2 * np.pi)) ** 2 / tube.amplitude_px)
+
+
+def _reaches(tube: Tube, shape: tuple[int, int]) -> bool:
+    """Whether some of the axis may lie in the picture; True where the tube is impossible for another reason."""
+    possible = 1 < tube.length_px <= LONGEST_PX and 0 < tube.bend_radius_px <= LONGEST_PX
+    if not (possible and tube.period_px > 0 and abs(tube.amplitude_px) <= MAX_SIDE_PX and tube.shape in TUBE_SHAPES):
+        return True
+    x, y = _axis(tube)
+    return bool(np.any((x >= -0.5) & (x <= shape[1] - 0.5) & (y >= -0.5) & (y <= shape[0] - 0.5)))
+
+
+def _size(shape: tuple[int, int]) -> str:
+    return f"a picture of {shape[1]} x {shape[0]} px"
 
 
 def tube_scene(tubes: Sequence[Tube], shape: tuple[int, int], rng: np.random.Generator | None = None) -> Scene:

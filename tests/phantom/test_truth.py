@@ -358,7 +358,7 @@ def test_wrong_recipe_names_every_problem_at_once(tmp_path):
         "phantom seeed: unknown key; did you mean 'seed'?",
         "pixel_size_um: 0 is not positive",
         "preset: 'x-ray' is none of",
-        "blur_px -1 is negative",
+        "blur_px -1 is not within 0 and 50",
         "contrast 7 of a dark vessel is an optical density",
         "bits 12 is neither 8 nor 16",
         "profle: unknown key; did you mean 'profile'?",
@@ -377,6 +377,84 @@ def test_wrong_recipe_names_every_problem_at_once(tmp_path):
         read_recipe(tmp_path / "none.toml")
     with pytest.raises(RecipeError, match="needs one or more"):
         parse_recipe({})
+
+
+TUBES = "[scene]\nkind = 'tubes'\n[[image]]\n"
+
+
+@pytest.mark.parametrize(
+    ("recipe", "told"),
+    [
+        ("[[image]]", "image 1 scene kind: not given; take one of tubes, tree, mesh, fundus"),
+        ("scene = 3\n[[image]]", "scene: must be a table, is 3"),
+        ("scene = {kind = 'fundus', fundus = 3}\n[[image]]", "image 1 scene fundus: must be a table, is 3"),
+        ("scene = {kind = 'tree', tree = {exponent = 0}}\n[[image]]", "scene tree: exponent 0 is not within 2 and 5"),
+        ("scene = {kind = 'tree', tube = [{}]}\n[[image]]", "scene tube: has no effect on kind 'tree'"),
+        (TUBES, "image 1 scene tube: there is none"),
+        (TUBES + "scene.tube = [{radius_px = nan}]", "tube 1 radius_px: must be a finite number, is nan"),
+        (TUBES + "scene.tube = [{x_px = 5000}]", "x_px 5000, y_px 255.5 lies wholly outside a picture of 512 x 512"),
+        (
+            TUBES + "scene.tube = [{length_px = 30, narrowing = 0.4, narrowing_px = 90}]",
+            "tube 1: narrowing_px 90 is longer than the tube (30 px)",
+        ),
+        (
+            TUBES + "scene.tube = [{shape = 'arc', bend_radius_px = 20, length_px = 900}]",
+            "length_px 900 closes the arc of bend_radius_px 20",
+        ),
+        (
+            TUBES + "scene.tube = [{shape = 'sine', amplitude_px = 50, period_px = 9}]",
+            "amplitude_px 50 and period_px 9 bend the tube within its own radius",
+        ),
+        (TUBES + "scene.tube = [{}]\noptics.blur_px = 1e5", "image 1 optics: blur_px 100000 is not within 0 and 50"),
+        (
+            "[scene]\nkind = 'tubes'\ntube = [{}]\n[[image]]\n[[image]]\noptics = {polarity = 'bright'}",
+            "image 2 optics: polarity 'bright' is not that of image 1",
+        ),
+        (
+            TUBES + "scene.tube = [{}]\ntone = [{radius_um_above = 9, radius_um_below = 3}]",
+            "tone: radius_um_above 9.0 is not less than radius_um_below 3.0",
+        ),
+        (
+            "scene = {kind = 'fundus', width_px = 40, height_px = 40}\n[[image]]",
+            "scene fundus: disc_radius_px 50 is too large for a field of view of 19 px",
+        ),
+    ],
+)
+def test_impossible_recipe_is_refused_by_file_place_and_value(tmp_path, recipe, told):
+    """A phantom drawn from an impossible recipe would be wrong truth, or fill the memory."""
+    (tmp_path / "r.toml").write_text(recipe + "\n", encoding="utf-8")
+    with pytest.raises(RecipeError) as refused:
+        read_recipe(tmp_path / "r.toml")
+    assert told in str(refused.value)
+    assert all(problem.startswith(f"{tmp_path / 'r.toml'}: ") for problem in refused.value.problems)
+    assert "\n" not in refused.value.problems[0]
+
+
+@pytest.mark.parametrize(
+    ("image", "told"),
+    [
+        ({"scene": {"kind": "mesh", "width_px": 40, "height_px": 40}}, "40 x 40 px holds no mesh of it"),
+        ({"scene": {"kind": "tree", "entry": [{}, {}]}}, "trunk 2 of 2, from x -0, y 256 px, finds no room"),
+        ({**SMALL["image"][1], "tone": [{"vessel_class": "venule"}]}, "tone 1: changes no vessel"),
+    ],
+)
+def test_scene_that_cannot_be_made_is_told_by_image_before_anything_is_written(tmp_path, image, told):
+    """A folder with half of its images would pass for the whole."""
+    scene = {} if "scene" in image else {"scene": SMALL["scene"]}
+    recipe = parse_recipe({**scene, "image": [{"image_id": "odd", **image}]})
+    with pytest.raises(RecipeError, match=r"image '\w+'.*" + told):
+        make_phantoms(recipe, tmp_path / "out")
+    assert not (tmp_path / "out").exists()
+
+
+def test_a_study_of_somebody_else_is_not_written_over(tmp_path):
+    """`--out .` in a laboratory's folder would replace its study file by that of the phantoms."""
+    (tmp_path / "study.toml").write_text("mine", encoding="utf-8")
+    with pytest.raises(RecipeError, match=r"holds study\.toml that no phantoms belong to"):
+        make_phantoms(parse_recipe(SMALL), tmp_path)
+    assert (tmp_path / "study.toml").read_text(encoding="utf-8") == "mine"
+    with pytest.raises(RecipeError, match="is a file"):
+        make_phantoms(parse_recipe(SMALL), tmp_path / "study.toml")
 
 
 def test_picture_without_vessels_has_empty_tables():
