@@ -7,6 +7,7 @@ from vasohm.config.settings import Settings
 from vasohm.config.sheet import ImageSource
 from vasohm.flow.estimated_ends import estimate_ends
 from vasohm.flow.hydraulics import solve_flow
+from vasohm.flow.monte_carlo import find_intervals
 from vasohm.flow.scenarios import run_scenarios
 from vasohm.flow.terminals import place_terminals
 from vasohm.image.calibrate import calibrate
@@ -57,10 +58,11 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     placed = place_terminals(measured, source.terminals, settings.network)
     terminals = estimate_ends(measured, placed, blood, settings.targets)
     flow = solve_flow(measured, terminals, blood)
-    scenarios = run_scenarios(measured, terminals, blood, settings.scenarios)
+    intervals = find_intervals(measured, flow, blood, settings.intervals)
+    scenarios = run_scenarios(measured, terminals, blood, settings.scenarios, intervals)
     stage("tables")
     shape_of = describe_shape(measured, mask.pixels, prepared.fov)
-    findings = Findings(prepared, mask, measured, flow, shape_of, scenarios)
+    findings = Findings(prepared, mask, measured, flow, shape_of, scenarios, intervals)
     return tabulate(source.image_id, source.design, findings, _told_disc(source))
 
 

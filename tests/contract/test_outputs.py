@@ -22,6 +22,7 @@ from vasohm.arrays import FloatArray, IntArray
 from vasohm.errors import DomainError
 from vasohm.flags import Flag
 from vasohm.flow.hydraulics import NetworkFlow
+from vasohm.flow.monte_carlo import IntervalSettings, ResistanceIntervals, find_intervals
 from vasohm.flow.rheology import BloodSettings
 from vasohm.flow.scenarios import ScenarioOutcomes
 from vasohm.flow.terminals import NetworkSettings, Terminals
@@ -241,13 +242,30 @@ def make_findings(n_segments: int = 3, scenario: str = "Arterioles dilate") -> F
         ratio_hi=real(0.71, 0.51)[:n],
         flags=whole(0, 0)[:n],
     )
+    measured, flow = make_measured(n_segments), make_flow(n_segments)
     return Findings(
         prepared,
         VesselMask(mask, "ridge"),
-        make_measured(n_segments),
-        make_flow(n_segments),
+        measured,
+        flow,
         make_shape(n_segments),
         outcomes,
+        make_intervals(measured, flow),
+    )
+
+
+def make_intervals(measured: MeasuredGraph, flow: NetworkFlow) -> ResistanceIntervals:
+    return find_intervals(measured, flow, make_blood_settings("constant"), IntervalSettings("delta", 1000, 0))
+
+
+def make_blood_settings(law: str) -> BloodSettings:
+    return BloodSettings(
+        law=law,
+        hematocrit=0.45,
+        hematocrit_se=0.02,
+        plasma_viscosity_mpa_s=1.2,
+        viscosity_mpa_s=3.0,
+        parameters={},
     )
 
 
@@ -265,14 +283,7 @@ def make_methods(law: str = "constant", method: str = "ridge", n_masked: int = 0
         radius=RadiusSettings(
             profile="auto", blur_px=None, plasma_layer_um=1.0, plasma_layer_se_um=0.5, least_radius_um=2.0
         ),
-        blood=BloodSettings(
-            law=law,
-            hematocrit=0.45,
-            hematocrit_se=0.02,
-            plasma_viscosity_mpa_s=1.2,
-            viscosity_mpa_s=3.0,
-            parameters={},
-        ),
+        blood=make_blood_settings(law),
         network=NetworkSettings(terminals="auto", drive_mmhg=1.0),
         law_citation="no source given",
         scenario_names=(HOSTILE,),
@@ -339,12 +350,14 @@ def test_what_cannot_be_bounded_has_no_bounds_and_says_so() -> None:
     """A bound of infinity is no number, and an empty cell without a reason is a riddle."""
     findings = make_findings()
     hopeless = replace(findings.flow, ln_resistance_random_se=real(0.03, 500.0, np.nan))
-    tables = tabulate("a", {}, replace(findings, flow=hopeless))
+    tables = tabulate("a", {}, replace(findings, flow=hopeless, intervals=make_intervals(findings.measured, hopeless)))
     assert tables.segments["flags"].tolist() == ["", "no_interval", "rim;short;no_flow"]
     bounds = tables.segments[["resistance_lo_pa_s_m3", "resistance_hi_pa_s_m3"]].notna()
     assert bounds.to_numpy().tolist() == [[True, True], [False, False], [False, False]]
     doubtful = replace(findings.flow, network_ln_resistance_shared_se=real(500.0))
-    assert "no_interval" in tabulate("a", {}, replace(findings, flow=doubtful)).networks.loc[0, "flags"]
+    intervals = make_intervals(findings.measured, doubtful)
+    tables = tabulate("a", {}, replace(findings, flow=doubtful, intervals=intervals))
+    assert "no_interval" in tables.networks.loc[0, "flags"]
 
 
 def test_ids_degrees_classes_and_flags_are_those_of_the_graph() -> None:

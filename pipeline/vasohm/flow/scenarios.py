@@ -1,7 +1,7 @@
 """What becomes of the network when some vessels change their radius, and by how much they must for a wanted effect."""
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -10,13 +10,15 @@ from vasohm.errors import DomainError
 from vasohm.flags import Flag
 from vasohm.flow.circulation import Circulation, circulate, entering_hematocrit
 from vasohm.flow.hydraulics import at_medians
+from vasohm.flow.monte_carlo import DrawnState, ResistanceIntervals, ratio_bounds
 from vasohm.flow.poiseuille import SegmentResistances, measure_resistance
 from vasohm.flow.rheology import BloodSettings, make_blood
 from vasohm.flow.terminals import Terminals
 from vasohm.network.graph import VesselClass
 from vasohm.network.groups import sum_by
+from vasohm.network.paths import owner
 from vasohm.network.radius import MeasuredGraph
-from vasohm.uncertainty import ln_interval, no_interval, quadrature
+from vasohm.uncertainty import COVERAGE_FACTOR_95, no_interval, quadrature
 
 WIDEST_FACTOR = 10.0  # on a radius, that a study may ask for or be told; its inverse is the narrowest
 LN_RATIO_ROUNDING = 1e-10  # of ln ratio, at which the search for a factor ends
@@ -63,9 +65,15 @@ class ScenarioOutcomes:
 class _State:
     """The networks with one set of radii."""
 
+    measured: MeasuredGraph
     resistances: SegmentResistances
     circulation: Circulation
     network_resistance_pa_s_m3: FloatArray  # (n_networks,)
+
+    @property
+    def drawn(self) -> DrawnState:
+        found = self.resistances
+        return DrawnState(self.measured, found.hematocrit, found.resistance_pa_s_m3, self.circulation.share)
 
     def weighted(self, ln_change: FloatArray) -> FloatArray:
         """Share of each segment times its change of ln R; 0 where no blood passes."""
@@ -74,7 +82,11 @@ class _State:
 
 
 def run_scenarios(
-    measured: MeasuredGraph, terminals: Terminals, blood: BloodSettings, scenarios: Sequence[Scenario]
+    measured: MeasuredGraph,
+    terminals: Terminals,
+    blood: BloodSettings,
+    scenarios: Sequence[Scenario],
+    intervals: ResistanceIntervals | None = None,
 ) -> ScenarioOutcomes:
     """Ask of every network what its resistance becomes when chosen vessels change their radius.
 
@@ -88,6 +100,8 @@ def run_scenarios(
         Viscosity law and hematocrit, the same before and after.
     scenarios : sequence of Scenario
         Any number.
+    intervals : ResistanceIntervals, optional
+        Networks whose interval was drawn there have that of their ratios drawn too, from the same numbers.
 
     Returns
     -------
@@ -102,22 +116,23 @@ def run_scenarios(
     -----
     Errors of the radii act before and after alike, so most of the doubt cancels in the ratio: its ln moves with a
     segment's ln R by the segment's share after less its share before, and with each shared cause, the pixel size among
-    them, by the difference of its effects on the two (first order, JCGM 100:2008, eq. 13). Where a ratio is wanted, the
-    interval is that of the ratio at the factor found.
+    them, by the difference of its effects on the two (first order, JCGM 100:2008, eq. 13; or draw by draw, see
+    `vasohm.flow.monte_carlo`). Where a ratio is wanted, the interval is that of the ratio at the factor found.
     """
     hematocrit = entering_hematocrit(terminals, blood.hematocrit)
     made = make_blood(blood)
 
     def state(radius_factor: FloatArray) -> _State:
+        radius_um = measured.radius_um * radius_factor[owner(measured.graph.offsets)]
         resistances = measure_resistance(measured, made, hematocrit, radius_factor)
         circulation = circulate(measured.graph, resistances.resistance_pa_s_m3, terminals)
         network_resistance, _ = at_medians(measured, terminals, circulation, resistances)
-        return _State(resistances, circulation, network_resistance)
+        return _State(replace(measured, radius_um=radius_um), resistances, circulation, network_resistance)
 
     before = state(np.ones(measured.graph.n_segments))
     network, shape = terminals.segment_network, (len(terminals.source), len(scenarios))
     changed, flags = np.zeros(shape, dtype=np.int64), np.zeros(shape, dtype=np.int64)
-    factor, after_r, ln_se = (np.full(shape, np.nan) for _ in range(3))
+    factor, after_r, ln_lo, ln_hi = (np.full(shape, np.nan) for _ in range(4))
     for column, scenario in enumerate(scenarios):
         chosen = _chosen(scenario, before.resistances.radius_hydraulic_um, measured.graph.vessel_class)
         changed[:, column] = np.bincount(network[chosen], minlength=shape[0])
@@ -126,13 +141,18 @@ def run_scenarios(
         after = state(np.where(chosen, np.nan_to_num(own, nan=1.0)[network], 1.0))
         factor[:, column] = own
         after_r[:, column] = np.where(known, after.network_resistance_pa_s_m3, np.nan)
-        ln_se[:, column] = _ln_ratio_se(before, after, network, shape[0])
+        ln_hi[:, column] = COVERAGE_FACTOR_95 * _ln_ratio_se(before, after, network, shape[0])
+        ln_lo[:, column] = -ln_hi[:, column]
+        if intervals is not None and intervals.draws.any():
+            low, high = ratio_bounds(before.drawn, after.drawn, terminals, made, intervals)
+            drawn = intervals.draws > 0
+            ln_lo[drawn, column], ln_hi[drawn, column] = low[drawn], high[drawn]
         beyond = chosen & (after.resistances.flags & int(Flag.LAW_RANGE) > 0)
         flags[:, column] = np.where(np.bincount(network[beyond], minlength=shape[0]) > 0, int(Flag.LAW_RANGE), 0)
         flags[:, column] |= after.circulation.network_flags | np.where(known, 0, int(Flag.OUT_OF_REACH))
     before_r = np.repeat(before.network_resistance_pa_s_m3, shape[1])
     ratio = after_r.ravel() / before_r
-    ratio_lo, ratio_hi = ln_interval(ratio, ln_se.ravel())
+    ratio_lo, ratio_hi = _bounded(ratio, ln_lo.ravel(), ln_hi.ravel())
     return ScenarioOutcomes(
         network=np.repeat(np.arange(shape[0]), shape[1]),
         scenario=tuple(scenario.name for scenario in scenarios) * shape[0],
@@ -209,6 +229,13 @@ def _own_factors(
         near, near_excess = np.where(beyond, near, found), np.where(beyond, 0.5 * near_excess, here)
         far, far_excess = np.where(beyond, found, far), np.where(beyond, here, 0.5 * far_excess)
     return np.where(reached, np.exp(found), np.nan)
+
+
+def _bounded(ratio: FloatArray, ln_lo: FloatArray, ln_hi: FloatArray) -> tuple[FloatArray, FloatArray]:
+    with np.errstate(over="ignore", invalid="ignore"):
+        low, high = ratio * np.exp(ln_lo), ratio * np.exp(ln_hi)
+    known = np.isfinite(low) & np.isfinite(high)
+    return np.where(known, low, np.nan), np.where(known, high, np.nan)
 
 
 def _ln_ratio_se(before: _State, after: _State, network: IntArray, n_networks: int) -> FloatArray:

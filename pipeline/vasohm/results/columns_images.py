@@ -86,6 +86,10 @@ NETWORKS: tuple[Column, ...] = (
     number("resistance_hi_pa_s_m3", "Pa.s/m3", "Upper bound of the 95 % interval of the network's resistance."),
     LN_RANDOM_SE,
     LN_SHARED_SE,
+    count(
+        "n_half_resistance",
+        "Fewest segments that together hold half of the network's resistance, by their shares; empty without one.",
+    ),
     number(
         "flow_nl_min",
         "nL/min",

@@ -11,6 +11,7 @@ import pandas as pd
 from vasohm.arrays import AnyArray, BoolArray, FloatArray, IntArray
 from vasohm.flags import Flag, codes
 from vasohm.flow.hydraulics import NetworkFlow
+from vasohm.flow.monte_carlo import ResistanceIntervals
 from vasohm.flow.scenarios import ScenarioOutcomes
 from vasohm.image.prepare import PreparedImage
 from vasohm.image.segment import VesselMask
@@ -19,12 +20,13 @@ from vasohm.network.morphometry import Morphometry
 from vasohm.network.radius import MeasuredGraph
 from vasohm.results.handed_graph import hand_out_graph
 from vasohm.results.schema import column_names, image_columns
-from vasohm.uncertainty import ln_interval, no_interval, quadrature
+from vasohm.uncertainty import no_interval, quadrature
 from vasohm.units import UM_PER_MM
 
 KIND_WORDS = np.array([kind.name.lower() for kind in NodeKind], dtype=object)
 CLASS_WORDS = np.array(["", *(kind.name.lower() for kind in VesselClass if kind)], dtype=object)
 BLUR_NOT_TOLD = Flag.BLUR_ASSUMED | Flag.ASSUMED_BLUR_SPREAD  # assumed, or typed in the study
+HALF_ROUNDING = 1e-9  # two equal segments hold one half each: shares are not exact to the last digit
 ROLE_WORDS = np.array(["outlet", "", "inlet"], dtype=object)  # role -1, 0, +1
 
 
@@ -98,6 +100,7 @@ class Findings:
     flow: NetworkFlow
     shape: Morphometry
     scenarios: ScenarioOutcomes
+    intervals: ResistanceIntervals
 
 
 def tabulate(
@@ -146,7 +149,7 @@ def tabulate(
         mask=findings.mask.pixels,
         picture=findings.prepared.picture,
         pixel_size_um=findings.prepared.pixel_size_um,
-        notes=findings.prepared.notes + findings.flow.terminals.notes,
+        notes=findings.prepared.notes + findings.flow.terminals.notes + findings.intervals.notes,
     )
 
 
@@ -160,8 +163,7 @@ def _framed(table: str, image_id: str, columns: Mapping[str, AnyArray]) -> pd.Da
 def _segments(findings: Findings) -> dict[str, AnyArray]:
     measured, flow, shape = findings.measured, findings.flow, findings.shape
     graph = measured.graph
-    ln_se = quadrature(flow.ln_resistance_random_se, flow.ln_resistance_shared_se)
-    low, high = ln_interval(flow.resistance_pa_s_m3, ln_se)
+    low, high = findings.intervals.segment_lo, findings.intervals.segment_hi
     unbounded = np.where(no_interval(flow.resistance_pa_s_m3, low), int(Flag.NO_INTERVAL), 0)
     pixel_se_um = measured.length_um * _pixel_rel_se(measured)
     return {
@@ -233,8 +235,8 @@ def _networks(findings: Findings) -> dict[str, AnyArray]:
     measured, flow, shape = findings.measured, findings.flow, findings.shape
     graph, terminals = measured.graph, flow.terminals
     n = len(shape.network_length_um)
-    ln_se = quadrature(flow.network_ln_resistance_random_se, flow.network_ln_resistance_shared_se)
-    low, high = ln_interval(flow.network_resistance_pa_s_m3, ln_se)
+    intervals = findings.intervals
+    low, high = intervals.network_lo, intervals.network_hi
     unbounded = np.where(no_interval(flow.network_resistance_pa_s_m3, low), int(Flag.NO_INTERVAL), 0)
     vessel_class, probability = _network_class(measured, shape)
     node_network = shape.node_network
@@ -256,9 +258,22 @@ def _networks(findings: Findings) -> dict[str, AnyArray]:
         "resistance_hi_pa_s_m3": high,
         "ln_resistance_random_se": flow.network_ln_resistance_random_se,
         "ln_resistance_shared_se": flow.network_ln_resistance_shared_se,
+        "n_half_resistance": _count_to_half(terminals.segment_network, flow.share, n),
         "flow_nl_min": flow.network_flow_nl_min,
-        "flags": codes(terminals.network_flags | flow.network_flags | unbounded),
+        "flags": codes(terminals.network_flags | flow.network_flags | intervals.network_flags | unbounded),
     }
+
+
+def _count_to_half(network: IntArray, share: FloatArray, n_networks: int) -> Any:
+    """Fewest segments (n_networks,) whose shares come to half; missing for a network without resistance."""
+    share = np.nan_to_num(share)
+    order = np.lexsort((-share, network))
+    held = share[order]
+    upto = np.cumsum(held) - held
+    first = np.searchsorted(network[order], np.arange(n_networks))
+    before = upto - np.append(upto, 0.0)[first][network[order]]
+    needed = np.bincount(network[order][(before < 0.5 - HALF_ROUNDING) & (held > 0)], minlength=n_networks)
+    return pd.array(np.where(needed > 0, needed, np.nan), dtype="Int64")
 
 
 def _network_class(measured: MeasuredGraph, shape: Morphometry) -> tuple[AnyArray, FloatArray]:
