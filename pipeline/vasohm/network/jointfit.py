@@ -11,13 +11,15 @@ import numpy as np
 from scipy.linalg import cho_solve_banded, cholesky_banded
 
 from vasohm.arrays import AnyArray, BoolArray, Float32Array, FloatArray, IntArray
-from vasohm.network.profiles import ProfileTable, height_slope, ln_height, tube_strips
+from vasohm.network.profiles import ProfileTable, height_slope, ln_height, tube_light, tube_strips
 from vasohm.network.strips import CHUNK, Overlaps, Strips
 
 LN_R, LN_C, OFFSET, LEVEL, SLOPE, REFLEX = range(6)
+LIGHT_CHUNK = 4000  # samples handled at once
 HUBER = 3.0  # residuals beyond this many standard deviations count linearly
 REFLEX_WIDTH = 0.25  # sd of the light reflex in radii
 CONVERGED = 2e-3  # of ln r; the next Gauss-Newton step would be far smaller
+SETTLED = 0.003  # gain in log likelihood of a segment by its last step: 0.08 standard deviations of any unknown at most
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -77,6 +79,9 @@ class Normal:
     gradient: FloatArray  # (n_points, B)
     cost: FloatArray  # (n_points,)
 
+    def copy(self) -> "Normal":
+        return Normal(self.matrix.copy(), self.gradient.copy(), self.cost.copy())
+
 
 # --- model against data ---------------------------------------------------------------------------------------------
 
@@ -126,13 +131,13 @@ def without_neighbours(
     if len(overlaps.sample) == 0:
         return strips.y
     who = theta[overlaps.point]
-    near = np.clip(overlaps.distance_px - who[:, OFFSET], 1.0 - table.half_px, table.half_px - 1.0)
-    light = np.empty(len(near))
-    for low in range(0, len(near), 4 * CHUNK):
-        part = slice(low, low + 4 * CHUNK)
-        light[part] = tube_strips(table, 0, who[part, LN_R], who[part, LN_C], -near[part])[:, 0, 0]
+    light = np.empty(len(who), np.float32)
+    for low in range(0, len(who), LIGHT_CHUNK):
+        part = slice(low, low + LIGHT_CHUNK)
+        here = who[part]
+        light[part] = tube_light(table, here[:, LN_R], here[:, LN_C], overlaps.distance_px[part] - here[:, OFFSET])
     y = strips.y.copy()
-    np.subtract.at(y.reshape(-1), overlaps.sample, light.astype(np.float32))
+    np.subtract.at(y.reshape(-1), overlaps.sample, light)
     return y
 
 
@@ -142,21 +147,19 @@ def normal_equations(
     """Compare model and strips; points outside `active` (n_points,) are left zero."""
     n, n_unknowns = theta.shape
     normal = Normal(np.zeros((n, n_unknowns, n_unknowns)), np.zeros((n, n_unknowns)), np.zeros(n))
+    wanted = observed.row_scale > 0 if active is None else active & (observed.row_scale > 0)
     for strips, overlaps, weights in zip(observed.strips, observed.overlaps, observed.weights, strict=True):
-        rows = np.arange(len(strips.points))
-        if active is not None:
-            rows = rows[active[strips.points]]
         y = without_neighbours(table, strips, overlaps, theta, active)
+        rows = np.flatnonzero(wanted[strips.points])
         for low in range(0, len(rows), CHUNK):
             part = rows[low : low + CHUNK]
             points = strips.points[part]
             model = model_strips(table, strips.half_width, theta[points])
-            w, residual = weights[part], y[part] - model[:, 0]
-            w, cost = robust_weights(w, residual, observed.row_scale[points])
-            design = model[:, 1:]
-            weighted = design * w[:, None]
-            normal.matrix[points] = np.matmul(weighted, design.transpose(0, 2, 1))
-            normal.gradient[points] = np.matmul(weighted, residual[:, :, None])[:, :, 0]
+            np.subtract(y[part], model[:, 0], out=model[:, 0])
+            w, cost = robust_weights(weights[part], model[:, 0], observed.row_scale[points])
+            product = np.matmul(model[:, 1:] * w[:, None], model.transpose(0, 2, 1))
+            normal.gradient[points] = product[:, :, 0]
+            normal.matrix[points] = product[:, :, 1:]
             normal.cost[points] = cost
     return normal
 
@@ -245,18 +248,25 @@ def solve(factored: FloatArray, right: FloatArray) -> FloatArray:
 
 
 def fit_joint(
-    observed: Observed, priors: Priors, table: ProfileTable, start: FloatArray, *, max_steps: int
+    observed: Observed,
+    priors: Priors,
+    table: ProfileTable,
+    start: FloatArray,
+    *,
+    max_steps: int,
+    begun: Normal | None = None,
 ) -> tuple[FloatArray, Normal]:
     """Find the most probable unknowns (n_points, B) of every segment, and the normal equations there.
 
     A segment whose step made things worse goes back and is damped ten times more; one whose step is small is done.
+    `begun` are the normal equations at `start`, where they are known already.
     """
     segment = observed.segment
     theta = start.copy()
     n_unknowns = theta.shape[1]
     limit = np.array([0.7, 0.7, 1.0, np.inf, np.inf, 0.5])[:n_unknowns]
     diagonals = priors.full(segment)
-    best = normal_equations(observed, table, theta)
+    best = normal_equations(observed, table, theta) if begun is None else begun.copy()
     pull, prior_cost = prior_pull(priors, theta, segment)
     cost = observed.by_segment(best.cost + prior_cost)
     damping = np.zeros(observed.n_segments)
@@ -266,10 +276,13 @@ def fit_joint(
         points = np.flatnonzero(running[segment])
         if len(points) == 0:
             break
-        extra = damping[segment[points], None] * np.einsum("nii->ni", best.matrix[points])
+        own = segment[points]
+        extra = damping[own, None] * np.einsum("nii->ni", best.matrix[points])
         factored = factor(best.matrix[points], diagonals[:, points], priors.hold[points] + extra)
-        step = solve(factored, (best.gradient + pull)[points])
-        step /= _overlong(step / limit, segment[points], observed.n_segments)[segment[points], None]
+        slope = best.gradient[points] + pull[points]
+        step = solve(factored, slope)
+        step /= _overlong(step / limit, own, observed.n_segments)[own, None]
+        gain = 0.5 * np.bincount(own, np.sum(step * slope, axis=1), observed.n_segments)
         trial = theta.copy()
         trial[points] += step
         found = normal_equations(observed, table, trial, running[segment])
@@ -284,9 +297,10 @@ def fit_joint(
         best.cost[take] = found.cost[take]
         cost = np.where(better, new_cost, cost)
         largest = np.zeros(observed.n_segments)
-        np.maximum.at(largest, segment[points], np.abs(step[:, LN_R]))
+        np.maximum.at(largest, own, np.abs(step[:, LN_R]))
         damping = np.where(running & ~better, np.maximum(damping * 10, 1e-2), damping / 10)
-        running &= ~(better & (largest < CONVERGED)) & (damping < 1e6)
+        small = (largest < CONVERGED) | ((gain < SETTLED) & (damping == 0))
+        running &= ~(better & small) & (damping < 1e6)
     return theta, best
 
 

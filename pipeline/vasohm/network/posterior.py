@@ -5,7 +5,17 @@ from dataclasses import dataclass
 import numpy as np
 
 from vasohm.arrays import FloatArray, IntArray, freeze
-from vasohm.network.jointfit import LN_R, Normal, Observed, Priors, factor, prior_pull, solve, with_stiffness
+from vasohm.network.jointfit import (
+    LN_R,
+    Normal,
+    Observed,
+    Priors,
+    factor,
+    prior_pull,
+    solve,
+    times,
+    with_stiffness,
+)
 
 LOG10_STIFFNESS = np.arange(1.0, 8.0)
 SPREAD_OF_STIFFNESS = 1.0  # sd of log10 stiffness of segments around the image's
@@ -34,16 +44,22 @@ class BandedCovariance:
 def evidence(observed: Observed, priors: Priors, theta: FloatArray, normal: Normal) -> FloatArray:
     """Log evidence (n_segments, n_stiffnesses) on the grid `LOG10_STIFFNESS`, from one linearisation at `theta`."""
     counts = np.diff(observed.offsets)
+    zero = with_stiffness(priors, np.full(observed.n_segments, -np.inf))
+    pull, cost = prior_pull(zero, theta, observed.segment)
+    bent = times(priors.bend, theta[:, LN_R])
+    right, diagonals = normal.gradient + pull, zero.full(observed.segment)
     columns = []
     for log10 in LOG10_STIFFNESS:
-        here = with_stiffness(priors, np.full(observed.n_segments, log10 * np.log(10.0)))
-        pull, cost = prior_pull(here, theta, observed.segment)
-        right = normal.gradient + pull
-        factored = factor(normal.matrix, here.full(observed.segment), here.hold)
-        gain = 0.5 * np.sum(right * solve(factored, right), axis=1)
+        stiffness = 10.0**log10
+        stiff, drawn = diagonals.copy(), right.copy()
+        stiff[:, :, LN_R] += stiffness * priors.bend
+        drawn[:, LN_R] -= stiffness * bent
+        factored = factor(normal.matrix, stiff, priors.hold)
+        gain = 0.5 * np.sum(drawn * solve(factored, drawn), axis=1)
         width = np.log(factored[0]).reshape(theta.shape).sum(axis=1)
+        held = cost + 0.5 * stiffness * theta[:, LN_R] * bent
         columns.append(
-            observed.by_segment(gain - cost - width) + 0.5 * np.maximum(counts - 2, 0) * log10 * np.log(10.0)
+            observed.by_segment(gain - held - width) + 0.5 * np.maximum(counts - 2, 0) * log10 * np.log(10.0)
         )
     return np.stack(columns, axis=1)
 

@@ -11,12 +11,14 @@ from functools import lru_cache
 import numpy as np
 from numpy.lib.stride_tricks import sliding_window_view
 from scipy.interpolate import CubicSpline
+from scipy.signal import fftconvolve
 from scipy.special import ndtr
 
-from vasohm.arrays import AnyArray, Float32Array, FloatArray, freeze
+from vasohm.arrays import Float32Array, FloatArray, IntArray, freeze
 
 FAMILIES = ("slab", "cylinder", "absorber")
 PHASES = 8  # table positions a pixel; the cubic between them errs by < 2e-5 of contrast for blur >= 0.45 px
+TAIL = 6.0  # standard deviations beyond which blur is nothing
 LAYERS_PER_PX = 16  # grid onto which the layers of a tube are spread
 XI_STEP = 0.25  # of xi = sqrt(1 + (r/s)^2) - 1, linear in r^2 when thin and in r when wide
 PIXEL_VARIANCE = 1.0 / 12.0  # of a unit pixel projected on any direction
@@ -143,19 +145,13 @@ def profile_table(optics: Optics, radius_max_px: float, half_px: int) -> Profile
     first = np.exp(-0.5 * (x / s) ** 2) / (s * np.sqrt(2.0 * np.pi))
     value = np.vstack([first, value])
     slope = np.vstack([-first * x / s**2, slope])
-    by_xi = CubicSpline(xi, np.stack([value, slope], axis=1), axis=0)(xi, 1)
-    even = np.stack([value, by_xi[:, 0]], axis=1)
-    odd = np.stack([slope, by_xi[:, 1]], axis=1)
-    fine = np.concatenate(
-        [
-            np.concatenate([even[:, :, :0:-1], even], axis=2),
-            np.concatenate([-odd[:, :, :0:-1], odd], axis=2),
-        ],
-        axis=1,
-    )[:, :, PHASES:]
+    value, slope = np.stack([np.stack([whole, _xi_slope(n_xi) @ whole], axis=1) for whole in (value, slope)])
+    by_x = np.concatenate([value, slope], axis=1).astype(np.float32)
+    mirrored = by_x[:, :, :0:-1] * np.array([1, 1, -1, -1], np.float32)[:, None]
+    fine = np.concatenate([mirrored, by_x], axis=2)[:, :, PHASES:]
     n_x = 2 * half_px + 1
     cells = np.stack([fine[:, :, k::PHASES][:, :, :n_x] for k in range(PHASES + 1)], axis=1)
-    return ProfileTable(optics, radius_max_px, half_px, n_xi, cells.astype(np.float32).ravel())
+    return ProfileTable(optics, radius_max_px, half_px, n_xi, cells.ravel())
 
 
 def _layer_weights(optics: Optics, radius: FloatArray) -> FloatArray:
@@ -194,14 +190,31 @@ def _layer_weights(optics: Optics, radius: FloatArray) -> FloatArray:
 
 
 def _blur_layers(weights: FloatArray, x: FloatArray, s: float) -> tuple[FloatArray, FloatArray]:
-    """Blurred profiles and their slopes at x >= 0, from the weights of the layers."""
-    place = np.arange(weights.shape[1])
-    at = np.rint(x * LAYERS_PER_PX).astype(np.int64)
-    reach = max(int(at[-1]), len(place)) + len(place)
+    """Blurred profiles and their slopes at x >= 0, from the weights of the layers.
+
+    A sum of slabs is a staircase: the profile is its convolution with the blur's share of each step's width, the
+    slope that of the layers' edges with the blur itself.
+    """
+    reach = int(np.ceil(TAIL * s * LAYERS_PER_PX))
+    share = np.diff(ndtr(np.arange(-reach - 1, reach + 2) / (LAYERS_PER_PX * s)))[None]
     u = np.arange(-reach, reach + 1) / (LAYERS_PER_PX * s)
-    step, bell = ndtr(u), np.exp(-0.5 * u**2) / (s * np.sqrt(2.0 * np.pi))
-    right, left = at + place[:, None] + reach, at - place[:, None] + reach
-    return weights @ (step[right] - step[left]), weights @ (bell[right] - bell[left])
+    bell = (np.exp(-0.5 * u**2) / (s * np.sqrt(2.0 * np.pi)))[None]
+    high = np.cumsum(weights[:, ::-1], axis=1)[:, ::-1]
+    stairs = np.concatenate([high[:, :0:-1], high[:, 1:]], axis=1)
+    edges = np.concatenate([weights[:, :0:-1], 0 * weights[:, :1], -weights[:, 1:]], axis=1)
+    value, slope = fftconvolve(stairs, share, axes=1), fftconvolve(edges, bell, axes=1)
+    first, step = weights.shape[1] - 1 + reach, LAYERS_PER_PX // PHASES
+    value, slope = value[:, first::step][:, : len(x)], slope[:, first::step][:, : len(x)]
+    beyond = ((0, 0), (0, len(x) - value.shape[1])), ((0, 0), (0, len(x) - slope.shape[1]))
+    return np.pad(value, beyond[0]), np.pad(slope, beyond[1])
+
+
+@lru_cache(maxsize=16)
+def _xi_slope(n_xi: int) -> FloatArray:
+    """Matrix (n_xi, n_xi) from values on the grid of xi to the slopes there of the cubic spline through them."""
+    xi = XI_STEP * np.arange(n_xi)
+    slope: FloatArray = CubicSpline(xi, np.eye(n_xi), axis=0)(xi, 1)
+    return slope
 
 
 # --- looking up -----------------------------------------------------------------------------------------------------
@@ -221,27 +234,54 @@ def tube_strips(
     -------
     (n, 3, 2 half_width + 1) float32: the strip, its derivative by ln r, its derivative by the offset.
     """
-    s = table.optics.s_px
-    ln_r = np.clip(ln_r, np.log(THINNEST_PX), np.log(table.radius_max_px))
-    rho2 = np.exp(2.0 * ln_r) / s**2
-    root = np.sqrt(1.0 + rho2)
-    place = (root - 1.0) / XI_STEP
-    xi_low = np.minimum(place.astype(np.int64), table.n_xi - 2)
-    first = np.clip(-half_width - offset + table.half_px, 0.0, 2.0 * (table.half_px - half_width))
-    whole = np.floor(first)
-    fine = (first - whole) * PHASES
-    phase = np.minimum(fine.astype(np.int64), PHASES - 1)
-    radial, radial_slope = _hermite(place - xi_low, XI_STEP)
-    across, across_slope = _hermite(fine - phase, 1.0 / PHASES)
-    ln_k, dln_k = ln_area(table.optics, ln_r)
+    place = _place(table, ln_r, np.clip(-half_width - offset + table.half_px, 0.0, 2.0 * (table.half_px - half_width)))
+    radial, radial_slope = _hermite(place.in_xi, XI_STEP)
+    across, across_slope = _hermite(place.in_x, 1.0 / PHASES)
+    ln_k, dln_k = ln_area(table.optics, place.ln_r)
     area = np.exp(ln_k + ln_contrast)
     weights = np.empty((3, 16, len(area)))
     weights[0] = _outer(area * radial, across)
-    weights[1] = _outer(area * (rho2 / root) * radial_slope, across)
+    weights[1] = _outer(area * place.xi_slope * radial_slope, across)
     weights[1] += dln_k * weights[0]
     weights[2] = _outer(-area * radial, across_slope)
-    rows = _corners(table, half_width, xi_low, phase, whole.astype(np.int64))
+    windows = sliding_window_view(table.cells, 2 * half_width + 1)
+    rows: Float32Array = windows[place.corners]
     return np.matmul(np.ascontiguousarray(weights.transpose(2, 0, 1), np.float32), rows)
+
+
+def tube_light(table: ProfileTable, ln_r: FloatArray, ln_contrast: FloatArray, x: FloatArray) -> FloatArray:
+    """Light (n,) of tubes at the distances x (n,) px from their axes; beyond the table that at its border."""
+    place = _place(table, ln_r, np.clip(x + table.half_px, 1.0, 2.0 * table.half_px - 1.0))
+    radial, across = _hermite(place.in_xi, XI_STEP)[0], _hermite(place.in_x, 1.0 / PHASES)[0]
+    light: FloatArray = np.einsum("kn,nk->n", _outer(radial, across), table.cells[place.corners])
+    return np.exp(ln_area(table.optics, place.ln_r)[0] + ln_contrast) * light
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Place:
+    """Cells of a table: the ln r served, where between its grid points, and flat indices of the corners (n, 16)."""
+
+    ln_r: FloatArray
+    in_xi: FloatArray
+    xi_slope: FloatArray  # d xi / d ln r
+    in_x: FloatArray
+    corners: IntArray  # in the order of `_outer`
+
+
+def _place(table: ProfileTable, ln_r: FloatArray, x: FloatArray) -> _Place:
+    """Find radii and positions `x`, counted in px from the table's first, both (n,)."""
+    ln_r = np.clip(ln_r, np.log(THINNEST_PX), np.log(table.radius_max_px))
+    rho2 = np.exp(2.0 * ln_r) / table.optics.s_px**2
+    root = np.sqrt(1.0 + rho2)
+    xi = (root - 1.0) / XI_STEP
+    xi_low = np.minimum(xi.astype(np.int64), table.n_xi - 2)
+    whole = x.astype(np.int64)
+    fine = (x - whole) * PHASES
+    phase = np.minimum(fine.astype(np.int64), PHASES - 1)
+    n_x = 2 * table.half_px + 1
+    corner = (np.arange(2)[:, None, None] * (PHASES + 1) + np.arange(2)[None, :, None]) * 4 + np.arange(4)
+    first = (xi_low * (PHASES + 1) + phase) * (4 * n_x) + whole
+    return _Place(ln_r, xi - xi_low, rho2 / root, fine - phase, first[:, None] + corner.ravel() * n_x)
 
 
 def _hermite(t: FloatArray, step: float) -> tuple[FloatArray, FloatArray]:
@@ -260,13 +300,3 @@ def _outer(radial: FloatArray, across: FloatArray) -> FloatArray:
         xi_end, x_end, by_x, by_xi = k >> 3, (k >> 2) & 1, (k >> 1) & 1, k & 1
         np.multiply(radial[2 * xi_end + by_xi], across[2 * x_end + by_x], out=out[k])
     return out
-
-
-def _corners(table: ProfileTable, half_width: int, xi_low: AnyArray, phase: AnyArray, start: AnyArray) -> Float32Array:
-    """Rows (n, 16, samples) of the table around each point, in the order of `_outer`."""
-    n_x = 2 * table.half_px + 1
-    windows = sliding_window_view(table.cells, 2 * half_width + 1)
-    corner = (np.arange(2)[:, None, None] * (PHASES + 1) + np.arange(2)[None, :, None]) * 4 + np.arange(4)
-    base = (xi_low * (PHASES + 1) + phase) * 4
-    rows: Float32Array = windows[(base[:, None] + corner.ravel()) * n_x + start[:, None]]
-    return rows

@@ -135,13 +135,13 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
     observed, _ = observe(scene, everything, theta, known.table, alone=False)
     theta = bridge(theta, observed.row_scale > 0, observed.segment)
     priors = _priors(observed, known, theta)
-    theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=8)
+    theta, _ = fit_joint(observed, priors, known.table, theta, max_steps=4)
     observed, _ = observe(scene, everything, theta, known.table, alone=False)
     priors = _priors(observed, known, theta)
     theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=3)
     stiffness = choose_stiffness(evidence(observed, priors, theta, normal))
     priors = with_stiffness(priors, stiffness)
-    theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=8)
+    theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=8, begun=normal)
     return _report(scene, observed, known, (theta, priors, normal))
 
 
