@@ -10,11 +10,10 @@ REACH_PX = 8.0  # a mask's edge lies up to this far inside a wide blurred vessel
 REACH_RADII = 1.0
 DIRECTION_PX = 8  # the way on is read over so many pixels before the end
 LEAST_SHARE = 0.5  # of the contrast before the end must be seen all along the gap
-EIGHT = np.ones((3, 3), dtype=bool)
 
 
 def attach_ends(mask: BoolArray, traced: Trace, distance: Float32Array, signal: Float32Array) -> BoolArray:
-    """Fill the gaps between vessel ends and another piece of the mask straight ahead of them.
+    """Fill the gaps between vessel ends and the mask's next vessel straight ahead of them.
 
     Parameters
     ----------
@@ -30,7 +29,6 @@ def attach_ends(mask: BoolArray, traced: Trace, distance: Float32Array, signal: 
     tip, behind = _tips(traced)
     if not len(tip):
         return mask
-    piece, _ = ndimage.label(mask, structure=EIGHT)
     smooth = ndimage.gaussian_filter(signal, 1.0, mode="nearest")
     row, column = traced.row[tip].astype(np.float64), traced.column[tip].astype(np.float64)
     down, right = row - traced.row[behind], column - traced.column[behind]
@@ -41,8 +39,7 @@ def attach_ends(mask: BoolArray, traced: Trace, distance: Float32Array, signal: 
     x = column[:, None] + steps * (right / size)[:, None]
     inside = (y >= 0) & (x >= 0) & (y <= mask.shape[0] - 1) & (x <= mask.shape[1] - 1)
     at = (np.rint(np.clip(y, 0, mask.shape[0] - 1)).astype(int), np.rint(np.clip(x, 0, mask.shape[1] - 1)).astype(int))
-    own = piece[traced.row[tip], traced.column[tip]][:, None]
-    met = inside & (piece[at] > 0) & (piece[at] != own)
+    met = inside & mask[at] & np.logical_or.accumulate(~mask[at], axis=1)
     first = np.where(met.any(axis=1), met.argmax(axis=1), len(steps))
     ahead = np.arange(len(steps))[None, :] <= first[:, None]
     contrast = smooth[traced.row[behind], traced.column[behind]]

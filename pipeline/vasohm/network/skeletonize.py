@@ -10,6 +10,7 @@ from vasohm.arrays import BoolArray, Float32Array, IntArray, freeze
 from vasohm.image.prepare import PreparedImage
 from vasohm.image.segment import VesselMask
 from vasohm.network.attach import attach_ends
+from vasohm.network.bridges import unlit_pixels
 from vasohm.network.tracing import END, JUNCTION, Trace, trace
 
 
@@ -48,12 +49,22 @@ def skeletonize(mask: VesselMask, prepared: PreparedImage, settings: Skeletonize
     whole = attach_ends(mask.pixels, trace(pixels), distance, prepared.signal)
     if not np.array_equal(whole, mask.pixels):
         pixels, distance = _thin(whole, settings)
+    traced = trace(pixels)
+    unlit = unlit_pixels(traced, distance, prepared.signal, prepared.noise_sd)
+    if unlit.any():
+        pixels = pixels.copy()
+        pixels[traced.row[unlit], traced.column[unlit]] = False
+        pixels = _pruned(pixels, distance, settings)
     return Skeleton(pixels, distance)
 
 
 def _thin(mask: BoolArray, settings: SkeletonizeSettings) -> tuple[BoolArray, Float32Array]:
     distance = ndimage.distance_transform_edt(np.pad(mask, 1))[1:-1, 1:-1].astype(np.float32)
     pixels = morphology.skeletonize(mask.copy())  # it refuses read-only arrays
+    return _pruned(pixels, distance, settings), distance
+
+
+def _pruned(pixels: BoolArray, distance: Float32Array, settings: SkeletonizeSettings) -> BoolArray:
     for _ in range(PRUNING_ROUNDS):
         spurs = _spurs(trace(pixels), distance, settings)
         if not len(spurs[0]):
@@ -61,7 +72,7 @@ def _thin(mask: BoolArray, settings: SkeletonizeSettings) -> tuple[BoolArray, Fl
         pixels = pixels.copy()
         pixels[spurs] = False
         pixels = morphology.skeletonize(pixels)
-    return pixels, distance
+    return pixels
 
 
 def _spurs(traced: Trace, distance: Float32Array, settings: SkeletonizeSettings) -> tuple[IntArray, IntArray]:
