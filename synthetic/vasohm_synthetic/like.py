@@ -8,10 +8,11 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from vasohm_synthetic.arrays import FloatArray
 from vasohm_synthetic.blood import LAW_NAMES, Blood
 from vasohm_synthetic.errors import RecipeError, refuse
 from vasohm_synthetic.mesh import MeshShape
-from vasohm_synthetic.optics import MAX_DENSITY, PROFILES, Camera, Channel, Optics
+from vasohm_synthetic.optics import PROFILES, Camera, Channel, Optics
 from vasohm_synthetic.recipe import ImageRecipe, Recipe, SceneRecipe, recipe_problems
 from vasohm_synthetic.trees import TreeShape
 
@@ -20,6 +21,11 @@ BACKGROUND = {"dark": 0.6, "bright": 0.1}  # fraction of full scale
 BRIGHT_CONTRAST = 0.4  # a bright picture's own units are those of its file: only contrast over noise is kept
 MESH_LOOPS = 3  # in one network, from which on it is drawn as a mesh
 UNKNOWN_PROFILE = "cylinder"
+MAX_LOSS = 0.99  # of the light, by a dark vessel
+TYPED_KEYS = (
+    "radius.blur_px", "radius.profile", "segment.method", "segment.false_alarms_per_mpx",
+    "segment.crossing_probability", "skeletonize.spur_px", "skeletonize.spur_radii",
+)  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True)
@@ -38,7 +44,8 @@ def recipe_like(results_dir: Path, *, seed: int = 0, most: int = 8) -> Recipe:
 
     Each phantom takes blur, profile, scale and contrast over noise from one measured picture, and the range and
     spread of its radii from that picture's segments; it is a mesh where a network of the picture has loops, else a
-    tree. What a phantom does not take over: backdrop, colour, crossings, correlated noise.
+    tree. The phantoms are measured as the study was: what it typed about blur, profile and segmentation stands in
+    their study file too. What a phantom does not take over: backdrop, colour, crossings, correlated noise.
 
     Parameters
     ----------
@@ -58,9 +65,13 @@ def recipe_like(results_dir: Path, *, seed: int = 0, most: int = 8) -> Recipe:
     except (OSError, ValueError, KeyError):
         raise RecipeError([f"{results_dir}: holds no study.json of a measured study"]) from None
     said = {key: entry["value"] for key, entry in configuration.items()}
-    measured = [found for folder in _folders(results_dir) if (found := _read(folder)) is not None]
+    typed_blur = said.get("radius.blur_px")
+    blur_px = float(typed_blur) if isinstance(typed_blur, (int, float)) else np.nan
+    measured = [found for folder in _folders(results_dir) if (found := _read(folder, blur_px)) is not None]
     if not measured:
-        refuse([f"{results_dir}: no picture in it was measured with known blur, noise and contrast"])
+        why = "no picture in it was measured with known blur, noise and contrast"
+        how = "Where vessels cannot tell the blur, set blur_px in [radius] of the study and measure again"
+        refuse([f"{results_dir}: {why}. {how}"])
     if len(measured) > most:
         measured = [measured[i] for i in np.linspace(0, len(measured) - 1, most).round().astype(int)]
     polarity = str(said["image.polarity"])
@@ -69,7 +80,7 @@ def recipe_like(results_dir: Path, *, seed: int = 0, most: int = 8) -> Recipe:
         name=f"like {said['study.name']}",
         seed=seed,
         pixel_size_um=float(measured[0].image["pixel_size_um"]),
-        pixel_size_se_um=None,
+        pixel_size_se_um=_positive(measured[0].image.get("pixel_size_se_um")),
         preset=str(said["image.preset"]),
         radius_um=(float(low), float(high)),
         file_format="png",
@@ -77,6 +88,7 @@ def recipe_like(results_dir: Path, *, seed: int = 0, most: int = 8) -> Recipe:
         write_terminals=True,
         blood=_blood(said),
         images=tuple(_phantom(one, polarity) for one in measured),
+        measured_with=_typed(configuration),
     )
     refuse(recipe_problems(recipe))
     return recipe
@@ -86,16 +98,37 @@ def _folders(results_dir: Path) -> list[Path]:
     return sorted(path.parent for path in (results_dir / "images").glob("*/record.json"))
 
 
-def _read(folder: Path) -> _Measured | None:
-    """Read one picture's folder; None where it does not say what a phantom needs."""
+def _typed(configuration: dict[str, Any]) -> dict[str, dict[str, Any]]:
+    """What a person set in the study file and that a phantom can be measured with too, by section."""
+    sections: dict[str, dict[str, Any]] = {}
+    for key in TYPED_KEYS:
+        entry = configuration.get(key, {})
+        if entry.get("source") == "study" and entry["value"] is not None and entry["value"] != "mask":
+            section, _, name = key.partition(".")
+            sections.setdefault(section, {})[name] = entry["value"]
+    return sections
+
+
+def _positive(value: Any) -> float | None:
+    number = float(value) if value is not None else np.nan
+    return number if number > 0 else None
+
+
+def _read(folder: Path, typed_blur_px: float) -> _Measured | None:
+    """Read one picture's folder; None where it does not say what a phantom needs.
+
+    A blur that was typed is not in `image.csv`, which holds what vessels tell.
+    """
     image = pd.read_csv(folder / "image.csv")
     segments = pd.read_csv(folder / "segments.csv")
     networks = pd.read_csv(folder / "networks.csv")
     if len(image) != 1 or segments.empty:
         return None
-    row = image.iloc[0]
+    row = image.iloc[0].copy()
+    if np.isfinite(typed_blur_px):
+        row["blur_px"] = typed_blur_px
     known = row[["blur_px", "noise", "contrast"]].astype(float)
-    if not (np.isfinite(known).all() and (known > 0).all()):
+    if not (np.isfinite(known).all() and (known[["noise", "contrast"]] > 0).all() and known["blur_px"] >= 0):
         return None
     profile = str(row.get("profile", UNKNOWN_PROFILE))
     return _Measured(
@@ -124,7 +157,7 @@ def _phantom(one: _Measured, polarity: str) -> ImageRecipe:
     thin = float(np.clip(thin, 0.5, 0.8 * wide))
     spread = one.segments["radius_sd_um"].to_numpy(float) / one.segments["radius_mean_um"].to_numpy(float)
     variation = float(np.clip(np.nanmedian(spread), 0.0, 0.3)) if np.isfinite(spread).any() else 0.0
-    middle = float(np.average(radius_px, weights=length_px))
+    middle = _weighted_median(radius_px, length_px)
     tree = TreeShape(
         root_radius_px=wide,
         min_radius_px=thin,
@@ -151,18 +184,33 @@ def _phantom(one: _Measured, polarity: str) -> ImageRecipe:
     )
 
 
+def _weighted_median(values: FloatArray, weights: FloatArray) -> float:
+    order = np.argsort(values)
+    share = np.cumsum(weights[order])
+    return float(values[order][np.searchsorted(share, 0.5 * share[-1])])
+
+
 def _optics(one: _Measured, polarity: str, radius_px: float) -> Optics:
-    """Contrast at the picture's typical radius; noise so that contrast over noise is the picture's."""
-    ratio = float(one.image["contrast"]) / float(one.image["noise"])
+    """Contrast at the picture's median radius; noise so that contrast over noise is the picture's.
+
+    A dark vessel's measured contrast is the share of light that it takes away, the phantom's an optical density: what
+    was measured as an absorber, whose share of light saturates, is a cylinder of density.
+    """
+    dark = polarity == "dark"
+    profile = "cylinder" if dark and one.profile == "absorber" else one.profile
+    absorption_per_px = 0.5 / radius_px
+    height = -np.expm1(-2.0 * absorption_per_px * radius_px) if profile == "absorber" else 1.0  # on the axis
+    measured, noise = float(one.image["contrast"]), float(one.image["noise"])
     background = BACKGROUND[polarity]
-    contrast = min(float(one.image["contrast"]), MAX_DENSITY) if polarity == "dark" else BRIGHT_CONTRAST
+    contrast = -float(np.log1p(-min(measured, MAX_LOSS))) if dark else BRIGHT_CONTRAST
+    noise_sd = noise * background if dark else BRIGHT_CONTRAST * noise / measured
     return Optics(
-        profile=one.profile,
+        profile=profile,
         polarity=polarity,
-        contrast=contrast,
+        contrast=float(contrast / height),
         reference_radius_px=radius_px,
-        absorption_per_px=0.5 / radius_px,
+        absorption_per_px=absorption_per_px,
         blur_px=float(one.image["blur_px"]),
         channels=(Channel(background),),
-        camera=Camera(noise_sd=contrast / ratio * (background if polarity == "dark" else 1.0), bits=16),
+        camera=Camera(noise_sd=noise_sd, bits=16),
     )

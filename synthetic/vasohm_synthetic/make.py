@@ -122,6 +122,14 @@ def study_text(recipe: Recipe) -> str:
     polarity = recipe.images[0].optics.polarity
     blood = recipe.blood
     low, high = recipe.radius_um
+    sections = {
+        "segment": {"radius_um": [low, high], **recipe.measured_with.get("segment", {})},
+        **{name: keys for name, keys in recipe.measured_with.items() if name != "segment"},
+    }
+    further = "\n".join(
+        f"[{name}]\n" + "".join(f"{key} = {json.dumps(value, ensure_ascii=False)}\n" for key, value in keys.items())
+        for name, keys in sections.items()
+    )
     return f"""[study]
 name  = {json.dumps(recipe.name, ensure_ascii=False)}
 sheet = "images.csv"
@@ -130,9 +138,7 @@ sheet = "images.csv"
 preset   = "{recipe.preset}"
 polarity = "{polarity}"
 
-[segment]
-radius_um = [{low!r}, {high!r}]
-
+{further}
 [blood]
 law                    = "{blood.law}"
 hematocrit             = {blood.hematocrit!r}

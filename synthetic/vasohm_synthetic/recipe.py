@@ -79,6 +79,7 @@ class Recipe:
     write_terminals: bool
     blood: Blood
     images: tuple[ImageRecipe, ...]
+    measured_with: Mapping[str, Mapping[str, Any]] = field(default_factory=dict)  # further sections of the study file
 
 
 def read_recipe(path: Path) -> Recipe:
