@@ -10,7 +10,7 @@ from vasohm.arrays import BoolArray, Float32Array, IntArray, freeze
 from vasohm.image.prepare import PreparedImage
 from vasohm.image.segment import VesselMask
 from vasohm.network.attach import attach_ends
-from vasohm.network.bridges import unlit_pixels
+from vasohm.network.bridges import unseen_pixels
 from vasohm.network.tracing import END, JUNCTION, Trace, trace
 
 
@@ -50,10 +50,10 @@ def skeletonize(mask: VesselMask, prepared: PreparedImage, settings: Skeletonize
     if not np.array_equal(whole, mask.pixels):
         pixels, distance = _thin(whole, settings)
     traced = trace(pixels)
-    unlit = unlit_pixels(traced, distance, prepared.signal, prepared.noise_sd)
-    if unlit.any():
+    unseen = unseen_pixels(traced, distance, prepared)
+    if unseen.any():
         pixels = pixels.copy()
-        pixels[traced.row[unlit], traced.column[unlit]] = False
+        pixels[traced.row[unseen], traced.column[unseen]] = False
         pixels = _pruned(pixels, distance, settings)
     return Skeleton(pixels, distance)
 
