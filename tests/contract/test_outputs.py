@@ -36,7 +36,7 @@ from vasohm.results.cells import guard_text, unguard_text
 from vasohm.results.encode import json_bytes
 from vasohm.results.image_page import image_page
 from vasohm.results.methods import Methods, MethodsUsed, bibtex, describe_methods
-from vasohm.results.overlay import ColourBy, draw_overlay, round_length_um
+from vasohm.results.overlay import COLOURED, ColourBy, draw_overlay, round_length_um
 from vasohm.results.pages import Study, images_without_resistance, lines_without_resistance, write_study_page
 from vasohm.results.schema import COLUMNS, column_names
 from vasohm.results.tables import DiscPlace, Findings, ImageTables, tabulate
@@ -566,7 +566,7 @@ def test_one_doubtful_segment_does_not_stretch_the_colours(radius_um: float) -> 
     assert np.abs(drawn[0][first] - drawn[0][second]).max() > 100  # 10 and 8 um stay far apart
 
 
-@pytest.mark.parametrize("colour_by", ["radius", "share", "resistance"])
+@pytest.mark.parametrize("colour_by", COLOURED)
 @pytest.mark.parametrize("n_segments", [0, 3])
 def test_overlay_is_drawn_for_every_colouring_and_for_nothing(colour_by: ColourBy, n_segments: int) -> None:
     """An image without vessels, or values that are missing or zero, must not stop the batch; bytes must repeat."""
@@ -765,7 +765,7 @@ def test_a_blur_that_the_picture_does_not_tell_says_nothing_of_its_focus() -> No
 def test_pages_tell_scale_order_and_why_there_is_no_resistance(tmp_path: Path) -> None:
     """Who reads only the page must learn how sure the scale is, and why the main result is missing."""
     tables = make_tables("a")
-    page = image_page(tables, with_overlay=False)
+    page = image_page(tables, None)
     assert "pixel size: 2 µm, its uncertainty is not told, from the image sheet" in page
     assert pixel_size_words(7.0, 0.7, "study") == "7 µm ± 0.7 µm (k = 1), from [scale] of the study"
     assert 'href="#flag-terminals_joined"' not in page  # how it was done, no doubt; explained once at the end
@@ -779,9 +779,7 @@ def test_pages_tell_scale_order_and_why_there_is_no_resistance(tmp_path: Path) -
         "inlets and outlets are not known; the network has loops: inlets and outlets cannot be told from its shape. "
         "Name them in a terminals_file of the image sheet."
     )
-    assert f"The longest network (number 1, 3 of 3 segments) has no resistance: {why}" in image_page(
-        lacking, with_overlay=False
-    )
+    assert f"The longest network (number 1, 3 of 3 segments) has no resistance: {why}" in image_page(lacking, None)
     write_image(lacking, tmp_path / "images/a", {}, overlay=False)
     gather_tables(tmp_path, ["a"])
     found = images_without_resistance(tmp_path)

@@ -258,7 +258,8 @@ def _hydraulic_radius(blood: Blood, hematocrit: FloatArray, mean: _Mean) -> Floa
             break
         low, high = np.where(excess > 0, ln_radius, low), np.where(excess > 0, high, ln_radius)
         moved = (ln_radius != previous) & np.isfinite(excess) & np.isfinite(previous_excess) & (turn > 0)
-        np.divide(excess - previous_excess, ln_radius - previous, out=slope, where=moved)
+        with np.errstate(invalid="ignore"):  # both infinite: not `moved`, then
+            np.divide(excess - previous_excess, ln_radius - previous, out=slope, where=moved)
         step = ln_radius - excess / np.minimum(slope, -LN_STEP)
         inside = (step > low) & (step < high)
         previous, previous_excess = ln_radius, excess

@@ -20,6 +20,7 @@ from vasohm.results.markup import (
     table,
 )
 from vasohm.results.methods import CAUTIONS
+from vasohm.results.overlay import COLOURED, ColourBy
 from vasohm.results.schema import image_columns
 from vasohm.results.tables import ImageTables
 from vasohm.results.wording import pixel_size_words, why_no_resistance
@@ -32,6 +33,17 @@ NETWORK_NAMES = (
     "terminals",
     "length (µm)",
     "resistance (Pa·s/m³), 95 % interval",
+    "segments with half of it",
+    "flags",
+)
+SCENARIO_NAMES = (
+    "network",
+    "scenario",
+    "segments changed",
+    "factor on their radius",
+    "resistance before (Pa·s/m³)",
+    "after",
+    "after / before, 95 % interval",
     "flags",
 )
 SEGMENT_NAMES = (
@@ -45,25 +57,27 @@ SEGMENT_NAMES = (
     "share",
     "flags",
 )
-TEXT_NAMES = {"class", "terminals", "flags"}
+TEXT_NAMES = {"class", "terminals", "scenario", "flags"}
 
 
-def image_page(tables: ImageTables, *, with_overlay: bool) -> str:
-    """Build the page of one image from its tables."""
+def image_page(tables: ImageTables, overlay: ColourBy | None) -> str:
+    """Build the page of one image from its tables; `overlay` is what colours the picture beside it, if there is one."""
     row = tables.image.iloc[0]
-    alternative = f"Segments of {tables.image_id} at their measured width, coloured by lumen radius"
     body = [
         paragraph(link("../../index.html", "All images")),
         heading(tables.image_id, 1),
         paragraph("No vessel was found." if tables.status == "empty" else _summary(tables)),
         _without_resistance(tables.networks),
     ]
-    if with_overlay:
+    if overlay is not None:
+        alternative = f"Segments of {tables.image_id} at their measured width, coloured by {COLOURED[overlay][1]}"
         body.append(Html(f'<p><a href="overlay.png">{picture("overlay.png", alternative).source}</a></p>'))
-    body += [heading("Networks", 2), _networks(tables.networks), heading("Segments", 2)]
-    body.append(_segments(tables.segments, tables.networks))
+    body += [heading("Networks", 2), _networks(tables.networks), *_estimated(tables.networks)]
+    body += _scenarios(tables.scenarios)
+    body += [heading("Segments", 2), _segments(tables.segments, tables.networks)]
     body += [heading("The image", 2), _quality(row)]
-    flags = [row["flags"], *tables.networks["flags"], *tables.segments["flags"]]
+    asked = tables.scenarios["flags"]
+    flags = [row["flags"], *tables.networks["flags"], *tables.segments["flags"], *asked]
     body += [heading("What the flags mean", 2), flag_meanings(flags)]
     if tables.notes:
         body += [heading("Notes", 2), listing(tables.notes)]
@@ -107,6 +121,7 @@ def _networks(networks: pd.DataFrame) -> Html:
             row["terminals"],
             shown(row["length_um"]),
             interval(row["resistance_pa_s_m3"], row["resistance_lo_pa_s_m3"], row["resistance_hi_pa_s_m3"]),
+            "" if pd.isna(row["n_half_resistance"]) else str(row["n_half_resistance"]),
             flag_codes(row["flags"]),
         )
         for row in _longest_first(networks).head(ROWS_SHOWN).to_dict("records")
@@ -114,6 +129,44 @@ def _networks(networks: pd.DataFrame) -> Html:
     return _shortened(
         table(NETWORK_NAMES, rows, set(NETWORK_NAMES) - TEXT_NAMES), len(networks), "networks, longest first"
     )
+
+
+def _estimated(networks: pd.DataFrame) -> list[Html]:
+    """Caution against what rests on estimated ends."""
+    numbers = networks.loc[networks["terminals"] == "estimated", "network_id"].tolist()
+    if not numbers:
+        return []
+    which = ", ".join(map(str, numbers))
+    return [
+        paragraph(
+            f"Estimated, not measured: where blood enters and leaves network {which}, how much and which way. Flows at "
+            "unknown ends were chosen so that wall shear and pressures come nearest to the study's targets; the "
+            "resistance is the dissipated power over the square of the estimated inflow, and its interval does not "
+            "hold the doubt of the estimate."
+        )
+    ]
+
+
+def _scenarios(scenarios: pd.DataFrame) -> list[Html]:
+    """What becomes of the networks that have a resistance; nothing where nothing was asked."""
+    solved = scenarios[scenarios["resistance_before_pa_s_m3"].notna()]
+    if solved.empty:
+        return []
+    rows = [
+        (
+            str(row["network_id"]),
+            row["scenario"],
+            str(row["n_segments_changed"]),
+            shown(row["radius_factor"], 4),
+            shown(row["resistance_before_pa_s_m3"]),
+            shown(row["resistance_after_pa_s_m3"]),
+            interval(row["ratio"], row["ratio_lo"], row["ratio_hi"]),
+            flag_codes(row["flags"]),
+        )
+        for row in solved.head(ROWS_SHOWN).to_dict("records")
+    ]
+    found = table(SCENARIO_NAMES, rows, set(SCENARIO_NAMES) - TEXT_NAMES)
+    return [heading("Scenarios", 2), _shortened(found, len(solved), "networks and scenarios")]
 
 
 def _segments(segments: pd.DataFrame, networks: pd.DataFrame) -> Html:

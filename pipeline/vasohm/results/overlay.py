@@ -24,10 +24,11 @@ from vasohm.units import UM_PER_MM
 
 ColourBy: TypeAlias = Literal["radius", "share", "resistance", "uncertainty"]
 
-COLOUR_COLUMNS: dict[str, tuple[str, str]] = {  # what colours a segment: its column, the colour bar's label
-    "radius": ("radius_mean_um", "lumen radius (µm)"),
-    "share": ("resistance_share", "share of the network's resistance"),
-    "resistance": ("resistance_pa_s_m3", "resistance (Pa·s/m³)"),
+COLOURED: dict[ColourBy, tuple[str, str]] = {  # what colours a segment: the colour bar's label; and in words
+    "radius": ("lumen radius (µm)", "lumen radius"),
+    "share": ("share of the network's resistance (%)", "share of the network's resistance"),
+    "resistance": ("resistance (Pa·s/m³)", "resistance"),
+    "uncertainty": ("standard uncertainty of the radius (%)", "relative standard uncertainty of the radius"),
 }
 DARKEST = 0.12  # start of the colour map: its first tenth is lost on a dark picture
 LOGARITHMIC_FROM = 5.0  # ratio of largest to smallest value from which the colours are spread in the logarithm
@@ -44,6 +45,7 @@ SHORTEST_SIDE = 900  # a small picture is enlarged so that labels do not hide it
 DPI = 100
 BAR_SHARE = 0.2  # the scale bar is at most this share of the width
 WIDEST_RATIO = 1e4  # of the colours' range; smaller values take the darkest colour
+SHARES_SHOWN = 300.0  # largest over smallest share that has a colour of its own
 TICKS = ((1.0, 1.5, 2.0, 3.0, 5.0, 7.0), (1.0, 2.0, 5.0), (1.0,))  # within one decade, two, and more
 GREY = "#d0d0d0"
 
@@ -54,14 +56,15 @@ def draw_overlay(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
     Parameters
     ----------
     tables : of one image.
-    colour_by : what colours a segment: its mean lumen radius (um), its share of the network's resistance, or its
-        resistance (Pa s/m3, logarithmic).
+    colour_by : what colours a segment: its mean lumen radius (um), its share of the network's resistance, its
+        resistance (Pa s/m3), or the relative standard uncertainty of its hydraulic radius.
 
     Returns
     -------
     A PNG; the same tables give the same bytes. The colours are spread over the middle 96 % of the length of the
     segments that are not doubtful; arrows at the colour bar tell of values beyond. Segments that the field of view
-    cuts, that are too thin for the pixels, or whose radius is interpolated are drawn pale with a broken outline, and
+    cuts, that are too thin for the pixels, or whose radius is interpolated are drawn pale with a broken outline (not
+    pale where shares are shown, whose colours reach up to the largest), and
     the stub between a branching and a child's first point, which carries no resistance, in a lighter tone.
     """
     height, width = tables.picture.shape
@@ -69,7 +72,7 @@ def draw_overlay(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
     size = np.maximum(np.array([width, height]) * scale, 1.0)
     letter_pt = max(float(size.max()) / 130, 8.0)  # margins grow with the letters
     letter = letter_pt * DPI / 72
-    caption = _caption(tables, int(CAPTION_SHARE * size[0] / (LETTER_WIDTH * letter)))
+    caption = _caption(tables, colour_by, int(CAPTION_SHARE * size[0] / (LETTER_WIDTH * letter)))
     foot = (1.6 + LINE_SPACING * len(caption)) * letter  # pixels below the picture
     total = size + np.array([9.5 * letter, foot])
     with mpl.rc_context():
@@ -79,10 +82,10 @@ def draw_overlay(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
         canvas = FigureCanvasAgg(figure)
         axes = figure.add_axes((0, foot / total[1], size[0] / total[0], size[1] / total[1]))
         _draw_picture(axes, tables.picture, scale)
-        column, label = COLOUR_COLUMNS[colour_by]
-        values = tables.segments[column].to_numpy(np.float64)
-        norm = _colour_range(values, tables.segments)
-        _draw_segments(axes, tables, values, norm)
+        label, _ = COLOURED[colour_by]
+        values = _coloured_values(tables.segments, colour_by)
+        norm = _share_range(values) if colour_by == "share" else _colour_range(values, tables.segments)
+        _draw_segments(axes, tables, values, norm, pale=colour_by != "share")
         if norm is not None:
             low_left = ((size[0] + 1.5 * letter) / total[0], (foot + 0.05 * size[1]) / total[1])
             bar = figure.add_axes((*low_left, 1.5 * letter / total[0], 0.9 * size[1] / total[1]))
@@ -103,13 +106,41 @@ def draw_overlay(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
     return buffer.getvalue()
 
 
-def _caption(tables: ImageTables, letters: int) -> list[str]:
+def _coloured_values(segments: pd.DataFrame, colour_by: ColourBy) -> FloatArray:
+    def column(name: str) -> FloatArray:
+        return segments[name].to_numpy(np.float64)
+
+    if colour_by == "share":
+        return 100.0 * column("resistance_share")
+    if colour_by == "uncertainty":
+        return 100.0 * column("radius_hydraulic_se_um") / column("radius_hydraulic_um")
+    return column("radius_mean_um" if colour_by == "radius" else "resistance_pa_s_m3")
+
+
+def _share_caption(tables: ImageTables) -> str:
+    """Say what a share is, how few segments hold half, and what is grey."""
+    solved = tables.networks[tables.networks["resistance_pa_s_m3"].notna()]
+    if solved.empty:
+        return " No network has a resistance, so no segment has a share of one: all are grey."
+    longest = solved.sort_values("length_um", ascending=False, kind="stable").iloc[0]
+    shares = tables.segments["resistance_share"]
+    return (
+        f" Where a change of radius changes the network's resistance most: {longest['n_half_resistance']} of the "
+        f"{longest['n_segments']} segments of network {longest['network_id']} hold half of it."
+        + (" Grey: no blood passes between inlets and outlets." if (shares.isna() | (shares == 0)).any() else "")
+    )
+
+
+def _caption(tables: ImageTables, colour_by: ColourBy, letters: int) -> list[str]:
     """Return the caption in lines of at most so many letters."""
     n_doubtful = int(_is_doubtful(tables.segments).sum())
-    caption = f"{tables.image_id}: {len(tables.segments)} segments."
+    caption = f"{tables.image_id}: {len(tables.segments)} segments, coloured by {COLOURED[colour_by][1]}."
+    if colour_by == "share":
+        caption += _share_caption(tables)
     if n_doubtful:
+        how = "With" if colour_by == "share" else "Pale with"
         caption += (
-            f" Pale with a broken outline: {n_doubtful} whose radius is doubtful, being cut by the rim of the picture, "
+            f" {how} a broken outline: {n_doubtful} whose radius is doubtful, being cut by the rim of the picture, "
             "too thin for the pixels, or interpolated."
         )
     if len(tables.branchings):
@@ -162,6 +193,14 @@ def _colour_range(values: FloatArray, segments: pd.DataFrame) -> Normalize | Non
     return Normalize(low, high, clip=True) if low < high else Normalize(0.9 * low, 1.1 * high, clip=True)
 
 
+def _share_range(values: FloatArray) -> Normalize | None:
+    """Range for shares: up to the largest, however short and doubtful its segment is, for it is what matters."""
+    known = values[_is_known(values)]
+    if not known.size:
+        return None
+    return LogNorm(float(known.max()) / SHARES_SHOWN, float(known.max()), clip=True)
+
+
 def _beyond(values: FloatArray, norm: Normalize) -> Literal["neither", "min", "max", "both"]:
     """Ends of the colour bar beyond which there are values."""
     known = values[_is_known(values)]
@@ -186,7 +225,8 @@ def _draw_colour_bar(
         bar.ax.yaxis.set_minor_formatter(NullFormatter())
 
 
-def _draw_segments(axes: Axes, tables: ImageTables, values: FloatArray, norm: Normalize | None) -> None:
+def _draw_segments(axes: Axes, tables: ImageTables, values: FloatArray, norm: Normalize | None, *, pale: bool) -> None:
+    """Draw all segments; `pale` tells whether doubtful ones recede: where shares are shown they may matter most."""
     doubtful = _is_doubtful(tables.segments)
     outlines = _ribbons(tables.points, tables.segments["n_points"].to_numpy(), tables.pixel_size_um)
     colours = np.tile(mpl.colors.to_rgba(GREY), (len(values), 1))
@@ -195,8 +235,9 @@ def _draw_segments(axes: Axes, tables: ImageTables, values: FloatArray, norm: No
         colours[known] = _colour_map()(norm(values[known]))
     stubs, owners = _stubs(tables)
     _draw_outlines(axes, stubs, _lightened(colours[owners], WHITE_STUB), alpha=STUB)
-    colours[doubtful] = _lightened(colours[doubtful], WHITE_PALE)
-    for chosen, alpha, style in ((doubtful, PALE, (0, (3, 2))), (~doubtful, OPAQUE, "solid")):
+    if pale:
+        colours[doubtful] = _lightened(colours[doubtful], WHITE_PALE)
+    for chosen, alpha, style in ((doubtful, PALE if pale else OPAQUE, (0, (3, 2))), (~doubtful, OPAQUE, "solid")):
         shapes = [outlines[i] for i in np.flatnonzero(chosen)]
         _draw_outlines(axes, shapes, colours[chosen], alpha=alpha, style=style)
 

@@ -16,7 +16,7 @@ from vasohm.results.column import Column
 from vasohm.results.columns_images import DISC
 from vasohm.results.encode import frame_bytes, graphml_bytes, json_bytes, mask_bytes
 from vasohm.results.image_page import image_page
-from vasohm.results.overlay import draw_overlay
+from vasohm.results.overlay import ColourBy, draw_overlay
 from vasohm.results.schema import COLUMNS, OWN_IMAGE_NAMES, SCHEMA_VERSION, image_columns
 from vasohm.results.tables import ImageTables
 
@@ -26,7 +26,7 @@ RENAME_TRIES = 5  # a virus scanner or an open viewer can hold a file for a mome
 RENAME_WAIT_S = 0.2
 IMAGE_FILES = frozenset(
     [f"{table}.csv" for table in COLUMNS if table != "failures"]
-    + ["graph.graphml", "mask.tif", "overlay.png", "index.html", RECORD]
+    + ["graph.graphml", "mask.tif", "fov.tif", "overlay.png", "index.html", RECORD]
 )
 
 
@@ -62,7 +62,9 @@ def replace_durably(partial: Path, path: Path) -> None:
     _sync_folder(path.parent)
 
 
-def write_image(tables: ImageTables, folder: Path, record: Mapping[str, Any], *, overlay: bool) -> None:
+def write_image(
+    tables: ImageTables, folder: Path, record: Mapping[str, Any], *, overlay: bool, colour: ColourBy = "radius"
+) -> None:
     """Write all files of one image; the folder is complete when its record is there.
 
     Parameters
@@ -72,13 +74,14 @@ def write_image(tables: ImageTables, folder: Path, record: Mapping[str, Any], *,
     record : what the caller knows: hash of inputs and settings, versions, warnings. Our own keys are schema_version,
         image_id, status, notes and files.
     overlay : whether the picture is drawn.
+    colour : what colours its segments.
 
     Raises
     ------
     OSError : the folder cannot be written; nothing of it is left half done under its own name.
     ValueError : a key of `record` is one of our own, or a value that JSON cannot hold.
     """
-    files = _encode(tables, overlay=overlay)
+    files = _encode(tables, colour if overlay else None)
     own = {
         "schema_version": SCHEMA_VERSION,
         "image_id": tables.image_id,
@@ -137,7 +140,7 @@ def remove_partials(parent: Path) -> None:
             path.unlink(missing_ok=True)
 
 
-def _encode(tables: ImageTables, *, overlay: bool) -> dict[str, EncodedFile]:
+def _encode(tables: ImageTables, colour: ColourBy | None) -> dict[str, EncodedFile]:
     """Make the bytes of every file but the record."""
     files = {}
     for table, frame in tables.tables.items():
@@ -147,9 +150,10 @@ def _encode(tables: ImageTables, *, overlay: bool) -> dict[str, EncodedFile]:
         files[f"{table}.csv"] = EncodedFile(frame_bytes(frame, columns), len(frame))
     files["graph.graphml"] = EncodedFile(graphml_bytes(tables.graph))
     files["mask.tif"] = EncodedFile(mask_bytes(tables.mask, tables.pixel_size_um))
-    if overlay:
-        files["overlay.png"] = EncodedFile(draw_overlay(tables))
-    files["index.html"] = EncodedFile(image_page(tables, with_overlay=overlay).encode())
+    files["fov.tif"] = EncodedFile(mask_bytes(tables.fov, tables.pixel_size_um))
+    if colour is not None:
+        files["overlay.png"] = EncodedFile(draw_overlay(tables, colour))
+    files["index.html"] = EncodedFile(image_page(tables, colour).encode())
     return files
 
 

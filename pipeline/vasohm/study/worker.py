@@ -70,7 +70,8 @@ def _measure(task: Task, trail: "Trail") -> str:
         )
         raise ImageError(msg)
     record: dict[str, Any] = key.plain()
-    write_image(tables, task.folder, record, overlay=task.settings.output.overlay)
+    output = task.settings.output
+    write_image(tables, task.folder, record, overlay=output.overlay, colour=output.colour)
     return tables.status
 
 
