@@ -18,7 +18,7 @@ from vasohm.flow.terminals import ESTIMATED, Terminals, end_radius, open_ends
 from vasohm.network.radius import MeasuredGraph
 from vasohm.units import M_PER_UM, NL_MIN_PER_M3_S, PA_PER_MMHG, PA_S_PER_MPA_S
 
-DOUBLINGS = 8  # of the weight of wall shear, from 1/256 of its own to the whole
+FIRST_DOUBLING, MOST_DOUBLINGS = 3, 40  # of the weight of shear, from an eighth of the pressures' to its own
 MOST_TURNS = 50  # of directions at one weight; 2 to 10 are usual
 STILL = 1e-9  # of the largest drop of pressure: a smaller one has no direction
 
@@ -193,15 +193,18 @@ def nearest_pressures(problem: EndProblem) -> FloatArray:
     The sizes of shear have targets, their directions do not. As published, shear begins with little weight, which is
     doubled up to its whole; at each weight the pressures are found for the last directions and the directions taken
     from the pressures until they stay (each such turn lowers the misfit or leaves it, so they come to rest, if not at
-    the best of all directions). The first directions are those of pressures without a target for shear; where pressure
-    targets and given ends tell none, they are those of blood that enters by the widest end and leaves by all others.
+    the best of all directions). The first directions are those of pressures that have no regard to shear; where
+    pressure targets and given ends tell none, of blood that enters by the widest end and leaves by all others.
     A uniform target of pressure cannot tell a flow from its mirror image: then directions as a whole are a guess,
     though the resistance is the same either way. One sparse factorisation a weight (Lagrange multipliers for the
     balance of flows), one solution a turn.
     """
-    direction = problem.held
-    pressure = problem.pressure_target
-    for step in range(DOUBLINGS, -1, -1):
+    alone = _Nearest(problem, 0.0)
+    pressure = alone.pressure(problem.held)
+    direction = _directions(problem, pressure)
+    stiffer = np.log2(_Nearest.stiffness(problem))
+    doublings = int(np.clip(np.ceil(stiffer) + FIRST_DOUBLING, 0, MOST_DOUBLINGS))
+    for step in range(doublings, -1, -1):
         nearest = _Nearest(problem, 0.5**step)
         for _ in range(MOST_TURNS):
             pressure = nearest.pressure(direction)
@@ -243,6 +246,12 @@ class _Nearest:
         square, sides = (csr_array(csc_array(part)[:, self.free]) for part in (self.pull, self.balance))
         blocks: list[list[Any]] = [[square, sides.T], [sides, None]]
         self.factors = splu(csc_array(block_array(blocks)))
+
+    @staticmethod
+    def stiffness(problem: EndProblem) -> float:
+        """How much more a drop of pressure costs by its shear than by the pressures, over all segments."""
+        shear = np.sum(problem.length * np.square(problem.shear_per_drop / problem.shear_sd))
+        return float(shear / np.sum(problem.length / problem.pressure_sd**2))
 
     def pressure(self, direction: FloatArray) -> FloatArray:
         """Pressures (n_nodes,) nearest to the targets for these directions of flow."""
