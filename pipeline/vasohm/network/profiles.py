@@ -22,6 +22,9 @@ TAIL = 6.0  # standard deviations beyond which blur is nothing
 LAYERS_PER_PX = 16  # grid onto which the layers of a tube are spread
 XI_STEP = 0.25  # of xi = sqrt(1 + (r/s)^2) - 1, linear in r^2 when thin and in r when wide
 PIXEL_VARIANCE = 1.0 / 12.0  # of a unit pixel projected on any direction
+# of cubic and quintic splines, measured on rotated sharp edges at these blurs
+SPLINE_PSF_PX = (0.3, 0.5, 0.7, 1.0, 1.5, 3.0)
+SPLINE_VARIANCE = {3: (0.035, 0.023, 0.013, 0.007, 0.003, 0.0), 5: (0.018, 0.012, 0.005, 0.002, 0.001, 0.0)}
 THINNEST_PX = 0.05  # no image tells thinner vessels apart; also keeps exp() of a failing fit finite
 
 
@@ -52,23 +55,22 @@ class ProfileTable:
         freeze(self)
 
 
-def total_blur_px(psf_px: float) -> float:
-    """Return the blur seen in strips sampled by a cubic spline: optics, pixel, and the sampling itself."""
-    return float(np.sqrt(psf_px**2 + PIXEL_VARIANCE + spline_variance(psf_px)))
+def total_blur_px(psf_px: float, order: int = 3) -> float:
+    """Return the blur seen in strips sampled by a spline of this order: optics, pixel, and the sampling itself."""
+    return float(np.sqrt(psf_px**2 + PIXEL_VARIANCE + spline_variance(psf_px, order)))
 
 
-def optical_blur_px(s_px: float) -> float:
+def optical_blur_px(s_px: float, order: int = 3) -> float:
     """Return the blur of the optics alone, the inverse of `total_blur_px` (0 where the pixel explains it all)."""
     psf = np.sqrt(max(s_px**2 - PIXEL_VARIANCE, 0.0))
     for _ in range(20):
-        psf = np.sqrt(max(s_px**2 - PIXEL_VARIANCE - spline_variance(float(psf)), 0.0))
+        psf = np.sqrt(max(s_px**2 - PIXEL_VARIANCE - spline_variance(float(psf), order), 0.0))
     return float(psf)
 
 
-def spline_variance(psf_px: float) -> float:
-    """Return the variance (px^2) that cubic-spline sampling adds to an image blurred by `psf_px` and the pixel."""
-    # measured on rotated sharp edges, psf 0.5 to 1.5 px
-    return float(np.interp(psf_px, [0.3, 0.5, 0.7, 1.0, 1.5, 3.0], [0.035, 0.023, 0.013, 0.007, 0.003, 0.0]))
+def spline_variance(psf_px: float, order: int) -> float:
+    """Return the variance (px^2) that sampling by a spline adds to an image blurred by `psf_px` and the pixel."""
+    return float(np.interp(psf_px, SPLINE_PSF_PX, SPLINE_VARIANCE[order]))
 
 
 # --- area and height of a tube of unit contrast ---------------------------------------------------------------------

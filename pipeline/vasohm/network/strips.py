@@ -1,7 +1,7 @@
 """Brightness across each centreline, sampled on straight strips, and which of its samples belong to other vessels."""
 
 from dataclasses import dataclass
-from typing import TypeAlias
+from typing import Literal, TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
@@ -9,11 +9,13 @@ from scipy.ndimage import map_coordinates, spline_filter
 
 from vasohm.arrays import BoolArray, Float32Array, FloatArray, IntArray, freeze
 
-Owners: TypeAlias = tuple[NDArray[np.int32], NDArray[np.int32]]  # by pixel (h * w,), see `paint_owners`
+Owners: TypeAlias = tuple[NDArray[np.int32], ...]  # by pixel (h * w,), see `paint_owners`
+SplineOrder: TypeAlias = Literal[3, 5]
 
 TANGENT_REACH = 3  # points on each side; directions must be good to 5 degrees
 JOINED_BLURS, ALONE_BLURS = 1.0, 2.5  # how far beyond its rim a neighbour's samples are taken out, in blurs
 RIM_BLURS = (0.5, 1.5)  # a rim is seen when no sample is missing from so far inside to so far outside
+MOST_OWNERS = 3  # segments a pixel can tell: as many as meet at a branching
 CHUNK = 1000  # strips handled at once, so that they stay in the cache
 
 
@@ -66,6 +68,7 @@ class Picture:
     coefficients: Float32Array  # (h, w)
     precision: Float32Array
     clipped: BoolArray
+    order: SplineOrder
 
     def __post_init__(self) -> None:
         freeze(self)
@@ -109,35 +112,50 @@ class Overlaps:
         return Overlaps(np.zeros(0, np.int64), np.zeros(0, np.int64), np.zeros(0), np.zeros(0, np.bool_))
 
 
-def make_picture(signal: Float32Array, noise_sd: Float32Array, valid: BoolArray, clipped: BoolArray) -> Picture:
+def make_picture(
+    signal: Float32Array, noise_sd: Float32Array, valid: BoolArray, clipped: BoolArray, order: SplineOrder = 3
+) -> Picture:
     """Prepare an image (h, w) for sampling; pixels outside the field of view or at the scale's limit do not count."""
     usable = valid & ~clipped & (noise_sd > 0)
     filled = np.where(np.isfinite(signal), signal, 0.0).astype(np.float32)
     precision = np.zeros(signal.shape, np.float32)
     np.divide(1.0, noise_sd.astype(np.float32) ** 2, out=precision, where=usable)
-    coefficients = spline_filter(filled, order=3, output=np.float32, mode="mirror")
-    return Picture(coefficients, precision, np.array(clipped))
+    coefficients = spline_filter(filled, order=order, output=np.float32, mode="mirror")
+    return Picture(coefficients, precision, np.array(clipped), order)
 
 
-def make_frame(lines: TubeLines) -> Frame:
+def make_frame(x_px: FloatArray, y_px: FloatArray, offsets: IntArray) -> Frame:
     """Directions from the chord over a few points on each side, so that jitter of single points does not matter."""
-    n = lines.n_points
-    counts = np.diff(lines.offsets)
-    segment = np.repeat(np.arange(lines.n_segments), counts)
+    n = len(x_px)
+    counts = np.diff(offsets)
+    segment = np.repeat(np.arange(len(counts)), counts)
     index = np.arange(n)
-    first, last = lines.offsets[segment], lines.offsets[segment + 1] - 1
+    first, last = offsets[segment], offsets[segment + 1] - 1
     reach = np.minimum(TANGENT_REACH, np.maximum(np.minimum(index - first, last - index), 1))
     low, high = np.maximum(index - reach, first), np.minimum(index + reach, last)
-    along_x, along_y = lines.x_px[high] - lines.x_px[low], lines.y_px[high] - lines.y_px[low]
+    along_x, along_y = x_px[high] - x_px[low], y_px[high] - y_px[low]
     chord = np.hypot(along_x, along_y)
     along_x = np.where(chord > 0, along_x, 1.0)
     chord = np.where(chord > 0, chord, 1.0)
     before, after = np.maximum(index - 1, first), np.minimum(index + 1, last)
-    step = np.hypot(lines.x_px[after] - lines.x_px[before], lines.y_px[after] - lines.y_px[before])
+    step = np.hypot(x_px[after] - x_px[before], y_px[after] - y_px[before])
     share = np.where(after - before == 2, step / 2, np.where(after - before == 1, step, 1.0))
-    return Frame(
-        np.array(lines.x_px), np.array(lines.y_px), -along_y / chord, along_x / chord, np.clip(share, 0.1, 3.0), segment
-    )
+    return Frame(np.array(x_px), np.array(y_px), -along_y / chord, along_x / chord, np.clip(share, 0.1, 3.0), segment)
+
+
+def recentre(frame: Frame, offset_px: FloatArray, offsets: IntArray) -> Frame:
+    """Move points onto the axis found beside them, and turn their normals to it.
+
+    A strip askew by an angle d shows a tube 1 / cos(d) times as wide, and its blur as well.
+    """
+    return make_frame(frame.x + offset_px * frame.normal_x, frame.y + offset_px * frame.normal_y, offsets)
+
+
+def offset_from(frame: Frame, moved: Frame, offset_px: FloatArray) -> FloatArray:
+    """Return how far beside the points of `frame` an axis lies that lies `offset_px` beside those of `moved`."""
+    away_x = moved.x + offset_px * moved.normal_x - frame.x
+    away_y = moved.y + offset_px * moved.normal_y - frame.y
+    return away_x * frame.normal_x + away_y * frame.normal_y
 
 
 def group_widths(half_width_px: FloatArray, points: IntArray) -> list[tuple[int, IntArray]]:
@@ -150,7 +168,7 @@ def group_widths(half_width_px: FloatArray, points: IntArray) -> list[tuple[int,
 def sample_strips(picture: Picture, frame: Frame, half_width_px: FloatArray, points: IntArray) -> tuple[Strips, ...]:
     """Sample strips at 1 px steps along the normals of `points`, each at least `half_width_px` (n,) wide.
 
-    Unit steps of a cubic spline on the pixel grid keep independent noise nearly independent, so that the
+    Unit steps of a spline on the pixel grid keep independent noise nearly independent, so that the
     variance of the raw pixels is the right weight.
     """
     strips = []
@@ -162,9 +180,9 @@ def sample_strips(picture: Picture, frame: Frame, half_width_px: FloatArray, poi
             part = members[low : low + CHUNK]
             at_y = frame.y[part, None] + frame.normal_y[part, None] * t
             at_x = frame.x[part, None] + frame.normal_x[part, None] * t
-            map_coordinates(
-                picture.coefficients, (at_y, at_x), output=y[low : low + CHUNK], order=3, mode="mirror", prefilter=False
-            )
+            part_y = y[low : low + CHUNK]
+            at = at_y, at_x
+            map_coordinates(picture.coefficients, at, part_y, picture.order, mode="mirror", prefilter=False)
             pixel, inside = _pixels(at_y, at_x, picture.precision.shape)
             precision[low : low + CHUNK] = np.where(inside, picture.precision.ravel()[pixel], 0.0)
         strips.append(Strips(half_width, members, y, precision))
@@ -181,9 +199,11 @@ def _pixels(at_y: FloatArray, at_x: FloatArray, shape: tuple[int, ...]) -> tuple
 
 
 def paint_owners(frame: Frame, reach_px: FloatArray, shape: tuple[int, int]) -> Owners:
-    """Write on each pixel the lowest and highest point whose strip covers it within `reach_px` (n_points,).
+    """Write on each pixel which segments' strips cover it within `reach_px` (n_points,), by one point of each.
 
-    Points are numbered segment by segment, so the two tell up to two segments a pixel. -1 where there is none.
+    Returns
+    -------
+    Up to `MOST_OWNERS` layers (h * w,) of points, each of another segment than the layers before; -1 where none.
     """
     pixels, owners = [], []
     for half_width, members in group_widths(reach_px, np.arange(len(reach_px))):
@@ -196,15 +216,18 @@ def paint_owners(frame: Frame, reach_px: FloatArray, shape: tuple[int, int]) -> 
             inside &= np.abs(t) <= reach_px[part, None]
             pixels.append(pixel[inside])
             owners.append(np.broadcast_to(part[:, None], inside.shape)[inside].astype(np.int32))
-    lowest = np.full(shape[0] * shape[1], -1, np.int32)
-    highest = lowest.copy()
-    if pixels:
-        pixel, owner = np.concatenate(pixels), np.concatenate(owners)
-        order = np.argsort(owner, kind="stable")
-        pixel, owner = pixel[order], owner[order]
-        highest[pixel] = owner  # of equal indices the last one stays
-        lowest[pixel[::-1]] = owner[::-1]
-    return lowest, highest
+    pixel = np.concatenate(pixels) if pixels else np.zeros(0, np.int64)
+    owner = np.concatenate(owners) if owners else np.zeros(0, np.int32)
+    order = np.argsort(owner, kind="stable")
+    pixel, owner = pixel[order], owner[order]
+    layers = []
+    for _ in range(MOST_OWNERS):
+        layer = np.full(shape[0] * shape[1], -1, np.int32)
+        layer[pixel] = owner  # of equal indices the last one stays
+        left = frame.segment[layer[pixel]] != frame.segment[owner]
+        pixel, owner = pixel[left], owner[left]
+        layers.append(layer)
+    return tuple(layers)
 
 
 def find_overlaps(strips: Strips, frame: Frame, lines: TubeLines, owners: Owners, shape: tuple[int, int]) -> Overlaps:
@@ -217,18 +240,16 @@ def find_overlaps(strips: Strips, frame: Frame, lines: TubeLines, owners: Owners
         at_x = frame.x[part, None] + frame.normal_x[part, None] * t
         pixel, inside = _pixels(at_y, at_x, shape)
         own = frame.segment[part, None]
-        seen = np.full(pixel.shape, -1, np.int64)
         for owner in owners:
             other = np.where(inside, owner[pixel], -1).astype(np.int64)
             theirs = frame.segment[other]
-            hit = np.nonzero((other >= 0) & (theirs != own) & (theirs != seen))
+            hit = np.nonzero((other >= 0) & (theirs != own))
             k = other[hit]
             distance = (at_x[hit] - frame.x[k]) * frame.normal_x[k] + (at_y[hit] - frame.y[k]) * frame.normal_y[k]
             samples.append((low + hit[0]) * len(t) + hit[1])
             points.append(k)
             distances.append(distance)
             joined.append(_meet(lines, frame.segment[part[hit[0]]], theirs[hit]))
-            seen = np.where(other >= 0, theirs, -1)
     if not samples:
         return Overlaps.nothing()
     return Overlaps(*(np.concatenate(parts) for parts in (samples, points, distances, joined)))

@@ -56,13 +56,15 @@ from vasohm.network.profiles import (
     profile_table,
     total_blur_px,
 )
-from vasohm.network.shared import Marginal, marginalise, optics_response, parameters_of
-from vasohm.network.strips import TubeLines, make_frame, make_picture, paint_owners
+from vasohm.network.shared import Marginal, marginalise, optics_response, parameters_of, table_like
+from vasohm.network.strips import SplineOrder, TubeLines, make_frame, make_picture, offset_from, paint_owners, recentre
 
 BLURRED_SIGNS = (5.0, 0.4)  # out of focus: own ln blur above the picture's by so many standard errors, and by so much
 UNRESOLVED_SE = 0.25  # of ln r with the contrast free
 FAINT_CNR = 3.0
 USUAL_CNR = 8.0  # height of vessels over the noise, before any is measured
+SHARP_PSF_PX = 0.85  # blur of the optics below which a quintic spline samples
+SHARP_ORDER: SplineOrder = 5
 NEIGHBOUR_BLURS = 3.5  # beyond its rim a vessel's light is no longer reckoned with
 
 
@@ -125,7 +127,7 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
         return _no_tubes(settings)
     scene, table = _open(image, lines, settings)
     guess = _guess(scene, table)
-    known = learn_image(scene, guess, table, settings)
+    scene, known = _sharp(image, scene, learn_image(scene, guess, table, settings))
     theta = _start(scene, _guess(scene, known.table), known)
     reach = np.exp(theta[:, LN_R]) + NEIGHBOUR_BLURS * known.table.optics.s_px
     cnr, contrast_sd = _typical_cnr(scene, theta, known.table.optics), float(np.median(known.contrast.spread))
@@ -136,6 +138,8 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
     theta = bridge(theta, observed.row_scale > 0, observed.segment)
     priors = _priors(observed, known, theta)
     theta, _ = fit_joint(observed, priors, known.table, theta, max_steps=4)
+    scene = replace(scene, frame=recentre(scene.frame, theta[:, OFFSET], lines.offsets))
+    theta[:, OFFSET] = 0.0
     observed, _ = observe(scene, everything, theta, known.table, alone=False)
     priors = _priors(observed, known, theta)
     theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=3)
@@ -150,7 +154,7 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
 
 def _open(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> tuple[Scene, ProfileTable]:
     """Prepare picture and noise, and a table for first guesses that serves all radii to come."""
-    frame = make_frame(lines)
+    frame = make_frame(lines.x_px, lines.y_px, lines.offsets)
     family = "cylinder" if settings.profile == "auto" else settings.profile
     blur = total_blur_px(ASSUMED_PSF_PX if settings.blur_px is None else settings.blur_px)
     widest = 2.6 * float(segment_quantile(lines.seed_radius_px, lines.offsets, 0.8).max()) + 2.0
@@ -164,6 +168,17 @@ def _open(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> tuple[S
     covariance = noise_correlation(image.signal, image.noise_sd, free)
     noise = noise_factor(table, covariance, USUAL_CNR * float(np.sqrt(covariance[0])), FREE_SPREAD)
     return Scene(picture, lines, frame, owners, covariance, noise), table
+
+
+def _sharp(image: TubeImage, scene: Scene, known: ImageKnowledge) -> tuple[Scene, ImageKnowledge]:
+    """Sample a sharp picture by a spline that blurs less: a cubic one widens thin vessels by 0 to 4 %, by direction."""
+    old = known.table.optics
+    psf = optical_blur_px(old.s_px)
+    if psf > SHARP_PSF_PX:
+        return scene, known
+    picture = make_picture(image.signal, image.noise_sd, image.valid, image.clipped, SHARP_ORDER)
+    optics = replace(old, s_px=total_blur_px(psf, SHARP_ORDER))
+    return replace(scene, picture=picture), replace(known, table=table_like(known.table, optics))
 
 
 def _guess(scene: Scene, table: ProfileTable) -> Guess:
@@ -215,21 +230,21 @@ def _priors(observed: Observed, known: ImageKnowledge, theta: FloatArray) -> Pri
 
 def _report(scene: Scene, observed: Observed, known: ImageKnowledge, fit: tuple[FloatArray, Priors, Normal]) -> TubeFit:
     theta, priors, normal = fit
-    optics = known.table.optics
+    optics, lines = known.table.optics, scene.lines
     factored = factor(normal.matrix, priors.full(observed.segment), priors.hold)
     covariance = BandedCovariance(factored, observed.segment, observed.n_segments, theta.shape[1])
     names = parameters_of(optics)
     response = optics_response(observed, known.table, theta, names)
     marginal = marginalise(observed, priors, theta, normal, response)
     shared, causes = _shared_columns(observed, known, factored, priors, marginal)
-    psf = optical_blur_px(optics.s_px)
+    psf = optical_blur_px(optics.s_px, scene.picture.order)
     blur_se = float(np.sqrt(known.covariance[0, 0])) * optics.s_px**2 / max(psf, 0.3)
     factors = scene.noise.at(theta[:, LN_R])
     return TubeFit(
         theta[:, LN_R].copy(),
         np.sqrt(point_variance(observed, priors, normal)),
         np.exp(theta[:, LN_C] + ln_height(optics, theta[:, LN_R])),
-        theta[:, OFFSET].copy(),
+        offset_from(make_frame(lines.x_px, lines.y_px, lines.offsets), scene.frame, theta[:, OFFSET]),
         _point_flags(scene, observed, theta, optics) | _segment_flags(observed, fit, marginal)[observed.segment],
         covariance,
         shared,
