@@ -22,13 +22,43 @@ SPREAD_OF_STIFFNESS = 1.0  # sd of log10 stiffness of segments around the image'
 
 
 @dataclass(frozen=True, slots=True, eq=False)
+class StiffnessDoubt:
+    """How probable each stiffness of `LOG10_STIFFNESS` is, and how far ln r would move with it.
+
+    The radii are those of one stiffness; that it is not known adds the variance of these moves (law of total variance).
+    """
+
+    probability: FloatArray  # (n_segments, n_stiffnesses)
+    move: FloatArray  # (n_points, n_stiffnesses) of ln r
+
+    def __post_init__(self) -> None:
+        freeze(self)
+
+    def point_variance(self, segment: IntArray) -> FloatArray:
+        """Variance (n_points,) of ln r."""
+        return _spread(self.probability[segment], self.move)
+
+    def segment_variance(self, gradient: FloatArray, segment: IntArray) -> FloatArray:
+        """Variance (n_segments,) of sum(gradient * ln r) over each segment's points."""
+        n = len(self.probability)
+        moves = [np.bincount(segment, gradient * column, n) for column in self.move.T]
+        return _spread(self.probability, np.array(moves).T)
+
+
+def _spread(probability: FloatArray, move: FloatArray) -> FloatArray:
+    mean = np.sum(probability * move, axis=1, keepdims=True)
+    return np.asarray(np.sum(probability * (move - mean) ** 2, axis=1))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
 class BandedCovariance:
-    """Covariance of ln r along every segment, as the banded Cholesky factor of its inverse."""
+    """Covariance of ln r along every segment: the banded Cholesky factor of its inverse, and what stiffness adds."""
 
     factored: FloatArray
     segment: IntArray  # (n_points,)
     n_segments: int
     n_unknowns: int
+    doubt: StiffnessDoubt
 
     def __post_init__(self) -> None:
         freeze(self)
@@ -38,37 +68,48 @@ class BandedCovariance:
         right = np.zeros((len(self.segment), self.n_unknowns))
         right[:, LN_R] = gradient
         response = solve(self.factored, right)[:, LN_R]
-        return np.bincount(self.segment, gradient * response, self.n_segments)
+        known = np.bincount(self.segment, gradient * response, self.n_segments)
+        return known + self.doubt.segment_variance(gradient, self.segment)
 
 
-def evidence(observed: Observed, priors: Priors, theta: FloatArray, normal: Normal) -> FloatArray:
-    """Log evidence (n_segments, n_stiffnesses) on the grid `LOG10_STIFFNESS`, from one linearisation at `theta`."""
+def weigh_stiffness(
+    observed: Observed, priors: Priors, theta: FloatArray, normal: Normal
+) -> tuple[FloatArray, StiffnessDoubt]:
+    """Find the most probable ln stiffness (n_segments,), drawn towards what the whole image prefers, and its doubt.
+
+    The evidence of each stiffness on the grid `LOG10_STIFFNESS` is that of one linearisation at `theta`.
+    """
+    log_evidence, move = _evidence(observed, priors, theta, normal)
+    whole = _peak(log_evidence.sum(axis=0, keepdims=True))[0]
+    drawn = log_evidence - 0.5 * ((LOG10_STIFFNESS - whole) / SPREAD_OF_STIFFNESS) ** 2
+    probability = np.exp(drawn - drawn.max(axis=1, keepdims=True))
+    probability /= probability.sum(axis=1, keepdims=True)
+    return _peak(drawn) * np.log(10.0), StiffnessDoubt(probability, move)
+
+
+def _evidence(observed: Observed, priors: Priors, theta: FloatArray, normal: Normal) -> tuple[FloatArray, FloatArray]:
+    """Log evidence (n_segments, n_stiffnesses), and the steps of ln r (n_points, n_stiffnesses) to each mode."""
     counts = np.diff(observed.offsets)
     zero = with_stiffness(priors, np.full(observed.n_segments, -np.inf))
     pull, cost = prior_pull(zero, theta, observed.segment)
     bent = times(priors.bend, theta[:, LN_R])
     right, diagonals = normal.gradient + pull, zero.full(observed.segment)
-    columns = []
+    columns, moves = [], []
     for log10 in LOG10_STIFFNESS:
         stiffness = 10.0**log10
         stiff, drawn = diagonals.copy(), right.copy()
         stiff[:, :, LN_R] += stiffness * priors.bend
         drawn[:, LN_R] -= stiffness * bent
         factored = factor(normal.matrix, stiff, priors.hold)
-        gain = 0.5 * np.sum(drawn * solve(factored, drawn), axis=1)
+        step = solve(factored, drawn)
+        gain = 0.5 * np.sum(drawn * step, axis=1)
+        moves.append(step[:, LN_R])
         width = np.log(factored[0]).reshape(theta.shape).sum(axis=1)
         held = cost + 0.5 * stiffness * theta[:, LN_R] * bent
         columns.append(
             observed.by_segment(gain - held - width) + 0.5 * np.maximum(counts - 2, 0) * log10 * np.log(10.0)
         )
-    return np.stack(columns, axis=1)
-
-
-def choose_stiffness(log_evidence: FloatArray) -> FloatArray:
-    """Most probable ln stiffness of each segment, drawn towards what the whole image prefers."""
-    whole = _peak(log_evidence.sum(axis=0, keepdims=True))[0]
-    drawn = log_evidence - 0.5 * ((LOG10_STIFFNESS - whole) / SPREAD_OF_STIFFNESS) ** 2
-    return _peak(drawn) * np.log(10.0)
+    return np.stack(columns, axis=1), np.stack(moves, axis=1)
 
 
 def _peak(score: FloatArray) -> FloatArray:

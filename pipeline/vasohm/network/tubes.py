@@ -44,7 +44,13 @@ from vasohm.network.learn import (
 from vasohm.network.noise import noise_correlation
 from vasohm.network.observe import Scene, observe
 from vasohm.network.pilot import Guess, bridge, guess_radii, segment_quantile
-from vasohm.network.posterior import BandedCovariance, choose_stiffness, evidence, point_variance
+from vasohm.network.posterior import (
+    LOG10_STIFFNESS,
+    BandedCovariance,
+    StiffnessDoubt,
+    point_variance,
+    weigh_stiffness,
+)
 from vasohm.network.priors import Expected, make_priors
 from vasohm.network.profiles import (
     Optics,
@@ -143,10 +149,10 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
     observed, _ = observe(scene, everything, theta, known.table, alone=False)
     priors = _priors(observed, known, theta)
     theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=3)
-    stiffness = choose_stiffness(evidence(observed, priors, theta, normal))
+    stiffness, doubt = weigh_stiffness(observed, priors, theta, normal)
     priors = with_stiffness(priors, stiffness)
     theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=8, begun=normal)
-    return _report(scene, observed, known, (theta, priors, normal))
+    return _report(scene, observed, known, (theta, priors, normal), doubt)
 
 
 # --- what the picture tells -----------------------------------------------------------------------------------------
@@ -228,11 +234,17 @@ def _priors(observed: Observed, known: ImageKnowledge, theta: FloatArray) -> Pri
 # --- what is known afterwards ---------------------------------------------------------------------------------------
 
 
-def _report(scene: Scene, observed: Observed, known: ImageKnowledge, fit: tuple[FloatArray, Priors, Normal]) -> TubeFit:
+def _report(
+    scene: Scene,
+    observed: Observed,
+    known: ImageKnowledge,
+    fit: tuple[FloatArray, Priors, Normal],
+    doubt: StiffnessDoubt,
+) -> TubeFit:
     theta, priors, normal = fit
     optics, lines = known.table.optics, scene.lines
     factored = factor(normal.matrix, priors.full(observed.segment), priors.hold)
-    covariance = BandedCovariance(factored, observed.segment, observed.n_segments, theta.shape[1])
+    covariance = BandedCovariance(factored, observed.segment, observed.n_segments, theta.shape[1], doubt)
     names = parameters_of(optics)
     response = optics_response(observed, known.table, theta, names)
     marginal = marginalise(observed, priors, theta, normal, response)
@@ -242,7 +254,7 @@ def _report(scene: Scene, observed: Observed, known: ImageKnowledge, fit: tuple[
     factors = scene.noise.at(theta[:, LN_R])
     return TubeFit(
         theta[:, LN_R].copy(),
-        np.sqrt(point_variance(observed, priors, normal)),
+        np.sqrt(point_variance(observed, priors, normal) + doubt.point_variance(observed.segment)),
         np.exp(theta[:, LN_C] + ln_height(optics, theta[:, LN_R])),
         offset_from(make_frame(lines.x_px, lines.y_px, lines.offsets), scene.frame, theta[:, OFFSET]),
         _point_flags(scene, observed, theta, optics) | _segment_flags(observed, fit, marginal)[observed.segment],
@@ -314,7 +326,8 @@ def _segment_flags(observed: Observed, fit: tuple[FloatArray, Priors, Normal], m
 def _no_tubes(settings: TubeSettings) -> TubeFit:
     none = np.zeros(0)
     whole = np.zeros(0, np.int64)
-    covariance = BandedCovariance(np.zeros((11, 0)), whole, 0, 5)
+    doubt = StiffnessDoubt(np.zeros((0, len(LOG10_STIFFNESS))), np.zeros((0, len(LOG10_STIFFNESS))))
+    covariance = BandedCovariance(np.zeros((11, 0)), whole, 0, 5, doubt)
     blur = ASSUMED_PSF_PX if settings.blur_px is None else settings.blur_px
     family = "cylinder" if settings.profile == "auto" else settings.profile
     flags = Flag.NONE if settings.blur_px is not None else Flag.BLUR_ASSUMED
