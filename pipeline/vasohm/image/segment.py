@@ -29,7 +29,7 @@ class VesselMask:
     """Where vessels are: bool (h, w)."""
 
     pixels: BoolArray
-    source: str  # the method's name, or "mask_file"
+    source: str  # the method's name, or GIVEN
 
     def __post_init__(self) -> None:
         freeze(self)
@@ -48,6 +48,7 @@ SEGMENTERS = {
     "hessian": Segmenter(hessian.segment_hessian, hessian.CITATION),
 }
 MASK_METHOD = "mask"  # the sheet's mask_file
+GIVEN = "mask_file"  # source of a mask made elsewhere
 PLUGINS = PluginKind("vasohm.segmenters", "segmenter", (*SEGMENTERS, MASK_METHOD))
 
 
@@ -71,7 +72,7 @@ def segment(prepared: PreparedImage, settings: SegmentSettings, given: BoolArray
     ImageError : method "mask" without a mask, or a mask that covers the whole field of view.
     """
     if given is not None:
-        return _checked(given & prepared.fov, prepared, "mask_file")
+        return _checked(given & prepared.fov, prepared, GIVEN)
     if settings.method == MASK_METHOD:
         msg = 'method = "mask" needs a mask_file in the image sheet for this image.'
         raise ImageError(msg)

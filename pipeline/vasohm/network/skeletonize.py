@@ -8,7 +8,7 @@ from skimage import morphology
 
 from vasohm.arrays import BoolArray, Float32Array, IntArray, freeze
 from vasohm.image.prepare import PreparedImage
-from vasohm.image.segment import VesselMask
+from vasohm.image.segment import GIVEN, VesselMask
 from vasohm.network.attach import attach_ends
 from vasohm.network.bridges import unseen_pixels
 from vasohm.network.tracing import END, JUNCTION, Trace, trace
@@ -41,11 +41,14 @@ def skeletonize(mask: VesselMask, prepared: PreparedImage, settings: Skeletonize
 
     Parameters
     ----------
-    mask : where vessels are.
-    prepared : the picture: its signal shows where a vessel goes on in a gap of the mask.
+    mask : where vessels are. One made elsewhere is taken at its word.
+    prepared : the picture: its signal shows where a vessel goes on in a gap of a mask of ours, and where that mask
+        bridges background or follows an edge.
     settings : how long a spur may be.
     """
     pixels, distance = _thin(mask.pixels, settings)
+    if mask.source == GIVEN:
+        return Skeleton(pixels, distance)
     whole = attach_ends(mask.pixels, trace(pixels), distance, prepared.signal)
     if not np.array_equal(whole, mask.pixels):
         pixels, distance = _thin(whole, settings)
