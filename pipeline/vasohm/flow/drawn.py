@@ -105,7 +105,7 @@ def cut_into_pieces(measured: MeasuredGraph, blood: Blood, hematocrit: FloatArra
 def _spread(
     measured: MeasuredGraph, piece: IntArray, pull: FloatArray, whole: FloatArray, chosen: IntArray
 ) -> FloatArray:
-    """Square roots (n, PIECES, PIECES) of the covariance of the pieces' errors; what is no covariance counts as 0.
+    """Symmetric roots (n, PIECES, PIECES) of the covariance of the pieces' errors; what is no covariance counts as 0.
 
     A covariance is the variance of a sum less those of its parts, so that the variance of a sum is all that need be
     known.
@@ -120,7 +120,8 @@ def _spread(
             covariance[:, i, j] = covariance[:, j, i] = 0.5 * (both - variance[i] - variance[j])
     scale = np.divide(1.0, whole, out=np.zeros(whole.shape), where=whole != 0)
     values, vectors = np.linalg.eigh(np.nan_to_num(covariance * scale[:, :, None] * scale[:, None, :]))
-    return np.asarray(vectors * np.sqrt(np.maximum(values, 0.0))[:, None, :])
+    root = vectors * np.sqrt(np.maximum(values, 0.0))[:, None, :]
+    return np.asarray(root @ vectors.transpose(0, 2, 1))  # the symmetric root: near covariances have near roots
 
 
 def draw_ln_resistance(pieces: Pieces, rng: np.random.Generator, draws: int) -> FloatArray:
