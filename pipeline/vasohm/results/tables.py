@@ -43,6 +43,7 @@ class ImageTables:
     tables: Mapping[str, pd.DataFrame]
     graph: "nx.MultiGraph[int]"
     mask: BoolArray  # (h, w)
+    fov: BoolArray  # (h, w), the field of view
     picture: AnyArray  # (h, w) uint8, the measured channel stretched for showing
     pixel_size_um: float
     notes: tuple[str, ...]
@@ -147,6 +148,7 @@ def tabulate(
         tables=tables,
         graph=hand_out_graph(image_id, tables["nodes"], tables["segments"]),
         mask=findings.mask.pixels,
+        fov=findings.prepared.fov,
         picture=findings.prepared.picture,
         pixel_size_um=findings.prepared.pixel_size_um,
         notes=findings.prepared.notes + findings.flow.terminals.notes + findings.intervals.notes,
