@@ -25,6 +25,9 @@ class Flag(IntFlag):
     STEEP_WALL = 1 << 10
     SELF_LOOP = 1 << 11
     NO_INTERVAL = 1 << 12
+    UNDEVELOPED = 1 << 13
+    INERTIAL = 1 << 14
+    PULSATILE = 1 << 15
     # networks
     NO_INLET = 1 << 16
     NO_OUTLET = 1 << 17
@@ -35,6 +38,8 @@ class Flag(IntFlag):
     MONTE_CARLO = 1 << 22
     FEWER_DRAWS = 1 << 23
     OUT_OF_REACH = 1 << 24
+    HEMATOCRIT_UNSETTLED = 1 << 25
+    BACKWARDS = 1 << 26
     # images
     TERMINAL_MISSED = 1 << 32
     EDIT_MISSED = 1 << 33
@@ -64,6 +69,9 @@ MEANING: dict[Flag, str] = {
     Flag.STEEP_WALL: "wall slope above 0.09: local Poiseuille flow is more than 1 % off",
     Flag.SELF_LOOP: "leaves and returns at the same node",
     Flag.NO_INTERVAL: "the uncertainty of the resistance is too large to bound it",
+    Flag.UNDEVELOPED: "shorter than the two lengths in which flow settles at its ends: not Poiseuille's profile",
+    Flag.INERTIAL: "Reynolds number above 1: bends and branchings cost more than Poiseuille's law says",
+    Flag.PULSATILE: "Womersley number above 1: the flow of a beat is not like steady flow",
     Flag.NO_INLET: "no place where blood enters: no resistance",
     Flag.NO_OUTLET: "no place where blood leaves: no resistance",
     Flag.NO_TERMINALS: "inlets and outlets are not known: no resistance",
@@ -73,6 +81,8 @@ MEANING: dict[Flag, str] = {
     Flag.MONTE_CARLO: "the interval of the resistance comes from random draws",
     Flag.FEWER_DRAWS: "the network is too large for all the draws asked for: fewer were made, or none",
     Flag.OUT_OF_REACH: "no radius factor of the chosen vessels gives the wanted ratio of resistances",
+    Flag.HEMATOCRIT_UNSETTLED: "hematocrit and flow came to no state that agrees with itself: no values",
+    Flag.BACKWARDS: "the pressure of every inlet lies below that of every outlet: blood runs from outlets to inlets",
     Flag.TERMINAL_MISSED: "a terminal of the terminals file is not near any vessel end and was left out",
     Flag.EDIT_MISSED: "an edit of the edits file is not near any vessel and was left out",
     Flag.ORIENTATION_TAG: "the file carries an orientation tag; coordinates are those of the stored picture",

@@ -21,6 +21,7 @@ from scipy.spatial import cKDTree
 from vasohm.arrays import FloatArray, IntArray
 from vasohm.errors import DomainError
 from vasohm.flags import Flag
+from vasohm.flow.development import Motion
 from vasohm.flow.hydraulics import NetworkFlow
 from vasohm.flow.monte_carlo import IntervalSettings, ResistanceIntervals, find_intervals
 from vasohm.flow.rheology import BloodSettings
@@ -153,6 +154,7 @@ def make_flow(n: int) -> NetworkFlow:
     return NetworkFlow(
         terminals=terminals,
         hematocrit=real(0.45, 0.45, np.nan)[:n],
+        hematocrit_tube=real(0.38, 0.37, np.nan)[:n],
         radius_hydraulic_um=RADIUS_UM[:n],
         radius_hydraulic_random_se_um=real(0.3, 0.3, 0.3)[:n],
         radius_hydraulic_shared_se_um=real(0.4, 0.4, 0.4)[:n],
@@ -161,7 +163,7 @@ def make_flow(n: int) -> NetworkFlow:
         ln_resistance_random_se=real(0.03, 0.03, np.nan)[:n],
         ln_resistance_shared_se=real(0.04, 0.04, np.nan)[:n],
         flow_nl_min=real(2.0, 2.0, 0.0)[:n],
-        wall_shear_pa=real(1.5, 1.4, np.nan)[:n],
+        motion=make_motion(n),
         share=real(0.6, 0.4, 0.0)[:n],
         segment_flags=whole(0, 0, Flag.NO_FLOW)[:n],
         pressure_mmhg=real(1.0, 0.5, 0.0, 0.0)[:nodes],
@@ -170,6 +172,19 @@ def make_flow(n: int) -> NetworkFlow:
         network_ln_resistance_shared_se=real(0.4)[:one],
         network_flow_nl_min=real(2.0)[:one],
         network_flags=whole(0)[:one],
+        hematocrit_turns=real(np.nan)[:one],
+    )
+
+
+def make_motion(n: int) -> Motion:
+    return Motion(
+        velocity_mm_s=real(1.2, 1.1, 0.0)[:n],
+        transit_s=real(0.3, 0.4, np.nan)[:n],
+        wall_shear_rate_per_s=real(500.0, 480.0, 0.0)[:n],
+        wall_shear_pa=real(1.5, 1.4, np.nan)[:n],
+        reynolds=real(np.nan, np.nan, np.nan)[:n],
+        womersley=real(np.nan, np.nan, np.nan)[:n],
+        flags=whole(0, 0, 0)[:n],
     )
 
 
@@ -420,7 +435,7 @@ def test_numbers_read_back_exactly_and_gaps_are_empty(results: Path) -> None:
 def test_an_infinite_value_is_never_written(tmp_path: Path) -> None:
     """An infinity reads as a number in some tools and as text in others; none of our quantities can be one."""
     findings = make_findings()
-    flow = replace(findings.flow, wall_shear_pa=real(1.0, math.inf, 1.0))
+    flow = replace(findings.flow, motion=replace(findings.flow.motion, wall_shear_pa=real(1.0, math.inf, 1.0)))
     with pytest.raises(DomainError, match="column wall_shear_pa, row 2: the value is infinite"):
         write_image(tabulate("a", {}, replace(findings, flow=flow)), tmp_path / "a", {}, overlay=False)
     assert list(tmp_path.iterdir()) == []

@@ -23,16 +23,17 @@ from vasohm.results.schema import (
 PROMISED = {
     "segments": """image_id, segment_id, network_id, node_a, node_b, vessel_class, class_probability, n_points,
         length_um, length_se_um, chord_um, tortuosity, radius_mean_um, radius_sd_um, radius_hydraulic_um,
-        radius_hydraulic_se_um, hematocrit, viscosity_mpa_s, resistance_pa_s_m3, resistance_lo_pa_s_m3,
+        radius_hydraulic_se_um, hematocrit, hematocrit_tube, viscosity_mpa_s, resistance_pa_s_m3, resistance_lo_pa_s_m3,
         resistance_hi_pa_s_m3, ln_resistance_random_se, ln_resistance_shared_se, flow_nl_min, pressure_a_mmhg,
-        pressure_b_mmhg, wall_shear_pa, resistance_share, flags""",
+        pressure_b_mmhg, velocity_mm_s, transit_s, wall_shear_pa, wall_shear_rate_per_s, reynolds, womersley,
+        resistance_share, flags""",
     "points": "image_id, segment_id, point, s_um, x_px, y_px, radius_um, radius_se_um, contrast, flags",
     "nodes": "image_id, node_id, network_id, x_px, y_px, kind, degree, role, pressure_mmhg",
     "crossings": "image_id, x_px, y_px, segment_over, segment_under, probability",
     "networks": """image_id, network_id, vessel_class, class_probability, n_segments, n_branchings, n_inlets, n_outlets,
         terminals, length_um, area_um2, volume_um3, loops, resistance_pa_s_m3, resistance_lo_pa_s_m3,
         resistance_hi_pa_s_m3, ln_resistance_random_se, ln_resistance_shared_se, n_half_resistance, flow_nl_min,
-        flags""",
+        hematocrit_turns, flags""",
     "scenarios": """image_id, network_id, scenario, n_segments_changed, radius_factor, resistance_before_pa_s_m3,
         resistance_after_pa_s_m3, ratio, ratio_lo, ratio_hi, flags""",
     "branchings": """image_id, node_id, network_id, parent_segment, child_1_segment, child_2_segment, radius_parent_um,
@@ -58,6 +59,9 @@ SUFFIX_UNITS = {
     "_um": "um",
     "_px": "{pixel}",
     "_pa": "Pa",
+    "_mm_s": "mm/s",
+    "_per_s": "/s",
+    "_s": "s",
 }
 NO_SUFFIX_UNITS = {"1", "{signal}"}  # ratios and counts; intensities in the picture's own units
 

@@ -358,7 +358,7 @@ def test_a_bifurcation_of_an_image():
     assert through * found.network_resistance_pa_s_m3[0] == pytest.approx(PA_PER_MMHG, rel=EXACT)
     # a wall takes up what the pressure over it leaves: 2 pi r L tau = pi r^2 dp (balance of forces)
     drop = found.pressure_mmhg[0] - found.pressure_mmhg[1]
-    assert found.wall_shear_pa[0] == pytest.approx(drop * PA_PER_MMHG * 10.0 / (2 * 100.0), rel=1e-10)
+    assert found.motion.wall_shear_pa[0] == pytest.approx(drop * PA_PER_MMHG * 10.0 / (2 * 100.0), rel=1e-10)
     assert found.network_flags[0] == Flag.TERMINALS_JOINED
 
 

@@ -76,7 +76,12 @@ CONTRACT = """
     plasma_viscosity_mpa_s = 1.3
     plasma_viscosity_se_mpa_s = 0.08
     viscosity_mpa_s        = 4.0
-    hematocrit_split       = false
+    hematocrit_split       = true
+    split_law              = "1990"
+    diameter_scaling       = "red-cell-volume"
+    red_cell_volume_fl     = 55
+    density_kg_m3          = 1060
+    heart_rate_per_min     = 420
     parameters = { core = 1.0 }
     [network]
     terminals = "estimate"
@@ -135,6 +140,8 @@ def test_every_key_reaches_its_setting(tmp_path: Path) -> None:
     assert (chosen.blood.law, chosen.blood.hematocrit, chosen.blood.hematocrit_se) == ("pries-in-vitro", 0.4, 0.02)
     assert (chosen.blood.plasma_viscosity_mpa_s, chosen.blood.viscosity_mpa_s) == (1.3, 4.0)
     assert chosen.blood.plasma_viscosity_se_mpa_s == 0.08
+    assert (chosen.blood.split_law, chosen.blood.red_cell_volume_fl) == ("1990", 55.0)
+    assert (chosen.blood.density_kg_m3, chosen.blood.heart_rate_per_min) == (1060.0, 420.0)
     assert (chosen.network.terminals, chosen.network.drive_mmhg) == ("estimate", 2.0)
     mean = (5 + 3 + 1.6) / 3  # of vessels without a class
     assert chosen.targets == EndTargets((mean, 5.0, 1.6, 3.0), 2.0, (31.0, 31.0, 31.0, 31.0), 8.0)
@@ -206,9 +213,7 @@ TEXTS = {("study", "name"), ("study", "sheet")}
 )
 def test_no_key_takes_nonsense(table: str, key: str, value: object) -> None:
     """`true` passes as 1 in Python, and TOML has nan and inf: each would shape a number without a word."""
-    is_fine = ((table, key) in SWITCHES and value is True and key == "overlay") or (
-        (table, key) in TEXTS and value == "nonsense"
-    )
+    is_fine = ((table, key) in SWITCHES and value is True) or ((table, key) in TEXTS and value == "nonsense")
     said = {table: {**SMALLEST.get(table, {}), key: value}}
     if (table, key) == ("study", "sheet") and is_fine:
         assert "no such file" in faults(**said)[0]
@@ -246,7 +251,12 @@ FAULTY = {
     "no viscosity": ({"blood": {"plasma_viscosity_mpa_s": 0}}, "0 must be greater than 0."),
     "a law": ({"blood": {"law": "pries-in-vivi"}}, "Did you mean 'pries-in-vivo'?"),
     "a segmenter": ({"segment": {"method": "rigde"}}, "Did you mean 'ridge'?"),
-    "a split": ({"blood": {"hematocrit_split": True}}, "true is not available: this version"),
+    "a split": ({"blood": {"split_law": "2004"}}, "must be one of '1990', '2005'. Did you mean '2005'?"),
+    "a scaling without cells": ({"blood": {"diameter_scaling": "red-cell-volume"}}, "Give the cells' mean volume"),
+    "a core without viscosity": (
+        {"blood": {"law": "haynes-marginal-zone", "parameters": {"marginal_zone_um": 2.0}}},
+        "blood.parameters.core_viscosity_mpa_s: is missing: law 'haynes-marginal-zone' needs it",
+    ),
     "magnification": ({"scale": {"magnification": "bennett"}}, "scale.magnification: unknown key"),
     "a parameter": ({"segment": {"parameters": {"a": "b"}}}, "segment.parameters.a: 'b' must be a number."),
     "a scenario's key": (

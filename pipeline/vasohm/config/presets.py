@@ -29,6 +29,11 @@ DEFAULTS: Mapping[str, Any] = {
     "blood.plasma_viscosity_se_mpa_s": 0.0,
     "blood.viscosity_mpa_s": 3.0,
     "blood.hematocrit_split": False,
+    "blood.split_law": "2005",
+    "blood.diameter_scaling": "none",  # sources differ on whether the laws already hold the scaling of rats' cells
+    "blood.red_cell_volume_fl": None,
+    "blood.density_kg_m3": 1050.0,  # at 37 degrees Celsius: Trudnowski & Rico, Clin Chem 1974;20:615-616
+    "blood.heart_rate_per_min": None,
     "blood.parameters": {},
     "network.terminals": "auto",
     "network.drive_mmhg": 1.0,  # resistance does not depend on it

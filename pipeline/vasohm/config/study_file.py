@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
+from vasohm.config.blood_settings import blood_problems, blood_settings, blood_warnings
 from vasohm.config.flow_settings import end_targets, scenario_problems, scenarios_asked, target_problems
 from vasohm.config.names import ids_from_files, nearest
 from vasohm.config.presets import DEFAULTS, PRESETS, SPUR_PX, SPUR_RADII
@@ -16,7 +17,6 @@ from vasohm.config.sheet import DESIGN, ImageSource, Sheet, read_sheet
 from vasohm.config.study_model import CompareTable, ScenarioTable, StudyModel, parse_model
 from vasohm.errors import Problem, RequestError
 from vasohm.flow.monte_carlo import IntervalSettings
-from vasohm.flow.rheology import BloodSettings
 from vasohm.flow.terminals import NetworkSettings
 from vasohm.image.calibrate import ScaleSettings, TypedScale
 from vasohm.image.prepare import PrepareSettings
@@ -127,6 +127,7 @@ def _study(said: Mapping[str, Any], path: Path, base: Path, *, needs_sheet: bool
     resolved = _resolve(model, path)
     values = {key: entry["value"] for key, entry in resolved.items()}
     problems += target_problems(values, file)
+    problems += blood_problems(values, file)
     if sheet is not None:
         problems += _mask_problems(values, sheet, file)
     if problems:
@@ -322,15 +323,7 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
             values["radius.plasma_layer_se_um"],
             low,
         ),
-        blood=BloodSettings(
-            values["blood.law"],
-            values["blood.hematocrit"],
-            values["blood.hematocrit_se"],
-            values["blood.plasma_viscosity_mpa_s"],
-            values["blood.viscosity_mpa_s"],
-            values["blood.parameters"],
-            plasma_viscosity_se_mpa_s=values["blood.plasma_viscosity_se_mpa_s"],
-        ),
+        blood=blood_settings(values),
         network=NetworkSettings(values["network.terminals"], values["network.drive_mmhg"]),
         targets=end_targets(values),
         intervals=IntervalSettings(values["network.intervals"], values["network.draws"], values["network.seed"]),
@@ -347,6 +340,7 @@ def _mask_problems(values: Mapping[str, Any], sheet: Sheet, file: str) -> Iterat
 
 
 def _odd(values: Mapping[str, Any], images: Sequence[ImageSource]) -> Iterator[str]:
+    yield from blood_warnings(values)
     bare = [source.image_id for source in images if not source.terminals]
     if values["network.terminals"] == "file" and bare:
         yield f'terminals = "file", but {_some(bare)} have no terminals: their networks get no resistance.'

@@ -12,6 +12,7 @@ from vasohm.config.names import nearest
 from vasohm.config.presets import PRESETS
 from vasohm.errors import Problem
 from vasohm.flow.monte_carlo import LEAST_DRAWS
+from vasohm.flow.phase_separation import SPLIT_LAWS
 from vasohm.flow.rheology import HIGHEST_HEMATOCRIT, law_names
 from vasohm.flow.scenarios import WIDEST_FACTOR
 from vasohm.image.calibrate import LEAST_UM, MOST_UM
@@ -82,14 +83,6 @@ def _by_class(value: object) -> float | dict[str, float]:
     if isinstance(value, dict):
         return {_one_of(name, CLASSES): float(number) for name, number in value.items()}
     return float(numbers[0])
-
-
-def _not_split(value: bool) -> bool:
-    if value:
-        raise _wrong(
-            "is not available: this version does not part hematocrit at branchings. Leave it out or set it to false."
-        )
-    return value
 
 
 def _plain_name(value: str) -> str:
@@ -177,7 +170,12 @@ class BloodTable(Table):
     plasma_viscosity_mpa_s: Positive | None = None
     plasma_viscosity_se_mpa_s: NotNegative | None = None
     viscosity_mpa_s: Positive | None = None
-    hematocrit_split: Annotated[bool, AfterValidator(_not_split)] | None = None
+    hematocrit_split: bool | None = None
+    split_law: Annotated[str, PlainValidator(lambda value: _one_of(value, tuple(SPLIT_LAWS)))] | None = None
+    diameter_scaling: Literal["none", "red-cell-volume"] | None = None
+    red_cell_volume_fl: Annotated[float, Field(ge=5, le=300)] | None = None
+    density_kg_m3: Annotated[float, Field(ge=900, le=1200)] | None = None
+    heart_rate_per_min: Annotated[float, Field(gt=0, le=1500)] | None = None
     parameters: dict[str, float] | None = None
 
 

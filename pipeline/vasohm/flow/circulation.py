@@ -96,4 +96,16 @@ def _network_flags(
     stalled = has[0] & has[1] & ~flows
     flags = terminals.network_flags | missing_terminals(*has)
     flags = flags | np.where(boundary.assumed & flows, int(Flag.TERMINALS_JOINED), 0)
+    flags = flags | np.where(_is_backwards(terminals, boundary), int(Flag.BACKWARDS), 0)
     return np.asarray(flags | np.where(stalled, int(Flag.NO_FLOW), 0), dtype=np.int64)
+
+
+def _is_backwards(terminals: Terminals, boundary: Boundary) -> BoolArray:
+    """Whether all of a network's inlets have a pressure below that of all its outlets."""
+    n = len(terminals.source)
+    highest_inlet, lowest_outlet = np.full(n, -np.inf), np.full(n, np.inf)
+    is_in, is_out = terminals.role > 0, terminals.role < 0
+    given, network = boundary.pressure_pa, terminals.node_network
+    np.maximum.at(highest_inlet, network[is_in], np.nan_to_num(given[is_in], nan=np.inf))
+    np.minimum.at(lowest_outlet, network[is_out], np.nan_to_num(given[is_out], nan=-np.inf))
+    return np.asarray(np.isfinite(highest_inlet) & (highest_inlet < lowest_outlet))

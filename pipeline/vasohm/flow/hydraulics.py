@@ -7,19 +7,21 @@ from typing import cast
 import numpy as np
 import pandas as pd
 
-from vasohm.arrays import FloatArray, IntArray, freeze
+from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.errors import DomainError, NetworkError
 from vasohm.flags import Flag
-from vasohm.flow.circulation import NO_FLOW_SHARE, Circulation, circulate, entering_hematocrit
+from vasohm.flow.circulation import NO_FLOW_SHARE, Circulation
+from vasohm.flow.development import Motion, describe_motion, tube_hematocrit
+from vasohm.flow.hematocrit import find_flow
 from vasohm.flow.kirchhoff import solve_flows
 from vasohm.flow.medians import ln_median_shift, pressure_drives
-from vasohm.flow.poiseuille import SegmentResistances, measure_resistance
+from vasohm.flow.poiseuille import SegmentResistances
 from vasohm.flow.rheology import BloodSettings, make_blood
 from vasohm.flow.terminals import Terminals
 from vasohm.network.graph import NodeKind, VesselGraph
 from vasohm.network.groups import sum_by
 from vasohm.network.radius import MeasuredGraph
-from vasohm.units import M_PER_UM, NL_MIN_PER_M3_S, PA_PER_MMHG, PA_S_PER_MPA_S
+from vasohm.units import NL_MIN_PER_M3_S, PA_PER_MMHG
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -36,8 +38,9 @@ class NetworkFlow:
     resistance_pa_s_m3: FloatArray
     ln_resistance_random_se: FloatArray
     ln_resistance_shared_se: FloatArray
+    hematocrit_tube: FloatArray
     flow_nl_min: FloatArray  # from node_a to node_b
-    wall_shear_pa: FloatArray
+    motion: Motion
     share: FloatArray  # d ln R_network / d ln R_segment
     segment_flags: IntArray
     # nodes
@@ -48,6 +51,7 @@ class NetworkFlow:
     network_ln_resistance_shared_se: FloatArray
     network_flow_nl_min: FloatArray
     network_flags: IntArray
+    hematocrit_turns: FloatArray  # (n_networks,) until hematocrit and flow agreed; NaN where cells were not parted
 
     def __post_init__(self) -> None:
         freeze(self)
@@ -87,19 +91,23 @@ def solve_flow(measured: MeasuredGraph, terminals: Terminals, blood: BloodSettin
     off that of the segments together by `vasohm.flow.medians.ln_median_shift`; so does the flow of a network that
     pressures drive, which then is the drop of pressure over R.
 
+    Where `blood` names a split law, cells part at branchings (`find_flow`). Intervals and shares hold the hematocrit of
+    every segment where it has settled: how cells would part anew with other radii is left out of them.
+
     References
     ----------
     Cohn RM (1950) The resistance of an electrical network. Proc Am Math Soc 1:316-324,
     doi:10.1090/S0002-9939-1950-0035230-X.
     """
-    hematocrit = entering_hematocrit(terminals, blood.hematocrit)
-    resistances = measure_resistance(measured, make_blood(blood), hematocrit, np.ones(measured.graph.n_segments))
-    circulation = circulate(measured.graph, resistances.resistance_pa_s_m3, terminals)
+    state = find_flow(measured, terminals, blood, np.ones(measured.graph.n_segments))
+    resistances, circulation = state.resistances, state.circulation
     random_se, shared = network_doubt(terminals, circulation, resistances)
     network_resistance, network_flow_m3_s = at_medians(measured, terminals, circulation, resistances)
     flow = circulation.flow_m3_s
-    at_radius = resistances.viscosity_mpa_s / resistances.radius_hydraulic_um**3
-    wall_shear_pa = 4.0 / np.pi * np.abs(flow) * at_radius * PA_S_PER_MPA_S / M_PER_UM**3
+    tube = (measured.length_um, resistances.radius_hydraulic_um, resistances.viscosity_mpa_s)
+    motion = describe_motion(flow, tube, blood, drive_is_given(terminals)[terminals.segment_network])
+    like_human_um = 2.0 * make_blood(blood).diameter_factor * resistances.radius_hydraulic_um
+    flags = measured.segment_flags | resistances.flags | motion.flags | _flow_flags(measured.graph, flow)
     return NetworkFlow(
         terminals=terminals,
         hematocrit=resistances.hematocrit,
@@ -110,17 +118,25 @@ def solve_flow(measured: MeasuredGraph, terminals: Terminals, blood: BloodSettin
         resistance_pa_s_m3=resistances.resistance_pa_s_m3,
         ln_resistance_random_se=resistances.ln_random_se,
         ln_resistance_shared_se=np.sqrt(np.square(resistances.ln_shared).sum(axis=1)),
+        hematocrit_tube=tube_hematocrit(like_human_um, resistances.hematocrit),
         flow_nl_min=flow * NL_MIN_PER_M3_S,
-        wall_shear_pa=wall_shear_pa,
+        motion=motion,
         share=circulation.share,
-        segment_flags=measured.segment_flags | resistances.flags | _flow_flags(measured.graph, flow),
+        segment_flags=flags,
         pressure_mmhg=circulation.pressure_pa / PA_PER_MMHG,
         network_resistance_pa_s_m3=network_resistance,
         network_ln_resistance_random_se=random_se,
         network_ln_resistance_shared_se=np.sqrt(np.square(shared).sum(axis=1)),
         network_flow_nl_min=network_flow_m3_s * NL_MIN_PER_M3_S,
         network_flags=circulation.network_flags,
+        hematocrit_turns=state.hematocrit_turns,
     )
+
+
+def drive_is_given(terminals: Terminals) -> BoolArray:
+    """Whether a pressure or flow was given or estimated at a terminal of each network (n_networks,), not assumed."""
+    given = (terminals.role != 0) & (np.isfinite(terminals.pressure_mmhg) | np.isfinite(terminals.flow_nl_min))
+    return np.asarray(np.bincount(terminals.node_network[given], minlength=len(terminals.source)) > 0)
 
 
 def _flow_flags(graph: VesselGraph, flow: FloatArray) -> IntArray:

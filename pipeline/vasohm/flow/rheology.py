@@ -1,7 +1,7 @@
 """What a viscosity law is, the laws by name, and blood: a law with its constants."""
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from types import MappingProxyType, ModuleType
 
 import numpy as np
@@ -22,6 +22,7 @@ from vasohm.plugins import PluginKind, load_plugin, plugin_names, refuse_plugin
 HIGHEST_HEMATOCRIT = 0.75  # above it cells are packed and no law was measured
 HEMATOCRIT_STEP = 1e-6  # of a one-sided difference: slopes to about 1e-6
 PLASMA_STEP = 1e-6  # relative, of a one-sided difference
+HUMAN_CELL_VOLUME_FL = 92.0  # of the blood that the laws were fitted to; that of rats is 55 fL
 
 
 @dataclass(frozen=True, slots=True)
@@ -38,6 +39,10 @@ class BloodSettings:
     viscosity_mpa_s: float  # of law "constant"
     parameters: Mapping[str, float]
     plasma_viscosity_se_mpa_s: float = 0.0  # standard uncertainty of the viscosity of plasma
+    red_cell_volume_fl: float | None = None  # diameters scale with its cube root against human cells; None: they do not
+    split_law: str | None = None  # of `vasohm.flow.phase_separation`; None leaves one hematocrit to a whole network
+    density_kg_m3: float = 1050.0  # whole blood at 37 degrees Celsius: Trudnowski & Rico, Clin Chem 1974;20:615-616
+    heart_rate_per_min: float | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -52,20 +57,30 @@ class ViscosityLaw:
     valid_radius_um: tuple[float, float]
     valid_hematocrit: tuple[float, float]
     citation: str  # authors, year, DOI, equation
+    scales_with_cells: bool = True  # its diameters are those of vessels with human cells, and may be scaled to others
+    # Constants that a study must give in [blood.parameters], with values to show the law by.
+    example_parameters: Mapping[str, float] = field(default_factory=dict)
 
 
-def _published(law: ModuleType) -> ViscosityLaw:
-    return ViscosityLaw(law.viscosity, law.VALID_RADIUS_UM, law.VALID_HEMATOCRIT, law.CITATION)
+def _published(
+    law: ModuleType, *, scales_with_cells: bool = True, example_parameters: Mapping[str, float] | None = None
+) -> ViscosityLaw:
+    valid = (law.VALID_RADIUS_UM, law.VALID_HEMATOCRIT)
+    return ViscosityLaw(law.viscosity, *valid, law.CITATION, scales_with_cells, example_parameters or {})
 
 
 LAWS: Mapping[str, ViscosityLaw] = MappingProxyType(
     {
-        "constant": _published(constant),
+        "constant": _published(constant, scales_with_cells=False, example_parameters={"viscosity_mpa_s": 3.0}),
         "pries-in-vitro": _published(pries_in_vitro),
         "pries-in-vivo": _published(pries_in_vivo),
         "pries-secomb-surface-layer": _published(pries_secomb_surface_layer),
         "kiani-hudetz": _published(kiani_hudetz),
-        "haynes-marginal-zone": _published(haynes_marginal_zone),
+        "haynes-marginal-zone": _published(
+            haynes_marginal_zone,
+            scales_with_cells=False,
+            example_parameters={"core_viscosity_mpa_s": 4.0, "marginal_zone_um": 2.0},
+        ),
     }
 )
 
@@ -106,6 +121,7 @@ class Blood:
     parameters: Mapping[str, float]
     hematocrit_se: float  # of every hematocrit alike
     plasma_viscosity_se_mpa_s: float = 0.0
+    diameter_factor: float = 1.0  # on diameters within the law, from the volume of the cells
 
     def viscosity(self, radius_um: FloatArray, hematocrit: FloatArray) -> FloatArray:
         """Apparent viscosity in mPa·s, shape of both arguments broadcast; infinite where no blood can pass.
@@ -124,7 +140,7 @@ class Blood:
         )
         value = np.asarray(
             self.law.viscosity(
-                radius_um,
+                self.diameter_factor * radius_um,
                 hematocrit,
                 plasma_viscosity_mpa_s=self.plasma_viscosity_mpa_s,
                 parameters=self.parameters,
@@ -175,6 +191,7 @@ class Blood:
     def outside_range(self, radius_um: FloatArray, hematocrit: FloatArray) -> BoolArray:
         """Whether the law is used beyond the radii or hematocrits it was fitted to."""
         (least_um, most_um), (least, most) = self.law.valid_radius_um, self.law.valid_hematocrit
+        radius_um = self.diameter_factor * radius_um
         return (radius_um < least_um) | (radius_um > most_um) | (hematocrit < least) | (hematocrit > most)
 
 
@@ -203,7 +220,26 @@ def make_blood(settings: BloodSettings) -> Blood:
             msg = f"{name} is {getattr(settings, name)}; a standard uncertainty is 0 or more."
             raise DomainError(msg)
     made = _blood(settings.law, settings.plasma_viscosity_mpa_s, parameters, settings.hematocrit_se)
-    return replace(made, plasma_viscosity_se_mpa_s=settings.plasma_viscosity_se_mpa_s)
+    factor = diameter_factor(settings.red_cell_volume_fl) if made.law.scales_with_cells else 1.0
+    return replace(made, plasma_viscosity_se_mpa_s=settings.plasma_viscosity_se_mpa_s, diameter_factor=factor)
+
+
+def diameter_factor(red_cell_volume_fl: float | None) -> float:
+    """Diameter of the vessel with human cells that is like one with cells of this volume, over its own; 1 for None.
+
+    Cells of one shape are in vessels what their size is to the diameter: (92 fL / volume)^(1/3).
+
+    Raises
+    ------
+    DomainError
+        A volume that is not positive.
+    """
+    if red_cell_volume_fl is None:
+        return 1.0
+    if not 0 < red_cell_volume_fl < np.inf:
+        msg = f"red_cell_volume_fl is {red_cell_volume_fl}; it must be positive (human 92, rat 55)."
+        raise DomainError(msg)
+    return float((HUMAN_CELL_VOLUME_FL / red_cell_volume_fl) ** (1.0 / 3.0))
 
 
 def _blood(

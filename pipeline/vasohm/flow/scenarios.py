@@ -8,10 +8,11 @@ import numpy as np
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.errors import DomainError
 from vasohm.flags import Flag
-from vasohm.flow.circulation import Circulation, circulate, entering_hematocrit
+from vasohm.flow.circulation import Circulation
+from vasohm.flow.hematocrit import find_flow
 from vasohm.flow.hydraulics import at_medians
 from vasohm.flow.monte_carlo import DrawnState, ResistanceIntervals, ratio_bounds
-from vasohm.flow.poiseuille import SegmentResistances, measure_resistance
+from vasohm.flow.poiseuille import SegmentResistances
 from vasohm.flow.rheology import BloodSettings, make_blood
 from vasohm.flow.terminals import Terminals
 from vasohm.network.graph import VesselClass
@@ -97,7 +98,7 @@ def run_scenarios(
     terminals : Terminals
         Inlets and outlets, with their pressures or flows, the same before and after.
     blood : BloodSettings
-        Viscosity law and hematocrit, the same before and after.
+        Viscosity law and the hematocrit that enters, the same before and after; cells part anew where it says so.
     scenarios : sequence of Scenario
         Any number.
     intervals : ResistanceIntervals, optional
@@ -119,13 +120,12 @@ def run_scenarios(
     them, by the difference of its effects on the two (first order, JCGM 100:2008, eq. 13; or draw by draw, see
     `vasohm.flow.monte_carlo`). Where a ratio is wanted, the interval is that of the ratio at the factor found.
     """
-    hematocrit = entering_hematocrit(terminals, blood.hematocrit)
     made = make_blood(blood)
 
     def state(radius_factor: FloatArray) -> _State:
         radius_um = measured.radius_um * radius_factor[owner(measured.graph.offsets)]
-        resistances = measure_resistance(measured, made, hematocrit, radius_factor)
-        circulation = circulate(measured.graph, resistances.resistance_pa_s_m3, terminals)
+        found = find_flow(measured, terminals, blood, radius_factor)
+        resistances, circulation = found.resistances, found.circulation
         network_resistance, _ = at_medians(measured, terminals, circulation, resistances)
         return _State(replace(measured, radius_um=radius_um), resistances, circulation, network_resistance)
 

@@ -96,6 +96,12 @@ NETWORKS: tuple[Column, ...] = (
         "Total flow that enters the network: at the pressures that its terminals give or else the study asks for, as "
         "median like the resistance; or the flow that the terminals give.",
     ),
+    number(
+        "hematocrit_turns",
+        "1",
+        "Turns after which the parted hematocrit and the flow agreed; empty where cells are not parted at "
+        "branchings, or came to no state.",
+    ),
     FLAGS,
 )
 

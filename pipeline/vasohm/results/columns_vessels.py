@@ -62,7 +62,18 @@ SEGMENTS: tuple[Column, ...] = (
     number(
         "radius_hydraulic_se_um", "um", "Standard uncertainty of the hydraulic radius, random and shared parts (k = 1)."
     ),
-    number("hematocrit", "1", "Discharge hematocrit in the segment, as a fraction."),
+    number(
+        "hematocrit",
+        "1",
+        "Discharge hematocrit in the segment, as a fraction: that which enters its network, or what "
+        "cells parting at branchings leave to it, where the study asks for that.",
+    ),
+    number(
+        "hematocrit_tube",
+        "1",
+        "Share of the segment's volume that cells fill, below the discharge hematocrit as cells run ahead of plasma "
+        "(Pries et al., Circ Res 1990;67:826-834).",
+    ),
     number("viscosity_mpa_s", "mPa.s", "Apparent viscosity at the hydraulic radius, by the law that the study names."),
     number(
         "resistance_pa_s_m3",
@@ -77,10 +88,31 @@ SEGMENTS: tuple[Column, ...] = (
     number("flow_nl_min", "nL/min", "Flow through the segment, positive from node_a to node_b."),
     number("pressure_a_mmhg", "mm[Hg]", "Pressure at node_a."),
     number("pressure_b_mmhg", "mm[Hg]", "Pressure at node_b."),
+    number("velocity_mm_s", "mm/s", "Mean velocity of blood over the cross-section at the hydraulic radius."),
+    number(
+        "transit_s", "s", "Time in the segment at its mean velocity; empty where nothing flows."
+    ),
     number(
         "wall_shear_pa",
         "Pa",
         "Wall shear stress at the hydraulic radius: 4 mu |Q| / (pi r^3), mu the apparent viscosity.",
+    ),
+    number(
+        "wall_shear_rate_per_s",
+        "/s",
+        "Wall shear rate at the hydraulic radius: 4 |Q| / (pi r^3), the wall shear stress over the apparent viscosity.",
+    ),
+    number(
+        "reynolds",
+        "1",
+        "Reynolds number: density times mean velocity times diameter over apparent viscosity. Empty where no terminal "
+        "gave a pressure or flow: flow then has the size of an assumed drop of pressure.",
+    ),
+    number(
+        "womersley",
+        "1",
+        "Womersley number at the heart rate that the study gives: radius times the root of (angular frequency times "
+        "density over apparent viscosity). Empty without a heart rate.",
     ),
     number(
         "resistance_share",

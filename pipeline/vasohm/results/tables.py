@@ -185,6 +185,7 @@ def _segments(findings: Findings) -> dict[str, AnyArray]:
         "radius_hydraulic_um": flow.radius_hydraulic_um,
         "radius_hydraulic_se_um": quadrature(flow.radius_hydraulic_random_se_um, flow.radius_hydraulic_shared_se_um),
         "hematocrit": flow.hematocrit,
+        "hematocrit_tube": flow.hematocrit_tube,
         "viscosity_mpa_s": flow.viscosity_mpa_s,
         "resistance_pa_s_m3": flow.resistance_pa_s_m3,
         "resistance_lo_pa_s_m3": low,
@@ -194,7 +195,12 @@ def _segments(findings: Findings) -> dict[str, AnyArray]:
         "flow_nl_min": flow.flow_nl_min,
         "pressure_a_mmhg": flow.pressure_mmhg[graph.node_a],
         "pressure_b_mmhg": flow.pressure_mmhg[graph.node_b],
-        "wall_shear_pa": flow.wall_shear_pa,
+        "velocity_mm_s": flow.motion.velocity_mm_s,
+        "transit_s": flow.motion.transit_s,
+        "wall_shear_pa": flow.motion.wall_shear_pa,
+        "wall_shear_rate_per_s": flow.motion.wall_shear_rate_per_s,
+        "reynolds": flow.motion.reynolds,
+        "womersley": flow.motion.womersley,
         "resistance_share": flow.share,
         "flags": codes(graph.segment_flags | measured.segment_flags | flow.segment_flags | unbounded),
     }
@@ -262,6 +268,7 @@ def _networks(findings: Findings) -> dict[str, AnyArray]:
         "ln_resistance_shared_se": flow.network_ln_resistance_shared_se,
         "n_half_resistance": _count_to_half(terminals.segment_network, flow.share, n),
         "flow_nl_min": flow.network_flow_nl_min,
+        "hematocrit_turns": flow.hematocrit_turns,
         "flags": codes(terminals.network_flags | flow.network_flags | intervals.network_flags | unbounded),
     }
 
