@@ -304,6 +304,8 @@ def make_methods(law: str = "constant", method: str = "ridge", n_masked: int = 0
         scenario_names=(HOSTILE,),
         n_images=3,
         n_masked=n_masked,
+        intervals=IntervalSettings("auto", 1000, 0),
+        targets=None,
     )
     return describe_methods(used)
 

@@ -101,6 +101,24 @@ def test_shape_is_not_asked_where_the_study_says_so(how):
     assert used == (how == "file")
 
 
+def test_estimates_are_marked_only_where_nothing_is_known():
+    """A tree shows its ends by its shape; a mesh, and ends that a terminals file leaves out, are left to estimation."""
+    estimate = NetworkSettings("estimate", 1.0)
+    nodes = [*NODES[:4], (300.0, 100.0)]
+    pairs = [(0, 1), (1, 2), (1, 3), (2, 3), (3, 4)]
+    mesh = place_terminals(bed(nodes, [straight(nodes, a, b, 5.0) for a, b in pairs]), [], estimate)
+    assert mesh.source == ("estimated",)
+    assert mesh.network_flags.tolist() == [Flag.TERMINALS_ESTIMATED]
+    assert not mesh.role.any()
+    by_shape = place_terminals(two_trees(), [], estimate)
+    assert by_shape.source == ("auto", "auto")
+    assert by_shape.network_flags.tolist() == [0, 0]
+    some = [at(0, 100), at(200, 50, "outlet"), at(0, 300), at(90, 300, "outlet")]
+    told = place_terminals(two_trees(), some, estimate)
+    assert told.source == ("estimated", "file")
+    assert told.role.tolist() == [1, 0, -1, 0, 1, -1]
+
+
 def test_a_closed_ring_has_no_terminals():
     around = np.linspace(0, 2 * np.pi, 41)
     path = 100 + 30 * np.stack([np.cos(around), np.sin(around)], axis=1)

@@ -1,13 +1,16 @@
 """The methods paragraph of one study, from the settings that it used, with the sources that it leans on."""
 
 import re
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
+from vasohm.flow.estimated_ends import EndTargets
+from vasohm.flow.monte_carlo import FIRST_ORDER_UP_TO, IntervalSettings
 from vasohm.flow.rheology import BloodSettings
 from vasohm.flow.terminals import NetworkSettings
 from vasohm.image.prepare import PrepareSettings
 from vasohm.image.segment import SegmentSettings
+from vasohm.network.graph import VesselClass
 from vasohm.network.lumenfit import RadiusSettings
 
 POISEUILLE = (
@@ -18,6 +21,14 @@ SHARES = "Cohn RM. The resistance of an electrical network. Proc Am Math Soc 195
 UNCERTAINTY = (
     "JCGM 100:2008. Evaluation of measurement data: guide to the expression of uncertainty in measurement. "
     "doi:10.59161/JCGM100-2008E"
+)
+ESTIMATE = (
+    "Fry BC, Lee J, Smith NP, Secomb TW. Estimation of blood flow rates in large microvascular networks. "
+    "Microcirculation 2012;19:530-538. doi:10.1111/j.1549-8719.2012.00184.x"
+)
+DRAWS = (
+    "JCGM 101:2008. Evaluation of measurement data: propagation of distributions using a Monte Carlo method. "
+    "doi:10.59161/JCGM101-2008"
 )
 ARRAYS = "Harris CR, et al. Array programming with NumPy. Nature 2020;585:357-362. doi:10.1038/s41586-020-2649-2"
 ALGORITHMS = (
@@ -33,6 +44,10 @@ LAW_CAUTION = (
 ONE_VISCOSITY_CAUTION = (
     "One viscosity was taken for all vessels: that blood resists differently in narrow ones, and with its hematocrit, "
     "is left out."
+)
+ESTIMATE_CAUTION = (
+    "Networks with the flag terminals_estimated have flows at their ends that were estimated from targets, not measured; "
+    "directions as a whole may be reversed. Their resistance depends on the estimate, which its interval leaves out."
 )
 CAUTIONS: tuple[str, ...] = (
     (
@@ -68,6 +83,8 @@ class MethodsUsed:
     scenario_names: tuple[str, ...]
     n_images: int
     n_masked: int  # images that came with a vessel mask made elsewhere
+    intervals: IntervalSettings
+    targets: EndTargets | None  # of ends that are estimated
 
 
 @dataclass(frozen=True, slots=True)
@@ -106,15 +123,19 @@ def describe_methods(used: MethodsUsed) -> Methods:
         ),
         _blood_sentence(used.blood, mark(used.law_citation)),
         _network_sentence(used.network, mark(SHARES)),
+        *([_estimate_sentence(used.targets, mark(ESTIMATE))] if used.targets is not None else []),
         (
             f"Standard uncertainties follow the GUM {mark(UNCERTAINTY)}; random causes and those that a whole image "
-            "shares are kept apart, and 95 % intervals of resistances are symmetric in their logarithm."
+            "shares are kept apart, and 95 % intervals of resistances are symmetric in their logarithm"
+            f"{_drawn_words(used.intervals, mark)}."
         ),
     ]
     if used.scenario_names:
         sentences.append(f"Scenarios: {'; '.join(used.scenario_names)}.")
     constant = used.blood.law == "constant"
     cautions = tuple(ONE_VISCOSITY_CAUTION if constant and one == LAW_CAUTION else one for one in CAUTIONS)
+    if used.targets is not None:
+        cautions += (ESTIMATE_CAUTION,)
     if used.radius.plasma_layer_um:
         cautions += ("Radii are those of the red-cell column with a plasma layer added, whose width is an assumption.",)
     return Methods(" ".join(sentences), tuple(cited), cautions)
@@ -154,9 +175,11 @@ def _blood_sentence(blood: BloodSettings, mark: str) -> str:
     if blood.law == "constant":
         return f"The apparent viscosity was {blood.viscosity_mpa_s:g} mPa·s everywhere {mark}."
     doubt = f" (standard uncertainty {blood.hematocrit_se:g})" if blood.hematocrit_se else ""
+    plasma_se = blood.plasma_viscosity_se_mpa_s
+    of_plasma = f" (standard uncertainty {plasma_se:g} mPa·s)" if plasma_se else ""
     return (
         f"The apparent viscosity follows the law {blood.law} {mark} at a discharge hematocrit of {blood.hematocrit:g}"
-        f"{doubt} and a plasma viscosity of {blood.plasma_viscosity_mpa_s:g} mPa·s."
+        f"{doubt} and a plasma viscosity of {blood.plasma_viscosity_mpa_s:g} mPa·s{of_plasma}."
     )
 
 
@@ -171,6 +194,32 @@ def _network_sentence(network: NetworkSettings, mark: str) -> str:
         f"{network.drive_mmhg:g} mmHg. A segment's share of its network's resistance is its share of the dissipated "
         f"power {mark}."
     )
+
+
+def _estimate_sentence(targets: EndTargets, mark: str) -> str:
+    def said(values: tuple[float, ...], unit: str) -> str:
+        if len(set(values)) == 1:
+            return f"{values[0]:g} {unit}"
+        named = [f"{values[kind]:.3g} {unit} ({kind.name.lower()})" for kind in VesselClass if kind]
+        return ", ".join(named) + f", {values[0]:.3g} {unit} elsewhere"
+
+    return (
+        "Flows at ends of which nothing was known were estimated as those that bring wall shear stress nearest to "
+        f"{said(targets.wall_shear_pa, 'Pa')} (scatter {targets.wall_shear_sd_pa:g} Pa) and pressure nearest to "
+        f"{said(targets.pressure_mmhg, 'mmHg')} (scatter {targets.pressure_sd_mmhg:g} mmHg), by least squares {mark}; "
+        "the resistance is then the dissipated power over the square of the inflow."
+    )
+
+
+def _drawn_words(intervals: IntervalSettings, mark: Callable[[str], str]) -> str:
+    if intervals.method == "delta":
+        return ""
+    which = (
+        "all networks"
+        if intervals.method == "monte-carlo"
+        else f"networks whose radii are known to worse than {100 * FIRST_ORDER_UP_TO:g} %"
+    )
+    return f"; those of {which} come from {intervals.draws} random draws (seed {intervals.seed}) {mark(DRAWS)}"
 
 
 def bibtex(references: Sequence[str]) -> str:

@@ -53,6 +53,8 @@ def methods_used(study: Study, version: str) -> Methods:
             scenario_names=tuple(scenario.name for scenario in settings.scenarios),
             n_images=len(study.images),
             n_masked=sum(source.mask_file is not None for source in study.images),
+            intervals=settings.intervals,
+            targets=settings.targets,
         )
     )
 

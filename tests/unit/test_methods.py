@@ -1,0 +1,40 @@
+"""What the methods paragraph says of choices that change what a number means."""
+
+from pathlib import Path
+
+from vasohm.config.study_file import study_from_mapping
+from vasohm.results.methods import ESTIMATE_CAUTION, Methods
+from vasohm.study.gather import methods_used
+
+
+def methods(**tables: object) -> Methods:
+    return methods_used(study_from_mapping({"image": {"preset": "fundus"}, **tables}, Path()), "0")
+
+
+def test_estimated_ends_are_told_with_their_targets_source_and_caution() -> None:
+    """Whoever reads a resistance that rests on an estimate must read that it does."""
+    targets = {"target_wall_shear_pa": 2.0, "target_pressure_mmhg": {"arteriole": 45, "venule": 18}}
+    told = methods(network={"terminals": "estimate", **targets})
+    assert "nearest to 2 Pa (scatter 1 Pa)" in told.paragraph
+    assert "45 mmHg (arteriole), 18 mmHg (venule), 31.5 mmHg (capillary), 31.5 mmHg elsewhere" in told.paragraph
+    assert any("10.1111/j.1549-8719.2012.00184.x" in source for source in told.references)
+    assert ESTIMATE_CAUTION in told.cautions
+    plain = methods()
+    assert "estimated" not in plain.paragraph
+    assert ESTIMATE_CAUTION not in plain.cautions
+
+
+def test_draws_are_told_with_their_number_and_seed() -> None:
+    """Without the seed nobody could make the same interval again."""
+    assert (
+        "those of all networks come from 400 random draws (seed 7)"
+        in methods(network={"intervals": "monte-carlo", "draws": 400, "seed": 7}).paragraph
+    )
+    assert "known to worse than 5 % come from 1000 random draws (seed 0)" in methods().paragraph
+    assert "draws" not in methods(network={"intervals": "delta"}).paragraph
+
+
+def test_doubt_of_plasma_viscosity_is_told() -> None:
+    """An interval that holds it looks like one that does not."""
+    told = methods(blood={"plasma_viscosity_se_mpa_s": 0.08}).paragraph
+    assert "plasma viscosity of 1.2 mPa·s (standard uncertainty 0.08 mPa·s)" in told
