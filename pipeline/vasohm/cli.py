@@ -222,14 +222,28 @@ def gather(out: Path) -> int:
 
 @commands.command()
 @click.argument("results", metavar="DIR", type=_FOLDER)
-@click.option("--truth", required=True, type=_FOLDER, help="Folder with the truth of the images: IMAGE_ID/points.csv …")
+@click.option(
+    "--truth",
+    required=True,
+    type=_FOLDER,
+    help="Folder of phantoms, or of masks that a person drew: IMAGE_ID.png …, nonzero is vessel.",
+)
 @click.option("--out", type=_FOLDER, help="Folder for the tables and the picture; nothing is written where not given.")
 def appraise(results: Path, truth: Path, out: Path | None) -> int:
     """Tell how far what was measured in DIR is from the truth, and what can be trusted."""
     from vasohm.study.appraise import appraise as hold_against_truth
     from vasohm.study.appraise import write_appraisal
-    from vasohm.study.certificate import summary_lines
+    from vasohm.study.appraise_masks import appraise_masks, holds_masks, write_mask_appraisal
+    from vasohm.study.certificate import mask_lines, summary_lines
 
+    if holds_masks(truth):
+        agreed = appraise_masks(results, truth)
+        lines = mask_lines(agreed.table, agreed.notes)
+        if out is not None:
+            write_mask_appraisal(agreed, out, lines)
+        for line in lines:
+            click.echo(line)
+        return EXIT_OK
     appraisal = hold_against_truth(results, truth)
     if out is not None:
         write_appraisal(appraisal, out)

@@ -81,6 +81,7 @@ NETWORK_COLUMNS = [
     "resistance_hi_pa_s_m3",
     "ln_resistance_random_se",
     "ln_resistance_shared_se",
+    "n_half_resistance",
     "flow_nl_min",
     "flags",
 ]

@@ -17,6 +17,7 @@ from vasohm_synthetic.profile import central_density
 from vasohm_synthetic.scene import Scene
 from vasohm_synthetic.trace import Graph, Segment, trace
 
+HALF_ROUNDING = 1e-9  # shares of equal segments come to half in spite of rounding
 TRUTH_STEP_PX = 1.0  # between the points of points.csv
 
 
@@ -207,8 +208,15 @@ def _networks(graph: Graph, segments: pd.DataFrame, flow: Flow, pixel_size_um: f
                 "volume_um3": float(sum(volumes)) * pixel_size_um**3,
                 "loops": len(members) - int(nodes.sum()) + 1,
                 "resistance_pa_s_m3": resistance,
+                "n_half_resistance": _to_half(flow.share[flow.segment_network == network]) if solved else np.nan,
                 "flow_nl_min": float(flow.total_flow_m3_s[network]) * NL_MIN_PER_M3_S,
                 "flags": "",
             }
         )
     return pd.DataFrame(rows, columns=NETWORK_COLUMNS)
+
+
+def _to_half(share: FloatArray) -> int:
+    """Fewest segments whose shares of the resistance come to half of it."""
+    held = np.cumsum(np.sort(np.nan_to_num(share))[::-1])
+    return int(np.searchsorted(held, 0.5 - HALF_ROUNDING)) + 1

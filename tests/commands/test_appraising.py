@@ -5,16 +5,20 @@ import os
 import shutil
 import subprocess
 import sys
+from collections.abc import Callable
 from pathlib import Path
 
+import numpy as np
 import pandas as pd
 import pytest
 from frictionless import Resource, Schema
+from PIL import Image
 
 from vasohm.errors import RequestError
 from vasohm.results.columns_appraisal import APPRAISAL
 from vasohm.results.schema import table_schema
 from vasohm.study.appraise import appraise
+from vasohm.study.appraise_masks import appraise_masks
 from vasohm_synthetic.make import make_phantoms
 from vasohm_synthetic.recipe import parse_recipe
 
@@ -43,7 +47,7 @@ FILES = {
     "appraisal.txt",
     "certificate.png",
     "certificate.svg",
-    *(f"{table}.csv" for table in APPRAISAL),
+    *(f"{table}.csv" for table in APPRAISAL if table != "appraisal_masks"),
 }
 
 
@@ -79,6 +83,8 @@ def test_appraisal_is_written_and_told(measured: Path, tmp_path: Path) -> None:
     assert (tmp_path / "out" / "appraisal.txt").read_text(encoding="utf-8") == done.stdout
     assert "What can be trusted" in done.stdout
     for table, columns in APPRAISAL.items():
+        if table == "appraisal_masks":
+            continue
         schema = Schema.from_descriptor(table_schema(columns))
         resource = Resource(path=f"{table}.csv", basepath=str(tmp_path / "out"), schema=schema)
         report = resource.validate()
@@ -108,11 +114,13 @@ def test_what_is_not_in_both_is_told(measured: Path, tmp_path: Path) -> None:
     assert "third: has truth and was not measured; left out." in done.stdout
 
 
+def rewritten(truth: Path, name: str, change: Callable[[pd.DataFrame], pd.DataFrame]) -> None:
+    path = truth / "NA" / f"{name}.csv"
+    change(pd.read_csv(path, keep_default_na=False)).to_csv(path, index=False)
+
+
 def changed(truth: Path, column: str, value: float) -> None:
-    path = truth / "NA" / "image.csv"
-    table = pd.read_csv(path, keep_default_na=False)
-    table[column] = value
-    table.to_csv(path, index=False)
+    rewritten(truth, "image", lambda table: table.assign(**{column: value}))
 
 
 @pytest.mark.parametrize(
@@ -124,8 +132,17 @@ def changed(truth: Path, column: str, value: float) -> None:
         ),
         (lambda truth: changed(truth, "pixel_size_um", 2.1), "the truth has pixels of 2.1 µm, measured was with 2 µm"),
         (lambda truth: [f.rename(truth / f"other-{f.name}") for f in list(truth.iterdir())], "no image is in both"),
-        (lambda truth: [f.unlink() for f in truth.glob("*/points.csv")], "holds no truth"),
-        (lambda truth: (truth / "NA" / "nodes.csv").unlink(), "cannot be read as a table of nodes"),
+        (lambda truth: [f.unlink() for f in truth.glob("*/*.csv")], "holds no truth"),
+        (lambda truth: [f.unlink() for f in truth.glob("*/points.csv")], r"NA.points\.csv: is not there"),
+        (lambda truth: (truth / "NA" / "nodes.csv").unlink(), r"NA.nodes\.csv: is not there"),
+        (lambda truth: rewritten(truth, "points", lambda t: t.assign(image_id="b")), "is of image 'b'"),
+        (lambda truth: rewritten(truth, "points", lambda t: t.assign(radius_um=0)), "have a radius that is not above"),
+        (lambda truth: rewritten(truth, "points", lambda t: t.assign(x_px=900)), "lie outside a picture of 160 x 128"),
+        (lambda truth: rewritten(truth, "points", lambda t: t.iloc[:9]), "1 of 2 segments have fewer than two points"),
+        (lambda truth: rewritten(truth, "segments", lambda t: t.iloc[:1]), "points are of segments not in"),
+        (lambda truth: rewritten(truth, "segments", lambda t: t.assign(segment_id=1)), "have the id of another one"),
+        (lambda truth: rewritten(truth, "segments", lambda t: t.assign(network_id=9)), "are of networks not in"),
+        (lambda truth: changed(truth, "pixel_size_um", 0), "says no size or no pixel size"),
         (lambda truth: (truth / "NA" / "nodes.csv").write_text("node_id\n1\n"), "lacks"),
         (lambda truth: (truth / "NA" / "image.csv").write_text("width_px,height_px,pixel_size_um\n"), "has 0 rows"),
         (lambda truth: (truth / "NA" / "points.csv").write_text("x_px\nfar\n"), "cannot be read as a table of points"),
@@ -154,3 +171,81 @@ def test_folders_that_are_none_are_refused(measured: Path, tmp_path: Path) -> No
     (tmp_path / "results" / "study.json").write_text(json.dumps(study), encoding="utf-8")
     with pytest.raises(RequestError, match=r"does not say which blood was assumed \('blood\.law'\)"):
         appraise(tmp_path / "results", measured / "made" / "truth")
+
+
+def drawn_masks(measured: Path, folder: Path, suffix: str = "_drawn") -> Path:
+    """Masks of the true lumina, as a careful person would draw them."""
+    folder.mkdir()
+    y, x = np.mgrid[:128, :160]
+    for image_id in ("NA", "second"):
+        points = pd.read_csv(measured / "made" / "truth" / image_id / "points.csv")
+        away = np.hypot(x[..., None] - points["x_px"].to_numpy(), y[..., None] - points["y_px"].to_numpy())
+        lumen = (away <= points["radius_um"].to_numpy() / 2.0).any(axis=-1)
+        Image.fromarray(np.where(lumen, 255, 0).astype(np.uint8)).save(folder / f"{image_id}{suffix}.png")
+    return folder
+
+
+def test_results_against_drawn_masks(measured: Path, tmp_path: Path) -> None:
+    """Whoever has masks drawn by hand gets scores of each image and of all, printed and as a table with a schema."""
+    masks = drawn_masks(measured, tmp_path / "masks")
+    done = run("appraise", measured / "results", "--truth", masks, "--out", tmp_path / "out")
+    assert done.returncode == 0, done.stderr
+    resource = Resource(path="appraisal_masks.csv", basepath=str(tmp_path / "out"))
+    resource.schema = Schema.from_descriptor(table_schema(APPRAISAL["appraisal_masks"]))
+    assert resource.validate().valid
+    table = pd.read_csv(tmp_path / "out" / "appraisal_masks.csv", keep_default_na=False)
+    assert table["image_id"].tolist() == ["NA", "second", ""]
+    assert table["n_both_px"].iloc[2] == table["n_both_px"].iloc[:2].sum()
+    assert (table["n_view_px"].iloc[:2] == 160 * 128).all()
+    rim = 250 * 2 / (250 * 13)  # both outlines of 250 px of vessel, half a pixel off, over its area of 250 x 13 px
+    assert (table["dice"] > 1 - rim).all()
+    assert (table["length_recall"] > 1 - 10 / 250).all()
+    assert (tmp_path / "out" / "appraisal_masks.txt").read_text(encoding="utf-8") == done.stdout
+    (masks / "second_drawn.png").rename(masks / "third_drawn.png")
+    part = run("appraise", measured / "results", "--truth", masks)
+    assert part.returncode == 0, part.stderr
+    assert "second: there is no mask second_drawn of it; left out." in part.stdout
+    assert "third_drawn.png: is of no measured image; left out." in part.stdout
+
+
+GREYS = r"NA_drawn.png: \d+ of 20480 pixels lie between black and white"
+
+
+def repainted(masks: Path, paint: Callable[[np.ndarray], np.ndarray], suffix: str = "_drawn") -> None:
+    pixels = np.asarray(Image.open(masks / "NA_drawn.png")).copy()
+    Image.fromarray(paint(pixels)).save(masks / f"NA{suffix}.png")
+
+
+@pytest.mark.parametrize(
+    ("deed", "told"),
+    [
+        (lambda masks: repainted(masks, lambda p: p[:, :100]), "NA_drawn.png: is 100 x 128 px, but its image is 160"),
+        (lambda masks: repainted(masks, lambda p: np.maximum(p, np.eye(*p.shape, dtype=np.uint8) * 77)), GREYS),
+        (lambda masks: repainted(masks, lambda p: 0 * p), "holds no vessel inside the field of view"),
+        (lambda masks: repainted(masks, lambda p: p, "_other"), None),  # one image has two: the set of all is taken
+        (
+            lambda masks: [f.rename(f"{f}.tif".replace("_drawn", "_again")) for f in masks.glob("N*")],
+            "more than one set",
+        ),
+        (lambda masks: [f.rename(masks / f"x{f.name}") for f in masks.glob("*.png")], "no mask is named by an image"),
+        (lambda masks: shutil.copy(masks / "NA_drawn.png", masks / "NA_drawn.bmp"), "more than one mask of an image"),
+    ],
+)
+def test_masks_that_do_not_fit_are_refused(measured: Path, tmp_path: Path, deed, told: str | None) -> None:
+    """A mask of another picture, or one saved with smooth edges, would give a score that says nothing."""
+    masks = drawn_masks(measured, tmp_path / "masks")
+    deed(masks)
+    if told is None:
+        assert len(appraise_masks(measured / "results", masks).table) == 3
+        return
+    with pytest.raises(RequestError, match=told):
+        appraise_masks(measured / "results", masks)
+
+
+def test_results_without_a_field_of_view_are_refused(measured: Path, tmp_path: Path) -> None:
+    """Scores over what the camera's housing hides would be too good."""
+    masks = drawn_masks(measured, tmp_path / "masks")
+    shutil.copytree(measured / "results", tmp_path / "results")
+    (tmp_path / "results" / "images" / "NA" / "fov.tif").unlink()
+    with pytest.raises(RequestError, match=r"fov\.tif: is not there: this image was measured by an earlier version"):
+        appraise_masks(tmp_path / "results", masks)

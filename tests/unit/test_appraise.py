@@ -11,6 +11,7 @@ import pytest
 
 from vasohm.flow.rheology import Blood, BloodSettings, make_blood
 from vasohm.study.accuracy import Appraisal, sum_up
+from vasohm.study.annotation import Agreement, agreement
 from vasohm.study.certificate import draw_certificate, summary_lines
 from vasohm.study.deviations import Bed, deviations
 from vasohm.study.matching import pair_places
@@ -341,3 +342,46 @@ def test_summary_and_picture_say_what_the_tables_say(tree: Tables) -> None:
         assert words in text
     for file_format in ("png", "svg"):
         assert draw_certificate(appraisal, file_format) == draw_certificate(appraisal, file_format)
+
+
+def counts_of(*, pixels: tuple[float, ...] = (0, 0, 0, 0), centreline: tuple[float, ...] = (0, 0, 0, 0)) -> Agreement:
+    return Agreement(*pixels, *centreline, 0, 0, 0, 0)
+
+
+def test_scores_of_masks_are_those_of_their_definitions() -> None:
+    """TP 70, FP 10, FN 20, TN 900, by hand; centrelines 45 of 50 and 40 of 60 (clDice, arXiv:2003.07311, eq. 2).
+
+    Matthews, Biochim Biophys Acta 1975;405:442; Dice, Ecology 1945;26:297.
+    """
+    printed = 1e-6
+    scores = counts_of(pixels=(70, 10, 20, 900), centreline=(50, 45, 60, 40)).scores
+    assert scores["dice"] == pytest.approx(0.823529, abs=printed)
+    assert scores["sensitivity"] == pytest.approx(0.777778, abs=printed)
+    assert scores["specificity"] == pytest.approx(0.989011, abs=printed)
+    assert scores["matthews_correlation"] == pytest.approx(0.808870, abs=printed)
+    assert scores["centreline_dice"] == pytest.approx(0.765957, abs=printed)
+    pooled = (counts_of(pixels=(30, 10, 0, 500)) + counts_of(pixels=(40, 0, 20, 400))).scores
+    assert pooled["matthews_correlation"] == pytest.approx(0.808870, abs=printed)  # counts add up, scores do not
+    assert np.isnan(counts_of().scores["dice"])
+
+
+def test_masks_of_bars_agree_by_their_pixels_and_centrelines() -> None:
+    """A drawn bar of 9 x 100 px, measured 5 px high, half as long and once more elsewhere: counts are plain sums."""
+    drawn, measured, fov = (np.zeros((60, 140), bool) for _ in range(3))
+    fov[:, :130] = True
+    drawn[16:25, 20:120] = True
+    measured[18:23, 20:70] = measured[45:50, 20:70] = True
+    measured[:, 132:] = True  # outside the field of view: must not count
+    x = np.arange(20.0, 70.0)
+    points = np.tile(x, 2), np.repeat([20.0, 47.0], 50), np.ones(100)
+    held = agreement(measured, drawn, fov, points)
+    assert (held.n_both, held.n_measured_only, held.n_drawn_only) == (250, 250, 650)
+    assert held.n_neither == 60 * 130 - 1150
+    scores = held.scores
+    assert scores["length_precision"] == pytest.approx(0.5)
+    assert scores["centreline_precision"] == pytest.approx(0.5)
+    ends_px = 9 + 0.75 * 5  # thinning shortens both ends by half the height; the reach is 0.75 of the radius
+    assert scores["length_recall"] == pytest.approx(50 / 100, abs=ends_px / 91)
+    assert scores["centreline_sensitivity"] == pytest.approx(50 / 100, abs=ends_px / 91)
+    same = agreement(drawn, drawn, fov, (np.arange(20.0, 120.0), np.full(100, 20.0), np.ones(100))).scores
+    assert min(same.values()) == max(same.values()) == 1.0

@@ -181,9 +181,37 @@ APPRAISAL_IMAGES: tuple[Column, ...] = (
     count("networks_measured", "Number of measured networks."),
 )
 
+APPRAISAL_MASKS: tuple[Column, ...] = (
+    text("image_id", "Name of the image in the sheet; empty for all images together."),
+    count("n_view_px", "Pixels of the field of view.", "{pixel}"),
+    count("n_drawn_px", "Pixels that a person drew as vessel.", "{pixel}"),
+    count("n_measured_px", "Pixels of the measured vessel mask.", "{pixel}"),
+    count("n_both_px", "Pixels that are vessel in both.", "{pixel}"),
+    number("dice", "1", "Twice the common pixels over the sum of drawn and measured vessel pixels."),
+    number(
+        "centreline_dice",
+        "1",
+        "clDice: harmonic mean of centreline_precision and centreline_sensitivity; does not ask for equal widths.",
+    ),
+    number("centreline_precision", "1", "Share of the measured mask's centreline that lies in the drawn vessels."),
+    number("centreline_sensitivity", "1", "Share of the drawn vessels' centreline that lies in the measured mask."),
+    number("sensitivity", "1", "Share of the drawn vessel pixels that were measured as vessel."),
+    number("specificity", "1", "Share of the pixels drawn as background that were not measured as vessel."),
+    number("matthews_correlation", "1", "Correlation of the two masks; 0 for chance, whatever the share of vessels."),
+    number(
+        "length_recall",
+        "1",
+        "Share of the drawn centreline's length with a measured centreline within 2 px or 0.75 of the drawn radius.",
+    ),
+    number(
+        "length_precision", "1", "Share of the measured centreline's length that runs within 2 px of a drawn vessel."
+    ),
+)
+
 APPRAISAL: Mapping[str, tuple[Column, ...]] = {
     "appraisal_radius": APPRAISAL_RADIUS,
     "appraisal_segments": APPRAISAL_SEGMENTS,
     "appraisal_networks": APPRAISAL_NETWORKS,
     "appraisal_images": APPRAISAL_IMAGES,
+    "appraisal_masks": APPRAISAL_MASKS,
 }

@@ -7,9 +7,9 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from vasohm.config.blood_settings import blood_settings
 from vasohm.errors import Problem, RequestError
-from vasohm.flow.rheology import Blood, BloodSettings, make_blood
-from vasohm.results.column import Column
+from vasohm.flow.rheology import Blood, make_blood
 from vasohm.results.columns_appraisal import APPRAISAL
 from vasohm.results.encode import frame_bytes, json_bytes
 from vasohm.results.schema import COLUMNS, SCHEMA_VERSION
@@ -21,8 +21,24 @@ from vasohm.study.folder import image_folder, probe
 from vasohm.study.outcome import EMPTY, MEASURED
 from vasohm.study.state import StudyState, read_json, state_from
 
-TABLES = ("image", "segments", "points", "nodes", "crossings", "networks")
+# What is needed of each table; true tables may lack what is stated about a measurement only.
+NEEDED: Mapping[str, tuple[str, ...]] = {
+    "image": ("width_px", "height_px", "pixel_size_um"),
+    "segments": ("segment_id", "network_id", "length_um", "radius_hydraulic_um", "hematocrit"),
+    "points": ("segment_id", "point", "s_um", "x_px", "y_px", "radius_um"),
+    "nodes": ("kind", "x_px", "y_px"),
+    "crossings": ("x_px", "y_px"),
+    "networks": ("network_id", "length_um", "loops", "resistance_pa_s_m3"),
+}
+_INTERVAL = ("resistance_lo_pa_s_m3", "resistance_hi_pa_s_m3", "ln_resistance_random_se", "ln_resistance_shared_se")
+NEEDED_OF_OURS: Mapping[str, tuple[str, ...]] = {
+    "segments": ("image_id", "resistance_pa_s_m3", "resistance_share", "flags", *_INTERVAL),
+    "points": ("radius_se_um",),
+    "networks": ("image_id", "flags", *_INTERVAL),
+}
+NEEDED_OF_TRUTH: Mapping[str, tuple[str, ...]] = {"segments": ("viscosity_mpa_s",)}
 LARGEST_SCALE_DIFFERENCE = 0.01  # of pixel sizes, beyond which they are not of one picture
+LEAST_POINTS_A_SEGMENT = 2  # a line has two ends
 LARGEST_SCALE_Z = 4.0  # unless the stated uncertainty of the pixel size allows it
 
 
@@ -57,15 +73,23 @@ def appraise(results_dir: Path, truth_dir: Path) -> Appraisal:
     doi:10.1146/annurev.fl.25.010193.000245, eq. 1, applied locally). Uncertainties are judged by the root mean square
     of error over stated uncertainty, and by how often the stated intervals hold the truth (JCGM 100:2008, 6.2.2).
     """
-    state = _state(results_dir)
-    if not any(truth_dir.glob("*/points.csv")) and (truth_dir / "truth").is_dir():
+    state, named_dir = finished_study(results_dir), truth_dir
+    if not truth_ids(truth_dir):
         truth_dir = truth_dir / "truth"  # the folder of phantoms itself was named
-    truth_ids = _truth_ids(truth_dir)
+    ids = truth_ids(truth_dir)
+    if not named_dir.is_dir():
+        raise RequestError([Problem(file=str(named_dir), message="is no folder. Give the folder of phantoms.")])
+    if not ids:
+        message = (
+            "holds no truth: neither IMAGE_ID/points.csv nor pictures of masks are in it. Give the folder of phantoms, "
+            "or of drawn masks."
+        )
+        raise RequestError([Problem(file=str(named_dir), message=message)])
     finished = [image.image_id for image in state.images if image.status in (MEASURED, EMPTY)]
-    common = [image_id for image_id in finished if image_id in truth_ids]
+    common = [image_id for image_id in finished if image_id in ids]
     if not common:
         message = (
-            f"holds truth of {_few(sorted(truth_ids))}, and {results_dir} has measured {_few(finished)}: no image is "
+            f"holds truth of {few(sorted(ids))}, and {results_dir} has measured {few(finished)}: no image is "
             "in both. Give the truth of these images."
         )
         raise RequestError([Problem(file=str(truth_dir), message=message)])
@@ -76,7 +100,7 @@ def appraise(results_dir: Path, truth_dir: Path) -> Appraisal:
         raise RequestError(problems)
     blood, hematocrit = _blood(state.configuration, results_dir)
     found = [deviations(a, b, blood, hematocrit) for a, b in zip(measured, true, strict=True)]
-    return sum_up(found, _notes(state, truth_ids))
+    return sum_up(found, _notes(state, ids))
 
 
 def write_appraisal(appraisal: Appraisal, out_dir: Path) -> None:
@@ -105,7 +129,14 @@ def write_appraisal(appraisal: Appraisal, out_dir: Path) -> None:
         write_atomically(out_dir / f"certificate.{file_format}", draw_certificate(appraisal, file_format))
 
 
-def _state(results_dir: Path) -> StudyState:
+def finished_study(results_dir: Path) -> StudyState:
+    """Read what became of each image of a measured study.
+
+    Raises
+    ------
+    RequestError
+        When the folder is none of results.
+    """
     plain = read_json(results_dir / "study.json")
     if plain is None:
         message = "holds no study.json. Give the folder that was --out of measure; where it has parts, gather it first."
@@ -113,27 +144,44 @@ def _state(results_dir: Path) -> StudyState:
     return state_from(plain, str(results_dir / "study.json"))
 
 
-def _truth_ids(truth_dir: Path) -> set[str]:
-    found = {path.parent.name for path in truth_dir.glob("*/points.csv")}
-    if not found:
-        message = "holds no truth: there is no IMAGE_ID/points.csv in it. Give the folder of phantoms."
-        raise RequestError([Problem(file=str(truth_dir), message=message)])
-    return found
+def truth_ids(folder: Path) -> set[str]:
+    """Names of the images of which a folder holds true tables."""
+    return {path.parent.name for table in NEEDED if table != "image" for path in folder.glob(f"*/{table}.csv")}
 
 
-def _few(ids: list[str]) -> str:
+def few(ids: list[str]) -> str:
+    """Name the first of some things, and how many more there are."""
     return ", ".join(ids[:3]) + (f" and {len(ids) - 3} more" if len(ids) > 3 else "") if ids else "nothing"
 
 
 def _bed(folder: Path, image_id: str, *, ours: bool) -> Bed:
-    return Bed(image_id, {table: _read(folder / f"{table}.csv", COLUMNS[table], ours=ours) for table in TABLES})
+    problems: list[Problem] = []
+    tables = {}
+    for table in NEEDED:
+        try:
+            tables[table] = read_table(folder / f"{table}.csv", ours=ours)
+        except RequestError as wrong:
+            problems += wrong.problems
+    if not problems and not ours:
+        problems = _unsound(tables, folder)
+    if problems:
+        raise RequestError(problems)
+    return Bed(image_id, tables)
 
 
-def _read(path: Path, columns: tuple[Column, ...], *, ours: bool) -> pd.DataFrame:
-    """Read a table: numbers as float64, texts as they stand, empty for none; other columns are left out."""
+def read_table(path: Path, *, ours: bool) -> pd.DataFrame:
+    """Read a table: numbers as float64, texts as they stand, empty for none; other columns are left out.
+
+    Raises
+    ------
+    RequestError
+        When it is not there, is no table, or lacks columns.
+    """
+    columns = COLUMNS[path.stem]
     numbers = [column.name for column in columns if column.type in ("number", "integer")]
     texts = [column.name for column in columns if column.type in ("string", "list")]
     wanted = {*numbers, *texts}
+    again = "Measure this image again." if ours else "Make the phantoms again, or give the folder as it was written."
     try:
         table = pd.read_csv(
             path,
@@ -142,17 +190,56 @@ def _read(path: Path, columns: tuple[Column, ...], *, ours: bool) -> pd.DataFram
             keep_default_na=False,
             na_values={name: [""] for name in numbers},
         )
+    except FileNotFoundError:
+        raise RequestError([Problem(file=str(path), message=f"is not there. {again}")]) from None
     except (OSError, ValueError) as fault:
-        message = f"cannot be read as a table of {path.stem}: {fault}. " + (
-            "Measure this image again." if ours else "Make the phantoms again."
-        )
+        reason = getattr(fault, "strerror", None) or " ".join(str(fault).split())
+        message = f"cannot be read as a table of {path.stem}: {reason}. {again}"
         raise RequestError([Problem(file=str(path), message=message)]) from None
-    needed = ("width_px", "height_px", "pixel_size_um") if path.stem == "image" else tuple(wanted)
+    needed = (*NEEDED[path.stem], *(NEEDED_OF_OURS if ours else NEEDED_OF_TRUTH).get(path.stem, ()))
     wanting = sorted(set(needed) - set(table.columns))
     if wanting or (path.stem == "image" and len(table) != 1):
         message = f"lacks {', '.join(wanting)}" if wanting else f"has {len(table)} rows where there is one image"
-        raise RequestError([Problem(file=str(path), message=f"{message}. Give the folder as it was written.")])
+        raise RequestError([Problem(file=str(path), message=f"{message}. {again}")])
     return table
+
+
+def _unsound(tables: Mapping[str, pd.DataFrame], folder: Path) -> list[Problem]:
+    """What makes true tables no truth of one picture: numbers missing, ids that lead nowhere, places outside of it."""
+    image, points, segments = tables["image"].iloc[0], tables["points"], tables["segments"]
+    size = image[["width_px", "height_px"]].to_numpy(np.float64)
+    if not (size > 0).all() or not image["pixel_size_um"] > 0:
+        return [Problem(file=str(folder / "image.csv"), message="says no size or no pixel size. Give the true ones.")]
+    place = points[["x_px", "y_px"]].to_numpy(np.float64)
+    known = np.isfinite(points[["segment_id", "point", "s_um", "x_px", "y_px"]].to_numpy(np.float64)).all(axis=1)
+    known &= (points["radius_um"] > 0).to_numpy() & (points["radius_um"] < np.inf).to_numpy()
+    outside = known & ~((place >= -1) & (place <= size)).all(axis=1)
+    per_segment = points["segment_id"].value_counts().reindex(segments["segment_id"], fill_value=0)
+    strange = [
+        Problem(file=str(folder / f"{name}.csv"), message=f"is of image {others[0]!r}. Give the folder of this image.")
+        for name, table in tables.items()
+        if "image_id" in table and (others := [held for held in table["image_id"].unique() if held != folder.name])
+    ]
+    checks = (
+        ("points", ~known, "rows lack a number, or have a radius that is not above 0"),
+        ("points", outside, f"points lie outside a picture of {size[0]:.0f} x {size[1]:.0f} px"),
+        ("points", ~points["segment_id"].isin(segments["segment_id"]), "points are of segments not in segments.csv"),
+        ("segments", segments["segment_id"].duplicated(), "segments have the id of another one"),
+        ("segments", (per_segment < LEAST_POINTS_A_SEGMENT).to_numpy(), "segments have fewer than two points"),
+        (
+            "segments",
+            ~segments["network_id"].isin(tables["networks"]["network_id"]),
+            "segments are of networks not in networks.csv",
+        ),
+    )
+    return strange + [
+        Problem(
+            file=str(folder / f"{table}.csv"),
+            message=f"{int(np.sum(wrong))} of {len(wrong)} {what}. Give the folder as it was written.",
+        )
+        for table, wrong, what in checks
+        if np.any(wrong)
+    ]
 
 
 def _mismatches(measured: Bed, true: Bed) -> list[Problem]:
@@ -178,21 +265,20 @@ def _mismatches(measured: Bed, true: Bed) -> list[Problem]:
 def _blood(configuration: Mapping[str, Any], results_dir: Path) -> tuple[Blood, float]:
     """Blood and hematocrit as the study was measured with them."""
     try:
-        names = ("law", "hematocrit", "hematocrit_se", "plasma_viscosity_mpa_s", "viscosity_mpa_s", "parameters")
-        settings = BloodSettings(**{name: configuration[f"blood.{name}"]["value"] for name in names})
+        settings = blood_settings({name: entry["value"] for name, entry in configuration.items()})
         return make_blood(settings), float(settings.hematocrit)
     except (KeyError, TypeError, ValueError) as fault:
         message = f"does not say which blood was assumed ({fault}). Measure again with this version."
         raise RequestError([Problem(file=str(results_dir / "study.json"), message=message)]) from None
 
 
-def _notes(state: StudyState, truth_ids: set[str]) -> list[str]:
+def _notes(state: StudyState, ids: set[str]) -> list[str]:
     notes = []
     for image in state.images:
-        if image.image_id not in truth_ids:
+        if image.image_id not in ids:
             notes.append(f"{image.image_id}: there is no truth of it; left out.")
         elif image.status not in (MEASURED, EMPTY):
             notes.append(f"{image.image_id}: is {image.status}; left out, and its vessels are not counted as missed.")
-    wanting = sorted(truth_ids - {image.image_id for image in state.images})
+    wanting = sorted(ids - {image.image_id for image in state.images})
     notes += [f"{image_id}: has truth and was not measured; left out." for image_id in wanting]
     return notes

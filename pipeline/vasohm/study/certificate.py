@@ -44,6 +44,35 @@ def summary_lines(appraisal: Appraisal) -> list[str]:
     return [*lines, _smallest(appraisal.summary)]
 
 
+def mask_lines(table: pd.DataFrame, notes: Sequence[str]) -> list[str]:
+    """Say how far measured masks agree with drawn ones, in lines of text."""
+    head = ["image", "Dice", "clDice", "sensitivity", "specificity", "Matthews", "length recall", "length precision"]
+    names = ["dice", "centreline_dice", "sensitivity", "specificity", "matthews_correlation"]
+    rows = [head] + [
+        [
+            str(row["image_id"]) or "all",
+            *(_score(row[name]) for name in names),
+            _percent(row["length_recall"]),
+            _percent(row["length_precision"]),
+        ]
+        for row in _rows(table)
+    ]
+    images = len(table) - 1
+    lines = [f"Measured against drawn masks: {images} image{'s' if images != 1 else ''}, inside the field of view", ""]
+    lines += _table(rows)
+    lines += [
+        "1 is full agreement. clDice and the lengths go by centrelines, and do not ask for equal widths.",
+        "A drawn mask says where vessels are, not how wide: radii and resistances are appraised on phantoms.",
+    ]
+    if notes:
+        lines += ["", "Left out, or to be looked at", *(f"  {note}" for note in notes)]
+    return lines
+
+
+def _score(value: float) -> str:
+    return NOT_KNOWN if np.isnan(value) else f"{value:.3f}"
+
+
 def _title(appraisal: Appraisal) -> str:
     summary = appraisal.summary
     sizes = summary["pixel_size_um"]
