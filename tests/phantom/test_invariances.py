@@ -1,8 +1,12 @@
 """What must not change when the picture is turned, mirrored, scaled, or shown as its negative."""
 
+from itertools import pairwise
+
 import numpy as np
 import pytest
+import tifffile
 from drawing import draw
+from skimage.draw import line
 
 import vasohm
 
@@ -76,3 +80,38 @@ def test_gain_changes_nothing(picture, plain, gain):
 
 def test_an_offset_of_bright_vessels_changes_nothing(picture, plain):
     assert network_resistance(measure(picture + 1000.0)) == pytest.approx(network_resistance(plain), rel=1e-3)
+
+
+def lumens(extra_px: float) -> np.ndarray:
+    """The tree's lumens as a mask, each radius larger by so much."""
+    return draw([(x, y, r + extra_px) for x, y, r in TREE], (211, 231), seed=None) > 0.5
+
+
+def axes_of_tree() -> np.ndarray:
+    """The tree's axes as lines one pixel wide (Bresenham's, of scikit-image)."""
+    mask = np.zeros((211, 231), dtype=bool)
+    for x, y, _ in TREE:
+        for (x0, y0), (x1, y1) in pairwise(zip(x.astype(int), y.astype(int), strict=True)):
+            mask[line(y0, x0, y1, x1)] = True
+    return mask
+
+
+@pytest.mark.parametrize(
+    "values",
+    [
+        lumens(0),
+        lumens(2.0).astype(np.uint8),
+        255 * lumens(-2.0).astype(np.uint8),
+        3 * axes_of_tree().astype(np.uint16),
+    ],
+    ids=["bool", "wide, 0 and 1", "narrow, 0 and 255", "axes, a label"],
+)
+def test_a_mask_made_elsewhere_says_where_and_the_picture_how_wide(picture, plain, values, tmp_path):
+    """Wrong if a radius came from the mask: masks 2 px wider or narrower, or mere lines, would move it by a third."""
+    tifffile.imwrite(tmp_path / "mask.tif", values)
+    given = measure(picture, mask_file=tmp_path / "mask.tif")
+    assert given.networks.n_segments.tolist() == [3]
+    assert sorted(given.nodes.kind) == sorted(plain.nodes.kind)
+    assert network_resistance(given) == pytest.approx(network_resistance(plain), rel=R_TOLERANCE)
+    narrow, wide = 4.5 - 2.0, 4.5 + 2.0
+    assert (wide / narrow) ** 4 > 1 + 10 * R_TOLERANCE  # teeth

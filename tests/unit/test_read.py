@@ -467,6 +467,15 @@ def test_masks_in_their_usual_forms(kind: str, values: np.ndarray, tmp_path: Pat
     np.testing.assert_array_equal(mask, BLACK_AND_WHITE)
 
 
+@pytest.mark.parametrize("values", [BLACK_AND_WHITE, BLACK_AND_WHITE * np.uint8(255)], ids=["bool", "0-255"])
+def test_masks_stored_with_white_as_zero_are_not_turned_inside_out(values: np.ndarray, tmp_path: Path) -> None:
+    """Bool arrays are written so by tifffile, and other programs masks: what is stored as nonzero is inside all the same."""
+    tifffile.imwrite(tmp_path / "m.tif", values, photometric="miniswhite")
+    np.testing.assert_array_equal(read_mask(tmp_path / "m.tif", GREY.shape), BLACK_AND_WHITE)
+    tifffile.imwrite(tmp_path / "m.tif", BLACK_AND_WHITE)
+    np.testing.assert_array_equal(read_mask(tmp_path / "m.tif", GREY.shape), BLACK_AND_WHITE)
+
+
 def test_labels_count_as_inside(tmp_path: Path) -> None:
     """A label image numbers its vessels: 1 is as much inside as 300."""
     labels = np.repeat(np.repeat(np.arange(30).reshape(6, 5), 8, axis=0), 8, axis=1)

@@ -13,7 +13,7 @@ from tifffile import PHOTOMETRIC, TiffFile, TiffPage, TiffPageSeries
 
 from vasohm.arrays import AnyArray
 from vasohm.errors import NotAnImageError, ReadError, TruncatedError, UnsupportedPixelsError
-from vasohm.image.decoded import NO_SCALE, Decoded, FileScale, expand_palette, refuse_too_large
+from vasohm.image.decoded import NO_SCALE, Decoded, FileScale, expand_palette, invert, refuse_too_large
 from vasohm.image.file_scale import imagej_scale, ome_scale, refuse_entities
 
 DTYPES = frozenset({"bool", "uint8", "uint16", "uint32", "int8", "int16", "int32", "float32", "float64"})
@@ -81,7 +81,8 @@ def decode_tiff(data: bytes, limit_px: float, *, expand_palettes: bool) -> Decod
             notes += (f"orientation tag {orientation}: the picture was not turned",)
         if len(tif.series) > 1:
             notes += (f"first of {len(tif.series)} images in the file; the others were left out",)
-    return Decoded(pixels, is_colour, bits, scale, orientation != 1, notes)
+    inverted = page.photometric == PHOTOMETRIC.MINISWHITE and PHOTOMETRIC_TAG in page.tags
+    return Decoded(pixels, is_colour, bits, scale, orientation != 1, notes, inverted)
 
 
 def _check_directories(data: bytes) -> None:
@@ -222,7 +223,10 @@ def _brightness(
         msg = f"it says RGB, but has {page.samplesperpixel} samples a pixel."
         raise UnsupportedPixelsError(msg)
     if photometric == PHOTOMETRIC.MINISWHITE:
-        planes = _inverted(planes, bits)
+        if bits is None:
+            msg = "its samples are floats with white as zero, whose black is not defined. Save it with black as zero."
+            raise UnsupportedPixelsError(msg)
+        planes = invert(planes, bits)
         notes += ("stored with white as zero: inverted, so that bigger is brighter",)
     if photometric == PHOTOMETRIC.PALETTE:
         if not expand_palettes:
@@ -236,15 +240,6 @@ def _bits(planes: AnyArray, page: TiffPage) -> int | None:
     if planes.dtype.kind == "f":
         return None
     return int(page.bitspersample) - (planes.dtype.kind == "i")
-
-
-def _inverted(planes: AnyArray, bits: int | None) -> AnyArray:
-    if bits is None:
-        msg = "its samples are floats with white as zero, whose black is not defined. Save it with black as zero."
-        raise UnsupportedPixelsError(msg)
-    if planes.dtype.kind == "i":
-        return ~planes  # the ends of a signed range change places
-    return planes.dtype.type(2**bits - 1) - planes
 
 
 def _palette(page: TiffPage) -> tuple[AnyArray, int]:

@@ -27,9 +27,17 @@ class Decoded:
     scale: FileScale
     oriented: bool  # a tag asks viewers to turn the picture
     notes: tuple[str, ...]
+    inverted: bool = False  # the file stores white as zero
 
 
 NO_SCALE = FileScale(None, "", ())
+
+
+def invert(planes: AnyArray, bits: int) -> AnyArray:
+    """Exchange black and white; what was exchanged comes back."""
+    if planes.dtype.kind == "i":
+        return ~planes  # the ends of a signed range change places
+    return planes.dtype.type(2**bits - 1) - planes
 
 
 def refuse_too_large(width: int, height: int, n_planes: int, limit_px: float) -> None:

@@ -23,7 +23,7 @@ from vasohm.errors import (
 from vasohm.flags import Flag
 from vasohm.image.decode_flat import decode_flat
 from vasohm.image.decode_tiff import decode_tiff
-from vasohm.image.decoded import Decoded
+from vasohm.image.decoded import Decoded, invert
 
 MAGIC = {
     b"II*\0": "TIFF",
@@ -284,7 +284,7 @@ def _white_level(decoded: Decoded) -> float | None:
 
 
 def _read_single(path: Path, shape: tuple[int, int], *, expand_palettes: bool) -> AnyArray:
-    """Read one grey plane of the asked shape."""
+    """Read one grey plane of the asked shape, with the numbers that the file stores."""
     limit_px = float(MASK_LIMIT * shape[0] * shape[1])
     try:
         data = _file_bytes(path, HEADER_BYTES + BYTES_PER_PIXEL * limit_px)
@@ -302,6 +302,8 @@ def _read_single(path: Path, shape: tuple[int, int], *, expand_palettes: bool) -
             raise MaskError(msg)
         values = values[..., 0]
     values = np.asarray(values)
+    if decoded.inverted and decoded.bits is not None:
+        values = invert(values, decoded.bits)  # a mask is numbers: 1 is inside, however viewers show it
     if values.shape != shape:
         turned = " That equals the rotated size: was it saved turned?" if values.shape == shape[::-1] else ""
         msg = f"{shown(path)}: is {_size(values.shape)}, but its image is {_size(shape)} as stored.{turned}"

@@ -21,6 +21,10 @@ END_RADII = 2.0  # a skeleton stops about one radius before a round end
 TIP_PX = 4  # and this many pixels more of it are drawn anew
 NEW_POINT_PX = 0.5
 LEAST_POINTS = 4  # a segment keeps at least so many
+BORDER_STEP_PX = 0.25
+BORDER_HALVINGS = 20  # to a millionth of a pixel
+LINE_PX = 1.5  # a mask nowhere wider than twice this is drawn lines and tells no width to search in
+SEARCH_RADII_PX = (1.0, 2.0, 4.0, 8.0, 16.0, 32.0)
 
 
 def refine_centrelines(graph: VesselGraph, prepared: PreparedImage) -> VesselGraph:
@@ -34,6 +38,8 @@ def refine_centrelines(graph: VesselGraph, prepared: PreparedImage) -> VesselGra
     if graph.n_segments == 0:
         return graph
     signal = ndimage.gaussian_filter(prepared.signal, 0.7, mode="nearest")
+    if graph.seed_radius_px.max() <= LINE_PX:
+        graph = _with_seen_radius(graph, signal)
     x, y, offsets, seed = graph.x_px, graph.y_px, graph.offsets, graph.seed_radius_px
     near_branching = _near_branching(graph)
     ends = np.concatenate((offsets[:-1], offsets[1:] - 1))
@@ -53,6 +59,19 @@ def refine_centrelines(graph: VesselGraph, prepared: PreparedImage) -> VesselGra
     return centre_junctions(
         replace(graph, x_px=x, y_px=y, offsets=offsets, seed_radius_px=seed, node_x_px=node_x, node_y_px=node_y)
     )
+
+
+def _with_seen_radius(graph: VesselGraph, signal: Float32Array) -> VesselGraph:
+    """Give each segment the first radius to search with that its half-height width fits into."""
+    tx, ty = tangents(smooth(graph.x_px, graph.offsets, 2.0), smooth(graph.y_px, graph.offsets, 2.0), graph.offsets)
+    segment = owner(graph.offsets)
+    radius = np.full(graph.n_segments, SEARCH_RADII_PX[-1])
+    for tried in reversed(SEARCH_RADII_PX):
+        reach = np.full(graph.n_points, tried)
+        left, right = half_widths(signal, (graph.x_px, graph.y_px), (-ty, tx), (reach, graph.offsets))
+        width = median_by(segment, (left + right) / 2, graph.n_segments)
+        radius = np.where(width <= tried, width, radius)
+    return replace(graph, seed_radius_px=np.maximum(radius, 0.5)[segment])
 
 
 def _node_of_ends(graph: VesselGraph, kind: NodeKind) -> BoolArray:
@@ -221,16 +240,23 @@ def _distance_to_border(
     fov: BoolArray, at: tuple[FloatArray, FloatArray], along: tuple[FloatArray, FloatArray], reach: FloatArray
 ) -> FloatArray:
     """Distance to the first place outside the field of view on each ray; infinite where there is none in reach."""
-    steps = np.arange(0, float(reach.max()) + 0.25, 0.25)
-    x, y = at[0][:, None] + steps * along[0][:, None], at[1][:, None] + steps * along[1][:, None]
     height, width = fov.shape
-    off = (x < -0.5) | (y < -0.5) | (x > width - 0.5) | (y > height - 0.5)
-    row, column = (
-        np.clip(np.rint(y), 0, height - 1).astype(np.int64),
-        np.clip(np.rint(x), 0, width - 1).astype(np.int64),
-    )
-    outside = (off | ~fov[row, column]) & (steps[None, :] <= reach[:, None])
-    return np.where(outside.any(axis=1), steps[outside.argmax(axis=1)], np.inf)
+
+    def is_outside(distance: FloatArray) -> BoolArray:
+        x, y = at[0][:, None] + distance * along[0][:, None], at[1][:, None] + distance * along[1][:, None]
+        row, column = np.floor(y + 0.5).astype(np.int64), np.floor(x + 0.5).astype(np.int64)
+        off = (row < 0) | (column < 0) | (row >= height) | (column >= width)
+        return np.asarray(off | ~fov[np.clip(row, 0, height - 1), np.clip(column, 0, width - 1)])
+
+    steps = np.arange(0, float(reach.max()) + BORDER_STEP_PX, BORDER_STEP_PX)[None, :]
+    outside = is_outside(steps) & (steps <= reach[:, None])
+    high = steps[0, outside.argmax(axis=1)][:, None]
+    low = np.maximum(high - BORDER_STEP_PX, 0)
+    for _ in range(BORDER_HALVINGS):
+        middle = (low + high) / 2
+        beyond = is_outside(middle)
+        low, high = np.where(beyond, low, middle), np.where(beyond, middle, high)
+    return np.where(outside.any(axis=1), high[:, 0], np.inf)
 
 
 def _distance_to_half(
