@@ -469,7 +469,7 @@ def test_masks_in_their_usual_forms(kind: str, values: np.ndarray, tmp_path: Pat
 
 @pytest.mark.parametrize("values", [BLACK_AND_WHITE, BLACK_AND_WHITE * np.uint8(255)], ids=["bool", "0-255"])
 def test_masks_stored_with_white_as_zero_are_not_turned_inside_out(values: np.ndarray, tmp_path: Path) -> None:
-    """Bool arrays are written so by tifffile, and other programs masks: what is stored as nonzero is inside all the same."""
+    """Bool arrays are written so by tifffile, masks by others: what is stored as nonzero is inside all the same."""
     tifffile.imwrite(tmp_path / "m.tif", values, photometric="miniswhite")
     np.testing.assert_array_equal(read_mask(tmp_path / "m.tif", GREY.shape), BLACK_AND_WHITE)
     tifffile.imwrite(tmp_path / "m.tif", BLACK_AND_WHITE)
