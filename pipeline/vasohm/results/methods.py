@@ -46,8 +46,9 @@ ONE_VISCOSITY_CAUTION = (
     "is left out."
 )
 ESTIMATE_CAUTION = (
-    "Networks with the flag terminals_estimated have flows at their ends that were estimated from targets, not measured; "
-    "directions as a whole may be reversed. Their resistance depends on the estimate, which its interval leaves out."
+    "Networks with the flag terminals_estimated have flows at their ends that were estimated from targets and not "
+    "measured; directions as a whole may be reversed. Their resistance depends on the estimate, which its interval "
+    "leaves out."
 )
 CAUTIONS: tuple[str, ...] = (
     (
