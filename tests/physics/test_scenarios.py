@@ -1,5 +1,7 @@
 """The reverse question of a scenario: by how much must chosen vessels widen for a wanted resistance."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from beds import bed, blood, newtonian, straight
@@ -8,6 +10,7 @@ from vasohm.errors import DomainError
 from vasohm.flags import Flag
 from vasohm.flow.hydraulics import solve_flow
 from vasohm.flow.monte_carlo import IntervalSettings, find_intervals
+from vasohm.flow.phase_separation import SPLIT_LAWS
 from vasohm.flow.scenarios import WIDEST_FACTOR, Scenario, run_scenarios
 from vasohm.flow.terminals import NetworkSettings, place_terminals
 from vasohm.network.graph import VesselClass
@@ -72,6 +75,24 @@ def test_viscosity_follows_the_radius_on_the_way(law, ratio):
     assert put_back.ratio[0] == pytest.approx(ratio, rel=1e-8)
     all_of_it = asked(measured, wanted(ratio), how=how)
     assert all_of_it.radius_factor[0] != pytest.approx(ratio**-0.25, rel=1e-3)
+
+
+@pytest.mark.parametrize("split_law", SPLIT_LAWS)
+def test_cells_part_anew_at_the_new_radii(split_law):
+    """After the change all is as in a bed measured with the changed radii; also on the way to a wanted ratio."""
+    how = replace(blood("pries-in-vivo"), split_law=split_law)
+    radii, factor = np.array([12.0, 9.0, 5.0]), np.array([1.0, 1.0, 1.2])
+    both = [
+        bed(NODES, [straight(NODES, *end, r) for end, r in zip(PAIRS, rs, strict=True)])
+        for rs in (radii, radii * factor)
+    ]
+    before, after = (solve_flow(one, place_terminals(one, [], AUTO), how) for one in both)
+    assert np.ptp(after.hematocrit) > 0.01  # they part
+    assert np.abs(after.hematocrit - before.hematocrit).max() > 0.005  # and otherwise than before
+    found = asked(both[0], Scenario("thin", 1.2, 6.0, None, None), wanted(0.9, below=6.0), how=how)
+    assert found.resistance_after_pa_s_m3[0] == pytest.approx(after.network_resistance_pa_s_m3[0], rel=1e-7)
+    put_back = asked(both[0], Scenario("back", float(found.radius_factor[1]), 6.0, None, None), how=how)
+    assert put_back.ratio[0] == pytest.approx(0.9, rel=1e-7)  # hematocrits settle to 1e-8
 
 
 def test_each_network_is_told_its_own_factor():
