@@ -85,6 +85,7 @@ def find_flow(
         circulation = circulate(measured.graph, resistances.resistance_pa_s_m3, terminals)
         return FlowState(resistances, circulation, np.full(len(terminals.source), np.nan))
     entering = np.where(np.isfinite(terminals.hematocrit), terminals.hematocrit, blood.hematocrit)
+    total = np.zeros(len(terminals.source))
     for _ in range(MOST_ROUNDS):
         radius_um = resistances.radius_hydraulic_um
         settled = settle_hematocrit(
@@ -98,13 +99,13 @@ def find_flow(
         )
         moved = np.abs(settled.hematocrit - hematocrit) > ROUND_AGREEMENT
         moving = np.bincount(terminals.segment_network[moved], minlength=len(terminals.source)) > 0
-        hematocrit = settled.hematocrit
+        hematocrit, total = settled.hematocrit, total + settled.turns
         if not np.any(moving & (settled.turns >= 0)):
             break
         resistances = measure_resistance(measured, made, hematocrit, radius_factor)
     lost = (settled.turns < 0) | moving
     flows = np.isfinite(settled.circulation.network_resistance_pa_s_m3)
-    turns = np.where(flows & ~lost, settled.turns.astype(np.float64), np.nan)
+    turns = np.where(flows & ~lost, total, np.nan)
     known = replace(resistances, hematocrit=hematocrit, resistance_pa_s_m3=settled.resistance_pa_s_m3)
     if not lost.any():
         return FlowState(known, settled.circulation, turns)

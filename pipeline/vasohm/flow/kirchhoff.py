@@ -5,8 +5,8 @@ from dataclasses import dataclass, replace
 from typing import TypeAlias
 
 import numpy as np
-from scipy.sparse import coo_array, csc_array
-from scipy.sparse.csgraph import connected_components
+from scipy.sparse import coo_array, csc_array, csr_array
+from scipy.sparse.csgraph import connected_components, reverse_cuthill_mckee
 from scipy.sparse.linalg import SuperLU, splu
 
 from vasohm.arrays import BoolArray, FloatArray, IntArray
@@ -175,6 +175,7 @@ def _circuit(
         raise NetworkError(_TOO_WIDE.format(span=_decades(resistance[used])))
     free = np.flatnonzero(driven[piece] & ~is_fixed)
     place = np.full(len(fixed_pressure), -1)
+    free = free[_neighbours_together(a[used], b[used], free, place)]
     place[free] = np.arange(free.size)
     unit = float(np.exp(np.log(resistance[used]).mean()))
     circuit = _Circuit(a[used], b[used], resistance[used] / unit, free, place)
@@ -184,6 +185,16 @@ def _circuit(
 def _pieces(a: IntArray, b: IntArray, n_nodes: int) -> IntArray:
     links = coo_array((np.ones(a.size), (a, b)), shape=(n_nodes, n_nodes))
     return np.asarray(connected_components(links, directed=False)[1], dtype=np.int64)
+
+
+def _neighbours_together(a: IntArray, b: IntArray, free: IntArray, place: IntArray) -> IntArray:
+    """Order of the free nodes with neighbours near each other: elimination finds its own order faster from there."""
+    place = np.array(place)
+    place[free] = np.arange(free.size)
+    inner = (place[a] >= 0) & (place[b] >= 0)
+    links = (np.concatenate([place[a[inner]], place[b[inner]]]), np.concatenate([place[b[inner]], place[a[inner]]]))
+    pattern = csr_array(coo_array((np.ones(len(links[0])), links), shape=(free.size, free.size)))
+    return np.asarray(reverse_cuthill_mckee(pattern, symmetric_mode=True), dtype=np.int64)
 
 
 def _drive(piece: IntArray, fixed_pressure: FloatArray, inflow: FloatArray) -> tuple[BoolArray, FloatArray]:
