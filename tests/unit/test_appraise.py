@@ -338,7 +338,13 @@ def test_summary_and_picture_say_what_the_tables_say(tree: Tables) -> None:
     appraisal = appraised(measured_as(tree, ratio=1.03), tree)
     text = "\n".join(summary_lines(appraisal))
     smallest = appraisal.summary["smallest_resolved_radius_px"]
-    for words in ("+3.0 %", "resistance over true: geometric mean 0.888", f"resolved: {smallest:.2g} px"):
+    for words in (
+        "+3.0 %",
+        "resistance over true: geometric mean 0.888",
+        f"resolved: {smallest:.2g} px",
+        "Crossings: none true, none measured",
+        "stated standard uncertainty; 1 is right",
+    ):
         assert words in text
     for file_format in ("png", "svg"):
         assert draw_certificate(appraisal, file_format) == draw_certificate(appraisal, file_format)

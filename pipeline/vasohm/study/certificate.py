@@ -19,10 +19,26 @@ from vasohm.units import UM_PER_MM
 
 # Okabe and Ito's colours, told apart without red-green vision (jfly.uni-koeln.de/color, 2008)
 BLUE, ORANGE, VERMILION, GREY = "#0072B2", "#E69F00", "#D55E00", "#999999"
-RADIUS_TICKS_PX = (0.5, 1, 2, 3, 5, 10, 20, 50, 100)
+RADIUS_TICKS_PX = (0.5, 0.7, 1, 1.5, 2, 3, 4, 5, 7, 10, 15, 20, 30, 50, 70, 100)
 LEAST_RANGE = 10.0  # per cent of error that the picture shows at least
 MOST_RANGE = 100.0  # and at most: beyond it an arrow would say no more
+LEAST_COVERAGE = 50.0  # per cent of coverage from which on the picture shows it, unless some is less
+MOST_LN_SE = 0.7  # of a resistance, a factor of 2: beyond it the bar is cut
 NOT_KNOWN = "-"
+_LEFT_OUT = {
+    "match": "less than 80 % of the length is in common with {partner}",
+    "resistance": "no resistance, measured or true",
+    "viscosity": "true ones are of blood of another viscosity",
+}
+_PARTNER = {"segments": "a true vessel", "networks": "one true network"}
+_READING = (
+    "error/stated: root mean square of error over stated standard uncertainty; 1 is right, more is too sure",
+    "inside 95 %: share of points whose stated 95 % interval holds the true radius; 95 % is right",
+)
+_TRUST_READING = (
+    "R of a vessel: standard uncertainty of the resistance of one vessel, as stated and as found",
+    "resolved: radius known to 25 % or better, and its bias within what is stated",
+)
 _EXACT = (
     "* without the part of the pixel size in the stated uncertainty: measured and true pixel size are exactly the same"
 )
@@ -34,13 +50,14 @@ def summary_lines(appraisal: Appraisal) -> list[str]:
     lines += _table(_vessel_rows(appraisal))
     lines += ["", "Local radius, measured against true"]
     lines += _table(_radius_rows(appraisal.radius))
-    scaled = _scale_matters(appraisal.radius)
-    lines += [_EXACT] if scaled else []
+    lines += [f"  {line}" for line in _READING]
+    lines += [f"  {_EXACT}"] if _scale_matters(appraisal.radius) else []
     lines += ["", *_resistance_lines(appraisal.summary), "", *_place_lines(appraisal.summary)]
     if appraisal.notes:
         lines += ["", "Left out", *(f"  {note}" for note in appraisal.notes)]
     lines += ["", "What can be trusted"]
     lines += _table(_trust_rows(appraisal.radius))
+    lines += [f"  {line}" for line in _TRUST_READING]
     return [*lines, _smallest(appraisal.summary)]
 
 
@@ -124,9 +141,11 @@ def _resistance_lines(summary: Mapping[str, Any]) -> list[str]:
     words = {"length_ratio": "length", "radius_hydraulic_ratio": "hydraulic radius", "resistance_ratio": "resistance"}
     for what in ("segments", "networks"):
         part = summary[what]
-        left_out = ", ".join(f"{n} for {reason}" for reason, n in part["left_out"].items())
-        left_out = f"; left out {left_out}" if left_out else ""
-        lines.append(f"{what.capitalize()}: {part['n_measured']} measured, {part['n_compared']} compared{left_out}")
+        lines.append(f"{what.capitalize()}: {part['n_measured']} measured, {part['n_compared']} compared")
+        lines += [
+            f"  {n} left out: {_LEFT_OUT[reason].format(partner=_PARTNER[what])}"
+            for reason, n in part["left_out"].items()
+        ]
         if not part["n_compared"]:
             continue
         for name, word in words.items():
@@ -149,6 +168,9 @@ def _place_lines(summary: Mapping[str, Any]) -> list[str]:
     lines = []
     for name in ("branchings", "crossings"):
         part = summary[name]
+        if not part["true"] and not part["measured"]:
+            lines.append(f"{name.capitalize()}: none true, none measured")
+            continue
         lines.append(
             f"{name.capitalize()}: {part['true']} true, {part['measured']} measured, {part['found']} found; recall "
             f"{_percent(part['recall'])}, precision {_percent(part['precision'])}, F1 {_percent(part['f1'])}"
@@ -243,12 +265,15 @@ def draw_certificate(appraisal: Appraisal, file_format: Literal["png", "svg"]) -
         mpl.rcdefaults()
         mpl.rcParams |= {"font.size": 9.0, "svg.hashsalt": "vasohm", "axes.spines.top": False}
         mpl.rcParams["axes.spines.right"] = False
-        figure = Figure(figsize=(9.0, 7.2), dpi=150, facecolor="white", layout="constrained")
+        figure = Figure(figsize=(10.5, 7.6), dpi=150, facecolor="white", layout="constrained")
         figure.suptitle(_title(appraisal), fontsize=11)
-        grid = figure.add_gridspec(2, 2, height_ratios=(1.15, 1.0))
+        grid = figure.add_gridspec(2, 3, height_ratios=(1.15, 1.0))
+        classes = appraisal.radius.iloc[:-1]
+        classes = classes[(classes["length_true_um"] > 0) | (classes["n_points"] > 0)]
         _draw_radius(figure.add_subplot(grid[0, :]), appraisal)
-        _draw_coverage(figure.add_subplot(grid[1, 0]), appraisal.radius.iloc[:-1])
-        _draw_lengths(figure.add_subplot(grid[1, 1]), appraisal.radius.iloc[:-1])
+        _draw_resistance(figure.add_subplot(grid[1, 0]), classes)
+        _draw_coverage(figure.add_subplot(grid[1, 1]), classes)
+        _draw_lengths(figure.add_subplot(grid[1, 2]), classes)
         if file_format == "png":
             FigureCanvasAgg(figure).print_png(buffer, metadata={"Software": None})  # type: ignore[no-untyped-call]
         else:
@@ -309,6 +334,22 @@ def _tick(value: float, appraisal: Appraisal) -> str:
     return f"{value:g}\n{value * sizes[0]:.3g}" if len(sizes) == 1 else f"{value:g}"
 
 
+def _draw_resistance(axes: Axes, classes: pd.DataFrame) -> None:
+    place = np.arange(len(classes))
+    stated = classes["ln_resistance_se"].to_numpy(np.float64)
+    found = np.hypot(*(classes[f"ln_resistance_{name}"].to_numpy(np.float64) for name in ("bias", "scatter")))
+    for shift, values, colour, label in ((-0.2, stated, GREY, "stated"), (0.2, found, BLUE, "found")):
+        axes.bar(place + shift, 100 * np.minimum(values, MOST_LN_SE), 0.38, color=colour, label=label)
+        for at, value in zip(place + shift, values, strict=True):
+            if np.isfinite(value):
+                words = f"{100 * value:.0f}" if value < MOST_LN_SE else f"x{_factor(value)}"
+                axes.annotate(words, (at, 100 * min(value, MOST_LN_SE)), ha="center", va="bottom", fontsize=7)
+    axes.set(ylabel="standard uncertainty of the\nresistance of one vessel (%)")
+    axes.margins(y=0.2)
+    _name_classes(axes, classes)
+    axes.legend(frameon=False, loc="upper right", fontsize=7.5)
+
+
 def _draw_coverage(axes: Axes, classes: pd.DataFrame) -> None:
     place = np.arange(len(classes))
     axes.axhline(95, color="black", linewidth=0.8)
@@ -318,11 +359,16 @@ def _draw_coverage(axes: Axes, classes: pd.DataFrame) -> None:
     ):
         axes.plot(place + shift, 100 * classes[name], marker, color=colour, markersize=7, label=label)
         exact = 100 * classes[f"{name}_exact_scale"]
-        hollow = f"{label}, pixel size's part left out"
+        hollow = f"{label}, without\nthe doubt of the pixel size"
         axes.plot(place + shift, exact, marker, color=colour, markersize=11, fillstyle="none", label=hollow)
-    axes.set(ylim=(0, 105), ylabel="truth inside the stated 95 % interval (%)")
+    names = ["radius_coverage_95", "resistance_coverage_95"]
+    names += [f"{name}_exact_scale" for name in names]
+    least = 100 * classes[names].min().min() if len(classes) else np.nan
+    axes.set(
+        ylim=(0 if least < LEAST_COVERAGE else LEAST_COVERAGE, 105), ylabel="truth inside the stated\n95 % interval (%)"
+    )
     _name_classes(axes, classes)
-    axes.legend(frameon=False, loc="lower right", fontsize=7.5)
+    axes.legend(frameon=False, loc="lower left", fontsize=7)
 
 
 def _draw_lengths(axes: Axes, classes: pd.DataFrame) -> None:
@@ -338,6 +384,7 @@ def _draw_lengths(axes: Axes, classes: pd.DataFrame) -> None:
 
 
 def _name_classes(axes: Axes, classes: pd.DataFrame) -> None:
-    axes.set_xticks(np.arange(len(classes)), [_class(row)[0] for row in _rows(classes)])
-    axes.set_xlabel("true radius (px)")
+    words = [f"{_class(row)[0]}\n{row['length_true_um'] / UM_PER_MM:.2g} mm" for row in _rows(classes)]
+    axes.set_xticks(np.arange(len(classes)), words, fontsize=8)
+    axes.set_xlabel("true radius (px), length in the pictures")
     axes.set_xlim(-0.6, len(classes) - 0.4)
