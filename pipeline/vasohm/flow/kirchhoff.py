@@ -189,6 +189,8 @@ def _pieces(a: IntArray, b: IntArray, n_nodes: int) -> IntArray:
 
 def _neighbours_together(a: IntArray, b: IntArray, free: IntArray, place: IntArray) -> IntArray:
     """Order of the free nodes with neighbours near each other: elimination finds its own order faster from there."""
+    if not free.size:
+        return np.zeros(0, dtype=np.int64)
     place = np.array(place)
     place[free] = np.arange(free.size)
     inner = (place[a] >= 0) & (place[b] >= 0)
