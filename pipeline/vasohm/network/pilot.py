@@ -30,15 +30,30 @@ class Guess:
         freeze(self)
 
 
-def guess_radii(picture: Picture, frame: Frame, lines: TubeLines, table: ProfileTable, owners: Owners) -> Guess:
-    """Guess radius, contrast and offset at every point, leaving out samples that lie on other segments."""
+@dataclass(frozen=True, slots=True, eq=False)
+class Windows:
+    """Means of neighbouring strips of equal width, and the sums of their weights."""
+
+    half_width: int
+    points: IntArray  # (n,)
+    mean: FloatArray  # (n, 2 half_width + 1)
+    weight: FloatArray
+
+    def __post_init__(self) -> None:
+        freeze(self)
+
+
+def average_strips(
+    picture: Picture, frame: Frame, lines: TubeLines, table: ProfileTable, owners: Owners
+) -> tuple[Windows, ...]:
+    """Average strips along every segment, leaving out samples that lie on other segments."""
     n, shape = lines.n_points, picture.precision.shape
     seed = np.maximum(lines.seed_radius_px, 0.5)
     typical = segment_quantile(seed, lines.offsets, 0.8)
     s = table.optics.s_px
     half = np.minimum(np.ceil(2.2 * typical + 3 * s + 3), table.half_px - 3)[frame.segment]
     rows = np.flatnonzero((np.arange(n) - lines.offsets[frame.segment]) % 2 == 0)
-    found = np.full((5, n), np.nan)
+    windows = []
     for strips in sample_strips(picture, frame, half[rows], rows):
         overlaps = find_overlaps(strips, frame, lines, owners, (shape[0], shape[1]))
         weights = strips.precision.copy()
@@ -46,8 +61,17 @@ def guess_radii(picture: Picture, frame: Frame, lines: TubeLines, table: Profile
         weights.reshape(-1)[overlaps.sample[covered]] = 0.0
         for low, high in _whole_segments(frame.segment[strips.points]):
             part = slice(low, high)
-            centre, mean, weight = _windows(strips.points[part], strips.y[part], weights[part], frame, seed)
-            found[:, centre] = _match(table, strips.half_width, mean, weight, seed[centre])
+            means = _windows(strips.points[part], strips.y[part], weights[part], frame, seed)
+            windows.append(Windows(strips.half_width, *means))
+    return tuple(windows)
+
+
+def guess_radii(windows: tuple[Windows, ...], frame: Frame, lines: TubeLines, table: ProfileTable) -> Guess:
+    """Guess radius, contrast and offset at every point."""
+    seed = np.maximum(lines.seed_radius_px, 0.5)
+    found = np.full((5, lines.n_points), np.nan)
+    for some in windows:
+        found[:, some.points] = _match(table, some.half_width, some.mean, some.weight, seed[some.points])
     return _spread(found, table, lines, frame, seed)
 
 

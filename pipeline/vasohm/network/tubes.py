@@ -43,7 +43,7 @@ from vasohm.network.learn import (
 )
 from vasohm.network.noise import noise_correlation
 from vasohm.network.observe import Scene, observe
-from vasohm.network.pilot import Guess, bridge, guess_radii, segment_quantile
+from vasohm.network.pilot import Guess, average_strips, bridge, guess_radii, segment_quantile
 from vasohm.network.posterior import (
     LOG10_STIFFNESS,
     BandedCovariance,
@@ -71,6 +71,7 @@ FAINT_CNR = 3.0
 USUAL_CNR = 8.0  # height of vessels over the noise, before any is measured
 SHARP_PSF_PX = 0.85  # blur of the optics below which a quintic spline samples
 SHARP_ORDER: SplineOrder = 5
+OTHER_BLUR = 0.4  # of ln blur: first guesses whose strips were laid for so different a blur are made anew
 NEIGHBOUR_BLURS = 3.5  # beyond its rim a vessel's light is no longer reckoned with
 
 
@@ -132,9 +133,12 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
     if lines.n_points == 0:
         return _no_tubes(settings)
     scene, table = _open(image, lines, settings)
-    guess = _guess(scene, table)
+    windows = average_strips(scene.picture, scene.frame, lines, table, scene.owners)
+    guess = guess_radii(windows, scene.frame, lines, table)
     scene, known = _sharp(image, scene, learn_image(scene, guess, table, settings))
-    theta = _start(scene, _guess(scene, known.table), known)
+    if abs(np.log(known.table.optics.s_px / table.optics.s_px)) > OTHER_BLUR:
+        windows = average_strips(scene.picture, scene.frame, lines, known.table, scene.owners)
+    theta = _start(scene, guess_radii(windows, scene.frame, lines, known.table), known)
     reach = np.exp(theta[:, LN_R]) + NEIGHBOUR_BLURS * known.table.optics.s_px
     cnr, contrast_sd = _typical_cnr(scene, theta, known.table.optics), float(np.median(known.contrast.spread))
     noise = noise_factor(known.table, scene.covariance, cnr, contrast_sd)
@@ -151,7 +155,7 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
     theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=3)
     stiffness, doubt = weigh_stiffness(observed, priors, theta, normal)
     priors = with_stiffness(priors, stiffness)
-    theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=8, begun=normal)
+    theta, normal = fit_joint(observed, priors, known.table, theta, max_steps=12, begun=normal)
     return _report(scene, observed, known, (theta, priors, normal), doubt)
 
 
@@ -185,10 +189,6 @@ def _sharp(image: TubeImage, scene: Scene, known: ImageKnowledge) -> tuple[Scene
     picture = make_picture(image.signal, image.noise_sd, image.valid, image.clipped, SHARP_ORDER)
     optics = replace(old, s_px=total_blur_px(psf, SHARP_ORDER))
     return replace(scene, picture=picture), replace(known, table=table_like(known.table, optics))
-
-
-def _guess(scene: Scene, table: ProfileTable) -> Guess:
-    return guess_radii(scene.picture, scene.frame, scene.lines, table, scene.owners)
 
 
 # --- the fit of all segments ----------------------------------------------------------------------------------------
