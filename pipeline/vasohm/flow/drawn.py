@@ -1,6 +1,7 @@
 """Segments whose radii, lengths, scale and blood are drawn at random from what is known of them."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields, replace
+from typing import Any
 
 import numpy as np
 
@@ -39,6 +40,12 @@ class Pieces:
 
     def __post_init__(self) -> None:
         freeze(self)
+
+    def only(self, place: IntArray) -> "Pieces":
+        """Those of the segments at these places."""
+        held = {field.name: getattr(self, field.name) for field in fields(self)}
+        fewer: dict[str, Any] = {name: value[place] for name, value in held.items() if isinstance(value, np.ndarray)}
+        return replace(self, **fewer)
 
 
 def cut_into_pieces(measured: MeasuredGraph, blood: Blood, hematocrit: FloatArray, chosen: IntArray) -> Pieces:

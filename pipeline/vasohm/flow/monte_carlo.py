@@ -1,5 +1,6 @@
 """Intervals of resistances: to first order, or from random draws of all that is uncertain where that is too coarse."""
 
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, replace
 from typing import Literal
 
@@ -103,23 +104,20 @@ def find_intervals(
     draws, flags, notes = np.zeros(n, dtype=np.int64), np.zeros(n, dtype=np.int64), []
     wanted = _wanted(flow, settings)
     state = DrawnState(measured, flow.hematocrit, flow.resistance_pa_s_m3, flow.share)
-    made_blood = make_blood(blood)
-    for network in np.flatnonzero(wanted).tolist():
-        circuit = _circuit(state, flow.terminals, network)
-        made = 0 if circuit is None else circuit.draws(settings.draws)
-        if made < settings.draws:
-            flags[network] |= int(Flag.FEWER_DRAWS)
-        if circuit is None or made < LEAST_DRAWS:
-            continue
-        of_segments, of_network = _draw(state, circuit, made_blood, _numbers(settings.seed, network), made)
-        for place, low, high, value, drawn in (
-            (circuit.segment, segment_lo, segment_hi, flow.resistance_pa_s_m3, of_segments),
-            (np.array([network]), network_lo, network_hi, flow.network_resistance_pa_s_m3, of_network[None]),
+    circuits = {int(k): _circuit(state, flow.terminals, int(k)) for k in np.flatnonzero(wanted)}
+    made = {k: 0 if circuit is None else circuit.draws(settings.draws) for k, circuit in circuits.items()}
+    flags[wanted] = int(Flag.FEWER_DRAWS)
+    flags[[k for k, number in made.items() if number >= settings.draws]] = 0
+    drawn = {k: circuit for k, circuit in circuits.items() if circuit is not None and made[k] >= LEAST_DRAWS}
+    for k, of_segments, of_network in _draw(state, drawn, make_blood(blood), settings.seed, made):
+        for place, low, high, value, ln_drawn in (
+            (drawn[k].segment, segment_lo, segment_hi, flow.resistance_pa_s_m3, of_segments),
+            (np.array([k]), network_lo, network_hi, flow.network_resistance_pa_s_m3, of_network[None]),
         ):
-            low[place], high[place] = _bounds(value[place], measured.noise_sign * drawn)
-        draws[network] = made
-        flags[network] |= int(Flag.MONTE_CARLO)
-        notes.append(f"network {network + 1}: 95 % interval from {made} random draws (seed {settings.seed}).")
+            low[place], high[place] = _bounds(value[place], measured.noise_sign * ln_drawn)
+        draws[k] = made[k]
+        flags[k] |= int(Flag.MONTE_CARLO)
+        notes.append(f"network {k + 1}: 95 % interval from {made[k]} random draws (seed {settings.seed}).")
     return ResistanceIntervals(
         segment_lo, segment_hi, network_lo, network_hi, flags, draws, settings.seed, tuple(notes)
     )
@@ -153,34 +151,35 @@ def ratio_bounds(
     """
     low, high = (np.full(len(intervals.draws), np.nan) for _ in range(2))
     both = np.minimum(np.nan_to_num(before.share), np.nan_to_num(after.share))
-    for network in np.flatnonzero(intervals.draws).tolist():
-        drawn = []
-        for state in (before, after):
-            circuit = _circuit(replace(state, share=both), terminals, network)
-            if circuit is None or not circuit.segment.size:
-                break
-            numbers = _numbers(intervals.seed, network)
-            drawn.append(_draw(state, circuit, blood, numbers, int(intervals.draws[network]))[1])
-        if len(drawn) == 2:
-            with np.errstate(invalid="ignore"):
-                ln_ratio = before.measured.noise_sign * (drawn[1] - drawn[0])
-            bounds = _bounds(np.ones(1), ln_ratio[None])
-            low[network], high[network] = np.log(bounds[0][0]), np.log(bounds[1][0])
+    made = {int(k): int(intervals.draws[k]) for k in np.flatnonzero(intervals.draws)}
+    sides = [replace(state, share=both) for state in (before, after)]
+    found = {k: _circuit(sides[0], terminals, k) for k in made}
+    circuits = {k: circuit for k, circuit in found.items() if circuit is not None and circuit.segment.size}
+    pairs = (_draw(side, circuits, blood, intervals.seed, made) for side in sides)
+    for (k, _, ln_before), (_, _, ln_after) in zip(*pairs, strict=True):
+        with np.errstate(invalid="ignore"):
+            ln_ratio = before.measured.noise_sign * (ln_after - ln_before)
+        bounds = _bounds(np.ones(1), ln_ratio[None, ~np.isnan(ln_ratio)])  # closed before and after: no ratio
+        low[k], high[k] = np.log(bounds[0][0]), np.log(bounds[1][0])
     return low, high
 
 
-def _numbers(seed: int, network: int) -> np.random.Generator:
-    """Random numbers of one network, whatever the others do."""
-    return np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(network,)))
-
-
 def _draw(
-    state: DrawnState, circuit: "_Circuit", blood: Blood, numbers: np.random.Generator, draws: int
-) -> tuple[FloatArray, FloatArray]:
-    """Deviations of ln R of the circuit's segments (n, draws), and ln R of the network (draws,)."""
-    pieces = cut_into_pieces(state.measured, blood, state.hematocrit, circuit.segment)
-    of_segments = draw_ln_resistance(pieces, numbers, draws)
-    return of_segments, _ln_network(circuit, state.resistance_pa_s_m3[circuit.segment], of_segments)
+    state: DrawnState, circuits: "Mapping[int, _Circuit]", blood: Blood, seed: int, draws: Mapping[int, int]
+) -> Iterator[tuple[int, FloatArray, FloatArray]]:
+    """By network: deviations of ln R of its segments (n, draws), and ln R of the network (draws,).
+
+    Each network has random numbers of its own, whatever the others do.
+    """
+    if not circuits:
+        return
+    chosen = np.unique(np.concatenate([circuit.segment for circuit in circuits.values()]))
+    pieces = cut_into_pieces(state.measured, blood, state.hematocrit, chosen)
+    for k, circuit in circuits.items():
+        numbers = np.random.default_rng(np.random.SeedSequence(seed, spawn_key=(k,)))
+        own = pieces.only(np.searchsorted(chosen, circuit.segment))
+        of_segments = draw_ln_resistance(own, numbers, draws[k])
+        yield k, of_segments, _ln_network(circuit, state.resistance_pa_s_m3[circuit.segment], of_segments)
 
 
 def relative_radius_se(flow: NetworkFlow) -> FloatArray:
@@ -203,7 +202,7 @@ def _wanted(flow: NetworkFlow, settings: IntervalSettings) -> BoolArray:
 def _bounds(value: FloatArray, ln_drawn: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Bounds (n,) of values at their medians, from (n, draws) deviations of their logarithm."""
     with np.errstate(invalid="ignore", over="ignore"):
-        low, middle, high = np.quantile(ln_drawn, BOUNDS, axis=1)
+        low, middle, high = np.quantile(ln_drawn, BOUNDS, axis=1) if ln_drawn.size else np.full((3, len(value)), np.nan)
         bounds = value * np.exp(low - middle), value * np.exp(high - middle)
     bounded = np.isfinite(bounds[0]) & np.isfinite(bounds[1])
     return np.where(bounded, bounds[0], np.nan), np.where(bounded, bounds[1], np.nan)
