@@ -254,13 +254,14 @@ def appraise(results: Path, truth: Path, out: Path | None) -> int:
 
 @commands.command()
 def laws() -> int:
-    """List the laws of apparent viscosity that a study can name, with their range and source."""
-    from vasohm.flow.rheology import get_law, law_names
+    """List the laws of apparent viscosity that a study can name: range, source, and values at two radii."""
+    from vasohm.flow.rheology import apparent_viscosity, get_law, law_names
 
     status = EXIT_OK
     for name in law_names():
         try:
             law = get_law(name)
+            at_10_um, at_50_um = apparent_viscosity(name, [10.0, 50.0], 0.45, parameters=law.example_parameters)
         except VasohmError as wrong:
             _complain([str(wrong)])
             status = EXIT_SOME_FAILED
@@ -270,6 +271,13 @@ def laws() -> int:
             "  radius {:g} to {:g} um, hematocrit {:g} to {:g}".format(*law.valid_radius_um, *law.valid_hematocrit)
         )
         click.echo(f"  {law.citation}")
+        constants = "".join(f", {key} = {value:g}" for key, value in law.example_parameters.items())
+        click.echo(f"  {at_10_um:.4g} mPa.s at a radius of 10 um, {at_50_um:.4g} mPa.s at 50 um{constants}")
+    click.echo(
+        "Values at a discharge hematocrit of 0.45 and a plasma viscosity of 1.2 mPa.s, which is that at 37 C; at room\n"
+        "temperature plasma has 1.5 to 1.7 mPa.s, and viscosity goes with it. Outside its range a law's formula is used\n"
+        "all the same, and the segment carries the flag law_range."
+    )
     return status
 
 
