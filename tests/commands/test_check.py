@@ -84,6 +84,8 @@ def test_what_is_registered_and_what_columns_mean_is_told(make_study: MakeStudy)
     assert laws.status == 0
     assert "pries-in-vivo" in laws.told
     assert "doi" in laws.told.lower()
+    # Pries et al. 1994 at diameters of 20 and 100 um: 3.2311 and 2.5315 times a plasma of 1.2 mPa.s
+    assert "3.877 mPa.s at a radius of 10 um, 3.038 mPa.s at 50 um" in laws.told
     columns = study.run("columns")
     assert "  radius_hydraulic_um (number, um): " in columns.told
     about = study.run("about", SLURM_CPUS_PER_TASK="5")

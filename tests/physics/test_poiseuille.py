@@ -9,6 +9,7 @@ from fluids.friction import one_phase_dP
 
 from vasohm.errors import DomainError
 from vasohm.flags import Flag
+from vasohm.flow.development import describe_motion
 from vasohm.flow.poiseuille import LARGEST_LN_CORRECTION, measure_resistance, segment_resistance
 from vasohm.flow.rheology import apparent_viscosity, make_blood
 from vasohm.units import M_PER_UM, NL_MIN_PER_M3_S, PA_PER_MMHG, PA_S_PER_MPA_S
@@ -96,6 +97,15 @@ def test_smooth_profiles_are_met_to_second_order(key, units, profile, mean):
         ]
         assert abs(error[1]) < 1e-3
         assert error[0] / error[1] == pytest.approx(4.0, rel=0.01)  # half the spacing, a quarter of the error
+
+
+def test_capillaries_that_narrow_and_widen_resist_as_was_measured():
+    """Bosman et al., Am J Physiol 1995 (abstract): diameter -6 % gives resistance +27 %, +12 % gives -36 %."""
+    rounded = 0.02  # both figures are rounded to a per cent, the diameters too: 4 x 0.5 %
+    for diameter, resistance in ((-0.06, 0.27), (0.12, -0.36)):
+        ratio = segment_resistance(100.0, 3.0 * (1 + diameter), 3.0) / segment_resistance(100.0, 3.0, 3.0)
+        assert ratio - 1 == pytest.approx(resistance, abs=rounded)
+    assert abs((1.12**-3 - 1) + 0.36) > rounded  # teeth: the third power is refused
 
 
 def test_two_cylinders_in_series():
@@ -299,6 +309,44 @@ def test_a_steep_wall_is_told_and_a_noisy_one_is_not():
     ln_se = np.repeat([0.01, 0.01, 0.3], 41)
     flags = resistances(bed([(0, 0), (100, 0)], vessels, ln_se=ln_se)).flags & int(Flag.STEEP_WALL)
     np.testing.assert_array_equal(flags > 0, [True, False, False])
+
+
+def test_numbers_of_flow_take_their_published_values():
+    """Reynolds and Womersley numbers of vessels from retinal arteries to capillaries; a factor of 2 pi or 2 shows."""
+    rows = published("flow_regime")
+    for (inputs, reynolds), (_, womersley) in zip(rows[::2], rows[1::2], strict=True):
+        how = dataclasses.replace(
+            newtonian(), density_kg_m3=inputs["rho"], heart_rate_per_min=60.0 * inputs["heart_rate_Hz"]
+        )
+        radius = np.array([inputs["D_um"] / 2])
+        flow = inputs["mean_velocity_mm_s"] * 1e-3 * np.pi * (radius * M_PER_UM) ** 2
+        tube = (np.array([1000.0]), radius, np.array([inputs["mu_Pa_s"] * 1000]))
+        found = describe_motion(-flow, tube, how, np.array([True]))
+        assert found.velocity_mm_s[0] == pytest.approx(inputs["mean_velocity_mm_s"], rel=FORMULA)
+        assert found.transit_s[0] == pytest.approx(1.0 / inputs["mean_velocity_mm_s"], rel=FORMULA)
+        assert found.reynolds[0] == pytest.approx(reynolds, rel=FORMULA)
+        assert found.womersley[0] == pytest.approx(womersley, rel=FORMULA)
+        assert found.wall_shear_pa[0] == pytest.approx(found.wall_shear_rate_per_s[0] * inputs["mu_Pa_s"], rel=FORMULA)
+        unknown = describe_motion(flow, tube, newtonian(), np.array([False]))
+        assert np.isnan([unknown.reynolds[0], unknown.womersley[0]]).all()
+    worked = dict(zip(("Pa (wall", "1/s (wall"), (0.0, 0.0), strict=True))
+    for units in worked:
+        ((_, worked[units]),) = published("poiseuille_worked_segment", units=units)
+    drop = 5.0 * PA_PER_MMHG / segment_resistance(500.0, 10.0, 3.0)
+    found = describe_motion(
+        np.array([drop]), (np.array([500.0]), np.array([10.0]), np.array([3.0])), newtonian(), np.ones(1, bool)
+    )
+    assert found.wall_shear_pa[0] == pytest.approx(worked["Pa (wall"], rel=FORMULA)
+
+
+def test_flow_that_cannot_be_that_of_poiseuille_is_told():
+    """Shorter than twice 0.62 diameters, faster than Re 1, wider than a Womersley number of 1; else no flag."""
+    how = dataclasses.replace(newtonian(), heart_rate_per_min=72.0)
+    length, radius = np.array([12.0, 13.0, 1e4, 1e4]), np.array([5.0, 5.0, 50.0, 800.0])
+    velocity = np.array([1e-3, 1e-3, 0.04, 1e-3])  # m/s
+    flow = velocity * np.pi * (radius * M_PER_UM) ** 2
+    flags = describe_motion(flow, (length, radius, np.full(4, 3.0)), how, np.ones(4, dtype=bool)).flags
+    assert flags.tolist() == [Flag.UNDEVELOPED, 0, Flag.INERTIAL, Flag.PULSATILE]
 
 
 def test_a_segment_beyond_its_law_is_flagged_and_one_that_nothing_passes_has_no_resistance():

@@ -1,11 +1,13 @@
 """Viscosity laws against their published formulas, at hematocrits where a misprint shows."""
 
+import dataclasses
+
 import numpy as np
 import pytest
-from beds import published
+from beds import blood, published
 
 from vasohm.errors import DomainError, PluginError
-from vasohm.flow.rheology import apparent_viscosity, get_law, law_names
+from vasohm.flow.rheology import apparent_viscosity, get_law, law_names, make_blood
 
 FORMULA = 1e-9  # published formulas in double precision, evaluated by another program
 ZERO_OF_C_UM = 8.051829446724955  # diameter at which the laws' hematocrit factor is 0/0 as printed
@@ -104,6 +106,32 @@ def test_the_whole_reaches_every_law_elementwise():
         assert np.ndim(one) == 0
         assert together[2, 1] == one
         assert get_law(law).citation
+
+
+def test_cells_of_another_size_scale_the_diameter_of_fitted_laws():
+    """Rat cells of 55 fL: the law at D (92/55)^(1/3); laws with constants of their own stay, and so does no scaling."""
+    for inputs, expected in published("mcv_diameter_scaling_effect"):
+        rat = dataclasses.replace(blood("pries-in-vivo"), red_cell_volume_fl=float(inputs["MCV_fL"]))
+        radius = np.array(inputs["D_um"] / 2)
+        found = make_blood(rat).viscosity(radius, np.array(0.45)) / PLASMA
+        assert found == pytest.approx(expected, rel=FORMULA)
+        unscaled = make_blood(blood("pries-in-vivo")).viscosity(radius, np.array(0.45))
+        assert unscaled == apparent_viscosity("pries-in-vivo", radius, 0.45)
+    rat = dataclasses.replace(blood("pries-in-vivo"), red_cell_volume_fl=55.0)
+    radius, hematocrit = np.array([2.3, 2.0]), np.array([0.45, 0.45])
+    np.testing.assert_array_equal(make_blood(rat).outside_range(radius, hematocrit), [False, True])  # 2.5 um as human
+    for law, given in (
+        ("constant", {}),
+        ("haynes-marginal-zone", {"core_viscosity_mpa_s": 4.0, "marginal_zone_um": 1}),
+    ):
+        plain = dataclasses.replace(blood(law), parameters=given)
+        values = [
+            make_blood(dataclasses.replace(plain, red_cell_volume_fl=volume)).viscosity(radius, hematocrit)
+            for volume in (None, 55.0)
+        ]
+        np.testing.assert_array_equal(*values)
+    with pytest.raises(DomainError, match=r"red_cell_volume_fl is 0.0; .*rat 55"):
+        make_blood(dataclasses.replace(rat, red_cell_volume_fl=0.0))
 
 
 def test_where_no_cell_passes_viscosity_is_infinite_and_never_negative():
