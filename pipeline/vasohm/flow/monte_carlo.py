@@ -134,7 +134,11 @@ class DrawnState:
 
 
 def ratio_bounds(
-    before: DrawnState, after: DrawnState, terminals: Terminals, blood: Blood, intervals: ResistanceIntervals
+    before: DrawnState,
+    after: DrawnState,
+    terminals: Terminals,
+    blood: Blood,
+    asked: tuple[ResistanceIntervals, BoolArray],
 ) -> tuple[FloatArray, FloatArray]:
     """Bounds (n_networks,) of the 95 % interval of ln(R after / R before), off its median; NaN where nothing was drawn.
 
@@ -146,12 +150,13 @@ def ratio_bounds(
         Inlets and outlets of both.
     blood : Blood
         The viscosity law of both.
-    intervals : ResistanceIntervals
-        Which networks are drawn, how often and from which seed.
+    asked : ResistanceIntervals and (n_networks,) bool array
+        How often networks were drawn and from which seed; and which of them now.
     """
+    intervals, wanted = asked
     low, high = (np.full(len(intervals.draws), np.nan) for _ in range(2))
     both = np.minimum(np.nan_to_num(before.share), np.nan_to_num(after.share))
-    made = {int(k): int(intervals.draws[k]) for k in np.flatnonzero(intervals.draws)}
+    made = {int(k): int(intervals.draws[k]) for k in np.flatnonzero(wanted)}
     sides = [replace(state, share=both) for state in (before, after)]
     found = {k: _circuit(sides[0], terminals, k) for k in made}
     circuits = {k: circuit for k, circuit in found.items() if circuit is not None and circuit.segment.size}

@@ -143,9 +143,9 @@ def run_scenarios(
         after_r[:, column] = np.where(known, after.network_resistance_pa_s_m3, np.nan)
         ln_hi[:, column] = COVERAGE_FACTOR_95 * _ln_ratio_se(before, after, network, shape[0])
         ln_lo[:, column] = -ln_hi[:, column]
-        if intervals is not None and intervals.draws.any():
-            low, high = ratio_bounds(before.drawn, after.drawn, terminals, made, intervals)
-            drawn = intervals.draws > 0
+        if intervals is not None:
+            drawn = (intervals.draws > 0) & (changed[:, column] > 0) & np.isfinite(after_r[:, column])
+            low, high = ratio_bounds(before.drawn, after.drawn, terminals, made, (intervals, drawn))
             ln_lo[drawn, column], ln_hi[drawn, column] = low[drawn], high[drawn]
         beyond = chosen & (after.resistances.flags & int(Flag.LAW_RANGE) > 0)
         flags[:, column] = np.where(np.bincount(network[beyond], minlength=shape[0]) > 0, int(Flag.LAW_RANGE), 0)
@@ -212,10 +212,18 @@ def _own_factors(
         return np.where(known, np.where(np.isfinite(ratio), ratio, np.inf) - ln_wanted, 0.0)
 
     most = -np.sign(ln_wanted) * np.log(WIDEST_FACTOR)
-    near, far = np.zeros(n), np.full(n, most)  # a bracket: the excess changes its sign between the two
-    near_excess, far_excess = np.full(n, -ln_wanted), excess(far)
-    reached = known & (np.sign(far_excess) != np.sign(near_excess))
-    found = far
+    near, near_excess = np.zeros(n), np.full(n, -ln_wanted)
+    share = sum_by(network, np.where(chosen, np.nan_to_num(before.circulation.share), 0.0), n)
+    with np.errstate(divide="ignore"):  # half as far again as Poiseuille's law alone would ask for
+        far = np.clip(1.5 * ln_wanted / (-4.0 * share), -np.log(WIDEST_FACTOR), np.log(WIDEST_FACTOR))
+    far_excess = excess(far)
+    short = np.sign(far_excess) == np.sign(near_excess)
+    if short.any():
+        near, near_excess = np.where(short, far, near), np.where(short, far_excess, near_excess)
+        far = np.where(short, most, far)
+        far_excess = np.where(short, excess(far), far_excess)
+    reached = known & (np.sign(far_excess) != np.sign(near_excess))  # the excess changes its sign in the bracket
+    found, last = far, np.zeros(n)
     for _ in range(SEARCH_TURNS):
         with np.errstate(invalid="ignore", divide="ignore"):
             secant = near - near_excess * (far - near) / (far_excess - near_excess)
@@ -224,10 +232,13 @@ def _own_factors(
         here = np.where(reached, excess(np.where(reached, found, 0.0)), 0.0)
         if np.all(np.abs(here) < LN_RATIO_ROUNDING):
             break
-        beyond = np.sign(here) == np.sign(far_excess)
-        # an end that stays is given half of its excess, so that the bracket closes from both sides (Illinois rule)
-        near, near_excess = np.where(beyond, near, found), np.where(beyond, 0.5 * near_excess, here)
-        far, far_excess = np.where(beyond, found, far), np.where(beyond, here, 0.5 * far_excess)
+        side = np.where(np.sign(here) == np.sign(far_excess), 1.0, -1.0)
+        beyond = side > 0
+        # an end that stays for a second time is given half of its excess, so that the other moves (Illinois rule)
+        kept = np.where(side == last, 0.5, 1.0)
+        near, near_excess = np.where(beyond, near, found), np.where(beyond, kept * near_excess, here)
+        far, far_excess = np.where(beyond, found, far), np.where(beyond, here, kept * far_excess)
+        last = side
     return np.where(reached, np.exp(found), np.nan)
 
 
