@@ -14,7 +14,9 @@ ALONG_SIGMA_PX = 1.0  # noise along the way is averaged over about so many pixel
 LEAST_SHARE = 0.7  # of the contrast before the end must be seen all along the gap
 
 
-def attach_ends(mask: BoolArray, traced: Trace, distance: Float32Array, signal: Float32Array) -> BoolArray:
+def attach_ends(
+    mask: BoolArray, traced: Trace, distance: Float32Array, signal: Float32Array
+) -> tuple[BoolArray, Float32Array]:
     """Fill the gaps between vessel ends and the mask's next vessel straight ahead of them.
 
     Parameters
@@ -26,11 +28,12 @@ def attach_ends(mask: BoolArray, traced: Trace, distance: Float32Array, signal: 
 
     Returns
     -------
-    (h, w) bool, the mask with the gaps filled.
+    (h, w) bool, the mask with the gaps filled, and (h, w) distance to the outline, in the gaps the radius of the vessel
+    that ends there. Where nothing was filled both are the arrays that were given.
     """
     tip, half_way, behind = _tips(traced)
     if not len(tip):
-        return mask
+        return mask, distance
     smooth = ndimage.gaussian_filter(signal, 1.0, mode="nearest")
     row, column = traced.row[tip].astype(np.float64), traced.column[tip].astype(np.float64)
     heading = np.arctan2(row - traced.row[behind], column - traced.column[behind])
@@ -52,7 +55,9 @@ def attach_ends(mask: BoolArray, traced: Trace, distance: Float32Array, signal: 
         best, first = np.where(better, dimmest, best), np.where(better, met, first)
         y, x = np.where(better[:, None], ray_y, y), np.where(better[:, None], ray_x, x)
     joined = np.isfinite(best)
-    return _filled(mask, (y[joined], x[joined]), first[joined], radius[joined])
+    if not joined.any():
+        return mask, distance
+    return _filled((mask, distance), (y[joined], x[joined]), first[joined], radius[joined])
 
 
 def _first_met(mask: BoolArray, y: FloatArray, x: FloatArray) -> tuple[IntArray, tuple[IntArray, IntArray]]:
@@ -80,13 +85,18 @@ def _tips(traced: Trace) -> tuple[IntArray, IntArray, IntArray]:
     )
 
 
-def _filled(mask: BoolArray, rays: tuple[FloatArray, FloatArray], first: IntArray, radius: FloatArray) -> BoolArray:
+def _filled(
+    drawn_on: tuple[BoolArray, Float32Array], rays: tuple[FloatArray, FloatArray], first: IntArray, radius: FloatArray
+) -> tuple[BoolArray, Float32Array]:
     """Draw the ways ahead, about as wide as the vessels that end."""
-    drawn = mask.copy()
+    mask, distance = (values.copy() for values in drawn_on)
     for y, x, stop, width in zip(*rays, first.tolist(), radius.tolist(), strict=True):
         reach = int(np.ceil(width))
         for row, column in zip(np.rint(y[: stop + 1]).astype(int), np.rint(x[: stop + 1]).astype(int), strict=True):
-            rows = slice(max(row - reach + 1, 0), row + reach)
-            columns = slice(max(column - reach + 1, 0), column + reach)
-            drawn[rows, columns] = True
-    return drawn
+            place = (
+                slice(max(row - reach + 1, 0), row + reach),
+                slice(max(column - reach + 1, 0), column + reach),
+            )
+            distance[place] = np.where(mask[place], distance[place], width)
+            mask[place] = True
+    return mask, distance

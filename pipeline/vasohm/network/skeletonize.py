@@ -46,12 +46,13 @@ def skeletonize(mask: VesselMask, prepared: PreparedImage, settings: Skeletonize
         bridges background or follows an edge.
     settings : how long a spur may be.
     """
-    pixels, distance = _thin(mask.pixels, settings)
+    distance = ndimage.distance_transform_edt(np.pad(mask.pixels, 1))[1:-1, 1:-1].astype(np.float32)
+    pixels = _thin(mask.pixels, distance, settings)
     if mask.source == GIVEN:
         return Skeleton(pixels, distance)
-    whole = attach_ends(mask.pixels, trace(pixels), distance, prepared.signal)
-    if not np.array_equal(whole, mask.pixels):
-        pixels, distance = _thin(whole, settings)
+    whole, distance = attach_ends(mask.pixels, trace(pixels), distance, prepared.signal)
+    if whole is not mask.pixels:
+        pixels = _thin(whole, distance, settings)
     traced = trace(pixels)
     unseen = unseen_pixels(traced, distance, prepared)
     if unseen.any():
@@ -61,10 +62,8 @@ def skeletonize(mask: VesselMask, prepared: PreparedImage, settings: Skeletonize
     return Skeleton(pixels, distance)
 
 
-def _thin(mask: BoolArray, settings: SkeletonizeSettings) -> tuple[BoolArray, Float32Array]:
-    distance = ndimage.distance_transform_edt(np.pad(mask, 1))[1:-1, 1:-1].astype(np.float32)
-    pixels = morphology.skeletonize(mask.copy())  # it refuses read-only arrays
-    return _pruned(pixels, distance, settings), distance
+def _thin(mask: BoolArray, distance: Float32Array, settings: SkeletonizeSettings) -> BoolArray:
+    return _pruned(morphology.skeletonize(mask.copy()), distance, settings)  # it refuses read-only arrays
 
 
 def _pruned(pixels: BoolArray, distance: Float32Array, settings: SkeletonizeSettings) -> BoolArray:
