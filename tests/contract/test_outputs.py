@@ -291,7 +291,11 @@ def make_tables(
 
 
 def make_methods(law: str = "constant", method: str = "ridge", n_masked: int = 0) -> Methods:
-    used = MethodsUsed(
+    return describe_methods(methods_used(law, method, n_masked))
+
+
+def methods_used(law: str = "constant", method: str = "ridge", n_masked: int = 0) -> MethodsUsed:
+    return MethodsUsed(
         version="0.1.0",
         prepare=PrepareSettings(channel="green", polarity="dark", gamma=1.0, radius_um=(4.0, 120.0)),
         segment=SegmentSettings(method=method, radius_um=(4.0, 120.0), false_alarms_per_mpx=10.0, parameters={}),
@@ -307,7 +311,6 @@ def make_methods(law: str = "constant", method: str = "ridge", n_masked: int = 0
         intervals=IntervalSettings("auto", 1000, 0),
         targets=None,
     )
-    return describe_methods(used)
 
 
 def read_csv(path: Path) -> list[dict[str, str]]:
@@ -812,6 +815,18 @@ def test_every_mark_of_the_methods_has_its_reference() -> None:
     assert entries.count("@misc{") == len(methods.references)
     assert "doi = {10.1146/annurev.fl.25.010193.000245}" in entries
     assert "year = {1993}" in entries
+
+
+def test_the_methods_tell_how_cells_part_and_which_diameter_the_law_was_given() -> None:
+    """Rat blood by a law for human cells: the factor (92/55)^(1/3) stands in the report, and the law of parting."""
+    told = describe_methods(
+        replace(
+            methods_used(),
+            blood=replace(make_blood_settings("pries-in-vivo"), red_cell_volume_fl=55.0, split_law="1990"),
+        )
+    )
+    assert "multiplied by 1.187" in told.paragraph
+    assert any("Circ Res 67:826-834" in reference for reference in told.references)
 
 
 def test_columns_of_tables_have_the_types_of_the_schema() -> None:

@@ -1,12 +1,13 @@
 """The methods paragraph of one study, from the settings that it used, with the sources that it leans on."""
 
 import re
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
 
 from vasohm.flow.estimated_ends import EndTargets
 from vasohm.flow.monte_carlo import FIRST_ORDER_UP_TO, IntervalSettings
-from vasohm.flow.rheology import BloodSettings
+from vasohm.flow.phase_separation import SPLIT_LAWS
+from vasohm.flow.rheology import HUMAN_CELL_VOLUME_FL, BloodSettings, diameter_factor, get_law
 from vasohm.flow.terminals import NetworkSettings
 from vasohm.image.prepare import PrepareSettings
 from vasohm.image.segment import SegmentSettings
@@ -123,6 +124,7 @@ def describe_methods(used: MethodsUsed) -> Methods:
             f"radius along its centreline, Poiseuille's law applied locally {mark(POISEUILLE)}."
         ),
         _blood_sentence(used.blood, mark(used.law_citation)),
+        *_cells_sentences(used.blood, mark),
         _network_sentence(used.network, mark(SHARES)),
         *([_estimate_sentence(used.targets, mark(ESTIMATE))] if used.targets is not None else []),
         (
@@ -182,6 +184,21 @@ def _blood_sentence(blood: BloodSettings, mark: str) -> str:
         f"The apparent viscosity follows the law {blood.law} {mark} at a discharge hematocrit of {blood.hematocrit:g}"
         f"{doubt} and a plasma viscosity of {blood.plasma_viscosity_mpa_s:g} mPa·s{of_plasma}."
     )
+
+
+def _cells_sentences(blood: BloodSettings, mark: Callable[[str], str]) -> Iterator[str]:
+    """Say which diameter the law was given, and how cells part, where a study asks for either."""
+    if blood.red_cell_volume_fl is not None and get_law(blood.law).scales_with_cells:
+        factor = diameter_factor(blood.red_cell_volume_fl)
+        yield (
+            f"Within the law, diameters were multiplied by {factor:.4g}: red cells have {blood.red_cell_volume_fl:g}, "
+            f"human ones {HUMAN_CELL_VOLUME_FL:g} fL."
+        )
+    if blood.split_law is not None:
+        yield (
+            f"Cells and plasma part where vessels divide {mark(SPLIT_LAWS[blood.split_law].citation)} and mix where "
+            "they meet, in turns with the viscosity until both agree; intervals hold the hematocrits found so."
+        )
 
 
 def _network_sentence(network: NetworkSettings, mark: str) -> str:
