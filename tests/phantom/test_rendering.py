@@ -141,7 +141,9 @@ def test_crossing_adds_absorption_and_junction_does_not(profile, single, crossed
 
 def test_quarter_turn_of_the_scene_turns_the_picture():
     """A swapped axis or a half-pixel shift would break it."""
-    scene = tube_scene([Tube(20.3, 27.9, 2.5, 30, 20), Tube(25, 25, 3, 20, 100, shape="arc")], (56, 56))
+    scene = tube_scene(
+        [Tube(20.3, 27.9, 2.5, 30, 20), Tube(25, 25, 3, 20, 100, shape="arc", bend_radius_px=15)], (56, 56)
+    )
     turned = Scene(
         scene.shape,
         scene.node_y_px,
