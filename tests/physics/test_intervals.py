@@ -183,6 +183,29 @@ def test_the_same_seed_gives_the_same_bounds_whatever_else_is_in_the_image():
     assert bounds[0] != bounds[3]
 
 
+def test_networks_without_hematocrit_do_no_harm():
+    """Where cells found no settled state beside it, a network is drawn all the same, as if alone."""
+    measured, ends = mesh(4, ln_se=0.2, noise_sign=1)
+    how = blood("pries-in-vivo")
+    nodes = [
+        *zip(measured.graph.node_x_px.tolist(), measured.graph.node_y_px.tolist(), strict=True),
+        (0.0, 400.0),
+        (60.0, 400.0),
+    ]
+    radius = np.split(measured.radius_um, measured.graph.offsets[1:-1])
+    pairs = zip(measured.graph.node_a, measured.graph.node_b, radius, strict=True)
+    vessels = [straight(nodes, a, b, r) for a, b, r in pairs]
+    beside = bed(nodes, [*vessels, straight(nodes, len(nodes) - 2, len(nodes) - 1, 5.0)], ln_se=0.2, noise_sign=1)
+    flow = solve_flow(beside, place_terminals(beside, ends, AUTO), how)
+    unsettled = np.array(flow.hematocrit)
+    unsettled[-1] = np.nan
+    found = [
+        find_intervals(beside, one, how, IntervalSettings("monte-carlo", 300, 1))
+        for one in (flow, replace(flow, hematocrit=unsettled))
+    ]
+    assert found[0].network_hi[0] == found[1].network_hi[0]
+
+
 def test_a_network_too_large_for_the_draws_gets_fewer_or_none_and_says_so(monkeypatch):
     made = mesh(4, ln_se=0.1, noise_sign=1)
     for most, expected, flag in ((1e4, 0, Flag.FEWER_DRAWS), (1e5, None, Flag.FEWER_DRAWS | Flag.MONTE_CARLO)):

@@ -76,7 +76,7 @@ def cut_into_pieces(measured: MeasuredGraph, blood: Blood, hematocrit: FloatArra
     def by_piece(values: FloatArray) -> FloatArray:
         return sum_by(piece, np.where(inside, values, 0.0), n_all * PIECES).reshape(n_all, PIECES)[chosen]
 
-    share, cells = arc_shares(measured), hematocrit[segment]
+    share, cells = arc_shares(measured), np.where(inside, hematocrit[segment], 0.0)  # others may have none
     radius = np.where(inside, measured.radius_um, 1.0)
     viscosity = blood.viscosity(radius, cells)
     part = share * viscosity * radius**-4

@@ -9,7 +9,8 @@ from vasohm.flags import MEANING, Flag, code
 
 POLICY = "default-src 'none'; img-src 'self'; style-src 'unsafe-inline'; base-uri 'none'; form-action 'none'"
 FLAG_MEANING = {code(flag): meaning for flag, meaning in MEANING.items()}
-FACTS = {code(Flag.TERMINALS_JOINED)}  # flags that tell how a thing was done and cast no doubt: explained, not marked
+# Flags that tell how a thing was done and cast no doubt: explained, not marked.
+FACTS = {code(Flag.TERMINALS_JOINED), code(Flag.MONTE_CARLO)}
 
 STYLE = """
 :root { color-scheme: light; }
