@@ -43,7 +43,9 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     mask = segment(prepared, settings.segment, given)
     stage("graph")
     traced = build_graph(skeletonize(mask, prepared, settings.skeletonize))
-    uncrossed, places_met = resolve_crossings(traced, settings.crossings, forced_places(source.edits))
+    overlap_adds = settings.crossings.overlap_adds and not raw.is_maximum
+    crossings = replace(settings.crossings, overlap_adds=overlap_adds)
+    uncrossed, places_met = resolve_crossings(traced, prepared, crossings, forced_places(source.edits))
     graph = extend_ends(refine_centrelines(uncrossed, prepared), prepared)
     if labels is not None:
         graph = classes_from_labels(graph, labels)

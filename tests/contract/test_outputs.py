@@ -80,7 +80,14 @@ def real(*values: float) -> FloatArray:
 
 
 def crossings(n: int) -> Crossings:
-    return Crossings(real(*[50.5] * n), real(*[30.25] * n), whole(*[0] * n), whole(*[1] * n), real(*[0.9] * n))
+    return Crossings(
+        real(*[50.5] * n),
+        real(*[30.25] * n),
+        whole(*[0] * n),
+        whole(*[1] * n),
+        real(*[0.9] * n),
+        np.zeros(n, dtype=bool),
+    )
 
 
 def make_graph(n_segments: int) -> VesselGraph:

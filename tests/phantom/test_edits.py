@@ -62,6 +62,6 @@ def test_a_person_decides_what_is_a_crossing():
         (np.array([0.0, 200.0]), np.array([100.0, 100.0]), 4.0),
         (np.array([100.0, 100.0]), np.array([0.0, 200.0]), 3.0),
     ]
-    picture = draw(lines, (201, 201))
+    picture = draw(lines[:1], (201, 201)) + draw(lines[1:], (201, 201), None)  # their light adds
     assert graph_of(picture).n_segments == 2
     assert graph_of(picture, forced=[(103.0, 98.0, False)]).n_segments == 4

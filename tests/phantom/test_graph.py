@@ -18,7 +18,7 @@ def graph_of(picture, forced=()) -> VesselGraph:
     image = prepared(picture)
     mask = segment(image, SegmentSettings("ridge", (1.0, 10.0), 30.0, {}), None)
     skeleton = skeletonize(mask, image, SkeletonizeSettings(1.2, 3.0))
-    graph, _ = resolve_crossings(build_graph(skeleton), CrossingSettings(0.5), forced)
+    graph, _ = resolve_crossings(build_graph(skeleton), image, CrossingSettings(0.5), forced)
     return extend_ends(refine_centrelines(graph, image), image)
 
 
@@ -109,7 +109,7 @@ def test_two_crossing_vessels_are_two_segments():
         (np.array([0.0, 200.0]), np.array([70.0, 140.0]), 4.0),
         (np.array([80.0, 130.0]), np.array([0.0, 200.0]), 3.0),
     ]
-    graph = graph_of(draw(lines, (201, 201)))
+    graph = graph_of(draw(lines[:1], (201, 201)) + draw(lines[1:], (201, 201), None))  # their light adds
     assert graph.n_segments == 2
     assert len(graph.crossings.x_px) == 1
     assert len(np.unique(label_networks(graph)[1])) == 2

@@ -107,7 +107,7 @@ def bed(
         vessel_class=np.zeros(n, dtype=np.int64) if classes is None else np.array(classes, dtype=np.int64),
         class_probability=np.full(n, np.nan),
         segment_flags=np.zeros(n, dtype=np.int64),
-        crossings=Crossings(np.zeros(0), np.zeros(0), none, none.copy(), np.zeros(0)),
+        crossings=Crossings(np.zeros(0), np.zeros(0), none, none.copy(), np.zeros(0), np.zeros(0, dtype=bool)),
     )
     first, last = offsets[:-1], offsets[1:] - 1
     radius_um = np.concatenate([np.zeros(0), *(vessel.radius_um for vessel in vessels)])

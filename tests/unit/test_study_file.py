@@ -63,6 +63,7 @@ CONTRACT = """
     radius_um   = [4, 80.0]
     false_alarms_per_mpx = 30
     crossing_probability = 0.6
+    overlap_adds = false
     parameters = { strictness = 2 }
     [radius]
     profile     = "cylinder"
@@ -134,7 +135,7 @@ def test_every_key_reaches_its_setting(tmp_path: Path) -> None:
     )
     assert (chosen.segment.method, chosen.segment.false_alarms_per_mpx) == ("hessian", 30.0)
     assert (chosen.segment.parameters, chosen.blood.parameters) == ({"strictness": 2.0}, {"core": 1.0})
-    assert chosen.crossings.threshold == 0.6
+    assert (chosen.crossings.threshold, chosen.crossings.overlap_adds) == (0.6, False)
     assert (chosen.radius.profile, chosen.radius.blur_px) == ("cylinder", 1.5)
     assert (chosen.radius.plasma_layer_um, chosen.radius.plasma_layer_se_um) == (1.1, 0.4)
     assert (chosen.blood.law, chosen.blood.hematocrit, chosen.blood.hematocrit_se) == ("pries-in-vitro", 0.4, 0.02)
@@ -203,7 +204,7 @@ ALL_KEYS = [
     for key in StudyModel.model_fields[section].annotation.model_fields  # type: ignore[union-attr]
 ]
 NONSENSE = [True, float("nan"), float("inf"), -1, "nonsense", [], {"a": {"b": 1}}, [True, False]]
-SWITCHES = {("output", "overlay"), ("blood", "hematocrit_split")}
+SWITCHES = {("output", "overlay"), ("blood", "hematocrit_split"), ("segment", "overlap_adds")}
 TEXTS = {("study", "name"), ("study", "sheet")}
 
 

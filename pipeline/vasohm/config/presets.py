@@ -55,24 +55,28 @@ PRESETS: Mapping[str, Mapping[str, Any]] = {
         "image.polarity": "dark",
         "image.plane": "mean",
         "segment.radius_um": [4.0, 120.0],
+        "segment.overlap_adds": True,
     },
     "angiogram": {  # contrast agent or flow signal makes vessels bright
         "image.channel": "luminance",
         "image.polarity": "bright",
         "image.plane": "max",
         "segment.radius_um": [3.0, 120.0],
+        "segment.overlap_adds": False,  # often a maximum over depth: overlaps tell nothing
     },
     "fluorescence": {  # labelled plasma or vessel wall under a microscope
         "image.channel": "luminance",
         "image.polarity": "bright",
         "image.plane": "max",
         "segment.radius_um": [1.5, 60.0],
+        "segment.overlap_adds": True,
     },
     "intravital": {  # transmitted or reflected light: columns of red cells absorb green
         "image.channel": "green",
         "image.polarity": "dark",
         "image.plane": "mean",
         "segment.radius_um": [2.0, 60.0],
+        "segment.overlap_adds": True,
     },
 }
 

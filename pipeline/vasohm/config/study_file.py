@@ -315,7 +315,7 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
             values["segment.parameters"],
         ),
         skeletonize=SkeletonizeSettings(values["skeletonize.spur_radii"], values["skeletonize.spur_px"]),
-        crossings=CrossingSettings(values["segment.crossing_probability"]),
+        crossings=CrossingSettings(values["segment.crossing_probability"], values["segment.overlap_adds"]),
         radius=RadiusSettings(
             values["radius.profile"],
             None if blur_px == "auto" else blur_px,

@@ -149,6 +149,7 @@ class SegmentTable(Table):
     radius_um: RadiusRange | None = None
     false_alarms_per_mpx: NotNegative | None = None
     crossing_probability: Annotated[float, Field(ge=0, le=1)] | None = None
+    overlap_adds: bool | None = None
     parameters: dict[str, float] | None = None
 
 

@@ -78,6 +78,7 @@ class RawImage:
     file_pixel_size_source: str  # ome | imagej | dicom | "" where the file says none
     notes: tuple[str, ...]  # facts for record.json: ignored dots per inch, orientation, plane taken
     flags: Flag
+    is_maximum: bool = False  # each pixel is the brightest of several planes
 
     def __post_init__(self) -> None:
         freeze(self)
@@ -114,6 +115,7 @@ def read_image(path: Path, settings: ReadSettings) -> RawImage:
         file_pixel_size_source=decoded.scale.source,
         notes=decoded.notes + decoded.scale.notes + plane_notes,
         flags=Flag.ORIENTATION_TAG if decoded.oriented else Flag.NONE,
+        is_maximum=settings.plane == "max" and len(decoded.planes) > 1,
     )
 
 

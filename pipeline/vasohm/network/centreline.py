@@ -9,6 +9,7 @@ from vasohm.arrays import BoolArray, Float32Array, FloatArray, IntArray
 from vasohm.image.prepare import PreparedImage
 from vasohm.network.graph import NodeKind, VesselGraph, branch_directions, centre_junctions, end_radius, in_fixed_order
 from vasohm.network.groups import median_by
+from vasohm.network.passages import crossing_windows, draw_passages, in_windows
 from vasohm.network.paths import offsets_of, owner, position, resample, running_median, smooth, tangents, twice
 
 ROUNDS = 3
@@ -42,16 +43,18 @@ def refine_centrelines(graph: VesselGraph, prepared: PreparedImage) -> VesselGra
     if graph.seed_radius_px.max() <= LINE_PX:
         graph = _with_seen_radius(graph, signal)
     x, y, offsets, seed = graph.x_px, graph.y_px, graph.offsets, graph.seed_radius_px
-    near_branching = _near_branching(graph)
+    windows = crossing_windows(graph)
+    unseen = _near_branching(graph) | in_windows(windows, graph.n_points)
     ends = np.concatenate((offsets[:-1], offsets[1:] - 1))
     for _ in range(ROUNDS):
         tx, ty = tangents(smooth(x, offsets, 2.0), smooth(y, offsets, 2.0), offsets)
         shift = edge_midpoints(signal, (x, y), (-ty, tx), smooth(seed, offsets, 2.0), offsets)
-        shift[near_branching] = 0
+        shift[unseen] = 0
         shift = smooth(running_median(shift, offsets, MEDIAN_POINTS), offsets, OFFSET_SIGMA_PX)
         shift = np.clip(shift, -LARGEST_SHIFT_RADII * seed - 0.5, LARGEST_SHIFT_RADII * seed + 0.5)
         shift[ends[_node_of_ends(graph, NodeKind.BRANCHING)]] = 0
         x, y = twice(x - shift * ty, offsets), twice(y + shift * tx, offsets)
+    x, y = draw_passages(x, y, offsets, windows)
     node_x, node_y = graph.node_x_px.copy(), graph.node_y_px.copy()
     free = ~_node_of_ends(graph, NodeKind.BRANCHING)
     nodes = np.concatenate((graph.node_a, graph.node_b))

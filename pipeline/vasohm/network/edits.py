@@ -9,8 +9,8 @@ from scipy.spatial import cKDTree
 
 from vasohm.arrays import BoolArray
 from vasohm.flags import Flag
-from vasohm.network.crossings import join_ends
 from vasohm.network.graph import Crossings, NodeKind, VesselClass, VesselGraph, in_fixed_order, rebuild
+from vasohm.network.joining import join_ends
 from vasohm.network.paths import owner
 
 PLACE_EDITS = ("crossing", "branching")
@@ -96,7 +96,7 @@ def drop_segments(graph: VesselGraph, drop: BoolArray) -> VesselGraph:
     if partner:
         rebuilt, new_of = join_ends(rebuilt, partner, set())
         over, under = new_of[over], new_of[under]
-    crossings = Crossings(c.x_px[stays], c.y_px[stays], over, under, c.probability[stays])
+    crossings = Crossings(c.x_px[stays], c.y_px[stays], over, under, c.probability[stays], c.over_told[stays])
     return in_fixed_order(replace(rebuilt, crossings=crossings))
 
 

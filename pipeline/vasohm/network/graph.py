@@ -40,6 +40,7 @@ class Crossings:
     segment_over: IntArray
     segment_under: IntArray
     probability: FloatArray
+    over_told: BoolArray  # the picture shows which is over; else the lower index stands first
 
     def __post_init__(self) -> None:
         freeze(self)
@@ -84,7 +85,9 @@ class VesselGraph:
         return len(self.x_px)
 
 
-NO_CROSSINGS = Crossings(np.zeros(0), np.zeros(0), np.zeros(0, np.int64), np.zeros(0, np.int64), np.zeros(0))
+NO_CROSSINGS = Crossings(
+    np.zeros(0), np.zeros(0), np.zeros(0, np.int64), np.zeros(0, np.int64), np.zeros(0), np.zeros(0, dtype=bool)
+)
 JUNCTION_RADII = (
     2.2  # inside this many radii of a junction lumens overlap and skeletons bend: no direction is read there
 )
@@ -345,7 +348,8 @@ def in_fixed_order(graph: VesselGraph) -> VesselGraph:
     points = start + np.where(turned, size - 1 - k, k)
     new_index = np.empty(graph.n_segments, np.int64)
     new_index[order] = np.arange(graph.n_segments)
-    mapped = np.sort(new_index[np.column_stack((graph.crossings.segment_over, graph.crossings.segment_under))], axis=1)
+    mapped = new_index[np.column_stack((graph.crossings.segment_over, graph.crossings.segment_under))]
+    mapped = np.where(graph.crossings.over_told[:, None], mapped, np.sort(mapped, axis=1))
     by_row = np.lexsort((graph.crossings.x_px, graph.crossings.y_px))
     return replace(
         graph, node_x_px=graph.node_x_px[by_place], node_y_px=graph.node_y_px[by_place],
@@ -356,9 +360,10 @@ def in_fixed_order(graph: VesselGraph) -> VesselGraph:
         crossings=Crossings(
             graph.crossings.x_px[by_row],
             graph.crossings.y_px[by_row],
-            mapped[by_row, 0],  # which is over cannot be told from geometry: the lower index stands first
+            mapped[by_row, 0],
             mapped[by_row, 1],
             graph.crossings.probability[by_row],
+            graph.crossings.over_told[by_row],
         ),
     )  # fmt: skip
 
