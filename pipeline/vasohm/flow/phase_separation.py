@@ -13,7 +13,7 @@ from vasohm.arrays import BoolArray, FloatArray, IntArray
 from vasohm.flow.rheology import HIGHEST_HEMATOCRIT
 
 TURNS = 100  # of feeding hematocrit and shares, which act on each other weakly: 5 to 15 are usual
-STILL = 1e-13  # change of a feeding hematocrit at which they agree
+STILL = 1e-10  # change of a feeding hematocrit at which they agree
 
 
 @dataclass(frozen=True, slots=True)
