@@ -70,8 +70,9 @@ def test_a_narrowing_among_smooth_vessels_is_not_smoothed_away():
     rng = np.random.default_rng(6)
     scene = varying_tubes("cylinder", narrowed(6, 14, rng), 1.0, rng)
     outcome = fit_scene(scene, rng, "cylinder", 1.0)
-    ln_resistance, _ = outcome.ln_resistance_error()
-    assert abs(np.mean(ln_resistance[:6])) < 0.08
+    ln_resistance, se = outcome.ln_resistance_error()
+    promised, chance = 0.05, 2 * np.median(se[:6]) / np.sqrt(6)
+    assert abs(np.mean(ln_resistance[:6])) < promised + chance
 
 
 @pytest.mark.slow
@@ -90,8 +91,7 @@ def test_the_whole_range_of_radii_and_contrasts():
                 assert abs(error.mean()) < limit, (family, r, sigma, cnr, error.mean())
                 efficiency = (bound / error.std()) ** 2
                 assert efficiency > 0.70, (family, r, sigma, cnr, efficiency)
-                # sampling blurs oblique lines a little less: at 1 px and CNR 30 that is half a standard error
-                assert covered(error, se) > (0.88 if r >= 1.5 else 0.80), (family, r, sigma, cnr)
+                assert covered(error, se) > 0.88, (family, r, sigma, cnr)
                 cells.append((family, r, sigma, cnr))
                 ratios.append(efficiency)
                 z.append(np.abs(error) < 1.96 * se)

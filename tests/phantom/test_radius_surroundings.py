@@ -4,9 +4,11 @@ import time
 
 import numpy as np
 import pytest
+from drawing import draw
 from radius_fits import covered, fit_scene, rms
 from radius_truth import drawn_tubes, height, straight_tubes, varying_tubes
 
+from vasohm import measure_image
 from vasohm.flags import Flag
 
 
@@ -114,6 +116,54 @@ def test_what_is_not_in_the_picture_is_inferred_and_what_is_clipped_is_said():
     assert se[hidden][0] > 1.2 * np.median(se[seen])
     assert np.all(np.isfinite(outcome.fit.ln_radius))
     assert abs(outcome.error[hidden][0]) < 3 * se[hidden][0]
+
+
+def eight_bit(picture):
+    """Unit contrast as 110 grey values above 30, cut at the end of the scale."""
+    return np.clip(np.rint(30 + 110 * picture), 0, 255).astype(np.uint8)
+
+
+def measured(image):
+    return measure_image(image, pixel_size_um=1.0, preset="fluorescence", segment={"radius_um": [1.5, 12.0]})
+
+
+def test_a_vessel_whose_light_is_cut_off_is_said_and_spoils_no_other():
+    """Wrong if its flat top told the picture's blur: the other vessels were 8 % too wide, without a word."""
+    x = np.arange(-5.0, 205.0)
+    rows, radii = (40, 80, 120, 160), np.array([4.0, 4.0, 4.0, 3.0])
+    picture = draw([(x, row + 0 * x, r) for row, r in zip(rows, radii, strict=True)], (200, 200), 1)
+    picture[60:100] *= 2.6  # 286 grey values high
+    found = measured(eight_bit(picture))
+    cut = found.segments["flags"].str.contains("clipped").to_numpy()
+    assert cut.tolist() == [False, True, False, False]
+    assert found.image["flags"].str.contains("saturated").all()
+    error = found.segments.radius_hydraulic_um.to_numpy() / radii - 1
+    assert np.abs(error[~cut]).max() < 0.015  # of 0.4 % stated, and the grid on which they are drawn
+    se = found.segments.radius_hydraulic_se_um.to_numpy()[cut]
+    assert np.all(np.abs(error[cut] * 4.0) < 3 * se)
+
+
+def test_a_segment_shorter_than_its_width_is_said():
+    """Wrong if a bridge of 5 px between two walls gave a radius as good as that of a long vessel."""
+    x = np.arange(-5.0, 205.0)
+    bridge = (np.full(14, 100.0), np.arange(60.0, 74.0), 3.0)
+    lines = [(x, 60 + 0 * x, 4.0), (x, 73 + 0 * x, 4.0), bridge, (x, 140 + 0 * x, 3.0), (x, 170 + 0 * x, 5.0)]
+    found = measured(eight_bit(draw(lines, (200, 200), 2))).segments
+    short = found["flags"].str.contains("short").to_numpy()
+    assert short.sum() == 1
+    assert found["flags"][short].str.contains("inferred").all()
+    assert np.abs(found.radius_hydraulic_um[short] - 3.0).max() < 3 * found.radius_hydraulic_se_um[short].max()
+    long = found.radius_hydraulic_um[~short].to_numpy()
+    assert np.abs(long / np.array([4, 4, 4, 4, 3, 5]) - 1).max() < 0.02
+
+
+def test_few_strips_give_wide_intervals_that_hold():
+    """Wrong if a stub of six points borrowed its certainty from nowhere."""
+    rng, n = np.random.default_rng(29), 64
+    outcome = fit_scene(straight_tubes("cylinder", 4.0, 1.0, 10, rng, n=n, length=6), rng, "cylinder", 1.0)
+    error, se = outcome.segment_error()
+    assert covered(error, se) > 0.95 - 3 * np.sqrt(0.95 * 0.05 / n)
+    assert 0.6 < rms(error) / np.sqrt(np.mean(se**2)) < 1.3
 
 
 def test_equal_input_gives_equal_radii():

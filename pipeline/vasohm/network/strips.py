@@ -5,13 +5,14 @@ from typing import Literal, TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.ndimage import map_coordinates, spline_filter
+from scipy.ndimage import binary_dilation, map_coordinates, spline_filter
 
 from vasohm.arrays import BoolArray, Float32Array, FloatArray, IntArray, freeze
 
 Owners: TypeAlias = tuple[NDArray[np.int32], ...]  # by pixel (h * w,), see `paint_owners`
 SplineOrder: TypeAlias = Literal[3, 5]
 
+SPOILT_PX = 2  # a pixel's own error falls to 7 % in a cubic spline so far away
 TANGENT_REACH = 3  # points on each side; directions must be good to 5 degrees
 JOINED_BLURS, ALONE_BLURS = 1.0, 2.5  # how far beyond its rim a neighbour's samples are taken out, in blurs
 RIM_BLURS = (0.5, 1.5)  # a rim is seen when no sample is missing from so far inside to so far outside
@@ -115,8 +116,12 @@ class Overlaps:
 def make_picture(
     signal: Float32Array, noise_sd: Float32Array, valid: BoolArray, clipped: BoolArray, order: SplineOrder = 3
 ) -> Picture:
-    """Prepare an image (h, w) for sampling; pixels outside the field of view or at the scale's limit do not count."""
-    usable = valid & ~clipped & (noise_sd > 0)
+    """Prepare an image (h, w) for sampling; pixels outside the field of view do not count.
+
+    Nor do those at the scale's limit and beside them: a spline draws the neighbours of a pixel that is too low along.
+    """
+    spoilt = binary_dilation(clipped, iterations=SPOILT_PX) if clipped.any() else clipped
+    usable = valid & ~spoilt & (noise_sd > 0)
     filled = np.where(np.isfinite(signal), signal, 0.0).astype(np.float32)
     precision = np.zeros(signal.shape, np.float32)
     np.divide(1.0, noise_sd.astype(np.float32) ** 2, out=precision, where=usable)
