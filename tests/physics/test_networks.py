@@ -1,8 +1,10 @@
 """Networks against closed forms, a general graph library and what Kirchhoff's laws imply."""
 
 import itertools
+import json
 from fractions import Fraction
 from math import factorial
+from pathlib import Path
 
 import networkx as nx
 import numpy as np
@@ -157,6 +159,17 @@ def library_resistance(table: pd.DataFrame, a, b) -> float:
 def test_networks_agree_with_a_graph_library(table):
     """The resistance distance of networkx, from a pseudoinverse; its dense algebra is good to about 1e-8 here."""
     assert solve_network(table, 0, 1).resistance_pa_s_m3 == pytest.approx(library_resistance(table, 0, 1), rel=1e-7)
+
+
+def test_networks_agree_with_a_pore_network_library():
+    """Pressures and flow of random networks as a library for porous materials has them, to 1e-9."""
+    path = Path(__file__).parents[1] / "data" / "pore_networks.json"
+    for network in json.loads(path.read_text(encoding="utf-8"))["networks"]:
+        pairs = list(zip(network["node_a"], network["node_b"], strict=True))
+        found = solve_network(edges(pairs, network["resistance"]), 0, 1)
+        assert found.resistance_pa_s_m3 == pytest.approx(1.0 / network["flow"], rel=1e-9)
+        pressure = found.nodes.set_index("node")["pressure_mmhg"].loc[range(len(network["pressure"]))]
+        np.testing.assert_allclose(pressure, network["pressure"], atol=1e-9)
 
 
 @given(networks())
