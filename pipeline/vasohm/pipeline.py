@@ -22,7 +22,7 @@ from vasohm.network.graph import build_graph
 from vasohm.network.morphometry import describe_shape
 from vasohm.network.radius import measure_radii
 from vasohm.network.skeletonize import skeletonize
-from vasohm.results.tables import DiscPlace, Findings, ImageTables, tabulate
+from vasohm.results.tables import Findings, ImageTables, tabulate
 
 
 def measure_source(source: ImageSource, settings: Settings, stage: Callable[[str], None]) -> ImageTables:
@@ -65,9 +65,4 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     stage("tables")
     shape_of = describe_shape(measured, mask.pixels, prepared.fov)
     findings = Findings(prepared, mask, measured, flow, shape_of, scenarios, intervals)
-    return tabulate(source.image_id, source.design, findings, _told_disc(source))
-
-
-def _told_disc(source: ImageSource) -> DiscPlace | None:
-    disc = source.disc
-    return None if disc is None else DiscPlace(disc.x_px, disc.y_px, disc.radius_px, "sheet")
+    return tabulate(source.image_id, source.design, findings, source.disc)

@@ -27,6 +27,7 @@ from vasohm.flow.monte_carlo import IntervalSettings, ResistanceIntervals, find_
 from vasohm.flow.rheology import BloodSettings
 from vasohm.flow.scenarios import ScenarioOutcomes
 from vasohm.flow.terminals import NetworkSettings, Terminals
+from vasohm.image.disc import OpticDisc
 from vasohm.image.prepare import ImageQuality, PreparedImage, PrepareSettings
 from vasohm.image.segment import SegmentSettings, VesselMask
 from vasohm.network.graph import Crossings, NodeKind, VesselClass, VesselGraph
@@ -40,7 +41,7 @@ from vasohm.results.methods import Methods, MethodsUsed, bibtex, describe_method
 from vasohm.results.overlay import COLOURED, ColourBy, draw_overlay, round_length_um
 from vasohm.results.pages import Study, images_without_resistance, lines_without_resistance, write_study_page
 from vasohm.results.schema import COLUMNS, column_names
-from vasohm.results.tables import DiscPlace, Findings, ImageTables, tabulate
+from vasohm.results.tables import Findings, ImageTables, tabulate
 from vasohm.results.wording import pixel_size_words
 from vasohm.results.write import read_record, record_is_whole, remove_partials, write_image
 from vasohm.results.write_study import (
@@ -292,7 +293,7 @@ def make_blood_settings(law: str) -> BloodSettings:
 
 
 def make_tables(
-    image_id: str = "a", n_segments: int = 3, scenario: str = "Arterioles dilate", disc: DiscPlace | None = None
+    image_id: str = "a", n_segments: int = 3, scenario: str = "Arterioles dilate", disc: OpticDisc | None = None
 ) -> ImageTables:
     return tabulate(image_id, DESIGN, make_findings(n_segments, scenario), disc)
 
@@ -331,7 +332,9 @@ def results(tmp_path_factory: pytest.TempPathFactory) -> Path:
     root = tmp_path_factory.mktemp("results")
     images = root / "images"
     write_image(make_tables("a"), images / "a", {"key": "k1"}, overlay=True)
-    write_image(make_tables("b", disc=DiscPlace(60.0, 50.0, 9.0, "sheet")), images / "b", {"key": "k2"}, overlay=True)
+    write_image(
+        make_tables("b", disc=OpticDisc(60.0, 50.0, 9.0, "sheet", 1.0)), images / "b", {"key": "k2"}, overlay=True
+    )
     write_image(make_tables("e", n_segments=0), images / "e", {"key": "k3"}, overlay=True)
     ids = ("b", "a", "e")  # the order of the sheet
     failures = (Failure("z", "read", "truncated", HOSTILE),)
@@ -355,7 +358,7 @@ def test_tables_have_the_promised_columns_with_and_without_rows() -> None:
             assert (frame["image_id"] == "a").all()
         assert len(tables.image) == 1
         assert len(tables.segments) == n_segments
-    assert list(make_tables(disc=DiscPlace(1, 2, 3, "sheet")).image.columns)[-7:-3] == [
+    assert list(make_tables(disc=OpticDisc(1, 2, 3, "sheet", 1.0)).image.columns)[-7:-3] == [
         "disc_x_px",
         "disc_y_px",
         "disc_radius_px",

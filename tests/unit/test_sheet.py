@@ -14,10 +14,11 @@ from hypothesis import strategies as st
 
 from vasohm.config.csv_table import CellError, Range, parse_number
 from vasohm.config.names import is_one_edit_away
-from vasohm.config.sheet import KNOWN, Disc, ImageSource, Sheet, read_edits, read_sheet, read_terminals
+from vasohm.config.sheet import KNOWN, ImageSource, Sheet, read_edits, read_sheet, read_terminals
 from vasohm.errors import RequestError
 from vasohm.flow.terminals import TerminalPoint
 from vasohm.image.calibrate import TypedScale
+from vasohm.image.disc import OpticDisc
 from vasohm.network.edits import Edit
 from vasohm.results.schema import column_names
 
@@ -58,7 +59,7 @@ def test_every_column_becomes_what_it_means(tmp_path: Path) -> None:
             class_file=tmp_path / "c.png",
             terminals=(TerminalPoint(1.0, 2.0, "inlet", None, None, None),),
             edits=(Edit(1.0, 2.0, "drop", ""),),
-            disc=Disc(10.0, 20.5, 30.0),
+            disc=OpticDisc(10.0, 20.5, 30.0, "sheet", 1.0),
             axial_length_mm=24.1,
             hematocrit=0.45,
             design={"subject": "s1", "eye": "left", "group": "NA", "condition": "rest", "time": "0", "age_years": "61"},

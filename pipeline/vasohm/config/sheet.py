@@ -13,6 +13,7 @@ from vasohm.errors import Problem, RequestError
 from vasohm.flow.rheology import HIGHEST_HEMATOCRIT
 from vasohm.flow.terminals import ROLES, TerminalPoint
 from vasohm.image.calibrate import LEAST_UM, MOST_UM, TypedScale
+from vasohm.image.disc import OpticDisc
 from vasohm.image.read import shown
 from vasohm.network.edits import Edit
 from vasohm.results.schema import image_columns
@@ -51,15 +52,6 @@ MOST_BYTES = 256_000_000  # a million rows of 256 characters
 
 
 @dataclass(frozen=True, slots=True)
-class Disc:
-    """An optic disc told by the sheet, in pixels."""
-
-    x_px: float
-    y_px: float
-    radius_px: float
-
-
-@dataclass(frozen=True, slots=True)
 class ImageSource:
     """One image of the sheet: where its files are and what a person said about it."""
 
@@ -71,7 +63,7 @@ class ImageSource:
     class_file: Path | None
     terminals: tuple[TerminalPoint, ...]
     edits: tuple[Edit, ...]
-    disc: Disc | None
+    disc: OpticDisc | None
     axial_length_mm: float | None
     hematocrit: float | None
     design: Mapping[str, str]  # subject, eye, group, condition, time and carried columns, in the sheet's order
@@ -237,10 +229,10 @@ def _companion(
         return ()
 
 
-def _disc(row: Row, numbers: Mapping[str, float | None], rows: Rows) -> Disc | None:
+def _disc(row: Row, numbers: Mapping[str, float | None], rows: Rows) -> OpticDisc | None:
     x, y, radius = (numbers[name] for name in DISC)
     if x is not None and y is not None and radius is not None:
-        return Disc(x, y, radius)
+        return OpticDisc(x, y, radius, "sheet", 1.0)
     if any(row.cells.get(name, "") for name in DISC):
         for name in DISC:
             if not row.cells.get(name, ""):

@@ -13,6 +13,7 @@ from vasohm.flags import Flag, codes
 from vasohm.flow.hydraulics import NetworkFlow
 from vasohm.flow.monte_carlo import ResistanceIntervals
 from vasohm.flow.scenarios import ScenarioOutcomes
+from vasohm.image.disc import OpticDisc
 from vasohm.image.prepare import PreparedImage
 from vasohm.image.segment import VesselMask
 from vasohm.network.graph import NodeKind, VesselClass
@@ -81,16 +82,6 @@ class ImageTables:
         return self.tables["scenarios"]
 
 
-@dataclass(frozen=True, slots=True)
-class DiscPlace:
-    """Where the optic disc lies, in pixels, and who said so: sheet or image."""
-
-    x_px: float
-    y_px: float
-    radius_px: float
-    source: str
-
-
 @dataclass(frozen=True, slots=True, eq=False)
 class Findings:
     """What the stages found in one image."""
@@ -105,7 +96,7 @@ class Findings:
 
 
 def tabulate(
-    image_id: str, design: Mapping[str, str], findings: Findings, disc: DiscPlace | None = None
+    image_id: str, design: Mapping[str, str], findings: Findings, disc: OpticDisc | None = None
 ) -> ImageTables:
     """Lay out what was found in one image as the tables of the contract.
 

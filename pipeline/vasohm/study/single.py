@@ -7,12 +7,13 @@ from typing import Any
 import numpy as np
 
 from vasohm.arrays import AnyArray
-from vasohm.config.sheet import Disc, ImageSource, read_edits, read_terminals
+from vasohm.config.sheet import ImageSource, read_edits, read_terminals
 from vasohm.config.study_file import Study, read_toml, study_from_mapping
 from vasohm.errors import Problem, RequestError
 from vasohm.flags import Flag
 from vasohm.flow.rheology import HIGHEST_HEMATOCRIT
 from vasohm.image.calibrate import TypedScale
+from vasohm.image.disc import OpticDisc
 from vasohm.image.read import RawImage, read_image
 from vasohm.pipeline import measure_pixels
 from vasohm.results.tables import ImageTables
@@ -124,13 +125,13 @@ def _path(given: str | Path | None) -> Path | None:
     return None if given is None else Path(given)
 
 
-def _disc(x: float | None, y: float | None, radius: float | None) -> Disc | None:
+def _disc(x: float | None, y: float | None, radius: float | None) -> OpticDisc | None:
     if x is None and y is None and radius is None:
         return None
     if x is None or y is None or radius is None:
         problem = "give disc_x_px, disc_y_px and disc_radius_px together, or none of them."
         raise RequestError([Problem("measure_image", problem)])
-    return Disc(x, y, radius)
+    return OpticDisc(x, y, radius, "sheet", 1.0)
 
 
 def _from_array(pixels: AnyArray) -> RawImage:
