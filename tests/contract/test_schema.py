@@ -41,8 +41,8 @@ PROMISED = {
         junction_exponent, flags""",
     "image": """image_id, status, width_px, height_px, pixel_size_um, pixel_size_se_um, pixel_size_source, fov_area_um2,
         vessel_area_um2, vessel_area_fraction, length_um, length_density_per_mm, n_segments, n_branchings, n_ends,
-        n_networks, radius_mean_um, tortuosity_mean, box_dimension, profile, blur_px, noise, contrast, focus_ok,
-        exposure_ok, flags""",
+        n_networks, radius_mean_um, tortuosity_mean, box_dimension, profile, blur_px, noise, contrast,
+        saturated_fraction, invalid_fraction, focus_ok, exposure_ok, flags""",
     "failures": "image_id, stage, error, message",
 }
 

@@ -42,8 +42,22 @@ IMAGE: tuple[Column, ...] = (
     number(
         "contrast", "{signal}", "Typical strength with which the image's vessels stand out, in the units of points.csv."
     ),
-    truth("focus_ok", "The blur is not wider than the thinnest vessels asked for; empty where blur_px is."),
-    truth("exposure_ok", "At most 1 % of the field of view is at the limit of the file's scale, and it is not blank."),
+    number(
+        "saturated_fraction",
+        "1",
+        "Share of the field of view at the limit of the file's scale: at its top, for dark vessels also at its bottom.",
+    ),
+    number("invalid_fraction", "1", "Share of the picture that is not finite or touches what is not."),
+    truth(
+        "focus_ok",
+        "The blur is at most 1.5 px, as in any well sampled sharp picture, or at most the smallest radius asked for: of "
+        "a tube thinner than the blur only radius times contrast is seen, not the radius. Empty where blur_px is.",
+    ),
+    truth(
+        "exposure_ok",
+        "saturated_fraction is at most 0.01, and the picture is not blank. Vessels cover about a tenth of a field, so "
+        "that 1 % may be a tenth of them.",
+    ),
     FLAGS,
 )
 

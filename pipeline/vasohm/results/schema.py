@@ -9,7 +9,7 @@ from vasohm.results.columns_appraisal import APPRAISAL
 from vasohm.results.columns_images import DISC, FAILURES, IMAGE, NETWORKS, SCENARIOS
 from vasohm.results.columns_vessels import BRANCHINGS, CROSSINGS, NODES, POINTS, SEGMENTS
 
-SCHEMA_VERSION = 3  # goes up with every change of a column
+SCHEMA_VERSION = 4  # goes up with every change of a column
 
 COLUMNS: Mapping[str, tuple[Column, ...]] = {
     "image": IMAGE,

@@ -372,6 +372,8 @@ def _image(findings: Findings) -> dict[str, Any]:
         "blur_px": measured.blur_px if tells_blur else np.nan,
         "noise": prepared.quality.noise,
         "contrast": measured.image_contrast,
+        "saturated_fraction": prepared.quality.saturated_fraction,
+        "invalid_fraction": prepared.quality.invalid_fraction,
         "focus_ok": Flag.OUT_OF_FOCUS not in flags if tells_blur else None,
         "exposure_ok": prepared.quality.exposure_ok,
         "flags": codes(np.array([int(flags)]))[0],
