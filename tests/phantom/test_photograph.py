@@ -11,7 +11,15 @@ import vasohm
 PHOTOGRAPH = Path(__file__).parents[2] / "configs" / "demo" / "retina.jpg"
 ON_LARGE_VESSELS = [(801, 420), (1085, 385), (930, 189), (775, 1222), (517, 967), (1000, 1229), (269, 995)]
 BY_EYE_PX = 12  # how well a place on a vessel can be read from a screen
-FOVEA = (706, 700, 48)  # x, y, radius without a vessel
+FOVEA = (
+    711,
+    702,
+    40,
+)  # x, y, radius without a vessel: some 250 um (textbooks, from memory) are 36 px; a twig ends at 48
+TAB = (1215, 180, 25)  # x, y within the tab at the upper right, radius without a vessel
+# x, y on what is no vessel, read by eye: the band inside the disc's rim, pigment at its right, bright bundles of fibres
+# (five places), the border of the field beside the tab
+NO_VESSEL = [(285, 725), (332, 645), (545, 135), (480, 245), (508, 222), (365, 495), (427, 1058), (1098, 142)]
 FIELD = (706, 706)  # centre of the round field
 LARGEST_RADIUS_UM = 100.0  # retinal trunks are up to about 90 um in radius (discs of 1.8 mm, from memory)
 
@@ -42,6 +50,14 @@ def test_fovea_and_field_border_are_no_vessels(measured):
     # a vessel that leaves the field passes its last 6 px in about as many points; the border itself would be hundreds
     assert along_border.max() < 40
     assert len(starts) > 100
+
+
+def test_disc_rim_nerve_fibres_and_tab_are_no_vessels(measured):
+    """Wrong if edges, bright bundles of fibres or the shade at the border passed for vessels."""
+    tree = cKDTree(measured.points[["x_px", "y_px"]].to_numpy())
+    distance, _ = tree.query(NO_VESSEL)
+    assert tree.query(TAB[:2])[0] > TAB[2]
+    assert (distance > BY_EYE_PX).all(), np.array(NO_VESSEL)[distance <= BY_EYE_PX]
 
 
 def test_widths_are_those_of_a_retina(measured):

@@ -34,11 +34,8 @@ def noise_against_brightness(
         return max(floor, _least_variance(brightness)), 0.0
     residual = np.abs(ndimage.convolve(brightness, LAPLACIAN_DIFFERENCE.astype(np.float32), mode="nearest"))
     residual, level = residual[inside] / GAIN, smooth[inside]
-    edges = np.quantile(level, np.linspace(0, 1, BRIGHTNESS_BINS + 1))
-    which = np.clip(np.searchsorted(edges, level, side="right") - 1, 0, BRIGHTNESS_BINS - 1)
-    order = np.argsort(which, kind="stable")
-    groups = np.split(order, np.searchsorted(which[order], np.arange(1, BRIGHTNESS_BINS)))
-    groups = [group for group in groups if len(group) >= LEAST_IN_BIN]
+    order = np.argsort(level, kind="stable")
+    groups = np.array_split(order, min(BRIGHTNESS_BINS, len(order) // LEAST_IN_BIN))
     variance = np.array([(np.median(residual[group]) * MAD_TO_SD) ** 2 for group in groups])
     mean = np.array([np.median(level[group]) for group in groups])
     base, slope = _line(mean, variance)

@@ -63,11 +63,12 @@ class PreparedImage:
 
 LUMINANCE = (0.299, 0.587, 0.114)  # ITU-R BT.601, the weights of JPEG
 CHANNELS = {"red": 0, "green": 1, "blue": 2}
+SMALLEST, GREATEST = 1e-9, 1e15  # of the greatest intensity: squares and their inverses stay within single precision
 INVALID_MARGIN_PX = 2  # a pixel beside one that is not finite has been touched by it
 BACKGROUND_RADII = 3.0  # the background is smoothed over this many times the largest vessel radius
 BACKGROUND_LEAST_PX = 16.0
 BACKGROUND_GRID = 4  # the background is smooth: computed on blocks of this edge
-SATURATED_LIMIT = 0.01
+SATURATED_LIMIT = 0.01  # of the field; vessels cover about a tenth of it, so that this may be a tenth of them
 BLANK_SPREAD = 1e-9  # relative spread below which all pixels are one value
 
 
@@ -101,6 +102,12 @@ def prepare(scaled: ScaledImage, settings: PrepareSettings, fov: BoolArray | Non
         raise ImageError(msg)
     sigma = max(BACKGROUND_LEAST_PX, BACKGROUND_RADII * settings.radius_um[1] / scaled.pixel_size_um)
     background = _background(brightness, valid, sigma, dark=dark)
+    if dark and float(np.median(brightness[valid])) < 0:
+        msg = (
+            f"the median of the picture is {float(np.median(brightness[valid])):g}: dark vessels are measured as the "
+            "share of light they take away, and light is not negative. Give the picture without an offset taken off."
+        )
+        raise ImageError(msg)
     signal = 1 - brightness / background if dark else brightness - background
     smooth = ndimage.gaussian_filter(brightness, 1.5, mode="nearest")
     step = 1.0 if raw.white_level is not None else 0.0
@@ -141,6 +148,10 @@ def prepare(scaled: ScaledImage, settings: PrepareSettings, fov: BoolArray | Non
 def _brightness(raw: RawImage, settings: PrepareSettings) -> tuple[Float32Array, BoolArray]:
     """Return one channel, linear in light, finite everywhere, and where it was not."""
     pixels = raw.pixels
+    greatest = float(np.max(np.abs(pixels), where=np.isfinite(pixels), initial=0))
+    if greatest and not SMALLEST <= greatest <= GREATEST:
+        msg = f"the greatest intensity is {greatest:g}, outside {SMALLEST:g} to {GREATEST:g}. Rescale the picture."
+        raise ImageError(msg)
     if pixels.ndim == 2:
         channel = pixels.astype(np.float32)
     elif settings.channel == "luminance":

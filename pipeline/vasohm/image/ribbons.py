@@ -4,7 +4,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy import ndimage, sparse
-from scipy.spatial import cKDTree
 
 from vasohm.arrays import BoolArray, Float32Array, FloatArray, IntArray, freeze
 from vasohm.image.ridges import RidgePixels
@@ -28,15 +27,18 @@ TAIL_SHARE = (
 TAIL_SIGMAS = 6.0  # the elongated kernels, 3 sigma wide along, cast lobes this far
 BRIDGE_STEPS = 8  # pixels of a line whose shape a crossing or branching spoils are kept between good ones
 BORDER_PX = 12  # and so they are on the way to the border of the field, where one flank is only a mirror image
-NEIGHBOUR_PX = 1.5  # ridge pixels of one line are no further apart
+MOST_SHIFT = 0.5  # of the half width, from the ridge of the filter's answer to the middle between the edges
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Ribbon:
-    """Half width at half height on the averaged profile of each ridge pixel, and what that profile looks like."""
+    """Middle and half width at half height on the averaged profile of each ridge pixel, and what it looks like."""
 
+    x_px: FloatArray  # half way between both edges
+    y_px: FloatArray
     half_width_px: FloatArray
     contrast: FloatArray  # of the weaker side, in units of the picture
+    balance: FloatArray  # weaker side over stronger
     is_shaped: BoolArray  # two-sided and not hollow
     is_clear: BoolArray  # above the noise, or not small beside what is near
 
@@ -44,26 +46,26 @@ class Ribbon:
         freeze(self)
 
 
-def measure_ribbons(image: Float32Array, lines: RidgePixels, reach_px: FloatArray) -> Ribbon:
+def measure_ribbons(image: Float32Array, lines: RidgePixels, pairs: IntArray, reach_px: FloatArray) -> Ribbon:
     """Measure each ridge pixel on cross-profiles averaged along its line.
 
     Parameters
     ----------
     image : (h, w) the picture in which the lines were found, on the same grid, in units of its noise.
     lines : ridge pixels.
+    pairs : (n_pairs, 2) those that touch.
     reach_px : how far each profile looks to either side, in pixels of this grid.
     """
     n = len(lines.row)
     if n == 0:
-        nothing = np.zeros(0)
-        return Ribbon(nothing, nothing, np.zeros(0, dtype=bool), np.zeros(0, dtype=bool))
+        nothing, none = np.zeros(0), np.zeros(0, dtype=bool)
+        return Ribbon(nothing, nothing, nothing, nothing, nothing, none, none)
     half = int(np.ceil(reach_px.max()))
-    sides_here, sides = _averaged_sides(image, lines, half)
-    offsets = np.arange(half + 1)
+    sides_here, sides = _averaged_sides(image, lines, pairs, half)
+    offsets = np.arange(half + 1, dtype=np.float32)
     visible = offsets[None, :] <= np.maximum(np.tile(reach_px, 2), 3)[:, None]
-    masked = np.where(visible, sides, np.inf)
-    lowest_at = masked.argmin(axis=1)
-    base = masked[np.arange(2 * n), lowest_at]
+    lowest_at = np.where(visible, sides, np.inf).argmin(axis=1)
+    base = sides[np.arange(2 * n), lowest_at]
     core = np.maximum(1, np.tile(lines.sigma_px, 2) * 0.75)[:, None]
     inner = np.where(offsets[None, :] <= core, sides, -np.inf).max(axis=1)
     peak = np.tile(np.maximum(inner[:n], inner[n:]), 2)
@@ -73,26 +75,23 @@ def measure_ribbons(image: Float32Array, lines: RidgePixels, reach_px: FloatArra
         sign * _half_width(sides, lowest_at, base + share * (peak - base)).reshape(2, n).sum(axis=0) / 2
         for sign, share in ((1, 0.25), (-1, 0.75))
     )
-    narrow = np.minimum(left, right)
-    half_width = np.minimum((left + right) / 2, HALF_WIDTH_RATIO * narrow + 0.5)
+    half_width = np.minimum((left + right) / 2, HALF_WIDTH_RATIO * np.minimum(left, right) + 0.5)
     height = (peak - base).reshape(2, n)
     weaker, stronger = height.min(axis=0), height.max(axis=0)
+    balance = weaker / np.maximum(stronger, 1e-12)
     hollow = (peak[:n] - middle) / np.maximum(stronger, 1e-12)
     inside = offsets[None, :] <= np.tile(half_width, 2)[:, None]
     fill = np.where(inside, sides - base[:, None], 0).sum(axis=1) / inside.sum(axis=1) / np.maximum(peak - base, 1e-12)
     shaped = fill.reshape(2, n).min(axis=0) >= LEAST_FILL
-    shaped &= (weaker >= WEAKER_SIDE * stronger) & (hollow <= HOLLOW) & (rise <= SOFT_RISE * half_width + RISE_PX)
+    shaped &= (balance >= WEAKER_SIDE) & (hollow <= HOLLOW) & (rise <= SOFT_RISE * half_width + RISE_PX)
     clear = (
-        ~_in_gap(lines, sides_here, base, n)
+        ~_in_gap(sides_here, base, pairs, n)
         & (weaker > 0)
         & ((weaker >= CLEAR_CONTRAST) | (weaker >= TAIL_SHARE * _strongest_near(image.shape, lines, weaker)))
     )
-    return Ribbon(np.maximum(half_width, LEAST_HALF_WIDTH_PX), weaker, shaped, clear)
-
-
-def _pairs(lines: RidgePixels) -> IntArray:
-    """Neighbouring ridge pixels (n_pairs, 2)."""
-    return cKDTree(np.column_stack((lines.row, lines.column))).query_pairs(NEIGHBOUR_PX, output_type="ndarray")
+    shift = np.clip((left - right) / 2, -MOST_SHIFT * half_width, MOST_SHIFT * half_width)
+    x, y = lines.x_px + shift * lines.normal_x, lines.y_px + shift * lines.normal_y
+    return Ribbon(x, y, np.maximum(half_width, LEAST_HALF_WIDTH_PX), weaker, balance, shaped, clear)
 
 
 def _strongest_near(shape: tuple[int, ...], lines: RidgePixels, contrast: FloatArray) -> FloatArray:
@@ -107,14 +106,13 @@ def _strongest_near(shape: tuple[int, ...], lines: RidgePixels, contrast: FloatA
     return strongest
 
 
-def _in_gap(lines: RidgePixels, sides: FloatArray, base: FloatArray, n: int) -> BoolArray:
+def _in_gap(sides: Float32Array, base: FloatArray, pairs: IntArray, n: int) -> BoolArray:
     """Pixels where a line has next to no height of its own, but has it on both sides along the line.
 
     An elongated filter joins two vessels that end near each other. Height is held against its closing along the line
     (the smaller of what is reached on either side), so that a thin branch beside a thick vessel is no gap.
     """
     height = (sides[:, : GAP_CORE_PX + 1].mean(axis=1) - base).reshape(2, n).mean(axis=0)
-    pairs = _pairs(lines)
     closed = height.copy()
     for reach in (np.maximum, np.minimum):
         for _ in range(GAP_STEPS):
@@ -125,7 +123,7 @@ def _in_gap(lines: RidgePixels, sides: FloatArray, base: FloatArray, n: int) -> 
 
 
 def bridge(
-    lines: RidgePixels, good: BoolArray, half_width_px: FloatArray, near_border: BoolArray, clear: BoolArray
+    pairs: IntArray, good: BoolArray, half_width_px: FloatArray, near_border: BoolArray, clear: BoolArray
 ) -> tuple[BoolArray, FloatArray]:
     """Keep clear pixels between good ones of the same line, and from a good one to the border of the field.
 
@@ -133,7 +131,6 @@ def bridge(
     -------
     The larger choice, and half widths in which the added pixels take those of their good neighbours.
     """
-    pairs = _pairs(lines)
     links = np.concatenate((pairs, pairs[:, ::-1]))
     reached, width = good.copy(), np.where(good, half_width_px, 0.0)
     for _ in range(max(BRIDGE_STEPS, BORDER_PX)):
@@ -150,7 +147,9 @@ def bridge(
     return good | lost | (reached & near_border), width
 
 
-def _averaged_sides(image: Float32Array, lines: RidgePixels, half: int) -> tuple[FloatArray, FloatArray]:
+def _averaged_sides(
+    image: Float32Array, lines: RidgePixels, pairs: IntArray, half: int
+) -> tuple[Float32Array, Float32Array]:
     """Profiles (2 n, half + 1) outwards from the ridge, averaged a little and much.
 
     First come all on the normal's side, then all on the other. Neighbours along a line are averaged side by side:
@@ -161,15 +160,14 @@ def _averaged_sides(image: Float32Array, lines: RidgePixels, half: int) -> tuple
     direction = np.repeat([1.0, -1.0], n)[:, None] * out[None, :]
     x = np.tile(lines.x_px, 2)[:, None] + direction * np.tile(lines.normal_x, 2)[:, None]
     y = np.tile(lines.y_px, 2)[:, None] + direction * np.tile(lines.normal_y, 2)[:, None]
-    sides = ndimage.map_coordinates(image, [y, x], order=1, mode="mirror", output=np.float64)
-    pairs = _pairs(lines)
+    sides = ndimage.map_coordinates(image, [y, x], order=1, mode="mirror", output=np.float32)
     i, j = pairs[:, 0], pairs[:, 1]
     same = lines.normal_x[i] * lines.normal_x[j] + lines.normal_y[i] * lines.normal_y[j] >= 0
     first = np.concatenate((i, i + n))
     second = np.concatenate((np.where(same, j, j + n), np.where(same, j + n, j)))
-    links = sparse.coo_array((np.ones(len(first)), (first, second)), shape=(2 * n, 2 * n)).tocsr()
-    links = links + links.T + sparse.eye_array(2 * n, format="csr")
-    links = sparse.diags_array(1 / links.sum(axis=1)) @ links
+    links = sparse.coo_array((np.ones(len(first), np.float32), (first, second)), shape=(2 * n, 2 * n)).tocsr()
+    links = links + links.T + sparse.eye_array(2 * n, format="csr", dtype=np.float32)
+    links = sparse.diags_array((1 / links.sum(axis=1)).astype(np.float32)) @ links
     for _ in range(GAP_PASSES):
         sides = links @ sides
     here = sides

@@ -1,18 +1,18 @@
 """Ridge lines of a bank's response, kept by their summed excess over the noise."""
 
+from collections.abc import Sequence
 from dataclasses import dataclass
-from itertools import pairwise
 
 import numpy as np
-from scipy import ndimage
+from scipy import sparse
 
 from vasohm.arrays import AnyArray, BoolArray, Float32Array, FloatArray, IntArray, freeze
 from vasohm.image.bank import N_ANGLES, ScaleResponse
 
 RIDGE_STEP_PX = 0.55  # a ridge passes through a pixel if the Newton step to it is no longer than this
-LOW_THRESHOLD = 4.1  # in noise units: where a line may begin and end
+LOW_THRESHOLD = 3.8  # in noise units: where a line may begin and end
+JOIN_THRESHOLD = 3.2  # in noise units: weaker places break a line
 CLEAR_SHARE, CLEARLY_SEEN = 0.6, 12.0  # of the strongest scale, and in noise units: enough to speak on width
-EIGHT = np.ones((3, 3), dtype=int)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -45,89 +45,146 @@ class RidgePixels:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Strength:
-    """Merged response of a group of scales on one grid (that of `level`)."""
+    """Merged response of a group of scales on one grid (that of `level`), and the scales it came from."""
 
     level: int
     bright: Float32Array
     dark: Float32Array
-    angle: AnyArray
-    sigma_px: Float32Array
+    scales: tuple[ScaleResponse, ...]
 
     def __post_init__(self) -> None:
         freeze(self)
 
 
-def merge_scales(responses: list[ScaleResponse]) -> Strength:
+def merge_scales(responses: Sequence[ScaleResponse]) -> Strength:
     """Merge by adjacent pairs of scales, on the finest level among them.
 
     A pair's mean suppresses what answers at one scale only (speckle); the factor sigma^-1/4 lets a thin line stand
-    beside a wide one. Width and angle are those of the scale with the greatest contrast among those that stand well
-    above their noise: noise falls with scale, so that the clearest answer to a strong thin vessel is too wide.
+    beside a wide one.
     """
     level = min(response.level for response in responses)
     shape = next(response.bright.shape for response in responses if response.level == level)
-    bright = [_to_grid(r.bright, shape, 1) for r in responses]
-    weight = [np.float32((r.sigma_px / responses[0].sigma_px) ** -0.25) for r in responses]
-    best, flipped = weight[0] * bright[0], weight[0] * _to_grid(responses[0].dark, shape, 1)
-    if len(responses) > 1:
-        dark = [w * _to_grid(r.dark, shape, 1) for w, r in zip(weight, responses, strict=True)]
-        weighted = [w * z for w, z in zip(weight, bright, strict=True)]
-        best = np.max([a + b for a, b in pairwise(weighted)], axis=0) / 2
-        flipped = np.max([a + b for a, b in pairwise(dark)], axis=0) / 2
-    clear = np.minimum(CLEAR_SHARE * np.max(bright, axis=0), CLEARLY_SEEN)
-    contrast = np.full(shape, -np.inf, np.float32)
-    angle, sigma = np.zeros(shape, np.uint8), np.zeros(shape, np.float32)
-    for response, strength in zip(responses, bright, strict=True):
-        height = np.where(strength >= clear, strength * _to_grid(response.unit, shape, 1), -np.inf)
-        higher = height > contrast
-        contrast = np.where(higher, height, contrast)
-        angle = np.where(higher, _to_grid(response.angle, shape, 0), angle)
-        sigma = np.where(higher, np.float32(response.sigma_px), sigma)
-    return Strength(level, best, flipped, angle, sigma)
+    weights = [np.float32((r.sigma_px / responses[0].sigma_px) ** -0.25) for r in responses]
+    sides = []
+    for side in ("bright", "dark"):
+        finer = weights[0] * _to_grid(getattr(responses[0], side), shape)
+        best = finer.copy() if len(responses) == 1 else np.full(shape, -np.inf, np.float32)
+        for response, weight in zip(responses[1:], weights[1:], strict=True):
+            wider = weight * _to_grid(getattr(response, side), shape)
+            finer += wider
+            finer *= np.float32(0.5)
+            np.maximum(best, finer, out=best)
+            finer = wider
+        sides.append(best)
+    return Strength(level, sides[0], sides[1], tuple(responses))
 
 
-def _to_grid(values: AnyArray, shape: tuple[int, int], order: int) -> AnyArray:
+def _to_grid(values: Float32Array, shape: tuple[int, ...]) -> Float32Array:
     """Upsample a level to a finer grid; pixel k of a level sits on pixel 2k of the one below."""
-    if values.shape == shape:
-        return values
-    factor = round(shape[0] / values.shape[0])
-    if order == 0:
-        half = factor // 2
-        rows = np.minimum((np.arange(shape[0]) + half) // factor, values.shape[0] - 1)
-        columns = np.minimum((np.arange(shape[1]) + half) // factor, values.shape[1] - 1)
-        return values[np.ix_(rows, columns)]
-    for axis in (0, 1):
-        position = np.arange(shape[axis]) / factor
-        low = np.minimum(position.astype(np.int64), values.shape[axis] - 1)
-        high = np.minimum(low + 1, values.shape[axis] - 1)
-        share = (position - low).astype(np.float32)
-        share = share[:, None] if axis == 0 else share[None, :]
-        values = np.take(values, low, axis) * (1 - share) + np.take(values, high, axis) * share
+    while values.shape != shape:
+        factor = round(shape[0] / values.shape[0])
+        finer = tuple(-(-n // (factor // 2)) for n in shape)
+        for axis in (0, 1):
+            values = _doubled(values, finer[axis], axis)
     return values
 
 
+def _doubled(values: Float32Array, n: int, axis: int) -> Float32Array:
+    """Twice as many samples along one axis, the new ones half way between the old."""
+    values = np.moveaxis(values, axis, 0)
+    finer = np.empty((n, *values.shape[1:]), np.float32)
+    finer[::2] = values
+    between = finer[1::2]
+    between[: len(values) - 1] = values[:-1]
+    between[: len(values) - 1] += values[1:]
+    between[: len(values) - 1] *= np.float32(0.5)
+    between[len(values) - 1 :] = values[-1]
+    return np.moveaxis(finer, 0, axis)
+
+
+def _scale_and_angle(found: Strength, row: IntArray, column: IntArray) -> tuple[FloatArray, AnyArray]:
+    """Width and angle at some pixels: of the scale with the greatest contrast of those well above their noise.
+
+    Noise falls with scale, so that the clearest answer to a strong thin vessel is too wide.
+    """
+    strength, contrast, angle = [], [], []
+    for response in found.scales:
+        factor = 2 ** (response.level - found.level)
+        near_row = np.minimum((row + factor // 2) // factor, response.bright.shape[0] - 1)
+        near_column = np.minimum((column + factor // 2) // factor, response.bright.shape[1] - 1)
+        strength.append(response.bright[near_row, near_column])
+        contrast.append(strength[-1] * response.unit[near_row, near_column])
+        angle.append(response.angle[near_row, near_column])
+    clear = np.minimum(CLEAR_SHARE * np.max(strength, axis=0), CLEARLY_SEEN)
+    best = np.argmax(np.where(np.array(strength) >= clear, contrast, -np.inf), axis=0)
+    sigma = np.array([response.sigma_px for response in found.scales])
+    return sigma[best], np.take_along_axis(np.array(angle), best[None], 0)[0]
+
+
 def ridge_lines(strength: Float32Array, found: Strength, where: BoolArray) -> RidgePixels:
-    """Trace the ridges of `strength` (bright or dark side of `found`) above the low threshold inside `where`."""
+    """Trace the ridges of `strength` (bright or dark side of `found`) above the low threshold inside `where`.
+
+    Lines are joined over weak places where both gain more than the join costs them.
+    """
     padded = np.pad(strength, 2, mode="edge")
-    row, column = np.nonzero((strength > LOW_THRESHOLD) & where)
-    theta = np.pi / N_ANGLES * found.angle[row, column]
-    normal_x, normal_y = -np.sin(theta), np.cos(theta)
+    row, column = np.nonzero((strength > JOIN_THRESHOLD) & where)
+    sigma, angle = _scale_and_angle(found, row, column)
+    normal_x, normal_y = -np.sin(np.pi / N_ANGLES * angle), np.cos(np.pi / N_ANGLES * angle)
     centre = padded[row + 2, column + 2].astype(np.float64)
     ahead = _at(padded, row + 2 + normal_y, column + 2 + normal_x)
     behind = _at(padded, row + 2 - normal_y, column + 2 - normal_x)
     bend = ahead - 2 * centre + behind
     step = np.where(bend < 0, -(ahead - behind) / (2 * np.where(bend < 0, bend, -1)), np.inf)
     on_ridge = np.abs(step) <= RIDGE_STEP_PX
-    row, column, step = row[on_ridge], column[on_ridge], step[on_ridge]
-    normal_x, normal_y, centre = normal_x[on_ridge], normal_y[on_ridge], centre[on_ridge]
-    grid = np.zeros(strength.shape, dtype=bool)
-    grid[row, column] = True
-    labels, n_lines = ndimage.label(grid, structure=EIGHT)
-    return RidgePixels(
-        row.astype(np.int64), column.astype(np.int64), column + step * normal_x, row + step * normal_y,
-        normal_x, normal_y, found.sigma_px[row, column].astype(np.float64), centre - LOW_THRESHOLD,
-        labels[row, column].astype(np.int64) - 1, int(n_lines),
+    row, column, step = row[on_ridge].astype(np.int64), column[on_ridge].astype(np.int64), step[on_ridge]
+    normal_x, normal_y = normal_x[on_ridge], normal_y[on_ridge]
+    excess = centre[on_ridge] - LOW_THRESHOLD
+    line = _joined(neighbours(strength.shape, row, column), excess)
+    lines = RidgePixels(
+        row, column, column + step * normal_x, row + step * normal_y, normal_x, normal_y, sigma[on_ridge], excess,
+        line, int(line.max(initial=-1)) + 1,
     )  # fmt: skip
+    return lines.keep(line >= 0)
+
+
+def _joined(pairs: IntArray, excess: FloatArray) -> IntArray:
+    """Number of the line that each ridge pixel belongs to, -1 for weak pixels that join nothing.
+
+    Strong pixels that touch are a line. Weak ones that touch are a bridge; it costs what its pixels lack. Lines are
+    joined over it whose summed excess is more than that cost, if there are two.
+    """
+    strong = excess > 0
+    same = strong[pairs[:, 0]] == strong[pairs[:, 1]]
+    n_pieces, piece = connected(pairs[same], len(excess))
+    total = np.bincount(piece, weights=excess, minlength=n_pieces)
+    is_line = np.bincount(piece, weights=strong, minlength=n_pieces) > 0
+    ends = pairs[~same]
+    ends = np.where(strong[ends[:, :1]], ends, ends[:, ::-1])
+    touching = np.unique(piece[ends], axis=0).reshape(-1, 2)  # (line, bridge)
+    worth = total[touching[:, 0]] + total[touching[:, 1]] > 0
+    useful = np.bincount(touching[worth, 1], minlength=n_pieces) > 1
+    worth &= useful[touching[:, 1]]
+    _, line = connected(touching[worth], n_pieces)
+    return np.where(is_line | useful, line, -1)[piece]
+
+
+def connected(pairs: IntArray, n: int) -> tuple[int, IntArray]:
+    """How many pieces n pixels fall into, and the number of each pixel's."""
+    graph = sparse.coo_array((np.ones(len(pairs), dtype=bool), (pairs[:, 0], pairs[:, 1])), shape=(n, n))
+    count, label = sparse.csgraph.connected_components(graph, directed=False)
+    return int(count), label.astype(np.int64)
+
+
+def neighbours(shape: tuple[int, ...], row: IntArray, column: IntArray) -> IntArray:
+    """Pairs of chosen pixels that touch, (n_pairs, 2)."""
+    number = np.full((shape[0] + 2, shape[1] + 2), -1, dtype=np.int32)
+    here = np.arange(len(row))
+    number[row + 1, column + 1] = here
+    pairs = []
+    for down, right in ((0, 1), (1, -1), (1, 0), (1, 1)):
+        other = number[row + 1 + down, column + 1 + right]
+        pairs.append(np.column_stack((here[other >= 0], other[other >= 0])))
+    return np.concatenate(pairs).astype(np.int64)
 
 
 def _at(padded: Float32Array, y: FloatArray, x: FloatArray) -> FloatArray:

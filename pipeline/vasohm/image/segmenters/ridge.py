@@ -5,42 +5,64 @@ Imaging 1989;8:263, doi:10.1109/42.34715) on a pyramid; lines kept by summed exc
 taken on its own averaged cross-profile.
 """
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 
 import numpy as np
 from scipy import ndimage
 
-from vasohm.arrays import BoolArray, Float32Array
+from vasohm.arrays import BoolArray, Float32Array, FloatArray, IntArray, freeze
 from vasohm.image import bank
+from vasohm.image.bank import ScaleResponse
 from vasohm.image.prepare import PreparedImage
 from vasohm.image.ribbons import BORDER_PX, bridge, measure_ribbons, paint
-from vasohm.image.ridges import RidgePixels, Strength, merge_scales, ridge_lines, summed_excess
+from vasohm.image.ridges import RidgePixels, Strength, connected, merge_scales, neighbours, ridge_lines, summed_excess
 
 CITATION = "Chaudhuri S et al., IEEE Trans Med Imaging 1989;8:263-269, doi:10.1109/42.34715 (oriented matched filters)"
 
 WIDE_SIGMA_PX = 4.0  # scales from here on are searched first, on a coarser grid
-# Summed excess that white noise reaches over a given length a megapixel, measured on noise pictures of 1 MP blurred by
-# 0 to 2 px: excess = slope x ln(reference / length), within 30 % of the excess
-EXCESS_SLOPE = 4.3
-EXCESS_REFERENCE_PX = 5000.0
+# Summed excess that noise alone exceeds over `length` px of line a megapixel: slope x ln(reference / length), of
+# the fine scales at full resolution and of the wide ones at half; read from noise pictures put through this bank
+# (white, blurred by 0.6 to 2 px, JPEG, speckle, Poisson). The references are six to nine times those read, because both
+# groups give and because the kinds of noise differ: the promised length is then an upper bound
+FINE_EXCESS = (6.4, 100000.0)
+WIDE_EXCESS = (11.4, 25000.0)
+SMOOTH_POWER = (
+    0.8  # of the noise at the second scale over that at the first, where it is above 1: smooth noise forms longer lines
+)
 LEAST_EXCESS = 2.0
 TEXTURE_SHARE = 0.04  # of the found length that the flipped picture may give before thresholds rise
 TEXTURE_STEPS = (1.0, 1.25, 1.5, 1.75, 2.0, 2.5, 3.0)
 SPARSE_SHARE = 0.5  # of the field must be away from vessels for the flipped picture to tell anything
 AWAY_PX = 9
 LEAST_PIECE_PX = 8  # ridge pixels left of a line after its checks
-LEAST_ALONE_PX = 20  # extent of a piece that touches no other: shorter ones are specks of texture
+LEAST_ALONE_PX = 20  # extent of a piece that touches no other: shorter ones are specks; where there is texture, longer
 HOLE_PX = 12  # smaller holes in the mask are artefacts of thick junctions
 BUNDLE_SIGMAS = 0.8  # a wide filter whose line is much narrower than itself has answered to a bundle of thin vessels
 BLOB_SIGMAS = (
     2.2  # side lines lie at 1.8 sigma: what is wider than that has no sides there, it is a dark or bright field
 )
-CAP_SIGMAS = 1.6
+CAP_SIGMAS = 2.0
+PAINT_ROUND = 1.08  # half way between a slab, 1, and a projected cylinder, 2 / sqrt(3) of its width at half height
+PAINT_BLUR2 = 1.1  # level px squared: what usual optics and the smoothing of the profiles add to a half width
+PAINT_LEAST = 0.7  # of the measured width: below the blur no difference of squares can be trusted
+CLEAR_FINE = 6.0  # noise units: from here on a fine scale's answer is no noise
+NEAR_SIGMAS = 1.0
+FINER_RATIO = 1.0
+BLUR_HALF_WIDTHS = 1.1  # level px: half width at half height of the blur in a level, its own and the one added
 SURE_SIGMA_PX = 2.8  # below it neighbouring scales answer so alike that the stronger says little about width
 WIDEST_RATIO = 1.25  # half widths beyond this multiple of the largest radius asked for are not vessels
 NARROWEST_RATIO = (
     0.6  # and below this share of the smallest: half-height widths of projected tubes are 0.87 of the lumen's
 )
+RIM_SHARE, LEAST_AT_RIM_PX = 0.5, 50  # a piece that lies more than so much at the border of the field must be so long
+ROOMY_BORDERS = 10  # in smaller pictures everything is near the border
+WIDE_BALANCE = 0.7  # weaker side over stronger of a wide vessel: beside it the background is the same on both sides
+LEAST_SHAPED = 0.38  # of the length of a piece: where less looks like a vessel, the rest was filled in between specks
+WIDE_CONTRAST, WIDE_CONTRAST_POWER = (
+    0.4,
+    0.5,
+)  # of the thin vessels' median, and how it grows with width (a projected tube's: 1)
 LEAST_LENGTH_RADII = 4.0  # a vessel is longer than it is wide
 REACH_SIGMAS = 3.0
 REACH_EXTRA_PX = 3.0
@@ -60,37 +82,116 @@ def segment_ridges(prepared: PreparedImage, parameters: Mapping[str, float]) -> 
     (h, w) bool mask.
     """
     even = prepared.signal / np.maximum(prepared.noise_sd, np.float32(1e-30))
-    levels = bank.levels_for(parameters["radius_hi_px"], even.shape)
-    stack = bank.pyramid(even, levels)
+    stack = bank.pyramid(even, bank.levels_for(parameters["radius_hi_px"], even.shape))
     responses = list(bank.respond(stack))
-    limit = LEAST_EXCESS
-    if parameters["false_alarms_per_mpx"] > 0:
-        limit = max(limit, EXCESS_SLOPE * np.log(EXCESS_REFERENCE_PX / parameters["false_alarms_per_mpx"]))
-    fine = merge_scales([r for r in responses if r.sigma_px <= WIDE_SIGMA_PX])
+    false_px = parameters["false_alarms_per_mpx"]
+    smooth = max(1.0, float(np.median(responses[1].unit) / np.median(responses[0].unit))) ** SMOOTH_POWER
     widths = (NARROWEST_RATIO * parameters["radius_lo_px"], WIDEST_RATIO * parameters["radius_hi_px"])
-    border = ndimage.distance_transform_edt(np.pad(prepared.fov, 1))[1:-1, 1:-1].astype(np.float32)
-    mask = np.zeros(even.shape, dtype=bool)
+    field = Field.of(prepared.fov)
+    fine = [r for r in responses if r.sigma_px <= WIDE_SIGMA_PX]
     wide = [r for r in responses if r.sigma_px >= WIDE_SIGMA_PX]
+    limits = (smooth * _least_excess(FINE_EXCESS, false_px), *widths)
+    thin_vessels = _find_group(merge_scales(fine), stack, field, limits, None)
+    mask = _painted(even.shape, thin_vessels)
     if len(wide) > 1:
-        mask |= _paint_group(merge_scales(wide), stack, border, (limit, *widths))
-    mask |= _paint_group(fine, stack, border, (limit, *widths))
+        found = merge_scales(wide)
+        seen = Seen(_fine_contrast(fine, found), thin_vessels)
+        mask |= _painted(
+            even.shape, _find_group(found, stack, field, (_least_excess(WIDE_EXCESS, false_px), *widths), seen)
+        )
     mask &= prepared.fov
     mask = ndimage.binary_closing(mask, structure=np.ones((3, 3), dtype=bool)) & prepared.fov
-    return _without_small(mask)
+    return _without_small(mask, LEAST_ALONE_PX * thin_vessels.texture)
 
 
-def _texture_factor(found: Strength, fov: BoolArray, limit: float) -> float:
+@dataclass(frozen=True, slots=True, eq=False)
+class Field:
+    """Where vessels may be, and what is near its border; all (h, w) bool."""
+
+    inside: BoolArray
+    near_border: BoolArray  # of the field or of the picture: one flank is only a mirror image
+    short_is_shade: BoolArray  # near the border, where that is a small part of the picture
+
+    def __post_init__(self) -> None:
+        freeze(self)
+
+    @classmethod
+    def of(cls, fov: BoolArray) -> "Field":
+        """Find what is within BORDER_PX of the border."""
+        near = ~ndimage.minimum_filter(fov, size=2 * BORDER_PX + 1, mode="constant", cval=0)
+        return cls(fov, near, near if min(fov.shape) > ROOMY_BORDERS * BORDER_PX else np.zeros_like(near))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Vessels:
+    """What a group of scales has found: places along vessels, in pixels of the picture."""
+
+    x_px: FloatArray
+    y_px: FloatArray
+    radius_px: FloatArray
+    contrast: FloatArray  # of the weaker side, in noise units
+    texture: float  # how many times more was asked of a line because of the texture between the vessels
+
+    def __post_init__(self) -> None:
+        freeze(self)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Seen:
+    """What the fine scales know when the wide ones are searched."""
+
+    contrast: Float32Array  # greatest of fine scales, on the wide group's grid
+    vessels: Vessels
+
+
+def _least_excess(noise: tuple[float, float], false_px: float) -> float:
+    slope, reference = noise
+    return max(LEAST_EXCESS, slope * float(np.log(reference / false_px))) if false_px > 0 else np.inf
+
+
+def _fine_contrast(fine: Sequence[ScaleResponse], wide: Strength) -> Float32Array:
+    """Greatest clear contrast that fine scales see in each pixel of the wide group's grid."""
+    factor = 2**wide.level
+    shape = wide.bright.shape
+    greatest = np.zeros(shape, np.float32)
+    for response in fine:
+        if response.level < wide.level:
+            contrast = np.where(response.bright >= CLEAR_FINE, response.bright * response.unit, 0)
+            step = factor // 2**response.level
+            size = [(-n % step) for n in contrast.shape]
+            blocks = np.pad(contrast, [(0, size[0]), (0, size[1])])
+            blocks = blocks.reshape(blocks.shape[0] // step, step, blocks.shape[1] // step, step).max(axis=(1, 3))
+            np.maximum(greatest, blocks[: shape[0], : shape[1]], out=greatest)
+    return greatest
+
+
+def _seen_finer(lines: RidgePixels, found: Strength, fine: Float32Array) -> BoolArray:
+    """Pixels of wide lines beside which a finer scale sees more contrast: thin vessels that a wide filter blurs."""
+    finer = np.zeros(len(lines.row), dtype=bool)
+    for response in found.scales:
+        these = lines.sigma_px == response.sigma_px
+        if not these.any():
+            continue
+        factor = 2 ** (response.level - found.level)
+        row = np.minimum((lines.row[these] + factor // 2) // factor, response.bright.shape[0] - 1)
+        column = np.minimum((lines.column[these] + factor // 2) // factor, response.bright.shape[1] - 1)
+        contrast = response.bright[row, column] * response.unit[row, column]
+        near = ndimage.maximum_filter(fine, size=2 * round(NEAR_SIGMAS * response.sigma_px / 2**found.level) + 1)
+        finer[these] = near[lines.row[these], lines.column[these]] > FINER_RATIO * contrast
+    return finer
+
+
+def _texture_factor(found: Strength, lines: RidgePixels, fov: BoolArray, limit: float) -> float:
     """Raise the limit until the flipped picture, away from vessels, gives next to nothing.
 
     The flipped picture holds the texture but not the vessels: what is found there is false. Between crowded vessels
     there are true valleys, so this is asked only where most of the field is free.
     """
-    lines = ridge_lines(found.bright, found, fov)
     excess = summed_excess(lines)
     vessels = np.zeros(fov.shape, dtype=bool)
     strong = excess[lines.line] >= limit
     vessels[lines.row[strong], lines.column[strong]] = True
-    away = fov & (ndimage.distance_transform_edt(~vessels) > AWAY_PX) if vessels.any() else fov
+    away = fov & (~ndimage.maximum_filter(vessels, size=2 * AWAY_PX + 1)) if vessels.any() else fov
     free_share = away.sum() / fov.sum()
     if free_share < SPARSE_SHARE:
         return 1.0
@@ -104,41 +205,78 @@ def _texture_factor(found: Strength, fov: BoolArray, limit: float) -> float:
     return TEXTURE_STEPS[-1]
 
 
-def _paint_group(
-    found: Strength, stack: list[Float32Array], border: Float32Array, limits: tuple[float, float, float]
-) -> BoolArray:
-    """Ridge lines of one group of scales, checked and painted at full resolution.
+def _find_group(
+    found: Strength,
+    stack: list[Float32Array],
+    field: Field,
+    limits: tuple[float, float, float],
+    seen: Seen | None,
+) -> Vessels:
+    """Ridge lines of one group of scales, checked on their own profiles.
 
-    `border` (h, w) is the distance to the border of the field, 0 outside; `limits` are the least summed excess of a
-    line and the smallest and largest half width of a vessel.
+    `limits` are the least summed excess of a line and the smallest and largest half width of a vessel.
     """
     limit, smallest_px, largest_px = limits
     factor = 2**found.level
     image = ndimage.gaussian_filter(stack[found.level], 0.7)
-    lines = ridge_lines(found.bright, found, (border > 0)[::factor, ::factor])
-    limit *= _texture_factor(found, border[::factor, ::factor] > 0, limit / factor**0.5) / factor**0.5
-    lines = lines.keep(summed_excess(lines)[lines.line] >= limit)
+    lines = ridge_lines(found.bright, found, field.inside[::factor, ::factor])
+    texture = _texture_factor(found, lines, field.inside[::factor, ::factor], limit)
+    lines = lines.keep(summed_excess(lines)[lines.line] >= texture * limit)
     reach = REACH_SIGMAS * lines.sigma_px / factor + REACH_EXTRA_PX
-    ribbon = measure_ribbons(image, _on_grid(lines, factor), reach)
+    pairs = neighbours(image.shape, lines.row, lines.column)
+    ribbon = measure_ribbons(image, _on_grid(lines, factor), pairs, reach)
     width = ribbon.half_width_px * factor
     sigma = np.maximum(lines.sigma_px, SURE_SIGMA_PX)
-    good = (
-        ribbon.is_shaped
-        & ribbon.is_clear
-        & (width >= smallest_px)
-        & (width <= largest_px)
-        & (width <= BLOB_SIGMAS * sigma)
-    )
-    if found.level:
-        good &= width >= BUNDLE_SIGMAS * lines.sigma_px
-    near_border = (border <= BORDER_PX)[::factor, ::factor][lines.row, lines.column]
-    good, width = bridge(lines, good, width, near_border, ribbon.is_clear)
-    length = factor * np.bincount(lines.line, weights=good, minlength=lines.n_lines)
-    mean_width = np.bincount(lines.line, weights=good * width, minlength=lines.n_lines) * factor / np.maximum(length, 1)
-    good &= (length >= np.maximum(LEAST_PIECE_PX, LEAST_LENGTH_RADII * mean_width))[lines.line]
-    radius = np.minimum(width, CAP_SIGMAS * sigma)[good]
-    kept = lines.keep(good)
-    return paint(border.shape, kept.x_px * factor, kept.y_px * factor, radius)
+    clear = ribbon.is_clear
+    if seen is not None:
+        own = np.sqrt(np.maximum(width**2 - (BLUR_HALF_WIDTHS * factor) ** 2, 0))
+        thin = _seen_finer(lines, found, seen.contrast) | (own < BUNDLE_SIGMAS * lines.sigma_px)
+        clear = clear & ~thin & (ribbon.contrast >= _least_contrast(width, seen.vessels))
+    shaped = ribbon.is_shaped & clear & (ribbon.balance >= (WIDE_BALANCE if seen else 0))
+    good = shaped & (width >= smallest_px) & (width <= np.minimum(largest_px, BLOB_SIGMAS * sigma))
+    near_border = field.near_border[::factor, ::factor][lines.row, lines.column]
+    good, width = bridge(pairs, good, width, near_border, clear)
+    at_rim = field.short_is_shade[::factor, ::factor][lines.row, lines.column]
+    good &= _holds_together(pairs, good, (shaped, at_rim), width / factor)
+    radius = np.minimum(_lumen_half_width(width, found.level), CAP_SIGMAS * sigma)
+    return Vessels(ribbon.x_px[good] * factor, ribbon.y_px[good] * factor, radius[good], ribbon.contrast[good], texture)
+
+
+def _least_contrast(width_px: FloatArray, thin: Vessels) -> FloatArray:
+    """Contrast below which a wide line is texture: a wide vessel is no fainter than the thin ones of its picture."""
+    if len(thin.contrast) == 0:
+        return np.zeros(len(width_px))
+    ratio = np.maximum(width_px / np.median(thin.radius_px), 1)
+    return np.asarray(WIDE_CONTRAST * np.median(thin.contrast) * ratio**WIDE_CONTRAST_POWER)
+
+
+def _holds_together(
+    pairs: IntArray, good: BoolArray, looks: tuple[BoolArray, BoolArray], width: FloatArray
+) -> BoolArray:
+    """Pixels of pieces that are longer than wide, and look like a vessel along enough of their length.
+
+    `looks` says where a pixel looks like a vessel, and where it lies at the rim of the field, whose shade and mirror
+    image make short pieces.
+    """
+    shaped, at_rim = looks
+    n_pieces, piece = connected(pairs[good[pairs].all(axis=1)], len(good))
+    length = np.maximum(np.bincount(piece, weights=good, minlength=n_pieces), 1)
+    mean_width = np.bincount(piece, weights=good * width, minlength=n_pieces) / length
+    share = np.bincount(piece, weights=good & shaped, minlength=n_pieces) / length
+    long = length >= np.maximum(LEAST_PIECE_PX, LEAST_LENGTH_RADII * mean_width)
+    rim_share = np.bincount(piece, weights=good & at_rim, minlength=n_pieces) / length
+    shade = (rim_share > RIM_SHARE) & (length < LEAST_AT_RIM_PX)
+    return np.asarray((long & ~shade & (share >= LEAST_SHAPED))[piece])
+
+
+def _painted(shape: tuple[int, ...], vessels: Vessels) -> BoolArray:
+    return paint((shape[0], shape[1]), vessels.x_px, vessels.y_px, vessels.radius_px)
+
+
+def _lumen_half_width(width_px: FloatArray, level: int) -> FloatArray:
+    """Half width of the lumen from that of its profile at half height: the blur taken off, roundness put on."""
+    blur2 = PAINT_BLUR2 * 4**level
+    return PAINT_ROUND * np.sqrt(np.maximum(width_px**2 - blur2, PAINT_LEAST**2 * width_px**2))
 
 
 def _on_grid(lines: RidgePixels, factor: int) -> RidgePixels:
@@ -148,7 +286,7 @@ def _on_grid(lines: RidgePixels, factor: int) -> RidgePixels:
     )  # fmt: skip
 
 
-def _without_small(mask: BoolArray) -> BoolArray:
+def _without_small(mask: BoolArray, least_px: float) -> BoolArray:
     holes, count = ndimage.label(~mask)
     if count:
         size = np.bincount(holes.ravel())
@@ -156,4 +294,4 @@ def _without_small(mask: BoolArray) -> BoolArray:
         mask = mask | (size[holes] <= HOLE_PX)
     pieces, _ = ndimage.label(mask, structure=np.ones((3, 3), dtype=bool))
     extent = [np.hypot(*(part.stop - part.start for part in box)) for box in ndimage.find_objects(pieces)]
-    return np.asarray(np.array([0.0, *extent])[pieces] >= LEAST_ALONE_PX, dtype=bool)
+    return np.asarray(np.array([0.0, *extent])[pieces] >= least_px, dtype=bool)
