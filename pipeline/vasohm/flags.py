@@ -40,6 +40,9 @@ class Flag(IntFlag):
     OUT_OF_REACH = 1 << 24
     HEMATOCRIT_UNSETTLED = 1 << 25
     BACKWARDS = 1 << 26
+    ORDER_LOOPS = 1 << 27
+    ORDER_ROOTLESS = 1 << 28
+    ORDER_UNSETTLED = 1 << 29
     # images
     TERMINAL_MISSED = 1 << 32
     EDIT_MISSED = 1 << 33
@@ -53,6 +56,10 @@ class Flag(IntFlag):
     PROFILE_ASSUMED = 1 << 41
     OUT_OF_FOCUS = 1 << 42
     ASSUMED_BLUR_SPREAD = 1 << 43
+    FEW_ARTERIOLES = 1 << 44
+    FEW_VENULES = 1 << 45
+    DISC_OUTSIDE = 1 << 46
+    ZONE_CUT = 1 << 47
 
 
 MEANING: dict[Flag, str] = {
@@ -83,6 +90,9 @@ MEANING: dict[Flag, str] = {
     Flag.OUT_OF_REACH: "no radius factor of the chosen vessels gives the wanted ratio of resistances",
     Flag.HEMATOCRIT_UNSETTLED: "hematocrit and flow came to no state that agrees with itself: no values",
     Flag.BACKWARDS: "the pressure of every inlet lies below that of every outlet: blood runs from outlets to inlets",
+    Flag.ORDER_LOOPS: "the network has loops: its vessels have no orders",
+    Flag.ORDER_ROOTLESS: "neither one inlet nor one outlet: where the tree begins, and so its orders, cannot be told",
+    Flag.ORDER_UNSETTLED: "orders by diameter came to no end that agrees with itself",
     Flag.TERMINAL_MISSED: "a terminal of the terminals file is not near any vessel end and was left out",
     Flag.EDIT_MISSED: "an edit of the edits file is not near any vessel and was left out",
     Flag.ORIENTATION_TAG: "the file carries an orientation tag; coordinates are those of the stored picture",
@@ -95,6 +105,10 @@ MEANING: dict[Flag, str] = {
     Flag.PROFILE_ASSUMED: "the image cannot tell how its vessels are imaged; an assumed profile was used",
     Flag.OUT_OF_FOCUS: "the blur is wider than 1.5 px and than the thinnest vessels asked for",
     Flag.ASSUMED_BLUR_SPREAD: "the uncertainty of the blur is an assumption",
+    Flag.FEW_ARTERIOLES: "fewer arterioles cross the zone around the optic disc than their equivalent asks for",
+    Flag.FEW_VENULES: "fewer venules cross the zone around the optic disc than their equivalent asks for",
+    Flag.DISC_OUTSIDE: "the optic disc lies partly outside the field of view: no calibre equivalents",
+    Flag.ZONE_CUT: "the field of view cuts the zone around the optic disc: vessels may be missing from the equivalents",
 }
 
 
