@@ -10,7 +10,8 @@ from vasohm.image.segment import SegmentSettings, segment
 from vasohm.network.centreline import extend_ends, refine_centrelines
 from vasohm.network.crossings import CrossingSettings, resolve_crossings
 from vasohm.network.graph import NodeKind, VesselGraph, build_graph, label_networks
-from vasohm.network.paths import arc_length
+from vasohm.network.lumen import leave_parents
+from vasohm.network.paths import arc_length, owner
 from vasohm.network.skeletonize import SkeletonizeSettings, skeletonize
 
 LENGTH_TOLERANCE = 0.003  # what is promised for bends of 30 px radius or more
@@ -165,6 +166,33 @@ def test_a_side_branch_is_no_crossing():
     assert graph.n_segments == 3
     node = int(np.nonzero(graph.node_kind == NodeKind.BRANCHING)[0][0])
     assert abs(graph.node_y_px[node] - 100) < 0.5  # on the parent's axis
+
+
+@pytest.mark.parametrize("angle_deg", [90.0, 75.0, 60.0])
+def test_a_child_begins_where_it_leaves_its_parents_lumen(angle_deg):
+    """Wrong if the stub inside the parent counted as length and resistance of the child, or was cut by a guess.
+
+    The axis of a child at an angle a crosses the wall of a parent of radius R at R / sin a from the parent's axis.
+    """
+    wide, narrow = 6.0, 3.0
+    along = np.array([np.cos(np.radians(angle_deg)), np.sin(np.radians(angle_deg))])
+    foot = np.array([90.0, 60.0])
+    x, y = np.transpose([foot, foot + 90 * along])
+    lines = [(np.array([0.0, 200.0]), np.array([60.0, 60.0]), wide), (x, y, narrow)]
+    graph = graph_of(draw(lines, (161, 201)))
+    segment = owner(graph.offsets)
+    cut, kept = leave_parents(graph, np.where(segment == segment[graph.y_px.argmax()], narrow, wide))
+    assert kept.sum() == cut.n_points
+    node = int(np.nonzero(cut.node_kind == NodeKind.BRANCHING)[0][0])
+    at_node = np.hypot(cut.node_x_px[node] - foot[0], cut.node_y_px[node] - foot[1])
+    assert at_node < NODE_TOLERANCE_PX
+    child = int(np.argmax([cut.y_px[a:b].max() for a, b in zip(cut.offsets[:-1], cut.offsets[1:], strict=True)]))
+    ends = cut.offsets[child], cut.offsets[child + 1] - 1
+    first = min(ends, key=lambda i: cut.y_px[i])
+    assert cut.y_px[first] - 60 == pytest.approx(wide, abs=0.5)
+    assert np.hypot(cut.x_px[first] - foot[0], cut.y_px[first] - foot[1]) == pytest.approx(
+        wide / np.sin(np.radians(angle_deg)), abs=NODE_TOLERANCE_PX
+    )
 
 
 @pytest.mark.parametrize("seed", range(3))
