@@ -6,7 +6,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import fft, ndimage
 
-from vasohm.arrays import AnyArray, Float32Array, freeze
+from vasohm.arrays import AnyArray, Float32Array, IntArray, freeze
 
 N_ANGLES = 12  # 16 gave nothing more in trials on phantoms
 SIGMA_FINE = (1.2, 1.8)  # at full resolution, px; a third between them gave nothing more
@@ -36,10 +36,16 @@ class ScaleResponse:
     bright: Float32Array  # lines brighter than both sides
     dark: Float32Array  # the same for the flipped picture: what noise and texture alone would give
     angle: AnyArray  # uint8 index of the angle of `bright`'s line
-    unit: Float32Array  # the noise that the responses are counted in: bright x unit is a contrast
+    unit: Float32Array  # the noise that the responses are counted in, one value a block of the grid
 
     def __post_init__(self) -> None:
         freeze(self)
+
+    def contrast_at(self, row: IntArray, column: IntArray) -> Float32Array:
+        """Response at some pixels in units of the picture."""
+        down, right = (n / m for n, m in zip(self.bright.shape, self.unit.shape, strict=True))
+        unit = self.unit[(row / down).astype(np.int64), (column / right).astype(np.int64)]
+        return np.asarray(self.bright[row, column] * unit, dtype=np.float32)
 
 
 def pyramid(image: Float32Array, levels: int) -> list[Float32Array]:
@@ -91,9 +97,13 @@ def _respond_at(
     # In a narrow picture a vessel runs along it, and the filter across the vessel answers to noise alone
     narrow = min(size) < ROOM_SIGMAS * sigma
     blocks = np.min(noise, axis=0) * np.float32(LESSER_OF_TWO) if narrow else np.mean(noise, axis=0)
-    unit = np.maximum(_noise_unit(blocks, (size[0], size[1])), np.float32(LEAST_NOISE * _white_gain(level, sigma)))
-    bright /= unit
-    dark /= -unit
+    unit = np.maximum(_noise_unit(blocks), np.float32(LEAST_NOISE * _white_gain(level, sigma)))
+    full = unit
+    for axis in (0, 1):
+        places = (np.arange(unit.shape[axis]) + 0.5) * size[axis] / unit.shape[axis] - 0.5
+        full = _stretched(full, places, size[axis], axis)
+    bright /= full
+    dark /= -full
     return ScaleResponse(level, sigma * 2**level, bright, dark, angle, unit)
 
 
@@ -142,7 +152,7 @@ def _block_noise(response: Float32Array) -> Float32Array:
     return np.asarray(np.median(inside, axis=2, overwrite_input=True) * MAD_TO_SD, dtype=np.float32)
 
 
-def _noise_unit(blocks: Float32Array, shape: tuple[int, int]) -> Float32Array:
+def _noise_unit(blocks: Float32Array) -> Float32Array:
     """Local noise of one angle's response: a low percentile of the blocks around, so that vessels do not count."""
     half = NOISE_WINDOW_BLOCKS // 2
     around = np.pad(blocks, half, mode="symmetric")
@@ -154,11 +164,7 @@ def _noise_unit(blocks: Float32Array, shape: tuple[int, int]) -> Float32Array:
     for axis in (0, 1):
         local = _stretched(local, places[axis], blocks.shape[axis], axis)
     local = ndimage.uniform_filter(local, 2 * half + 1, mode="nearest")
-    local = np.maximum(local, max(1e-3 * float(local.max()), 1e-12))
-    for axis in (0, 1):
-        edge = shape[axis] / blocks.shape[axis]
-        local = _stretched(local, (np.arange(blocks.shape[axis]) + 0.5) * edge - 0.5, shape[axis], axis)
-    return np.asarray(local, dtype=np.float32)
+    return np.asarray(np.maximum(local, max(1e-3 * float(local.max()), 1e-12)), dtype=np.float32)
 
 
 def _stretched(values: Float32Array, places: AnyArray, n: int, axis: int) -> Float32Array:

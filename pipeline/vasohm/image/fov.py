@@ -68,7 +68,7 @@ def mirror_outside(values: Float32Array, fov: BoolArray) -> Float32Array:
     """Fill what is outside the field of view with its mirror image, so that filters see no edge there."""
     if fov.all():
         return values
-    core = ndimage.distance_transform_edt(fov) > MIRROR_INSET_PX
+    core = ndimage.minimum_filter(fov, size=2 * MIRROR_INSET_PX + 1, mode="nearest")
     if not core.any():
         core = fov
     y, x = np.nonzero(~core)

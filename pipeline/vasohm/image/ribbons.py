@@ -25,6 +25,7 @@ TAIL_SHARE = (
     0.3  # of the strongest contrast nearby: less, and not clear, is a lobe of the filter beside or past a vessel
 )
 TAIL_SIGMAS = 6.0  # the elongated kernels, 3 sigma wide along, cast lobes this far
+NEAR_BLOCK_PX = 4
 BRIDGE_STEPS = 8  # pixels of a line whose shape a crossing or branching spoils are kept between good ones
 BORDER_PX = 12  # and so they are on the way to the border of the field, where one flank is only a mirror image
 MOST_SHIFT = 0.5  # of the half width, from the ridge of the filter's answer to the middle between the edges
@@ -95,14 +96,15 @@ def measure_ribbons(image: Float32Array, lines: RidgePixels, pairs: IntArray, re
 
 
 def _strongest_near(shape: tuple[int, ...], lines: RidgePixels, contrast: FloatArray) -> FloatArray:
-    """Largest contrast of any line within reach of each pixel's own filter."""
-    grid = np.zeros(shape, np.float32)
-    grid[lines.row, lines.column] = contrast
+    """Largest contrast of any line within reach of each pixel's own filter, to a block's width."""
+    row, column = lines.row // NEAR_BLOCK_PX, lines.column // NEAR_BLOCK_PX
+    grid = np.zeros([n // NEAR_BLOCK_PX + 1 for n in shape], np.float32)
+    np.maximum.at(grid, (row, column), contrast)
     strongest = np.zeros(len(contrast))
     for sigma in np.unique(lines.sigma_px):
         these = lines.sigma_px == sigma
-        near = ndimage.maximum_filter(grid, size=2 * int(TAIL_SIGMAS * sigma) + 1, mode="constant")
-        strongest[these] = near[lines.row[these], lines.column[these]]
+        near = ndimage.maximum_filter(grid, size=2 * round(TAIL_SIGMAS * sigma / NEAR_BLOCK_PX) + 1, mode="constant")
+        strongest[these] = near[row[these], column[these]]
     return strongest
 
 

@@ -113,7 +113,7 @@ def _scale_and_angle(found: Strength, row: IntArray, column: IntArray) -> tuple[
         near_row = np.minimum((row + factor // 2) // factor, response.bright.shape[0] - 1)
         near_column = np.minimum((column + factor // 2) // factor, response.bright.shape[1] - 1)
         strength.append(response.bright[near_row, near_column])
-        contrast.append(strength[-1] * response.unit[near_row, near_column])
+        contrast.append(response.contrast_at(near_row, near_column))
         angle.append(response.angle[near_row, near_column])
     clear = np.minimum(CLEAR_SHARE * np.max(strength, axis=0), CLEARLY_SEEN)
     best = np.argmax(np.where(np.array(strength) >= clear, contrast, -np.inf), axis=0)

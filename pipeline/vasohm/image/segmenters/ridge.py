@@ -31,10 +31,10 @@ SMOOTH_POWER = (
     0.8  # of the noise at the second scale over that at the first, where it is above 1: smooth noise forms longer lines
 )
 LEAST_EXCESS = 2.0
-TEXTURE_SHARE = 0.04  # of the found length that the flipped picture may give before thresholds rise
+TEXTURE_SHARE = 0.004  # of the found length that the flipped picture may give before thresholds rise
 TEXTURE_STEPS = (1.0, 1.25, 1.5, 1.75, 2.0, 2.5, 3.0)
-SPARSE_SHARE = 0.5  # of the field must be away from vessels for the flipped picture to tell anything
-AWAY_PX = 9
+SPARSE_SHARE = 0.3  # of the field must be away from vessels for the flipped picture to tell anything
+AWAY_PX, AWAY_SIGMAS, AWAY_BLOCK_PX = 6.0, 3.0, 4  # how far the flanks of a vessel reach, and how finely that is drawn
 LEAST_PIECE_PX = 8  # ridge pixels left of a line after its checks
 LEAST_ALONE_PX = 20  # extent of a piece that touches no other: shorter ones are specks; where there is texture, longer
 HOLE_PX = 12  # smaller holes in the mask are artefacts of thick junctions
@@ -151,17 +151,12 @@ def _least_excess(noise: tuple[float, float], false_px: float) -> float:
 
 def _fine_contrast(fine: Sequence[ScaleResponse], wide: Strength) -> Float32Array:
     """Greatest clear contrast that fine scales see in each pixel of the wide group's grid."""
-    factor = 2**wide.level
-    shape = wide.bright.shape
-    greatest = np.zeros(shape, np.float32)
+    greatest = np.zeros(wide.bright.shape, np.float32)
     for response in fine:
         if response.level < wide.level:
-            contrast = np.where(response.bright >= CLEAR_FINE, response.bright * response.unit, 0)
-            step = factor // 2**response.level
-            size = [(-n % step) for n in contrast.shape]
-            blocks = np.pad(contrast, [(0, size[0]), (0, size[1])])
-            blocks = blocks.reshape(blocks.shape[0] // step, step, blocks.shape[1] // step, step).max(axis=(1, 3))
-            np.maximum(greatest, blocks[: shape[0], : shape[1]], out=greatest)
+            row, column = np.nonzero(response.bright >= CLEAR_FINE)
+            step = 2 ** (wide.level - response.level)
+            np.maximum.at(greatest, (row // step, column // step), response.contrast_at(row, column))
     return greatest
 
 
@@ -175,7 +170,7 @@ def _seen_finer(lines: RidgePixels, found: Strength, fine: Float32Array) -> Bool
         factor = 2 ** (response.level - found.level)
         row = np.minimum((lines.row[these] + factor // 2) // factor, response.bright.shape[0] - 1)
         column = np.minimum((lines.column[these] + factor // 2) // factor, response.bright.shape[1] - 1)
-        contrast = response.bright[row, column] * response.unit[row, column]
+        contrast = response.contrast_at(row, column)
         near = ndimage.maximum_filter(fine, size=2 * round(NEAR_SIGMAS * response.sigma_px / 2**found.level) + 1)
         finer[these] = near[lines.row[these], lines.column[these]] > FINER_RATIO * contrast
     return finer
@@ -188,10 +183,7 @@ def _texture_factor(found: Strength, lines: RidgePixels, fov: BoolArray, limit: 
     there are true valleys, so this is asked only where most of the field is free.
     """
     excess = summed_excess(lines)
-    vessels = np.zeros(fov.shape, dtype=bool)
-    strong = excess[lines.line] >= limit
-    vessels[lines.row[strong], lines.column[strong]] = True
-    away = fov & (~ndimage.maximum_filter(vessels, size=2 * AWAY_PX + 1)) if vessels.any() else fov
+    away = fov & ~_beside(lines, excess[lines.line] >= limit, found.level, fov.shape)
     free_share = away.sum() / fov.sum()
     if free_share < SPARSE_SHARE:
         return 1.0
@@ -203,6 +195,15 @@ def _texture_factor(found: Strength, lines: RidgePixels, fov: BoolArray, limit: 
         if false_length <= TEXTURE_SHARE * length:
             return factor
     return TEXTURE_STEPS[-1]
+
+
+def _beside(lines: RidgePixels, strong: BoolArray, level: int, shape: tuple[int, ...]) -> BoolArray:
+    """Where the flanks of strong lines may lie, on the grid of `level`, to a block's width."""
+    block = AWAY_BLOCK_PX
+    reach = AWAY_PX + AWAY_SIGMAS * lines.sigma_px[strong] / 2**level
+    small = (shape[0] // block + 1, shape[1] // block + 1)
+    beside = paint(small, lines.x_px[strong] / block, lines.y_px[strong] / block, reach / block)
+    return np.repeat(np.repeat(beside, block, axis=0), block, axis=1)[: shape[0], : shape[1]]
 
 
 def _find_group(
