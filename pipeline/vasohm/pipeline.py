@@ -19,7 +19,7 @@ from vasohm.network.classes import classes_from_labels
 from vasohm.network.crossings import resolve_crossings
 from vasohm.network.edits import apply_edits, forced_places
 from vasohm.network.graph import build_graph
-from vasohm.network.morphometry import describe_shape
+from vasohm.network.morphometry import Surroundings, describe_shape
 from vasohm.network.radius import measure_radii
 from vasohm.network.skeletonize import skeletonize
 from vasohm.results.tables import Findings, ImageTables, tabulate
@@ -63,6 +63,9 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     intervals = find_intervals(measured, flow, blood, settings.intervals)
     scenarios = run_scenarios(measured, terminals, blood, settings.scenarios, intervals)
     stage("tables")
-    shape_of = describe_shape(measured, mask.pixels, prepared.fov)
+    around = Surroundings(
+        mask.pixels, prepared.fov, source.disc, terminals.role, flow.flow_nl_min, flow.resistance_pa_s_m3
+    )
+    shape_of = describe_shape(measured, around, settings.shape)
     findings = Findings(prepared, mask, measured, flow, shape_of, scenarios, intervals)
-    return tabulate(source.image_id, source.design, findings, source.disc)
+    return tabulate(source.image_id, source.design, findings)

@@ -32,7 +32,7 @@ from vasohm.image.prepare import ImageQuality, PreparedImage, PrepareSettings
 from vasohm.image.segment import SegmentSettings, VesselMask
 from vasohm.network.graph import Crossings, NodeKind, VesselClass, VesselGraph
 from vasohm.network.lumenfit import RadiusSettings
-from vasohm.network.morphometry import Branchings, Morphometry
+from vasohm.network.morphometry import Morphometry, ShapeSettings, Surroundings, describe_shape
 from vasohm.network.radius import MeasuredGraph
 from vasohm.results.cells import guard_text, unguard_text
 from vasohm.results.encode import json_bytes
@@ -69,7 +69,7 @@ class Covariance:
     variance: float
 
     def segment_variance(self, gradient: FloatArray) -> FloatArray:
-        return np.array([self.variance * float(np.sum(part**2)) for part in np.split(gradient, 3)])
+        return self.variance * np.square(gradient).reshape(-1, N).sum(axis=1)
 
 
 def whole(*values: int) -> IntArray:
@@ -196,44 +196,22 @@ def make_motion(n: int) -> Motion:
     )
 
 
-def make_shape(n: int) -> Morphometry:
-    one = int(n > 0)
-    branchings = Branchings(
-        node=whole(1)[:one],
-        parent=whole(0)[:one],
-        child_1=whole(1)[:one],
-        child_2=whole(2)[:one],
-        radius_parent_um=real(10.0)[:one],
-        radius_child_1_um=real(8.0)[:one],
-        radius_child_2_um=real(6.0)[:one],
-        angle_1_deg=real(45.0)[:one],
-        angle_2_deg=real(40.0)[:one],
-        area_ratio=real(1.0)[:one],
-        asymmetry=real(0.5625)[:one],
-        junction_exponent=real(2.0)[:one],
-        flags=whole(0)[:one],
+def make_shape(n: int, disc: OpticDisc | None = None) -> Morphometry:
+    mask = np.zeros((HEIGHT, WIDTH), dtype=bool)
+    mask[45:56, 20:51] = n > 0
+    around = Surroundings(
+        vessels=mask,
+        fov=np.ones((HEIGHT, WIDTH), dtype=bool),
+        disc=disc,
+        role=make_flow(n).terminals.role,
+        flow_nl_min=make_flow(n).flow_nl_min,
+        resistance_pa_s_m3=make_flow(n).resistance_pa_s_m3,
     )
-    return Morphometry(
-        branchings=branchings,
-        radius_mean_um=RADIUS_UM[:n],
-        radius_sd_um=real(0.1, 0.1, 0.1)[:n],
-        tortuosity=real(1.0, 1.0, np.nan)[:n],
-        node_network=whole(*[0] * (4 * one)),
-        segment_network=whole(*[0] * n),
-        network_length_um=real(229.7)[:one],
-        network_area_um2=real(3000.0)[:one],
-        network_volume_um3=real(50000.0)[:one],
-        network_loops=whole(0)[:one],
-        fov_area_um2=HEIGHT * WIDTH * PIXEL_UM**2,
-        vessel_area_um2=4800.0,
-        length_um=240.0 * one,
-        radius_mean_um_image=8.0 if one else math.nan,
-        tortuosity_mean=1.0 if one else math.nan,
-        box_dimension=1.1 if one else math.nan,
-    )
+    found = describe_shape(make_measured(n), around, ShapeSettings((0.5, 1.0), "knudtson", (8.5,)))
+    return replace(found, tortuosity=real(1.0, 1.0, np.nan)[:n])  # a gap, as a ring would leave
 
 
-def make_findings(n_segments: int = 3, scenario: str = "Arterioles dilate") -> Findings:
+def make_findings(n_segments: int = 3, scenario: str = "Arterioles dilate", disc: OpticDisc | None = None) -> Findings:
     rng = np.random.default_rng(0)
     grey = rng.integers(0, 256, (HEIGHT, WIDTH)).astype(np.uint8)
     mask = np.zeros((HEIGHT, WIDTH), dtype=bool)
@@ -271,7 +249,7 @@ def make_findings(n_segments: int = 3, scenario: str = "Arterioles dilate") -> F
         VesselMask(mask, "ridge"),
         measured,
         flow,
-        make_shape(n_segments),
+        make_shape(n_segments, disc),
         outcomes,
         make_intervals(measured, flow),
     )
@@ -295,7 +273,7 @@ def make_blood_settings(law: str) -> BloodSettings:
 def make_tables(
     image_id: str = "a", n_segments: int = 3, scenario: str = "Arterioles dilate", disc: OpticDisc | None = None
 ) -> ImageTables:
-    return tabulate(image_id, DESIGN, make_findings(n_segments, scenario), disc)
+    return tabulate(image_id, DESIGN, make_findings(n_segments, scenario, disc))
 
 
 def make_methods(law: str = "constant", method: str = "ridge", n_masked: int = 0) -> Methods:
@@ -358,12 +336,10 @@ def test_tables_have_the_promised_columns_with_and_without_rows() -> None:
             assert (frame["image_id"] == "a").all()
         assert len(tables.image) == 1
         assert len(tables.segments) == n_segments
-    assert list(make_tables(disc=OpticDisc(1, 2, 3, "sheet", 1.0)).image.columns)[-7:-3] == [
-        "disc_x_px",
-        "disc_y_px",
-        "disc_radius_px",
-        "disc_source",
-    ]
+    with_disc = make_tables(disc=OpticDisc(1, 2, 3, "sheet", 1.0)).image
+    added = "disc_x_px disc_y_px disc_radius_px disc_source crae_um crae_se_um crve_um crve_se_um avr avr_se"
+    added += " n_zone_arterioles n_zone_venules calibre_formula"
+    assert list(with_disc.columns)[len(column_names("image")) :] == [*added.split(), *DESIGN]
 
 
 def test_radii_of_points_take_from_the_pixel_size_what_was_measured_with_it() -> None:
@@ -410,8 +386,8 @@ def test_ids_degrees_classes_and_flags_are_those_of_the_graph() -> None:
         [1, "Arterioles dilate", 2, 0.7],
         [1, "All dilate", 3, 0.5],
     ]
-    # 240 um of vessel in 48000 um2 are 5 mm in 1 mm2
-    assert tables.image.loc[0, "length_density_per_mm"] == pytest.approx(5.0)
+    # 30 px and two diagonals of 30 px, of 2 um, in 100 times 120 px: mm in mm2
+    assert tables.image.loc[0, "length_density_per_mm"] == pytest.approx(60 * (1 + 2 * math.sqrt(2)) / 48)
 
 
 def test_doubt_of_a_quantity_is_the_whole_of_it() -> None:
@@ -481,7 +457,7 @@ def test_gathered_tables_hold_every_row_in_the_order_of_the_sheet(results: Path)
     assert [row["image_id"] for row in read_csv(results / "images_all.csv")] == ["b", "a", "e"]
     assert read_csv(results / "images_all.csv")[0]["disc_source"] == "sheet"
     assert read_csv(results / "images_all.csv")[1]["disc_source"] == ""
-    for table in ("networks", "segments", "branchings", "crossings", "scenarios"):
+    for table in ("networks", "segments", "branchings", "orders", "horton", "classes", "crossings", "scenarios"):
         rows = [row for name in ("b", "a") for row in read_csv(results / f"images/{name}/{table}.csv")]
         assert read_csv(results / f"{table}_all.csv") == rows
         assert rows
@@ -506,8 +482,9 @@ def test_data_package_is_valid(results: Path) -> None:
     report = package.validate()
     assert report.valid, report.flatten(["name", "rowNumber", "fieldName", "message"])
     names = {resource.name for resource in package.resources}
-    gathered = {"images_all", "networks_all", "segments_all", "branchings_all", "crossings_all", "scenarios_all"}
-    assert names == gathered | {"failures", "nodes", "points"}
+    tables = "images networks segments branchings orders horton classes crossings scenarios"
+    gathered = {f"{table}_all" for table in tables.split()}
+    assert names == gathered | {"failures", "nodes", "points", "scales"}
     described = json.loads((results / "datapackage.json").read_text())
     fields = {r["name"]: [f["name"] for f in r["schema"]["fields"]] for r in described["resources"]}
     for resource in described["resources"]:

@@ -70,6 +70,10 @@ CONTRACT = """
     blur_px     = 1.5
     plasma_layer_um = 1.1
     plasma_layer_se_um = 0.4
+    [shape]
+    zone_dd         = [0.5, 1.0]
+    calibre_formula = "parr-hubbard"
+    calibre_um      = [5.0, 20.0]
     [blood]
     law                    = "pries-in-vitro"
     hematocrit             = 0.4
@@ -197,7 +201,7 @@ def test_ready_study_files_say_what_their_preset_brings(preset: str, tmp_path: P
 # ---- what must be refused
 
 
-SECTIONS = ("study", "image", "scale", "segment", "radius", "blood", "network", "output")
+SECTIONS = ("study", "image", "scale", "segment", "radius", "shape", "blood", "network", "output")
 ALL_KEYS = [
     (section, key)
     for section in SECTIONS

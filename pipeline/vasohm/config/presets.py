@@ -22,6 +22,9 @@ DEFAULTS: Mapping[str, Any] = {
     "radius.blur_px": "auto",
     "radius.plasma_layer_um": 0.0,
     "radius.plasma_layer_se_um": 0.0,
+    "shape.zone_dd": [0.5, 1.0],  # zone B: Knudtson et al., Curr Eye Res 2003;27:143-149
+    "shape.calibre_formula": "knudtson",
+    "shape.calibre_um": [10.0, 25.0, 50.0],
     "blood.law": "pries-in-vivo",
     "blood.hematocrit": 0.45,  # systemic, of healthy adults
     "blood.hematocrit_se": 0.0,

@@ -13,6 +13,7 @@ from vasohm.image.read import ReadSettings
 from vasohm.image.segment import SegmentSettings
 from vasohm.network.crossings import CrossingSettings
 from vasohm.network.lumenfit import RadiusSettings
+from vasohm.network.morphometry import ShapeSettings
 from vasohm.network.skeletonize import SkeletonizeSettings
 from vasohm.results.overlay import ColourBy
 
@@ -37,6 +38,7 @@ class Settings:
     skeletonize: SkeletonizeSettings
     crossings: CrossingSettings
     radius: RadiusSettings
+    shape: ShapeSettings
     blood: BloodSettings
     network: NetworkSettings
     targets: EndTargets | None  # of networks whose ends are estimated

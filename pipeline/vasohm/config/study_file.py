@@ -24,6 +24,7 @@ from vasohm.image.read import MAGIC, ReadSettings, shown
 from vasohm.image.segment import MASK_METHOD, SegmentSettings
 from vasohm.network.crossings import CrossingSettings
 from vasohm.network.lumenfit import RadiusSettings
+from vasohm.network.morphometry import ShapeSettings
 from vasohm.network.skeletonize import SkeletonizeSettings
 from vasohm.results.schema import COLUMNS
 
@@ -322,6 +323,11 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
             values["radius.plasma_layer_um"],
             values["radius.plasma_layer_se_um"],
             low,
+        ),
+        shape=ShapeSettings(
+            (values["shape.zone_dd"][0], values["shape.zone_dd"][1]),
+            values["shape.calibre_formula"],
+            tuple(values["shape.calibre_um"]),
         ),
         blood=blood_settings(values),
         network=NetworkSettings(values["network.terminals"], values["network.drive_mmhg"]),

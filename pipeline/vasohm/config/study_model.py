@@ -3,6 +3,7 @@
 import math
 import re
 from collections.abc import Mapping
+from itertools import pairwise
 from typing import Annotated, Any, Literal, get_args
 
 from pydantic import AfterValidator, BaseModel, ConfigDict, Field, PlainValidator, ValidationError
@@ -17,6 +18,7 @@ from vasohm.flow.rheology import HIGHEST_HEMATOCRIT, law_names
 from vasohm.flow.scenarios import WIDEST_FACTOR
 from vasohm.image.calibrate import LEAST_UM, MOST_UM
 from vasohm.image.segment import segmenter_names
+from vasohm.network.calibre_equivalents import FORMULAS
 from vasohm.results.columns_vessels import CLASSES
 
 MOST_SHOWN = 60  # characters of a faulty value
@@ -73,6 +75,18 @@ def _radius_range(value: list[float]) -> list[float]:
     return value
 
 
+def _zone(value: list[float]) -> list[float]:
+    if not 0 <= value[0] < value[1]:
+        raise _wrong("must be two distances from the disc's margin in disc diameters, the smaller first, none below 0.")
+    return value
+
+
+def _limits(value: list[float]) -> list[float]:
+    if not all(0 < low < high for low, high in pairwise([*value, math.inf])):
+        raise _wrong("must be radii in um that rise, all greater than 0.")
+    return value
+
+
 def _by_class(value: object) -> float | dict[str, float]:
     """One positive number for all vessels, or one a class."""
     given = value if isinstance(value, dict) else {"": value}
@@ -107,6 +121,8 @@ Positive = Annotated[float, Field(gt=0)]
 NotNegative = Annotated[float, Field(ge=0)]
 Name = Annotated[str, Field(min_length=1, max_length=200), AfterValidator(_plain_name)]
 RadiusRange = Annotated[list[float], Field(min_length=2, max_length=2), AfterValidator(_radius_range)]
+Zone = Annotated[list[float], Field(min_length=2, max_length=2), AfterValidator(_zone)]
+Limits = Annotated[list[float], Field(min_length=1, max_length=20), AfterValidator(_limits)]
 Names = Annotated[list[Name], Field(max_length=100)]
 
 
@@ -160,6 +176,14 @@ class RadiusTable(Table):
     blur_px: Annotated[float | str, PlainValidator(_blur)] | None = None
     plasma_layer_um: NotNegative | None = None
     plasma_layer_se_um: NotNegative | None = None
+
+
+class ShapeTable(Table):
+    """Where and how calibres are summed up."""
+
+    zone_dd: Zone | None = None
+    calibre_formula: Annotated[str, PlainValidator(lambda value: _one_of(value, tuple(FORMULAS)))] | None = None
+    calibre_um: Limits | None = None
 
 
 class BloodTable(Table):
@@ -237,6 +261,7 @@ class StudyModel(Table):
     scale: ScaleTable = ScaleTable()
     segment: SegmentTable = SegmentTable()
     radius: RadiusTable = RadiusTable()
+    shape: ShapeTable = ShapeTable()
     blood: BloodTable = BloodTable()
     network: NetworkTable = NetworkTable()
     scenario: list[ScenarioTable] = []

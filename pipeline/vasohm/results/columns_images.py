@@ -1,6 +1,7 @@
 """Columns of the tables that sum up: image, networks, scenarios, failures."""
 
 from vasohm.results.column import Column, count, number, text, truth
+from vasohm.results.columns_shape import AVASCULAR, CURVATURE, DENSITY, DIMENSION, EQUIVALENTS, INDEX, TISSUE
 from vasohm.results.columns_vessels import CLASSES, FLAGS, IMAGE_ID, LN_RANDOM_SE, LN_SHARED_SE, NETWORK_ID
 
 IMAGE: tuple[Column, ...] = (
@@ -19,18 +20,18 @@ IMAGE: tuple[Column, ...] = (
     number("vessel_area_um2", "um2", "Area of the vessel mask inside the field of view."),
     number("vessel_area_fraction", "1", "Vessel area over the area of the field of view."),
     number("length_um", "um", "Length of all segments together."),
-    number("length_density_per_mm", "/mm", "Length of all segments over the area of the field of view."),
+    DENSITY,
+    INDEX,
     count("n_segments", "Number of vessel segments in the image."),
     count("n_branchings", "Number of nodes in the image where vessels branch."),
     count("n_ends", "Number of vessel ends inside the field of view; those cut by its rim are not counted."),
     count("n_networks", "Number of connected networks in the image."),
     number("radius_mean_um", "um", "Mean lumen radius over all segments, weighted by length."),
     number("tortuosity_mean", "1", "Mean tortuosity over all segments, weighted by length."),
-    number(
-        "box_dimension",
-        "1",
-        "Box-counting dimension of the vessels. Depends on resolution and field of view: compare within one set-up.",
-    ),
+    *CURVATURE,
+    *TISSUE,
+    *AVASCULAR,
+    *DIMENSION,
     text("profile", "How tubes are imaged here: slab, cylinder or absorber; empty without vessels."),
     number(
         "blur_px",
@@ -66,6 +67,7 @@ DISC: tuple[Column, ...] = (
     number("disc_y_px", "{pixel}", "Centre of the optic disc, downwards."),
     number("disc_radius_px", "{pixel}", "Radius of the optic disc."),
     text("disc_source", "Where the optic disc comes from: the sheet or the image."),
+    *EQUIVALENTS,
 )
 
 NETWORKS: tuple[Column, ...] = (

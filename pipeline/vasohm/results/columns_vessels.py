@@ -1,4 +1,4 @@
-"""Columns of the tables that hold the vessels: segments, points, nodes, branchings, crossings."""
+"""Columns of the tables that hold the vessels: segments, points, nodes, crossings."""
 
 from vasohm.results.column import Column, count, number, text
 
@@ -47,6 +47,24 @@ SEGMENTS: tuple[Column, ...] = (
     number("length_se_um", "um", "Standard uncertainty of the segment's length, pixel size included (k = 1)."),
     number("chord_um", "um", "Straight distance between the segment's first and last point."),
     number("tortuosity", "1", "Arc length over chord; 1 for a straight segment, empty for a closed ring."),
+    number(
+        "curvature_rad",
+        "rad",
+        "How far the segment turns to either side together: integral of the absolute curvature over its length, "
+        "outside of branchings (Hart et al., Int J Med Inform 1999;53:239-252). Bends of less than some 60 px come out "
+        "too small; empty for a segment of less than 13 px.",
+    ),
+    number(
+        "squared_curvature_per_um",
+        "/um",
+        "Integral of the squared curvature over the same length (Hart et al. 1999). Not to be compared across pixel "
+        "sizes.",
+    ),
+    count(
+        "inflections",
+        "How often the segment changes between bends to either side that turn by 0.2 rad or more (Bullitt et al., IEEE "
+        "Trans Med Imaging 2003;22:1163-1171).",
+    ),
     number("radius_mean_um", "um", "Mean lumen radius along the segment."),
     number(
         "radius_sd_um",
@@ -89,9 +107,7 @@ SEGMENTS: tuple[Column, ...] = (
     number("pressure_a_mmhg", "mm[Hg]", "Pressure at node_a."),
     number("pressure_b_mmhg", "mm[Hg]", "Pressure at node_b."),
     number("velocity_mm_s", "mm/s", "Mean velocity of blood over the cross-section at the hydraulic radius."),
-    number(
-        "transit_s", "s", "Time in the segment at its mean velocity; empty where nothing flows."
-    ),
+    number("transit_s", "s", "Time in the segment at its mean velocity; empty where nothing flows."),
     number(
         "wall_shear_pa",
         "Pa",
@@ -119,6 +135,16 @@ SEGMENTS: tuple[Column, ...] = (
         "1",
         "The segment's share of its network's resistance, d ln(R network) / d ln(R segment), which is its share of the "
         "dissipated power (Cohn, Proc Am Math Soc 1950;1:316). Shares of a network sum to 1.",
+    ),
+    count(
+        "order_strahler",
+        "Strahler's order in its tree, from 1 at the tips (Strahler, Trans Am Geophys Union 1957;38:913-920); empty "
+        "where the network is no tree or has no one root.",
+    ),
+    count(
+        "order_diameter",
+        "Diameter-defined order in its tree (Jiang, Kassab and Fung, J Appl Physiol 1994;76:882-892); empty as before, "
+        "and where no orders agree with themselves.",
     ),
     FLAGS,
 )
@@ -155,30 +181,6 @@ NODES: tuple[Column, ...] = (
     count("degree", "Number of segment ends that meet at the node."),
     text("role", "Where blood enters or leaves; empty for all other nodes.", ("inlet", "outlet")),
     number("pressure_mmhg", "mm[Hg]", "Pressure at the node; empty where no flow is solved."),
-)
-
-BRANCHINGS: tuple[Column, ...] = (
-    IMAGE_ID,
-    NODE_ID,
-    NETWORK_ID,
-    count("parent_segment", "segment_id of the parent."),
-    count("child_1_segment", "segment_id of the wider child."),
-    count("child_2_segment", "segment_id of the narrower child."),
-    number("radius_parent_um", "um", "Lumen radius of the parent near the branching."),
-    number("radius_child_1_um", "um", "Lumen radius of the wider child near the branching."),
-    number("radius_child_2_um", "um", "Lumen radius of the narrower child near the branching."),
-    number("angle_1_deg", "deg", "Angle between the parent's direction, carried on, and the wider child."),
-    number("angle_2_deg", "deg", "Angle between the parent's direction, carried on, and the narrower child."),
-    number("angle_total_deg", "deg", "Sum of the two children's angles to the parent's direction."),
-    number("area_ratio", "1", "Cross-section of both children over the parent's: (r1^2 + r2^2) / r0^2."),
-    number("asymmetry", "1", "Cross-section of the narrower child over the wider one's: (r2 / r1)^2."),
-    number(
-        "junction_exponent",
-        "1",
-        "m with r0^m = r1^m + r2^m (3 by Murray, Proc Natl Acad Sci USA 1926;12:207-214); empty unless the parent is "
-        "wider than both children.",
-    ),
-    FLAGS,
 )
 
 CROSSINGS: tuple[Column, ...] = (

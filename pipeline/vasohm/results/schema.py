@@ -7,9 +7,10 @@ from vasohm.errors import DomainError
 from vasohm.results.column import Column, text
 from vasohm.results.columns_appraisal import APPRAISAL
 from vasohm.results.columns_images import DISC, FAILURES, IMAGE, NETWORKS, SCENARIOS
-from vasohm.results.columns_vessels import BRANCHINGS, CROSSINGS, NODES, POINTS, SEGMENTS
+from vasohm.results.columns_shape import BRANCHINGS, CLASS_SHAPES, HORTON, ORDERS, SCALES
+from vasohm.results.columns_vessels import CROSSINGS, NODES, POINTS, SEGMENTS
 
-SCHEMA_VERSION = 4  # goes up with every change of a column
+SCHEMA_VERSION = 5  # goes up with every change of a column
 
 COLUMNS: Mapping[str, tuple[Column, ...]] = {
     "image": IMAGE,
@@ -18,6 +19,10 @@ COLUMNS: Mapping[str, tuple[Column, ...]] = {
     "nodes": NODES,
     "points": POINTS,
     "branchings": BRANCHINGS,
+    "orders": ORDERS,
+    "horton": HORTON,
+    "classes": CLASS_SHAPES,
+    "scales": SCALES,
     "crossings": CROSSINGS,
     "scenarios": SCENARIOS,
     "failures": FAILURES,
@@ -33,6 +38,10 @@ TABLE_MEANING: Mapping[str, str] = {
     "nodes": "One row a node: an end, a rim, a branching or the seam of a ring.",
     "points": "One row a centreline point, ordered from node_a to node_b of its segment.",
     "branchings": "One row a bifurcation.",
+    "orders": "One row an order of the vessels of a tree, by Strahler and by diameter.",
+    "horton": "One row a network and scheme: how number, length and radius go on from order to order.",
+    "classes": "One row a class of vessels, all together first, and a class of calibre within it.",
+    "scales": "One row an edge of the boxes that box dimension and lacunarity come from.",
     "crossings": "One row a place where two vessels merely cross in the picture.",
     "scenarios": "One row a network and scenario: what becomes of its resistance when some radii change.",
     "failures": "One row an image that could not be measured.",
@@ -45,6 +54,9 @@ PRIMARY_KEYS: Mapping[str, tuple[str, ...]] = {
     "nodes": ("image_id", "node_id"),
     "points": ("image_id", "segment_id", "point"),
     "branchings": ("image_id", "node_id"),
+    "orders": ("image_id", "network_id", "scheme", "order"),
+    "horton": ("image_id", "network_id", "scheme"),
+    "scales": ("image_id", "vessel_class", "edge_px"),
     "scenarios": ("image_id", "network_id", "scenario"),
     "failures": ("image_id",),
 }
@@ -54,6 +66,9 @@ GATHERED: Mapping[str, str] = {  # file at the root: the table whose rows it col
     "networks_all.csv": "networks",
     "segments_all.csv": "segments",
     "branchings_all.csv": "branchings",
+    "orders_all.csv": "orders",
+    "horton_all.csv": "horton",
+    "classes_all.csv": "classes",
     "crossings_all.csv": "crossings",
     "scenarios_all.csv": "scenarios",
 }

@@ -13,7 +13,6 @@ from vasohm.flags import Flag, codes
 from vasohm.flow.hydraulics import NetworkFlow
 from vasohm.flow.monte_carlo import ResistanceIntervals
 from vasohm.flow.scenarios import ScenarioOutcomes
-from vasohm.image.disc import OpticDisc
 from vasohm.image.prepare import PreparedImage
 from vasohm.image.segment import VesselMask
 from vasohm.network.graph import NodeKind, VesselClass
@@ -21,8 +20,18 @@ from vasohm.network.morphometry import Morphometry
 from vasohm.network.radius import MeasuredGraph
 from vasohm.results.handed_graph import hand_out_graph
 from vasohm.results.schema import column_names, image_columns
+from vasohm.results.shape_tables import (
+    branching_rows,
+    class_rows,
+    equivalent_cells,
+    horton_rows,
+    image_shape,
+    order_flags,
+    order_rows,
+    scale_rows,
+    segment_shape,
+)
 from vasohm.uncertainty import no_interval, quadrature
-from vasohm.units import UM_PER_MM
 
 KIND_WORDS = np.array([kind.name.lower() for kind in NodeKind], dtype=object)
 CLASS_WORDS = np.array(["", *(kind.name.lower() for kind in VesselClass if kind)], dtype=object)
@@ -35,8 +44,8 @@ ROLE_WORDS = np.array(["outlet", "", "inlet"], dtype=object)  # role -1, 0, +1
 class ImageTables:
     """All that one image gives.
 
-    `tables` has the keys image, networks, segments, nodes, points, branchings, crossings, scenarios; each frame has all
-    its columns, also without rows. Missing numbers are NaN, missing texts are empty.
+    `tables` has a key for each table of `vasohm.results.schema.COLUMNS` but the failures; each frame has all its
+    columns, also without rows. Missing numbers are NaN, missing texts are empty.
     """
 
     image_id: str
@@ -95,17 +104,14 @@ class Findings:
     intervals: ResistanceIntervals
 
 
-def tabulate(
-    image_id: str, design: Mapping[str, str], findings: Findings, disc: OpticDisc | None = None
-) -> ImageTables:
+def tabulate(image_id: str, design: Mapping[str, str], findings: Findings) -> ImageTables:
     """Lay out what was found in one image as the tables of the contract.
 
     Parameters
     ----------
     image_id : the image's name in the sheet.
     design : the sheet's own columns of this image, in the sheet's order.
-    findings : the nouns of all stages.
-    disc : where the optic disc lies, or None; without one its columns are absent.
+    findings : the nouns of all stages. Without an optic disc its columns are absent.
 
     Returns
     -------
@@ -120,15 +126,20 @@ def tabulate(
         "segments": _segments(findings),
         "nodes": _nodes(findings),
         "points": _points(findings.measured),
-        "branchings": _branchings(findings.shape),
+        "branchings": branching_rows(findings.shape),
+        "orders": order_rows(findings.shape),
+        "horton": horton_rows(findings.shape),
+        "classes": class_rows(findings.shape),
+        "scales": scale_rows(findings.shape, findings.prepared.pixel_size_um),
         "crossings": _crossings(findings.measured),
         "scenarios": _scenarios(findings.scenarios),
     }
     tables = {table: _framed(table, image_id, columns) for table, columns in frames.items()}
     status = "measured" if findings.measured.graph.n_segments else "empty"
-    image = _image(findings)
+    image, disc = _image(findings), findings.shape.disc
     image.update({"image_id": image_id, "status": status})
     if disc is not None:
+        image.update(equivalent_cells(findings.shape.equivalents))
         image.update(disc_x_px=disc.x_px, disc_y_px=disc.y_px, disc_radius_px=disc.radius_px, disc_source=disc.source)
     image.update(design)
     names = [column.name for column in image_columns(design, with_disc=disc is not None)]
@@ -171,6 +182,7 @@ def _segments(findings: Findings) -> dict[str, AnyArray]:
         "length_se_um": quadrature(measured.length_random_se_um, pixel_se_um),
         "chord_um": measured.chord_um,
         "tortuosity": shape.tortuosity,
+        **segment_shape(shape),
         "radius_mean_um": shape.radius_mean_um,
         "radius_sd_um": shape.radius_sd_um,
         "radius_hydraulic_um": flow.radius_hydraulic_um,
@@ -260,7 +272,9 @@ def _networks(findings: Findings) -> dict[str, AnyArray]:
         "n_half_resistance": _count_to_half(terminals.segment_network, flow.share, n),
         "flow_nl_min": flow.network_flow_nl_min,
         "hematocrit_turns": flow.hematocrit_turns,
-        "flags": codes(terminals.network_flags | flow.network_flags | intervals.network_flags | unbounded),
+        "flags": codes(
+            terminals.network_flags | flow.network_flags | intervals.network_flags | unbounded | order_flags(shape)
+        ),
     }
 
 
@@ -295,27 +309,6 @@ def _network_class(measured: MeasuredGraph, shape: Morphometry) -> tuple[AnyArra
     return words, probability
 
 
-def _branchings(shape: Morphometry) -> dict[str, AnyArray]:
-    found = shape.branchings
-    return {
-        "node_id": found.node + 1,
-        "network_id": shape.node_network[found.node] + 1,
-        "parent_segment": found.parent + 1,
-        "child_1_segment": found.child_1 + 1,
-        "child_2_segment": found.child_2 + 1,
-        "radius_parent_um": found.radius_parent_um,
-        "radius_child_1_um": found.radius_child_1_um,
-        "radius_child_2_um": found.radius_child_2_um,
-        "angle_1_deg": found.angle_1_deg,
-        "angle_2_deg": found.angle_2_deg,
-        "angle_total_deg": found.angle_1_deg + found.angle_2_deg,
-        "area_ratio": found.area_ratio,
-        "asymmetry": found.asymmetry,
-        "junction_exponent": found.junction_exponent,
-        "flags": codes(found.flags),
-    }
-
-
 def _crossings(measured: MeasuredGraph) -> dict[str, AnyArray]:
     found = measured.graph.crossings
     return {
@@ -346,6 +339,8 @@ def _image(findings: Findings) -> dict[str, Any]:
     prepared, measured, shape = findings.prepared, findings.measured, findings.shape
     kind = measured.graph.node_kind
     flags = prepared.flags | measured.flags | findings.flow.terminals.flags
+    if shape.equivalents is not None:
+        flags |= shape.equivalents.flags
     tells_blur = bool(measured.graph.n_segments) and not measured.flags & BLUR_NOT_TOLD
     if not tells_blur:  # nothing here says whether the picture is sharp
         flags &= ~Flag.OUT_OF_FOCUS
@@ -356,18 +351,10 @@ def _image(findings: Findings) -> dict[str, Any]:
         "pixel_size_um": prepared.pixel_size_um,
         "pixel_size_se_um": prepared.pixel_size_se_um,
         "pixel_size_source": prepared.pixel_size_source,
-        "fov_area_um2": shape.fov_area_um2,
-        "vessel_area_um2": shape.vessel_area_um2,
-        "vessel_area_fraction": shape.vessel_area_um2 / shape.fov_area_um2,
-        "length_um": shape.length_um,
-        "length_density_per_mm": shape.length_um / shape.fov_area_um2 * UM_PER_MM,
+        **image_shape(shape),
         "n_segments": measured.graph.n_segments,
         "n_branchings": int(np.sum(kind == NodeKind.BRANCHING)),
         "n_ends": int(np.sum(kind == NodeKind.END)),
-        "n_networks": len(shape.network_length_um),
-        "radius_mean_um": shape.radius_mean_um_image,
-        "tortuosity_mean": shape.tortuosity_mean,
-        "box_dimension": shape.box_dimension,
         "profile": measured.profile if measured.graph.n_segments else "",
         "blur_px": measured.blur_px if tells_blur else np.nan,
         "noise": prepared.quality.noise,

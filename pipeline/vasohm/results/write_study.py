@@ -27,7 +27,7 @@ from vasohm.results.schema import (
 from vasohm.results.write import PARTIAL_SUFFIX, replace_durably, sync_file, tag, write_atomically
 
 PACKAGE_PROFILE = "https://datapackage.org/profiles/2.0/datapackage.json"
-PER_IMAGE_TABLES = ("nodes", "points")  # too many rows to gather: described where they are
+PER_IMAGE_TABLES = ("nodes", "points", "scales")  # too many rows to gather: described where they are
 
 
 @dataclass(frozen=True, slots=True)

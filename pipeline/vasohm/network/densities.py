@@ -1,0 +1,258 @@
+"""How vessels fill the field of view: distances of the tissue, avascular areas, box dimension, lacunarity."""
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy import ndimage
+
+from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
+
+BOXES_ACROSS = 4  # larger boxes are all occupied
+LEAST_EDGES = 3  # that a line through box counts needs
+STEPS_A_BOX = 4  # boxes wider than this glide by a quarter of their edge
+QUANTILES = (0.05, 0.5, 0.95)
+
+
+@dataclass(frozen=True, slots=True)
+class TissueDistances:
+    """Distances from the pixels of the tissue to the nearest vessel's border; NaN without vessels or tissue."""
+
+    mean_um: float
+    sd_um: float
+    quantiles_um: tuple[float, float, float]  # 5 %, 50 %, 95 %
+
+
+@dataclass(frozen=True, slots=True)
+class AvascularArea:
+    """The largest place without vessels that lies wholly in the field of view; NaN without vessels or tissue."""
+
+    area_um2: float
+    radius_um: float  # of the largest circle in it
+    x_px: float  # its centre of area
+    y_px: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Scales:
+    """Boxes over the field of view, one entry an edge of 2, 4, 8 … px."""
+
+    edge_px: IntArray
+    n_occupied: IntArray
+    lacunarity: FloatArray  # NaN where no box lies wholly in the field of view
+
+    def __post_init__(self) -> None:
+        freeze(self)
+
+
+@dataclass(frozen=True, slots=True)
+class BoxDimension:
+    """Slope of the line through the box counts; NaN where nothing is there or fewer than three edges fit."""
+
+    value: float
+    se: float
+    least_px: float  # smallest and largest edge on the line
+    most_px: float
+
+
+NO_DISTANCES = TissueDistances(np.nan, np.nan, (np.nan, np.nan, np.nan))
+NO_AVASCULAR_AREA = AvascularArea(np.nan, np.nan, np.nan, np.nan)
+NO_DIMENSION = BoxDimension(np.nan, np.nan, np.nan, np.nan)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Filling:
+    """How a set of vessels fills the field of view."""
+
+    distances: TissueDistances
+    avascular: AvascularArea
+    dimension: BoxDimension
+    lacunarity: float  # mean over the edges of the box counts
+    scales: Scales
+
+
+def describe_filling(vessels: BoolArray, fov: BoolArray, pixel_size_um: float) -> Filling:
+    """Describe how vessel pixels fill the field of view.
+
+    Parameters
+    ----------
+    vessels, fov : (h, w) bool
+        Vessel pixels, and pixels of the field of view; only what lies in it counts.
+    pixel_size_um : float
+        Edge of a pixel.
+
+    Returns
+    -------
+    Filling
+
+    Notes
+    -----
+    See `tissue_distances`, `avascular_area`, `count_boxes` and `fit_dimension`.
+    """
+    inside = vessels & fov
+    squared_px2, seen = _nearest(inside, fov)
+    scales = count_boxes(inside, fov)
+    known = scales.lacunarity[np.isfinite(scales.lacunarity)]
+    return Filling(
+        distances=tissue_distances(squared_px2, seen, inside, fov, pixel_size_um),
+        avascular=avascular_area(squared_px2, inside, fov, pixel_size_um),
+        dimension=fit_dimension(scales),
+        lacunarity=float(known.mean()) if known.size else np.nan,
+        scales=scales,
+    )
+
+
+def _nearest(vessels: BoolArray, fov: BoolArray) -> tuple[IntArray, BoolArray]:
+    """Squared distance (h, w) of each pixel to the nearest vessel or end of the field; whether that is a vessel.
+
+    One row and column around the picture count as beyond the field.
+    """
+    height, width = fov.shape
+    free, target = (np.zeros((height + 2, width + 2), dtype=bool) for _ in range(2))
+    free[1:-1, 1:-1], target[1:-1, 1:-1] = fov & ~vessels, vessels
+    row, column = ndimage.distance_transform_edt(free, return_distances=False, return_indices=True)
+    seen = np.take(target, row * np.int32(width + 2) + column)
+    row -= np.arange(height + 2, dtype=np.int32)[:, None]
+    column -= np.arange(width + 2, dtype=np.int32)[None, :]
+    row *= row
+    column *= column
+    row += column
+    return row[1:-1, 1:-1], seen[1:-1, 1:-1]
+
+
+def tissue_distances(
+    squared_px2: IntArray, seen: BoolArray, vessels: BoolArray, fov: BoolArray, pixel_size_um: float
+) -> TissueDistances:
+    """Distribution of the distances from tissue to the nearest vessel, freed from the field's border.
+
+    Notes
+    -----
+    Near the border the nearest vessel may lie outside of what is seen: such a pixel only tells that its distance is at
+    least that to the border. The product-limit estimator takes both kinds; beyond the largest distance to a vessel that
+    was seen it ends. Distances are to the border of the vessel's pixels, half a pixel before their centres.
+
+    References
+    ----------
+    Baddeley A, Gill RD (1997) Kaplan-Meier estimators of distance distributions for spatial point processes. Ann Stat
+    25:263-292, doi:10.1214/aos/1034276629.
+    """
+    tissue = fov & ~vessels
+    if not vessels.any() or not tissue.any():
+        return NO_DISTANCES
+    squared, told = squared_px2[tissue], seen[tissue]
+    counts = np.bincount(squared)
+    events = np.bincount(squared[told], minlength=len(counts))
+    at = np.flatnonzero(counts)
+    counts, events = counts[at], events[at]
+    at_risk = np.cumsum(counts[::-1])[::-1]
+    survival = np.cumprod(1.0 - events / at_risk)
+    before = np.concatenate(([1.0], survival[:-1]))
+    part = before - survival
+    if part.sum() <= 0:
+        return NO_DISTANCES
+    part = part / part.sum()
+    distance = (np.sqrt(at) - 0.5) * pixel_size_um
+    mean = float(part @ distance)
+    upto = np.cumsum(part)
+    low, middle, high = distance[np.minimum(np.searchsorted(upto, QUANTILES), len(at) - 1)].tolist()
+    return TissueDistances(mean, float(np.sqrt(part @ np.square(distance - mean))), (low, middle, high))
+
+
+def avascular_area(squared_px2: IntArray, vessels: BoolArray, fov: BoolArray, pixel_size_um: float) -> AvascularArea:
+    """Largest avascular area: what a disc can reach around the largest empty circle without touching a vessel.
+
+    The disc has half the radius of the largest circle that holds no vessel and lies in the field of view; it passes no
+    gap between vessels that is narrower than that circle's radius. In mathematical terms the opening of the tissue by
+    that disc, and of it the part around the circle (of equal circles the first in the order of rows).
+    """
+    tissue = fov & ~vessels
+    if not vessels.any() or not tissue.any():
+        return NO_AVASCULAR_AREA
+    squared = np.where(tissue, squared_px2, 0)
+    centre = int(np.argmax(squared))
+    most = float(squared.flat[centre])
+    core = squared > most / 4
+    label, _ = ndimage.label(core)
+    core = label == label.flat[centre]
+    reach = int(np.ceil(np.sqrt(most) / 2)) + 1
+    rows, columns = np.flatnonzero(core.any(axis=1)), np.flatnonzero(core.any(axis=0))
+    top, left = max(rows[0] - reach, 0), max(columns[0] - reach, 0)
+    window = (slice(top, rows[-1] + reach + 1), slice(left, columns[-1] + reach + 1))
+    away = ndimage.distance_transform_edt(~core[window])
+    reached = (away <= np.sqrt(most) / 2) & tissue[window]
+    y, x = np.nonzero(reached)
+    return AvascularArea(
+        area_um2=float(len(y) * pixel_size_um**2),
+        radius_um=float((np.sqrt(most) - 0.5) * pixel_size_um),
+        x_px=float(x.mean() + left),
+        y_px=float(y.mean() + top),
+    )
+
+
+def count_boxes(pixels: BoolArray, fov: BoolArray) -> Scales:
+    """Count occupied boxes and measure lacunarity for edges of 2, 4, 8 … px.
+
+    Notes
+    -----
+    Edges go up to a quarter of the shorter side of the field of view's bounding box, to whose corner the counted boxes
+    are aligned. Lacunarity is E[M²] / E[M]² of the number M of set pixels in a gliding box; only boxes wholly in the
+    field of view count, and those of 8 px and more glide by a quarter of their edge.
+
+    References
+    ----------
+    Allain C, Cloitre M (1991) Characterizing the lacunarity of random and deterministic fractal sets. Phys Rev A
+    44:3552-3558, doi:10.1103/PhysRevA.44.3552.
+    """
+    rows, columns = np.flatnonzero(fov.any(axis=1)), np.flatnonzero(fov.any(axis=0))
+    none = np.zeros(0, dtype=np.int64)
+    if not rows.size or not pixels.any():
+        return Scales(none, none.copy(), np.zeros(0))
+    window = (slice(rows[0], rows[-1] + 1), slice(columns[0], columns[-1] + 1))
+    boxes = pixels[window]
+    largest = min(boxes.shape) / BOXES_ACROSS
+    mass, room = _integral(pixels[window]), _integral(fov[window])
+    edge, edges, counts, lacunarity = 1, [], [], []
+    while 2 * edge <= largest:
+        boxes = np.pad(boxes, [(0, boxes.shape[0] % 2), (0, boxes.shape[1] % 2)])
+        boxes = boxes[::2, ::2] | boxes[1::2, ::2] | boxes[::2, 1::2] | boxes[1::2, 1::2]
+        edge *= 2
+        edges.append(edge)
+        counts.append(np.count_nonzero(boxes))
+        lacunarity.append(_lacunarity(mass, room, edge))
+    return Scales(np.array(edges, dtype=np.int64), np.array(counts, dtype=np.int64), np.array(lacunarity))
+
+
+def _integral(pixels: BoolArray) -> IntArray:
+    """Sum of all pixels above and to the left, (h + 1, w + 1)."""
+    total = np.zeros((pixels.shape[0] + 1, pixels.shape[1] + 1), dtype=np.int32)
+    np.cumsum(pixels, axis=0, dtype=np.int32, out=total[1:, 1:])
+    np.cumsum(total[1:, 1:], axis=1, out=total[1:, 1:])
+    return total
+
+
+def _lacunarity(mass: IntArray, room: IntArray, edge: int) -> float:
+    step = max(edge // STEPS_A_BOX, 1)
+
+    def sums(total: IntArray) -> IntArray:
+        low, high = total[:-edge:step], total[edge::step]
+        return (high[:, edge::step] - high[:, :-edge:step]) - (low[:, edge::step] - low[:, :-edge:step])
+
+    held = sums(mass)[sums(room) == edge * edge].astype(float)
+    mean = held.mean() if held.size else 0.0
+    return float(np.mean(np.square(held)) / mean**2) if mean > 0 else np.nan
+
+
+def fit_dimension(scales: Scales) -> BoxDimension:
+    """Box-counting dimension: minus the slope of the least-squares line of ln(occupied boxes) on ln(edge).
+
+    Its standard error is that of the slope by the scatter about the line. Boxes of one edge are joined to those of the
+    next, so the counts are not independent: it tells how straight the line is, not how far two pictures would differ.
+    """
+    n = len(scales.edge_px)
+    if n < LEAST_EDGES:
+        return NO_DIMENSION
+    x, y = np.log(scales.edge_px), np.log(scales.n_occupied)
+    spread = float(np.sum(np.square(x - x.mean())))
+    slope = float((x - x.mean()) @ y) / spread
+    rest = y - y.mean() - slope * (x - x.mean())
+    se = float(np.sqrt(np.sum(np.square(rest)) / (n - 2) / spread))
+    return BoxDimension(-slope, se, float(scales.edge_px[0]), float(scales.edge_px[-1]))
