@@ -10,7 +10,7 @@ from vasohm.image.prepare import PreparedImage
 from vasohm.network.graph import JUNCTION_RADII, NodeKind, VesselGraph, end_radius
 from vasohm.network.paths import arc_length, offsets_of
 
-BRIDGE_RADII = 5.0  # two vessels of radius r that cross at 25 degrees share a skeleton of about 5 r
+BRIDGE_RADII = 7.0  # two vessels of radius r that cross at 25 degrees share a skeleton of about so many r
 BRIDGE_PX = 6.0
 ARM_RADII, ARM_LEAST_PX = 4.0, 8.0  # an arm tells its direction and depth over so much of its length
 ARM_SAMPLES = 9

@@ -1,42 +1,42 @@
 """Weights that tell crossings from branchings, made by benchmarks/train_crossings.py and not by hand.
 
-Trained on 1269 places where four arms meet, 575 of them crossings, in phantoms.
+Trained on 1516 places where four arms meet, 497 of them crossings, in phantoms.
 """
 
 from collections.abc import Mapping
 
 WITH_CORE: Mapping[str, float] = {
-    "intercept": 1.2478,
-    "turn_max": -1.0602,
-    "turn_min": 0.9796,
-    "miss_max": -1.8011,
-    "unlike_max": -0.7408,
-    "depth_unlike_max": -2.8014,
-    "bridge": 0.3336,
-    "bridge_excess": 0.5721,
-    "two_nodes": -0.0274,
-    "crossing_sine": -0.4898,
-    "sideways_turn": -0.1468,
-    "radius_ratio": 1.0562,
-    "arm_shortest": -0.4081,
-    "core_excess": 9.5245,
-    "core_excess_weighted": 6.0170,
+    "intercept": 6.6715,
+    "turn_max": -1.6138,
+    "turn_min": 1.2992,
+    "miss_max": -2.5095,
+    "unlike_max": -0.1617,
+    "depth_unlike_max": -3.0895,
+    "bridge": 0.2038,
+    "bridge_excess": 0.7602,
+    "two_nodes": -0.3057,
+    "crossing_sine": -3.4804,
+    "sideways_turn": -0.3127,
+    "radius_ratio": 2.2730,
+    "arm_shortest": -1.1449,
+    "core_excess": 9.4294,
+    "core_excess_weighted": 4.5469,
 }
 
 WITHOUT_CORE: Mapping[str, float] = {
-    "intercept": 6.7977,
-    "turn_max": -2.3692,
-    "turn_min": 1.9755,
-    "miss_max": -2.7153,
-    "unlike_max": -0.9692,
-    "depth_unlike_max": -2.9997,
-    "bridge": 0.0731,
-    "bridge_excess": 0.2302,
-    "two_nodes": 0.2150,
-    "crossing_sine": 2.0025,
-    "sideways_turn": -0.2469,
-    "radius_ratio": 1.1341,
-    "arm_shortest": -1.6287,
+    "intercept": 11.5387,
+    "turn_max": -2.4625,
+    "turn_min": 1.9452,
+    "miss_max": -3.3887,
+    "unlike_max": -0.3644,
+    "depth_unlike_max": -3.9378,
+    "bridge": -0.1002,
+    "bridge_excess": 0.5048,
+    "two_nodes": 0.4675,
+    "crossing_sine": -1.4035,
+    "sideways_turn": -0.1762,
+    "radius_ratio": 2.6751,
+    "arm_shortest": -2.5168,
     "core_excess": 0.0000,
     "core_excess_weighted": 0.0000,
 }
