@@ -24,7 +24,7 @@ GAP_PASSES, GAP_STEPS, GAP_CORE_PX = 3, 14, 1
 TAIL_SHARE = (
     0.3  # of the strongest contrast nearby: less, and not clear, is a lobe of the filter beside or past a vessel
 )
-TAIL_SIGMAS = 6.0  # the elongated kernels, 3 sigma wide along, cast lobes this far
+TAIL_SIGMAS = 4.0  # the elongated kernels, 3 sigma wide along, cast lobes this far
 NEAR_BLOCK_PX = 4
 BRIDGE_STEPS = 8  # pixels of a line whose shape a crossing or branching spoils are kept between good ones
 BORDER_PX = 12  # and so they are on the way to the border of the field, where one flank is only a mirror image

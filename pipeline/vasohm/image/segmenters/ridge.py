@@ -37,6 +37,8 @@ SPARSE_SHARE = 0.3  # of the field must be away from vessels for the flipped pic
 AWAY_PX, AWAY_SIGMAS, AWAY_BLOCK_PX = 6.0, 3.0, 4  # how far the flanks of a vessel reach, and how finely that is drawn
 LEAST_PIECE_PX = 8  # ridge pixels left of a line after its checks
 LEAST_ALONE_PX = 20  # extent of a piece that touches no other: shorter ones are specks; where there is texture, longer
+# In a strip, the mirror images beyond its long borders draw chance lines across it out; vessels run along it
+STRIP_SHAPE, STRIP_WIDTHS = 4, 1.5
 HOLE_PX = 12  # smaller holes in the mask are artefacts of thick junctions
 BUNDLE_SIGMAS = 0.8  # a wide filter whose line is much narrower than itself has answered to a bundle of thin vessels
 BLOB_SIGMAS = (
@@ -101,7 +103,9 @@ def segment_ridges(prepared: PreparedImage, parameters: Mapping[str, float]) -> 
         )
     mask &= prepared.fov
     mask = ndimage.binary_closing(mask, structure=np.ones((3, 3), dtype=bool)) & prepared.fov
-    return _without_small(mask, LEAST_ALONE_PX * thin_vessels.texture)
+    narrow, wide_px = sorted(mask.shape)
+    across = STRIP_WIDTHS * narrow if wide_px > STRIP_SHAPE * narrow else 0.0
+    return _without_small(mask, max(LEAST_ALONE_PX * thin_vessels.texture, across))
 
 
 @dataclass(frozen=True, slots=True, eq=False)
