@@ -14,6 +14,7 @@ from vasohm.network.radius import MeasuredGraph
 
 SCHEMES = ("strahler", "diameter")
 MOST_TURNS = 100
+ROUNDING = 1e-9  # vessels of one calibre are not above their own mean
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -239,7 +240,7 @@ def _limits(order: IntArray, rooting: Rooting, shape: tuple[int, int]) -> FloatA
     sd = np.where(count > 1, sd, 0.0)
     upper, lower = (mean + sd).reshape(shape), (mean - sd).reshape(shape)
     limit = np.full(shape, np.inf)
-    limit[:, :-1] = 0.5 * (upper[:, :-1] + lower[:, 1:])
+    limit[:, :-1] = 0.5 * (upper[:, :-1] + lower[:, 1:]) * (1 + ROUNDING)
     return np.where(np.isfinite(limit), limit, np.inf)
 
 
