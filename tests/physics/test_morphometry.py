@@ -12,10 +12,10 @@ def test_tortuosity_of_arcs():
     vessels, nodes = [], []
     for k, turn in enumerate(turns):
         at = np.linspace(0, turn, 2001)
-        path = 100.0 * np.stack([np.cos(at), np.sin(at)], axis=1) + [500.0 * k, 0.0]
+        path = 100.0 * np.stack([np.cos(at), np.sin(at)], axis=1) + [110.0 + 220.0 * k, 110.0]
         nodes += [tuple(path[0]), tuple(path[-1])]
         vessels.append(Vessel(2 * k, 2 * k + 1, path, np.full(2001, 5.0)))
-    nodes += [(0.0, 900.0), (100.0, 930.0)]
+    nodes += [(10.0, 400.0), (110.0, 430.0)]
     vessels.append(straight(nodes, 4, 5, 5.0))
     found = shape_of(bed(nodes, vessels))
     polygon = (np.pi / 2000) ** 2 / 24  # a polygon of 2000 sides is shorter than its arc by this part
