@@ -10,7 +10,7 @@ from vasohm.image.prepare import PreparedImage
 from vasohm.network.graph import JUNCTION_RADII, NodeKind, VesselGraph, end_radius
 from vasohm.network.paths import arc_length, offsets_of
 
-BRIDGE_RADII = 7.0  # two vessels of radius r that cross at 25 degrees share a skeleton of about so many r
+BRIDGE_RADII = 7.0  # two vessels of radius r that cross at 30 degrees share a skeleton of about so many r
 BRIDGE_PX = 6.0
 ARM_RADII, ARM_LEAST_PX = 4.0, 8.0  # an arm tells its direction and depth over so much of its length
 ARM_SAMPLES = 9
@@ -22,7 +22,10 @@ LEAST_LIGHT = 0.02  # share of light below which a dark vessel's density is only
 LEAST_EXCESS, LARGEST_EXCESS = -0.6, 1.2  # beyond these a place tells no more
 LEAST_DEPTH = 1e-6
 MISS_GAIN = 3.0  # of a logarithm: near 0 every pixel of a miss counts, far off none does
-BRIDGE_GAIN = 1.3
+# In the skeleton of two bars of radius r that cross at 45 to 60 degrees the bridge is about 1.3 r / tan(angle / 2);
+# in flatter crossings it is longer, and blur widens the bars.
+BRIDGE_GAIN, FLAT_BRIDGE_GAIN = 1.3, 2.2
+LEAST_HALF_TANGENT = 0.18  # flatter than 20 degrees nothing is told
 EXCESS_OF_BRIDGE = (-2.0, 4.0)
 OVERLAP_UPTO = 1.5  # a bridge too long for its angle by more than three radii is a vessel, and no overlap's darkness
 ANGLES = np.arange(8) * np.pi / 4
@@ -139,9 +142,11 @@ def find_meetings(graph: VesselGraph, arms: Arms) -> Meetings:
     around = np.argsort(np.arctan2(away[:, :, 1], away[:, :, 0]), axis=1, kind="stable")
     side = np.take_along_axis(np.broadcast_to([0, 0, 1, 1], ends.shape), around, axis=1)
     apart = (side[:, 0] != side[:, 2]) & (side[:, 1] != side[:, 3])
-    within = span <= BRIDGE_RADII * arms.radius_px[ends].mean(axis=1) + BRIDGE_PX
-    keep = (bridge < 0) | (apart & within)
     ends = np.take_along_axis(ends, around, axis=1)
+    radius = arms.radius_px[ends].mean(axis=1)
+    flat = span * _crossing_angle(arms.towards[ends])[1] <= FLAT_BRIDGE_GAIN * (radius + 1)
+    within = flat | (span <= BRIDGE_RADII * radius + BRIDGE_PX)
+    keep = (bridge < 0) | (apart & within)
     return Meetings(ends[keep], nodes[keep], bridge[keep], span[keep], x[keep], y[keep])
 
 
@@ -161,12 +166,13 @@ def describe(meetings: Meetings, arms: Arms, overlap: Overlap) -> FloatArray:
     miss = np.stack([_miss(start, towards, k) for k in (0, 1)], axis=1)
     unlike = np.abs(np.log(radius[:, :2] / radius[:, 2:]))
     vessel_radius = np.sqrt(radius[:, :2] * radius[:, 2:])
-    sine, expected = _crossing_angle(towards)
+    sine, half_tangent = _crossing_angle(towards)
     depth = overlap.arm_depth
     fainter, deeper = overlap.vessel_depth.min(axis=1), overlap.vessel_depth.max(axis=1)
     excess = np.clip((overlap.core_depth - deeper) / fainter, LEAST_EXCESS, LARGEST_EXCESS)
     mean_radius = radius.mean(axis=1)
     bridge = meetings.bridge_px / (mean_radius + 1)
+    expected = BRIDGE_GAIN / np.maximum(half_tangent, BRIDGE_GAIN / BRIDGE_RADII) - BRIDGE_GAIN
     too_long = np.clip(bridge - expected, *EXCESS_OF_BRIDGE)
     excess = excess * np.clip(OVERLAP_UPTO - 0.5 * too_long, 0.0, 1.0)
     return np.column_stack((
@@ -187,16 +193,12 @@ def _turn(one: FloatArray, other: FloatArray) -> FloatArray:
 
 
 def _crossing_angle(towards: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Sine of the angle between the two ways through, and the bridge in radii that such a crossing leaves.
-
-    In the skeleton of two bars of radius r the bridge is about 1.3 r / tan(angle / 2).
-    """
+    """Sine of the angle between the two ways through, and the tangent of half of it."""
     way = towards[:, :2] - towards[:, 2:]
     way = way / np.maximum(np.hypot(way[..., 0], way[..., 1]), 1e-9)[..., None]
     sine = np.abs(way[:, 0, 0] * way[:, 1, 1] - way[:, 0, 1] * way[:, 1, 0])
     cosine = np.abs((way[:, 0] * way[:, 1]).sum(axis=1))
-    half_tangent = sine / (1 + cosine)
-    return sine, BRIDGE_GAIN / np.maximum(half_tangent, BRIDGE_GAIN / BRIDGE_RADII) - BRIDGE_GAIN
+    return sine, np.maximum(sine / (1 + cosine), LEAST_HALF_TANGENT)
 
 
 def _miss(start: FloatArray, towards: FloatArray, k: int) -> FloatArray:
