@@ -58,6 +58,7 @@ NARROWEST_RATIO = (
     0.6  # and below this share of the smallest: half-height widths of projected tubes are 0.87 of the lumen's
 )
 RIM_SHARE, LEAST_AT_RIM_PX = 0.5, 50  # a piece that lies more than so much at the border of the field must be so long
+LEAST_AWAY_PX = 12  # or look like a vessel for so long before it reaches the border
 ROOMY_BORDERS = 10  # in smaller pictures everything is near the border
 WIDE_BALANCE = 0.7  # weaker side over stronger of a wide vessel: beside it the background is the same on both sides
 LEAST_SHAPED = 0.38  # of the length of a piece: where less looks like a vessel, the rest was filled in between specks
@@ -270,7 +271,8 @@ def _holds_together(
     share = np.bincount(piece, weights=good & shaped, minlength=n_pieces) / length
     long = length >= np.maximum(LEAST_PIECE_PX, LEAST_LENGTH_RADII * mean_width)
     rim_share = np.bincount(piece, weights=good & at_rim, minlength=n_pieces) / length
-    shade = (rim_share > RIM_SHARE) & (length < LEAST_AT_RIM_PX)
+    away = np.bincount(piece, weights=good & shaped & ~at_rim, minlength=n_pieces)
+    shade = (rim_share > RIM_SHARE) & (length < LEAST_AT_RIM_PX) & (away < LEAST_AWAY_PX)
     return np.asarray((long & ~shade & (share >= LEAST_SHAPED))[piece])
 
 
