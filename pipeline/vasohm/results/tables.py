@@ -83,6 +83,14 @@ class ImageTables:
         return self.tables["branchings"]
 
     @property
+    def orders(self) -> pd.DataFrame:
+        return self.tables["orders"]
+
+    @property
+    def classes(self) -> pd.DataFrame:
+        return self.tables["classes"]
+
+    @property
     def crossings(self) -> pd.DataFrame:
         return self.tables["crossings"]
 
