@@ -125,7 +125,8 @@ def describe_classes(
         chosen = graph.vessel_class == kind if kind else np.ones(graph.n_segments, dtype=bool)
         if not chosen.any():
             continue
-        filling = describe_filling(pixels & (nearest == kind), fov, measured.pixel_size_um) if kind else None
+        own = pixels & (nearest == kind) if kind else pixels
+        filling = describe_filling(own, fov, measured.pixel_size_um, seek_avascular=False) if kind else None
         found.append(ClassShape(kind, None, None, summarise(shapes, chosen), filling))
         for k, (low, high) in enumerate(pairwise(limits)):
             within = chosen & (calibre == k)

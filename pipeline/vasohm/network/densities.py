@@ -70,7 +70,9 @@ class Filling:
     scales: Scales
 
 
-def describe_filling(vessels: BoolArray, fov: BoolArray, pixel_size_um: float) -> Filling:
+def describe_filling(
+    vessels: BoolArray, fov: BoolArray, pixel_size_um: float, *, seek_avascular: bool = True
+) -> Filling:
     """Describe how vessel pixels fill the field of view.
 
     Parameters
@@ -79,6 +81,8 @@ def describe_filling(vessels: BoolArray, fov: BoolArray, pixel_size_um: float) -
         Vessel pixels, and pixels of the field of view; only what lies in it counts.
     pixel_size_um : float
         Edge of a pixel.
+    seek_avascular : bool
+        Whether the largest avascular area is looked for; it has little meaning for one class of vessels.
 
     Returns
     -------
@@ -94,7 +98,7 @@ def describe_filling(vessels: BoolArray, fov: BoolArray, pixel_size_um: float) -
     known = scales.lacunarity[np.isfinite(scales.lacunarity)]
     return Filling(
         distances=tissue_distances(squared_px2, seen, inside, fov, pixel_size_um),
-        avascular=avascular_area(squared_px2, inside, fov, pixel_size_um),
+        avascular=avascular_area(squared_px2, inside, fov, pixel_size_um) if seek_avascular else NO_AVASCULAR_AREA,
         dimension=fit_dimension(scales),
         lacunarity=float(known.mean()) if known.size else np.nan,
         scales=scales,
@@ -236,9 +240,10 @@ def _lacunarity(mass: IntArray, room: IntArray, edge: int) -> float:
         low, high = total[:-edge:step], total[edge::step]
         return (high[:, edge::step] - high[:, :-edge:step]) - (low[:, edge::step] - low[:, :-edge:step])
 
-    held = sums(mass)[sums(room) == edge * edge].astype(float)
-    mean = held.mean() if held.size else 0.0
-    return float(np.mean(np.square(held)) / mean**2) if mean > 0 else np.nan
+    whole = sums(room) == edge * edge
+    held = (sums(mass) * whole).astype(float).ravel()
+    total = held.sum()
+    return float(np.count_nonzero(whole) * (held @ held) / total**2) if total > 0 else np.nan
 
 
 def fit_dimension(scales: Scales) -> BoxDimension:
