@@ -75,8 +75,8 @@ def test_noise_gives_no_more_false_centreline_than_the_study_allows():
 @pytest.mark.slow
 @pytest.mark.parametrize("kind", KINDS)
 def test_each_kind_of_noise_keeps_the_promise_within_a_factor(kind):
-    """The promise is an upper bound within a factor 2 for each kind of noise, over 4 MP."""
-    rates = np.array([false_lines([kind], DEFAULT_FALSE_PX, seed) for seed in range(100, 116)]).mean(axis=0)
+    """The promise is an upper bound within a factor 2 for each kind of noise, over 1.6 MP."""
+    rates = np.array([false_lines([kind], DEFAULT_FALSE_PX, seed) for seed in range(100, 106)]).mean(axis=0)
     assert rates[0] <= 2 * DEFAULT_FALSE_PX
     assert rates[1] < 2.0
 

@@ -26,6 +26,7 @@ TAIL_SHARE = (
 )
 TAIL_SIGMAS = 4.0  # the elongated kernels, 3 sigma wide along, cast lobes this far
 NEAR_BLOCK_PX = 4
+PAINT_CELLS = 300_000  # looked at together
 BRIDGE_STEPS = 8  # pixels of a line whose shape a crossing or branching spoils are kept between good ones
 BORDER_PX = 12  # and so they are on the way to the border of the field, where one flank is only a mirror image
 MOST_SHIFT = 0.5  # of the half width, from the ridge of the filter's answer to the middle between the edges
@@ -158,11 +159,12 @@ def _averaged_sides(
     where their normals point opposite ways, the left side of one belongs to the right side of the other.
     """
     n = len(lines.row)
-    out = np.arange(half + 1)
-    direction = np.repeat([1.0, -1.0], n)[:, None] * out[None, :]
-    x = np.tile(lines.x_px, 2)[:, None] + direction * np.tile(lines.normal_x, 2)[:, None]
-    y = np.tile(lines.y_px, 2)[:, None] + direction * np.tile(lines.normal_y, 2)[:, None]
-    sides = ndimage.map_coordinates(image, [y, x], order=1, mode="mirror", output=np.float32)
+    x, y = np.tile(lines.x_px, 2), np.tile(lines.y_px, 2)
+    outward_x, outward_y = (np.concatenate((part, -part)) for part in (lines.normal_x, lines.normal_y))
+    sides = np.empty((2 * n, half + 1), np.float32)
+    for step in range(half + 1):  # one distance at a time: coordinates of all would be the largest arrays of the image
+        at = [y + step * outward_y, x + step * outward_x]
+        sides[:, step] = ndimage.map_coordinates(image, at, order=1, mode="mirror", output=np.float32)
     i, j = pairs[:, 0], pairs[:, 1]
     same = lines.normal_x[i] * lines.normal_x[j] + lines.normal_y[i] * lines.normal_y[j] >= 0
     first = np.concatenate((i, i + n))
@@ -196,13 +198,15 @@ def paint(shape: tuple[int, int], x_px: FloatArray, y_px: FloatArray, radius_px:
     mask = np.zeros(shape, dtype=bool)
     size = np.ceil(radius_px).astype(np.int64)
     for reach in np.unique(size):
-        these = np.nonzero(size == reach)[0]
         span = np.arange(-reach - 1, reach + 2)
-        row = np.rint(y_px[these]).astype(np.int64)[:, None, None] + span[None, :, None]
-        column = np.rint(x_px[these]).astype(np.int64)[:, None, None] + span[None, None, :]
-        distance2 = (row - y_px[these, None, None]) ** 2 + (column - x_px[these, None, None]) ** 2
-        inside = distance2 <= radius_px[these, None, None] ** 2
-        inside &= (row >= 0) & (row < shape[0]) & (column >= 0) & (column < shape[1])
-        where = np.nonzero(inside)
-        mask[row[where[0], where[1], 0], column[where[0], 0, where[2]]] = True
+        every = np.nonzero(size == reach)[0]
+        at_once = max(1, PAINT_CELLS // len(span) ** 2)
+        for these in (every[start : start + at_once] for start in range(0, len(every), at_once)):
+            row = np.rint(y_px[these]).astype(np.int64)[:, None, None] + span[None, :, None]
+            column = np.rint(x_px[these]).astype(np.int64)[:, None, None] + span[None, None, :]
+            distance2 = (row - y_px[these, None, None]) ** 2 + (column - x_px[these, None, None]) ** 2
+            inside = distance2 <= radius_px[these, None, None] ** 2
+            inside &= (row >= 0) & (row < shape[0]) & (column >= 0) & (column < shape[1])
+            where = np.nonzero(inside)
+            mask[row[where[0], where[1], 0], column[where[0], 0, where[2]]] = True
     return mask

@@ -12,6 +12,7 @@ from vasohm.image.bank import N_ANGLES, ScaleResponse
 RIDGE_STEP_PX = 0.55  # a ridge passes through a pixel if the Newton step to it is no longer than this
 LOW_THRESHOLD = 3.8  # in noise units: where a line may begin and end
 JOIN_THRESHOLD = 3.2  # in noise units: weaker places break a line
+CHUNK = 100_000  # pixels looked at together
 CLEAR_SHARE, CLEARLY_SEEN = 0.6, 12.0  # of the strongest scale, and in noise units: enough to speak on width
 
 
@@ -133,6 +134,20 @@ def ridge_lines(strength: Float32Array, found: Strength, where: BoolArray) -> Ri
     """
     padded = np.pad(strength, 2, mode="edge")
     row, column = np.nonzero((strength > JOIN_THRESHOLD) & where)
+    found_at = [
+        _on_ridge(padded, found, row[i : i + CHUNK], column[i : i + CHUNK]) for i in range(0, len(row) or 1, CHUNK)
+    ]
+    row, column, x_px, y_px, normal_x, normal_y, sigma, excess = (
+        np.concatenate(part) for part in zip(*found_at, strict=True)
+    )
+    line = _joined(neighbours(strength.shape, row, column), excess)
+    n_lines = int(line.max(initial=-1)) + 1
+    lines = RidgePixels(row, column, x_px, y_px, normal_x, normal_y, sigma, excess, line, n_lines)
+    return lines.keep(line >= 0)
+
+
+def _on_ridge(padded: Float32Array, found: Strength, row: IntArray, column: IntArray) -> tuple[AnyArray, ...]:
+    """Those of some pixels through which a ridge passes: row, column, x, y, normal, scale, excess."""
     sigma, angle = _scale_and_angle(found, row, column)
     normal_x, normal_y = -np.sin(np.pi / N_ANGLES * angle), np.cos(np.pi / N_ANGLES * angle)
     centre = padded[row + 2, column + 2].astype(np.float64)
@@ -140,16 +155,10 @@ def ridge_lines(strength: Float32Array, found: Strength, where: BoolArray) -> Ri
     behind = _at(padded, row + 2 - normal_y, column + 2 - normal_x)
     bend = ahead - 2 * centre + behind
     step = np.where(bend < 0, -(ahead - behind) / (2 * np.where(bend < 0, bend, -1)), np.inf)
-    on_ridge = np.abs(step) <= RIDGE_STEP_PX
-    row, column, step = row[on_ridge].astype(np.int64), column[on_ridge].astype(np.int64), step[on_ridge]
-    normal_x, normal_y = normal_x[on_ridge], normal_y[on_ridge]
-    excess = centre[on_ridge] - LOW_THRESHOLD
-    line = _joined(neighbours(strength.shape, row, column), excess)
-    lines = RidgePixels(
-        row, column, column + step * normal_x, row + step * normal_y, normal_x, normal_y, sigma[on_ridge], excess,
-        line, int(line.max(initial=-1)) + 1,
-    )  # fmt: skip
-    return lines.keep(line >= 0)
+    here = np.abs(step) <= RIDGE_STEP_PX
+    row, column, step, normal_x, normal_y = (part[here] for part in (row, column, step, normal_x, normal_y))
+    x_px, y_px, excess = column + step * normal_x, row + step * normal_y, centre[here] - LOW_THRESHOLD
+    return row, column, x_px, y_px, normal_x, normal_y, sigma[here], excess
 
 
 def _joined(pairs: IntArray, excess: FloatArray) -> IntArray:
