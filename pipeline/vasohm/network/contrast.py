@@ -92,7 +92,9 @@ def _population(value: FloatArray, variance: FloatArray) -> tuple[float, float, 
     middle = np.median(value)
     scale = max(1.4826 * float(np.median(np.abs(value - middle))), SMALLEST_SPREAD)
     keep = np.abs(value - middle) < 4 * np.sqrt(scale**2 + variance)
-    if keep.mean() < 1 - MOST_ODD:  # too many to be odd: vessels of this picture do differ so much
+    if np.sum(~keep) > max(
+        MOST_ODD * n, float(n > FEW)
+    ):  # too many to be odd: vessels of this picture do differ so much
         keep = np.ones(n, np.bool_)
     between = SMALLEST_SPREAD**2
     for _ in range(10):

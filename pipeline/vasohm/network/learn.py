@@ -4,9 +4,9 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from vasohm.arrays import BoolArray, FloatArray
+from vasohm.arrays import BoolArray, FloatArray, IntArray
 from vasohm.flags import Flag
-from vasohm.network.blur import START_PX, ImageOptics, OpticsRequest, advantage, choose_segments, estimate_optics
+from vasohm.network.blur import START_PX, ImageOptics, OpticsRequest, advantage, estimate_optics
 from vasohm.network.contrast import (
     RESOLVED_SE,
     ContrastPrior,
@@ -21,28 +21,30 @@ from vasohm.network.jointfit import (
     Observed,
     normal_equations,
 )
-from vasohm.network.observe import Scene, observe
+from vasohm.network.observe import Scene, observe, points_of
+from vasohm.network.paths import twice
 from vasohm.network.pilot import Guess, bridge, segment_quantile
+from vasohm.network.pooled import ROWS, blocks_of, choose_segments, mean_of_block, pool, spaced, widest_of_block
 from vasohm.network.priors import Expected, make_priors
 from vasohm.network.profiles import (
-    FAMILIES,
     Optics,
     ProfileTable,
     profile_table,
     total_blur_px,
 )
 from vasohm.network.shared import parameters_of, table_like
-from vasohm.network.strips import TubeLines
+from vasohm.network.strips import TubeLines, make_frame
 
 ASSUMED_PSF_PX, ASSUMED_REL_SE = 0.9, 0.25  # where the picture cannot tell: sampled as most microscopes and cameras are
 TYPED_REL_SE = 0.05  # a typed blur comes without uncertainty
+CALM_PX = 6.0  # of smoothing lines: strips aligned to the noise under them would look sharper than the vessel is
 ASSUMED_ABSORPTION_SE = 0.7  # of ln mu, a factor of two
 RESOLVED_BLURS, RESOLVED_PX = 1.5, 1.8  # medians of radius from which a segment shows blur and contrast
-FAMILY_BLURS = 2.5  # some vessel must be so wide before slab and cylinder can be told apart
-MOST_POINTS = 2400  # of resolved segments that are asked for blur, profile and contrast
+MOST_POINTS = 4000  # of resolved segments that are asked for blur, profile and contrast
 WORST_BLUR_SE = 0.25  # of ln blur: beyond, the assumed one is better
 FREE_SPREAD = 300.0  # sd of ln contrast that says nothing, whatever the family's units
 PROFILE_SE = 0.08  # of ln r: half of what slab and cylinder differ by
+FORM_SE = 0.004  # of ln r: light is lost by scattering too, so that no absorption fits exactly (.3 to .7 % on phantoms)
 REFLEX_BLURS = 3.0  # narrower vessels cannot show a reflex apart from their rims
 LOWEST_REFLEX = 0.05  # median of wide segments from which it is one
 REFLEX_SPREAD, SMALLEST_REFLEX_SPREAD = 0.5, 0.03  # sd: of a vessel that tells itself, and of those that do not
@@ -51,7 +53,7 @@ FIRST_REFLEX = 0.1  # height from which a reflex is searched
 REFLEX_GAIN = (
     10.0,
     0.08,
-)  # of log likelihood, and of it a point, from which reflexes are believed; noise gives 0.02 to 0.05
+)  # of log likelihood, and of it a px, from which reflexes are believed; noise gives 0.02 to 0.05
 
 
 @dataclass(frozen=True, slots=True)
@@ -71,6 +73,7 @@ class ImageKnowledge:
     covariance: FloatArray  # of ln blur, ln absorption
     contrast: ContrastPrior
     reflex: tuple[float, float] | None  # mean height in all vessels, and its spread; None where there is none
+    profile_se: float  # of ln r: that another family may be right
     flags: Flag
 
 
@@ -92,44 +95,65 @@ def learn_image(scene: Scene, guess: Guess, table: ProfileTable, settings: TubeS
         return _nothing_learnt(lines, guess, table, settings)
     wide = 1.5 * float(radius[segments].max())
     table = profile_table(table.optics, wide, int(1.2 * (wide + 3 * max(blur, 3.0) + 3)) + 6)
-    observed, points = observe(scene, segments, first_unknowns(guess), table, alone=True)
-    theta = bridge(first_unknowns(guess)[points], observed.row_scale > 0, observed.segment)
+    observed, theta = _pooled_strips(scene, segments, first_unknowns(guess), table)
     told, reflex, flags = _tell_optics(observed, table, theta, settings)
     table = table_like(table, told.optics)
     none = np.zeros(len(segments))
-    priors = make_priors(observed, table, told.theta, reflex or _contrast_unknown(observed, told.theta, none, none + 1))
+    expected = reflex or _contrast_unknown(observed, told.theta, none, none + 1)
+    priors = spaced(make_priors(observed, table, told.theta, expected))
     normal = normal_equations(observed, table, told.theta)
     contrast, variance, variance_ln_r = segment_contrasts(observed, priors, told.theta, normal)
     answer = np.stack([segment_mean(observed, column) for column in told.answer[:, LN_C].T], axis=1)
     known = KnownContrasts(lines.vessel_class[segments], contrast, variance, answer)
     known = known.select(told.in_focus & (variance_ln_r < RESOLVED_SE**2))
     prior = learn_contrast(known, lines.vessel_class, mean_contrast(lines, guess))
-    common = None if reflex is None else (float(np.median(reflex.reflex)), float(np.min(reflex.reflex_sd)))
-    return ImageKnowledge(table_like(full, told.optics), told.covariance, prior, common, flags)
+    common = None if reflex is None else (float(reflex.reflex.max()), float(reflex.reflex_sd.min()))
+    profile_se = told.family_shift
+    if not told.family_told:
+        profile_se = max(profile_se, PROFILE_SE if told.optics.family == "cylinder" else 0.0)
+    if told.optics.family == "absorber":
+        profile_se = float(np.hypot(profile_se, FORM_SE))
+    return ImageKnowledge(table_like(full, told.optics), told.covariance, prior, common, profile_se, flags)
+
+
+def _pooled_strips(
+    scene: Scene, segments: IntArray, theta: FloatArray, table: ProfileTable
+) -> tuple[Observed, FloatArray]:
+    """Average the strips of chosen segments in blocks; their first unknowns."""
+    lines = scene.lines
+    calm_x, calm_y = (twice(line, lines.offsets, CALM_PX) for line in (lines.x_px, lines.y_px))
+    scene = replace(scene, frame=make_frame(calm_x, calm_y, lines.offsets))
+    points, offsets = points_of(lines, segments)
+    first, block_offsets = blocks_of(offsets)
+    even = theta.copy()
+    even[points, LN_R] = widest_of_block(theta[points, LN_R], first)  # strips of a block equally wide
+    observed, _ = observe(scene, segments, even, table, alone=True)
+    bridged = bridge(theta[points], observed.row_scale > 0, observed.segment)
+    return pool(observed, first, block_offsets, scene.covariance), mean_of_block(bridged, first)
 
 
 def _tell_optics(
     observed: Observed, table: ProfileTable, theta: FloatArray, settings: TubeSettings
 ) -> tuple[ImageOptics, Expected | None, Flag]:
     """Estimate the optics; where the picture does not tell blur or family, assume them and say so."""
-    families = FAMILIES if settings.profile == "auto" else (settings.profile,)
+    families: tuple[str, ...] = (settings.profile,)
+    if settings.profile == "auto":
+        families = ("slab", "absorber") if settings.dark else ("slab", "cylinder", "absorber")
     flags = Flag.NONE
     request = OpticsRequest(families, START_PX, None, settings.dark)
     if settings.blur_px is not None:
         request = OpticsRequest(families, (total_blur_px(settings.blur_px),), TYPED_REL_SE, settings.dark)
         flags |= Flag.ASSUMED_BLUR_SPREAD
     none = np.zeros(observed.n_segments)
-    priors = make_priors(observed, table, theta, _contrast_unknown(observed, theta, none, none + 1))
+    priors = spaced(make_priors(observed, table, theta, _contrast_unknown(observed, theta, none, none + 1)))
     told = estimate_optics(observed, priors, table, theta, request)
     if settings.blur_px is None and told.covariance[0, 0] > WORST_BLUR_SE**2:
         request = OpticsRequest(families, (total_blur_px(ASSUMED_PSF_PX),), ASSUMED_REL_SE, settings.dark)
         flags |= Flag.BLUR_ASSUMED | Flag.ASSUMED_BLUR_SPREAD
         told = estimate_optics(observed, priors, table, theta, request)
-    widest = np.exp(np.quantile(told.theta[:, LN_R], 0.95))
-    if len(families) > 1 and not (told.family_told and widest > FAMILY_BLURS * told.optics.s_px):
+    if not told.family_told:
         flags |= Flag.PROFILE_ASSUMED
-        request = replace(request, families=("cylinder",))
-        told = estimate_optics(observed, priors, table, theta, request)
+        request = replace(request, families=(told.optics.family,))
     reflex = None
     if settings.dark:
         told, reflex = _with_reflex(observed, table, told, request)
@@ -141,7 +165,7 @@ def _with_reflex(
 ) -> tuple[ImageOptics, Expected | None]:
     """Estimate the optics with light reflexes on the axes, if that explains the wide vessels clearly better.
 
-    Wide vessels tell the height of the reflex by themselves; then narrower ones are given what these have in common.
+    Wide vessels tell the height of the reflex by themselves; narrower ones may have the same or none.
     Light is reflected by round surfaces: a slab with a reflex is not asked for unless the study says slab.
     """
     wide = wide_segments(observed, told.theta, told.optics)
@@ -158,20 +182,29 @@ def _with_reflex(
     if (
         common < LOWEST_REFLEX
         or advantage(again.point_cost, told.point_cost, observed.segment)
-        < REFLEX_GAIN[0] + REFLEX_GAIN[1] * wide[observed.segment].sum()
+        < REFLEX_GAIN[0] + REFLEX_GAIN[1] * ROWS * wide[observed.segment].sum()
     ):
         return told, None
     scatter = max(1.4826 * float(np.median(np.abs(high - common))), SMALLEST_REFLEX_SPREAD)
-    expected = _contrast_unknown(observed, again.theta, none + common, np.where(wide, REFLEX_SPREAD, scatter))
+    mean, sd = expected_reflex(wide, (common, scatter))
+    expected = _contrast_unknown(observed, again.theta, mean, np.where(wide, REFLEX_SPREAD, sd))
     theta = again.theta.copy()
-    theta[~wide[observed.segment], REFLEX] = common
-    return _estimate_again(observed, table_like(table, again.optics), theta, expected, request), expected
+    theta[~wide[observed.segment], REFLEX] = mean[~wide].mean() if not wide.all() else 0.0
+    told = _estimate_again(observed, table_like(table, again.optics), theta, expected, request)
+    return told, replace(expected, reflex_sd=sd)
+
+
+def expected_reflex(wide: BoolArray, reflex: tuple[float, float] | None) -> tuple[FloatArray, FloatArray]:
+    """Mean and spread (n_segments,) of the reflex's height: as in wide vessels, or anything from none to that."""
+    common, scatter = reflex or (0.0, 1.0)
+    narrow = max(common / 2, scatter)
+    return np.where(wide, common, common / 2), np.where(wide, scatter, narrow)
 
 
 def _estimate_again(
     observed: Observed, table: ProfileTable, theta: FloatArray, expected: Expected, request: OpticsRequest
 ) -> ImageOptics:
-    priors = make_priors(observed, table, theta, expected)
+    priors = spaced(make_priors(observed, table, theta, expected))
     return estimate_optics(observed, priors, table, theta, request)
 
 
@@ -203,7 +236,8 @@ def _nothing_learnt(lines: TubeLines, guess: Guess, table: ProfileTable, setting
     variances = [blur_se**2, ASSUMED_ABSORPTION_SE**2][: len(parameters_of(optics))]
     nobody = KnownContrasts(np.zeros(0, np.int64), np.zeros(0), np.zeros(0), np.zeros((0, len(variances))))
     prior = learn_contrast(nobody, lines.vessel_class, mean_contrast(lines, guess))
-    return ImageKnowledge(table, np.diag(variances), prior, None, flags)
+    profile_se = PROFILE_SE if settings.profile == "auto" else 0.0
+    return ImageKnowledge(table, np.diag(variances), prior, None, profile_se, flags)
 
 
 def mean_contrast(lines: TubeLines, guess: Guess) -> FloatArray:

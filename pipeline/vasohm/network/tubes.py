@@ -11,7 +11,6 @@ import numpy as np
 
 from vasohm.arrays import BoolArray, Float32Array, FloatArray, IntArray, freeze
 from vasohm.flags import Flag
-from vasohm.network.blur import blur_of_segments
 from vasohm.network.contrast import (
     UNKNOWN_SPREAD,
     segment_contrasts,
@@ -33,13 +32,14 @@ from vasohm.network.learn import (
     ASSUMED_PSF_PX,
     ASSUMED_REL_SE,
     FREE_SPREAD,
-    PROFILE_SE,
     RESOLVED_BLURS,
     ImageKnowledge,
     TubeSettings,
+    expected_reflex,
     first_unknowns,
     learn_image,
     segment_mean,
+    wide_segments,
 )
 from vasohm.network.noise import noise_correlation
 from vasohm.network.observe import Scene, observe
@@ -62,7 +62,7 @@ from vasohm.network.profiles import (
     profile_table,
     total_blur_px,
 )
-from vasohm.network.shared import Marginal, marginalise, optics_response, parameters_of, table_like
+from vasohm.network.shared import Marginal, blur_of_segments, marginalise, optics_response, parameters_of, table_like
 from vasohm.network.strips import SplineOrder, TubeLines, make_frame, make_picture, offset_from, paint_owners, recentre
 
 BLURRED_SIGNS = (5.0, 0.4)  # out of focus: own ln blur above the picture's by so many standard errors, and by so much
@@ -223,11 +223,10 @@ def _typical_cnr(scene: Scene, theta: FloatArray, optics: Optics) -> float:
 
 
 def _priors(observed: Observed, known: ImageKnowledge, theta: FloatArray) -> Priors:
-    reflex, sd = known.reflex or (0.0, 1.0)
-    every = np.ones(observed.n_segments)
+    reflex, sd = expected_reflex(wide_segments(observed, theta, known.table.optics), known.reflex)
     own = segment_mean(observed, theta[:, LN_C])
     contrast = np.where(known.contrast.group >= 0, known.contrast.mean, own)
-    expected = Expected(contrast, known.contrast.spread, reflex * every, sd * every)
+    expected = Expected(contrast, known.contrast.spread, reflex, sd)
     return make_priors(observed, known.table, theta, expected)
 
 
@@ -288,8 +287,8 @@ def _shared_columns(
     principal = np.linalg.cholesky(known.covariance + 1e-12 * np.eye(len(known.covariance)))
     columns[:0] = list((to_optics @ principal).T)
     causes[:0] = ["blur", "absorption"][: len(principal)]
-    if known.flags & Flag.PROFILE_ASSUMED:
-        columns.append(np.full(observed.n_points, PROFILE_SE))
+    if known.profile_se > 0:
+        columns.append(np.full(observed.n_points, known.profile_se))
         causes.append("profile")
     return np.stack(columns, axis=1), tuple(causes)
 
