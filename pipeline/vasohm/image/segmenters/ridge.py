@@ -31,6 +31,7 @@ SMOOTH_POWER = (
     0.8  # of the noise at the second scale over that at the first, where it is above 1: smooth noise forms longer lines
 )
 LEAST_EXCESS = 2.0
+LEAST_FALSE_PX = 0.01  # a megapixel: no finite threshold promises less
 TEXTURE_SHARE = 0.004  # of the found length that the flipped picture may give before thresholds rise
 TEXTURE_STEPS = (1.0, 1.25, 1.5, 1.75, 2.0, 2.5, 3.0)
 SPARSE_SHARE = 0.3  # of the field must be away from vessels for the flipped picture to tell anything
@@ -151,7 +152,7 @@ class Seen:
 
 def _least_excess(noise: tuple[float, float], false_px: float) -> float:
     slope, reference = noise
-    return max(LEAST_EXCESS, slope * float(np.log(reference / false_px))) if false_px > 0 else np.inf
+    return max(LEAST_EXCESS, slope * float(np.log(reference / max(false_px, LEAST_FALSE_PX))))
 
 
 def _fine_contrast(fine: Sequence[ScaleResponse], wide: Strength) -> Float32Array:
