@@ -137,6 +137,7 @@ def make_measured(n_segments: int) -> MeasuredGraph:
         chord_um=length,
         segment_flags=whole(0, 0, Flag.SHORT)[:n_segments],
         blur_px=1.2 if n_segments else math.nan,
+        blur_se_px=0.03 if n_segments else math.nan,
         profile="cylinder",
         image_contrast=0.2,
         flags=Flag.PROFILE_ASSUMED,
@@ -757,11 +758,12 @@ def test_a_blur_that_the_picture_does_not_tell_says_nothing_of_its_focus() -> No
         measured = replace(findings.measured, flags=flag | Flag.OUT_OF_FOCUS)
         image = tabulate("a", {}, replace(findings, measured=measured)).image.iloc[0]
         assert np.isnan(image["blur_px"])
+        assert np.isnan(image["blur_se_px"])
         assert image["focus_ok"] is None
         assert "out_of_focus" not in image["flags"]
     blurred = replace(findings.measured, flags=Flag.OUT_OF_FOCUS)
     image = tabulate("a", {}, replace(findings, measured=blurred)).image.iloc[0]
-    assert (image["blur_px"], image["focus_ok"]) == (1.2, False)
+    assert (image["blur_px"], image["blur_se_px"], image["focus_ok"]) == (1.2, 0.03, False)
     bare = make_findings(0)
     nothing = replace(bare, measured=replace(bare.measured, blur_px=0.9, flags=Flag.NONE))
     image = tabulate("a", {}, nothing).image.iloc[0]

@@ -59,7 +59,8 @@ PROMISED = {
         inflections_per_mm,
         tissue_distance_mean_um, tissue_distance_sd_um, tissue_distance_p05_um, tissue_distance_median_um,
         tissue_distance_p95_um, avascular_area_um2, avascular_radius_um, avascular_x_px, avascular_y_px, box_dimension,
-        box_dimension_se, box_least_px, box_most_px, lacunarity, profile, blur_px, noise, contrast,
+        box_dimension_se, box_least_px, box_most_px, lacunarity, profile, blur_px, blur_se_px, noise,
+        contrast,
         saturated_fraction, invalid_fraction, focus_ok, exposure_ok, flags""",
     "failures": "image_id, stage, error, message",
 }

@@ -130,6 +130,7 @@ def bed(
         chord_um=np.hypot(*(path[last] - path[first]).T) * pixel_size_um if n else np.zeros(0),
         segment_flags=np.zeros(n, dtype=np.int64),
         blur_px=1.0,
+        blur_se_px=0.02,
         profile="cylinder",
         image_contrast=0.2,
         flags=Flag.NONE,

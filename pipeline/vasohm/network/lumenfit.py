@@ -50,6 +50,7 @@ class LumenFit:
     covariance: RadiusCovariance
     noise_sign: int
     blur_px: float  # NaN where it is not known
+    blur_se_px: float
     profile: str
     flags: Flag  # of the image
 
@@ -103,6 +104,7 @@ def fit_lumens(graph: VesselGraph, prepared: PreparedImage, settings: RadiusSett
         covariance=DrawnCovariance(found.covariance, len(fitted), source, np.ones(graph.n_points)),
         noise_sign=1,
         blur_px=found.blur_px,
+        blur_se_px=found.blur_se_px,
         profile=found.profile,
         flags=found.flags,
     )

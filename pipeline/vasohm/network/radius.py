@@ -50,7 +50,8 @@ class MeasuredGraph:
     length_random_se_um: FloatArray
     chord_um: FloatArray
     segment_flags: IntArray  # (n_segments,)
-    blur_px: float
+    blur_px: float  # of the optics alone
+    blur_se_px: float
     profile: str
     image_contrast: float  # median over the points, in units of the prepared signal; NaN without vessels
     flags: Flag  # of the image
@@ -102,6 +103,7 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
         chord_um=chord_px * pixel,
         segment_flags=_segment_flags(cut, flags, length_px, radius_um / pixel, quadrature(random_se, *shared.T)),
         blur_px=fit.blur_px,
+        blur_se_px=fit.blur_se_px,
         profile=fit.profile,
         image_contrast=float(np.median(fit.contrast[kept])) if kept.any() else np.nan,
         flags=fit.flags | _focus(fit, settings, pixel),

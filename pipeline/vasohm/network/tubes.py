@@ -105,7 +105,6 @@ class TubeFit:
     blur_se_px: float
     profile: str
     mu_per_px: float
-    noise_factor: float  # variance of radii over that under independent noise of the stated size
     flags: Flag  # of the image
 
     def __post_init__(self) -> None:
@@ -250,7 +249,6 @@ def _report(
     shared, causes = _shared_columns(observed, known, factored, priors, marginal)
     psf = optical_blur_px(optics.s_px, scene.picture.order)
     blur_se = float(np.sqrt(known.covariance[0, 0])) * optics.s_px**2 / max(psf, 0.3)
-    factors = scene.noise.at(theta[:, LN_R])
     return TubeFit(
         theta[:, LN_R].copy(),
         np.sqrt(point_variance(observed, priors, normal) + doubt.point_variance(observed.segment)),
@@ -264,7 +262,6 @@ def _report(
         blur_se,
         optics.family,
         optics.mu_per_px,
-        float(np.median(factors)),
         known.flags,
     )
 
@@ -343,6 +340,5 @@ def _no_tubes(settings: TubeSettings) -> TubeFit:
         ASSUMED_REL_SE * blur,
         family,
         float("nan"),
-        1.0,
         flags,
     )

@@ -39,6 +39,11 @@ IMAGE: tuple[Column, ...] = (
         "Standard deviation of the Gaussian blur of the picture, as its vessels tell it; empty without vessels and "
         "where it was typed or assumed.",
     ),
+    number(
+        "blur_se_px",
+        "{pixel}",
+        "Standard uncertainty of blur_px, from noise, from the scatter between vessels, and from the doubt of the profile.",
+    ),
     number("noise", "{signal}", "Median standard deviation of a pixel's noise, in the units of contrast."),
     number(
         "contrast", "{signal}", "Typical strength with which the image's vessels stand out, in the units of points.csv."

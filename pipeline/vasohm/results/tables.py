@@ -365,6 +365,7 @@ def _image(findings: Findings) -> dict[str, Any]:
         "n_ends": int(np.sum(kind == NodeKind.END)),
         "profile": measured.profile if measured.graph.n_segments else "",
         "blur_px": measured.blur_px if tells_blur else np.nan,
+        "blur_se_px": measured.blur_se_px if tells_blur else np.nan,
         "noise": prepared.quality.noise,
         "contrast": measured.image_contrast,
         "saturated_fraction": prepared.quality.saturated_fraction,
