@@ -53,7 +53,8 @@ FIRST_REFLEX = 0.1  # height from which a reflex is searched
 REFLEX_GAIN = (
     10.0,
     0.08,
-)  # of log likelihood, and of it a px, from which reflexes are believed; noise gives 0.02 to 0.05
+)  # of log likelihood, and of it a px, from which reflexes are believed; noise gives .02 to .05
+ALIKE = 5.0  # standard errors: where wide vessels agree so well on a reflex, the first of the two is enough
 
 
 @dataclass(frozen=True, slots=True)
@@ -179,13 +180,11 @@ def _with_reflex(
     again = _estimate_again(observed, table_like(table, told.optics), theta, expected, request)
     high = segment_mean(observed, again.theta[:, REFLEX])[wide]
     common = float(np.median(high))
-    if (
-        common < LOWEST_REFLEX
-        or advantage(again.point_cost, told.point_cost, observed.segment)
-        < REFLEX_GAIN[0] + REFLEX_GAIN[1] * ROWS * wide[observed.segment].sum()
-    ):
-        return told, None
     scatter = max(1.4826 * float(np.median(np.abs(high - common))), SMALLEST_REFLEX_SPREAD)
+    alike = common > ALIKE * 1.2533 * scatter / np.sqrt(len(high))  # 1.2533: standard error of a median over a mean's
+    needed = REFLEX_GAIN[0] + (0.0 if alike else REFLEX_GAIN[1] * ROWS * wide[observed.segment].sum())
+    if common < LOWEST_REFLEX or advantage(again.point_cost, told.point_cost, observed.segment) < needed:
+        return told, None
     mean, sd = expected_reflex(wide, (common, scatter))
     expected = _contrast_unknown(observed, again.theta, mean, np.where(wide, REFLEX_SPREAD, sd))
     theta = again.theta.copy()

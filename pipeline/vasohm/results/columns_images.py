@@ -56,8 +56,8 @@ IMAGE: tuple[Column, ...] = (
     number("invalid_fraction", "1", "Share of the picture that is not finite or touches what is not."),
     truth(
         "focus_ok",
-        "The blur is at most 1.5 px, as in any well sampled sharp picture, or at most the smallest radius asked for: of "
-        "a tube thinner than the blur only radius times contrast is seen, not the radius. Empty where blur_px is.",
+        "The blur is at most 1.5 px, as in any well sampled sharp picture, or at most the smallest radius asked for: "
+        "of a tube thinner than the blur only radius times contrast is seen, not the radius. Empty where blur_px is.",
     ),
     truth(
         "exposure_ok",
