@@ -164,9 +164,8 @@ def estimate_optics(
     told = min(gains, default=HOPELESS) > DECISIVE
     if "absorber" in request.families and "absorber" not in fits:
         fits["absorber"] = absorbing = _absorber(case, best)
-        gain = _advantage(case, absorbing, best)
-        if gain > np.log(observed.n_points):
-            told, best = told or gain > DECISIVE, absorbing
+        if _advantage(case, absorbing, best) > DECISIVE + np.log(observed.n_points):
+            told, best = True, absorbing
     if len(request.families) == 1:
         best = fits[request.families[0]]
         return _conclude(case, best, [], told=True)

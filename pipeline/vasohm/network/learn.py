@@ -44,16 +44,14 @@ MOST_POINTS = 4000  # of resolved segments that are asked for blur, profile and 
 WORST_BLUR_SE = 0.25  # of ln blur: beyond, the assumed one is better
 FREE_SPREAD = 300.0  # sd of ln contrast that says nothing, whatever the family's units
 PROFILE_SE = 0.08  # of ln r: half of what slab and cylinder differ by
-FORM_SE = 0.004  # of ln r: light is lost by scattering too, so that no absorption fits exactly (.3 to .7 % on phantoms)
+FORM_SE = 0.004  # of ln r: light is lost by scattering too, so no absorption fits exactly (.3 to .7 % on phantoms)
 REFLEX_BLURS = 3.0  # narrower vessels cannot show a reflex apart from their rims
 LOWEST_REFLEX = 0.05  # median of wide segments from which it is one
 REFLEX_SPREAD, SMALLEST_REFLEX_SPREAD = 0.5, 0.03  # sd: of a vessel that tells itself, and of those that do not
 NO_REFLEX = 1e-3
 FIRST_REFLEX = 0.1  # height from which a reflex is searched
-REFLEX_GAIN = (
-    10.0,
-    0.08,
-)  # of log likelihood, and of it a px, from which reflexes are believed; noise gives .02 to .05
+# of log likelihood, and of it a px, from which reflexes are believed; noise gives .02 to .05
+REFLEX_GAIN = (10.0, 0.08)
 ALIKE = 5.0  # standard errors: where wide vessels agree so well on a reflex, the first of the two is enough
 
 

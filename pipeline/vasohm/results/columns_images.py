@@ -42,7 +42,7 @@ IMAGE: tuple[Column, ...] = (
     number(
         "blur_se_px",
         "{pixel}",
-        "Standard uncertainty of blur_px, from noise, from the scatter between vessels, and from the doubt of the profile.",
+        "Standard uncertainty of blur_px, from noise, the scatter between vessels, and the doubt of the profile.",
     ),
     number("noise", "{signal}", "Median standard deviation of a pixel's noise, in the units of contrast."),
     number(
