@@ -45,8 +45,8 @@ class Graph:
 def trace(scene: Scene) -> Graph:
     """Find the true graph of a scene.
 
-    A child starts where its axis leaves the parent's lumen, that is the points within the parent's radius of the
-    parent's axis; the node stays on the parent's axis. An end node is an inlet where its vessel's axis begins and
+    A child starts where its axis leaves the lumen of its parent, the widest vessel there, that is the points within the
+    parent's radius of the parent's axis; the node stays on the parent's axis. An end node is an inlet where its vessel's axis begins and
     an outlet where it ends, because axes run with the flow.
     """
     degree = scene.degree
@@ -99,17 +99,9 @@ def _kind(scene: Scene, index: int, degree: IntArray) -> str:
 
 
 def parent_of(scene: Scene, node: int) -> Vessel:
-    """The vessel that the others at a branching spring from.
-
-    It is the one whose flow alone comes in, or alone goes out; where that does not single one out, the widest.
-    """
+    """The vessel whose lumen the others at a branching spring from: the widest where they meet."""
     here = [v for v in scene.vessels if node in (v.node_a, v.node_b)]
-    incoming = [v for v in here if v.node_b == node]
-    outgoing = [v for v in here if v.node_a == node]
-    for alone, others in ((incoming, outgoing), (outgoing, incoming)):
-        if len(alone) == 1 and len(others) > 1:
-            return alone[0]
-    return max(here, key=lambda v: float(np.mean(v.radius_px)))
+    return max(here, key=lambda v: float(v.radius_px[0 if v.node_a == node else -1]))
 
 
 def _start(scene: Scene, vessel: Vessel, degree: IntArray, *, end: int) -> float:

@@ -44,7 +44,6 @@ NOTHING_GAINED = 0.005  # of log likelihood: a step of a tenth of a standard dev
 FAMILY_BLURS = 2.5  # some vessel must be so wide before slab and round can be told apart
 DECISIVE = 6.0  # difference of log likelihood between slab and round from which the image has told its family
 ODD_STRIP = 4.0  # times the cost of the segment's median strip: noise alone never gives so much
-LARGEST_VOTE = 2.0  # of a strip: a light that is in no model must not outvote all others
 VAGUE_SE = 2.0  # of ln blur and ln absorption before the picture is asked
 # sd of ln absorption below and above what Beer and Lambert's law gives: scattered and stray light only raise it, and
 # a power law of the camera leaves it
@@ -242,7 +241,7 @@ def advantage(of: FloatArray, over: FloatArray, segment: IntArray) -> float:
         return 0.0
     usual = median_by(segment[seen], least[seen], int(segment.max()) + 1)
     votes = seen & (least <= ODD_STRIP * np.nan_to_num(usual)[segment])
-    return float(np.sum(np.clip(over[votes] - of[votes], -LARGEST_VOTE, LARGEST_VOTE)))
+    return float(np.sum(over[votes] - of[votes]))
 
 
 def _first(case: _Case, start: FloatArray, family: str) -> _Fit:

@@ -49,6 +49,7 @@ REFLEX_BLURS = 3.0  # narrower vessels cannot show a reflex apart from their rim
 LOWEST_REFLEX = 0.05  # median of wide segments from which it is one
 REFLEX_SPREAD, SMALLEST_REFLEX_SPREAD = 0.5, 0.03  # sd: of a vessel that tells itself, and of those that do not
 NO_REFLEX = 1e-3
+SHARPER = 0.85  # a slab that stands for round vessels with reflexes is so much more blurred
 FIRST_REFLEX = 0.1  # height from which a reflex is searched
 # of log likelihood, and of it a px, from which reflexes are believed; noise gives .02 to .05
 REFLEX_GAIN = (10.0, 0.08)
@@ -171,7 +172,8 @@ def _with_reflex(
     if not wide.any():
         return told, None
     round_ones = tuple(family for family in request.families if family != "slab") or request.families
-    request = replace(request, start_px=(told.optics.s_px,), families=round_ones)
+    starts = (told.optics.s_px,) if request.blur_rel_se else (SHARPER * told.optics.s_px, told.optics.s_px)
+    request = replace(request, start_px=starts, families=round_ones)
     none = np.zeros(observed.n_segments)
     expected = _contrast_unknown(observed, told.theta, none, np.where(wide, REFLEX_SPREAD, NO_REFLEX))
     theta = np.column_stack([told.theta, np.where(wide, FIRST_REFLEX, 0.0)[observed.segment]])
