@@ -274,9 +274,9 @@ def laws() -> int:
         constants = "".join(f", {key} = {value:g}" for key, value in law.example_parameters.items())
         click.echo(f"  {at_10_um:.4g} mPa.s at a radius of 10 um, {at_50_um:.4g} mPa.s at 50 um{constants}")
     click.echo(
-        "Values at a discharge hematocrit of 0.45 and a plasma viscosity of 1.2 mPa.s, which is that at 37 C; at\n"
-        "room temperature plasma has 1.5 to 1.7 mPa.s, and viscosity goes with it. Outside its range a law's formula is used\n"
-        "all the same, and the segment carries the flag law_range."
+        "Values at a discharge hematocrit of 0.45 and a plasma viscosity of 1.2 mPa.s, which is that at 37 C; at room\n"
+        "temperature plasma has 1.5 to 1.7 mPa.s, and viscosity goes with it. Outside its range a law's formula is\n"
+        "used all the same, and the segment carries the flag law_range."
     )
     return status
 
