@@ -46,8 +46,8 @@ def trace(scene: Scene) -> Graph:
     """Find the true graph of a scene.
 
     A child starts where its axis leaves the lumen of its parent, the widest vessel there, that is the points within
-    the parent's radius of the parent's axis; the node stays on the parent's axis. An end node is an inlet where its vessel's axis begins and
-    an outlet where it ends, because axes run with the flow.
+    the parent's radius of the parent's axis; the node stays on the parent's axis. An end node is an inlet where its
+    vessel's axis begins and an outlet where it ends, because axes run with the flow.
     """
     degree = scene.degree
     node_at: dict[int, int] = {}
