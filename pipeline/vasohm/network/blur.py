@@ -199,6 +199,14 @@ def _conclude(case: _Case, best: _Fit, rivals: list[_Fit], *, told: bool) -> Ima
     return ImageOptics(optics, covariance, told, shift, best.normal.cost, best.theta, best.marginal.answer, keep)
 
 
+def with_doubt(best: ImageOptics, rival: ImageOptics, chance: float) -> ImageOptics:
+    """Return the best of two answers with the chance that the other one is right in its doubt."""
+    covariance = best.covariance.copy()
+    covariance[0, 0] += chance * float(np.log(rival.optics.s_px / best.optics.s_px)) ** 2
+    apart = np.sqrt(chance) * float(np.mean(rival.theta[:, LN_R] - best.theta[:, LN_R]))
+    return replace(best, covariance=covariance, family_shift=float(np.hypot(best.family_shift, apart)))
+
+
 def _misfit(inverse: FloatArray, information: FloatArray, gradient: FloatArray) -> float:
     """How many times wider than stated the first parameter scatters between segments; 1 where they agree.
 

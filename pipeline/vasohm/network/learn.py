@@ -3,10 +3,11 @@
 from dataclasses import dataclass, replace
 
 import numpy as np
+from scipy.special import expit
 
 from vasohm.arrays import BoolArray, FloatArray, IntArray
 from vasohm.flags import Flag
-from vasohm.network.blur import START_PX, ImageOptics, OpticsRequest, advantage, estimate_optics
+from vasohm.network.blur import START_PX, ImageOptics, OpticsRequest, advantage, estimate_optics, with_doubt
 from vasohm.network.contrast import (
     RESOLVED_SE,
     ContrastPrior,
@@ -40,7 +41,7 @@ TYPED_REL_SE = 0.05  # a typed blur comes without uncertainty
 CALM_PX = 6.0  # of smoothing lines: strips aligned to the noise under them would look sharper than the vessel is
 ASSUMED_ABSORPTION_SE = 0.7  # of ln mu, a factor of two
 RESOLVED_BLURS, RESOLVED_PX = 1.5, 1.8  # medians of radius from which a segment shows blur and contrast
-MOST_POINTS = 3200  # of resolved segments that are asked for blur, profile and contrast
+MOST_POINTS = 4000  # of resolved segments that are asked for blur, profile and contrast
 WORST_BLUR_SE = 0.25  # of ln blur: beyond, the assumed one is better
 FREE_SPREAD = 300.0  # sd of ln contrast that says nothing, whatever the family's units
 PROFILE_SE = 0.08  # of ln r: half of what slab and cylinder differ by
@@ -53,6 +54,7 @@ SHARPER = 0.85  # a slab that stands for round vessels with reflexes is so much 
 FIRST_REFLEX = 0.1  # height from which a reflex is searched
 # of log likelihood, and of it a px, from which reflexes are believed; noise gives .02 to .05
 REFLEX_GAIN = (10.0, 0.08)
+REFLEX_DOUBT = 0.25  # share of that gain over which the odds of a reflex change by a factor of e
 ALIKE = 5.0  # standard errors: where wide vessels agree so well on a reflex, the first of the two is enough
 
 
@@ -183,14 +185,16 @@ def _with_reflex(
     scatter = max(1.4826 * float(np.median(np.abs(high - common))), SMALLEST_REFLEX_SPREAD)
     alike = common > ALIKE * 1.2533 * scatter / np.sqrt(len(high))  # 1.2533: standard error of a median over a mean's
     needed = REFLEX_GAIN[0] + (0.0 if alike else REFLEX_GAIN[1] * ROWS * wide[observed.segment].sum())
-    if common < LOWEST_REFLEX or advantage(again.point_cost, told.point_cost, observed.segment) < needed:
-        return told, None
+    gain = advantage(again.point_cost, told.point_cost, observed.segment)
+    chance = float(expit(-abs(gain - needed) / (REFLEX_DOUBT * needed)))
+    if common < LOWEST_REFLEX or gain < needed:
+        return with_doubt(told, again, chance if common > LOWEST_REFLEX else 0.0), None
     mean, sd = expected_reflex(wide, (common, scatter))
     expected = _contrast_unknown(observed, again.theta, mean, np.where(wide, REFLEX_SPREAD, sd))
     theta = again.theta.copy()
     theta[~wide[observed.segment], REFLEX] = mean[~wide].mean() if not wide.all() else 0.0
-    told = _estimate_again(observed, table_like(table, again.optics), theta, expected, request)
-    return told, replace(expected, reflex_sd=sd)
+    reflecting = _estimate_again(observed, table_like(table, again.optics), theta, expected, request)
+    return with_doubt(reflecting, told, chance), replace(expected, reflex_sd=sd)
 
 
 def expected_reflex(wide: BoolArray, reflex: tuple[float, float] | None) -> tuple[FloatArray, FloatArray]:
