@@ -45,7 +45,7 @@ DEFAULTS: Mapping[str, Any] = {
     "network.target_pressure_mmhg": None,
     "network.target_pressure_sd_mmhg": None,  # half of the targets' mean
     "network.intervals": "auto",
-    "network.draws": 1000,  # a bound of a 95 % interval then errs by about 3 % of its width
+    "network.draws": 1000,  # a bound of a 95 % interval then errs by about 2 % of its width
     "network.seed": 0,
     "output.overlay": True,
     "output.colour": "radius",

@@ -21,7 +21,7 @@ class Motion:
     """Blood in motion, by segment (n_segments,); NaN where a thing is not known."""
 
     velocity_mm_s: FloatArray  # mean over the cross-section, never negative
-    transit_s: FloatArray  # infinite flow paths have none: NaN where nothing flows
+    transit_s: FloatArray  # NaN where nothing flows
     wall_shear_rate_per_s: FloatArray
     wall_shear_pa: FloatArray
     reynolds: FloatArray

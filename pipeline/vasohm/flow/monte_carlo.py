@@ -19,9 +19,7 @@ from vasohm.network.radius import MeasuredGraph
 from vasohm.uncertainty import ln_interval, quadrature
 
 LEAST_DRAWS = 200  # fewer leave 5 values or less beyond each bound of a 95 % interval
-FIRST_ORDER_UP_TO = (
-    0.05  # relative standard uncertainty of radii up to which the first order is within 5 % of the width
-)
+FIRST_ORDER_UP_TO = 0.05  # relative standard uncertainty of radii: up to it the first order is within 5 % of the width
 BOUNDS = (0.025, 0.5, 0.975)
 MOST_PRODUCTS = 5e8  # of all draws of a network: about 3 s
 MOST_RADII = 2e7  # drawn for a network: about 4 s

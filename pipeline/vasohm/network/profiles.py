@@ -16,7 +16,6 @@ from scipy.special import ndtr
 
 from vasohm.arrays import Float32Array, FloatArray, IntArray, freeze
 
-FAMILIES = ("slab", "cylinder", "absorber")
 PHASES = 8  # table positions a pixel; the cubic between them errs by < 2e-5 of contrast for blur >= 0.45 px
 TAIL = 6.0  # standard deviations beyond which blur is nothing
 LAYERS_PER_PX = 16  # grid onto which the layers of a tube are spread

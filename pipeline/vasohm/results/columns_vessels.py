@@ -121,8 +121,8 @@ SEGMENTS: tuple[Column, ...] = (
     number(
         "reynolds",
         "1",
-        "Reynolds number: density times mean velocity times diameter over apparent viscosity. Empty where no terminal "
-        "gave a pressure or flow: flow then has the size of an assumed drop of pressure.",
+        "Reynolds number: density times mean velocity times diameter over apparent viscosity. Empty where no pressure "
+        "or flow at a terminal was given or estimated: flow then has the size of an assumed drop of pressure.",
     ),
     number(
         "womersley",

@@ -1,4 +1,4 @@
-"""From nouns to tables: the columns of the contract, as pandas data frames."""
+"""From nouns to tables: every output column, as pandas data frames."""
 
 from collections.abc import Mapping
 from dataclasses import dataclass
@@ -113,7 +113,7 @@ class Findings:
 
 
 def tabulate(image_id: str, design: Mapping[str, str], findings: Findings) -> ImageTables:
-    """Lay out what was found in one image as the tables of the contract.
+    """Lay out what was found in one image as the output tables.
 
     Parameters
     ----------

@@ -27,9 +27,8 @@ WIDE_SIGMA_PX = 4.0  # scales from here on are searched first, on a coarser grid
 # groups give and because the kinds of noise differ: the promised length is then an upper bound
 FINE_EXCESS = (6.4, 100000.0)
 WIDE_EXCESS = (11.4, 25000.0)
-SMOOTH_POWER = (
-    0.8  # of the noise at the second scale over that at the first, where it is above 1: smooth noise forms longer lines
-)
+# Of the noise at the second scale over that at the first, where it is above 1: smooth noise forms longer lines
+SMOOTH_POWER = 0.8
 LEAST_EXCESS = 2.0
 LEAST_FALSE_PX = 0.01  # a megapixel: no finite threshold promises less
 TEXTURE_SHARE = 0.004  # of the found length that the flipped picture may give before thresholds rise
@@ -63,10 +62,8 @@ LEAST_AWAY_PX = 12  # or look like a vessel for so long before it reaches the bo
 ROOMY_BORDERS = 10  # in smaller pictures everything is near the border
 WIDE_BALANCE = 0.7  # weaker side over stronger of a wide vessel: beside it the background is the same on both sides
 LEAST_SHAPED = 0.38  # of the length of a piece: where less looks like a vessel, the rest was filled in between specks
-WIDE_CONTRAST, WIDE_CONTRAST_POWER = (
-    0.4,
-    0.5,
-)  # of the thin vessels' median, and how it grows with width (a projected tube's: 1)
+# Of the thin vessels' median, and how it grows with width (a projected tube's: 1)
+WIDE_CONTRAST, WIDE_CONTRAST_POWER = 0.4, 0.5
 LEAST_LENGTH_RADII = 4.0  # a vessel is longer than it is wide
 REACH_SIGMAS = 3.0
 REACH_EXTRA_PX = 3.0
