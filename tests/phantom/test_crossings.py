@@ -66,7 +66,7 @@ def balanced(first_seed: int, each: int) -> tuple[float, float]:
 
 
 def test_single_junctions_are_told():
-    """Wrong if the rule knew its own training pictures only: these are drawn by another program, as slabs."""
+    """Wrong if the rule knew its own training pictures only: these are drawn by other code, as slabs."""
     told, kept = balanced(9000, EACH)
     assert (told + kept) / 2 >= ISOLATED - 2 / (2 * EACH)
 
