@@ -192,6 +192,21 @@ def test_what_is_known_of_some_ends_is_kept():
     assert solve_flow(measured, by_pressure, newtonian()).pressure_mmhg[5] == pytest.approx(40.0, rel=1e-9)
 
 
+def test_a_given_role_is_never_turned_round():
+    """Targets that contradict what a person said of an end: no numbers, and the reader is told which end and why."""
+    targets = EndTargets((2.0,) * 4, 1.0, (30.0, 45.0, 18.0, 30.0), 3.0)
+    measured = mesh(classes=np.array([1, 0, 0, 0, 0, 0, 2, 2]))
+    terminals = estimated(measured, [point(0, 100, "outlet")], targets)
+    assert terminals.source == ("none",)
+    assert terminals.network_flags.tolist() == [Flag.NO_TERMINALS]
+    assert np.isnan(solve_flow(measured, terminals, newtonian()).network_resistance_pa_s_m3).all()
+    (note,) = terminals.notes
+    assert "outlet at x 0, y 100 px" in note
+    agreeing = estimated(measured, [point(0, 100, "inlet")], targets)
+    assert agreeing.role.tolist() == [1, 0, 0, 0, 0, -1, -1]
+    assert not agreeing.notes
+
+
 def test_trees_and_fully_known_meshes_are_not_estimated():
     nodes = [(0.0, 100.0), (100.0, 100.0), (200.0, 50.0), (200.0, 150.0)]
     tree = bed(nodes, [straight(nodes, a, b, r) for a, b, r in ((0, 1, 9.0), (1, 2, 7.0), (1, 3, 6.0))])

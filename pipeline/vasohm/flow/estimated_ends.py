@@ -20,7 +20,7 @@ from vasohm.units import M_PER_UM, NL_MIN_PER_M3_S, PA_PER_MMHG, PA_S_PER_MPA_S
 
 FIRST_DOUBLING, MOST_DOUBLINGS = 3, 40  # of the weight of shear, from an eighth of the pressures' to its own
 MOST_TURNS = 50  # of directions at one weight; 2 to 10 are usual
-STILL = 1e-9  # of the largest drop of pressure: a smaller one has no direction
+STILL = 1e-9  # of the largest drop of pressure, or of the largest flow: a smaller one has no direction
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,7 +64,7 @@ def estimate_ends(
     measured : MeasuredGraph
         Lengths and radii.
     terminals : Terminals
-        From `place_terminals`; pressures and flows that they give are kept, a given role keeps its direction.
+        From `place_terminals`; pressures, flows and roles that they give are kept.
     blood : BloodSettings
         The viscosity law and the hematocrit.
     targets : EndTargets or None
@@ -74,7 +74,8 @@ def estimate_ends(
     -------
     Terminals
         With role and flow at each open end of those networks, and one pressure where none was given. A network that
-        has fewer than two open ends, or whose equations have no solution, goes back to ``none``.
+        has fewer than two open ends, or whose equations have no solution, goes back to ``none``; so does one in which
+        blood would leave by a given inlet or enter by a given outlet, which `notes` tell.
 
     Raises
     ------
@@ -103,7 +104,7 @@ def estimate_ends(
     hematocrit = entering_hematocrit(terminals, blood.hematocrit)
     segments = measure_resistance(measured, make_blood(blood), hematocrit, np.ones(measured.graph.n_segments))
     role, pressure, flow = (np.array(a) for a in (terminals.role, terminals.pressure_mmhg, terminals.flow_nl_min))
-    source, flags = list(terminals.source), np.array(terminals.network_flags)
+    source, flags, notes = list(terminals.source), np.array(terminals.network_flags), terminals.notes
     for network in wanted:
         nodes = np.flatnonzero(terminals.node_network == network)
         problem = _problem(measured, terminals, segments, targets, nodes)
@@ -112,8 +113,14 @@ def estimate_ends(
         except (RuntimeError, NetworkError):  # one end alone, or a part that closed segments cut off
             source[network], flags[network], role[nodes] = "none", int(Flag.NO_TERMINALS), 0
             continue
+        turned = _turned_round(measured, role, nodes, inflow)
+        if turned:
+            source[network], flags[network], role[nodes] = "none", int(Flag.NO_TERMINALS), 0
+            notes += turned
+            continue
         unknown = np.isnan(problem.inflow)
-        role[nodes[unknown]] = np.sign(inflow[unknown]).astype(np.int64)
+        bare = unknown & (role[nodes] == 0)
+        role[nodes[bare]] = np.sign(inflow[bare]).astype(np.int64)
         flow[nodes[unknown]] = np.abs(inflow[unknown]) * NL_MIN_PER_M3_S
         if np.isnan(pressure[nodes]).all():  # one pressure keeps the level; at the largest outflow rounding is least
             lowest = int(np.argmin(inflow))
@@ -125,6 +132,19 @@ def estimate_ends(
         flow_nl_min=flow,
         source=tuple(source),
         network_flags=flags,
+        notes=notes,
+    )
+
+
+def _turned_round(measured: MeasuredGraph, role: IntArray, nodes: IntArray, inflow: FloatArray) -> tuple[str, ...]:
+    """Tell which given inlets blood would leave by, and which given outlets it would enter by."""
+    graph = measured.graph
+    against = role[nodes] * inflow < -STILL * np.abs(inflow).max(initial=0.0)
+    return tuple(
+        f"{'inlet' if role[node] > 0 else 'outlet'} at x {graph.node_x_px[node]:g}, y {graph.node_y_px[node]:g} px: "
+        f"by the estimate of unknown ends blood would {'leave' if role[node] > 0 else 'enter'} there, so its network "
+        "gets no resistance; check this role and the targets, or give pressures or flows."
+        for node in nodes[against]
     )
 
 

@@ -54,7 +54,7 @@ class Terminals:
     hematocrit: FloatArray  # (n_nodes,) NaN where not given
     source: tuple[str, ...]  # per network: file | auto | none | estimated
     network_flags: IntArray  # (n_networks,)
-    notes: tuple[str, ...]  # terminals left out, by position
+    notes: tuple[str, ...]  # terminals left out, or contradicted by an estimate, by position
     flags: Flag  # of the image
     drive_mmhg: float  # between inlets and outlets where no pressure and no flow is given
 
