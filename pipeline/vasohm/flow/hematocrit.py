@@ -98,6 +98,7 @@ def find_flow(
             start=hematocrit,
         )
         moved = np.abs(settled.hematocrit - hematocrit) > ROUND_AGREEMENT
+        moved &= _carries(settled.circulation, terminals.segment_network)
         moving = np.bincount(terminals.segment_network[moved], minlength=len(terminals.source)) > 0
         hematocrit, total = settled.hematocrit, total + settled.turns
         if not np.any(moving & (settled.turns >= 0)):
@@ -207,8 +208,7 @@ def settle_hematocrit(
         stream = _stream(graph, terminals, circulation, radius_um, entering_hematocrit)
         carried, feeding = carry_cells(stream, law, feeding)
         change = np.where(np.isfinite(carried), carried - hematocrit, 0.0)
-        least = LEAST_FLOW_SHARE * np.nan_to_num(circulation.network_flow_m3_s)[of_segment]
-        counts = np.abs(np.nan_to_num(circulation.flow_m3_s)) > least
+        counts = _carries(circulation, of_segment)
         off = np.zeros(n)
         np.maximum.at(off, of_segment[counts], np.abs(change[counts]))
         turns = np.where(off > AGREEMENT, -1, np.where(turns < 0, turn + 1, turns))
@@ -219,6 +219,12 @@ def settle_hematocrit(
         last = change
         hematocrit = hematocrit + step * change
     return Settled(np.where(np.isfinite(carried), carried, hematocrit), resistance, circulation, turns)
+
+
+def _carries(circulation: Circulation, of_segment: IntArray) -> BoolArray:
+    """Whether enough flows through each segment (n_segments,) that its hematocrit must settle."""
+    least = LEAST_FLOW_SHARE * np.nan_to_num(circulation.network_flow_m3_s)[of_segment]
+    return np.asarray(np.abs(np.nan_to_num(circulation.flow_m3_s)) > least)
 
 
 def _stream(
