@@ -29,6 +29,11 @@ LN_SHARED_SE = number(
     "Standard uncertainty of ln(resistance) from what the whole image has in common: pixel size, blur, profile, "
     "hematocrit. Averaging within the image does not shrink it.",
 )
+OF_DRIVE = (
+    "Where no pressure or flow was given or estimated it belongs to the assumed drop of pressure (drive_mmhg) and is "
+    "proportional to it; resistance and shares do not depend on it."
+)
+OF_DRIVE_INVERSELY = OF_DRIVE.replace("is proportional to it", "falls in inverse proportion to it")
 
 SEGMENTS: tuple[Column, ...] = (
     IMAGE_ID,
@@ -106,17 +111,24 @@ SEGMENTS: tuple[Column, ...] = (
     number("flow_nl_min", "nL/min", "Flow through the segment, positive from node_a to node_b."),
     number("pressure_a_mmhg", "mm[Hg]", "Pressure at node_a."),
     number("pressure_b_mmhg", "mm[Hg]", "Pressure at node_b."),
-    number("velocity_mm_s", "mm/s", "Mean velocity of blood over the cross-section at the hydraulic radius."),
-    number("transit_s", "s", "Time in the segment at its mean velocity; empty where nothing flows."),
+    number(
+        "velocity_mm_s",
+        "mm/s",
+        f"Mean velocity of blood over the cross-section at the hydraulic radius. {OF_DRIVE}",
+    ),
+    number(
+        "transit_s", "s", f"Time in the segment at its mean velocity; empty where nothing flows. {OF_DRIVE_INVERSELY}"
+    ),
     number(
         "wall_shear_pa",
         "Pa",
-        "Wall shear stress at the hydraulic radius: 4 mu |Q| / (pi r^3), mu the apparent viscosity.",
+        f"Wall shear stress at the hydraulic radius: 4 mu |Q| / (pi r^3), mu the apparent viscosity. {OF_DRIVE}",
     ),
     number(
         "wall_shear_rate_per_s",
         "/s",
-        "Wall shear rate at the hydraulic radius: 4 |Q| / (pi r^3), the wall shear stress over the apparent viscosity.",
+        "Wall shear rate at the hydraulic radius: 4 |Q| / (pi r^3), the wall shear stress over the apparent viscosity. "
+        f"{OF_DRIVE}",
     ),
     number(
         "reynolds",
