@@ -22,7 +22,8 @@ class SplitLaw:
 
     logit FQ_E = A + B logit((FQ_B - X0) / (1 - 2 X0)), no cells up to FQ_B = X0 and all from 1 - X0 on.
     `constants(feed_um, own_um, other_um, hematocrit)` returns A, B and X0 from three diameters and the discharge
-    hematocrit of the feeding vessel, elementwise.
+    hematocrit of the feeding vessel, elementwise. Diameters are those measured: unlike in the viscosity law they are
+    not scaled by the volume of red cells.
     """
 
     constants: Callable[[FloatArray, FloatArray, FloatArray, FloatArray], tuple[FloatArray, FloatArray, FloatArray]]

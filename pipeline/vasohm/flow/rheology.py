@@ -29,7 +29,8 @@ HUMAN_CELL_VOLUME_FL = 92.0  # of the blood that the laws were fitted to; that o
 class BloodSettings:
     """Blood as the study file describes it; `hematocrit` is the discharge hematocrit entering the network.
 
-    `hematocrit_se` is its standard uncertainty, and that of a hematocrit which sheet or terminals give instead.
+    `hematocrit_se` is its standard uncertainty, and that of a hematocrit which sheet or terminals give instead. Where
+    cells part, it is the same absolute change in every segment, also where the hematocrit is above or below this one.
     """
 
     law: str
@@ -119,7 +120,7 @@ class Blood:
     law: ViscosityLaw
     plasma_viscosity_mpa_s: float
     parameters: Mapping[str, float]
-    hematocrit_se: float  # of every hematocrit alike
+    hematocrit_se: float  # of every segment's hematocrit alike, absolute, also where cells part
     plasma_viscosity_se_mpa_s: float = 0.0
     diameter_factor: float = 1.0  # on diameters within the law, from the volume of the cells
 

@@ -195,9 +195,11 @@ def _cells_sentences(blood: BloodSettings, mark: Callable[[str], str]) -> Iterat
             f"human ones {HUMAN_CELL_VOLUME_FL:g} fL."
         )
     if blood.split_law is not None:
+        shared = ", and the uncertainty of hematocrit counts alike in every segment" if blood.hematocrit_se else ""
         yield (
-            f"Cells and plasma part where vessels divide {mark(SPLIT_LAWS[blood.split_law].citation)} and mix where "
-            "they meet, in turns with the viscosity until both agree; intervals hold the hematocrits found so."
+            f"Cells and plasma part where vessels divide {mark(SPLIT_LAWS[blood.split_law].citation)}, by diameters as "
+            "measured (not scaled by red-cell volume), and mix where they meet, in turns with the viscosity until both "
+            f"agree; intervals hold the hematocrits found so{shared}."
         )
 
 
