@@ -166,3 +166,10 @@ def test_constants_without_meaning_are_refused_by_name():
         PluginError, match=r"no viscosity law 'water' is registered; there are constant, .*pries-in-vivo"
     ):
         apparent_viscosity("water", 5.0, 0.45)
+
+
+def test_plasma_alone_does_not_pass_the_pole():
+    """Wrong if a vessel that no cell enters had no viscosity at all where the law closes it, below 0.55 um."""
+    tight = apparent_viscosity("pries-in-vivo", np.array([0.3, 0.55, 5.0]), 0.0)
+    assert np.isinf(tight[:2]).all()
+    assert np.isfinite(tight[2])

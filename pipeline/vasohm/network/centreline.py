@@ -19,6 +19,7 @@ MEDIAN_POINTS = 5
 OFFSET_SIGMA_PX = 1.5
 RIM_PX = 3.0  # a vessel seen to within this distance of the border of the field is cut by it
 END_RADII = 2.0  # a skeleton stops about one radius before a round end
+BORDER_RADII = 4.0  # and a wide vessel's line well before the border: there filters have but half of its flanks
 TIP_PX = 4  # and this many pixels more of it are drawn anew
 NEW_POINT_PX = 0.5
 LEAST_POINTS = 4  # a segment keeps at least so many
@@ -179,10 +180,11 @@ def extend_ends(graph: VesselGraph, prepared: PreparedImage) -> VesselGraph:
     x, y = graph.x_px[tip], graph.y_px[tip]
     tx, ty = towards[loose, 0], towards[loose, 1]
     reach = cut_px[loose] + END_RADII * radius
-    to_border = _distance_to_border(prepared.fov, (x, y), (tx, ty), reach + RIM_PX)
-    to_end = _distance_to_half(prepared.signal, (x, y), (tx, ty), (radius, reach))
+    longest = cut_px[loose] + BORDER_RADII * radius
+    to_border = _distance_to_border(prepared.fov, (x, y), (tx, ty), longest + RIM_PX)
+    to_end = _distance_to_half(prepared.signal, (x, y), (tx, ty), (radius, longest))
     is_rim = np.isfinite(to_border) & (to_end >= to_border - RIM_PX)  # it ends before the border where contrast does
-    further = np.where(is_rim, to_border, to_end)
+    further = np.where(is_rim, to_border, np.minimum(to_end, reach))
     kind = graph.node_kind.copy()
     kind[node[loose[is_rim]]] = NodeKind.RIM
     node_x, node_y = graph.node_x_px.copy(), graph.node_y_px.copy()

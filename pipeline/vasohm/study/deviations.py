@@ -343,9 +343,9 @@ def _networks(measured: Bed, true: Bed, match: _Match, basis: _Basis) -> pd.Data
 
 def _same_viscosity(segments: pd.DataFrame, blood: Blood) -> bool:
     """Whether true resistances were made with the law of the measurement."""
-    radius_um = segments["radius_hydraulic_um"].to_numpy(np.float64)
-    viscosity = blood.viscosity(radius_um, segments["hematocrit"].to_numpy(np.float64))
-    return bool(np.allclose(viscosity, segments["viscosity_mpa_s"].to_numpy(np.float64), rtol=SAME_VISCOSITY))
+    names = ["radius_hydraulic_um", "hematocrit", "viscosity_mpa_s"]
+    radius_um, hematocrit, viscosity = segments[names].dropna().to_numpy(np.float64).T
+    return bool(np.allclose(blood.viscosity(radius_um, hematocrit), viscosity, rtol=SAME_VISCOSITY))
 
 
 def _index_of(ids: pd.Series, table_ids: pd.Series) -> IntArray:

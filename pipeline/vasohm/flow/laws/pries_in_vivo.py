@@ -31,4 +31,4 @@ def viscosity(
     viscosity_45 = 6.0 * np.exp(-0.085 * diameter_um) + wide_tube_viscosity_45(diameter_um)
     wall = np.square(np.divide(diameter_um, open_um, out=np.full(np.shape(diameter_um), np.inf), where=open_um > 0))
     cells = (viscosity_45 - 1.0) * hematocrit_factor(diameter_um, hematocrit)
-    return plasma_viscosity_mpa_s * (wall + cells * np.square(wall))
+    return plasma_viscosity_mpa_s * wall * (1.0 + cells * np.where(cells == 0, 0.0, wall))
