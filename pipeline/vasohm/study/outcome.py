@@ -6,6 +6,7 @@ from pathlib import Path
 
 from vasohm.config.settings import Settings
 from vasohm.config.sheet import ImageSource
+from vasohm.errors import VasohmError
 
 CRASHED = "crashed"  # error of an image whose worker died twice
 MEASURED, EMPTY, FAILED, PENDING = "measured", "empty", "failed", "pending"
@@ -43,3 +44,22 @@ class Outcome:
     peak_rss_mb: float | None
     warnings: tuple[str, ...]
     traceback: str
+
+
+class LostError(VasohmError):
+    """The workers as a whole are gone: what was finished is kept, and nothing more can be done in this run."""
+
+    code = "lost"
+
+
+def failed(task: Task, failure: Failure) -> Outcome:
+    """Return the outcome of a task whose worker could not tell it itself."""
+    return Outcome(
+        image_id=task.image_id,
+        status=FAILED,
+        failure=failure,
+        seconds={},
+        peak_rss_mb=None,
+        warnings=(),
+        traceback="",
+    )

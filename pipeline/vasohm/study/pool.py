@@ -22,12 +22,11 @@ from pathlib import Path
 
 from vasohm.study.cores import THREAD_VARIABLES
 from vasohm.study.interrupt import ENDING_SIGNALS, signals_held
-from vasohm.study.outcome import CRASHED, FAILED, Failure, Outcome, Task
+from vasohm.study.outcome import CRASHED, Failure, Outcome, Task, failed
 
 GRACE_S = 30.0  # that running images have after the first request to stop
 _POLL_S = 0.1
 _REAPING_S = 2.0  # for a dead worker to be told of
-_REAPING_S = 2.0
 _ORPHAN_STATUS = 70  # EX_SOFTWARE of sysexits.h; seen by nobody, since the parent is gone
 _DEATHS = 2  # in company, then alone
 
@@ -152,7 +151,7 @@ class SupervisedPool:
                 victims.append(task)
             elif (fault := future.exception()) is not None:
                 message = f"{type(fault).__name__}: {fault} (between processes: a fault of the program)"
-                yield _failed(task, Failure(stage="start", error="unexpected", message=message))
+                yield failed(task, Failure(stage="start", error="unexpected", message=message))
             else:
                 yield future.result()
         if victims:
@@ -170,7 +169,7 @@ class SupervisedPool:
                 on_retry(task, f"{how}, in stage {stage}")
                 continue
             message = f"the worker died twice in stage {stage} ({how}). The other images are not touched by it."
-            yield _failed(task, Failure(stage=stage, error=CRASHED, message=message))
+            yield failed(task, Failure(stage=stage, error=CRASHED, message=message))
 
     def _cause(self, task: Task) -> tuple[str, str]:
         """Return the last stage a task reached and how its worker ended."""
@@ -198,18 +197,6 @@ class SupervisedPool:
 
 def _tell_nobody(_task: Task, _how: str) -> None:
     """After a request to stop nothing is run again, so that there is nothing to tell."""
-
-
-def _failed(task: Task, failure: Failure) -> Outcome:
-    return Outcome(
-        image_id=task.image_id,
-        status=FAILED,
-        failure=failure,
-        seconds={},
-        peak_rss_mb=None,
-        warnings=(),
-        traceback="",
-    )
 
 
 def _exit_code(child: BaseProcess) -> int | None:
