@@ -60,6 +60,7 @@ class Flag(IntFlag):
     FEW_VENULES = 1 << 45
     DISC_OUTSIDE = 1 << 46
     ZONE_CUT = 1 << 47
+    TISSUE_UNSEEN = 1 << 48
 
 
 MEANING: dict[Flag, str] = {
@@ -109,6 +110,7 @@ MEANING: dict[Flag, str] = {
     Flag.FEW_VENULES: "fewer venules cross the zone around the optic disc than their equivalent asks for",
     Flag.DISC_OUTSIDE: "the optic disc lies partly outside the field of view: no calibre equivalents",
     Flag.ZONE_CUT: "the field of view cuts the zone around the optic disc: vessels may be missing from the equivalents",
+    Flag.TISSUE_UNSEEN: "more than 5 % of the tissue lies further from any vessel than the field of view can tell",
 }
 
 

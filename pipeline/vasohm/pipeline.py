@@ -64,7 +64,14 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     scenarios = run_scenarios(measured, terminals, blood, settings.scenarios, intervals)
     stage("tables")
     around = Surroundings(
-        mask.pixels, prepared.fov, source.disc, terminals.role, flow.flow_nl_min, flow.resistance_pa_s_m3
+        vessels=mask.pixels,
+        fov=prepared.fov,
+        disc=source.disc,
+        role=terminals.role,
+        flow_nl_min=flow.flow_nl_min,
+        resistance_pa_s_m3=flow.resistance_pa_s_m3,
+        ln_resistance_random_se=flow.ln_resistance_random_se,
+        ln_resistance_shared_se=flow.ln_resistance_shared_se,
     )
     shape_of = describe_shape(measured, around, settings.shape)
     findings = Findings(prepared, mask, measured, flow, shape_of, scenarios, intervals)

@@ -207,6 +207,8 @@ def make_shape(n: int, disc: OpticDisc | None = None) -> Morphometry:
         role=make_flow(n).terminals.role,
         flow_nl_min=make_flow(n).flow_nl_min,
         resistance_pa_s_m3=make_flow(n).resistance_pa_s_m3,
+        ln_resistance_random_se=make_flow(n).ln_resistance_random_se,
+        ln_resistance_shared_se=make_flow(n).ln_resistance_shared_se,
     )
     found = describe_shape(make_measured(n), around, ShapeSettings((0.5, 1.0), "knudtson", (8.5,)))
     return replace(found, tortuosity=real(1.0, 1.0, np.nan)[:n])  # a gap, as a ring would leave

@@ -150,6 +150,27 @@ def test_segments_in_series_are_one_resistor():
     assert found.resistance_parallel[rows].tolist() == pytest.approx([1 / (1 / 30 + 1 / 20 + 1 / 60), 3.0])
 
 
+def test_doubt_of_an_orders_resistance_is_that_of_repeated_draws():
+    """Segments that err by 3 to 20 % each, on their own or together (JCGM 100:2008, eq. 10 and its note 1)."""
+    draws, rng = 2000, np.random.default_rng(9)
+    parents, radii = [-1, 0, 0, 2, 2], [10.0, 3.0, 9.0, 4.0, 3.0]
+    resistance = np.array([1.0, 30.0, 2.0, 20.0, 60.0])
+    random_se, shared_se = np.array([0.2, 0.05, 0.1, 0.1, 0.03]), np.array([0.1, 0.1, 0.2, 0.15, 0.05])
+    found = rooted(tree(parents, radii), resistance=resistance, doubt=(random_se, shared_se))
+    rows = found.scheme == STRAHLER
+    for se, error in ((random_se, rng.normal(0, 1, (5, draws))), (shared_se, rng.normal(0, 1, draws))):
+        drawn = resistance[:, None] * (1 + 1e-3 * se[:, None] * error)  # so small that first order is exact
+        twigs, trunk = drawn[[1, 3, 4]], drawn[0] + drawn[2]
+        series, parallel = (
+            [np.log(twigs.mean(axis=0)), np.log(trunk)],
+            [-np.log((1 / twigs).sum(axis=0)), np.log(trunk)],
+        )
+        kind = "random" if se is random_se else "shared"
+        for name, values in (("series", series), ("parallel", parallel)):
+            stated = getattr(found, f"ln_{name}_{kind}_se")[rows]
+            np.testing.assert_allclose(np.std(values, axis=1) * 1e3, stated, rtol=4 / np.sqrt(2 * draws))
+
+
 def test_a_vein_is_ordered_from_its_outlet():
     parents, radii = full(3)
     measured = tree(parents, radii)

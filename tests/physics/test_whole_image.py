@@ -1,5 +1,7 @@
 """Densities, distances, avascular areas, dimension and lacunarity of patterns with closed forms and by other means."""
 
+from dataclasses import astuple
+
 import numpy as np
 import pytest
 from beds import bed, published, straight
@@ -8,6 +10,7 @@ from scipy import ndimage, spatial, stats
 from shapes import shape_of
 from skimage import draw, measure, morphology
 
+from vasohm.flags import Flag
 from vasohm.network.densities import count_boxes, describe_filling, fit_dimension
 
 SMALL = np.zeros((64, 64), dtype=bool)
@@ -129,6 +132,40 @@ def test_distances_are_those_of_a_search_tree_and_free_of_the_border():
     inner = away.mean()
     assert abs(np.mean(alone) - inner) < 3 * np.std(alone, ddof=1) / 3  # nine parts
     assert naive > np.mean(alone)  # vessels beyond the border left out seem further away
+
+
+def test_what_the_border_hides_of_the_tissue_is_told():
+    """One vessel at the edge of a field: of tissue beyond its middle nothing is known (product limits by hand).
+
+    A vessel along the left border and a field of w px beyond it: the right half is nearer to the right border than to
+    the vessel, so that all events lie in the left half. The estimate then is defective by what the rule leaves.
+    """
+    w, h = 40, 2001  # so long that the upper and lower border take little part
+    mask = np.zeros((h, w + 1), dtype=bool)
+    mask[:, 0] = True
+    found = describe_filling(mask, np.ones_like(mask), 1.0).distances
+    rows, columns = np.mgrid[:h, : w + 1]
+    to_vessel, to_border = columns, np.minimum(w + 1 - columns, np.minimum(rows + 1, h - rows))
+    seen, at = (to_vessel < to_border)[:, 1:], np.minimum(to_vessel, to_border)[:, 1:]
+    survival = {0: 1.0}
+    for d in range(1, w):
+        dies, at_risk = ((at == d) & seen).sum(), (at >= d).sum()
+        survival[d] = survival[d - 1] * (1 - dies / at_risk) if at_risk else survival[d - 1]
+    assert found.unseen == pytest.approx(survival[w - 1], rel=0.03)  # equal distances count as to either
+    assert 0.0 < found.unseen < 0.2
+    assert found.flags == Flag.TISSUE_UNSEEN
+    assert np.isnan(found.quantiles_um[2])
+    assert np.isfinite(found.quantiles_um[1])
+    assert found.mean_um == pytest.approx(sum(survival[d] for d in range(w // 2 + 1)) - 0.5, rel=0.03)
+    closed = mask.copy()
+    closed[:, -1] = True
+    both = describe_filling(closed, np.ones_like(closed), 1.0).distances
+    assert (both.unseen, both.flags) == (0.0, Flag.NONE)
+    apart, field = np.zeros((9, 20), dtype=bool), np.zeros((9, 20), dtype=bool)
+    apart[:, :3] = field[:, :3] = field[:, 11:] = True  # the tissue lies in a part of the field without a vessel
+    nothing = describe_filling(apart, field, 1.0).distances
+    assert (nothing.unseen, nothing.flags) == (1.0, Flag.TISSUE_UNSEEN)
+    assert np.isnan(nothing.mean_um)
 
 
 def test_the_largest_avascular_area_is_an_opening_and_a_connected_part():
@@ -275,6 +312,7 @@ def test_each_class_has_pixels_of_its_own():
     alone = mask.copy()
     alone[100:] = False
     expected = describe_filling(alone, np.ones_like(mask), 1.0)
-    assert fillings["ARTERIOLE"].distances == expected.distances
+    np.testing.assert_equal(astuple(fillings["ARTERIOLE"].distances), astuple(expected.distances))
     assert fillings["ARTERIOLE"].dimension == expected.dimension
+    np.testing.assert_equal(fillings["ARTERIOLE"].scales.lacunarity, expected.scales.lacunarity)
     assert fillings["VENULE"].distances.mean_um != fillings["ARTERIOLE"].distances.mean_um

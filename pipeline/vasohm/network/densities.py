@@ -1,11 +1,12 @@
 """How vessels fill the field of view: distances of the tissue, avascular areas, box dimension, lacunarity."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import ndimage
 
-from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
+from vasohm.arrays import AnyArray, BoolArray, FloatArray, IntArray, freeze
+from vasohm.flags import Flag
 
 BOXES_ACROSS = 4  # larger boxes are all occupied
 LEAST_EDGES = 3  # that a line through box counts needs
@@ -19,7 +20,9 @@ class TissueDistances:
 
     mean_um: float
     sd_um: float
-    quantiles_um: tuple[float, float, float]  # 5 %, 50 %, 95 %
+    quantiles_um: tuple[float, float, float]  # 5 %, 50 %, 95 %; NaN beyond what the field of view can tell
+    unseen: float  # share of the tissue that lies further away than the field can tell
+    flags: Flag
 
 
 @dataclass(frozen=True, slots=True)
@@ -54,7 +57,7 @@ class BoxDimension:
     most_px: float
 
 
-NO_DISTANCES = TissueDistances(np.nan, np.nan, (np.nan, np.nan, np.nan))
+NO_DISTANCES = TissueDistances(np.nan, np.nan, (np.nan, np.nan, np.nan), np.nan, Flag.NONE)
 NO_AVASCULAR_AREA = AvascularArea(np.nan, np.nan, np.nan, np.nan)
 NO_DIMENSION = BoxDimension(np.nan, np.nan, np.nan, np.nan)
 
@@ -131,8 +134,10 @@ def tissue_distances(
     Notes
     -----
     Near the border the nearest vessel may lie outside of what is seen: such a pixel only tells that its distance is at
-    least that to the border. The product-limit estimator takes both kinds; beyond the largest distance to a vessel that
-    was seen it ends. Distances are to the border of the vessel's pixels, half a pixel before their centres.
+    least that to the border. The product-limit estimator takes both kinds. Where the largest distances are of that kind
+    it ends before 1: what is left counts as being as far away as the furthest pixel is known to be, so that mean and
+    deviation are least values, and quantiles beyond are NaN. `TISSUE_UNSEEN` is set where the 95 % quantile is.
+    Distances are to the border of the vessel's pixels, half a pixel before their centres.
 
     References
     ----------
@@ -149,16 +154,21 @@ def tissue_distances(
     counts, events = counts[at], events[at]
     at_risk = np.cumsum(counts[::-1])[::-1]
     survival = np.cumprod(1.0 - events / at_risk)
-    before = np.concatenate(([1.0], survival[:-1]))
-    part = before - survival
-    if part.sum() <= 0:
-        return NO_DISTANCES
-    part = part / part.sum()
+    upto, unseen = 1.0 - survival, float(survival[-1])
+    if not told.any():
+        return replace(NO_DISTANCES, unseen=unseen, flags=Flag.TISSUE_UNSEEN)
+    part = -np.diff(survival, prepend=1.0)
+    part[-1] += unseen
     distance = (np.sqrt(at) - 0.5) * pixel_size_um
     mean = float(part @ distance)
-    upto = np.cumsum(part)
-    low, middle, high = distance[np.minimum(np.searchsorted(upto, QUANTILES), len(at) - 1)].tolist()
-    return TissueDistances(mean, float(np.sqrt(part @ np.square(distance - mean))), (low, middle, high))
+    low, middle, high = np.append(distance, np.nan)[np.searchsorted(upto, QUANTILES)].tolist()
+    return TissueDistances(
+        mean_um=mean,
+        sd_um=float(np.sqrt(part @ np.square(distance - mean))),
+        quantiles_um=(low, middle, high),
+        unseen=unseen,
+        flags=Flag.NONE if np.isfinite(high) else Flag.TISSUE_UNSEEN,
+    )
 
 
 def avascular_area(squared_px2: IntArray, vessels: BoolArray, fov: BoolArray, pixel_size_um: float) -> AvascularArea:
@@ -213,35 +223,37 @@ def count_boxes(pixels: BoolArray, fov: BoolArray) -> Scales:
     window = (slice(rows[0], rows[-1] + 1), slice(columns[0], columns[-1] + 1))
     boxes = pixels[window]
     largest = min(boxes.shape) / BOXES_ACROSS
-    mass, room = _integral(pixels[window]), _integral(fov[window])
+    mass, room = boxes.view(np.uint8), fov[window].view(np.uint8)
     edge, edges, counts, lacunarity = 1, [], [], []
     while 2 * edge <= largest:
         boxes = np.pad(boxes, [(0, boxes.shape[0] % 2), (0, boxes.shape[1] % 2)])
         boxes = boxes[::2, ::2] | boxes[1::2, ::2] | boxes[::2, 1::2] | boxes[1::2, 1::2]
+        mass, room = _double(mass, edge), _double(room, edge)
         edge *= 2
         edges.append(edge)
         counts.append(np.count_nonzero(boxes))
-        lacunarity.append(_lacunarity(mass, room, edge))
+        lacunarity.append(_lacunarity(mass, room == edge * edge))
     return Scales(np.array(edges, dtype=np.int64), np.array(counts, dtype=np.int64), np.array(lacunarity))
 
 
-def _integral(pixels: BoolArray) -> IntArray:
-    """Sum of all pixels above and to the left, (h + 1, w + 1)."""
-    total = np.zeros((pixels.shape[0] + 1, pixels.shape[1] + 1), dtype=np.int32)
-    np.cumsum(pixels, axis=0, dtype=np.int32, out=total[1:, 1:])
-    np.cumsum(total[1:, 1:], axis=1, out=total[1:, 1:])
-    return total
+def _double(sums: AnyArray, edge: int) -> AnyArray:
+    """Sums over gliding boxes of twice the edge, from those of the edge, in the smallest type that holds them.
 
-
-def _lacunarity(mass: IntArray, room: IntArray, edge: int) -> float:
+    Boxes of an edge glide by a quarter of it, by one pixel below 8 px: those of twice the edge by twice as much from 8
+    px on.
+    """
+    small = np.min_scalar_type(4 * edge * edge)
     step = max(edge // STEPS_A_BOX, 1)
+    every, beside = max(2 * edge // STEPS_A_BOX, 1) // step, edge // step
+    for axis in (0, 1):
+        lines = np.moveaxis(sums, axis, 0)
+        high = lines[beside::every]
+        sums = np.moveaxis(np.add(lines[::every][: len(high)], high, dtype=small), 0, axis)
+    return sums
 
-    def sums(total: IntArray) -> IntArray:
-        low, high = total[:-edge:step], total[edge::step]
-        return (high[:, edge::step] - high[:, :-edge:step]) - (low[:, edge::step] - low[:, :-edge:step])
 
-    whole = sums(room) == edge * edge
-    held = (sums(mass) * whole).astype(float).ravel()
+def _lacunarity(mass: AnyArray, whole: BoolArray) -> float:
+    held = (mass * whole).astype(float).ravel()
     total = held.sum()
     return float(np.count_nonzero(whole) * (held @ held) / total**2) if total > 0 else np.nan
 

@@ -45,6 +45,8 @@ class Surroundings:
     role: IntArray  # (n_nodes,) +1 inlet, -1 outlet, 0 neither
     flow_nl_min: FloatArray  # (n_segments,) from node_a to node_b, NaN where not known
     resistance_pa_s_m3: FloatArray  # (n_segments,)
+    ln_resistance_random_se: FloatArray  # (n_segments,)
+    ln_resistance_shared_se: FloatArray
 
     def __post_init__(self) -> None:
         freeze(self)
@@ -120,7 +122,8 @@ def describe_shape(measured: MeasuredGraph, around: Surroundings, settings: Shap
     edges = np.bincount(segment_network, minlength=n_networks)
     curves = describe_curves(measured)
     shapes = SegmentShapes(radius_mean, tortuosity, curves, seen_lengths(measured, around.fov))
-    rooting = Rooting(segment_network, node_network, around.role, radius_mean, around.resistance_pa_s_m3)
+    doubt = (around.ln_resistance_random_se, around.ln_resistance_shared_se)
+    rooting = Rooting(segment_network, node_network, around.role, radius_mean, around.resistance_pa_s_m3, *doubt)
     field = (around.vessels, around.fov)
     calibre = (settings.calibre_formula, settings.zone_dd)
     return Morphometry(

@@ -38,7 +38,11 @@ class Orders:
     radius_um: FloatArray
     radius_sd_um: FloatArray
     resistance_series: FloatArray  # mean of the elements, whose segments are in series
+    ln_series_random_se: FloatArray
+    ln_series_shared_se: FloatArray
     resistance_parallel: FloatArray  # of all elements side by side
+    ln_parallel_random_se: FloatArray
+    ln_parallel_shared_se: FloatArray
     # one row a network and scheme
     ratio_network: IntArray
     ratio_scheme: IntArray
@@ -64,6 +68,8 @@ class Rooting:
     role: IntArray  # (n_nodes,) +1 inlet, -1 outlet, 0 neither
     radius_um: FloatArray  # (n_segments,)
     resistance: FloatArray  # (n_segments,)
+    ln_random_se: FloatArray  # (n_segments,) standard uncertainties of ln R
+    ln_shared_se: FloatArray
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -103,6 +109,9 @@ def find_orders(measured: MeasuredGraph, rooting: Rooting) -> Orders:
     carries the element on. Ratios are exp of the slope of ln number, ln mean length and ln mean radius of the
     elements over the order (Horton's laws), the first with its sign turned; their standard errors are those of the
     slopes, NaN for two orders.
+
+    The doubt of an order's resistance is that of its segments, weighted by what each adds to it: random parts in
+    quadrature; shared parts as if every cause moved all segments the same way, which is at most too much.
 
     References
     ----------
@@ -254,6 +263,8 @@ def _mean_sd(group: IntArray, values: FloatArray, n_groups: int) -> tuple[FloatA
 
 @dataclass(frozen=True, slots=True, eq=False)
 class _Elements:
+    segment: IntArray  # (n,) segments that have an order
+    element: IntArray  # (n,) the element that each belongs to; below, one entry an element
     network: IntArray
     order: IntArray
     length_um: FloatArray
@@ -275,6 +286,8 @@ def _elements(trees: _Trees, order: IntArray, measured: MeasuredGraph, rooting: 
     names, first, element = np.unique(label[ordered], return_index=True, return_inverse=True)
     length = measured.length_um[ordered]
     return _Elements(
+        segment=ordered,
+        element=element,
         network=rooting.segment_network[ordered][first],
         order=order[ordered][first],
         length_um=sum_by(element, length, len(names)),
@@ -284,19 +297,30 @@ def _elements(trees: _Trees, order: IntArray, measured: MeasuredGraph, rooting: 
 
 
 def _by_order(elements: _Elements, order: IntArray, rooting: Rooting) -> tuple[FloatArray, ...]:
-    """Network and order of each row; numbers of segments and elements; means and deviations; resistances."""
+    """Network and order of each row; numbers of segments and elements; means and deviations; resistances, doubt."""
     most = int(order.max(initial=0)) + 1
     key = elements.network * most + elements.order
     rows, group = np.unique(key, return_inverse=True)
     n = len(rows)
-    segment_key = (rooting.segment_network * most + order)[order > 0]
     length = _mean_sd(group, elements.length_um, n)
     radius = _mean_sd(group, elements.radius_um, n)
-    series, _ = _mean_sd(group, elements.resistance, n)
-    conductance = sum_by(group, 1.0 / elements.resistance, n)
-    counts = np.bincount(np.searchsorted(rows, segment_key), minlength=n)
-    n_elements = np.bincount(group, minlength=n)
-    return (rows // most, rows % most, counts, n_elements, *length, *radius, series, 1.0 / conductance)
+    conductance = 1.0 / elements.resistance
+    total, in_parallel = sum_by(group, elements.resistance, n), sum_by(group, conductance, n)
+    row, part = group[elements.element], rooting.resistance[elements.segment]
+    doubt = (rooting.ln_random_se[elements.segment], rooting.ln_shared_se[elements.segment])
+    of_series = _weighted_doubt(row, part / total[row], doubt, n)
+    of_parallel = _weighted_doubt(row, part * conductance[elements.element] ** 2 / in_parallel[row], doubt, n)
+    counts, n_elements = np.bincount(row, minlength=n), np.bincount(group, minlength=n)
+    resistances = (total / n_elements, *of_series, 1.0 / in_parallel, *of_parallel)
+    return (rows // most, rows % most, counts, n_elements, *length, *radius, *resistances)
+
+
+def _weighted_doubt(
+    row: IntArray, weight: FloatArray, doubt: tuple[FloatArray, FloatArray], n: int
+) -> tuple[FloatArray, FloatArray]:
+    """Random and shared standard uncertainty (n,) of sums whose parts move them by these weights."""
+    random_se, shared_se = doubt
+    return np.sqrt(sum_by(row, np.square(weight * random_se), n)), sum_by(row, weight * shared_se, n)
 
 
 def _horton(counted: tuple[FloatArray, ...], n_networks: int) -> tuple[FloatArray, ...]:

@@ -101,7 +101,27 @@ ORDERS: tuple[Column, ...] = (
         "Pa.s/m3",
         "Mean resistance of the order's elements, each the sum over its segments in series.",
     ),
+    number(
+        "ln_resistance_series_random_se",
+        "1",
+        "Standard uncertainty of ln(resistance_series_pa_s_m3) from noise in the radii and lengths of its segments.",
+    ),
+    number(
+        "ln_resistance_series_shared_se",
+        "1",
+        "Standard uncertainty of ln(resistance_series_pa_s_m3) from what segments share, as if it moved all alike.",
+    ),
     number("resistance_parallel_pa_s_m3", "Pa.s/m3", "Resistance of all elements of the order side by side."),
+    number(
+        "ln_resistance_parallel_random_se",
+        "1",
+        "Standard uncertainty of ln(resistance_parallel_pa_s_m3) from noise in the radii and lengths of its segments.",
+    ),
+    number(
+        "ln_resistance_parallel_shared_se",
+        "1",
+        "Standard uncertainty of ln(resistance_parallel_pa_s_m3) from what segments share, as if it moved all alike.",
+    ),
 )
 
 HORTON: tuple[Column, ...] = (
@@ -143,7 +163,18 @@ TISSUE = (
     number("tissue_distance_sd_um", "um", "Standard deviation of the distances from tissue to vessels."),
     number("tissue_distance_p05_um", "um", "5 % of the tissue is at most so far from a vessel."),
     number("tissue_distance_median_um", "um", "Half of the tissue is at most so far from a vessel."),
-    number("tissue_distance_p95_um", "um", "95 % of the tissue is at most so far from a vessel."),
+    number(
+        "tissue_distance_p95_um",
+        "um",
+        "95 % of the tissue is at most so far from a vessel; empty, as the median may be, where the field of view "
+        "cannot tell it (tissue_unseen_fraction).",
+    ),
+    number(
+        "tissue_unseen_fraction",
+        "1",
+        "Share of the tissue that lies further from any vessel than the field of view can tell. It is counted at the "
+        "largest distance that is told, so that the mean and standard deviation of the distances are least values.",
+    ),
 )
 
 DIMENSION = (

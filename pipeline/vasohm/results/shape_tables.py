@@ -74,7 +74,11 @@ def order_rows(shape: Morphometry) -> dict[str, AnyArray]:
         "radius_um": found.radius_um,
         "radius_sd_um": found.radius_sd_um,
         "resistance_series_pa_s_m3": found.resistance_series,
+        "ln_resistance_series_random_se": found.ln_series_random_se,
+        "ln_resistance_series_shared_se": found.ln_series_shared_se,
         "resistance_parallel_pa_s_m3": found.resistance_parallel,
+        "ln_resistance_parallel_random_se": found.ln_parallel_random_se,
+        "ln_resistance_parallel_shared_se": found.ln_parallel_shared_se,
     }
 
 
@@ -203,6 +207,7 @@ def _filling_cells(filling: Filling | None) -> dict[str, float]:
         "tissue_distance_p05_um",
         "tissue_distance_median_um",
         "tissue_distance_p95_um",
+        "tissue_unseen_fraction",
         "box_dimension",
         "box_dimension_se",
         "box_least_px",
@@ -216,6 +221,7 @@ def _filling_cells(filling: Filling | None) -> dict[str, float]:
         distances.mean_um,
         distances.sd_um,
         *distances.quantiles_um,
+        distances.unseen,
         dimension.value,
         dimension.se,
         dimension.least_px,

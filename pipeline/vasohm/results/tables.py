@@ -346,7 +346,7 @@ def _scenarios(outcomes: ScenarioOutcomes) -> dict[str, AnyArray]:
 def _image(findings: Findings) -> dict[str, Any]:
     prepared, measured, shape = findings.prepared, findings.measured, findings.shape
     kind = measured.graph.node_kind
-    flags = prepared.flags | measured.flags | findings.flow.terminals.flags
+    flags = prepared.flags | measured.flags | findings.flow.terminals.flags | shape.filling.distances.flags
     if shape.equivalents is not None:
         flags |= shape.equivalents.flags
     tells_blur = bool(measured.graph.n_segments) and not measured.flags & BLUR_NOT_TOLD
