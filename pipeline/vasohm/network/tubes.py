@@ -44,6 +44,7 @@ from vasohm.network.learn import (
 from vasohm.network.noise import noise_correlation
 from vasohm.network.observe import Scene, observe
 from vasohm.network.pilot import Guess, average_strips, bridge, guess_radii, segment_quantile
+from vasohm.network.pooled import blocks_of, mean_of_block, pool, spaced, widest_of_block
 from vasohm.network.posterior import (
     LOG10_STIFFNESS,
     BandedCovariance,
@@ -143,10 +144,7 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
     noise = noise_factor(known.table, scene.covariance, cnr, contrast_sd)
     scene = replace(scene, owners=paint_owners(scene.frame, reach, scene.shape), noise=noise)
     everything = np.arange(lines.n_segments)
-    observed, _ = observe(scene, everything, theta, known.table, alone=False)
-    theta = bridge(theta, observed.row_scale > 0, observed.segment)
-    priors = _priors(observed, known, theta)
-    theta, _ = fit_joint(observed, priors, known.table, theta, max_steps=4)
+    theta = _near(scene, everything, theta, known)
     scene = replace(scene, frame=recentre(scene.frame, theta[:, OFFSET], lines.offsets))
     theta[:, OFFSET] = 0.0
     observed, _ = observe(scene, everything, theta, known.table, alone=False)
@@ -227,6 +225,21 @@ def _priors(observed: Observed, known: ImageKnowledge, theta: FloatArray) -> Pri
     contrast = np.where(known.contrast.group >= 0, known.contrast.mean, own)
     expected = Expected(contrast, known.contrast.spread, reflex, sd)
     return make_priors(observed, known.table, theta, expected)
+
+
+def _near(scene: Scene, everything: IntArray, theta: FloatArray, known: ImageKnowledge) -> FloatArray:
+    """Lead first unknowns near the most probable ones by strips averaged along the vessels, which cost a quarter."""
+    lines, table = scene.lines, known.table
+    first, offsets = blocks_of(lines.offsets)
+    even = theta.copy()
+    even[:, LN_R] = widest_of_block(theta[:, LN_R], first)
+    observed, _ = observe(scene, everything, even, table, alone=True)
+    begun = bridge(theta, observed.row_scale > 0, observed.segment)
+    pooled, start = pool(observed, first, offsets, scene.covariance), mean_of_block(begun, first)
+    priors = spaced(_priors(pooled, known, start))
+    found, _ = fit_joint(pooled, priors, table, start, max_steps=4)
+    rows = np.diff(first, append=lines.n_points)
+    return begun + np.repeat(found - start, rows, axis=0)
 
 
 # --- what is known afterwards ---------------------------------------------------------------------------------------
