@@ -139,12 +139,27 @@ def test_stated_doubt_of_calibres_is_that_of_repeated_draws():
         np.testing.assert_allclose(np.std(drawn, axis=0)[3], expected[3] / np.sqrt(2), rtol=SPREAD)
 
 
+def test_stated_doubt_of_optimal_angles_is_that_of_repeated_draws():
+    """Radii that err by 1 % each (JCGM 100:2008, eq. 10); no doubt of an angle that does not exist."""
+    rng = np.random.default_rng(11)
+    true = np.array([10.0, 8.0, 7.6])
+    radii = true * np.exp(rng.normal(0, 0.01, (2000, 3)))
+    stated = branchings_of(fork(tuple(true), (30.0, 40.0), ln_se=0.01, errors=CommonErrors))
+    for power, angle_se in ((2.0, stated.volume_angle_se_deg), (1.0, stated.surface_angle_se_deg)):
+        drawn = np.std(optimal_angles_deg(radii, power), axis=0)
+        np.testing.assert_allclose(angle_se[0], drawn, rtol=4 / np.sqrt(2 * 2000))
+    none = branchings_of(fork((10.0, 9.9, 2.0), (30.0, 40.0), ln_se=0.01, errors=CommonErrors))
+    np.testing.assert_array_equal(np.isnan(none.volume_angle_se_deg), np.isnan(none.volume_angle_deg))
+
+
 def test_what_all_vessels_share_cancels_in_ratios():
     """A wrong pixel size moves every radius and no ratio."""
     found = branchings_of(fork((10.0, 8.0, 6.5), (30.0, 40.0), pixel_size_rel_se=0.1, shared=np.full((303, 1), 0.05)))
     np.testing.assert_allclose(found.radius_se_um[0], np.hypot(0.1, 0.05) * found.radius_um[0])
     for name in ("area_ratio_se", "asymmetry_se", "murray_ratio_se", "junction_exponent_se"):
         assert getattr(found, name)[0] == pytest.approx(0.0, abs=1e-9)
+    for angles_se in (found.volume_angle_se_deg, found.surface_angle_se_deg):
+        np.testing.assert_allclose(angles_se, 0.0, atol=1e-6)
 
 
 def test_stated_doubt_of_angles_holds_the_scatter_of_centrelines():

@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 from beds import Vessel, bed, published, straight
-from scipy import integrate
+from scipy import integrate, ndimage
 from shapes import shape_of
 
 from vasohm.network.graph import NodeKind
@@ -90,6 +90,19 @@ def test_a_straight_vessel_with_noise_has_no_inflection():
     assert found.inflections[0] == 0
     straight_line = describe_curves(curve(x, 0 * x, 1.0))
     assert straight_line.curvature_rad[0] == pytest.approx(0.0, abs=1e-9)
+
+
+@pytest.mark.parametrize("half_wave_px", [100, 400])
+@pytest.mark.parametrize("turn_rad", [0.3, 1.0])
+def test_noise_does_not_part_a_long_bend(half_wave_px, turn_rad):
+    """A gentle S has one inflection, however its turns waver by noise of 0.15 px, three times that of drawn tubes."""
+    rng = np.random.default_rng(3)
+    x = np.linspace(0, 2 * half_wave_px, 2 * half_wave_px + 1)
+    k = np.pi / half_wave_px
+    for _ in range(10):
+        noise = ndimage.gaussian_filter1d(rng.normal(0, 1, len(x)), 2.5)
+        found = describe_curves(curve(x, turn_rad / (2 * k) * np.sin(k * x) + 0.15 * noise / noise.std(), 1.0))
+        assert found.inflections[0] == 1
 
 
 def test_the_straight_way_into_a_branching_does_not_count():

@@ -214,32 +214,31 @@ def carpet(rule, depth):
     return result
 
 
-def koch(depth, size):
+def koch(depth, size, corners):
+    """Curve in which each piece is replaced by pieces through these corners of the unit piece; its corners drawn."""
     points = np.array([0, 1], dtype=complex)
     for _ in range(depth):
-        step = np.diff(points) / 3
-        parts = [
-            points[:-1],
-            points[:-1] + step,
-            points[:-1] + step * (1 + np.exp(1j * np.pi / 3)),
-            points[:-1] + 2 * step,
-        ]
-        points = np.append(np.stack(parts, axis=1).ravel(), points[-1])
+        parts = points[:-1, None] + np.diff(points)[:, None] * np.array([0, *corners])
+        points = np.append(parts.ravel(), points[-1])
+    between = np.arange(4) / 4  # pieces of at most 2 px
+    points = (points[:-1, None] + np.diff(points)[:, None] * between).ravel() * (size - 1)
     mask = np.zeros((size, size), dtype=bool)
-    x, y = np.rint(points.real * (size - 1)).astype(int), np.rint(points.imag * (size - 1)).astype(int)
-    for k in range(len(x) - 1):
-        mask[draw.line(y[k], x[k], y[k + 1], x[k + 1])] = True
+    mask[np.rint(points.imag - points.imag.min()).astype(int), np.rint(points.real).astype(int)] = True
     return mask
 
 
 SETS = {
-    "Koch curve": (koch(6, 1024), 0.03),
+    "Koch curve": (koch(6, 1024, [1 / 3, (1 + np.exp(1j * np.pi / 3)) / 3, 2 / 3]), 0.03),
+    "quadratic Koch (Minkowski sausage)": (
+        koch(5, 1025, np.array([1, 1 + 1j, 2 + 1j, 2, 2 - 1j, 3 - 1j, 3]) / 4), 0.05,
+    ),
     "Sierpinski triangle": (np.array([[(i & j) == 0 for j in range(512)] for i in range(512)]), 1e-12),
     "Sierpinski carpet": (carpet(np.array([[1, 1, 1], [1, 0, 1], [1, 1, 1]], dtype=bool), 6), 0.03),
     "Vicsek fractal": (carpet(np.array([[0, 1, 0], [1, 1, 1], [0, 1, 0]], dtype=bool), 6), 0.08),
     "four-corner Cantor dust ratio 1/4": (
         carpet(np.array([[1, 0, 0, 1], [0] * 4, [0] * 4, [1, 0, 0, 1]], dtype=bool), 5), 0.05,
     ),
+    "four-corner Cantor dust ratio 1/3": (carpet(np.array([[1, 0, 1], [0] * 3, [1, 0, 1]], dtype=bool), 6), 0.08),
     "straight line": (np.arange(512)[:, None] + np.zeros((1, 512)) == 100, 1e-12),
     "filled square": (np.ones((512, 512), dtype=bool), 1e-12),
 }  # fmt: skip

@@ -48,7 +48,9 @@ class Branchings:
     murray_ratio: FloatArray
     murray_ratio_se: FloatArray
     volume_angle_deg: FloatArray  # (n, 2) of children 1 and 2 for the least volume or pumping power
+    volume_angle_se_deg: FloatArray  # (n, 2)
     surface_angle_deg: FloatArray  # (n, 2) for the least surface or drag
+    surface_angle_se_deg: FloatArray  # (n, 2)
     volume_imbalance: FloatArray
     surface_imbalance: FloatArray
     flags: IntArray
@@ -126,9 +128,9 @@ def find_branchings(measured: MeasuredGraph, flow_nl_min: FloatArray) -> Branchi
     cost, volume (p = 2) or surface (p = 1), that moving the node would save for its way. It is 0 exactly where the
     angles are those of least cost, and exists where those angles do not.
 
-    Uncertainties of radii are those of their mean over the zone. What all vessels share, the pixel size too, largely
-    cancels in ratios and exponents. That of a direction is the scatter of the centreline about its line, with 1 degree
-    for lumina that still touch.
+    Uncertainties of radii are those of their mean over the zone; those of what is made of them hold to first order.
+    What all vessels share, the pixel size too, largely cancels in ratios, exponents and optimal angles. That of a
+    direction is the scatter of the centreline about its line, with 1 degree for lumina that still touch.
 
     References
     ----------
@@ -169,7 +171,9 @@ def find_branchings(measured: MeasuredGraph, flow_nl_min: FloatArray) -> Branchi
         murray_ratio=murray_ratio,
         murray_ratio_se=read.se_of(_ratio_gradient(share**1.5, 3.0)),
         volume_angle_deg=optimal_angles_deg(read.radius, VOLUME),
+        volume_angle_se_deg=_optimal_angles_se_deg(read, VOLUME),
         surface_angle_deg=optimal_angles_deg(read.radius, SURFACE),
+        surface_angle_se_deg=_optimal_angles_se_deg(read, SURFACE),
         volume_imbalance=_imbalance(read, VOLUME),
         surface_imbalance=_imbalance(read, SURFACE),
         flags=doubt | np.where(read.short.any(axis=1), int(Flag.SHORT), 0),
@@ -202,6 +206,21 @@ def optimal_angles_deg(radius: FloatArray, power: float) -> FloatArray:
     cosine = (cost[:, :1] ** 2 + own**2 - other**2) / (2.0 * cost[:, :1] * own)
     exists = np.all(np.abs(cosine) <= 1, axis=1, keepdims=True)
     return np.where(exists, np.degrees(np.arccos(np.clip(cosine, -1, 1))), np.nan)
+
+
+def _optimal_angles_se_deg(read: _Readings, power: float) -> FloatArray:
+    """Standard uncertainty (n, 2) of the angles of least cost, by the derivatives of their cosines with each ln r."""
+    cost = read.radius**power
+    told = []
+    for own, other in ((1, 2), (2, 1)):
+        angle = np.radians(optimal_angles_deg(read.radius, power)[:, own - 1])
+        sine = np.where(np.sin(angle) > 0, np.sin(angle), np.nan)
+        gradient = np.empty_like(cost)
+        gradient[:, 0] = cost[:, 0] / cost[:, own] - np.cos(angle)
+        gradient[:, own] = cost[:, own] / cost[:, 0] - np.cos(angle)
+        gradient[:, other] = -(cost[:, other] ** 2) / (cost[:, 0] * cost[:, own])
+        told.append(np.degrees(read.se_of(power * gradient / -sine[:, None])))
+    return np.stack(told, axis=1)
 
 
 def junction_exponent(parent: FloatArray, wide: FloatArray, narrow: FloatArray) -> FloatArray:

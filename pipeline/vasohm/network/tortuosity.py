@@ -43,7 +43,8 @@ def describe_curves(measured: MeasuredGraph) -> Curves:
     0.0015 rad a pixel on rendered tubes.
 
     The stretch beside a branching, where a centreline found in a picture runs straight into the node, is left out. An
-    inflection lies between two bends to different sides that each turn by 0.2 rad (11°) or more.
+    inflection lies between turns to either side of 0.2 rad (11°) or more each; what turns back by less does not part
+    them.
 
     References
     ----------
@@ -136,14 +137,34 @@ def _slope(values: FloatArray, offsets: IntArray) -> FloatArray:
 
 
 def _inflections(turn: FloatArray, path: IntArray, n: int) -> FloatArray:
-    """Count changes of side among the bends (stretches of one sign) of each path that turn far enough."""
+    """Count how often each path, having turned far enough to one side, turns as far to the other.
+
+    What turns back by less, as noise does, neither counts nor parts a long gentle bend in two.
+    """
+    counts = np.zeros(n)
     if len(turn) == 0:
-        return np.zeros(n)
+        return counts
     side = np.sign(turn)
     begins = np.concatenate(([True], (np.diff(side) != 0) | (np.diff(path) != 0)))
     first = np.flatnonzero(begins)
-    bend = np.add.reduceat(turn, first)
-    clear = np.abs(bend) >= LEAST_TURN_RAD
-    bend, of = bend[clear], path[first][clear]
-    changes = (np.diff(np.sign(bend)) != 0) & (np.diff(of) == 0)
-    return np.bincount(of[1:][changes], minlength=n).astype(float)
+    bends, of = np.add.reduceat(turn, first), path[first]
+    to_left, to_right = (sum_by(of, np.maximum(sign * bends, 0.0), n) for sign in (1.0, -1.0))
+    may_change = np.minimum(to_left, to_right) >= LEAST_TURN_RAD
+    offsets = offsets_of(np.bincount(of, minlength=n))
+    for k in np.flatnonzero(may_change):
+        counts[k] = _reversals(bends[offsets[k] : offsets[k + 1]].tolist())
+    return counts
+
+
+def _reversals(bends: list[float]) -> int:
+    """Number of times that a direction made of these turns goes back from its furthest by `LEAST_TURN_RAD` or more."""
+    count = side = 0
+    at = low = high = 0.0
+    for bend in bends:
+        at += bend
+        low, high = min(low, at), max(high, at)
+        if side >= 0 and high - at >= LEAST_TURN_RAD:
+            count, side, low = count + (side > 0), -1, at
+        elif side <= 0 and at - low >= LEAST_TURN_RAD:
+            count, side, high = count + (side < 0), 1, at
+    return count

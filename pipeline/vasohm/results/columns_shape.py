@@ -63,14 +63,18 @@ BRANCHINGS: tuple[Column, ...] = (
         "angle_1_deg that these three radii would have for the least volume or pumping power (Murray, J Gen Physiol "
         "1926;9:835-841; Zamir, J Theor Biol 1976;62:227-251); empty where no angle is best.",
     ),
+    number("volume_angle_1_se_deg", "deg", "Standard uncertainty of volume_angle_1_deg (k = 1, to first order)."),
     number("volume_angle_2_deg", "deg", "The same for angle_2_deg."),
+    number("volume_angle_2_se_deg", "deg", "Standard uncertainty of volume_angle_2_deg (k = 1, to first order)."),
     number(
         "surface_angle_1_deg",
         "deg",
         "angle_1_deg that these three radii would have for the least surface or drag (Zamir 1976); empty where no "
         "angle is best.",
     ),
+    number("surface_angle_1_se_deg", "deg", "Standard uncertainty of surface_angle_1_deg (k = 1, to first order)."),
     number("surface_angle_2_deg", "deg", "The same for angle_2_deg, for the least surface or drag."),
+    number("surface_angle_2_se_deg", "deg", "Standard uncertainty of surface_angle_2_deg (k = 1, to first order)."),
     number(
         "volume_imbalance",
         "1",

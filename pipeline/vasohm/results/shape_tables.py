@@ -39,9 +39,10 @@ def branching_rows(shape: Morphometry) -> dict[str, AnyArray]:
     for name in ("area_ratio", "asymmetry", "junction_exponent", "murray_ratio"):
         columns[name] = getattr(found, name)
         columns[f"{name}_se"] = getattr(found, f"{name}_se")
-    for k in (0, 1):
-        columns[f"volume_angle_{k + 1}_deg"] = found.volume_angle_deg[:, k]
-        columns[f"surface_angle_{k + 1}_deg"] = found.surface_angle_deg[:, k]
+    for name in ("volume_angle", "surface_angle"):
+        for k in (0, 1):
+            columns[f"{name}_{k + 1}_deg"] = getattr(found, f"{name}_deg")[:, k]
+            columns[f"{name}_{k + 1}_se_deg"] = getattr(found, f"{name}_se_deg")[:, k]
     return columns | {
         "volume_imbalance": found.volume_imbalance,
         "surface_imbalance": found.surface_imbalance,
