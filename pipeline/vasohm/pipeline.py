@@ -38,7 +38,7 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     fov = read_mask(source.fov_file, shape) if source.fov_file else None
     labels = read_labels(source.class_file, shape) if source.class_file else None
     stage("prepare")
-    prepared = prepare(calibrate(raw, source.scale, settings.scale), settings.prepare, fov)
+    prepared = prepare(calibrate(raw, source.scale, settings.scale, disc=source.disc), settings.prepare, fov)
     stage("segment")
     mask = segment(prepared, settings.segment, given)
     stage("graph")

@@ -21,19 +21,17 @@ def test_a_sound_study_is_told_in_one_line(make_study: MakeStudy) -> None:
 def test_what_this_version_does_not_use_is_told_and_is_no_problem(make_study: MakeStudy) -> None:
     """Nobody should wait for a comparison, or for a correction by eye length, that never comes."""
     study = make_study(2)
-    rows = {"image-0": "image-0.png,a,23.5,40,40,9", "image-1": "image-1.png,b,,,,"}
-    study.sheet(rows, "image_id,file,group,axial_length_mm,disc_x_px,disc_y_px,disc_radius_px")
+    rows = {"image-0": "image-0.png,a,23.5", "image-1": "image-1.png,b,"}
+    study.sheet(rows, "image_id,file,group,axial_length_mm")
     compare = '[compare]\noutcomes = ["networks.resistance_pa_s_m3"]\nby = "group"\nreference = "a"\n'
     study.file.write_text(study.file.read_text() + compare)
     checked = study.run("check", study.file)
     assert checked.status == 0, checked.complained
     lines = checked.complained.splitlines()
-    assert len(lines) == 3
-    for line, words in zip(
-        lines, ("[compare]", "axial_length_mm", "disc_x_px, disc_y_px, disc_radius_px"), strict=True
-    ):
-        assert words in line
-    assert "not part of this version" in lines[0]
+    assert len(lines) == 2
+    assert "axial_length_mm and refraction_d of the sheet are not used" in lines[0]
+    assert "[compare]" in lines[1]
+    assert "not part of this version" in lines[1]
     assert checked.told.endswith("2 images, no problem found\n")
 
 
@@ -61,6 +59,34 @@ def test_every_problem_of_the_files_is_told_at_once_with_its_place(make_study: M
         assert place in line
     assert "gone.png" in lines[2]
     assert f"{SIZE_PX + 4} x {SIZE_PX}" in lines[1]
+
+
+def test_missing_and_impossible_lengths_are_told_for_all_images_at_once(make_study: MakeStudy) -> None:
+    study = make_study(3)
+    study.file.write_text(
+        study.file.read_text().replace("pixel_size_um = 2.0", 'pixel_size_um = 2.0\nmagnification = "bennett"')
+    )
+    study.sheet(
+        {"image-0": "image-0.png,", "image-1": "image-1.png,24", "image-2": "image-2.png,"},
+        "image_id,file,axial_length_mm",
+    )
+    checked = study.run("check", study.file)
+    assert checked.status == 2
+    lines = checked.complained.splitlines()
+    assert len(lines) == 2, checked.complained
+    for line, place in zip(lines, ("images.csv:2 axial_length_mm", "images.csv:4 axial_length_mm"), strict=True):
+        assert place in line
+        assert 'magnification = "bennett" needs axial_length_mm' in line
+    study.sheet(
+        {"image-0": "image-0.png,2", "image-1": "image-1.png,200", "image-2": "image-2.png,long"},
+        "image_id,file,axial_length_mm",
+    )
+    checked = study.run("check", study.file)
+    assert checked.status == 2
+    for row, words in enumerate(
+        ("'2' must be at least 15 and at most 40", "'200' must be at least 15", "'long' is not a number"), start=2
+    ):
+        assert f"images.csv:{row} axial_length_mm: {words}" in checked.complained
 
 
 def test_a_missing_pixel_size_is_told_for_each_image(make_study: MakeStudy) -> None:

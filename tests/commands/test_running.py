@@ -53,7 +53,6 @@ def make_task(folder: Path, name: str) -> Task:
         terminals=(),
         edits=(),
         disc=None,
-        axial_length_mm=None,
         hematocrit=None,
         design={},
     )

@@ -27,7 +27,9 @@ from vasohm.flow.monte_carlo import IntervalSettings, ResistanceIntervals, find_
 from vasohm.flow.rheology import BloodSettings
 from vasohm.flow.scenarios import ScenarioOutcomes
 from vasohm.flow.terminals import NetworkSettings, Terminals
+from vasohm.image.calibrate import ScaleSettings
 from vasohm.image.disc import OpticDisc
+from vasohm.image.eye import EyeSettings
 from vasohm.image.prepare import ImageQuality, PreparedImage, PrepareSettings
 from vasohm.image.segment import SegmentSettings, VesselMask
 from vasohm.network.graph import Crossings, NodeKind, VesselClass, VesselGraph
@@ -286,6 +288,7 @@ def make_methods(law: str = "constant", method: str = "ridge", n_masked: int = 0
 def methods_used(law: str = "constant", method: str = "ridge", n_masked: int = 0) -> MethodsUsed:
     return MethodsUsed(
         version="0.1.0",
+        scale=ScaleSettings(7.0, 0.7, "stop", EyeSettings("none", None, None, 24.0), None, None),
         prepare=PrepareSettings(channel="green", polarity="dark", gamma=1.0, radius_um=(4.0, 120.0)),
         segment=SegmentSettings(method=method, radius_um=(4.0, 120.0), false_alarms_per_mpx=10.0, parameters={}),
         radius=RadiusSettings(

@@ -3,7 +3,7 @@
 from pathlib import Path
 
 from vasohm.config.study_file import study_from_mapping
-from vasohm.results.methods import ESTIMATE_CAUTION, Methods
+from vasohm.results.methods import DISC_CAUTION, ESTIMATE_CAUTION, Methods
 from vasohm.study.gather import methods_used
 
 
@@ -38,3 +38,22 @@ def test_doubt_of_plasma_viscosity_is_told() -> None:
     """An interval that holds it looks like one that does not."""
     told = methods(blood={"plasma_viscosity_se_mpa_s": 0.08}).paragraph
     assert "plasma viscosity of 1.2 mPa·s (standard uncertainty 0.08 mPa·s)" in told
+
+
+def test_scales_that_rest_on_eyes_or_discs_are_told_with_their_sources() -> None:
+    """Cohorts of eyes of unequal length differ in resistance by a quarter if nobody corrected them."""
+    by_length = methods(scale={"magnification": "bennett"})
+    assert "by its axial length" in by_length.paragraph
+    assert "as those of an eye of 24 mm" in by_length.paragraph
+    assert any("10.1007/BF00175988" in source for source in by_length.references)
+    by_refraction = methods(scale={"magnification": "bengtsson", "camera_factor": 0.02})
+    assert "a pixel of the camera spans 0.02 degrees" in by_refraction.paragraph
+    assert any("10.1007/BF00166758" in source for source in by_refraction.references)
+    by_disc = methods(scale={"disc_diameter_um": 1800})
+    assert "the optic disc was taken to be 1800 µm wide (standard uncertainty 162 µm" in by_disc.paragraph
+    assert any("10.1001/archopht.1990.01070030057028" in source for source in by_disc.references)
+    assert DISC_CAUTION in by_disc.cautions
+    plain = methods()
+    assert "optic disc" not in plain.paragraph
+    assert "eye" not in plain.paragraph
+    assert DISC_CAUTION not in plain.cautions

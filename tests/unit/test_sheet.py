@@ -19,6 +19,7 @@ from vasohm.errors import RequestError
 from vasohm.flow.terminals import TerminalPoint
 from vasohm.image.calibrate import TypedScale
 from vasohm.image.disc import OpticDisc
+from vasohm.image.eye import Eye
 from vasohm.network.edits import Edit
 from vasohm.results.schema import column_names
 
@@ -44,8 +45,9 @@ def test_every_column_becomes_what_it_means(tmp_path: Path) -> None:
     (tmp_path / "mine.csv").write_text("x_px,y_px,edit\n1,2,drop\n")
     text = (
         "image_id,file,pixel_size_um,pixel_size_se_um,mask_file,fov_file,class_file,terminals_file,edits_file,"
-        "disc_x_px,disc_y_px,disc_radius_px,axial_length_mm,hematocrit,subject,eye,group,condition,time,age_years\n"
-        "a-1,a.tif,7.0,0.1,m.png,f.png,c.png,ends.csv,mine.csv,10,20.5,3e1,24.1,0.45,s1,left,NA,rest,0,61\n"
+        "disc_x_px,disc_y_px,disc_radius_px,axial_length_mm,axial_length_se_mm,refraction_d,"
+        "hematocrit,subject,eye,group,condition,time,age_years\n"
+        "a-1,a.tif,7.0,0.1,m.png,f.png,c.png,ends.csv,mine.csv,10,20.5,3e1,24.1,0.05,-2.25,0.45,s1,left,NA,rest,0,61\n"
     )
     sheet = sheet_of(tmp_path, text)
     assert sheet.carried == ("age_years",)
@@ -53,14 +55,13 @@ def test_every_column_becomes_what_it_means(tmp_path: Path) -> None:
         ImageSource(
             image_id="a-1",
             file=tmp_path / "a.tif",
-            scale=TypedScale(7.0, 0.1),
+            scale=TypedScale(7.0, 0.1, Eye(24.1, 0.05, -2.25)),
             mask_file=tmp_path / "m.png",
             fov_file=tmp_path / "f.png",
             class_file=tmp_path / "c.png",
             terminals=(TerminalPoint(1.0, 2.0, "inlet", None, None, None),),
             edits=(Edit(1.0, 2.0, "drop", ""),),
             disc=OpticDisc(10.0, 20.5, 30.0, "sheet", 1.0),
-            axial_length_mm=24.1,
             hematocrit=0.45,
             design={"subject": "s1", "eye": "left", "group": "NA", "condition": "rest", "time": "0", "age_years": "61"},
         ),

@@ -20,6 +20,8 @@ from vasohm.flow.estimated_ends import EndTargets
 from vasohm.flow.monte_carlo import IntervalSettings
 from vasohm.flow.rheology import law_names
 from vasohm.flow.scenarios import Scenario
+from vasohm.image.calibrate import ScaleSettings
+from vasohm.image.eye import EyeSettings
 from vasohm.image.segment import segmenter_names
 
 CONFIGS = Path(__file__).parents[2] / "configs"
@@ -58,6 +60,12 @@ CONTRACT = """
     pixel_size_um    = 7
     pixel_size_se_um = 0.1
     scale_conflict = "sheet"
+    magnification = "bennett"
+    camera_factor = 0.02
+    camera_factor_se = 0.0002
+    reference_axial_length_mm = 23.5
+    disc_diameter_um = 1800
+    disc_diameter_se_um = 150
     [segment]
     method      = "hessian"
     radius_um   = [4, 80.0]
@@ -132,11 +140,8 @@ def test_every_key_reaches_its_setting(tmp_path: Path) -> None:
     assert (chosen.read.plane, chosen.read.max_megapixels, chosen.read.channel) == ("max", 100.0, "green")
     assert (chosen.prepare.channel, chosen.prepare.polarity, chosen.prepare.gamma) == ("green", "dark", 2.2)
     assert chosen.prepare.radius_um == chosen.segment.radius_um == (4.0, 80.0)
-    assert (chosen.scale.pixel_size_um, chosen.scale.pixel_size_se_um, chosen.scale.scale_conflict) == (
-        7.0,
-        0.1,
-        "sheet",
-    )
+    eye = EyeSettings("bennett", 0.02, 0.0002, 23.5)
+    assert chosen.scale == ScaleSettings(7.0, 0.1, "sheet", eye, 1800.0, 150.0)
     assert (chosen.segment.method, chosen.segment.false_alarms_per_mpx) == ("hessian", 30.0)
     assert (chosen.segment.parameters, chosen.blood.parameters) == ({"strictness": 2.0}, {"core": 1.0})
     assert (chosen.crossings.threshold, chosen.crossings.overlap_adds) == (0.6, False)
@@ -262,7 +267,16 @@ FAULTY = {
         {"blood": {"law": "haynes-marginal-zone", "parameters": {"marginal_zone_um": 2.0}}},
         "blood.parameters.core_viscosity_mpa_s: is missing: law 'haynes-marginal-zone' needs it",
     ),
-    "magnification": ({"scale": {"magnification": "bennett"}}, "scale.magnification: unknown key"),
+    "a rule of magnification": ({"scale": {"magnification": "benett"}}, "Did you mean 'bennett'?"),
+    "a camera without an eye": ({"scale": {"camera_factor": 0.02}}, "gives no pixel size without an eye"),
+    "a camera factor in other units": ({"scale": {"camera_factor": 1.37}}, "1.37 must be at most 1."),
+    "a camera's doubt without a camera": ({"scale": {"camera_factor_se": 0.01}}, "needs camera_factor"),
+    "a disc in millimetres": ({"scale": {"disc_diameter_um": 1.8}}, "1.8 must be at least 1000."),
+    "a disc known worse than its size": (
+        {"scale": {"disc_diameter_um": 1800, "disc_diameter_se_um": 1800}},
+        "1800 is not below disc_diameter_um = 1800.",
+    ),
+    "a reference eye of 2 mm": ({"scale": {"reference_axial_length_mm": 2}}, "2 must be at least 15."),
     "a parameter": ({"segment": {"parameters": {"a": "b"}}}, "segment.parameters.a: 'b' must be a number."),
     "a scenario's key": (
         {"scenario": [{"name": "x", "radius_factor": 1.1, "where": {"radius_below": 3}}]},

@@ -14,6 +14,12 @@ DEFAULTS: Mapping[str, Any] = {
     "scale.pixel_size_um": None,
     "scale.pixel_size_se_um": None,
     "scale.scale_conflict": "stop",
+    "scale.magnification": "none",
+    "scale.camera_factor": None,
+    "scale.camera_factor_se": None,
+    "scale.reference_axial_length_mm": 24.0,  # about that of an eye without ametropia
+    "scale.disc_diameter_um": None,
+    "scale.disc_diameter_se_um": None,  # the spread between people
     "segment.method": "ridge",
     "segment.false_alarms_per_mpx": 30.0,
     "segment.crossing_probability": 0.5,  # the more probable reading wins

@@ -14,6 +14,7 @@ from vasohm.flow.rheology import HIGHEST_HEMATOCRIT
 from vasohm.flow.terminals import ROLES, TerminalPoint
 from vasohm.image.calibrate import LEAST_UM, MOST_UM, TypedScale
 from vasohm.image.disc import OpticDisc
+from vasohm.image.eye import LEAST_D, LONGEST_MM, MOST_D, MOST_LENGTH_SE_MM, SHORTEST_MM, Eye
 from vasohm.image.read import shown
 from vasohm.network.edits import Edit
 from vasohm.results.schema import image_columns
@@ -29,7 +30,9 @@ NUMBERS: Mapping[str, Range] = {
     "disc_x_px": Range(),
     "disc_y_px": Range(),
     "disc_radius_px": POSITIVE,
-    "axial_length_mm": POSITIVE,
+    "axial_length_mm": Range(SHORTEST_MM, LONGEST_MM, note="A grown eye is some 24 mm long."),
+    "axial_length_se_mm": Range(0, MOST_LENGTH_SE_MM),
+    "refraction_d": Range(LEAST_D, MOST_D),
     "hematocrit": HEMATOCRIT,
 }
 DISC = ("disc_x_px", "disc_y_px", "disc_radius_px")
@@ -64,7 +67,6 @@ class ImageSource:
     terminals: tuple[TerminalPoint, ...]
     edits: tuple[Edit, ...]
     disc: OpticDisc | None
-    axial_length_mm: float | None
     hematocrit: float | None
     design: Mapping[str, str]  # subject, eye, group, condition, time and carried columns, in the sheet's order
 
@@ -201,14 +203,15 @@ def _source(row: Row, columns: tuple[str, ...], rows: Rows) -> ImageSource | Non
     return ImageSource(
         image_id=image_id,
         file=file,
-        scale=TypedScale(said_um, se_um),
+        scale=TypedScale(
+            said_um, se_um, Eye(numbers["axial_length_mm"], numbers["axial_length_se_mm"], numbers["refraction_d"])
+        ),
         mask_file=paths["mask_file"],
         fov_file=paths["fov_file"],
         class_file=paths["class_file"],
         terminals=terminals,
         edits=edits,
         disc=disc,
-        axial_length_mm=numbers["axial_length_mm"],
         hematocrit=numbers["hematocrit"],
         design={name: row.cells[name] for name in columns if name in DESIGN or name not in KNOWN},
     )

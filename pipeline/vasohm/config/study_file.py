@@ -12,13 +12,14 @@ from vasohm.config.blood_settings import blood_problems, blood_settings, blood_w
 from vasohm.config.flow_settings import end_targets, scenario_problems, scenarios_asked, target_problems
 from vasohm.config.names import ids_from_files, nearest
 from vasohm.config.presets import DEFAULTS, PRESETS, SPUR_PX, SPUR_RADII
+from vasohm.config.scale_settings import scale_problems, scale_settings, scale_warnings
 from vasohm.config.settings import CompareSettings, OutputSettings, Settings
 from vasohm.config.sheet import DESIGN, ImageSource, Sheet, read_sheet
 from vasohm.config.study_model import CompareTable, ScenarioTable, StudyModel, parse_model
 from vasohm.errors import Problem, RequestError
 from vasohm.flow.monte_carlo import IntervalSettings
 from vasohm.flow.terminals import NetworkSettings
-from vasohm.image.calibrate import ScaleSettings, TypedScale
+from vasohm.image.calibrate import TypedScale
 from vasohm.image.prepare import PrepareSettings
 from vasohm.image.read import MAGIC, ReadSettings, shown
 from vasohm.image.segment import MASK_METHOD, SegmentSettings
@@ -129,6 +130,7 @@ def _study(said: Mapping[str, Any], path: Path, base: Path, *, needs_sheet: bool
     values = {key: entry["value"] for key, entry in resolved.items()}
     problems += target_problems(values, file)
     problems += blood_problems(values, file)
+    problems += scale_problems(values, file)
     if sheet is not None:
         problems += _mask_problems(values, sheet, file)
     if problems:
@@ -303,9 +305,7 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
     return Settings(
         preset=values["image.preset"],
         read=ReadSettings(values["image.plane"], values["image.max_megapixels"], values["image.channel"]),
-        scale=ScaleSettings(
-            values["scale.pixel_size_um"], values["scale.pixel_size_se_um"], values["scale.scale_conflict"]
-        ),
+        scale=scale_settings(values),
         prepare=PrepareSettings(
             values["image.channel"], values["image.polarity"], values["image.gamma"], radius_um=(low, high)
         ),
@@ -347,6 +347,7 @@ def _mask_problems(values: Mapping[str, Any], sheet: Sheet, file: str) -> Iterat
 
 def _odd(values: Mapping[str, Any], images: Sequence[ImageSource]) -> Iterator[str]:
     yield from blood_warnings(values)
+    yield from scale_warnings(values, images)
     bare = [source.image_id for source in images if not source.terminals]
     if values["network.terminals"] == "file" and bare:
         yield f'terminals = "file", but {_some(bare)} have no terminals: their networks get no resistance.'
@@ -357,7 +358,7 @@ def _some(ids: Sequence[str]) -> str:
 
 
 def _bare_source(image_id: str, file: Path) -> ImageSource:
-    return ImageSource(image_id, file, TypedScale(None, None), None, None, None, (), (), None, None, None, {})
+    return ImageSource(image_id, file, TypedScale(None, None), None, None, None, (), (), None, None, {})
 
 
 def _listed(value: Any) -> Any:

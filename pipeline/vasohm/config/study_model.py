@@ -17,6 +17,7 @@ from vasohm.flow.phase_separation import SPLIT_LAWS
 from vasohm.flow.rheology import HIGHEST_HEMATOCRIT, law_names
 from vasohm.flow.scenarios import WIDEST_FACTOR
 from vasohm.image.calibrate import LEAST_UM, MOST_UM
+from vasohm.image.eye import LONGEST_MM, SHORTEST_MM
 from vasohm.image.segment import segmenter_names
 from vasohm.network.calibre_equivalents import FORMULAS
 from vasohm.results.columns_vessels import CLASSES
@@ -41,6 +42,8 @@ BOUND_WORDS = {
 }
 LENGTH_KINDS = ("too_short", "too_long", "string_too_short", "string_too_long")
 MOST_PERCENT = 100
+MOST_DEG_PER_PX = 1.0  # the widest cameras see 200 degrees on some thousand pixels
+LEAST_DISC_UM, MOST_DISC_UM = 1000.0, 3000.0  # means of peoples lie from 1500 to 2100 um; millimetres are refused
 LITERAL = re.compile("'([^']+)'")
 
 
@@ -151,11 +154,17 @@ class ImageTable(Table):
 
 
 class ScaleTable(Table):
-    """Pixel size."""
+    """Pixel size, and how it follows from an eye or its optic disc."""
 
     pixel_size_um: Annotated[float, Field(ge=LEAST_UM, le=MOST_UM)] | None = None
     pixel_size_se_um: NotNegative | None = None
     scale_conflict: Literal["stop", "sheet"] | None = None
+    magnification: Literal["none", "bennett", "bengtsson"] | None = None
+    camera_factor: Annotated[float, Field(gt=0, le=MOST_DEG_PER_PX)] | None = None
+    camera_factor_se: NotNegative | None = None
+    reference_axial_length_mm: Annotated[float, Field(ge=SHORTEST_MM, le=LONGEST_MM)] | None = None
+    disc_diameter_um: Annotated[float, Field(ge=LEAST_DISC_UM, le=MOST_DISC_UM)] | None = None
+    disc_diameter_se_um: NotNegative | None = None
 
 
 class SegmentTable(Table):

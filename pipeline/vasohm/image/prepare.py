@@ -10,6 +10,7 @@ from vasohm.arrays import AnyArray, BoolArray, Float32Array, freeze
 from vasohm.errors import ImageError
 from vasohm.flags import Flag
 from vasohm.image.calibrate import ScaledImage
+from vasohm.image.eye import Magnification
 from vasohm.image.fov import find_field_of_view, mirror_outside
 from vasohm.image.noise import noise_against_brightness
 from vasohm.image.read import RawImage
@@ -56,6 +57,7 @@ class PreparedImage:
     quality: ImageQuality
     notes: tuple[str, ...]
     flags: Flag
+    magnification: Magnification | None = None  # None: the pixel size was not corrected for the eye
 
     def __post_init__(self) -> None:
         freeze(self)
@@ -140,8 +142,9 @@ def prepare(scaled: ScaledImage, settings: PrepareSettings, fov: BoolArray | Non
         pixel_size_se_um=scaled.pixel_size_se_um,
         pixel_size_source=scaled.pixel_size_source,
         quality=quality,
-        notes=raw.notes,
+        notes=raw.notes + scaled.notes,
         flags=flags,
+        magnification=scaled.magnification,
     )
 
 

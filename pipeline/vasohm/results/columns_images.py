@@ -15,7 +15,22 @@ IMAGE: tuple[Column, ...] = (
     count("height_px", "Rows of the stored picture.", "{pixel}"),
     number("pixel_size_um", "um", "Edge of a pixel."),
     number("pixel_size_se_um", "um", "Standard uncertainty of the pixel size (k = 1); empty where nobody told it."),
-    text("pixel_size_source", "Where the pixel size comes from: the sheet, the study, or a carrier in the file."),
+    text(
+        "pixel_size_source",
+        "Where the pixel size comes from: the sheet, the study, a carrier in the file, the camera factor, or the optic "
+        "disc's declared diameter.",
+    ),
+    text(
+        "magnification",
+        "Rule by which the pixel size was fitted to this eye; empty where it was not.",
+        ("bennett", "bengtsson-length", "bengtsson-refraction"),
+    ),
+    number(
+        "pixel_size_before_um",
+        "um",
+        "Pixel size as typed or as the file tells it, before it was fitted to this eye; empty where it was not, or "
+        "where nobody told one.",
+    ),
     number("fov_area_um2", "um2", "Area of the field of view."),
     number("vessel_area_um2", "um2", "Area of the vessel mask inside the field of view."),
     number("vessel_area_fraction", "1", "Vessel area over the area of the field of view."),

@@ -9,6 +9,8 @@ from vasohm.flow.monte_carlo import FIRST_ORDER_UP_TO, IntervalSettings
 from vasohm.flow.phase_separation import SPLIT_LAWS
 from vasohm.flow.rheology import HUMAN_CELL_VOLUME_FL, BloodSettings, diameter_factor, get_law
 from vasohm.flow.terminals import NetworkSettings
+from vasohm.image.calibrate import DISC_SPREAD, ScaleSettings
+from vasohm.image.eye import LENGTH_SCATTER, REFRACTION_SCATTER
 from vasohm.image.prepare import PrepareSettings
 from vasohm.image.segment import SegmentSettings
 from vasohm.network.graph import VesselClass
@@ -26,6 +28,26 @@ UNCERTAINTY = (
 ESTIMATE = (
     "Fry BC, Lee J, Smith NP, Secomb TW. Estimation of blood flow rates in large microvascular networks. "
     "Microcirculation 2012;19:530-538. doi:10.1111/j.1549-8719.2012.00184.x"
+)
+BENNETT = (
+    "Bennett AG, Rudnicka AR, Edgar DF. Improvements on Littmann's method of determining the size of retinal features "
+    "by fundus photography. Graefes Arch Clin Exp Ophthalmol 1994;232:361-367. doi:10.1007/BF00175988"
+)
+BENGTSSON = (
+    "Bengtsson B, Krakau CET. Correction of optic disc measurements on fundus photographs. Graefes Arch Clin Exp "
+    "Ophthalmol 1992;230:24-28. doi:10.1007/BF00166758"
+)
+EYE_SCATTER = (
+    "Garway-Heath DF, et al. Measurement of optic disc size: equivalence of methods to correct for ocular "
+    "magnification. Br J Ophthalmol 1998;82:643-649. doi:10.1136/bjo.82.6.643"
+)
+DISC_SIZE = (
+    "Quigley HA, Brown AE, Morrison JD, Drance SM. The size and shape of the optic disc in normal human eyes. Arch "
+    "Ophthalmol 1990;108:51-57. doi:10.1001/archopht.1990.01070030057028"
+)
+DISC_SPREADS = (
+    "Girkin CA, et al. Variation in optic nerve and macular structure with age and race with spectral-domain optical "
+    "coherence tomography. Ophthalmology 2011;118:2403-2408."
 )
 DRAWS = (
     "JCGM 101:2008. Evaluation of measurement data: propagation of distributions using a Monte Carlo method. "
@@ -50,6 +72,11 @@ ESTIMATE_CAUTION = (
     "Networks with the flag terminals_estimated have flows at their ends that were estimated from targets and not "
     "measured; directions as a whole may be reversed. Their resistance depends on the estimate, which its interval "
     "leaves out."
+)
+DISC_CAUTION = (
+    "Images with the flag scale_from_disc have a pixel size that rests on a declared diameter of the optic disc. Eyes "
+    "differ in it, and a resistance goes with the inverse third power of the pixel size: compare such images by ratios "
+    "within one picture, not by size."
 )
 CAUTIONS: tuple[str, ...] = (
     (
@@ -76,6 +103,7 @@ class MethodsUsed:
     """What a study's methods paragraph depends on."""
 
     version: str
+    scale: ScaleSettings
     prepare: PrepareSettings
     segment: SegmentSettings
     radius: RadiusSettings
@@ -117,6 +145,7 @@ def describe_methods(used: MethodsUsed) -> Methods:
             f"Images were measured with vasohm {used.version} on NumPy {mark(ARRAYS)}, SciPy {mark(ALGORITHMS)} and "
             f"scikit-image {mark(PICTURES)}."
         ),
+        *_scale_sentences(used.scale, mark),
         _vessel_sentence(used),
         _radius_sentence(used.radius),
         (
@@ -139,9 +168,40 @@ def describe_methods(used: MethodsUsed) -> Methods:
     cautions = tuple(ONE_VISCOSITY_CAUTION if constant and one == LAW_CAUTION else one for one in CAUTIONS)
     if used.targets is not None:
         cautions += (ESTIMATE_CAUTION,)
+    if used.scale.disc_diameter_um is not None:
+        cautions += (DISC_CAUTION,)
     if used.radius.plasma_layer_um:
         cautions += ("Radii are those of the red-cell column with a plasma layer added, whose width is an assumption.",)
     return Methods(" ".join(sentences), tuple(cited), cautions)
+
+
+def _scale_sentences(scale: ScaleSettings, mark: Callable[[str], str]) -> Iterator[str]:
+    """Say how pixel sizes follow from eyes or discs, where a study asks for either."""
+    eye = scale.eye
+    if eye.magnification != "none":
+        by_length, by_refraction = f"{100 * LENGTH_SCATTER:g} % by length", f"{100 * REFRACTION_SCATTER:g} %"
+        if eye.magnification == "bennett":
+            rule, reference = f"axial length {mark(BENNETT)}", f"an eye of {eye.reference_axial_length_mm:g} mm"
+            scatter = by_length
+        else:
+            rule = f"refraction, or by axial length where no refraction was given, {mark(BENGTSSON)}"
+            reference = f"an eye without ametropia or of {eye.reference_axial_length_mm:g} mm"
+            scatter = f"{by_refraction} by refraction and {by_length}"
+        basis = f"told pixel sizes were taken as those of {reference}"
+        if eye.camera_factor is not None:
+            basis = f"a pixel of the camera spans {eye.camera_factor:g} degrees"
+        yield (
+            f"Pixel sizes were fitted to each eye by its {rule}; {basis}. The methods' scatter of {scatter} "
+            f"{mark(EYE_SCATTER)} is part of their uncertainty."
+        )
+    if scale.disc_diameter_um is not None:
+        of_disc, spread = scale.disc_diameter_se_um, ""
+        if of_disc is None:
+            of_disc, spread = DISC_SPREAD * scale.disc_diameter_um, f", the spread between people {mark(DISC_SPREADS)}"
+        yield (
+            f"Where no pixel size was known, the optic disc was taken to be {scale.disc_diameter_um:g} µm wide "
+            f"(standard uncertainty {of_disc:.3g} µm{spread}; for published diameters see {mark(DISC_SIZE)})."
+        )
 
 
 def _vessel_sentence(used: MethodsUsed) -> str:

@@ -359,6 +359,8 @@ def _image(findings: Findings) -> dict[str, Any]:
         "pixel_size_um": prepared.pixel_size_um,
         "pixel_size_se_um": prepared.pixel_size_se_um,
         "pixel_size_source": prepared.pixel_size_source,
+        "magnification": prepared.magnification.rule if prepared.magnification else "",
+        "pixel_size_before_um": prepared.magnification.before_um if prepared.magnification else np.nan,
         **image_shape(shape),
         "n_segments": measured.graph.n_segments,
         "n_branchings": int(np.sum(kind == NodeKind.BRANCHING)),

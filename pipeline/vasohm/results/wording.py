@@ -10,6 +10,8 @@ SCALE_SOURCES = {
     "ome": "OME-XML of the file",
     "imagej": "the ImageJ description of the file",
     "dicom": "DICOM tags of the file",
+    "camera": "the camera factor and the eye",
+    "disc": "the declared diameter of the optic disc",
 }
 TERMINAL_FLAGS = (Flag.NO_INLET, Flag.NO_OUTLET, Flag.NO_TERMINALS, Flag.MESH)
 OTHER_FLAGS = (Flag.NO_FLOW, Flag.NO_INTERVAL, Flag.UNRESOLVED)

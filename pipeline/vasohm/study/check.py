@@ -10,6 +10,7 @@ from vasohm.config.study_file import Study
 from vasohm.errors import Problem, VasohmError
 from vasohm.flow.rheology import get_law
 from vasohm.image.calibrate import calibrate
+from vasohm.image.eye import lacking
 from vasohm.image.read import read_image, read_labels, read_mask
 from vasohm.image.segment import MASK_METHOD, get_segmenter
 
@@ -21,12 +22,6 @@ def not_yet_used(study: Study) -> list[str]:
     lines = []
     if study.compare is not None:
         lines.append("[compare] is valid, but comparing is not part of this version: the images are measured only.")
-    for columns, told in (
-        ("axial_length_mm", [source.axial_length_mm for source in study.images]),
-        ("disc_x_px, disc_y_px, disc_radius_px", [source.disc for source in study.images]),
-    ):
-        if any(one is not None for one in told):
-            lines.append(f"{study.sheet} {columns}: read, but no measurement of this version uses it.")
     return lines
 
 
@@ -63,9 +58,9 @@ def _faults(source: ImageSource, settings: Settings) -> Iterator[tuple[str, Path
         yield "file", source.file, fault
         return
     try:
-        calibrate(raw, source.scale, settings.scale)
+        calibrate(raw, source.scale, settings.scale, disc=source.disc)
     except VasohmError as fault:
-        yield "pixel_size_um", source.file, fault
+        yield lacking(source.scale.eye, settings.scale.eye.magnification) or "pixel_size_um", source.file, fault
     for column, path, read in (
         ("mask_file", source.mask_file, read_mask),
         ("fov_file", source.fov_file, read_mask),

@@ -44,6 +44,7 @@ def methods_used(study: Study, version: str) -> Methods:
     return describe_methods(
         MethodsUsed(
             version=version,
+            scale=settings.scale,
             prepare=settings.prepare,
             segment=settings.segment,
             radius=settings.radius,

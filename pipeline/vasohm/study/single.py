@@ -14,6 +14,7 @@ from vasohm.flags import Flag
 from vasohm.flow.rheology import HIGHEST_HEMATOCRIT
 from vasohm.image.calibrate import TypedScale
 from vasohm.image.disc import OpticDisc
+from vasohm.image.eye import Eye
 from vasohm.image.read import RawImage, read_image
 from vasohm.pipeline import measure_pixels
 from vasohm.results.tables import ImageTables
@@ -50,6 +51,8 @@ def measure_image(  # noqa: PLR0913  one keyword a column of the sheet and a sec
     disc_y_px: float | None = None,
     disc_radius_px: float | None = None,
     axial_length_mm: float | None = None,
+    axial_length_se_mm: float | None = None,
+    refraction_d: float | None = None,
     hematocrit: float | None = None,
 ) -> ImageTables:
     """Measure one image.
@@ -67,7 +70,7 @@ def measure_image(  # noqa: PLR0913  one keyword a column of the sheet and a sec
         A study file or what it would hold; its sheet is not read. `scale`, `segment`, `radius`, `shape`, `blood`,
         `network` and `scenario` stand for its sections of that name and win over it, key by key.
     image_id, subject, eye, group, condition, time, mask_file, fov_file, class_file, terminals_file, edits_file,
-    disc_x_px, disc_y_px, disc_radius_px, axial_length_mm, hematocrit
+    disc_x_px, disc_y_px, disc_radius_px, axial_length_mm, axial_length_se_mm, refraction_d, hematocrit
         The columns of the image sheet; files may lie anywhere.
 
     Returns
@@ -91,14 +94,13 @@ def measure_image(  # noqa: PLR0913  one keyword a column of the sheet and a sec
     source = ImageSource(
         image_id=image_id,
         file=Path(image) if isinstance(image, str | Path) else Path("array"),
-        scale=TypedScale(pixel_size_um, pixel_size_se_um),
+        scale=TypedScale(pixel_size_um, pixel_size_se_um, Eye(axial_length_mm, axial_length_se_mm, refraction_d)),
         mask_file=_path(mask_file),
         fov_file=_path(fov_file),
         class_file=_path(class_file),
         terminals=read_terminals(Path(terminals_file)) if terminals_file else (),
         edits=read_edits(Path(edits_file)) if edits_file else (),
         disc=_disc(disc_x_px, disc_y_px, disc_radius_px),
-        axial_length_mm=axial_length_mm,
         hematocrit=hematocrit,
         design={"subject": subject, "eye": eye, "group": group, "condition": condition, "time": time},
     )
