@@ -85,6 +85,8 @@ def commands() -> None:
 @click.option("--preset", default="fundus", show_default=True, help="Settings where images are named and no study.")
 @click.option("--workers", type=click.IntRange(min=1), help="Processes; as many as may be used where not given.")
 @click.option("--part", metavar="K/N", help="Measure the images of one part of N only; gather puts parts together.")
+@click.option("--dask", metavar="ADDRESS", help="Measure on the workers of this Dask scheduler, which runs already.")
+@click.option("--dask-insecure", is_flag=True, help="Take a scheduler of another machine without certificates.")
 @click.option("--only", multiple=True, metavar="IMAGE_ID ...", help="Measure these images only.")
 @click.option("--dry-run", is_flag=True, help="Say for each image whether it would run and why.")
 @click.option("--force", is_flag=True, help="Take over a folder that holds another study's results.")
@@ -98,6 +100,8 @@ def measure(  # noqa: PLR0913  the options of the command
     preset: str,
     workers: int | None,
     part: str | None,
+    dask: str | None,
+    dask_insecure: bool,
     only: tuple[str, ...],
     dry_run: bool,
     force: bool,
@@ -123,6 +127,7 @@ def measure(  # noqa: PLR0913  the options of the command
         part=None if part is None else parse_part(part),
         only=only,
         force=force,
+        dask="" if dask is None else _dask_address(dask, insecure=dask_insecure, workers=workers),
     )
     if dry_run:
         for decision in decide(study, request):
@@ -138,6 +143,15 @@ def measure(  # noqa: PLR0913  the options of the command
     except OSError:  # the results are whole, and study.json says how it ended
         _say_no_more(1)
     return report.state.exit_status
+
+
+def _dask_address(text: str, *, insecure: bool, workers: int | None) -> str:
+    from vasohm.study.dask_meeting import safe_address
+
+    if workers is not None:
+        message = "is for processes of this machine; on a Dask cluster all workers take part. Leave it out."
+        raise RequestError([Problem(file="--workers", value=str(workers), message=message)])
+    return safe_address(text, insecure=insecure)
 
 
 def _run(study: "Study", request: "RunRequest", *, quiet: bool, log_json: Path | None) -> "RunReport":

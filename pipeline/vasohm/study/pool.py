@@ -19,6 +19,7 @@ from contextlib import contextmanager
 from multiprocessing import resource_tracker
 from multiprocessing.process import BaseProcess
 from pathlib import Path
+from typing import Protocol
 
 from vasohm.study.cores import THREAD_VARIABLES
 from vasohm.study.interrupt import ENDING_SIGNALS, signals_held
@@ -31,6 +32,15 @@ _ORPHAN_STATUS = 70  # EX_SOFTWARE of sysexits.h; seen by nobody, since the pare
 _DEATHS = 2  # in company, then alone
 
 Work = Callable[[Task], Outcome]
+
+
+class Pool(Protocol):
+    """Whatever measures images: processes of this machine, or workers of many."""
+
+    def run(
+        self, tasks: Iterable[Task], stops: Callable[[], int], on_retry: Callable[[Task, str], None]
+    ) -> Iterator[Outcome]:
+        """Yield each task's outcome as it comes; see `SupervisedPool.run`."""
 
 
 def _start_worker(output: Path) -> None:
@@ -106,7 +116,7 @@ class SupervisedPool:
                     deadline = time.monotonic() + GRACE_S
                 if not self._running or stops() > 1 or time.monotonic() > deadline:
                     return
-                yield from self._collect(_tell_nobody if stops() else on_retry)
+                yield from self._collect(tell_nobody if stops() else on_retry)
         finally:
             self._end(by_force=bool(self._running))
 
@@ -195,7 +205,7 @@ class SupervisedPool:
         self._running.clear()
 
 
-def _tell_nobody(_task: Task, _how: str) -> None:
+def tell_nobody(_task: Task, _how: str) -> None:
     """After a request to stop nothing is run again, so that there is nothing to tell."""
 
 

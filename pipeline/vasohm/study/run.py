@@ -2,7 +2,7 @@
 
 import shutil
 from collections.abc import Iterator, Mapping, Sequence
-from contextlib import ExitStack
+from contextlib import AbstractContextManager, ExitStack
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -12,6 +12,8 @@ from vasohm.config.study_file import Study
 from vasohm.errors import Problem, RequestError
 from vasohm.results.write import read_record, record_is_whole, remove_partials
 from vasohm.study.current import content_key, reason_to_run, versions_used
+from vasohm.study.dask_meeting import meeting
+from vasohm.study.dask_pool import DaskPool, joined
 from vasohm.study.ending import EXIT_OK, EXIT_SOME_FAILED
 from vasohm.study.events import Event, Kind, Listener
 from vasohm.study.folder import (
@@ -27,9 +29,9 @@ from vasohm.study.gather import methods_used, write_root, write_state
 from vasohm.study.interrupt import Interrupts, StopNowError
 from vasohm.study.journal import Journal
 from vasohm.study.marker import hold_marker
-from vasohm.study.outcome import EMPTY, FAILED, MEASURED, PENDING, Outcome, Task
+from vasohm.study.outcome import EMPTY, FAILED, MEASURED, PENDING, LostError, Outcome, Task
 from vasohm.study.parts import Part, remove_parts, states_before, write_part
-from vasohm.study.pool import SupervisedPool
+from vasohm.study.pool import Pool, SupervisedPool
 from vasohm.study.state import ImageState, StudyState
 from vasohm.study.worker import measure_and_write
 
@@ -45,6 +47,7 @@ class RunRequest:
     part: Part | None
     only: tuple[str, ...]
     force: bool
+    dask: str  # address of a scheduler, from `safe_address`; "" where processes of this machine do the work
 
 
 @dataclass(frozen=True, slots=True)
@@ -107,7 +110,8 @@ def run_study(study: Study, request: RunRequest, listeners: Sequence[Listener]) 
     Raises
     ------
     RequestError
-        When nothing was done because the request is wrong or the folder is in use.
+        When nothing was done because the request is wrong, the folder is in use, or a Dask worker would measure
+        otherwise.
     OSError
         When the files at the root of the results folder cannot be written.
     """
@@ -120,9 +124,31 @@ def run_study(study: Study, request: RunRequest, listeners: Sequence[Listener]) 
     with ExitStack() as stack:
         interrupts = stack.enter_context(Interrupts())
         stack.enter_context(hold_marker(request.out / "run", study.name, part))
-        claim(request.out, study.name, frozenset(source.image_id for source in study.images))
         journal = stack.enter_context(Journal(run_folder(request.out, part)))
-        return _Run(study, request, journal=journal, listeners=listeners, interrupts=interrupts).carry_out()
+        told: tuple[Listener, ...] = (journal, *listeners)
+        pool: Pool
+        if request.dask:
+            pool = stack.enter_context(_joined(study, request, told, interrupts))
+        else:
+            pool = SupervisedPool(measure_and_write, request.workers, journal.folder / "workers.txt")
+        claim(request.out, study.name, frozenset(source.image_id for source in study.images))
+        return _Run(study, request, journal=journal, listeners=told, interrupts=interrupts).carry_out(pool)
+
+
+def _joined(
+    study: Study, request: RunRequest, listeners: Sequence[Listener], interrupts: Interrupts
+) -> AbstractContextManager[DaskPool]:
+    def tell(text: str) -> None:
+        for listener in listeners:
+            listener(Event("warning", text))
+
+    return joined(
+        request.dask,
+        measure_and_write,
+        meeting(request.out / "run", versions_used(study.settings), (one.file for one in _select(study, request))),
+        tell=tell,
+        stops=lambda: interrupts.count,
+    )
 
 
 class _Run:
@@ -140,7 +166,7 @@ class _Run:
         self._study = study
         self._request = request
         self._selected = _select(study, request)
-        self._listeners: tuple[Listener, ...] = (journal, *listeners)
+        self._listeners = tuple(listeners)
         self._journal = journal
         self._interrupts = interrupts
         self._versions = versions_used(study.settings)
@@ -149,8 +175,9 @@ class _Run:
         self._current = 0
         self._io_failures = 0
         self._stop_told = False
+        self._lost = ""
 
-    def carry_out(self) -> RunReport:
+    def carry_out(self, pool: Pool) -> RunReport:
         self._tell(Event("run", f"study {self._study.name}", total=len(self._selected)))
         for warning in self._study.warnings:
             self._tell(Event("warning", warning))
@@ -160,9 +187,11 @@ class _Run:
             for name in self._strangers():
                 self._tell(Event("warning", f"images/{name} is of no image of this study: it is left alone"))
         trails = self._journal.folder / "trails"
-        pool = SupervisedPool(measure_and_write, self._request.workers, self._journal.folder / "workers.txt")
-        for outcome in pool.run(self._tasks(trails), self._stops, self._note_retry):
-            self._note_end(outcome)
+        try:
+            for outcome in pool.run(self._tasks(trails), self._stops, self._note_retry):
+                self._note_end(outcome)
+        except LostError as lost:
+            self._lost = str(lost)
         shutil.rmtree(trails, ignore_errors=True)
         state = self._finish()
         stopped = self._why_stopped(state)
@@ -247,7 +276,7 @@ class _Run:
             methods=methods_used(self._study, self._versions["vasohm"]),
             warnings=tuple(self._study.warnings),
             images=images,
-            exit_status=interrupted or (EXIT_SOME_FAILED if failed else EXIT_OK),
+            exit_status=interrupted or (EXIT_SOME_FAILED if failed or self._lost else EXIT_OK),
         )
 
     def _standing(self, source: ImageSource) -> ImageState:
@@ -265,6 +294,8 @@ class _Run:
     def _why_stopped(self, state: StudyState) -> str:
         if self._interrupts.count:
             return "interrupted"
+        if self._lost:
+            return self._lost
         if self._io_failures >= IO_FAILURES_IN_A_ROW and state.counts[PENDING]:
             return f"{IO_FAILURES_IN_A_ROW} images in a row could not be written"
         return ""
