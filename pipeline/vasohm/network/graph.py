@@ -328,6 +328,11 @@ def in_fixed_order(graph: VesselGraph) -> VesselGraph:
 
     Equal pictures give equal numbers whatever the order in which they were traced.
     """
+    return order_of(graph)[0]
+
+
+def order_of(graph: VesselGraph) -> tuple[VesselGraph, IntArray, IntArray]:
+    """Return the graph in its fixed order, and the old index of each of its segments and of each of its points."""
     by_place = np.lexsort((graph.node_x_px, graph.node_y_px))
     rank = np.empty(graph.n_nodes, np.int64)
     rank[by_place] = np.arange(graph.n_nodes)
@@ -351,7 +356,7 @@ def in_fixed_order(graph: VesselGraph) -> VesselGraph:
     mapped = new_index[np.column_stack((graph.crossings.segment_over, graph.crossings.segment_under))]
     mapped = np.where(graph.crossings.over_told[:, None], mapped, np.sort(mapped, axis=1))
     by_row = np.lexsort((graph.crossings.x_px, graph.crossings.y_px))
-    return replace(
+    ordered = replace(
         graph, node_x_px=graph.node_x_px[by_place], node_y_px=graph.node_y_px[by_place],
         node_kind=graph.node_kind[by_place], node_a=a[order], node_b=b[order], offsets=new_offsets,
         x_px=graph.x_px[points], y_px=graph.y_px[points], seed_radius_px=graph.seed_radius_px[points],
@@ -366,6 +371,7 @@ def in_fixed_order(graph: VesselGraph) -> VesselGraph:
             graph.crossings.over_told[by_row],
         ),
     )  # fmt: skip
+    return ordered, order, points
 
 
 def label_networks(graph: VesselGraph) -> tuple[IntArray, IntArray]:

@@ -30,7 +30,7 @@ def join_ends(
     The graph, its crossings emptied and its order not fixed; and the new index of each old segment, -1 for a bridge.
     """
     n = graph.n_segments
-    chains = _chains(n, partner, bridges)
+    chains = follow_chains(n, partner, bridges)
     ends, node_x, node_y, kind = [], [*graph.node_x_px], [*graph.node_y_px], [*graph.node_kind]
     new_of = np.full(n, -1, np.int64)
     drawn: list[FloatArray] = []
@@ -108,7 +108,9 @@ def _way_across(before: FloatArray, behind: FloatArray) -> FloatArray:
     return np.column_stack((bow((start[:2], stop[:2]), ways, t), start[2] + t * (stop[2] - start[2])))
 
 
-def _chains(n: int, partner: Mapping[int, int], bridges: AbstractSet[int]) -> list[tuple[list[tuple[int, bool]], bool]]:
+def follow_chains(
+    n: int, partner: Mapping[int, int], bridges: AbstractSet[int]
+) -> list[tuple[list[tuple[int, bool]], bool]]:
     """Follow partners from end to end: lists of (segment, forward), and whether the chain closes on itself."""
     seen: BoolArray = np.zeros(n, dtype=bool)
     chains = []

@@ -99,9 +99,9 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
         contrast=fit.contrast[kept],
         point_flags=flags,
         length_um=length_px * pixel,
-        length_random_se_um=_length_se_px(cut, radius_um / pixel) * pixel,
+        length_random_se_um=length_se_px(cut, radius_um / pixel) * pixel,
         chord_um=chord_px * pixel,
-        segment_flags=_segment_flags(cut, flags, length_px, radius_um / pixel, quadrature(random_se, *shared.T)),
+        segment_flags=segment_flags(cut, flags, length_px, radius_um / pixel, quadrature(random_se, *shared.T)),
         blur_px=fit.blur_px,
         blur_se_px=fit.blur_se_px,
         profile=fit.profile,
@@ -110,7 +110,7 @@ def measure_radii(graph: VesselGraph, prepared: PreparedImage, settings: RadiusS
     )
 
 
-def _length_se_px(graph: VesselGraph, radius_px: FloatArray) -> FloatArray:
+def length_se_px(graph: VesselGraph, radius_px: FloatArray) -> FloatArray:
     """Standard uncertainty (n_segments,) of the lengths, which is that of their two ends."""
     radius = median_by(owner(graph.offsets), radius_px, graph.n_segments)
     widest = np.zeros(graph.n_nodes)
@@ -137,7 +137,7 @@ def _with_plasma_layer(
     return random_se, shared, causes
 
 
-def _segment_flags(
+def segment_flags(
     graph: VesselGraph, point_flags: IntArray, length_px: FloatArray, radius_px: FloatArray, total_se: FloatArray
 ) -> IntArray:
     """What most of a segment's points say, and what its ends and its shape say."""
