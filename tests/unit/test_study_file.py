@@ -23,6 +23,7 @@ from vasohm.flow.scenarios import Scenario
 from vasohm.image.calibrate import ScaleSettings
 from vasohm.image.eye import EyeSettings
 from vasohm.image.segment import segmenter_names
+from vasohm.network.classes import ClassSettings
 
 CONFIGS = Path(__file__).parents[2] / "configs"
 SHEET = "image_id,file,subject,group,age_years\na,a.tif,s1,control,61\nb,b.tif,s2,NA,58\n"
@@ -78,6 +79,9 @@ CONTRACT = """
     blur_px     = 1.5
     plasma_layer_um = 1.1
     plasma_layer_se_um = 0.4
+    [classes]
+    method      = "none"
+    probability = 0.9
     [shape]
     zone_dd         = [0.5, 1.0]
     calibre_formula = "parr-hubbard"
@@ -137,6 +141,7 @@ def test_every_key_reaches_its_setting(tmp_path: Path) -> None:
     assert [source.image_id for source in study.images] == ["a", "b"]
     assert (study.sheet, study.lines) == ("images.csv", {"a": 2, "b": 3})
     assert (chosen.preset, chosen.output) == ("fundus", OutputSettings(overlay=False, colour="share"))
+    assert chosen.classes == ClassSettings("none", 0.9)
     assert (chosen.read.plane, chosen.read.max_megapixels, chosen.read.channel) == ("max", 100.0, "green")
     assert (chosen.prepare.channel, chosen.prepare.polarity, chosen.prepare.gamma) == ("green", "dark", 2.2)
     assert chosen.prepare.radius_um == chosen.segment.radius_um == (4.0, 80.0)
@@ -206,7 +211,7 @@ def test_ready_study_files_say_what_their_preset_brings(preset: str, tmp_path: P
 # ---- what must be refused
 
 
-SECTIONS = ("study", "image", "scale", "segment", "radius", "shape", "blood", "network", "output")
+SECTIONS = ("study", "image", "scale", "segment", "radius", "classes", "shape", "blood", "network", "output")
 ALL_KEYS = [
     (section, key)
     for section in SECTIONS

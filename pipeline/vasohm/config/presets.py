@@ -28,6 +28,7 @@ DEFAULTS: Mapping[str, Any] = {
     "radius.blur_px": "auto",
     "radius.plasma_layer_um": 0.0,
     "radius.plasma_layer_se_um": 0.0,
+    "classes.probability": 0.8,
     "shape.zone_dd": [0.5, 1.0],  # zone B: Knudtson et al., Curr Eye Res 2003;27:143-149
     "shape.calibre_formula": "knudtson",
     "shape.calibre_um": [10.0, 25.0, 50.0],
@@ -65,6 +66,7 @@ PRESETS: Mapping[str, Mapping[str, Any]] = {
         "image.plane": "mean",
         "segment.radius_um": [4.0, 120.0],
         "segment.overlap_adds": True,
+        "classes.method": "colour",  # venous blood absorbs more red light than arterial blood
     },
     "angiogram": {  # contrast agent or flow signal makes vessels bright
         "image.channel": "luminance",
@@ -72,6 +74,7 @@ PRESETS: Mapping[str, Mapping[str, Any]] = {
         "image.plane": "max",
         "segment.radius_um": [3.0, 120.0],
         "segment.overlap_adds": False,  # often a maximum over depth: overlaps tell nothing
+        "classes.method": "none",
     },
     "fluorescence": {  # labelled plasma or vessel wall under a microscope
         "image.channel": "luminance",
@@ -79,6 +82,7 @@ PRESETS: Mapping[str, Mapping[str, Any]] = {
         "image.plane": "max",
         "segment.radius_um": [1.5, 60.0],
         "segment.overlap_adds": True,
+        "classes.method": "none",
     },
     "intravital": {  # transmitted or reflected light: columns of red cells absorb green
         "image.channel": "green",
@@ -86,6 +90,7 @@ PRESETS: Mapping[str, Mapping[str, Any]] = {
         "image.plane": "mean",
         "segment.radius_um": [2.0, 60.0],
         "segment.overlap_adds": True,
+        "classes.method": "none",
     },
 }
 

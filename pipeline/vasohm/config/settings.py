@@ -11,6 +11,7 @@ from vasohm.image.calibrate import ScaleSettings
 from vasohm.image.prepare import PrepareSettings
 from vasohm.image.read import ReadSettings
 from vasohm.image.segment import SegmentSettings
+from vasohm.network.classes import ClassSettings
 from vasohm.network.crossings import CrossingSettings
 from vasohm.network.lumenfit import RadiusSettings
 from vasohm.network.morphometry import ShapeSettings
@@ -38,6 +39,7 @@ class Settings:
     skeletonize: SkeletonizeSettings
     crossings: CrossingSettings
     radius: RadiusSettings
+    classes: ClassSettings
     shape: ShapeSettings
     blood: BloodSettings
     network: NetworkSettings

@@ -23,6 +23,7 @@ from vasohm.image.calibrate import TypedScale
 from vasohm.image.prepare import PrepareSettings
 from vasohm.image.read import MAGIC, ReadSettings, shown
 from vasohm.image.segment import MASK_METHOD, SegmentSettings
+from vasohm.network.classes import ClassSettings
 from vasohm.network.crossings import CrossingSettings
 from vasohm.network.lumenfit import RadiusSettings
 from vasohm.network.morphometry import ShapeSettings
@@ -324,6 +325,7 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
             values["radius.plasma_layer_se_um"],
             low,
         ),
+        classes=ClassSettings(values["classes.method"], values["classes.probability"]),
         shape=ShapeSettings(
             (values["shape.zone_dd"][0], values["shape.zone_dd"][1]),
             values["shape.calibre_formula"],

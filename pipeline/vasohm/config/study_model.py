@@ -187,6 +187,13 @@ class RadiusTable(Table):
     plasma_layer_se_um: NotNegative | None = None
 
 
+class ClassesTable(Table):
+    """How arterioles are told from venules."""
+
+    method: Literal["colour", "none"] | None = None
+    probability: Annotated[float, Field(ge=0.5, le=1)] | None = None
+
+
 class ShapeTable(Table):
     """Where and how calibres are summed up."""
 
@@ -270,6 +277,7 @@ class StudyModel(Table):
     scale: ScaleTable = ScaleTable()
     segment: SegmentTable = SegmentTable()
     radius: RadiusTable = RadiusTable()
+    classes: ClassesTable = ClassesTable()
     shape: ShapeTable = ShapeTable()
     blood: BloodTable = BloodTable()
     network: NetworkTable = NetworkTable()

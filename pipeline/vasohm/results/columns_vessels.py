@@ -42,7 +42,11 @@ SEGMENTS: tuple[Column, ...] = (
     count("node_a", "Node at which the segment's points begin."),
     count("node_b", "Node at which the segment's points end."),
     text("vessel_class", "Kind of vessel; empty where it is not said.", CLASSES),
-    number("class_probability", "1", "Probability that the segment's class is right; empty where no class is said."),
+    number(
+        "class_probability",
+        "1",
+        "Probability of the segment's likelier class; where it is below [classes] probability, no class is said.",
+    ),
     count("n_points", "Number of centreline points of the segment."),
     number(
         "length_um",

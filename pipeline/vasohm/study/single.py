@@ -19,7 +19,7 @@ from vasohm.image.read import RawImage, read_image
 from vasohm.pipeline import measure_pixels
 from vasohm.results.tables import ImageTables
 
-SECTIONS = ("scale", "segment", "radius", "shape", "blood", "network", "scenario")
+SECTIONS = ("scale", "segment", "radius", "classes", "shape", "blood", "network", "scenario")
 
 
 def measure_image(  # noqa: PLR0913  one keyword a column of the sheet and a section of the study file
@@ -32,6 +32,7 @@ def measure_image(  # noqa: PLR0913  one keyword a column of the sheet and a sec
     scale: Mapping[str, Any] | None = None,
     segment: Mapping[str, Any] | None = None,
     radius: Mapping[str, Any] | None = None,
+    classes: Mapping[str, Any] | None = None,
     shape: Mapping[str, Any] | None = None,
     blood: Mapping[str, Any] | None = None,
     network: Mapping[str, Any] | None = None,
@@ -67,8 +68,8 @@ def measure_image(  # noqa: PLR0913  one keyword a column of the sheet and a sec
     preset : str
         fundus, angiogram, fluorescence or intravital; fundus where neither this nor `study` says one.
     study : path or mapping
-        A study file or what it would hold; its sheet is not read. `scale`, `segment`, `radius`, `shape`, `blood`,
-        `network` and `scenario` stand for its sections of that name and win over it, key by key.
+        A study file or what it would hold; its sheet is not read. `scale`, `segment`, `radius`, `classes`, `shape`,
+        `blood`, `network` and `scenario` stand for its sections of that name and win over it, key by key.
     image_id, subject, eye, group, condition, time, mask_file, fov_file, class_file, terminals_file, edits_file,
     disc_x_px, disc_y_px, disc_radius_px, axial_length_mm, axial_length_se_mm, refraction_d, hematocrit
         The columns of the image sheet; files may lie anywhere.
@@ -89,7 +90,7 @@ def measure_image(  # noqa: PLR0913  one keyword a column of the sheet and a sec
     if hematocrit is not None and not 0 <= hematocrit <= HIGHEST_HEMATOCRIT:
         problem = f"hematocrit is {hematocrit!r}; give a fraction between 0 and {HIGHEST_HEMATOCRIT}, not per cent."
         raise RequestError([Problem("measure_image", problem)])
-    sections = dict(zip(SECTIONS, (scale, segment, radius, shape, blood, network, scenario), strict=True))
+    sections = dict(zip(SECTIONS, (scale, segment, radius, classes, shape, blood, network, scenario), strict=True))
     settings = _resolved(study, preset, sections).settings
     source = ImageSource(
         image_id=image_id,
