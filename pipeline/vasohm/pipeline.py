@@ -15,6 +15,7 @@ from vasohm.image.prepare import prepare
 from vasohm.image.read import RawImage, read_image, read_labels, read_mask
 from vasohm.image.segment import segment
 from vasohm.network.centreline import extend_ends, refine_centrelines
+from vasohm.network.class_trees import part_trees
 from vasohm.network.classes import classes_from_labels, classify_vessels
 from vasohm.network.crossings import resolve_crossings
 from vasohm.network.edits import apply_edits, forced_places
@@ -56,6 +57,7 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     stage("classes")
     measured, notes = classify_vessels(measured, raw, prepared, source.disc, settings.classes)
     prepared = replace(prepared, notes=prepared.notes + notes)
+    measured = part_trees(measured, settings.trees)
     stage("flow")
     blood = settings.blood
     if source.hematocrit is not None:

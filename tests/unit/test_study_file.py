@@ -103,6 +103,7 @@ CONTRACT = """
     [network]
     terminals = "estimate"
     drive_mmhg = 2.0
+    trees_by_class = false
     target_wall_shear_pa = { arteriole = 5, capillary = 3.0, venule = 1.6 }
     target_wall_shear_sd_pa = 2.0
     target_pressure_mmhg = 31
@@ -158,6 +159,7 @@ def test_every_key_reaches_its_setting(tmp_path: Path) -> None:
     assert (chosen.blood.split_law, chosen.blood.red_cell_volume_fl) == ("1990", 55.0)
     assert (chosen.blood.density_kg_m3, chosen.blood.heart_rate_per_min) == (1060.0, 420.0)
     assert (chosen.network.terminals, chosen.network.drive_mmhg) == ("estimate", 2.0)
+    assert not chosen.trees.by_class  # which the preset would set
     mean = (5 + 3 + 1.6) / 3  # of vessels without a class
     assert chosen.targets == EndTargets((mean, 5.0, 1.6, 3.0), 2.0, (31.0, 31.0, 31.0, 31.0), 8.0)
     assert chosen.intervals == IntervalSettings("monte-carlo", 400, 7)
@@ -218,7 +220,12 @@ ALL_KEYS = [
     for key in StudyModel.model_fields[section].annotation.model_fields  # type: ignore[union-attr]
 ]
 NONSENSE = [True, float("nan"), float("inf"), -1, "nonsense", [], {"a": {"b": 1}}, [True, False]]
-SWITCHES = {("output", "overlay"), ("blood", "hematocrit_split"), ("segment", "overlap_adds")}
+SWITCHES = {
+    ("output", "overlay"),
+    ("blood", "hematocrit_split"),
+    ("segment", "overlap_adds"),
+    ("network", "trees_by_class"),
+}
 TEXTS = {("study", "name"), ("study", "sheet")}
 
 

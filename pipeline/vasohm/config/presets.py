@@ -67,30 +67,34 @@ PRESETS: Mapping[str, Mapping[str, Any]] = {
         "segment.radius_um": [4.0, 120.0],
         "segment.overlap_adds": True,
         "classes.method": "colour",  # venous blood absorbs more red light than arterial blood
+        "network.trees_by_class": True,  # its capillaries are not seen
     },
     "angiogram": {  # contrast agent or flow signal makes vessels bright
         "image.channel": "luminance",
         "image.polarity": "bright",
         "image.plane": "max",
         "segment.radius_um": [3.0, 120.0],
-        "segment.overlap_adds": False,  # often a maximum over depth: overlaps tell nothing
         "classes.method": "none",
+        "segment.overlap_adds": False,  # often a maximum over depth: overlaps tell nothing
+        "network.trees_by_class": False,
     },
     "fluorescence": {  # labelled plasma or vessel wall under a microscope
         "image.channel": "luminance",
         "image.polarity": "bright",
         "image.plane": "max",
+        "classes.method": "none",
         "segment.radius_um": [1.5, 60.0],
         "segment.overlap_adds": True,
-        "classes.method": "none",
+        "network.trees_by_class": False,
     },
     "intravital": {  # transmitted or reflected light: columns of red cells absorb green
         "image.channel": "green",
         "image.polarity": "dark",
+        "classes.method": "none",
         "image.plane": "mean",
         "segment.radius_um": [2.0, 60.0],
         "segment.overlap_adds": True,
-        "classes.method": "none",
+        "network.trees_by_class": False,
     },
 }
 

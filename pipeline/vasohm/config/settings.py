@@ -12,6 +12,7 @@ from vasohm.image.prepare import PrepareSettings
 from vasohm.image.read import ReadSettings
 from vasohm.image.segment import SegmentSettings
 from vasohm.network.classes import ClassSettings
+from vasohm.network.class_trees import TreeSettings
 from vasohm.network.crossings import CrossingSettings
 from vasohm.network.lumenfit import RadiusSettings
 from vasohm.network.morphometry import ShapeSettings
@@ -38,8 +39,9 @@ class Settings:
     segment: SegmentSettings
     skeletonize: SkeletonizeSettings
     crossings: CrossingSettings
-    radius: RadiusSettings
     classes: ClassSettings
+    radius: RadiusSettings
+    trees: TreeSettings
     shape: ShapeSettings
     blood: BloodSettings
     network: NetworkSettings

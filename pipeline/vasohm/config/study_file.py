@@ -24,6 +24,7 @@ from vasohm.image.prepare import PrepareSettings
 from vasohm.image.read import MAGIC, ReadSettings, shown
 from vasohm.image.segment import MASK_METHOD, SegmentSettings
 from vasohm.network.classes import ClassSettings
+from vasohm.network.class_trees import TreeSettings
 from vasohm.network.crossings import CrossingSettings
 from vasohm.network.lumenfit import RadiusSettings
 from vasohm.network.morphometry import ShapeSettings
@@ -324,8 +325,9 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
             values["radius.plasma_layer_um"],
             values["radius.plasma_layer_se_um"],
             low,
-        ),
         classes=ClassSettings(values["classes.method"], values["classes.probability"]),
+        ),
+        trees=TreeSettings(values["network.trees_by_class"]),
         shape=ShapeSettings(
             (values["shape.zone_dd"][0], values["shape.zone_dd"][1]),
             values["shape.calibre_formula"],

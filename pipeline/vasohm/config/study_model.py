@@ -225,6 +225,7 @@ class NetworkTable(Table):
 
     terminals: Literal["auto", "file", "none", "estimate"] | None = None
     drive_mmhg: Positive | None = None
+    trees_by_class: bool | None = None
     target_wall_shear_pa: Annotated[float | dict[str, float], PlainValidator(_by_class)] | None = None
     target_wall_shear_sd_pa: Positive | None = None
     target_pressure_mmhg: Annotated[float | dict[str, float], PlainValidator(_by_class)] | None = None
