@@ -6,6 +6,7 @@ import numpy as np
 import pytest
 from conftest import SIZE_PX, DrawnStudy
 from PIL import Image
+from skimage import measure
 
 import vasohm
 from vasohm.errors import MaskError
@@ -45,14 +46,14 @@ def eye(tmp_path_factory: pytest.TempPathFactory) -> Callable[..., ImageTables]:
     sector = np.floor((np.arctan2(y, x) / (2 * np.pi) * 12 - 0.3 + 0.5) % 12).astype(np.uint8)
     classes = 1 + sector % 2
 
-    def measure(kinds: tuple[int, ...] = (1, 2), disc_x_px: float = MIDDLE_PX) -> ImageTables:
+    def measure_eye(kinds: tuple[int, ...] = (1, 2), disc_x_px: float = MIDDLE_PX) -> ImageTables:
         Image.fromarray(np.where(np.isin(classes, kinds), classes, 0)).save(folder / "classes.png")
         return vasohm.measure_image(
             picture, pixel_size_um=PIXEL_SIZE_UM, preset="fundus", class_file=folder / "classes.png",
             disc_x_px=disc_x_px, disc_y_px=MIDDLE_PX, disc_radius_px=DISC_PX,
         )  # fmt: skip
 
-    return measure
+    return measure_eye
 
 
 def test_one_class_alone_gives_its_own_equivalent(eye: Callable[..., ImageTables]) -> None:
@@ -88,6 +89,8 @@ def test_a_mesh_has_no_orders_and_is_told() -> None:
     found = vasohm.measure_image(drawn(ways), pixel_size_um=PIXEL_SIZE_UM, preset="fundus")
     loops = found.networks.set_index("network_id")["loops"]
     assert sorted(loops) == [0, 1]
+    holes = len(loops) - measure.euler_number(found.mask, connectivity=2)
+    assert loops.sum() == holes  # scikit-image's count on the mask
     mesh, tree = loops.idxmax(), loops.idxmin()
     flags = found.networks.set_index("network_id")["flags"].str.split(";")
     assert "order_loops" in flags[mesh]

@@ -63,6 +63,15 @@ def test_area_ratios_of_murray_branchings():
         assert found.junction_exponent[0] == pytest.approx(inputs["junction_exponent"], rel=FORMULA)
 
 
+def test_branching_coefficients_of_knudtson_are_exponents():
+    """Knudtson et al. 2003: (r1² + r2²) / r0² of 1.28 and 1.11 are, for equal children, m = 2 ln 2 / ln(2 / 1.28)."""
+    for coefficient in (1.28, 1.11):
+        child = 10.0 * np.sqrt(coefficient / 2)
+        found = branchings_of(fork((10.0, child, child), (30.0, 30.0)))
+        assert found.area_ratio[0] == pytest.approx(coefficient, rel=FORMULA)
+        assert found.junction_exponent[0] == pytest.approx(2 * np.log(2) / np.log(2 / coefficient), rel=FORMULA)
+
+
 def test_junction_exponents_by_bisection_and_none_where_there_is_none():
     rows = published("junction_exponent_solver")
     radii = np.array([[inputs["r0"], inputs["r1"], inputs["r2"]] for inputs, _ in rows]).T

@@ -22,7 +22,7 @@ def pattern(name):
 
 
 def test_parallel_stripes():
-    """Area and length density, mean calibre and gap of stripes; 1 px is 0.5 um."""
+    """Densities and mean calibre (Chu et al., J Biomed Opt 2016;21:066008) and gap of stripes, by geometry."""
     inputs, told = pattern("parallel stripes")
     pixel, width, period = 0.5, inputs["width_um"] / 0.5, inputs["period_um"] / 0.5
     mask = np.zeros((800, 800), dtype=bool)
@@ -49,7 +49,7 @@ def test_parallel_stripes():
 
 
 def test_a_square_mesh_counts_to_its_nodes():
-    """40 mm of skeleton in 1 mm² although 10 um of each 50 lie inside crossing lumina."""
+    """By geometry, densities of Chu et al. 2016: 40 mm in 1 mm² though 10 um of each 50 lie inside crossing lumina."""
     inputs, told = pattern("square mesh of lines")
     period, width, n = inputs["period_um"], inputs["width_um"], 10
     nodes = [(period * (i + 0.5), period * (j + 0.5)) for j in range(n) for i in range(n)]
@@ -91,6 +91,7 @@ def test_only_the_field_of_view_counts():
 def test_distances_to_random_lines():
     """Lines of a Poisson process: distances fall off as exp(-2 L_A t), mean 1 / (2 L_A). Over 12 pictures.
 
+    Contact distribution: Stoyan, Kendall and Mecke, Stochastic Geometry and its Applications (from memory).
     What is left of an exponential beyond a line's own width is the same exponential.
     """
     rng = np.random.default_rng(8)
@@ -246,7 +247,10 @@ SETS = {
 
 @pytest.mark.parametrize("name", SETS)
 def test_box_dimension_of_known_sets(name):
-    """Sets of halves exactly; those of thirds and quarters to 0.08, as boxes of powers of two do not fit them."""
+    """Similarity dimension ln N / ln(1 / r) (Falconer, Fractal Geometry, 2014, ch. 9), by scikit-image and scipy.
+
+    Sets of halves exactly; those of thirds and quarters to 0.08, as boxes of powers of two do not fit them.
+    """
     told = next(value for inputs, value in published("fractal_dimension") if inputs["set"] == name)
     pixels, within = SETS[name]
     scales = count_boxes(pixels, np.ones_like(pixels))

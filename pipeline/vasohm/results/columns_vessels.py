@@ -55,7 +55,11 @@ SEGMENTS: tuple[Column, ...] = (
     ),
     number("length_se_um", "um", "Standard uncertainty of the segment's length, pixel size included (k = 1)."),
     number("chord_um", "um", "Straight distance between the segment's first and last point."),
-    number("tortuosity", "1", "Arc length over chord; 1 for a straight segment, empty for a closed ring."),
+    number(
+        "tortuosity",
+        "1",
+        "Arc length over chord (Hart et al. 1999, tau 1); 1 for a straight segment, empty for a closed ring.",
+    ),
     number(
         "curvature_rad",
         "rad",
