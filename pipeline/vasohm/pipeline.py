@@ -62,7 +62,7 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     blood = settings.blood
     if source.hematocrit is not None:
         blood = replace(blood, hematocrit=source.hematocrit)
-    placed = place_terminals(measured, source.terminals, settings.network)
+    placed = place_terminals(measured, source.terminals, settings.network, source.disc)
     terminals = estimate_ends(measured, placed, blood, settings.targets)
     flow = solve_flow(measured, terminals, blood)
     intervals = find_intervals(measured, flow, blood, settings.intervals)

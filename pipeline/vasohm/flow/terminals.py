@@ -8,6 +8,7 @@ import numpy as np
 
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.flags import Flag
+from vasohm.image.disc import OpticDisc
 from vasohm.network.along import arc_shares
 from vasohm.network.graph import NodeKind, VesselClass, VesselGraph, label_networks
 from vasohm.network.groups import mean_by, sum_by
@@ -15,6 +16,8 @@ from vasohm.network.paths import owner
 from vasohm.network.radius import MeasuredGraph
 
 REACH_PX = 10.0  # a terminal takes an end or rim node no further away
+MARGIN_DD = 0.25  # ends no further than this many disc diameters outside the optic disc's margin come out of the disc
+TRUNK_SHARE = 0.5  # of the radius of a tree's widest end there; narrower ones are twigs that end at the disc
 ROLES = {"inlet": 1, "outlet": -1}
 ESTIMATED = "estimated"  # source of networks whose ends `vasohm.flow.estimated_ends` is to find, or has found
 
@@ -73,26 +76,41 @@ class _Given:
     notes: tuple[str, ...]
 
 
-def place_terminals(measured: MeasuredGraph, points: Sequence[TerminalPoint], settings: NetworkSettings) -> Terminals:
+def place_terminals(
+    measured: MeasuredGraph,
+    points: Sequence[TerminalPoint],
+    settings: NetworkSettings,
+    disc: OpticDisc | None = None,
+) -> Terminals:
     """Give each network its inlets and outlets.
 
     Parameters
     ----------
     measured : MeasuredGraph
-        Its node positions are matched with the points; its radii tell the widest end of a tree.
+        Its node positions are matched with the points; its radii and classes, and the disc, tell the root of a tree.
     points : sequence of TerminalPoint
         Each takes the nearest end or rim node within `REACH_PX` (the lower index where two are equally near); one that
         finds none, or whose node is taken already, is left out and told in `notes`.
     settings : NetworkSettings
         ``file`` uses the points alone and ``none`` nothing. ``auto`` uses the points where there are any; else the
-        widest end of each tree is its inlet and its other ends are outlets, the other way round where more than
-        half of the tree's length is venule. A network with loops shows no inlet by its shape and gets none.
+        root of each tree is its inlet and its other ends are outlets, the other way round where more than half of the
+        tree's length is venule. A network with loops shows no inlet by its shape and gets none.
         ``estimate`` does as ``auto``, and marks for `vasohm.flow.estimated_ends` the networks that have an end of
         which neither the points nor the shape say anything.
+    disc : OpticDisc, optional
+        Where the vessels of a retina come from.
 
     Returns
     -------
     Terminals
+
+    Notes
+    -----
+    Without a disc the root of a tree is its widest end. With one it is the end nearest to the disc, the widest where
+    several are equally near. Trunks that come out of the disc apart from each other are branches of one central vessel
+    and stand under its pressure: all ends inside the disc or at most `MARGIN_DD` disc diameters off its margin, and at
+    least `TRUNK_SHARE` times as wide as the widest of them, are roots together. A tree that ends nowhere else has the
+    widest of its ends as root. The resistance of a tree with one root is the same whatever its class.
     """
     node_network, segment_network = label_networks(measured.graph)
     n_networks = int(segment_network.max(initial=-1)) + 1
@@ -100,7 +118,7 @@ def place_terminals(measured: MeasuredGraph, points: Sequence[TerminalPoint], se
     given = _match(measured, () if settings.terminals == "none" else points)
     role, mesh = given.role, np.zeros(n_networks, dtype=bool)
     if by_shape:
-        role, mesh = _roles_by_shape(measured, node_network, segment_network, n_networks)
+        role, mesh = _roles_by_shape(measured, (node_network, segment_network, n_networks), disc)
     has = [np.bincount(node_network[role == sign], minlength=n_networks) > 0 for sign in (1, -1)]
     source = np.where(has[0] | has[1], "auto" if by_shape else "file", "none")
     flags = missing_terminals(has[0], has[1]) | np.where(mesh, int(Flag.MESH), 0)
@@ -164,21 +182,40 @@ def _match(measured: MeasuredGraph, points: Sequence[TerminalPoint]) -> _Given:
 
 
 def _roles_by_shape(
-    measured: MeasuredGraph, node_network: IntArray, segment_network: IntArray, n_networks: int
+    measured: MeasuredGraph, networks: tuple[IntArray, IntArray, int], disc: OpticDisc | None
 ) -> tuple[IntArray, BoolArray]:
+    """Role of each node, and which networks have loops; `networks` is that of nodes, of segments, and their number."""
     graph = measured.graph
-    n_nodes_each = np.bincount(node_network, minlength=n_networks)
-    mesh = np.bincount(segment_network, minlength=n_networks) - n_nodes_each + 1 > 0
+    node_network, segment_network, n = networks
+    n_nodes_each = np.bincount(node_network, minlength=n)
+    mesh = np.bincount(segment_network, minlength=n) - n_nodes_each + 1 > 0
     ends = np.flatnonzero(open_ends(graph) & ~mesh[node_network] & (n_nodes_each[node_network] > 1))
-    radius = end_radius(measured)[ends]
-    order = np.lexsort((ends, -np.nan_to_num(radius), node_network[ends]))
-    _, first = np.unique(node_network[ends][order], return_index=True)
-    sign = np.where(_is_venular(measured, segment_network, n_networks), -1, 1)
+    network = node_network[ends]
+    radius = np.nan_to_num(end_radius(measured)[ends])
+    off_dd = np.zeros(len(ends)) if disc is None else _off_disc(graph, ends, disc)
+    root = np.zeros(len(ends), dtype=bool)
+    order = np.lexsort((ends, -radius, off_dd, network))
+    root[order[np.unique(network[order], return_index=True)[1]]] = True
+    if disc is not None:
+        root |= _trunks(network, radius, off_dd == 0, n)
+    sign = np.where(_is_venular(measured, segment_network, n), -1, 1)[network]
     role = np.zeros(graph.n_nodes, dtype=np.int64)
-    role[ends] = -sign[node_network[ends]]
-    widest = ends[order[first]]
-    role[widest] = sign[node_network[widest]]
+    role[ends] = np.where(root, sign, -sign)
     return role, mesh
+
+
+def _off_disc(graph: VesselGraph, nodes: IntArray, disc: OpticDisc) -> FloatArray:
+    """How far nodes lie off the disc and the band around it, in disc diameters; 0 inside."""
+    away_px = np.hypot(graph.node_x_px[nodes] - disc.x_px, graph.node_y_px[nodes] - disc.y_px)
+    return np.asarray(np.maximum(away_px / (2 * disc.radius_px) - 0.5 - MARGIN_DD, 0.0))
+
+
+def _trunks(network: IntArray, radius: FloatArray, at_disc: BoolArray, n_networks: int) -> BoolArray:
+    """Which ends at the disc are wide enough to come out of it; none of networks that have no other ends."""
+    widest = np.zeros(n_networks)
+    np.maximum.at(widest, network[at_disc], radius[at_disc])
+    leaves = np.bincount(network[~at_disc], minlength=n_networks) > 0
+    return np.asarray(at_disc & (radius >= TRUNK_SHARE * widest[network]) & leaves[network])
 
 
 def end_radius(measured: MeasuredGraph) -> FloatArray:
