@@ -4,11 +4,14 @@ import json
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 
 from vasohm.flags import Flag
+from vasohm.flow.hydraulics import NetworkFlow, solve_flow
 from vasohm.flow.rheology import BloodSettings
+from vasohm.flow.terminals import NetworkSettings, TerminalPoint, place_terminals
 from vasohm.network.graph import Crossings, NodeKind, VesselGraph
 from vasohm.network.radius import MeasuredGraph
 
@@ -145,3 +148,40 @@ def newtonian(viscosity_mpa_s: float = 3.0) -> BloodSettings:
 def blood(law: str, hematocrit: float = 0.45, hematocrit_se: float = 0.0) -> BloodSettings:
     """Blood after a published law, plasma of 1.2 mPa.s."""
     return BloodSettings(law, hematocrit, hematocrit_se, 1.2, 3.0, {})
+
+
+Y_NODES = [(0.0, 100.0), (100.0, 100.0), (200.0, 50.0), (200.0, 150.0)]
+AUTO = NetworkSettings("auto", 1.0)
+
+
+def y_vessels(radii: Sequence[float] = (10.0, 8.0, 6.0)) -> list[Vessel]:
+    """Return a parent to the right and its two children, 100 to 112 px long."""
+    return [straight(Y_NODES, a, b, r) for (a, b), r in zip([(0, 1), (1, 2), (1, 3)], radii, strict=True)]
+
+
+def y_bed(**more: Any) -> MeasuredGraph:
+    """Return a bed of one bifurcation; `more` goes to `bed`."""
+    return bed(Y_NODES, y_vessels(), **more)
+
+
+def point(
+    x: float,
+    y: float,
+    role: str,
+    *,
+    pressure: float | None = None,
+    flow: float | None = None,
+    hematocrit: float | None = None,
+) -> TerminalPoint:
+    """Return a line of a terminals file."""
+    return TerminalPoint(x, y, role, pressure, flow, hematocrit)
+
+
+def flow_of(
+    measured: MeasuredGraph,
+    points: Sequence[TerminalPoint] = (),
+    settings: NetworkSettings = AUTO,
+    how: BloodSettings | None = None,
+) -> NetworkFlow:
+    """Solve a bed, of constant viscosity unless told how, with inlets and outlets from its shape unless given."""
+    return solve_flow(measured, place_terminals(measured, points, settings), how or newtonian())

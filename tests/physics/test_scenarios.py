@@ -1,10 +1,10 @@
-"""The reverse question of a scenario: by how much must chosen vessels widen for a wanted resistance."""
+"""Scenarios, and their reverse question: by how much must chosen vessels widen for a wanted resistance."""
 
 from dataclasses import replace
 
 import numpy as np
 import pytest
-from beds import bed, blood, newtonian, straight
+from beds import AUTO, Y_NODES, bed, blood, flow_of, newtonian, straight, y_bed, y_vessels
 
 from vasohm.errors import DomainError
 from vasohm.flags import Flag
@@ -12,11 +12,11 @@ from vasohm.flow.hydraulics import solve_flow
 from vasohm.flow.monte_carlo import IntervalSettings, find_intervals
 from vasohm.flow.phase_separation import SPLIT_LAWS
 from vasohm.flow.scenarios import WIDEST_FACTOR, Scenario, run_scenarios
-from vasohm.flow.terminals import NetworkSettings, place_terminals
+from vasohm.flow.terminals import place_terminals
 from vasohm.network.graph import VesselClass
 from vasohm.uncertainty import COVERAGE_FACTOR_95
 
-AUTO = NetworkSettings("auto", 1.0)
+DILATION = Scenario("all dilate", 1.1, None, None, None)
 FOUND = 1e-9  # of a ratio: the search ends at 1e-10 of its logarithm
 NODES = [(0.0, 100.0), (100.0, 100.0), (200.0, 100.0), (200.0, 160.0)]
 PAIRS = [(0, 1), (1, 2), (1, 3)]
@@ -32,6 +32,57 @@ def wanted(ratio, below=None, above=None, kind=None):
 
 def series(radii=(10.0, 5.0), **more):
     return bed(NODES[:3], [straight(NODES, a, b, r) for (a, b), r in zip(PAIRS, radii, strict=False)], **more)
+
+
+def test_ten_per_cent_wider_vessels_of_constant_viscosity():
+    """1.1^-4, exactly and without doubt: every error acts alike before and after."""
+    measured = y_bed(ln_se=0.1, pixel_size_rel_se=0.1, shared=np.full((123, 1), 0.1))
+    found = asked(measured, DILATION)
+    np.testing.assert_allclose([found.ratio, found.ratio_lo, found.ratio_hi], 1.1**-4, rtol=1e-10)
+    assert found.n_segments_changed.tolist() == [3]
+
+
+def test_scenarios_choose_by_radius_and_class():
+    classes = [VesselClass.ARTERIOLE, VesselClass.ARTERIOLE, VesselClass.VENULE]
+    scenarios = [
+        Scenario("below", 0.5, 8.0, None, None),
+        Scenario("above", 0.5, None, 8.0, None),
+        Scenario("class", 0.5, None, None, "venule"),
+        Scenario("both", 0.5, 9.0, None, "arteriole"),
+        Scenario("none", 0.5, 1.0, None, None),
+    ]
+    found = asked(bed(Y_NODES, y_vessels((10.0, 8.5, 6.0)), classes=classes), *scenarios)
+    assert found.n_segments_changed.tolist() == [1, 2, 1, 1, 0]
+    assert found.scenario == ("below", "above", "class", "both", "none")
+    assert found.ratio[0] > 1
+    assert found.ratio[0] == found.ratio[2]
+    assert found.ratio[4] == found.ratio_lo[4] == found.ratio_hi[4] == 1.0
+
+
+def test_a_scenario_follows_the_viscosity_law_to_the_new_radii():
+    measured = y_bed()
+    found = asked(measured, DILATION, how=blood("pries-in-vivo"))
+    wider = flow_of(bed(Y_NODES, y_vessels((11.0, 8.8, 6.6))), how=blood("pries-in-vivo"))
+    np.testing.assert_allclose(found.resistance_after_pa_s_m3, wider.network_resistance_pa_s_m3, rtol=1e-10)
+    assert found.ratio[0] != pytest.approx(1.1**-4, rel=1e-3)
+
+
+def test_the_interval_of_a_ratio_holds_what_does_not_cancel():
+    """First order, JCGM 100:2008 eq. 10: only the change of the shares carries the segments' own errors."""
+    small = Scenario("small", 1.2, 7.0, None, None)
+    measured = y_bed(ln_se=0.1)
+    found = asked(measured, small)
+    before = flow_of(measured)
+    after = flow_of(bed(Y_NODES, y_vessels((10.0, 8.0, 7.2))))
+    ln_se = np.sqrt(np.sum(((after.share - before.share) * before.ln_resistance_random_se) ** 2))
+    assert np.log(found.ratio_hi / found.ratio)[0] == pytest.approx(1.959963984540054 * ln_se, rel=1e-6)
+
+
+def test_scenarios_without_meaning_are_refused_by_name():
+    with pytest.raises(DomainError, match=r"scenario 'shut': radius_factor is 0.0"):
+        asked(y_bed(), Scenario("shut", 0.0, None, None, None))
+    with pytest.raises(DomainError, match=r"scenario 'odd': vessel_class is 'lymphatic'"):
+        asked(y_bed(), Scenario("odd", 1.1, None, None, "lymphatic"))
 
 
 @pytest.mark.parametrize("ratio", [0.1, 0.8, 0.999, 1.25, 20.0])
