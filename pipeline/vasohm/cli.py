@@ -84,7 +84,7 @@ def commands() -> None:
 )
 @click.option("--preset", default="fundus", show_default=True, help="Settings where images are named and no study.")
 @click.option("--workers", type=click.IntRange(min=1), help="Processes; as many as may be used where not given.")
-@click.option("--part", metavar="K/N", help="Measure the images of one part of N only; gather puts parts together.")
+@click.option("--part", metavar="K/N", help="Measure part K of N only, or auto in an array job; gather joins parts.")
 @click.option("--dask", metavar="ADDRESS", help="Measure on the workers of this Dask scheduler, which runs already.")
 @click.option("--dask-insecure", is_flag=True, help="Take a scheduler of another machine without certificates.")
 @click.option("--only", multiple=True, metavar="IMAGE_ID ...", help="Measure these images only.")
@@ -124,7 +124,7 @@ def measure(  # noqa: PLR0913  the options of the command
     request = RunRequest(
         out=out.absolute(),
         workers=workers or usable_cores().count,
-        part=None if part is None else parse_part(part),
+        part=None if part is None else parse_part(part, os.environ),
         only=only,
         force=force,
         dask="" if dask is None else _dask_address(dask, insecure=dask_insecure, workers=workers),

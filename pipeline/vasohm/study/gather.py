@@ -1,5 +1,6 @@
 """From the images' folders and the state of a run to the files at the root of the results."""
 
+import time
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -10,7 +11,7 @@ from vasohm.flow.rheology import get_law
 from vasohm.results.methods import Methods, MethodsUsed, describe_methods
 from vasohm.results.pages import Study as StudyAtAGlance
 from vasohm.results.pages import write_study_page
-from vasohm.results.write import record_is_whole
+from vasohm.results.write import RECORD, record_is_whole
 from vasohm.results.write_study import (
     Failure,
     gather_tables,
@@ -26,6 +27,8 @@ from vasohm.study.outcome import EMPTY, FAILED, MEASURED, PENDING
 from vasohm.study.parts import Part, read_state
 from vasohm.study.state import ImageState, StudyState
 
+LATE_S = 30.0  # that directories are kept by NFS clients at least where nothing else is set, acdirmin of nfs(5)
+_LOOK_S = 0.5
 _WITH_TABLES = (MEASURED, EMPTY)
 
 
@@ -111,16 +114,25 @@ def gather(out: Path) -> GatherReport:
         raise RequestError([Problem(file=str(out), message=message)])
     probe(out)
     with hold_marker(out / "run", state.study, ""):
-        damaged = tuple(
-            image.image_id
-            for image in state.images
-            if image.status in _WITH_TABLES and not record_is_whole(image_folder(out, image.image_id))
-        )
+        with_tables = [image.image_id for image in state.images if image.status in _WITH_TABLES]
+        if (out / "parts").is_dir():
+            _wait_for_records(out, with_tables)
+        damaged = tuple(name for name in with_tables if not record_is_whole(image_folder(out, name)))
         state = state.with_images({image_id: ImageState(image_id, PENDING) for image_id in damaged})
         wanting = any(image.status in (FAILED, PENDING) for image in state.images)
         state = replace(state, exit_status=EXIT_SOME_FAILED if wanting or missing else EXIT_OK)
         write_root(out, state)
     return GatherReport(state, missing, damaged)
+
+
+def _wait_for_records(out: Path, image_ids: Sequence[str]) -> None:
+    """Wait a little for records that other machines have written: a shared disk may show them late."""
+    deadline = time.monotonic() + LATE_S
+    while time.monotonic() < deadline:
+        there = {path.parent.name for path in (out / "images").glob(f"*/{RECORD}")}  # listing asks the server anew
+        if there.issuperset(image_ids):
+            return
+        time.sleep(_LOOK_S)
 
 
 def _failures(images: Sequence[ImageState]) -> tuple[Failure, ...]:

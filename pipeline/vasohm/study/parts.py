@@ -15,6 +15,11 @@ from vasohm.study.outcome import PENDING
 from vasohm.study.state import ImageState, StudyState, read_json, state_from
 
 _ALIKE = ("study", "configuration", "versions", "sheet")
+# Of sbatch(1) and qsub(1): number of the task, first and last of its array, and what shows that none is left out.
+_ARRAYS = (
+    ("SLURM_ARRAY_TASK_ID", "SLURM_ARRAY_TASK_MIN", "SLURM_ARRAY_TASK_MAX", "SLURM_ARRAY_TASK_COUNT"),
+    ("SGE_TASK_ID", "SGE_TASK_FIRST", "SGE_TASK_LAST", "SGE_TASK_STEPSIZE"),
+)
 _NAME = re.compile(r"([1-9]\d{0,5})-of-([1-9]\d{0,5})")
 
 
@@ -33,19 +38,47 @@ class Part:
         return int.from_bytes(hashlib.sha256(image_id.encode()).digest()[:8]) % self.of == self.number - 1
 
 
-def parse_part(text: str) -> Part:
-    """Read ``K/N``.
+def parse_part(text: str, environ: Mapping[str, str]) -> Part:
+    """Read ``K/N``, or take ``auto`` from the batch system that runs this process as one task of an array.
+
+    Parameters
+    ----------
+    text : str
+        What the command says.
+    environ : Mapping of str to str
+        Environment variables.
 
     Raises
     ------
     RequestError
-        Unless 1 <= K <= N.
+        Unless 1 <= K <= N, or where ``auto`` is no task of an array that counts from 1 in steps of 1.
     """
+    if text == "auto":
+        return _array_part(environ)
     match = _NAME.fullmatch(text.replace("/", "-of-", 1))
     if match is None or int(match[1]) > int(match[2]):
         message = f"{text!r} is no part. Give K/N with 1 <= K <= N, such as 2/8."
         raise RequestError([Problem(file="--part", value=text, message=message)])
     return Part(int(match[1]), int(match[2]))
+
+
+def _array_part(environ: Mapping[str, str]) -> Part:
+    """Return the part of an array's task; an array of some of the numbers only would be taken for a smaller split."""
+    for number_name, first_name, last_name, gaps_name in _ARRAYS:
+        number = environ.get(number_name, "")
+        if not number.isdecimal():  # absent, or "undefined" outside an array
+            continue
+        first, last, gaps = (environ.get(name, "") for name in (first_name, last_name, gaps_name))
+        without_gaps = gaps == (last if gaps_name.endswith("COUNT") else "1")
+        if first == "1" and without_gaps and last.isdecimal() and 1 <= int(number) <= int(last):
+            return Part(int(number), int(last))
+        message = (
+            f"auto needs an array of all numbers from 1 to N; this is {first or '?'} to {last or '?'}, or has gaps. "
+            f"To run some parts of N again, give --part {number}/N."
+        )
+        raise RequestError([Problem(file="--part", value="auto", message=message)])
+    message = "auto finds no array task of Slurm or Grid Engine around it. Give K/N, as in --part $PBS_ARRAY_INDEX/8."
+    raise RequestError([Problem(file="--part", value="auto", message=message)])
 
 
 def write_part(out: Path, part: Part, state: StudyState, sheet: tuple[str, ...]) -> None:

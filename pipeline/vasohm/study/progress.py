@@ -123,10 +123,15 @@ def closing_lines(report: RunReport, out: Path, *, in_parts: bool) -> list[str]:
 def gathered_lines(report: GatherReport, out: Path) -> list[str]:
     """Return what is said after gathering: what is wanting first, the counts and the exit status last."""
     lines = failures_by_reason(report.state.images) + _empty(report.state.images)
-    lines += [
-        f"part {part.number}/{part.of} is missing: run measure with --part {part.number}/{part.of}"
-        for part in report.missing
-    ]
+    pending = [image.image_id for image in report.state.images if image.status == PENDING]
+    for part in report.missing:
+        ids = [name for name in pending if part.takes(name)]
+        of_them = f" ({counted(len(ids), 'image')}: {named(ids)})" if ids else " (it has no images)"
+        lines.append(
+            f"part {part.number}/{part.of} is missing{of_them}: run measure with --part {part.number}/{part.of}"
+        )
+    left = [name for name in pending if name not in report.damaged and not any(p.takes(name) for p in report.missing)]
+    lines += [f"not measured yet: {len(left)} ({named(left)}): run measure again"] if left else []
     lines += [f"{name}: its files are not as they were written: run measure again" for name in report.damaged]
     lines += _without_resistance(report.state.images, out)
     lines.append(f"Look at {out / 'index.html'}")
