@@ -325,8 +325,8 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
             values["radius.plasma_layer_um"],
             values["radius.plasma_layer_se_um"],
             low,
-        classes=ClassSettings(values["classes.method"], values["classes.probability"]),
         ),
+        classes=ClassSettings(values["classes.method"], values["classes.probability"]),
         trees=TreeSettings(values["network.trees_by_class"]),
         shape=ShapeSettings(
             (values["shape.zone_dd"][0], values["shape.zone_dd"][1]),
