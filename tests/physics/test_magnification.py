@@ -193,3 +193,21 @@ def test_resistance_goes_with_the_third_power_from_the_picture_to_the_table() ->
     shared = unsure["ln_resistance_shared_se"] ** 2 - middle["ln_resistance_shared_se"] ** 2
     assert math.sqrt(shared / more) == pytest.approx(3.0, rel=1e-6)
     assert unsure["ln_resistance_random_se"] == middle["ln_resistance_random_se"]
+
+
+def test_a_declared_disc_carries_its_doubt_to_the_resistance() -> None:
+    """9 % between people's discs (Girkin et al., Ophthalmology 2011;118:2403-2408) are 27 % in R."""
+    told = vasohm.measure_image(
+        crossed_by_a_vessel(),
+        disc_x_px=70.0,
+        disc_y_px=50.0,
+        disc_radius_px=90.0,
+        scale={"disc_diameter_um": 1800.0},
+        segment={"radius_um": [30.0, 150.0]},
+        blood={"law": "constant"},
+    )
+    image, vessel = told.image.iloc[0], told.segments.iloc[0]
+    assert (image["pixel_size_um"], image["pixel_size_source"], image["magnification"]) == (10.0, "disc", "")
+    assert "scale_from_disc" in image["flags"].split(";")
+    assert any("was taken for 1800 um" in note for note in told.notes)
+    assert vessel["ln_resistance_shared_se"] > 3 * 0.09
