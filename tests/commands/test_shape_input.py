@@ -77,6 +77,16 @@ def test_a_disc_at_the_border_is_told(eye: Callable[..., ImageTables], x_px: flo
     assert image[["crae_um", "crve_um", "avr"]].isna().all()
 
 
+def test_tissue_that_the_field_cannot_judge_is_told() -> None:
+    """One vessel beside the left border: how far the right side lies from vessels beyond the border nobody sees."""
+    picture = drawn([(np.array([14.0, 0.0]), np.array([14.0, 319.0]), 4.0)])[:, :160]
+    image = vasohm.measure_image(picture, pixel_size_um=PIXEL_SIZE_UM, preset="fundus").image.iloc[0]
+    assert "tissue_unseen" in image["flags"].split(";")
+    assert 0.05 < image["tissue_unseen_fraction"] < 1.0
+    assert np.isnan(image["tissue_distance_p95_um"])
+    assert np.isfinite(image["tissue_distance_p05_um"])
+
+
 def test_a_mesh_has_no_orders_and_is_told() -> None:
     """Two rails with two rungs: a loop, in which no vessel comes before the other. Beside it a tree, with orders."""
     rail = [np.array([at, 0.0]) for at in (60.0, 130.0)]
