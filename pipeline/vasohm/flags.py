@@ -62,6 +62,7 @@ class Flag(IntFlag):
     ZONE_CUT = 1 << 47
     TISSUE_UNSEEN = 1 << 48
     SCALE_FROM_DISC = 1 << 49
+    ZONE_UNSAID = 1 << 50
 
 
 MEANING: dict[Flag, str] = {
@@ -113,6 +114,7 @@ MEANING: dict[Flag, str] = {
     Flag.ZONE_CUT: "the field of view cuts the zone around the optic disc: vessels may be missing from the equivalents",
     Flag.TISSUE_UNSEEN: "more than 5 % of the tissue lies further from any vessel than the field of view can tell",
     Flag.SCALE_FROM_DISC: "the pixel size rests on a declared width of the optic disc; eyes differ in it by about 9 %",
+    Flag.ZONE_UNSAID: "a vessel of no class crosses the zone around the disc, as wide as some that the equivalents use",
 }
 
 

@@ -90,6 +90,26 @@ def test_only_the_zone_counts():
     assert wider.artery_um > found.artery_um  # now the inner one is met
 
 
+def test_a_vessel_that_branches_on_the_circle_is_not_lost():
+    """Children begin off their parent's lumen: between them and a node on the circle there are no points."""
+    nodes = [(286.0, 256.0), (355.0, 256.0), (440.0, 220.0), (440.0, 292.0)]
+    parent = straight(nodes, 0, 1, 50.0)
+    children = [straight(nodes, 1, end, 35.0, n=101) for end in (2, 3)]
+    cut = [Vessel(vessel.a, vessel.b, vessel.path_px[10:], vessel.radius_um[10:]) for vessel in children]
+    measured = bed(nodes, [parent, *cut], classes=[1, 1, 1], pixel_size_um=PIXEL_UM)
+    assert found_in(measured, settings=PARR_SETTINGS).n_arterioles == 2
+    nodes[1] = (357.0, 256.0)  # beyond the circle: now it is the parent that meets it
+    measured = bed(nodes, [straight(nodes, 0, 1, 50.0), *cut], classes=[1, 1, 1], pixel_size_um=PIXEL_UM)
+    assert found_in(measured, settings=PARR_SETTINGS).n_arterioles == 1
+
+
+def test_a_wide_vessel_of_no_class_is_told():
+    """It may be one of the six; a narrow one changes nothing."""
+    for width, told in ((105.0, Flag.ZONE_UNSAID), (20.0, Flag.NONE)):
+        other = straight([(286.0, 286.0), (400.0, 400.0)], 0, 1, width / 2, n=171)
+        assert found_in(eye(ARTERIOLES, VENULES, more=[other], classes=[0])).flags == told
+
+
 def test_doubt_is_that_of_repeated_draws_and_the_pixel_size_cancels_in_the_ratio():
     draws = 400
     rng = np.random.default_rng(4)

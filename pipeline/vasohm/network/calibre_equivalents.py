@@ -113,13 +113,14 @@ def find_equivalents(
     -------
     Equivalents
         NaN where fewer vessels of a class cross the zone than the formula asks for, or the disc lies partly outside the
-        field; `flags` say why, and that the field cuts the zone where it does.
+        field; `flags` say why, and where the field cuts the zone or a vessel of no class may belong to those used.
 
     Notes
     -----
-    A vessel is a segment that meets the circle in the middle of the zone, however often it does; its diameter is twice
-    its mean lumen radius over all of its way through the zone. Knudtson's formula takes the six widest of each class
-    and asks for six; Parr and Hubbard's takes all, so that it grows with their number.
+    A vessel is a segment that meets the circle in the middle of the zone, however often it does; the stub to its node
+    inside a parent's lumen counts as its way, so that no vessel is lost that branches on the circle. Its diameter is
+    twice its mean lumen radius over all of its way through the zone. Knudtson's formula takes the six widest of each
+    class and asks for six; Parr and Hubbard's takes all, so that it grows with their number.
 
     Random doubt of the radii adds in quadrature, weighted by what each width moves the result. What the vessels share,
     the pixel size too, moves them together, and largely leaves the ratio of artery to vein alone.
@@ -139,6 +140,7 @@ def find_equivalents(
         flags |= Flag.ZONE_CUT
     crossing = _cross(measured, disc, (zone_px[0], zone_px[1]))
     of_class = measured.graph.vessel_class[crossing.segment]
+    unsaid = crossing.width_um[of_class == VesselClass.NONE]
     found, numbers = [], []
     for kind, pair, few in (
         (VesselClass.ARTERIOLE, FORMULAS[formula][0], Flag.FEW_ARTERIOLES),
@@ -147,6 +149,8 @@ def find_equivalents(
         used = np.flatnonzero(of_class == kind)
         used = used[np.lexsort((used, -crossing.width_um[used]))][: MOST_VESSELS[formula]]
         enough = len(used) >= LEAST_VESSELS[formula]
+        if enough and unsaid.max(initial=0.0) > crossing.width_um[used].min():
+            flags |= Flag.ZONE_UNSAID
         flags |= Flag.NONE if enough else few
         found.append(_equivalent(crossing, used, pair) if enough else (np.nan, np.nan, np.zeros(0)))
         numbers.append(len(used))
@@ -186,9 +190,13 @@ def _cross(measured: MeasuredGraph, disc: OpticDisc, zone_px: tuple[float, float
     graph, share = measured.graph, arc_shares(measured)
     n, of = graph.n_segments, owner(graph.offsets)
     away = np.hypot(graph.x_px - disc.x_px, graph.y_px - disc.y_px)
-    beyond = away > 0.5 * (zone_px[0] + zone_px[1])
+    middle_px = 0.5 * (zone_px[0] + zone_px[1])
+    beyond = away > middle_px
     turns = (beyond[1:] != beyond[:-1]) & (of[1:] == of[:-1])
     meets = np.bincount(of[1:][turns], minlength=n) > 0
+    node_beyond = np.hypot(graph.node_x_px - disc.x_px, graph.node_y_px - disc.y_px) > middle_px
+    for node, end in ((graph.node_a, graph.offsets[:-1]), (graph.node_b, graph.offsets[1:] - 1)):
+        meets |= node_beyond[node] != beyond[end]
     inside = np.where((away >= zone_px[0]) & (away <= zone_px[1]), share * measured.length_um[of], 0.0)
     segment = np.flatnonzero(meets & (sum_by(of, inside, n) > 0))
     weight = np.where(np.isin(of, segment), inside / np.maximum(sum_by(of, inside, n)[of], 1e-300), 0.0)
