@@ -5,7 +5,8 @@ import pytest
 from beds import bed, straight
 
 from vasohm.flags import Flag
-from vasohm.flow.terminals import NetworkSettings, TerminalPoint, place_terminals
+from vasohm.flow.terminals import MARGIN_DD, NetworkSettings, TerminalPoint, place_terminals
+from vasohm.image.disc import OpticDisc
 from vasohm.network.graph import NodeKind, VesselClass
 
 NODES = [(0.0, 100.0), (100.0, 100.0), (200.0, 50.0), (200.0, 150.0), (0.0, 300.0), (90.0, 300.0)]
@@ -38,6 +39,38 @@ def test_blood_leaves_a_venular_tree_by_its_widest_end():
     venule, arteriole = VesselClass.VENULE, VesselClass.ARTERIOLE
     found = place_terminals(two_trees([venule, venule, arteriole, arteriole]), [], AUTO)
     assert found.role.tolist() == [1, 0, 1, -1, -1, 1]
+
+
+def disc_at(x, y, radius=20.0) -> OpticDisc:
+    return OpticDisc(x, y, radius, "sheet", 1.0)
+
+
+@pytest.mark.parametrize(
+    ("kind", "sign"), [(VesselClass.ARTERIOLE, 1), (VesselClass.VENULE, -1), (VesselClass.NONE, 1)]
+)
+def test_the_end_nearest_to_the_disc_is_the_root(kind, sign):
+    """Not the widest one, node 3: an artery may be wider behind a narrowing, and a picture cuts wide branches."""
+    found = place_terminals(two_trees([kind] * 4), [], AUTO, disc_at(-40.0, 100.0))
+    assert found.role[:4].tolist() == [sign, 0, -sign, -sign]
+    assert found.source == ("auto", "auto")
+
+
+def test_trunks_that_leave_the_disc_apart_are_roots_together():
+    """They are branches of one central vessel. A twig that ends at the disc is none of them."""
+    reach = 20.0 * (1 + 2 * MARGIN_DD)
+    band = disc_at(200.0 + reach - 0.1, 100.0)  # nodes 2 and 3 lie 50 px above and below, outside
+    assert place_terminals(two_trees(), [], AUTO, band).role[:4].tolist() == [-1, 0, -1, 1]  # equally near: the wider
+    wide = disc_at(220.0, 100.0, radius=50.0)  # both come out of it
+    assert place_terminals(two_trees(), [], AUTO, wide).role[:4].tolist() == [-1, 0, 1, 1]
+    twig = two_trees(radii=(10.0, 5.9, 12.0, 5.0))
+    assert place_terminals(twig, [], AUTO, wide).role[:4].tolist() == [-1, 0, -1, 1]
+    inside = disc_at(100.0, 100.0, radius=300.0)  # ends nowhere else: shape tells, as without a disc
+    assert place_terminals(two_trees(), [], AUTO, inside).role.tolist() == [-1, 0, -1, 1, -1, 1]
+
+
+def test_points_of_a_file_win_over_the_disc():
+    found = place_terminals(two_trees(), [at(200, 50), at(0, 100, "outlet")], AUTO, disc_at(0.0, 100.0))
+    assert found.role[:4].tolist() == [-1, 0, 1, 0]
 
 
 def test_equally_wide_ends_are_settled_by_their_order():
