@@ -3,12 +3,14 @@
 from vasohm.results.column import Column, count, number, text
 from vasohm.results.columns_vessels import CLASSES, FLAGS, IMAGE_ID, NETWORK_ID, NODE_ID
 
+NETWORK_CLASS = text("vessel_class", "Class of the network, as in networks.csv; empty where none is said.", CLASSES)
 SCHEME = text("scheme", "How vessels are ordered: by Strahler, or by Strahler and diameter.", ("strahler", "diameter"))
 
 BRANCHINGS: tuple[Column, ...] = (
     IMAGE_ID,
     NODE_ID,
     NETWORK_ID,
+    text("vessel_class", "Class that is said of the three vessels; empty where none is or they differ.", CLASSES),
     count("parent_segment", "segment_id of the parent."),
     count("child_1_segment", "segment_id of the wider child."),
     count("child_2_segment", "segment_id of the narrower child."),
@@ -95,6 +97,7 @@ BRANCHINGS: tuple[Column, ...] = (
 ORDERS: tuple[Column, ...] = (
     IMAGE_ID,
     NETWORK_ID,
+    NETWORK_CLASS,
     SCHEME,
     count(
         "order",
@@ -142,6 +145,7 @@ ORDERS: tuple[Column, ...] = (
 HORTON: tuple[Column, ...] = (
     IMAGE_ID,
     NETWORK_ID,
+    NETWORK_CLASS,
     SCHEME,
     count("highest_order", "Order of the root (Horton 1945); empty where the network has no orders."),
     number(

@@ -14,17 +14,42 @@ from vasohm.network.densities import Filling
 from vasohm.network.graph import VesselClass
 from vasohm.network.morphometry import Morphometry
 from vasohm.network.orders import SCHEMES
+from vasohm.network.radius import MeasuredGraph
 from vasohm.units import UM_PER_MM
 
+CLASS_WORDS = np.array(["", *(kind.name.lower() for kind in VesselClass if kind)], dtype=object)
 CLASS_NAMES = {kind: kind.name.lower() if kind else "all" for kind in VesselClass}
 
 
-def branching_rows(shape: Morphometry) -> dict[str, AnyArray]:
+def network_classes(measured: MeasuredGraph, shape: Morphometry) -> tuple[AnyArray, FloatArray]:
+    """Return the class of more than half of each network's length, and its mean probability over that length."""
+    graph, network = measured.graph, shape.segment_network
+    n = len(shape.network_length_um)
+    total = np.bincount(network, measured.length_um, minlength=n)
+    words = np.full(n, "", dtype=object)
+    probability = np.full(n, np.nan)
+    for kind in VesselClass:
+        if kind == VesselClass.NONE:
+            continue
+        length = np.where(graph.vessel_class == kind, measured.length_um, 0.0)
+        held = np.bincount(network, length, minlength=n)
+        most = 2 * held > total
+        weight = np.bincount(network, length * np.nan_to_num(graph.class_probability), minlength=n)
+        words[most] = CLASS_WORDS[kind]
+        probability[most] = weight[most] / held[most]
+    return words, probability
+
+
+def branching_rows(measured: MeasuredGraph, shape: Morphometry) -> dict[str, AnyArray]:
     """Columns of branchings.csv."""
     found = shape.branchings
+    kinds = measured.graph.vessel_class[np.stack((found.parent, found.child_1, found.child_2))]
+    said = kinds.max(axis=0, initial=0)
+    agree = ((kinds == said) | (kinds == VesselClass.NONE)).all(axis=0)
     columns: dict[str, AnyArray] = {
         "node_id": found.node + 1,
         "network_id": shape.node_network[found.node] + 1,
+        "vessel_class": CLASS_WORDS[np.where(agree, said, VesselClass.NONE)],
         "parent_segment": found.parent + 1,
         "child_1_segment": found.child_1 + 1,
         "child_2_segment": found.child_2 + 1,
@@ -61,11 +86,12 @@ def segment_shape(shape: Morphometry) -> dict[str, Any]:
     }
 
 
-def order_rows(shape: Morphometry) -> dict[str, AnyArray]:
-    """Columns of orders.csv."""
+def order_rows(shape: Morphometry, kinds: AnyArray) -> dict[str, AnyArray]:
+    """Columns of orders.csv; `kinds` (n_networks,) are the words for the networks' classes."""
     found = shape.orders
     return {
         "network_id": found.network + 1,
+        "vessel_class": kinds[found.network],
         "scheme": np.array(SCHEMES, dtype=object)[found.scheme],
         "order": found.order,
         "n_segments": found.n_segments,
@@ -88,11 +114,12 @@ def order_flags(shape: Morphometry) -> IntArray:
     return np.asarray(np.bitwise_or.reduce(shape.orders.ratio_flags.reshape(-1, len(SCHEMES)), axis=1))
 
 
-def horton_rows(shape: Morphometry) -> dict[str, Any]:
-    """Columns of horton.csv."""
+def horton_rows(shape: Morphometry, kinds: AnyArray) -> dict[str, Any]:
+    """Columns of horton.csv; `kinds` as for the orders."""
     found = shape.orders
     return {
         "network_id": found.ratio_network + 1,
+        "vessel_class": kinds[found.ratio_network],
         "scheme": np.array(SCHEMES, dtype=object)[found.ratio_scheme],
         "highest_order": _whole(_known(found.highest)),
         "bifurcation_ratio": found.bifurcation_ratio,

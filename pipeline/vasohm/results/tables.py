@@ -15,17 +15,19 @@ from vasohm.flow.monte_carlo import ResistanceIntervals
 from vasohm.flow.scenarios import ScenarioOutcomes
 from vasohm.image.prepare import PreparedImage
 from vasohm.image.segment import VesselMask
-from vasohm.network.graph import NodeKind, VesselClass
+from vasohm.network.graph import NodeKind
 from vasohm.network.morphometry import Morphometry
 from vasohm.network.radius import MeasuredGraph
 from vasohm.results.handed_graph import hand_out_graph
 from vasohm.results.schema import column_names, image_columns
 from vasohm.results.shape_tables import (
+    CLASS_WORDS,
     branching_rows,
     class_rows,
     equivalent_cells,
     horton_rows,
     image_shape,
+    network_classes,
     order_flags,
     order_rows,
     scale_rows,
@@ -34,7 +36,6 @@ from vasohm.results.shape_tables import (
 from vasohm.uncertainty import no_interval, quadrature
 
 KIND_WORDS = np.array([kind.name.lower() for kind in NodeKind], dtype=object)
-CLASS_WORDS = np.array(["", *(kind.name.lower() for kind in VesselClass if kind)], dtype=object)
 BLUR_NOT_TOLD = Flag.BLUR_ASSUMED | Flag.ASSUMED_BLUR_SPREAD  # assumed, or typed in the study
 HALF_ROUNDING = 1e-9  # two equal segments hold one half each: shares are not exact to the last digit
 ROLE_WORDS = np.array(["outlet", "", "inlet"], dtype=object)  # role -1, 0, +1
@@ -129,14 +130,15 @@ def tabulate(image_id: str, design: Mapping[str, str], findings: Findings) -> Im
     ------
     DomainError : a column of the sheet has the name of an output column.
     """
+    kinds, _ = network_classes(findings.measured, findings.shape)
     frames = {
         "networks": _networks(findings),
         "segments": _segments(findings),
         "nodes": _nodes(findings),
         "points": _points(findings.measured),
-        "branchings": branching_rows(findings.shape),
-        "orders": order_rows(findings.shape),
-        "horton": horton_rows(findings.shape),
+        "branchings": branching_rows(findings.measured, findings.shape),
+        "orders": order_rows(findings.shape, kinds),
+        "horton": horton_rows(findings.shape, kinds),
         "classes": class_rows(findings.shape),
         "scales": scale_rows(findings.shape, findings.prepared.pixel_size_um),
         "crossings": _crossings(findings.measured),
@@ -257,7 +259,7 @@ def _networks(findings: Findings) -> dict[str, AnyArray]:
     intervals = findings.intervals
     low, high = intervals.network_lo, intervals.network_hi
     unbounded = np.where(no_interval(flow.network_resistance_pa_s_m3, low), int(Flag.NO_INTERVAL), 0)
-    vessel_class, probability = _network_class(measured, shape)
+    vessel_class, probability = network_classes(measured, shape)
     node_network = shape.node_network
     return {
         "network_id": _ids(n),
@@ -296,25 +298,6 @@ def _count_to_half(network: IntArray, share: FloatArray, n_networks: int) -> Any
     before = upto - np.append(upto, 0.0)[first][network[order]]
     needed = np.bincount(network[order][(before < 0.5 - HALF_ROUNDING) & (held > 0)], minlength=n_networks)
     return pd.array(np.where(needed > 0, needed, np.nan), dtype="Int64")
-
-
-def _network_class(measured: MeasuredGraph, shape: Morphometry) -> tuple[AnyArray, FloatArray]:
-    """Return the class of more than half of each network's length, and its mean probability over that length."""
-    graph, network = measured.graph, shape.segment_network
-    n = len(shape.network_length_um)
-    total = np.bincount(network, measured.length_um, minlength=n)
-    words = np.full(n, "", dtype=object)
-    probability = np.full(n, np.nan)
-    for kind in VesselClass:
-        if kind == VesselClass.NONE:
-            continue
-        length = np.where(graph.vessel_class == kind, measured.length_um, 0.0)
-        held = np.bincount(network, length, minlength=n)
-        most = 2 * held > total
-        weight = np.bincount(network, length * np.nan_to_num(graph.class_probability), minlength=n)
-        words[most] = CLASS_WORDS[kind]
-        probability[most] = weight[most] / held[most]
-    return words, probability
 
 
 def _crossings(measured: MeasuredGraph) -> dict[str, AnyArray]:
