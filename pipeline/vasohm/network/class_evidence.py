@@ -6,6 +6,7 @@ import numpy as np
 
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.network.class_groups import Data, Groups, fit_groups
+from vasohm.network.class_inference import Links, infer
 from vasohm.network.colours import VesselColours
 
 LEAST_SIGNAL = 3.0  # a green density of fewer standard errors has no colour
@@ -14,8 +15,11 @@ LEAST_GAIN = 12.0  # in ln likelihood of two groups over one
 LEAST_DISTANCE = 1.8  # of the groups' reds, in standard deviations of a well measured segment
 LEAST_GROUP = 0.05  # of the segments
 WELL_MEASURED = 0.25  # quantile of the noise
-FIRST_SHARES = (0.2, 0.35, 0.5, 0.65, 0.8)  # of arterioles, tried
-FEW_ROUNDS = 25
+FIRST_SHARES = (0.3, 0.5, 0.7)  # of arterioles, tried
+FEW_ROUNDS = 12
+ROUNDS = 25
+KEPT_STARTS = 2
+TOLD_ODDS = 7.0  # of a segment that a person classed
 STRAY = 0.02  # share of segments whose colour is that of something else: bounds what one segment can say
 TEMPER = 0.7  # neighbouring pieces of tissue err alike
 
@@ -45,13 +49,14 @@ class ClassEvidence:
         freeze(self)
 
 
-def weigh_colours(colours: VesselColours, around: Circumstances, told: IntArray) -> ClassEvidence:
+def weigh_colours(colours: VesselColours, around: Circumstances, links: Links, told: IntArray) -> ClassEvidence:
     """Part the segments into two groups by their colour and say how well each fits.
 
     Parameters
     ----------
     colours : densities of all segments.
     around : their circumstances.
+    links : which segments belong together.
     told : (n_segments,) -1 arteriole and 1 venule where a person said so, 0 elsewhere.
 
     Returns
@@ -71,18 +76,77 @@ def weigh_colours(colours: VesselColours, around: Circumstances, told: IntArray)
     used &= green > LEAST_SIGNAL * np.sqrt(np.where(used, colours.covariance[:, 1, 1], 1.0))
     if used.sum() < LEAST_USED:
         return ClassEvidence(np.zeros(n), np.nan, f"only {used.sum()} segments show a colour, fewer than {LEAST_USED}")
-    data = Data(value[used], noise[used], _explaining(around, used)[used], told[used])
-    one, two = fit_groups(data.red, None), _two_groups(data)
-    gain = two.likelihood(data.red) - one.likelihood(data.red)
+    data = Data(value[used], noise[used], _explaining(around, used)[used])
+    one = fit_groups(data, None, _alone, FEW_ROUNDS)
+    two, gain = _two_groups(data, _Vessels(links, told, used), one)
     measured_well = np.quantile(two.inflation * data.noise[:, 0, 0], WELL_MEASURED)
-    distance = two.shift[0] / float(np.sqrt(two.spread[0, 0] + measured_well))
-    if gain < LEAST_GAIN or distance < LEAST_DISTANCE or not LEAST_GROUP < two.share < 1 - LEAST_GROUP:
-        return ClassEvidence(
-            np.zeros(n), distance, f"the colours are not those of two groups (distance {distance:.1f}, gain {gain:.0f})"
-        )
+    distance = float(two.shift[0] / np.sqrt(two.spread[0, 0] + measured_well))
+    if gain < LEAST_GAIN or distance < LEAST_DISTANCE:
+        fault = f"the colours are not those of two groups (distance {distance:.1f} sd, gain {gain:.0f})"
+        return ClassEvidence(np.zeros(n), distance, fault)
     log_odds = np.zeros(n)
     log_odds[used] = _bounded(TEMPER * two.log_ratio(data))
     return ClassEvidence(log_odds, distance, "")
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class _Vessels:
+    """How the segments that show a colour speak through all that are linked."""
+
+    links: Links
+    told: IntArray
+    used: BoolArray
+
+    def ask(self, log_odds: FloatArray, rounds: int = FEW_ROUNDS) -> tuple[FloatArray, float]:
+        """Probability of the second group, and the log likelihood beyond that of the first group alone."""
+        own = np.where(self.told != 0, TOLD_ODDS * self.told, 0.0)
+        own[self.used] = np.where(self.told[self.used] != 0, own[self.used], log_odds)
+        probability, gain = infer(self.links, own, rounds)
+        return probability[self.used], gain
+
+    def probability(self, log_odds: FloatArray) -> FloatArray:
+        """Probability of the second group."""
+        return self.ask(log_odds)[0]
+
+
+def _alone(log_odds: FloatArray) -> FloatArray:
+    """Probabilities without neighbours."""
+    return np.asarray(1 / (1 + np.exp(-np.clip(log_odds, -50, 50))))
+
+
+def _two_groups(data: Data, vessels: _Vessels, one: Groups) -> tuple[Groups, float]:
+    """Split the features at several places, fit two groups from there, and keep the likeliest.
+
+    Returns
+    -------
+    The groups, the second denser in red, and how much likelier they are than one group, as a logarithm.
+    """
+    left = data.value - data.design @ one.line
+    left /= np.sqrt(np.diag(one.spread) + one.inflation * np.diagonal(data.noise, axis1=1, axis2=2))
+    starts = [
+        feature > np.quantile(feature, share)
+        for feature in (data.value[:, 0], left[:, 0], left.sum(axis=1))
+        for share in FIRST_SHARES
+    ]
+    fits = [_red_first(fit_groups(data, start.astype(np.float64), _alone, FEW_ROUNDS)) for start in starts]
+    fits = sorted(fits, key=lambda fit: -_gain(fit, data, vessels))[:KEPT_STARTS]
+    fits = [fit_groups(data, vessels.probability(f.log_ratio(data)), vessels.probability, ROUNDS) for f in fits]
+    best = max((_red_first(fit) for fit in fits), key=lambda fit: _gain(fit, data, vessels))
+    return best, _gain(best, data, vessels) - float(one.log_density(data, 0.0).sum())
+
+
+def _gain(groups: Groups, data: Data, vessels: _Vessels) -> float:
+    """Log likelihood of two groups that share vessels; nothing where one of them has too few members."""
+    probability, beyond = vessels.ask(groups.log_ratio(data))
+    if not LEAST_GROUP < float(probability.mean()) < 1 - LEAST_GROUP:
+        return -np.inf
+    return float(groups.log_density(data, -0.5).sum()) + beyond
+
+
+def _red_first(groups: Groups) -> Groups:
+    """Return the same groups, the second denser in red."""
+    turned = -1.0 if groups.shift[0] < 0 else 1.0
+    return Groups(groups.line, turned * groups.shift, groups.spread, groups.inflation, groups.share)
 
 
 def _features(colours: VesselColours) -> tuple[FloatArray, FloatArray]:
@@ -107,16 +171,6 @@ def _explaining(around: Circumstances, used: BoolArray) -> FloatArray:
     centre, spread = np.median(x[used], axis=0), np.std(x[used], axis=0)
     x = (x - centre) / np.where(spread > 0, spread, 1.0)
     return np.clip(x, -3.0, 3.0)
-
-
-def _two_groups(data: Data) -> Groups:
-    """Split the reds at several places and keep the likeliest two groups; then let the other features speak too."""
-    red = data.red.value[:, 0]
-    starts = [red > np.quantile(red, share) for share in FIRST_SHARES]
-    fits = [fit_groups(data.red, start.astype(np.float64), FEW_ROUNDS) for start in starts]
-    best = max(fits, key=lambda fit: fit.likelihood(data.red))
-    second = best.probability(data.red)
-    return fit_groups(data, second if best.shift[0] > 0 else 1 - second)
 
 
 def _bounded(log_odds: FloatArray) -> FloatArray:

@@ -1,12 +1,15 @@
 """Two groups of vessels whose features differ by a shift and depend alike on all else; each error is known apart."""
 
+from collections.abc import Callable
 from dataclasses import dataclass
+from typing import TypeAlias
 
 import numpy as np
 
-from vasohm.arrays import FloatArray, IntArray, freeze
+from vasohm.arrays import FloatArray, freeze
 
-ROUNDS = 60
+Neighbours: TypeAlias = Callable[[FloatArray], FloatArray]
+
 FREEDOM = 4.0  # of the t distribution whose weights keep odd segments from pulling
 RIDGE = 0.5  # segments' worth of a belief that nothing explains a colour but the class
 SMALLEST_SD = 1e-3
@@ -21,15 +24,9 @@ class Data:
     value: FloatArray  # (n, f)
     noise: FloatArray  # (n, f, f)
     x: FloatArray  # (n, k)
-    told: IntArray  # (n,) -1 first group, 1 second, 0 not told
 
     def __post_init__(self) -> None:
         freeze(self)
-
-    @property
-    def red(self) -> "Data":
-        """The first feature alone."""
-        return Data(self.value[:, :1], self.noise[:, :1, :1], self.x, self.told)
 
     @property
     def design(self) -> FloatArray:
@@ -49,38 +46,32 @@ class Groups:
     def __post_init__(self) -> None:
         freeze(self)
 
+    def log_density(self, data: Data, side: float) -> FloatArray:
+        """Log density (n,) of segments `side` shifts from the middle, but for a constant that all groups share.
+
+        Of t distributions, so that few odd segments do not decide.
+        """
+        f = data.value.shape[1]
+        total = self.spread + self.inflation * data.noise
+        away = data.value - data.design @ self.line - side * self.shift
+        square = np.einsum("ni,nij,nj->n", away, np.linalg.inv(total), away)
+        _, ln_volume = np.linalg.slogdet(total)
+        density: FloatArray = -0.5 * ln_volume - 0.5 * (FREEDOM + f) * np.log1p(square / FREEDOM)
+        return density
+
     def log_ratio(self, data: Data) -> FloatArray:
         """Log of the likelihood of the second group over that of the first, (n,)."""
-        precision = np.linalg.inv(self.spread + self.inflation * data.noise)
-        left = data.value - data.design @ self.line
-        return np.asarray(np.einsum("ni,nij,j->n", left, precision, self.shift))
-
-    def probability(self, data: Data) -> FloatArray:
-        """Probability (n,) of the second group."""
-        odds = self.log_ratio(data) + np.log(self.share / (1 - self.share))
-        second = 1 / (1 + np.exp(-np.clip(odds, -50, 50)))
-        return np.where(data.told != 0, data.told > 0, second).astype(np.float64)
-
-    def likelihood(self, data: Data) -> float:
-        """Log likelihood of the first feature under t distributions, so that few odd segments do not decide."""
-        variance = self.spread[0, 0] + self.inflation * data.noise[:, 0, 0]
-        left = data.value[:, 0] - data.design @ self.line[:, 0]
-        density = [
-            np.log(share)
-            - 0.5 * np.log(variance)
-            - 0.5 * (FREEDOM + 1) * np.log1p((left - side * self.shift[0]) ** 2 / variance / FREEDOM)
-            for side, share in ((-0.5, 1 - self.share), (0.5, self.share))
-        ]
-        return float(np.logaddexp(*density).sum())
+        return self.log_density(data, 0.5) - self.log_density(data, -0.5)
 
 
-def fit_groups(data: Data, second: FloatArray | None, rounds: int = ROUNDS) -> Groups:
+def fit_groups(data: Data, second: FloatArray | None, neighbours: Neighbours, rounds: int) -> Groups:
     """Fit two groups by expectation and maximisation (Dempster, Laird & Rubin, J R Stat Soc B 1977;39:1-38).
 
     Parameters
     ----------
     data : features.
     second : (n,) first guess of the probability of the second group; None for a single group.
+    neighbours : from the log odds of all segments to the probabilities of the second group.
     rounds : of expectation and maximisation.
     """
     n, f = data.value.shape
@@ -93,7 +84,7 @@ def fit_groups(data: Data, second: FloatArray | None, rounds: int = ROUNDS) -> G
     for _ in range(rounds):
         groups = _maximised(groups, data, member, weight, single=single)
         if not single:
-            member = groups.probability(data)
+            member = neighbours(groups.log_ratio(data))
         weight = _weights(groups, data, member)
     return groups
 

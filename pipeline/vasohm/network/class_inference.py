@@ -9,7 +9,8 @@ from vasohm.network.graph import VesselGraph, branch_directions
 
 ROUNDS = 200
 SETTLED = 1e-4
-DAMPING = 0.5
+DAMPING = 0.3
+MOST_ODDS = 30.0
 STRAIGHT = 0.97  # probability that the straightest pair of arms at a branching is one vessel
 SIDE = 0.90  # and that a side arm belongs to it: else it merely ends there, or passes over
 ACROSS = 0.6  # that two straight pairs at one node are one vessel's: mostly they cross
@@ -81,26 +82,47 @@ def _straight_pairs(towards: FloatArray) -> tuple[list[tuple[int, int]], list[in
     return pairs, left
 
 
-def infer(links: Links, log_odds: FloatArray) -> FloatArray:
-    """Probability (n_segments,) of the second class, from each segment's own log odds and its neighbours'.
+def infer(links: Links, log_odds: FloatArray, rounds: int = ROUNDS) -> tuple[FloatArray, float]:
+    """Sum up messages along links (Pearl, Probabilistic Reasoning in Intelligent Systems, 1988, ch. 4).
 
-    Sums of messages along links (Pearl, Probabilistic Reasoning in Intelligent Systems, 1988, ch. 4): exact on a tree;
-    with loops a settled approximation (Murphy, Weiss & Jordan, Proc UAI 1999;15:467-475).
+    Exact on a tree; with loops a settled approximation (Yedidia, Freeman & Weiss, IEEE Trans Inf Theory
+    2005;51:2282-2312).
+
+    Parameters
+    ----------
+    links : of segments and junctions.
+    log_odds : (n_segments,) each segment's own, of the second class.
+    rounds : of messages, at most.
+
+    Returns
+    -------
+    The probability (n_segments,) of the second class, and the logarithm of the mean of exp(own log odds of those that
+    are of the second class) over all ways to class the vessels that the links allow.
     """
     own = np.zeros(links.n_vertices)
-    own[: len(log_odds)] = log_odds
-    source = np.concatenate((links.a, links.b))
-    target = np.concatenate((links.b, links.a))
-    back = np.concatenate((np.arange(len(links.a)) + len(links.a), np.arange(len(links.a))))
+    own[: len(log_odds)] = np.clip(log_odds, -MOST_ODDS, MOST_ODDS)
+    n_links = len(links.a)
+    source, target = np.concatenate((links.a, links.b)), np.concatenate((links.b, links.a))
+    back = np.concatenate((np.arange(n_links) + n_links, np.arange(n_links)))
     pull = np.tile(2 * links.same - 1, 2)
-    message = np.zeros(len(source))
-    for _ in range(ROUNDS):
-        total = own + np.bincount(target, message, links.n_vertices)
-        cavity = total[source] - message[back]
-        new = 2 * np.arctanh(pull * np.tanh(np.clip(cavity / 2, -20, 20)))
-        if np.abs(new - message).max(initial=0) < SETTLED:
-            break
+    message, cavity = np.zeros(2 * n_links), own[source]
+    for _ in range(rounds):
+        new = 2 * np.arctanh(pull * np.tanh(0.5 * cavity))
+        change = np.abs(new - message).max(initial=0)
         message = DAMPING * message + (1 - DAMPING) * new
+        total = own + np.bincount(target, message, links.n_vertices)
+        cavity = np.clip(total[source] - message[back], -MOST_ODDS, MOST_ODDS)
+        if change < SETTLED:
+            break
     total = own + np.bincount(target, message, links.n_vertices)
-    probability: FloatArray = 1 / (1 + np.exp(-np.clip(total[: len(log_odds)], -50, 50)))
-    return probability
+    # each message as two shares: the logarithm of that of the first class is -softplus(message)
+    at_vertices = np.logaddexp(0.0, total).sum() - np.logaddexp(0.0, message).sum()
+    one, other = _sigmoid(cavity[:n_links]), _sigmoid(cavity[n_links:])
+    agree = one * other + (1 - one) * (1 - other)
+    at_links = np.log(links.same * agree + (1 - links.same) * (1 - agree)).sum()
+    free = (links.n_vertices - n_links) * np.log(2.0)
+    return _sigmoid(total[: len(log_odds)]), float(at_vertices - at_links - free)
+
+
+def _sigmoid(log_odds: FloatArray) -> FloatArray:
+    return np.asarray(1 / (1 + np.exp(-log_odds)))

@@ -82,13 +82,14 @@ def classify_vessels(
     around, at_disc = _circumstances(measured, disc)
     told = SIDE[graph.vessel_class]
     colours = measure_colours(measured, raw.pixels, prepared.fov & ~prepared.clipped, raw.white_level)
-    evidence = weigh_colours(colours, around, told)
+    links = links_of(graph, at_disc)
+    evidence = weigh_colours(colours, around, links, told)
     if evidence.fault:
         return measured, (f"classes: none from colour: {evidence.fault}",)
     given = graph.vessel_class != VesselClass.NONE
     sure = np.clip(np.where(told == 0, 0.5, graph.class_probability), 0.5, SUREST)
     own = np.where(given, told * np.log(sure / (1 - sure)), evidence.log_odds)
-    venule = infer(links_of(graph, at_disc), own)
+    venule, _ = infer(links, own)
     likelier = np.where(venule > 0.5, VesselClass.VENULE, VesselClass.ARTERIOLE)
     probability = np.maximum(venule, 1 - venule)
     said = np.where(probability >= settings.probability, likelier, VesselClass.NONE)

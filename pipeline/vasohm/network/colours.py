@@ -35,8 +35,13 @@ COLOUR_BLURS_PX = (0.0, 1.0, 1.4, 2.0, 2.8, 4.0)  # of colour against brightness
 COLOUR_STRIPS = 500  # enough to tell that blur
 MOST_MISFIT = 5.0  # of the median: a strip that shows something else says no more
 COLOUR_GAIN = 0.98  # of the misfit: a blur of colour must explain the picture better by so much
-LEAST_ATTENUATION = 0.1  # a colour paler than this share is not seen
+LEAST_ATTENUATION = 0.6  # thinner vessels take over too much colour from beside them
 LEAST_KNOWN = 0.03  # a strip that knows less of its height (a pixel on the axis of a wide vessel is 1) says nothing
+STRETCH_PX = 16
+LEAST_PAIRS = 20  # of neighbouring stretches, from which their unevenness is told
+CLIP_SDS = 3.0
+NORMAL_MAD = 0.6745  # median absolute deviation of normal errors over their standard deviation
+SMALLEST_VARIANCE = 1e-12
 MOST_LOSS = 0.97  # of the light: darker is only noise
 TYPICAL_BLUR_PX = 1.0  # where the picture told none
 
@@ -92,7 +97,7 @@ def measure_colours(measured: MeasuredGraph, pixels: AnyArray, fov: BoolArray, w
     -----
     Cameras and JPEG files hold colour at a lower resolution than brightness (ITU-T T.81 allows every second pixel
     only): a thin vessel takes over the colour of its surroundings. Brightness and the differences of colour are fitted
-    apart; how much more blurred the colour is, the picture itself tells, and the heights of the colour are corrected.
+    apart; how much more blurred the colour is, the picture itself tells, and vessels that lose too much of it are left out.
     """
     n = measured.graph.n_segments
     rgb = pixels[..., :3].astype(np.float32)
@@ -112,7 +117,7 @@ def measure_colours(measured: MeasuredGraph, pixels: AnyArray, fov: BoolArray, w
     if len(chosen) == 0:
         return VesselColours(np.full((n, 3), np.nan), np.full((n, 3, 3), np.nan))
     parts = list(_fits(scene, chosen, optics, _colour_blur(scene, chosen, optics)))
-    return _by_segment(parts, frame.segment, n)
+    return _by_segment(parts, frame, measured.graph.offsets)
 
 
 def _colour_blur(scene: _Planes, chosen: IntArray, optics: Optics) -> float:
@@ -198,27 +203,56 @@ def _usable(scene: _Planes, points: IntArray, at_y: FloatArray, at_x: FloatArray
     return use
 
 
-def _by_segment(parts: list[_Fits], segment_of: IntArray, n: int) -> VesselColours:
-    """Put the strips of each segment together: heights weighted by what each strip knows."""
+def _by_segment(parts: list[_Fits], frame: Frame, offsets: IntArray) -> VesselColours:
+    """Put the strips of each segment together, first those of short stretches.
+
+    How far neighbouring stretches differ beyond their noise is what tissue and vessel do to a stretch.
+    """
     fits = _Fits(*(np.concatenate([getattr(fit, f.name) for fit in parts]) for f in fields(_Fits)))
+    n = len(offsets) - 1
     level = fits.base @ TO_RGB.T
     good = (fits.known > LEAST_KNOWN) & (fits.attenuation > LEAST_ATTENUATION) & (level > 0).all(axis=1)
     density, covariance = np.full((n, 3), np.nan), np.full((n, 3, 3), np.nan)
     if not good.any():
         return VesselColours(density, covariance)
-    segment, level, known = segment_of[fits.points[good]], level[good], fits.known[good]
+    points, level = fits.points[good], level[good]
     to_loss = TO_RGB[None] / level[:, :, None]  # (strips, 3, 3) from heights of the planes to shares of light
-    to_loss[:, :, 1:] /= fits.attenuation[good, None, None]
     loss = np.einsum("nij,nj->ni", to_loss, fits.height[good])
     noise = LINEAR_NOISE * np.median(fits.misfit[good], axis=0)
-    error = to_loss @ noise @ to_loss.transpose(0, 2, 1) / known[:, None, None]
-    weight = 1.0 / np.maximum(error[:, 0, 0], 1e-12)
-    total = sum_by(segment, weight, n)
-    some, share = total > 0, weight / total[segment]
-    mean = np.column_stack([sum_by(segment, share * loss[:, colour], n) for colour in range(3)])
-    mean = np.clip(mean[some], -MOST_LOSS, MOST_LOSS)
-    density[some] = -np.log1p(-mean)
-    summed = np.array([[sum_by(segment, share**2 * error[:, i, j], n) for j in range(3)] for i in range(3)])
+    error = to_loss @ noise @ to_loss.transpose(0, 2, 1) / fits.known[good, None, None]
+    longest = int(np.diff(offsets).max()) // STRETCH_PX + 1
+    number = frame.segment[points] * longest + position(offsets)[points] // STRETCH_PX
+    stretch, group = np.unique(number, return_inverse=True)
+    loss, error = _means(group, loss, error, len(stretch))
+    error = error + _unevenness(loss, error, stretch // longest, stretch)
+    segment, of = np.unique(stretch // longest, return_inverse=True)
+    mean, error = _means(of, loss, error, len(segment))
+    mean = np.clip(mean, -MOST_LOSS, MOST_LOSS)
+    density[segment] = -np.log1p(-mean)
     slope = 1.0 / (1.0 - mean)  # of the density by the share of light
-    covariance[some] = summed.transpose(2, 0, 1)[some] * slope[:, :, None] * slope[:, None, :]
+    covariance[segment] = error * slope[:, :, None] * slope[:, None, :]
     return VesselColours(density, covariance)
+
+
+def _means(group: IntArray, value: FloatArray, error: FloatArray, n: int) -> tuple[FloatArray, FloatArray]:
+    """Means (n, 3) of each group, weighted by the doubt of the first colour, and the covariance (n, 3, 3) of errors."""
+    weight = 1.0 / np.maximum(error[:, 0, 0], SMALLEST_VARIANCE)
+    share = weight / sum_by(group, weight, n)[group]
+    mean = np.column_stack([sum_by(group, share * value[:, i], n) for i in range(3)])
+    summed = np.array([[sum_by(group, share**2 * error[:, i, j], n) for j in range(3)] for i in range(3)])
+    return mean, summed.transpose(2, 0, 1)
+
+
+def _unevenness(loss: FloatArray, error: FloatArray, segment: IntArray, stretch: IntArray) -> FloatArray:
+    """Covariance (3, 3) of stretches beyond their noise, from the differences of neighbours."""
+    near = np.nonzero((segment[1:] == segment[:-1]) & (np.diff(stretch) == 1))[0]
+    if len(near) < LEAST_PAIRS:
+        return np.zeros((3, 3))
+    noise = 0.5 * (error[near] + error[near + 1])
+    low_noise = noise[:, 0, 0] <= np.median(noise[:, 0, 0])
+    step = (loss[near + 1] - loss[near])[low_noise]
+    scale = np.median(np.abs(step), axis=0) / NORMAL_MAD
+    step = np.clip(step, -CLIP_SDS * scale, CLIP_SDS * scale)
+    beyond = step.T @ step / (2 * len(step)) - noise[low_noise].mean(axis=0)
+    values, vectors = np.linalg.eigh(beyond)
+    return np.asarray(vectors @ np.diag(np.maximum(values, 0.0)) @ vectors.T)
