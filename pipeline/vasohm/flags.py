@@ -63,6 +63,7 @@ class Flag(IntFlag):
     TISSUE_UNSEEN = 1 << 48
     SCALE_FROM_DISC = 1 << 49
     ZONE_UNSAID = 1 << 50
+    DISC_NOT_FOUND = 1 << 51
 
 
 MEANING: dict[Flag, str] = {
@@ -115,6 +116,7 @@ MEANING: dict[Flag, str] = {
     Flag.TISSUE_UNSEEN: "more than 5 % of the tissue lies further from any vessel than the field of view can tell",
     Flag.SCALE_FROM_DISC: "the pixel size rests on a declared width of the optic disc; eyes differ in it by about 9 %",
     Flag.ZONE_UNSAID: "a vessel of no class crosses the zone around the disc, as wide as some that the equivalents use",
+    Flag.DISC_NOT_FOUND: "no place in the picture is the optic disc surely enough: nothing that needs one is told",
 }
 
 

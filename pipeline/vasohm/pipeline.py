@@ -11,6 +11,7 @@ from vasohm.flow.monte_carlo import find_intervals
 from vasohm.flow.scenarios import run_scenarios
 from vasohm.flow.terminals import place_terminals
 from vasohm.image.calibrate import calibrate
+from vasohm.image.disc import check_disc
 from vasohm.image.prepare import prepare
 from vasohm.image.read import RawImage, read_image, read_labels, read_mask
 from vasohm.image.segment import segment
@@ -21,6 +22,7 @@ from vasohm.network.crossings import resolve_crossings
 from vasohm.network.edits import apply_edits, forced_places
 from vasohm.network.graph import build_graph
 from vasohm.network.morphometry import Surroundings, describe_shape
+from vasohm.network.optic_disc import DiscSearch, find_disc
 from vasohm.network.radius import measure_radii
 from vasohm.network.skeletonize import skeletonize
 from vasohm.results.tables import Findings, ImageTables, tabulate
@@ -37,6 +39,8 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     shape = (raw.pixels.shape[0], raw.pixels.shape[1])
     given = read_mask(source.mask_file, shape) if source.mask_file else None
     fov = read_mask(source.fov_file, shape) if source.fov_file else None
+    if source.disc is not None:
+        check_disc(source.disc, shape)
     labels = read_labels(source.class_file, shape) if source.class_file else None
     stage("prepare")
     prepared = prepare(calibrate(raw, source.scale, settings.scale, disc=source.disc), settings.prepare, fov)
@@ -51,18 +55,21 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     if labels is not None:
         graph = classes_from_labels(graph, labels)
     graph, notes, edit_flags = apply_edits(graph, source.edits, places_met)
-    prepared = replace(prepared, notes=prepared.notes + notes, flags=prepared.flags | edit_flags)
+    looks = source.disc is None and settings.shape.disc == "find"
+    sought = find_disc(graph, prepared, mask.pixels) if looks else DiscSearch(source.disc)
+    notes, flags = prepared.notes + notes + sought.notes, prepared.flags | edit_flags | sought.flags
+    prepared = replace(prepared, notes=notes, flags=flags)
     stage("radius")
     measured = measure_radii(graph, prepared, settings.radius)
     stage("classes")
-    measured, notes = classify_vessels(measured, raw, prepared, source.disc, settings.classes)
+    measured, notes = classify_vessels(measured, raw, prepared, sought.disc, settings.classes)
     prepared = replace(prepared, notes=prepared.notes + notes)
     measured = part_trees(measured, settings.trees)
     stage("flow")
     blood = settings.blood
     if source.hematocrit is not None:
         blood = replace(blood, hematocrit=source.hematocrit)
-    placed = place_terminals(measured, source.terminals, settings.network, source.disc)
+    placed = place_terminals(measured, source.terminals, settings.network, sought.disc)
     terminals = estimate_ends(measured, placed, blood, settings.targets)
     flow = solve_flow(measured, terminals, blood)
     intervals = find_intervals(measured, flow, blood, settings.intervals)
@@ -71,7 +78,7 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     around = Surroundings(
         vessels=mask.pixels,
         fov=prepared.fov,
-        disc=source.disc,
+        disc=sought.disc,
         role=terminals.role,
         flow_nl_min=flow.flow_nl_min,
         resistance_pa_s_m3=flow.resistance_pa_s_m3,

@@ -212,7 +212,7 @@ def make_shape(n: int, disc: OpticDisc | None = None) -> Morphometry:
         ln_resistance_random_se=make_flow(n).ln_resistance_random_se,
         ln_resistance_shared_se=make_flow(n).ln_resistance_shared_se,
     )
-    found = describe_shape(make_measured(n), around, ShapeSettings((0.5, 1.0), "knudtson", (8.5,)))
+    found = describe_shape(make_measured(n), around, ShapeSettings((0.5, 1.0), "knudtson", (8.5,), "none"))
     return replace(found, tortuosity=real(1.0, 1.0, np.nan)[:n])  # a gap, as a ring would leave
 
 
@@ -343,8 +343,8 @@ def test_tables_have_the_promised_columns_with_and_without_rows() -> None:
         assert len(tables.image) == 1
         assert len(tables.segments) == n_segments
     with_disc = make_tables(disc=OpticDisc(1, 2, 3, "sheet", 1.0)).image
-    added = "disc_x_px disc_y_px disc_radius_px disc_source crae_um crae_se_um crve_um crve_se_um avr avr_se"
-    added += " n_zone_arterioles n_zone_venules calibre_formula"
+    added = "disc_x_px disc_y_px disc_radius_px disc_source disc_confidence zone_inner_px zone_outer_px"
+    added += " crae_um crae_se_um crve_um crve_se_um avr avr_se n_zone_arterioles n_zone_venules calibre_formula"
     assert list(with_disc.columns)[len(column_names("image")) :] == [*added.split(), *DESIGN]
 
 

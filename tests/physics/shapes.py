@@ -6,7 +6,7 @@ from vasohm.image.disc import OpticDisc
 from vasohm.network.morphometry import Morphometry, ShapeSettings, Surroundings, describe_shape
 from vasohm.network.radius import MeasuredGraph
 
-SETTINGS = ShapeSettings((0.5, 1.0), "knudtson", (10.0, 25.0))
+SETTINGS = ShapeSettings((0.5, 1.0), "knudtson", (10.0, 25.0), "none")
 
 
 def shape_of(

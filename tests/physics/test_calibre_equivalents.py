@@ -14,7 +14,7 @@ DISC = OpticDisc(256.0, 256.0, 40.0, "sheet", 1.0)  # its zone lies from 80 to 1
 ARTERIOLES = np.array([120.0, 115.0, 110.0, 100.0, 95.0, 90.0])
 VENULES = np.array([150.0, 140.0, 130.0, 125.0, 115.0, 110.0])
 PIXEL_UM = 7.0
-PARR_SETTINGS = ShapeSettings((0.5, 1.0), PARR_HUBBARD, (10.0,))
+PARR_SETTINGS = ShapeSettings((0.5, 1.0), PARR_HUBBARD, (10.0,), "none")
 
 
 def eye(arterioles, venules, *, more=(), classes=(), **known):
@@ -86,7 +86,7 @@ def test_only_the_zone_counts():
     measured = eye([100.0] * 5, [], more=[tapers, inner], classes=[1, 1])
     found = found_in(measured)
     assert found.artery_um == pytest.approx(published("crae_crve_knudtson_2003")[5][1], rel=1e-9)
-    wider = found_in(measured, settings=ShapeSettings((0.2, 0.6), KNUDTSON, (10.0,)))
+    wider = found_in(measured, settings=ShapeSettings((0.2, 0.6), KNUDTSON, (10.0,), "none"))
     assert wider.artery_um > found.artery_um  # now the inner one is met
 
 

@@ -83,6 +83,7 @@ CONTRACT = """
     method      = "none"
     probability = 0.9
     [shape]
+    disc            = "none"
     zone_dd         = [0.5, 1.0]
     calibre_formula = "parr-hubbard"
     calibre_um      = [5.0, 20.0]

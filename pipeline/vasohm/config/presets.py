@@ -68,6 +68,7 @@ PRESETS: Mapping[str, Mapping[str, Any]] = {
         "segment.overlap_adds": True,
         "classes.method": "colour",  # venous blood absorbs more red light than arterial blood
         "network.trees_by_class": True,  # its capillaries are not seen
+        "shape.disc": "find",
     },
     "angiogram": {  # contrast agent or flow signal makes vessels bright
         "image.channel": "luminance",
@@ -77,6 +78,7 @@ PRESETS: Mapping[str, Mapping[str, Any]] = {
         "classes.method": "none",
         "segment.overlap_adds": False,  # often a maximum over depth: overlaps tell nothing
         "network.trees_by_class": False,
+        "shape.disc": "none",
     },
     "fluorescence": {  # labelled plasma or vessel wall under a microscope
         "image.channel": "luminance",
@@ -86,6 +88,7 @@ PRESETS: Mapping[str, Mapping[str, Any]] = {
         "segment.radius_um": [1.5, 60.0],
         "segment.overlap_adds": True,
         "network.trees_by_class": False,
+        "shape.disc": "none",
     },
     "intravital": {  # transmitted or reflected light: columns of red cells absorb green
         "image.channel": "green",
@@ -95,6 +98,7 @@ PRESETS: Mapping[str, Mapping[str, Any]] = {
         "segment.radius_um": [2.0, 60.0],
         "segment.overlap_adds": True,
         "network.trees_by_class": False,
+        "shape.disc": "none",
     },
 }
 

@@ -332,6 +332,7 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
             (values["shape.zone_dd"][0], values["shape.zone_dd"][1]),
             values["shape.calibre_formula"],
             tuple(values["shape.calibre_um"]),
+            values["shape.disc"],
         ),
         blood=blood_settings(values),
         network=NetworkSettings(values["network.terminals"], values["network.drive_mmhg"]),

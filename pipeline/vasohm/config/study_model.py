@@ -22,7 +22,6 @@ from vasohm.image.segment import segmenter_names
 from vasohm.network.calibre_equivalents import FORMULAS
 from vasohm.results.columns_vessels import CLASSES
 
-MOST_SHOWN = 60  # characters of a faulty value
 CHANNELS = ("green", "red", "blue", "luminance")
 PLANES = ("max", "mean")
 TYPE_WORDS = {
@@ -41,7 +40,7 @@ BOUND_WORDS = {
     "less_than_equal": ("le", "at most"),
 }
 LENGTH_KINDS = ("too_short", "too_long", "string_too_short", "string_too_long")
-MOST_PERCENT = 100
+MOST_SHOWN, MOST_PERCENT = 60, 100  # characters of a faulty value; of a whole
 MOST_DEG_PER_PX = 1.0  # the widest cameras see 200 degrees on some thousand pixels
 LEAST_DISC_UM, MOST_DISC_UM = 1000.0, 3000.0  # means of peoples lie from 1500 to 2100 um; millimetres are refused
 LITERAL = re.compile("'([^']+)'")
@@ -197,6 +196,7 @@ class ClassesTable(Table):
 class ShapeTable(Table):
     """Where and how calibres are summed up."""
 
+    disc: Literal["find", "none"] | None = None
     zone_dd: Zone | None = None
     calibre_formula: Annotated[str, PlainValidator(lambda value: _one_of(value, tuple(FORMULAS)))] | None = None
     calibre_um: Limits | None = None

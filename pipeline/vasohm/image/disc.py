@@ -2,6 +2,10 @@
 
 from dataclasses import dataclass
 
+import numpy as np
+
+from vasohm.errors import ImageError
+
 
 @dataclass(frozen=True, slots=True)
 class OpticDisc:
@@ -16,3 +20,22 @@ class OpticDisc:
     radius_px: float
     source: str
     confidence: float
+
+
+def check_disc(disc: OpticDisc, shape: tuple[int, int]) -> None:
+    """Refuse a told disc that no part of a picture of `shape` (h, w) shows: such places are slips of typing.
+
+    Raises
+    ------
+    ImageError : the circle lies wholly outside the picture.
+    """
+    height, width = shape
+    nearest_x = min(max(disc.x_px, -0.5), width - 0.5)
+    nearest_y = min(max(disc.y_px, -0.5), height - 0.5)
+    if np.hypot(disc.x_px - nearest_x, disc.y_px - nearest_y) >= disc.radius_px:
+        msg = (
+            f"the optic disc told, at x {disc.x_px:g}, y {disc.y_px:g} with a radius of {disc.radius_px:g} px, lies "
+            f"outside the picture of {width} x {height} px. Correct disc_x_px, disc_y_px, disc_radius_px: pixels from "
+            "the upper left corner, to the right and downwards."
+        )
+        raise ImageError(msg)

@@ -38,6 +38,7 @@ class Equivalents:
     n_arterioles: int  # that cross the zone and were used
     n_venules: int
     formula: str
+    zone_px: tuple[float, float]  # radii around the disc's centre
     flags: Flag
 
 
@@ -132,13 +133,13 @@ def find_equivalents(
     77:472-477; Hubbard LD et al. (1999) Ophthalmology 106:2269-2280, doi:10.1016/S0161-6420(99)90525-0.
     """
     formula, zone_dd = how
-    zone_px = tuple(disc.radius_px * (1.0 + 2.0 * limit) for limit in zone_dd)
+    zone_px = (disc.radius_px * (1.0 + 2.0 * zone_dd[0]), disc.radius_px * (1.0 + 2.0 * zone_dd[1]))
     flags = Flag.NONE
     if _share_outside(fov, disc, (0.0, disc.radius_px)) > 0:
-        return Equivalents(np.nan, np.nan, np.nan, np.nan, np.nan, np.nan, 0, 0, formula, Flag.DISC_OUTSIDE)
-    if _share_outside(fov, disc, (zone_px[0], zone_px[1])) > CUT_SHARE:
+        return Equivalents(np.nan, np.nan, np.nan, np.nan, np.nan, np.nan, 0, 0, formula, zone_px, Flag.DISC_OUTSIDE)
+    if _share_outside(fov, disc, zone_px) > CUT_SHARE:
         flags |= Flag.ZONE_CUT
-    crossing = _cross(measured, disc, (zone_px[0], zone_px[1]))
+    crossing = _cross(measured, disc, zone_px)
     of_class = measured.graph.vessel_class[crossing.segment]
     unsaid = crossing.width_um[of_class == VesselClass.NONE]
     found, numbers = [], []
@@ -167,6 +168,7 @@ def find_equivalents(
         n_arterioles=numbers[0],
         n_venules=numbers[1],
         formula=formula,
+        zone_px=zone_px,
         flags=flags,
     )
 

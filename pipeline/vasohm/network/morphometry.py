@@ -1,6 +1,7 @@
 """Shape of segments, branchings, networks and the whole image."""
 
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 
@@ -28,11 +29,12 @@ from vasohm.network.tortuosity import Curves, describe_curves
 
 @dataclass(frozen=True, slots=True)
 class ShapeSettings:
-    """Where calibre equivalents are measured and by which formula; limits between classes of calibre."""
+    """The optic disc, where calibre equivalents are measured, by which formula; limits between classes of calibre."""
 
     zone_dd: tuple[float, float]  # disc diameters from the disc's margin
     calibre_formula: str  # knudtson | parr-hubbard
     calibre_um: tuple[float, ...]  # radii, ascending
+    disc: Literal["find", "none"]  # whether a disc that the sheet does not tell is looked for
 
 
 @dataclass(frozen=True, slots=True, eq=False)

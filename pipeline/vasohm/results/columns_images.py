@@ -86,7 +86,16 @@ DISC: tuple[Column, ...] = (
     number("disc_x_px", "{pixel}", "Centre of the optic disc, to the right."),
     number("disc_y_px", "{pixel}", "Centre of the optic disc, downwards."),
     number("disc_radius_px", "{pixel}", "Radius of the optic disc."),
-    text("disc_source", "Where the optic disc comes from: the sheet or the image."),
+    text(
+        "disc_source",
+        "Where the optic disc comes from: the sheet, or the image in which it was found.",
+        ("sheet", "image"),
+    ),
+    number(
+        "disc_confidence", "1", "Probability that the optic disc lies where it was found; 1 where the sheet tells it."
+    ),
+    number("zone_inner_px", "{pixel}", "Inner radius, from the disc's centre, of the zone of the calibre equivalents."),
+    number("zone_outer_px", "{pixel}", "Outer radius of that zone."),
     *EQUIVALENTS,
 )
 

@@ -2,7 +2,7 @@
 
 import textwrap
 from io import BytesIO
-from typing import Literal, TypeAlias
+from typing import Any, Literal, TypeAlias
 
 import matplotlib as mpl
 import numpy as np
@@ -14,6 +14,7 @@ from matplotlib.collections import PolyCollection
 from matplotlib.colors import ListedColormap, LogNorm, Normalize
 from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
+from matplotlib.patches import Circle as CirclePatch
 from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter
 from PIL import Image
 
@@ -48,6 +49,9 @@ WIDEST_RATIO = 1e4  # of the colours' range; smaller values take the darkest col
 SHARES_SHOWN = 300.0  # largest over smallest share that has a colour of its own
 TICKS = ((1.0, 1.5, 2.0, 3.0, 5.0, 7.0), (1.0, 2.0, 5.0), (1.0,))  # within one decade, two, and more
 GREY = "#d0d0d0"
+DISC_OPACITY = 0.8
+DASH_PT = (7.0, 4.0)  # on and off, of a broken circle
+LABEL_SIZE, LABEL_LETTERS = 0.8, 2.0  # of a letter: a circle's label, and the room above that it needs
 
 
 def draw_overlay(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
@@ -86,6 +90,7 @@ def draw_overlay(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
         values = _coloured_values(tables.segments, colour_by)
         norm = _share_range(values) if colour_by == "share" else _colour_range(values, tables.segments)
         _draw_segments(axes, tables, values, norm, pale=colour_by != "share")
+        _draw_disc(axes, tables.image.iloc[0], letter_pt)
         if norm is not None:
             low_left = ((size[0] + 1.5 * letter) / total[0], (foot + 0.05 * size[1]) / total[1])
             bar = figure.add_axes((*low_left, 1.5 * letter / total[0], 0.9 * size[1] / total[1]))
@@ -143,9 +148,38 @@ def _caption(tables: ImageTables, colour_by: ColourBy, letters: int) -> list[str
             f" {how} a broken outline: {n_doubtful} whose radius is doubtful, being cut by the rim of the picture, "
             "too thin for the pixels, or interpolated."
         )
+    if "disc_x_px" in tables.image:
+        caption += _disc_caption(tables.image.iloc[0])
     if len(tables.branchings):
         caption += " Lighter pieces at branchings lie inside the wider vessel and are not measured."
     return textwrap.wrap(caption, max(letters, 20))
+
+
+def _disc_caption(image: "pd.Series[Any]") -> str:
+    """Say what the circles are, and who told where the disc is."""
+    told = "told by the sheet" if image["disc_source"] == "sheet" else "found in the image"
+    sure = "" if image["disc_source"] == "sheet" else f" with a probability of {image['disc_confidence']:.2f}"
+    return f" White circles: the margin of the optic disc, {told}{sure}; broken, the zone of the calibre equivalents."
+
+
+def _draw_disc(axes: Axes, image: "pd.Series[Any]", letter_pt: float) -> None:
+    """Draw the disc's margin and the limits of the zone around it, labelled where they run upwards."""
+    if "disc_x_px" not in image:
+        return
+    x, y, height = float(image["disc_x_px"]), float(image["disc_y_px"]), float(image["height_px"])
+    for column, label in (("disc_radius_px", "disc"), ("zone_inner_px", "zone"), ("zone_outer_px", "")):
+        radius = float(image[column])
+        for colour, width in (("black", 1.8), ("white", 0.9)):  # seen on bright and on dark ground
+            dashes = (0.0, (DASH_PT[0] / width, DASH_PT[1] / width)) if column != "disc_radius_px" else "solid"
+            circle = CirclePatch((x, y), radius, fill=False, edgecolor=colour, linewidth=width, linestyle=dashes)
+            circle.set_alpha(DISC_OPACITY)
+            axes.add_patch(circle)
+        at = y - radius if y - radius > LABEL_LETTERS * letter_pt else y + radius
+        if label and 0 <= at < height:
+            axes.text(
+                x, at, label, color="white", fontsize=LABEL_SIZE * letter_pt, ha="center", va="center", clip_on=True,
+                bbox={"boxstyle": "round,pad=0.15", "facecolor": "black", "edgecolor": "none", "alpha": 0.5},
+            )  # fmt: skip
 
 
 def _drawing_scale(height: int, width: int) -> float:

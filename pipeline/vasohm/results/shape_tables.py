@@ -8,6 +8,7 @@ import pandas as pd
 
 from vasohm.arrays import AnyArray, FloatArray, IntArray
 from vasohm.flags import codes
+from vasohm.image.disc import OpticDisc
 from vasohm.network.calibre_equivalents import Equivalents
 from vasohm.network.classed import ClassShape, GroupShape
 from vasohm.network.densities import Filling
@@ -178,11 +179,16 @@ def image_shape(shape: Morphometry) -> dict[str, Any]:
     }
 
 
-def equivalent_cells(found: Equivalents | None) -> Mapping[str, Any]:
-    """Cells of image.csv that tell calibre equivalents; none without an optic disc."""
-    if found is None:
-        return {}
+def disc_cells(disc: OpticDisc, found: Equivalents) -> Mapping[str, Any]:
+    """Cells of image.csv that tell the optic disc and the calibre equivalents around it."""
     return {
+        "disc_x_px": disc.x_px,
+        "disc_y_px": disc.y_px,
+        "disc_radius_px": disc.radius_px,
+        "disc_source": disc.source,
+        "disc_confidence": disc.confidence,
+        "zone_inner_px": found.zone_px[0],
+        "zone_outer_px": found.zone_px[1],
         "crae_um": found.artery_um,
         "crae_se_um": found.artery_se_um,
         "crve_um": found.vein_um,

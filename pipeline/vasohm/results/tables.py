@@ -24,7 +24,7 @@ from vasohm.results.shape_tables import (
     CLASS_WORDS,
     branching_rows,
     class_rows,
-    equivalent_cells,
+    disc_cells,
     horton_rows,
     image_shape,
     network_classes,
@@ -146,11 +146,10 @@ def tabulate(image_id: str, design: Mapping[str, str], findings: Findings) -> Im
     }
     tables = {table: _framed(table, image_id, columns) for table, columns in frames.items()}
     status = "measured" if findings.measured.graph.n_segments else "empty"
-    image, disc = _image(findings), findings.shape.disc
+    image, disc, equivalents = _image(findings), findings.shape.disc, findings.shape.equivalents
     image.update({"image_id": image_id, "status": status})
-    if disc is not None:
-        image.update(equivalent_cells(findings.shape.equivalents))
-        image.update(disc_x_px=disc.x_px, disc_y_px=disc.y_px, disc_radius_px=disc.radius_px, disc_source=disc.source)
+    if disc is not None and equivalents is not None:
+        image.update(disc_cells(disc, equivalents))
     image.update(design)
     names = [column.name for column in image_columns(design, with_disc=disc is not None)]
     tables["image"] = pd.DataFrame({name: [image[name]] for name in names})

@@ -10,6 +10,7 @@ from vasohm.config.study_file import Study
 from vasohm.errors import Problem, VasohmError
 from vasohm.flow.rheology import get_law
 from vasohm.image.calibrate import calibrate
+from vasohm.image.disc import check_disc
 from vasohm.image.eye import lacking
 from vasohm.image.read import read_image, read_labels, read_mask
 from vasohm.image.segment import MASK_METHOD, get_segmenter
@@ -61,6 +62,11 @@ def _faults(source: ImageSource, settings: Settings) -> Iterator[tuple[str, Path
         calibrate(raw, source.scale, settings.scale, disc=source.disc)
     except VasohmError as fault:
         yield lacking(source.scale.eye, settings.scale.eye.magnification) or "pixel_size_um", source.file, fault
+    if source.disc is not None:
+        try:
+            check_disc(source.disc, _shape(raw.pixels))
+        except VasohmError as fault:
+            yield "disc_x_px", source.file, fault
     for column, path, read in (
         ("mask_file", source.mask_file, read_mask),
         ("fov_file", source.fov_file, read_mask),
