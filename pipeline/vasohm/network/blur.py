@@ -6,7 +6,7 @@ import numpy as np
 from scipy.special import expit
 
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
-from vasohm.network.groups import median_by
+from vasohm.network.groups import median_by, sum_by
 from vasohm.network.jointfit import (
     LN_C,
     LN_R,
@@ -44,6 +44,7 @@ NOTHING_GAINED = 0.005  # of log likelihood: a step of a tenth of a standard dev
 FAMILY_BLURS = 2.5  # some vessel must be so wide before slab and round can be told apart
 DECISIVE = 6.0  # difference of log likelihood between slab and round from which the image has told its family
 ODD_STRIP = 4.0  # times the cost of the segment's median strip: noise alone never gives so much
+STRANGE_SHARE = 0.25  # of a segment's strips that are odd among those of all: then it is not the vessel it is taken for
 VAGUE_SE = 2.0  # of ln blur and ln absorption before the picture is asked
 # sd of ln absorption below and above what Beer and Lambert's law gives: scattered and stray light only raise it, and
 # a power law of the camera leaves it
@@ -240,15 +241,18 @@ def advantage(of: FloatArray, over: FloatArray, segment: IntArray) -> float:
     """Difference of log likelihood by which one model explains the strips better than another.
 
     Strips that neither explains, though it explains most of their segment (a vessel beside that was not found, a fold,
-    dust), do not vote: with one of them a wrong profile can gain more than with all the others together. What is wrong
-    along whole segments, as a light reflex is, does count. All arguments are (n_points,).
+    dust), do not vote: with one of them a wrong profile can gain more than with all the others together. Nor does a
+    segment of which neither explains many strips, as one that was traced across two vessels. All arguments are
+    (n_points,).
     """
     least = np.minimum(of, over)
     seen = least > 0
     if not seen.any():
         return 0.0
-    usual = median_by(segment[seen], least[seen], int(segment.max()) + 1)
-    votes = seen & (least <= ODD_STRIP * np.nan_to_num(usual)[segment])
+    usual = np.nan_to_num(median_by(segment[seen], least[seen], int(segment.max()) + 1))
+    odd = least[seen] > ODD_STRIP * np.median(usual[usual > 0])
+    strange = sum_by(segment[seen], odd, len(usual)) > STRANGE_SHARE * sum_by(segment[seen], np.ones(len(odd)), len(usual))
+    votes = seen & ~strange[segment] & (least <= ODD_STRIP * usual[segment])
     return float(np.sum(over[votes] - of[votes]))
 
 
