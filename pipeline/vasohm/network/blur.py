@@ -6,7 +6,7 @@ import numpy as np
 from scipy.special import expit
 
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
-from vasohm.network.groups import median_by, sum_by
+from vasohm.network.groups import mean_by, median_by
 from vasohm.network.jointfit import (
     LN_C,
     LN_R,
@@ -44,10 +44,9 @@ NOTHING_GAINED = 0.005  # of log likelihood: a step of a tenth of a standard dev
 FAMILY_BLURS = 2.5  # some vessel must be so wide before slab and round can be told apart
 DECISIVE = 6.0  # difference of log likelihood between slab and round from which the image has told its family
 ODD_STRIP = 4.0  # times the cost of the segment's median strip: noise alone never gives so much
-STRANGE_SHARE = 0.25  # of a segment's strips that are odd among those of all: then it is not the vessel it is taken for
+STRANGE_SHARE = 0.25  # of a segment's strips that are odd among all: then it is not the vessel it is taken for
 VAGUE_SE = 2.0  # of ln blur and ln absorption before the picture is asked
-# sd of ln absorption below and above what Beer and Lambert's law gives: scattered and stray light only raise it, and
-# a power law of the camera leaves it
+# sd of ln absorption below and above Beer and Lambert's law: scattered and stray light only raise it
 ABSORPTION_SE = (0.5, 1.5)
 DARKEST = 0.95  # share of light taken away from which the law tells nothing
 MISFIT_PRIOR = 4.0  # segments that the belief in the stated noise is worth against the scatter between segments
@@ -240,10 +239,9 @@ def _advantage(case: _Case, of: _Fit, over: _Fit) -> float:
 def advantage(of: FloatArray, over: FloatArray, segment: IntArray) -> float:
     """Difference of log likelihood by which one model explains the strips better than another.
 
-    Strips that neither explains, though it explains most of their segment (a vessel beside that was not found, a fold,
-    dust), do not vote: with one of them a wrong profile can gain more than with all the others together. Nor does a
-    segment of which neither explains many strips, as one that was traced across two vessels. All arguments are
-    (n_points,).
+    Strips that neither explains, though it explains most of their segment (a vessel beside that was not found, dust), do
+    not vote: with one of them a wrong profile can gain more than with all others together. Nor does a segment of which
+    neither explains many strips, as one traced across two vessels. All arguments are (n_points,).
     """
     least = np.minimum(of, over)
     seen = least > 0
@@ -251,7 +249,7 @@ def advantage(of: FloatArray, over: FloatArray, segment: IntArray) -> float:
         return 0.0
     usual = np.nan_to_num(median_by(segment[seen], least[seen], int(segment.max()) + 1))
     odd = least[seen] > ODD_STRIP * np.median(usual[usual > 0])
-    strange = sum_by(segment[seen], odd, len(usual)) > STRANGE_SHARE * sum_by(segment[seen], np.ones(len(odd)), len(usual))
+    strange = mean_by(segment[seen], odd, np.ones(len(odd)), len(usual)) > STRANGE_SHARE
     votes = seen & ~strange[segment] & (least <= ODD_STRIP * usual[segment])
     return float(np.sum(over[votes] - of[votes]))
 
@@ -372,10 +370,8 @@ def _newton_step(case: _Case, fit: _Fit, wide: float) -> tuple[FloatArray, float
     information = fit.marginal.information[keep].sum(axis=0)[-n_free:, -n_free:] + np.diag(precision[-n_free:])
     gradient = (fit.marginal.gradient[keep].sum(axis=0) + gradient)[-n_free:]
     step = np.linalg.solve(information, gradient)
-    if (
-        fit.optics.family == "absorber"
-        and _bounded(shifted(fit.optics, "absorption", float(step[-1])), wide) == fit.optics
-    ):
+    absorbing = fit.optics.family == "absorber"
+    if absorbing and _bounded(shifted(fit.optics, "absorption", float(step[-1])), wide) == fit.optics:
         step[-1] = 0.0
         step[:-1] = np.linalg.solve(information[:-1, :-1], gradient[:-1])
     return _shortened(step), 0.5 * float(step @ gradient)
