@@ -112,8 +112,8 @@ NETWORKS: tuple[Column, ...] = (
     count("n_outlets", "Number of nodes of the network where blood leaves."),
     text(
         "terminals",
-        "How inlets and outlets are known: file, from the terminals file; auto, from the network's shape and class; "
-        "estimated; or none, and then there is no resistance.",
+        "How inlets and outlets are known: file, from the terminals file; auto, from the network's class, its shape "
+        "and where the optic disc lies; estimated; or none, and then there is no resistance.",
         ("file", "auto", "none", "estimated"),
     ),
     number("length_um", "um", "Length of the network's segments together."),
