@@ -1,5 +1,6 @@
 """What the methods paragraph says of choices that change what a number means."""
 
+import re
 from pathlib import Path
 
 from vasohm.config.study_file import study_from_mapping
@@ -54,6 +55,23 @@ def test_scales_that_rest_on_eyes_or_discs_are_told_with_their_sources() -> None
     assert any("10.1001/archopht.1990.01070030057028" in source for source in by_disc.references)
     assert DISC_CAUTION in by_disc.cautions
     plain = methods()
-    assert "optic disc" not in plain.paragraph
+    assert "the optic disc was taken to be" not in plain.paragraph
     assert "eye" not in plain.paragraph
     assert DISC_CAUTION not in plain.cautions
+
+
+def test_sources_of_shape_are_those_that_the_study_used() -> None:
+    """A reader must find the formula of each number, and no source of one that is not there."""
+    told = methods(shape={"disc": "find"})
+    assert "the 6 widest arterioles and venules that cross the zone from 0.5 to 1 disc diameters" in told.paragraph
+    assert any("10.1076/ceyr.27.3.143.16049" in source for source in told.references)  # Knudtson et al. 2003
+    assert "their trees were parted" in told.paragraph
+    older = methods(shape={"disc": "find", "calibre_formula": "parr-hubbard"})
+    assert "all, at least 2, arterioles and venules" in older.paragraph
+    assert not any("Knudtson" in source for source in older.references)
+    assert sum(name in source for source in older.references for name in ("Parr JC", "Hubbard LD")) == 2
+    without = methods(shape={"disc": "none"}, network={"trees_by_class": False})
+    assert "Calibre equivalents" not in without.paragraph
+    assert "were parted" not in without.paragraph
+    marks = [int(mark) for mark in re.findall(r"\[(\d+)\]", without.paragraph)]
+    assert sorted(set(marks)) == list(range(1, len(without.references) + 1))

@@ -13,8 +13,11 @@ from vasohm.image.calibrate import DISC_SPREAD, ScaleSettings
 from vasohm.image.eye import LENGTH_SCATTER, REFRACTION_SCATTER
 from vasohm.image.prepare import PrepareSettings
 from vasohm.image.segment import SegmentSettings
+from vasohm.network.class_trees import TreeSettings
 from vasohm.network.graph import VesselClass
 from vasohm.network.lumenfit import RadiusSettings
+from vasohm.network.morphometry import ShapeSettings
+from vasohm.results.shape_methods import shape_sentences
 
 POISEUILLE = (
     "Sutera SP, Skalak R. The history of Poiseuille's law. Annu Rev Fluid Mech 1993;25:1-20. "
@@ -115,6 +118,9 @@ class MethodsUsed:
     n_masked: int  # images that came with a vessel mask made elsewhere
     intervals: IntervalSettings
     targets: EndTargets | None  # of ends that are estimated
+    shape: ShapeSettings
+    trees: TreeSettings
+    with_disc: bool  # an optic disc is told, or looked for
 
 
 @dataclass(frozen=True, slots=True)
@@ -154,6 +160,7 @@ def describe_methods(used: MethodsUsed) -> Methods:
         ),
         _blood_sentence(used.blood, mark(used.law_citation)),
         *_cells_sentences(used.blood, mark),
+        *shape_sentences(used.shape, used.trees, mark, with_disc=used.with_disc),
         _network_sentence(used.network, mark(SHARES)),
         *([_estimate_sentence(used.targets, mark(ESTIMATE))] if used.targets is not None else []),
         (
@@ -267,7 +274,9 @@ def _network_sentence(network: NetworkSettings, mark: str) -> str:
     if network.terminals == "none":
         return "Networks were not solved."
     where = (
-        "a file" if network.terminals == "file" else "a file where one was given, else the networks' shape and class"
+        "a file"
+        if network.terminals == "file"
+        else "a file where one was given, else the networks' shape and class and the optic disc where one is known"
     )
     return (
         f"Inlets and outlets of the networks come from {where}; where no pressure was given they differ by "

@@ -59,6 +59,9 @@ def methods_used(study: Study, version: str) -> Methods:
             n_masked=sum(source.mask_file is not None for source in study.images),
             intervals=settings.intervals,
             targets=settings.targets,
+            shape=settings.shape,
+            trees=settings.trees,
+            with_disc=settings.shape.disc == "find" or any(source.disc is not None for source in study.images),
         )
     )
 
