@@ -11,8 +11,8 @@ from vasohm.image.calibrate import ScaleSettings
 from vasohm.image.prepare import PrepareSettings
 from vasohm.image.read import ReadSettings
 from vasohm.image.segment import SegmentSettings
-from vasohm.network.classes import ClassSettings
 from vasohm.network.class_trees import TreeSettings
+from vasohm.network.classes import ClassSettings
 from vasohm.network.crossings import CrossingSettings
 from vasohm.network.lumenfit import RadiusSettings
 from vasohm.network.morphometry import ShapeSettings

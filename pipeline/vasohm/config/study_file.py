@@ -23,8 +23,8 @@ from vasohm.image.calibrate import TypedScale
 from vasohm.image.prepare import PrepareSettings
 from vasohm.image.read import MAGIC, ReadSettings, shown
 from vasohm.image.segment import MASK_METHOD, SegmentSettings
-from vasohm.network.classes import ClassSettings
 from vasohm.network.class_trees import TreeSettings
+from vasohm.network.classes import ClassSettings
 from vasohm.network.crossings import CrossingSettings
 from vasohm.network.lumenfit import RadiusSettings
 from vasohm.network.morphometry import ShapeSettings

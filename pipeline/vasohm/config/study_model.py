@@ -267,7 +267,7 @@ class OutputTable(Table):
     """What is written beside the tables."""
 
     overlay: bool | None = None
-    colour: Literal["radius", "share", "resistance", "uncertainty"] | None = None
+    colour: Literal["radius", "share", "resistance", "uncertainty", "class"] | None = None
 
 
 class StudyModel(Table):

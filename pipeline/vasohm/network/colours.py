@@ -97,7 +97,7 @@ def measure_colours(measured: MeasuredGraph, pixels: AnyArray, fov: BoolArray, w
     -----
     Cameras and JPEG files hold colour at a lower resolution than brightness (ITU-T T.81 allows every second pixel
     only): a thin vessel takes over the colour of its surroundings. Brightness and the differences of colour are fitted
-    apart; how much more blurred the colour is, the picture itself tells, and vessels that lose too much of it are left out.
+    apart; how much more blurred the colour is, the picture itself tells; vessels that lose too much of it are left out.
     """
     n = measured.graph.n_segments
     rgb = pixels[..., :3].astype(np.float32)

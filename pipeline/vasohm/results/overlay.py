@@ -15,6 +15,7 @@ from matplotlib.colors import ListedColormap, LogNorm, Normalize
 from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 from matplotlib.patches import Circle as CirclePatch
+from matplotlib.patches import Patch
 from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter
 from PIL import Image
 
@@ -23,14 +24,17 @@ from vasohm.flags import Flag, code
 from vasohm.results.tables import ImageTables
 from vasohm.units import UM_PER_MM
 
-ColourBy: TypeAlias = Literal["radius", "share", "resistance", "uncertainty"]
+ColourBy: TypeAlias = Literal["radius", "share", "resistance", "uncertainty", "class"]
 
 COLOURED: dict[ColourBy, tuple[str, str]] = {  # what colours a segment: the colour bar's label; and in words
     "radius": ("lumen radius (µm)", "lumen radius"),
     "share": ("share of the network's resistance (%)", "share of the network's resistance"),
     "resistance": ("resistance (Pa·s/m³)", "resistance"),
     "uncertainty": ("standard uncertainty of the radius (%)", "relative standard uncertainty of the radius"),
+    "class": ("class", "class of vessel"),
 }
+# Yellow, purple and green of Okabe & Ito (Color Universal Design, 2008), apart for all kinds of colour vision.
+CLASS_COLOURS = {"arteriole": "#f0e442", "venule": "#cc79a7", "capillary": "#009e73"}
 DARKEST = 0.12  # start of the colour map: its first tenth is lost on a dark picture
 LOGARITHMIC_FROM = 5.0  # ratio of largest to smallest value from which the colours are spread in the logarithm
 DOUBTFUL = (Flag.RIM, Flag.UNRESOLVED, Flag.INFERRED)
@@ -61,7 +65,7 @@ def draw_overlay(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
     ----------
     tables : of one image.
     colour_by : what colours a segment: its mean lumen radius (um), its share of the network's resistance, its
-        resistance (Pa s/m3), or the relative standard uncertainty of its hydraulic radius.
+        resistance (Pa s/m3), the relative standard uncertainty of its hydraulic radius, or its class.
 
     Returns
     -------
@@ -89,9 +93,12 @@ def draw_overlay(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
         label, _ = COLOURED[colour_by]
         values = _coloured_values(tables.segments, colour_by)
         norm = _share_range(values) if colour_by == "share" else _colour_range(values, tables.segments)
-        _draw_segments(axes, tables, values, norm, pale=colour_by != "share")
+        colours = _class_colours(tables.segments) if colour_by == "class" else _colours(values, norm)
+        _draw_segments(axes, tables, colours, pale=colour_by != "share")
         _draw_disc(axes, tables.image.iloc[0], letter_pt)
-        if norm is not None:
+        if colour_by == "class":
+            _draw_class_legend(figure, (size[0] + 0.5 * letter) / total[0])
+        elif norm is not None:
             low_left = ((size[0] + 1.5 * letter) / total[0], (foot + 0.05 * size[1]) / total[1])
             bar = figure.add_axes((*low_left, 1.5 * letter / total[0], 0.9 * size[1] / total[1]))
             _draw_colour_bar(figure, bar, norm, label, _beyond(values, norm))
@@ -111,10 +118,25 @@ def draw_overlay(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
     return buffer.getvalue()
 
 
+def _class_colours(segments: pd.DataFrame) -> FloatArray:
+    """Return the colour (n, 4) of each segment's class, grey where none is said."""
+    colours = [mpl.colors.to_rgba(CLASS_COLOURS.get(word, GREY)) for word in segments["vessel_class"]]
+    return np.array(colours, dtype=np.float64).reshape(-1, 4)
+
+
+def _draw_class_legend(figure: Figure, left: float) -> None:
+    """Name the colours beside the picture."""
+    shown = {**CLASS_COLOURS, "not said": GREY}
+    handles = [Patch(facecolor=colour, edgecolor="black", label=word) for word, colour in shown.items()]
+    figure.legend(handles=handles, loc="center left", bbox_to_anchor=(left, 0.5), frameon=False, handlelength=1.0)
+
+
 def _coloured_values(segments: pd.DataFrame, colour_by: ColourBy) -> FloatArray:
     def column(name: str) -> FloatArray:
         return segments[name].to_numpy(np.float64)
 
+    if colour_by == "class":
+        return np.full(len(segments), np.nan)
     if colour_by == "share":
         return 100.0 * column("resistance_share")
     if colour_by == "uncertainty":
@@ -259,14 +281,19 @@ def _draw_colour_bar(
         bar.ax.yaxis.set_minor_formatter(NullFormatter())
 
 
-def _draw_segments(axes: Axes, tables: ImageTables, values: FloatArray, norm: Normalize | None, *, pale: bool) -> None:
-    """Draw all segments; `pale` tells whether doubtful ones recede: where shares are shown they may matter most."""
-    doubtful = _is_doubtful(tables.segments)
-    outlines = _ribbons(tables.points, tables.segments["n_points"].to_numpy(), tables.pixel_size_um)
+def _colours(values: FloatArray, norm: Normalize | None) -> FloatArray:
+    """Return the colour (n, 4) of each value, grey where it is not known."""
     colours = np.tile(mpl.colors.to_rgba(GREY), (len(values), 1))
     if norm is not None:
         known = _is_known(values)
         colours[known] = _colour_map()(norm(values[known]))
+    return colours
+
+
+def _draw_segments(axes: Axes, tables: ImageTables, colours: FloatArray, *, pale: bool) -> None:
+    """Draw all segments; `pale` tells whether doubtful ones recede: where shares are shown they may matter most."""
+    doubtful = _is_doubtful(tables.segments)
+    outlines = _ribbons(tables.points, tables.segments["n_points"].to_numpy(), tables.pixel_size_um)
     stubs, owners = _stubs(tables)
     _draw_outlines(axes, stubs, _lightened(colours[owners], WHITE_STUB), alpha=STUB)
     if pale:
