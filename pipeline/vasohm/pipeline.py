@@ -3,6 +3,7 @@
 from collections.abc import Callable
 from dataclasses import replace
 
+from vasohm.arrays import BoolArray
 from vasohm.config.settings import Settings
 from vasohm.config.sheet import ImageSource
 from vasohm.flow.estimated_ends import estimate_ends
@@ -10,8 +11,8 @@ from vasohm.flow.hydraulics import solve_flow
 from vasohm.flow.monte_carlo import find_intervals
 from vasohm.flow.scenarios import run_scenarios
 from vasohm.flow.terminals import place_terminals
-from vasohm.image.calibrate import calibrate
-from vasohm.image.disc import check_disc
+from vasohm.image.calibrate import calibrate, guess_for_disc, rests_on_disc
+from vasohm.image.disc import OpticDisc, check_disc
 from vasohm.image.prepare import prepare
 from vasohm.image.read import RawImage, read_image, read_labels, read_mask
 from vasohm.image.segment import segment
@@ -43,6 +44,8 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
         check_disc(source.disc, shape)
     labels = read_labels(source.class_file, shape) if source.class_file else None
     stage("prepare")
+    if source.disc is None and settings.shape.disc == "find" and rests_on_disc(raw, source.scale, settings.scale):
+        source = replace(source, disc=_find_disc_first(raw, settings, given, fov))
     prepared = prepare(calibrate(raw, source.scale, settings.scale, disc=source.disc), settings.prepare, fov)
     stage("segment")
     mask = segment(prepared, settings.segment, given)
@@ -88,3 +91,13 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     shape_of = describe_shape(measured, around, settings.shape)
     findings = Findings(prepared, mask, measured, flow, shape_of, scenarios, intervals)
     return tabulate(source.image_id, source.design, findings)
+
+
+def _find_disc_first(
+    raw: RawImage, settings: Settings, given: BoolArray | None, fov: BoolArray | None
+) -> OpticDisc | None:
+    """Find the optic disc at a guessed pixel size, where only the disc can tell the true one."""
+    guessed = prepare(guess_for_disc(raw, settings.scale), settings.prepare, fov)
+    mask = segment(guessed, settings.segment, given)
+    graph = build_graph(skeletonize(mask, guessed, settings.skeletonize))
+    return find_disc(graph, guessed, mask.pixels).disc

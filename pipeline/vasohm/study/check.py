@@ -9,7 +9,7 @@ from vasohm.config.sheet import ImageSource
 from vasohm.config.study_file import Study
 from vasohm.errors import Problem, VasohmError
 from vasohm.flow.rheology import get_law
-from vasohm.image.calibrate import calibrate
+from vasohm.image.calibrate import calibrate, rests_on_disc
 from vasohm.image.disc import check_disc
 from vasohm.image.eye import lacking
 from vasohm.image.read import read_image, read_labels, read_mask
@@ -58,8 +58,10 @@ def _faults(source: ImageSource, settings: Settings) -> Iterator[tuple[str, Path
     except VasohmError as fault:
         yield "file", source.file, fault
         return
+    looks = source.disc is None and settings.shape.disc == "find"
     try:
-        calibrate(raw, source.scale, settings.scale, disc=source.disc)
+        if not (looks and rests_on_disc(raw, source.scale, settings.scale)):  # only measuring can tell then
+            calibrate(raw, source.scale, settings.scale, disc=source.disc)
     except VasohmError as fault:
         yield lacking(source.scale.eye, settings.scale.eye.magnification) or "pixel_size_um", source.file, fault
     if source.disc is not None:
