@@ -239,9 +239,9 @@ def _advantage(case: _Case, of: _Fit, over: _Fit) -> float:
 def advantage(of: FloatArray, over: FloatArray, segment: IntArray) -> float:
     """Difference of log likelihood by which one model explains the strips better than another.
 
-    Strips that neither explains, though it explains most of their segment (a vessel beside that was not found, dust), do
-    not vote: with one of them a wrong profile can gain more than with all others together. Nor does a segment of which
-    neither explains many strips, as one traced across two vessels. All arguments are (n_points,).
+    Strips that neither explains, though it explains most of their segment (a vessel beside that was not found, dust),
+    do not vote: with one of them a wrong profile can gain more than with all others together. Nor does a segment of
+    which neither explains many strips, as one traced across two vessels. All arguments are (n_points,).
     """
     least = np.minimum(of, over)
     seen = least > 0
