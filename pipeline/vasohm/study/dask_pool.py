@@ -8,8 +8,10 @@ moments when no other worker was lost (the end of an allotted time takes many at
 import logging
 import secrets
 import time
+import warnings
 from collections import Counter, deque
 from collections.abc import Callable, Iterable, Iterator
+from concurrent.futures import CancelledError
 from contextlib import AbstractContextManager, contextmanager, suppress
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
@@ -89,9 +91,13 @@ def connected(address: str) -> Iterator["Client"]:
     except ImportError:
         message = "needs Dask, which is not installed. Install the extra: pip install 'vasohm[dask]'."
         raise RequestError([Problem(file="--dask", value=address, message=message)]) from None
-    logging.getLogger("distributed").setLevel(logging.CRITICAL)  # what matters of it is told in our own words
+    for name in list(logging.root.manager.loggerDict):
+        if name.partition(".")[0] == "distributed":  # what matters of it is told in our own words
+            logging.getLogger(name).setLevel(logging.CRITICAL)
     try:
-        client = Client(address, timeout=CONNECT_S, set_as_default=False, name="vasohm")
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")  # of versions: what matters of them is compared in the meeting
+            client = Client(address, timeout=CONNECT_S, set_as_default=False, name="vasohm")
     except (OSError, ValueError, TypeError) as fault:
         why = " ".join(str(fault).split())
         message = f"no Dask scheduler answers at {address} ({why}). Start one, or mend the address."
@@ -99,7 +105,7 @@ def connected(address: str) -> Iterator["Client"]:
     try:
         yield client
     finally:
-        with suppress(TimeoutError, OSError):
+        with suppress(OSError):
             client.close(timeout=_ANSWER_S)
 
 
@@ -215,7 +221,8 @@ class DaskPool:
         for future, one in list(self._running.items()):
             if one.worker in lost and future.status == _PENDING:
                 del self._running[future]
-                future.cancel()
+                with _asking():
+                    future.cancel()
                 yield from self._bury(one, on_retry, among_others=len(lost) > 1)
         now = time.monotonic()
         self._looked = now
@@ -229,9 +236,10 @@ class DaskPool:
         """Ask workers that are new who they are; return all that are there."""
         threads = self._threads()
         for worker in sorted(threads.keys() - self._admitted - self._refused - self._greeted.keys()):
-            self._greeted[worker] = self._client.submit(
-                introduce, self._meeting.question, workers=[worker], pure=False, key=_key("introduce")
-            )
+            with _asking():
+                self._greeted[worker] = self._client.submit(
+                    introduce, self._meeting.question, workers=[worker], pure=False, key=_key("introduce")
+                )
         for worker in self._greeted.keys() - threads.keys():
             del self._greeted[worker]
         self._refused &= threads.keys()
@@ -244,8 +252,9 @@ class DaskPool:
             if not future.done():
                 continue
             del self._greeted[worker]
-            fault = future.exception() if future.status == "error" else None
-            answer = future.result() if future.status == "finished" else {}
+            with _asking():
+                fault = future.exception() if future.status == "error" else None
+                answer = future.result() if future.status == "finished" else {}
             why = objections(self._meeting, answer, fault, threads.get(worker, 1))
             if why:
                 self._refused.add(worker)
@@ -256,12 +265,9 @@ class DaskPool:
     def _threads(self) -> dict[str, int]:
         """Threads of each worker by its address, asked of the scheduler."""
         if self._client.status != "running":
-            raise self._scheduler_lost()
-        try:
-            threads = self._client.nthreads(callback_timeout=_ANSWER_S)
-        except (OSError, TimeoutError):
-            raise self._scheduler_lost() from None
-        return dict(threads)
+            raise _scheduler_lost()
+        with _asking():
+            return dict(self._client.nthreads(callback_timeout=_ANSWER_S))
 
     def _hand_out(self, waiting: Iterator[Task]) -> None:
         """Give each free worker an image; a suspect gets one whose machine has no other image of this run."""
@@ -287,26 +293,39 @@ class DaskPool:
 
     def _submit(self, task: Task, worker: str, *, alone: bool) -> None:
         task.trail.unlink(missing_ok=True)
-        future = self._client.submit(self._work, task, workers=[worker], pure=False, key=_key(task.image_id))
+        with _asking():
+            future = self._client.submit(self._work, task, workers=[worker], pure=False, key=_key(task.image_id))
         self._running[future] = _Running(task, worker, alone)
 
     def _collect(self, on_retry: Callable[[Task, str], None]) -> Iterator[Outcome]:
         time.sleep(_POLL_S)
         if self._client.status != "running":
-            raise self._scheduler_lost()
+            raise _scheduler_lost()
         settled = [future for future in self._running if future.status != _PENDING]
         for future in sorted(settled, key=lambda future: self._running[future].task.image_id):
-            one = self._running.pop(future)
-            if future.status == "finished":
-                yield future.result()
-            elif future.status == "lost":
-                raise self._scheduler_lost()
-            elif future.status == "cancelled" or type(future.exception()).__name__ == "KilledWorker":
+            yield from self._settle(future, self._running.pop(future), on_retry)
+
+    def _settle(
+        self, future: "Future[Outcome]", one: _Running, on_retry: Callable[[Task, str], None]
+    ) -> Iterator[Outcome]:
+        """Fetch what came of one image."""
+        if future.status == "lost":
+            raise _scheduler_lost()
+        if future.status == "finished":
+            try:
+                outcome = future.result()
+            except (OSError, CancelledError):  # its worker has gone with the answer, or the scheduler too
+                self._threads()
                 yield from self._bury(one, on_retry, among_others=False)
             else:
-                fault = future.exception()
-                message = f"{type(fault).__name__}: {fault} (between processes: a fault of the program)"
-                yield failed(one.task, Failure(stage="start", error="unexpected", message=message))
+                yield outcome
+            return
+        if future.status == "cancelled" or type(future.exception()).__name__ == "KilledWorker":
+            yield from self._bury(one, on_retry, among_others=False)
+            return
+        fault = future.exception()
+        message = f"{type(fault).__name__}: {fault} (between processes: a fault of the program)"
+        yield failed(one.task, Failure(stage="start", error="unexpected", message=message))
 
     def _bury(self, one: _Running, on_retry: Callable[[Task, str], None], *, among_others: bool) -> Iterator[Outcome]:
         """Run the image of a lost worker again, or give it up."""
@@ -324,15 +343,25 @@ class DaskPool:
         )
         yield failed(task, Failure(stage=stage or "start", error=CRASHED, message=message))
 
-    def _scheduler_lost(self) -> LostError:
-        return LostError("the Dask scheduler was lost")
-
     def _end(self) -> None:
         """Take back what has not begun; what runs comes to its end on its worker, and the next run finds it."""
         if self._client.status == "running" and self._running:
-            with suppress(TimeoutError, OSError):
+            with suppress(OSError):
                 self._client.cancel(list(self._running), force=True)
         self._running.clear()
+
+
+@contextmanager
+def _asking() -> Iterator[None]:
+    """Around each question to the scheduler: it may be gone at any of them."""
+    try:
+        yield
+    except OSError:  # a TimeoutError is one too
+        raise _scheduler_lost() from None
+
+
+def _scheduler_lost() -> LostError:
+    return LostError("the Dask scheduler was lost")
 
 
 def _machine(worker: str) -> str:
