@@ -40,6 +40,12 @@ class TooLargeError(ReadError):
     code = "too_large"
 
 
+class MemoryLimitError(ReadError):
+    """A picture that will take more memory than the study allows; refused before decoding."""
+
+    code = "memory"
+
+
 class UnsupportedPixelsError(ReadError):
     """A valid file whose sample type has no meaning as brightness here."""
 

@@ -64,6 +64,8 @@ class Flag(IntFlag):
     SCALE_FROM_DISC = 1 << 49
     ZONE_UNSAID = 1 << 50
     DISC_NOT_FOUND = 1 << 51
+    BURNED_IN = 1 << 52
+    FIELD_ANGLE = 1 << 53
 
 
 MEANING: dict[Flag, str] = {
@@ -117,6 +119,8 @@ MEANING: dict[Flag, str] = {
     Flag.SCALE_FROM_DISC: "the pixel size rests on a declared width of the optic disc; eyes differ in it by about 9 %",
     Flag.ZONE_UNSAID: "a vessel of no class crosses the zone around the disc, as wide as some that the equivalents use",
     Flag.DISC_NOT_FOUND: "no place in the picture is the optic disc surely enough: nothing that needs one is told",
+    Flag.BURNED_IN: "the file says that text is drawn into its picture: it may name the patient, and cover vessels",
+    Flag.FIELD_ANGLE: "the angle of view that the file tells does not fit its pixel size",
 }
 
 

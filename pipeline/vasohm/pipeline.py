@@ -13,6 +13,7 @@ from vasohm.flow.scenarios import run_scenarios
 from vasohm.flow.terminals import place_terminals
 from vasohm.image.calibrate import calibrate, guess_for_disc, rests_on_disc
 from vasohm.image.disc import OpticDisc, check_disc
+from vasohm.image.eye import check_side
 from vasohm.image.prepare import prepare
 from vasohm.image.read import RawImage, read_image, read_labels, read_mask
 from vasohm.image.segment import segment
@@ -37,6 +38,7 @@ def measure_source(source: ImageSource, settings: Settings, stage: Callable[[str
 
 def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage: Callable[[str], None]) -> ImageTables:
     """Measure a picture that is already in memory; `source` says what a person knows about it."""
+    check_side(source.design.get("eye", ""), raw.subject.side)
     shape = (raw.pixels.shape[0], raw.pixels.shape[1])
     given = read_mask(source.mask_file, shape) if source.mask_file else None
     fov = read_mask(source.fov_file, shape) if source.fov_file else None

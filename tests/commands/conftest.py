@@ -1,11 +1,13 @@
 """Small studies of drawn tubes, and the command as a person runs it."""
 
+import csv
 import hashlib
+import json
 import os
 import subprocess
 import sys
 import textwrap
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from contextlib import redirect_stderr, redirect_stdout
 from dataclasses import dataclass
 from functools import partial
@@ -17,6 +19,8 @@ import pytest
 from PIL import Image
 
 from vasohm.cli import run_command
+from vasohm.study import run
+from vasohm.study.outcome import Outcome, Task
 
 SIZE_PX = 96
 LINES_AND_RADII = {  # ends (y, x) and radius of the tubes, by the number of the picture
@@ -44,6 +48,15 @@ def find(prepared, parameters):
         sys.exit("enough")
     if deed == "memory":
         raise MemoryError("9 GB")
+    if deed == "hang":
+        time.sleep(600)
+    if deed == "hoard":
+        held = [bytearray(b"x") * 100_000_000 for _ in range(30)]
+    if deed == "shape":
+        return prepared.signal[1:] > 0
+    if deed == "rewrite":
+        picture = Path(os.environ["MARK"])
+        picture.write_bytes(picture.read_bytes() + b"more")
     if deed == "raise":
         raise RuntimeError(f"hidden {Path.cwd()}/place")
     if "SLOW_S" in os.environ:
@@ -119,6 +132,30 @@ class DrawnStudy:
         (self.folder / "images.csv").write_text("\n".join(lines) + "\n", encoding="utf-8")
 
 
+class OneProcess:
+    """Measures in this process, in the place of the pool: for faults that need no worker of their own."""
+
+    def __init__(self, work: Callable[[Task], Outcome], workers: int, output: Path) -> None:
+        del workers, output
+        self._work = work
+
+    def run(
+        self, tasks: Iterable[Task], stops: Callable[[], int], on_retry: Callable[[Task, str], None]
+    ) -> Iterator[Outcome]:
+        """Yield each task's outcome."""
+        del on_retry
+        for task in tasks:
+            if stops():
+                return
+            yield self._work(task)
+
+
+@pytest.fixture
+def one_process(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Let runs of this test measure without starting workers, which costs seconds each."""
+    monkeypatch.setattr(run, "SupervisedPool", OneProcess)
+
+
 @pytest.fixture
 def make_study(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Callable[..., DrawnStudy]:
     """Return a function that draws a study of `n` pictures, each one pixel wider than the one before."""
@@ -168,6 +205,17 @@ def draw_study(place: Path, patch: pytest.MonkeyPatch, n: int = 3, *, method: st
     study = DrawnStudy(folder, folder / "study.toml", ids, plugin, patch)
     study.sheet({image_id: f"{image_id}.png" for image_id in ids})
     return study
+
+
+def states(out: Path) -> dict[str, str]:
+    """Status of each image, from study.json."""
+    return {one["image_id"]: one["status"] for one in json.loads((out / "study.json").read_text())["images"]}
+
+
+def failures(out: Path) -> dict[str, dict[str, str]]:
+    """Rows of failures.csv by image."""
+    with (out / "failures.csv").open(encoding="utf-8", newline="") as stream:
+        return {row["image_id"]: row for row in csv.DictReader(stream)}
 
 
 def contents(out: Path) -> dict[str, str]:

@@ -4,11 +4,9 @@ The expectations are the promises of the interface (exit status, one state an im
 that the program made.
 """
 
-import csv
 import json
 import os
 import resource
-import shutil
 import signal
 import socket
 import subprocess
@@ -19,21 +17,12 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from conftest import SIZE_PX, DrawnStudy, contents
+from conftest import SIZE_PX, DrawnStudy, contents, failures, states
 from PIL import Image
 
 MakeStudy = Callable[..., DrawnStudy]
 DEADLINE_S = 60.0  # for something to come about on a busy machine; not a measure of anything
 HEAVY = ("numpy", "pandas", "scipy", "matplotlib", "pydantic", "skimage", "rich")
-
-
-def states(out: Path) -> dict[str, str]:
-    return {one["image_id"]: one["status"] for one in json.loads((out / "study.json").read_text())["images"]}
-
-
-def failures(out: Path) -> dict[str, dict[str, str]]:
-    with (out / "failures.csv").open(encoding="utf-8", newline="") as stream:
-        return {row["image_id"]: row for row in csv.DictReader(stream)}
 
 
 def wait_for(met: Callable[[], bool]) -> None:
@@ -471,20 +460,3 @@ def test_a_study_is_measured_in_a_bare_surrounding(make_study: MakeStudy, tmp_pa
         words = [sys.executable, "-m", "vasohm", "measure", study.file, "--out", tmp_path / "other"]
         assert subprocess.run(words, stdout=full, stderr=full, check=False).returncode == 0
     assert contents(tmp_path / "other") == contents(out)
-
-
-@pytest.mark.slow
-def test_killed_at_any_write_the_same_command_gives_the_same_bytes(
-    make_study: MakeStudy, tmp_path: Path, undisturbed: dict[str, str]
-) -> None:
-    """Kill the whole group after ever longer times: half-written files must never pass for whole ones."""
-    study = make_study()
-    for delay_s in np.linspace(0.5, 6.0, 12):
-        out = tmp_path / "out"
-        run = study.start("measure", study.file, "--out", out, "--workers", 2)
-        time.sleep(float(delay_s))
-        os.killpg(run.pid, signal.SIGKILL)
-        run.communicate()
-        assert study.measure(out, "--workers", 2).status == 0
-        assert contents(out) == undisturbed
-        shutil.rmtree(out)

@@ -12,7 +12,7 @@ from typing import Any
 import pytest
 
 from vasohm.config.presets import PRESETS
-from vasohm.config.settings import CompareSettings, OutputSettings
+from vasohm.config.settings import CompareSettings, OutputSettings, RunSettings
 from vasohm.config.study_file import Study, ad_hoc_study, read_study, study_from_mapping
 from vasohm.config.study_model import StudyModel
 from vasohm.errors import RequestError
@@ -50,6 +50,7 @@ CONTRACT = """
     [study]
     name   = "demo"
     sheet  = "images.csv"
+    allow_outside = false
     [image]
     preset   = "fundus"
     channel  = "green"
@@ -129,6 +130,9 @@ CONTRACT = """
     covariates = ["age_years"]
     plan_ratio = 1.20
     radius_um  = [[2, 10], [10, 40]]
+    [run]
+    image_timeout_s = 60
+    memory_limit_mb = 4000
     [output]
     overlay = false
     colour = "share"
@@ -169,6 +173,7 @@ def test_every_key_reaches_its_setting(tmp_path: Path) -> None:
         Scenario("all narrow", 0.9, None, None, None),
         Scenario("how much wider", None, None, None, None, 0.8),
     )
+    assert study.run == RunSettings(60.0, 4000.0)
     assert study.compare == CompareSettings(
         outcomes=("networks.resistance_pa_s_m3", "segments.radius_hydraulic_um", "image.length_density_per_mm"),
         by="group",
@@ -214,7 +219,7 @@ def test_ready_study_files_say_what_their_preset_brings(preset: str, tmp_path: P
 # ---- what must be refused
 
 
-SECTIONS = ("study", "image", "scale", "segment", "radius", "classes", "shape", "blood", "network", "output")
+SECTIONS = ("study", "image", "scale", "segment", "radius", "classes", "shape", "blood", "network", "run", "output")
 ALL_KEYS = [
     (section, key)
     for section in SECTIONS
@@ -222,6 +227,7 @@ ALL_KEYS = [
 ]
 NONSENSE = [True, float("nan"), float("inf"), -1, "nonsense", [], {"a": {"b": 1}}, [True, False]]
 SWITCHES = {
+    ("study", "allow_outside"),
     ("output", "overlay"),
     ("blood", "hematocrit_split"),
     ("segment", "overlap_adds"),

@@ -9,6 +9,7 @@ from typing import Any
 
 # Shared by all kinds of image.
 DEFAULTS: Mapping[str, Any] = {
+    "study.allow_outside": False,
     "image.gamma": 1.0,  # a linear camera
     "image.max_megapixels": 400.0,
     "scale.pixel_size_um": None,
@@ -54,6 +55,8 @@ DEFAULTS: Mapping[str, Any] = {
     "network.intervals": "auto",
     "network.draws": 1000,  # a bound of a 95 % interval then errs by about 2 % of its width
     "network.seed": 0,
+    "run.image_timeout_s": 7200.0,  # an image of 400 megapixels takes about an hour
+    "run.memory_limit_mb": None,
     "output.overlay": True,
     "output.colour": "radius",
 }

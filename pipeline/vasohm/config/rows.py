@@ -14,6 +14,7 @@ from vasohm.image.read import shown
 
 T = TypeVar("T")
 
+ALLOWING = ", or set allow_outside = true in [study]."
 FORMS: tuple[Literal["NFC", "NFD"], ...] = ("NFC", "NFD")  # two ways to write the same accented name
 
 
@@ -25,6 +26,7 @@ class Rows:
     folder: Path
     problems: list[Problem]
     warnings: list[str]
+    allow_outside: bool = False  # whether files may lie out of `folder`
 
     def wrong(self, row: Row, column: str, message: str) -> None:
         """Note that a cell is wrong."""
@@ -65,8 +67,8 @@ class Rows:
         return self.needed(row, column, self.cell(row, column, parse))
 
     def path(self, row: Row, column: str) -> Path | None:
-        """Return where a file of the sheet lies; it must stay in the sheet's folder, also behind symbolic links."""
-        path = self.cell(row, column, lambda text: _inside(self.folder, text))
+        """Return where a file lies: in the sheet's folder, also behind symbolic links, unless all is allowed."""
+        path = self.cell(row, column, lambda text: _place(self.folder, text, self.allow_outside))
         if path is None or _exists(path):
             return path
         for form in FORMS:
@@ -80,22 +82,24 @@ class Rows:
         return path
 
 
-def _inside(folder: Path, text: str) -> Path:
+def _place(folder: Path, text: str, allow_outside: bool) -> Path:
     if re.match(r"[A-Za-z][A-Za-z0-9+.-]+:/", text):
         msg = f"{shown_cell(text)} is a URL. Copy the file beside the sheet and give its path."
         raise CellError(msg)
-    if text.startswith("/") or PureWindowsPath(text).drive:
-        msg = f"{shown_cell(text)} is an absolute path. Give it relative to the sheet."
+    if (text.startswith("/") and not allow_outside) or PureWindowsPath(text).drive:
+        msg = f"{shown_cell(text)} is an absolute path. Give it relative to the sheet{ALLOWING}"
         raise CellError(msg)
     if "\\" in text:
         msg = f"{shown_cell(text)} has a backslash. Part folders by /."
         raise CellError(msg)
+    if allow_outside:
+        return folder / text
     try:
         is_inside = (folder / text).resolve().is_relative_to(folder)
     except (OSError, RuntimeError):  # links in a ring lead nowhere: reading the file says so
         return folder / text
     if not is_inside:
-        msg = f"{shown_cell(text)} leads out of the sheet's folder. Move the sheet up, or the file beside it."
+        msg = f"{shown_cell(text)} leads out of the sheet's folder. Move the sheet up, or the file beside it{ALLOWING}"
         raise CellError(msg)
     return folder / text
 

@@ -52,6 +52,17 @@ class Settings:
 
 
 @dataclass(frozen=True, slots=True)
+class RunSettings:
+    """What one image may take; no result depends on it, so it makes none out of date."""
+
+    image_timeout_s: float | None  # from the moment its worker begins it
+    memory_limit_mb: float | None  # of the worker's resident memory
+
+
+NO_LIMITS = RunSettings(None, None)
+
+
+@dataclass(frozen=True, slots=True)
 class CompareSettings:
     """What `compare` asks of the results: parsed with the study, used after it was measured."""
 

@@ -83,7 +83,7 @@ class Sheet:
     warnings: tuple[str, ...]
 
 
-def read_sheet(path: Path, covariates: Collection[str] = ()) -> Sheet:
+def read_sheet(path: Path, covariates: Collection[str] = (), *, allow_outside: bool = False) -> Sheet:
     """Read an image sheet and the terminals and edits files that it names.
 
     Images and masks are not opened and need not be there: measuring the image says so then, and the others go on. A
@@ -94,6 +94,7 @@ def read_sheet(path: Path, covariates: Collection[str] = ()) -> Sheet:
     ----------
     path : the sheet; all its files lie in its folder or below.
     covariates : columns that `compare` uses; they are never taken for misspelt ones.
+    allow_outside : whether its files may lie anywhere on this machine.
 
     Raises
     ------
@@ -105,7 +106,7 @@ def read_sheet(path: Path, covariates: Collection[str] = ()) -> Sheet:
         problems += _column_problems(table, shown(path), covariates)
     if not table.rows and not problems:
         problems.append(Problem(shown(path), "no images: the sheet has a header but no rows."))
-    rows = Rows(shown(path), path.parent.resolve(), problems, [])
+    rows = Rows(shown(path), path.parent.resolve(), problems, [], allow_outside)
     sources = [_source(row, table.columns, rows) for row in table.rows]
     problems += _repeated_ids(table, shown(path))
     if problems:

@@ -13,7 +13,7 @@ from vasohm.config.flow_settings import end_targets, scenario_problems, scenario
 from vasohm.config.names import ids_from_files, nearest
 from vasohm.config.presets import DEFAULTS, PRESETS, SPUR_PX, SPUR_RADII
 from vasohm.config.scale_settings import scale_problems, scale_settings, scale_warnings
-from vasohm.config.settings import CompareSettings, OutputSettings, Settings
+from vasohm.config.settings import CompareSettings, OutputSettings, RunSettings, Settings
 from vasohm.config.sheet import DESIGN, ImageSource, Sheet, read_sheet
 from vasohm.config.study_model import CompareTable, ScenarioTable, StudyModel, parse_model
 from vasohm.errors import Problem, RequestError
@@ -55,6 +55,7 @@ class Study:
     sheet: str  # name of the image sheet; "" where there is none
     lines: Mapping[str, int]  # of the sheet, by image_id
     compare: CompareSettings | None
+    run: RunSettings
     resolved: Mapping[str, Mapping[str, Any]]
     warnings: tuple[str, ...]
 
@@ -115,7 +116,7 @@ def _study(said: Mapping[str, Any], path: Path, base: Path, *, needs_sheet: bool
     sheet = None
     sheet_name = _sheet_name(said)
     if sheet_name:
-        sheet, sheet_problems = _sheet(sheet_name, file, base, _covariates(said))
+        sheet, sheet_problems = _sheet(sheet_name, file, base, said)
         problems += sheet_problems
     elif needs_sheet and model is not None:
         problems.append(
@@ -146,6 +147,7 @@ def _study(said: Mapping[str, Any], path: Path, base: Path, *, needs_sheet: bool
         sheet=sheet.file if sheet is not None else "",
         lines=sheet.lines if sheet is not None else {},
         compare=compare,
+        run=RunSettings(values["run.image_timeout_s"], values["run.memory_limit_mb"]),
         resolved=resolved,
         warnings=(*(sheet.warnings if sheet is not None else ()), *_odd(values, images)),
     )
@@ -213,12 +215,17 @@ def _covariates(said: Mapping[str, Any]) -> tuple[str, ...]:
     return tuple(name for name in names if isinstance(name, str)) if isinstance(names, list) else ()
 
 
-def _sheet(name: str, file: str, base: Path, covariates: tuple[str, ...]) -> tuple[Sheet | None, list[Problem]]:
+def _allows_outside(said: Mapping[str, Any]) -> bool:
+    table = said.get("study")
+    return isinstance(table, Mapping) and table.get("allow_outside") is True
+
+
+def _sheet(name: str, file: str, base: Path, said: Mapping[str, Any]) -> tuple[Sheet | None, list[Problem]]:
     if Path(name).is_absolute() or "\\" in name or re.match(r"[A-Za-z][A-Za-z0-9+.-]+:/", name) or "\0" in name:
         message = f"{name!r} must be a path relative to the study file, its folders parted by /."
         return None, [Problem(file, message, column="study.sheet", value=name)]
     try:
-        return read_sheet(base / name, covariates), []
+        return read_sheet(base / name, _covariates(said), allow_outside=_allows_outside(said)), []
     except RequestError as error:
         return None, list(error.problems)
 

@@ -1,16 +1,29 @@
 """What a study file may say: every table, key, type and range, and how a wrong one is told."""
 
-import math
 import re
 from collections.abc import Mapping
-from itertools import pairwise
 from typing import Annotated, Any, Literal, get_args
 
 from pydantic import AfterValidator, BaseModel, ConfigDict, Field, PlainValidator, ValidationError
-from pydantic_core import ErrorDetails, PydanticCustomError
+from pydantic_core import ErrorDetails
 
 from vasohm.config.names import nearest
 from vasohm.config.presets import PRESETS
+from vasohm.config.study_values import (
+    Limits,
+    Name,
+    Names,
+    NotNegative,
+    Positive,
+    RadiusRange,
+    Zone,
+    blur,
+    by_class,
+    one_of,
+    ratio_of_change,
+    ratio_of_effect,
+    word_or_index,
+)
 from vasohm.errors import Problem
 from vasohm.flow.monte_carlo import LEAST_DRAWS
 from vasohm.flow.phase_separation import SPLIT_LAWS
@@ -20,7 +33,6 @@ from vasohm.image.calibrate import LEAST_UM, MOST_UM
 from vasohm.image.eye import LONGEST_MM, SHORTEST_MM
 from vasohm.image.segment import segmenter_names
 from vasohm.network.calibre_equivalents import FORMULAS
-from vasohm.results.columns_vessels import CLASSES
 
 CHANNELS = ("green", "red", "blue", "luminance")
 PLANES = ("max", "mean")
@@ -46,88 +58,6 @@ LEAST_DISC_UM, MOST_DISC_UM = 1000.0, 3000.0  # means of peoples lie from 1500 t
 LITERAL = re.compile("'([^']+)'")
 
 
-def _wrong(message: str) -> PydanticCustomError:
-    return PydanticCustomError("vasohm", "{message}", {"message": message})
-
-
-def _one_of(value: object, words: tuple[str, ...], more: str = "") -> str:
-    """Return `value` where it is one of the words; `more` says what else would do."""
-    if isinstance(value, str) and value in words:
-        return value
-    like = nearest(value, words) if isinstance(value, str) else ""
-    hint = f" Did you mean {like!r}?" if like else ""
-    raise _wrong(f"must be one of {', '.join(map(repr, words))}{more}.{hint}")
-
-
-def _word_or_index(value: object, words: tuple[str, ...]) -> int | str:
-    if isinstance(value, int) and not isinstance(value, bool) and value >= 0:
-        return value
-    return _one_of(value, words, " or a number counted from 0")
-
-
-def _blur(value: object) -> float | str:
-    if isinstance(value, int | float) and not isinstance(value, bool) and 0 < value < math.inf:
-        return float(value)
-    return _one_of(value, ("auto",), " or a number of pixels greater than 0")
-
-
-def _radius_range(value: list[float]) -> list[float]:
-    if not 0 < value[0] < value[1]:
-        raise _wrong("must be two radii in um, the smaller first, both greater than 0.")
-    return value
-
-
-def _zone(value: list[float]) -> list[float]:
-    if not 0 <= value[0] < value[1]:
-        raise _wrong("must be two distances from the disc's margin in disc diameters, the smaller first, none below 0.")
-    return value
-
-
-def _limits(value: list[float]) -> list[float]:
-    if not all(0 < low < high for low, high in pairwise([*value, math.inf])):
-        raise _wrong("must be radii in um that rise, all greater than 0.")
-    return value
-
-
-def _by_class(value: object) -> float | dict[str, float]:
-    """One positive number for all vessels, or one a class."""
-    given = value if isinstance(value, dict) else {"": value}
-    numbers = [number for number in given.values() if isinstance(number, int | float) and not isinstance(number, bool)]
-    words = ", ".join(CLASSES)
-    if not numbers or len(numbers) < len(given) or not all(0 < number < math.inf for number in numbers):
-        raise _wrong(f"must be a number greater than 0, or a table of them with keys among {words}.")
-    if isinstance(value, dict):
-        return {_one_of(name, CLASSES): float(number) for name, number in value.items()}
-    return float(numbers[0])
-
-
-def _plain_name(value: str) -> str:
-    if not value.strip() or not value.isprintable():
-        raise _wrong("must be text that can be printed.")
-    return value
-
-
-def _wanted_ratio(value: float) -> float:
-    if value == 1:
-        raise _wrong("must differ from 1: a ratio of 1 is what the vessels have already.")
-    return value
-
-
-def _plan_ratio(value: float) -> float:
-    if value == 1:
-        raise _wrong("must differ from 1: a ratio of 1 is no effect to plan for.")
-    return value
-
-
-Positive = Annotated[float, Field(gt=0)]
-NotNegative = Annotated[float, Field(ge=0)]
-Name = Annotated[str, Field(min_length=1, max_length=200), AfterValidator(_plain_name)]
-RadiusRange = Annotated[list[float], Field(min_length=2, max_length=2), AfterValidator(_radius_range)]
-Zone = Annotated[list[float], Field(min_length=2, max_length=2), AfterValidator(_zone)]
-Limits = Annotated[list[float], Field(min_length=1, max_length=20), AfterValidator(_limits)]
-Names = Annotated[list[Name], Field(max_length=100)]
-
-
 class Table(BaseModel):
     """One table of a study file: strict types, finite numbers, no unknown keys."""
 
@@ -139,15 +69,16 @@ class StudyTable(Table):
 
     name: Name | None = None
     sheet: Name | None = None
+    allow_outside: bool | None = None
 
 
 class ImageTable(Table):
     """How pictures are read."""
 
-    preset: Annotated[str, PlainValidator(lambda value: _one_of(value, tuple(PRESETS)))]
-    channel: Annotated[int | str, PlainValidator(lambda value: _word_or_index(value, CHANNELS))] | None = None
+    preset: Annotated[str, PlainValidator(lambda value: one_of(value, tuple(PRESETS)))]
+    channel: Annotated[int | str, PlainValidator(lambda value: word_or_index(value, CHANNELS))] | None = None
     polarity: Literal["dark", "bright"] | None = None
-    plane: Annotated[int | str, PlainValidator(lambda value: _word_or_index(value, PLANES))] | None = None
+    plane: Annotated[int | str, PlainValidator(lambda value: word_or_index(value, PLANES))] | None = None
     gamma: Annotated[float, Field(gt=0, le=10)] | None = None
     max_megapixels: Annotated[float, Field(gt=0, le=100_000)] | None = None
 
@@ -169,7 +100,7 @@ class ScaleTable(Table):
 class SegmentTable(Table):
     """How vessels are found."""
 
-    method: Annotated[str, PlainValidator(lambda value: _one_of(value, segmenter_names()))] | None = None
+    method: Annotated[str, PlainValidator(lambda value: one_of(value, segmenter_names()))] | None = None
     radius_um: RadiusRange | None = None
     false_alarms_per_mpx: NotNegative | None = None
     crossing_probability: Annotated[float, Field(ge=0, le=1)] | None = None
@@ -181,7 +112,7 @@ class RadiusTable(Table):
     """How radii are measured."""
 
     profile: Literal["auto", "slab", "cylinder", "absorber"] | None = None
-    blur_px: Annotated[float | str, PlainValidator(_blur)] | None = None
+    blur_px: Annotated[float | str, PlainValidator(blur)] | None = None
     plasma_layer_um: NotNegative | None = None
     plasma_layer_se_um: NotNegative | None = None
 
@@ -198,21 +129,21 @@ class ShapeTable(Table):
 
     disc: Literal["find", "none"] | None = None
     zone_dd: Zone | None = None
-    calibre_formula: Annotated[str, PlainValidator(lambda value: _one_of(value, tuple(FORMULAS)))] | None = None
+    calibre_formula: Annotated[str, PlainValidator(lambda value: one_of(value, tuple(FORMULAS)))] | None = None
     calibre_um: Limits | None = None
 
 
 class BloodTable(Table):
     """Blood."""
 
-    law: Annotated[str, PlainValidator(lambda value: _one_of(value, law_names()))] | None = None
+    law: Annotated[str, PlainValidator(lambda value: one_of(value, law_names()))] | None = None
     hematocrit: Annotated[float, Field(ge=0, le=HIGHEST_HEMATOCRIT)] | None = None
     hematocrit_se: Annotated[float, Field(ge=0, le=HIGHEST_HEMATOCRIT)] | None = None
     plasma_viscosity_mpa_s: Positive | None = None
     plasma_viscosity_se_mpa_s: NotNegative | None = None
     viscosity_mpa_s: Positive | None = None
     hematocrit_split: bool | None = None
-    split_law: Annotated[str, PlainValidator(lambda value: _one_of(value, tuple(SPLIT_LAWS)))] | None = None
+    split_law: Annotated[str, PlainValidator(lambda value: one_of(value, tuple(SPLIT_LAWS)))] | None = None
     diameter_scaling: Literal["none", "red-cell-volume"] | None = None
     red_cell_volume_fl: Annotated[float, Field(ge=5, le=300)] | None = None
     density_kg_m3: Annotated[float, Field(ge=900, le=1200)] | None = None
@@ -226,9 +157,9 @@ class NetworkTable(Table):
     terminals: Literal["auto", "file", "none", "estimate"] | None = None
     drive_mmhg: Positive | None = None
     trees_by_class: bool | None = None
-    target_wall_shear_pa: Annotated[float | dict[str, float], PlainValidator(_by_class)] | None = None
+    target_wall_shear_pa: Annotated[float | dict[str, float], PlainValidator(by_class)] | None = None
     target_wall_shear_sd_pa: Positive | None = None
-    target_pressure_mmhg: Annotated[float | dict[str, float], PlainValidator(_by_class)] | None = None
+    target_pressure_mmhg: Annotated[float | dict[str, float], PlainValidator(by_class)] | None = None
     target_pressure_sd_mmhg: Positive | None = None
     intervals: Literal["auto", "delta", "monte-carlo"] | None = None
     draws: Annotated[int, Field(ge=LEAST_DRAWS, le=100_000)] | None = None
@@ -249,7 +180,7 @@ class ScenarioTable(Table):
     name: Name
     where: WhereTable = WhereTable()
     radius_factor: Annotated[float, Field(gt=0, le=WIDEST_FACTOR)] | None = None
-    wanted_ratio: Annotated[Positive, AfterValidator(_wanted_ratio)] | None = None
+    wanted_ratio: Annotated[Positive, AfterValidator(ratio_of_change)] | None = None
 
 
 class CompareTable(Table):
@@ -259,8 +190,15 @@ class CompareTable(Table):
     by: Name
     reference: Name
     covariates: Names = []
-    plan_ratio: Annotated[Positive, AfterValidator(_plan_ratio)] | None = None
+    plan_ratio: Annotated[Positive, AfterValidator(ratio_of_effect)] | None = None
     radius_um: list[RadiusRange] = []
+
+
+class RunTable(Table):
+    """What one image may take."""
+
+    image_timeout_s: Positive | None = None
+    memory_limit_mb: Annotated[float, Field(ge=300)] | None = None
 
 
 class OutputTable(Table):
@@ -284,6 +222,7 @@ class StudyModel(Table):
     network: NetworkTable = NetworkTable()
     scenario: list[ScenarioTable] = []
     compare: CompareTable | None = None
+    run: RunTable = RunTable()
     output: OutputTable = OutputTable()
 
 

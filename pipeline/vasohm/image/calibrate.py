@@ -7,7 +7,16 @@ from typing import Literal
 from vasohm.errors import ScaleError
 from vasohm.flags import Flag
 from vasohm.image.disc import OpticDisc
-from vasohm.image.eye import UNKNOWN_EYE, Eye, EyeScale, EyeSettings, Magnification, check_eye, eye_scale
+from vasohm.image.eye import (
+    UNKNOWN_EYE,
+    Eye,
+    EyeScale,
+    EyeSettings,
+    Magnification,
+    check_eye,
+    eye_scale,
+    with_file_length,
+)
 from vasohm.image.read import RawImage
 from vasohm.units import UM_PER_MM
 
@@ -18,7 +27,7 @@ MOST_OF_EYES = 2.0  # fold by which a pixel may differ between an eye and the re
 # 2011;118:2403-2408 (five groups, 15 to 21 % in area); Marsh et al., J Glaucoma 2010;19:310-318 (18 %).
 DISC_SPREAD = 0.09
 DISC_SHARE = 0.14  # of a field of 45 degrees: 1.8 mm of 45 * 0.29 mm
-SOURCES = "the image sheet, [scale] of the study, OME-XML and ImageJ description of the file"
+SOURCES = "the image sheet, [scale] of the study, OME-XML, ImageJ description and DICOM pixel spacing of the file"
 
 
 @dataclass(frozen=True, slots=True)
@@ -55,7 +64,7 @@ class ScaledImage:
     raw: RawImage
     pixel_size_um: float
     pixel_size_se_um: float
-    pixel_size_source: str  # sheet | study | ome | imagej | camera | disc
+    pixel_size_source: str  # sheet | study | ome | imagej | dicom | camera | disc
     flags: Flag
     magnification: Magnification | None = None  # None: not corrected for the eye
     notes: tuple[str, ...] = ()
@@ -85,9 +94,10 @@ def calibrate(
         contradicts a told pixel size more than eyes can.
     """
     check_eye(typed.eye)
+    eye = with_file_length(typed.eye, raw.subject.axial_length_mm)
     told = _told(raw, typed, settings)
     if settings.eye.magnification != "none" and (told is not None or settings.eye.camera_factor is not None):
-        return _of_eye(raw, told, eye_scale(typed.eye, settings.eye), settings.eye)
+        return _of_eye(raw, told, eye_scale(eye, settings.eye), settings.eye)
     if told is not None:
         return told
     if settings.disc_diameter_um is not None and disc is not None:
@@ -132,6 +142,8 @@ def _told(raw: RawImage, typed: TypedScale, settings: ScaleSettings) -> ScaledIm
     _check_range(pixel_size_um, source)
     flags = _contradiction(raw, pixel_size_um, source, settings)
     se_um = _uncertainty(typed, settings, source)
+    if math.isnan(se_um) and source == raw.file_pixel_size_source:
+        se_um = raw.file_pixel_size_rel_se * pixel_size_um  # NaN where such a carrier tells nothing
     if math.isnan(se_um):
         flags |= Flag.PIXEL_SIZE_SE_UNKNOWN
     elif not 0 <= se_um < pixel_size_um:

@@ -4,6 +4,7 @@ import io
 import struct
 import zlib
 from collections.abc import Callable, Mapping
+from typing import IO
 
 import numpy as np
 from PIL import Image, ImageFile
@@ -16,7 +17,7 @@ from vasohm.errors import ReadError, TruncatedError, UnsupportedPixelsError
 from vasohm.image.decoded import NO_SCALE, Decoded, expand_palette, refuse_too_large
 
 # The formats' own classes, since Image.open has a pixel limit of its own that is not the study's.
-READERS: Mapping[str, Callable[[io.BytesIO], ImageFile.ImageFile]] = {
+READERS: Mapping[str, Callable[[IO[bytes]], ImageFile.ImageFile]] = {
     "PNG": PngImageFile,
     "JPEG": JpegImageFile,
     "BMP": BmpImageFile,

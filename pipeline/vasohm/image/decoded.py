@@ -1,11 +1,13 @@
 """What a decoder hands to the reader: planes as stored, and what the file says about them."""
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
 
 from vasohm.arrays import AnyArray
 from vasohm.errors import TooLargeError
+from vasohm.flags import Flag
 
 
 @dataclass(frozen=True, slots=True)
@@ -13,8 +15,21 @@ class FileScale:
     """The pixel size that a file carries and means: None where it carries none."""
 
     pixel_size_um: float | None
-    source: str  # ome | imagej | ""
+    source: str  # ome | imagej | dicom | ""
     notes: tuple[str, ...]
+    rel_se: float = math.nan  # relative standard uncertainty that such a carrier has; NaN where it is not known
+
+
+@dataclass(frozen=True, slots=True)
+class Subject:
+    """What the file says about whom it shows, beyond the pixels; never a name."""
+
+    side: str  # of the eye: left | right | ""
+    axial_length_mm: float | None
+    flags: Flag
+
+
+NO_SUBJECT = Subject("", None, Flag.NONE)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -28,6 +43,7 @@ class Decoded:
     oriented: bool  # a tag asks viewers to turn the picture
     notes: tuple[str, ...]
     inverted: bool = False  # the file stores white as zero
+    subject: Subject = NO_SUBJECT
 
 
 NO_SCALE = FileScale(None, "", ())

@@ -1,10 +1,10 @@
 """How large an eye images its retina: from its length or refraction to millimetres of retina a degree."""
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal
 
-from vasohm.errors import ScaleError
+from vasohm.errors import ImageError, ScaleError
 from vasohm.units import MM_PER_M
 
 SHORTEST_MM, LONGEST_MM = 15.0, 40.0  # eyes from birth to extreme myopia, with room (common practice, no source)
@@ -14,6 +14,8 @@ BENNETT_MM_PER_DEG, BENNETT_MM = 0.01306, 1.82  # Bennett, Rudnicka & Edgar 1994
 VITREOUS_INDEX, BENGTSSON_MM = 1.336, 1.6  # Bengtsson & Krakau 1992, formula 1
 NORMAL_POWER_D, BENGTSSON_PER_D = 60.0, 0.017  # the same, formula 2
 LENGTH_SCATTER, REFRACTION_SCATTER = 0.012, 0.043  # Garway-Heath et al. 1998: the wider end of each range
+
+SIDES = {"l": "left", "left": "left", "os": "left", "r": "right", "right": "right", "od": "right"}
 
 Rule = Literal["none", "bennett", "bengtsson"]
 
@@ -70,6 +72,34 @@ def lacking(eye: Eye, magnification: Rule) -> str:
     if magnification == "bengtsson" and eye.axial_length_mm is None and eye.refraction_d is None:
         return "refraction_d or axial_length_mm"
     return ""
+
+
+def with_file_length(eye: Eye, length_mm: float | None) -> Eye:
+    """Take the length that a file tells where a person told none; NaN and lengths that no eye has are passed over."""
+    if eye.axial_length_mm is not None or length_mm is None or not SHORTEST_MM <= length_mm <= LONGEST_MM:
+        return eye
+    return replace(eye, axial_length_mm=length_mm)
+
+
+def check_side(said: str, side: str) -> None:
+    """Refuse a picture of the other eye than the sheet says.
+
+    Parameters
+    ----------
+    said : the sheet's word for the eye; words that are none for a side are not judged.
+    side : what the file says: left, right, or nothing.
+
+    Raises
+    ------
+    ImageError : they contradict each other.
+    """
+    meant = SIDES.get(said.strip().casefold(), side)
+    if side and meant != side:
+        msg = (
+            f"the sheet says eye = {said!r}, the file itself says that it shows the {side} one. Correct the sheet, or "
+            "see whether the file belongs to this row."
+        )
+        raise ImageError(msg)
 
 
 def check_eye(eye: Eye) -> None:

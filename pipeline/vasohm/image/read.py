@@ -1,6 +1,7 @@
 """From a file to pixels. No science here."""
 
 import hashlib
+import math
 import re
 import stat
 import warnings
@@ -13,6 +14,7 @@ from vasohm.arrays import AnyArray, BoolArray, IntArray, freeze
 from vasohm.errors import (
     InputMissingError,
     MaskError,
+    MemoryLimitError,
     NotAnImageError,
     ReadError,
     TooLargeError,
@@ -21,9 +23,10 @@ from vasohm.errors import (
     VasohmError,
 )
 from vasohm.flags import Flag
+from vasohm.image.decode_dicom import decode_dicom
 from vasohm.image.decode_flat import decode_flat
 from vasohm.image.decode_tiff import decode_tiff
-from vasohm.image.decoded import Decoded, invert
+from vasohm.image.decoded import NO_SUBJECT, Decoded, Subject, invert
 
 MAGIC = {
     b"II*\0": "TIFF",
@@ -79,13 +82,15 @@ class RawImage:
     notes: tuple[str, ...]  # facts for record.json: ignored dots per inch, orientation, plane taken
     flags: Flag
     is_maximum: bool = False  # each pixel is the brightest of several planes
+    file_pixel_size_rel_se: float = math.nan  # NaN where such a file tells none
+    subject: Subject = NO_SUBJECT
 
     def __post_init__(self) -> None:
         freeze(self)
 
 
 def read_image(path: Path, settings: ReadSettings) -> RawImage:
-    """Read an image file: TIFF and OME-TIFF, PNG, JPEG or BMP, told by its first bytes.
+    """Read an image file: TIFF and OME-TIFF, PNG, JPEG, BMP or DICOM, told by its first bytes.
 
     Parameters
     ----------
@@ -114,8 +119,10 @@ def read_image(path: Path, settings: ReadSettings) -> RawImage:
         file_pixel_size_um=decoded.scale.pixel_size_um,
         file_pixel_size_source=decoded.scale.source,
         notes=decoded.notes + decoded.scale.notes + plane_notes,
-        flags=Flag.ORIENTATION_TAG if decoded.oriented else Flag.NONE,
+        flags=(Flag.ORIENTATION_TAG if decoded.oriented else Flag.NONE) | decoded.subject.flags,
         is_maximum=settings.plane == "max" and len(decoded.planes) > 1,
+        file_pixel_size_rel_se=decoded.scale.rel_se,
+        subject=decoded.subject,
     )
 
 
@@ -210,18 +217,25 @@ def _decode(path: Path, data: bytes, limit_px: float, *, expand_palettes: bool) 
     """Turn bytes into planes; whatever a decoder raises becomes one line that names the file."""
     name = shown(path)
     kind = next((kind for magic, kind in MAGIC.items() if data.startswith(magic)), None)
+    if data[DICOM_AT : DICOM_AT + len(DICOM_MAGIC)] == DICOM_MAGIC:
+        kind = "DICOM"  # what stands before its mark is anything: files that are a TIFF too are allowed
     if kind is None:
-        msg = f"{name}: {_guess(data)}. Images are read from TIFF, PNG, JPEG and BMP."
+        msg = f"{name}: {_guess(data)}. Images are read from TIFF, PNG, JPEG, BMP and DICOM."
         raise NotAnImageError(msg)
     try:
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")
+            if kind == "DICOM":
+                return decode_dicom(data, limit_px)
             if kind == "TIFF":
                 return decode_tiff(data, limit_px, expand_palettes=expand_palettes)
             return decode_flat(data, kind, limit_px, expand_palettes=expand_palettes)
     except VasohmError as error:
         msg = f"{name}: {error}{COPY_AGAIN if isinstance(error, TruncatedError) else ''}"
         raise type(error)(msg) from error
+    except MemoryError as error:
+        msg = f"{name}: there is not enough memory to decode it. Use fewer workers or a machine with more memory."
+        raise MemoryLimitError(msg) from error
     except Exception as error:
         text = re.sub(r"\s+", " ", str(error)).strip()[:MESSAGE_CHARS] or type(error).__name__
         if "imagecodecs" in text:
@@ -234,10 +248,6 @@ def _decode(path: Path, data: bytes, limit_px: float, *, expand_palettes: bool) 
 
 
 def _guess(data: bytes) -> str:
-    if data[DICOM_AT : DICOM_AT + len(DICOM_MAGIC)] == DICOM_MAGIC:
-        return (
-            "is a DICOM file, which is not read yet: export the picture as TIFF and put its pixel size into the sheet"
-        )
     other = next((kind for magic, kind in OTHER_MAGIC.items() if data.startswith(magic)), None)
     if other is not None:
         return f"is {other}"

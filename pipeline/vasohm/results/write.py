@@ -4,6 +4,7 @@ import errno
 import hashlib
 import json
 import os
+import re
 import secrets
 import shutil
 import time
@@ -94,7 +95,7 @@ def write_image(
         msg = f"record of image {tables.image_id}: keys {', '.join(taken)} are written here; give them other names."
         raise ValueError(msg)
     files[RECORD] = EncodedFile(json_bytes({**own, **record}))
-    folder.parent.mkdir(parents=True, exist_ok=True)
+    folder.parent.mkdir(exist_ok=True)
     partial = folder.with_name(f".{folder.name}.{tag()}{PARTIAL_SUFFIX}")
     partial.mkdir()
     try:
@@ -131,9 +132,18 @@ def record_is_whole(folder: Path) -> bool:
         return False
 
 
-def remove_partials(parent: Path) -> None:
-    """Remove what runs that have died left unfinished in a folder; call it only while no other run writes there."""
+def remove_partials(parent: Path, name: str = "") -> None:
+    """Remove what was left unfinished in a folder by runs or workers that have died.
+
+    Parameters
+    ----------
+    parent : where it lies; no other run may be writing there, unless `name` is given.
+    name : of a file or folder, to remove only what would have become it.
+    """
+    wanted = re.compile(rf"\.{re.escape(name) if name else '.*'}\.\d+-[0-9a-f]+{re.escape(PARTIAL_SUFFIX)}")
     for path in parent.glob(f".*{PARTIAL_SUFFIX}"):
+        if not wanted.fullmatch(path.name):
+            continue
         if path.is_dir() and not path.is_symlink():
             shutil.rmtree(path, ignore_errors=True)
         else:

@@ -11,7 +11,7 @@ from vasohm.errors import Problem, VasohmError
 from vasohm.flow.rheology import get_law
 from vasohm.image.calibrate import calibrate, rests_on_disc
 from vasohm.image.disc import check_disc
-from vasohm.image.eye import lacking
+from vasohm.image.eye import check_side, lacking
 from vasohm.image.read import read_image, read_labels, read_mask
 from vasohm.image.segment import MASK_METHOD, get_segmenter
 
@@ -69,6 +69,10 @@ def _faults(source: ImageSource, settings: Settings) -> Iterator[tuple[str, Path
             check_disc(source.disc, _shape(raw.pixels))
         except VasohmError as fault:
             yield "disc_x_px", source.file, fault
+    try:
+        check_side(source.design.get("eye", ""), raw.subject.side)
+    except VasohmError as fault:
+        yield "eye", source.file, fault
     for column, path, read in (
         ("mask_file", source.mask_file, read_mask),
         ("fov_file", source.fov_file, read_mask),

@@ -29,7 +29,7 @@ def probe(out: Path) -> None:
     Raises
     ------
     RequestError
-        When it cannot be created or written.
+        When it cannot be created or written, or a symbolic link in it could lead out of it.
     """
     path = out / f".probe-{secrets.token_hex(4)}"
     try:
@@ -39,10 +39,20 @@ def probe(out: Path) -> None:
             stream.flush()
             os.fsync(stream.fileno())
         path.unlink()
+        _refuse_links(out)
     except OSError as fault:
         what = "is a file" if out.is_file() else (fault.strerror or str(fault))
         message = f"no results can be written here: {what}. Give --out a folder that can be written."
         raise RequestError([Problem(file=str(out), message=message)]) from None
+
+
+def identity(out: Path) -> tuple[int, int] | None:
+    """Return what stays of a folder when its name changes; None where it is not there."""
+    try:
+        status = out.stat()
+    except OSError:
+        return None
+    return status.st_dev, status.st_ino
 
 
 def refuse_other_study(out: Path, study: str) -> None:
@@ -114,3 +124,13 @@ def _owners(out: Path) -> Iterator[str]:
         content = read_json(path)
         if content is not None and "study" in content:
             yield str(content["study"])
+
+
+def _refuse_links(out: Path) -> None:
+    """Refuse links where this program writes; those in the place of an image's folder or file are replaced."""
+    places = [place for name in ("images", "run", "parts") if (place := out / name).is_symlink()]
+    if not places:
+        places = sorted(path for path in (out / "run").rglob("*") if path.is_symlink())
+    message = "is a symbolic link, where only folders and files of this program's own may be. Remove it."
+    if places:
+        raise RequestError([Problem(file=str(place), message=message) for place in places])

@@ -4,11 +4,12 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
 
-from vasohm.config.settings import Settings
+from vasohm.config.settings import NO_LIMITS, RunSettings, Settings
 from vasohm.config.sheet import ImageSource
 from vasohm.errors import VasohmError
 
 CRASHED = "crashed"  # error of an image whose worker died twice
+TIMEOUT = "timeout"  # of one that was ended because it took too long
 MEASURED, EMPTY, FAILED, PENDING = "measured", "empty", "failed", "pending"
 
 
@@ -22,6 +23,7 @@ class Task:
     versions: Mapping[str, str]
     folder: Path  # images/IMAGE_ID
     trail: Path  # file in which the worker notes each stage, for the case that it dies
+    limits: RunSettings = NO_LIMITS
 
 
 @dataclass(frozen=True, slots=True)

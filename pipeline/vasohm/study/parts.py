@@ -124,7 +124,7 @@ def read_state(out: Path) -> tuple[StudyState | None, tuple[Part, ...]]:
     read = {path: read_json(path) or {} for path in files}
     first, *others = read
     for other in others:
-        unlike = [name for name in _ALIKE if read[first].get(name) != read[other].get(name)]
+        unlike = [name for name in _ALIKE if _compared(read[first], name) != _compared(read[other], name)]
         if unlike:
             message = (
                 f"differs from {first.name} in {', '.join(unlike)}. Run both parts again with the same study file."
@@ -134,6 +134,14 @@ def read_state(out: Path) -> tuple[StudyState | None, tuple[Part, ...]]:
         part for number in range(1, splits[0] + 1) if (part := Part(number, splits[0])) not in files.values()
     )
     return _joined(read, missing), missing
+
+
+def _compared(plain: Mapping[str, Any], name: str) -> Any:
+    """Return what parts must agree in: not in what an image may take, which is raised for the part that needs it."""
+    held = plain.get(name)
+    if name != "configuration" or not isinstance(held, Mapping):
+        return held
+    return {key: value for key, value in held.items() if not str(key).startswith("run.")}
 
 
 def states_before(out: Path) -> dict[str, ImageState]:

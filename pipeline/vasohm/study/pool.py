@@ -23,12 +23,13 @@ from typing import Protocol
 
 from vasohm.study.cores import THREAD_VARIABLES
 from vasohm.study.interrupt import ENDING_SIGNALS, signals_held
-from vasohm.study.outcome import CRASHED, Failure, Outcome, Task, failed
+from vasohm.study.outcome import CRASHED, TIMEOUT, Failure, Outcome, Task, failed
 
 GRACE_S = 30.0  # that running images have after the first request to stop
 _POLL_S = 0.1
 _REAPING_S = 2.0  # for a dead worker to be told of
 _ORPHAN_STATUS = 70  # EX_SOFTWARE of sysexits.h; seen by nobody, since the parent is gone
+_START_S = 120.0  # that a worker may take to load its libraries before an image's time begins
 _DEATHS = 2  # in company, then alone
 
 Work = Callable[[Task], Outcome]
@@ -91,6 +92,7 @@ class SupervisedPool:
         self._running: dict[Future[Outcome], Task] = {}
         self._suspects: deque[Task] = deque()
         self._deaths: dict[str, int] = {}
+        self._begun: dict[Future[Outcome], float] = {}
 
     def run(
         self, tasks: Iterable[Task], stops: Callable[[], int], on_retry: Callable[[Task, str], None]
@@ -117,6 +119,7 @@ class SupervisedPool:
                 if not self._running or stops() > 1 or time.monotonic() > deadline:
                     return
                 yield from self._collect(tell_nobody if stops() else on_retry)
+                yield from self._end_late(tell_nobody if stops() else on_retry)
         finally:
             self._end(by_force=bool(self._running))
 
@@ -148,6 +151,7 @@ class SupervisedPool:
                 future = Future()
                 future.set_exception(broken)
         self._running[future] = task
+        self._begun[future] = time.monotonic() + _START_S
         self._children |= set(multiprocessing.active_children()) - self._strangers
 
     def _collect(self, on_retry: Callable[[Task, str], None]) -> Iterator[Outcome]:
@@ -157,6 +161,7 @@ class SupervisedPool:
         victims = []
         for future in sorted(finished, key=lambda future: self._running[future].image_id):
             task = self._running.pop(future)
+            del self._begun[future]
             if isinstance(future.exception(), BrokenProcessPool):
                 victims.append(task)
             elif (fault := future.exception()) is not None:
@@ -166,6 +171,33 @@ class SupervisedPool:
                 yield future.result()
         if victims:
             yield from self._bury(victims, on_retry)
+
+    def _end_late(self, on_retry: Callable[[Task, str], None]) -> Iterator[Outcome]:
+        """End the workers when an image takes too long; who was at work beside it is run again and is no suspect."""
+        late = [task for future, task in self._running.items() if self._is_late(future, task)]
+        if not late:
+            return
+        causes = [(task, _stage(task)) for task in late]
+        innocent = [task for task in self._running.values() if task.image_id not in {one.image_id for one in late}]
+        self._end(by_force=True)
+        for task, stage in causes:
+            message = (
+                f"took longer than image_timeout_s = {task.limits.image_timeout_s:g} and was ended, in stage {stage}. "
+                "Raise it in [run], or see what is odd in this picture."
+            )
+            yield failed(task, Failure(stage=stage, error=TIMEOUT, message=message))
+        for task in innocent:
+            self._suspects.append(task)
+            on_retry(task, f"its worker was ended with that of {late[0].image_id}, which took too long")
+
+    def _is_late(self, future: "Future[Outcome]", task: Task) -> bool:
+        """Tell whether a task has used its time up, counted from when its worker was seen to begin."""
+        limit_s, now = task.limits.image_timeout_s, time.monotonic()
+        if limit_s is None or future.done():
+            return False
+        if task.trail.exists():
+            self._begun[future] = min(self._begun[future], now)
+        return now > self._begun[future] + limit_s
 
     def _bury(self, victims: list[Task], on_retry: Callable[[Task, str], None]) -> Iterator[Outcome]:
         """Replace the broken pool; run each victim again alone, or give it up."""
@@ -203,6 +235,15 @@ class SupervisedPool:
         self._executor = None
         self._children.clear()
         self._running.clear()
+        self._begun.clear()
+
+
+def _stage(task: Task) -> str:
+    """Return the last stage a task reached."""
+    try:
+        return task.trail.read_text(encoding="utf-8").split()[-1]
+    except (OSError, ValueError, IndexError):
+        return "start"
 
 
 def tell_nobody(_task: Task, _how: str) -> None:

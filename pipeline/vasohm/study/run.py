@@ -1,5 +1,6 @@
 """One run over the images of a study: what is current is left, the rest is measured, and the folder is made whole."""
 
+import errno
 import shutil
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import AbstractContextManager, ExitStack
@@ -18,6 +19,7 @@ from vasohm.study.ending import EXIT_OK, EXIT_SOME_FAILED
 from vasohm.study.events import Event, Kind, Listener
 from vasohm.study.folder import (
     claim,
+    identity,
     image_folder,
     probe,
     refuse_other_study,
@@ -35,6 +37,7 @@ from vasohm.study.pool import Pool, SupervisedPool
 from vasohm.study.state import ImageState, StudyState
 from vasohm.study.worker import measure_and_write
 
+_AT_ONCE = 2  # requests to stop that leave no image to its end
 IO_FAILURES_IN_A_ROW = 3  # then the disk is to blame, and measuring on is in vain
 
 
@@ -176,6 +179,7 @@ class _Run:
         self._io_failures = 0
         self._stop_told = False
         self._lost = ""
+        self._folder = identity(request.out)
 
     def carry_out(self, pool: Pool) -> RunReport:
         self._tell(Event("run", f"study {self._study.name}", total=len(self._selected)))
@@ -192,6 +196,9 @@ class _Run:
                 self._note_end(outcome)
         except LostError as lost:
             self._lost = str(lost)
+        if identity(self._request.out) != self._folder:
+            what = "the folder of the results was moved or removed while they were made"
+            raise OSError(errno.ESTALE, what, str(self._request.out))
         shutil.rmtree(trails, ignore_errors=True)
         state = self._finish()
         stopped = self._why_stopped(state)
@@ -205,7 +212,7 @@ class _Run:
             name = source.image_id
             folder, settings = image_folder(self._request.out, name), self._study.settings
             if _reason(source, folder, settings, versions=self._versions, before=self._before.get(name)):
-                yield Task(name, source, settings, self._versions, folder, trails / name)
+                yield Task(name, source, settings, self._versions, folder, trails / name, self._study.run)
                 continue
             record = read_record(folder) or {}
             self._ended[name] = ImageState(name, str(record.get("status")))
@@ -220,16 +227,21 @@ class _Run:
         if self._interrupts.count and not self._stop_told:
             self._stop_told = True
             self._tell(Event("stop", "Interrupted."))
+        if identity(self._request.out) != self._folder:
+            return _AT_ONCE
         return max(self._interrupts.count, int(self._io_failures >= IO_FAILURES_IN_A_ROW))
 
     def _note_retry(self, task: Task, how: str) -> None:
+        remove_partials(task.folder.parent, task.image_id)
         self._tell(Event("retry", f"{how}: run again alone", image_id=task.image_id))
 
     def _note_end(self, outcome: Outcome) -> None:
         failure = outcome.failure
         if failure is not None:
             # Tables of an earlier run must not stand there as if they were this one's.
-            remove_image(image_folder(self._request.out, outcome.image_id))
+            folder = image_folder(self._request.out, outcome.image_id)
+            remove_image(folder)
+            remove_partials(folder.parent, outcome.image_id)
             if outcome.traceback:
                 self._journal.error(outcome.image_id, outcome.traceback)
         self._io_failures = self._io_failures + 1 if failure is not None and failure.error == "io" else 0

@@ -18,9 +18,9 @@ from vasohm.errors import ImageError, VasohmError
 from vasohm.pipeline import measure_source
 from vasohm.results.write import write_image
 from vasohm.study.current import INPUTS, content_key
+from vasohm.study.memory import MB, memory_limited, predicted_mb, refuse_beyond
 from vasohm.study.outcome import FAILED, Failure, Outcome, Task
 
-_MB = 1024.0 * 1024.0
 _WARNINGS_KEPT = 20
 
 
@@ -43,7 +43,8 @@ def measure_and_write(task: Task) -> Outcome:
     with warnings.catch_warnings(record=True) as caught, threadpool_limits(1):
         warnings.simplefilter("default")
         try:
-            status = _measure(task, trail)
+            with memory_limited(task.limits.memory_limit_mb):
+                status = _measure(task, trail)
         except (Exception, SystemExit) as fault:  # noqa: BLE001  one image must never cost another
             failure = _failure(fault, trail.stage_name, task)
             if not isinstance(fault, VasohmError):
@@ -61,6 +62,8 @@ def measure_and_write(task: Task) -> Outcome:
 
 
 def _measure(task: Task, trail: "Trail") -> str:
+    if task.limits.memory_limit_mb is not None:
+        refuse_beyond(task.source.file, task.limits.memory_limit_mb)
     key = content_key(task.source, task.settings, task.versions)
     tables = measure_source(task.source, task.settings, trail.stage)
     trail.stage("write")
@@ -82,7 +85,7 @@ class Trail:
         self.stage_name = "start"
         self._seconds: dict[str, float] = {}
         self._begun = time.monotonic()
-        path.parent.mkdir(parents=True, exist_ok=True)
+        path.parent.mkdir(exist_ok=True)
         self._file = path.open("w", encoding="utf-8", buffering=1)
         self._file.write(f"{os.getpid()}\nstart\n")
 
@@ -108,7 +111,7 @@ def _failure(fault: BaseException, stage: str, task: Task) -> Failure:
     if isinstance(fault, VasohmError):
         error, message = fault.code, str(fault)
     elif isinstance(fault, MemoryError):
-        error, message = "memory", f"not enough memory ({fault}). Use fewer workers or a machine with more memory."
+        error, message = "memory", f"not enough memory ({fault}). {_wanted(task)}"
     elif isinstance(fault, OSError):
         name = Path(os.fsdecode(fault.filename)).name if fault.filename else "a file"
         error, message = "io", f"{name}: {fault.strerror or fault}. {_free(task.folder)} Run again when mended."
@@ -120,10 +123,17 @@ def _failure(fault: BaseException, stage: str, task: Task) -> Failure:
     return Failure(stage=stage, error=error, message=" ".join(message.split()))
 
 
+def _wanted(task: Task) -> str:
+    limit_mb, wanted_mb = task.limits.memory_limit_mb, predicted_mb(task.source.file)
+    wanted = f"About {wanted_mb:.0f} MB were predicted" if wanted_mb is not None else "What it takes is not known"
+    limit = f"memory_limit_mb is {limit_mb:g}" if limit_mb is not None else "no memory_limit_mb is set"
+    return f"{wanted}, {limit}. Use fewer workers, a higher limit in [run], or a machine with more memory."
+
+
 def _free(folder: Path) -> str:
     for place in folder.parents:
         if place.is_dir():
-            return f"{shutil.disk_usage(place).free / _MB:.0f} MB are free in the results folder."
+            return f"{shutil.disk_usage(place).free / MB:.0f} MB are free in the results folder."
     return ""
 
 
