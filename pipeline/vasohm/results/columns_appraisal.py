@@ -175,6 +175,8 @@ APPRAISAL_IMAGES: tuple[Column, ...] = (
     *_RESISTANCES,
     *_places("branchings", "branchings"),
     *_places("crossings", "crossings"),
+    number("class_said_fraction", "1", "Share of the length found of vessels of known class that was given a class."),
+    number("class_right_fraction", "1", "Share of the length given a class where it is the true one."),
     count("loops_true", "Number of independent closed loops of the true networks."),
     count("loops_measured", "Number of independent closed loops of the measured networks."),
     count("networks_true", "Number of true networks."),

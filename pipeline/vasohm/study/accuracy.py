@@ -218,6 +218,16 @@ def _image_row(image: Deviations) -> dict[str, Any]:
         **counts,
         **_scores(counts, "branchings"),
         **_scores(counts, "crossings"),
+        **_class_shares(counts),
+    }
+
+
+def _class_shares(counts: Mapping[str, float]) -> dict[str, float]:
+    """Share of the length that has a class, and of that the share where it is right."""
+    true, said, right = (counts[f"class_{which}_um"] for which in ("true", "said", "right"))
+    return {
+        "class_said_fraction": said / true if true else np.nan,
+        "class_right_fraction": right / said if said else np.nan,
     }
 
 
@@ -248,6 +258,7 @@ def _summary(
         "segments": _ratios(all_images.segments, ("length_ratio", "radius_hydraulic_ratio", "resistance_ratio")),
         "networks": _ratios(all_images.networks, ("resistance_ratio",)),
         **{name: _part(counts | _scores(counts, name), name) for name in ("branchings", "crossings")},
+        "classes": _part(counts | _class_shares(counts), "class"),
         "loops": _part(counts, "loops"),
         "networks_counted": _part(counts, "networks"),
     }

@@ -50,7 +50,7 @@ class Deviations:
     invented_length: pd.DataFrame  # radius_px (measured, for stray), stray_um, doubled_um
     segments: pd.DataFrame
     networks: pd.DataFrame
-    counts: Mapping[str, int]
+    counts: Mapping[str, float]  # numbers of places and of networks, and lengths with a class, um
 
 
 @dataclass(frozen=True, slots=True)
@@ -94,7 +94,7 @@ def deviations(measured: Bed, true: Bed, blood: Blood, hematocrit: float) -> Dev
         invented_length=_invented_length(measured, match),
         segments=_segments(measured, match, basis),
         networks=_networks(measured, true, match, basis),
-        counts=_counts(measured, true),
+        counts=_counts(measured, true) | _class_lengths(measured, true, match),
     )
 
 
@@ -352,8 +352,8 @@ def _index_of(ids: pd.Series, table_ids: pd.Series) -> IntArray:
     return pd.Series(np.arange(len(table_ids)), index=table_ids).reindex(ids).to_numpy(np.int64)
 
 
-def _counts(measured: Bed, true: Bed) -> dict[str, int]:
-    counts = {}
+def _counts(measured: Bed, true: Bed) -> dict[str, float]:
+    counts: dict[str, float] = {}
     for name in ("branchings", "crossings"):
         places, true_places = _places(measured, name), _places(true, name)
         counts[f"{name}_true"], counts[f"{name}_measured"] = len(true_places), len(places)
@@ -362,6 +362,19 @@ def _counts(measured: Bed, true: Bed) -> dict[str, int]:
         counts[f"loops_{which}"] = int(bed.tables["networks"]["loops"].sum())
         counts[f"networks_{which}"] = len(bed.tables["networks"])
     return counts
+
+
+def _class_lengths(measured: Bed, true: Bed, match: _Match) -> dict[str, float]:
+    """Length (um) on vessels whose true class is told, of it with a class said, and of that with the right one."""
+    kept = match.on_truth.found
+    said, told = (bed.tables["segments"]["vessel_class"].fillna("").to_numpy(str) for bed in (measured, true))
+    said, told = said[match.measured.segment[kept]], told[match.on_truth.segment[kept]]
+    length_um = match.measured.weight_px[kept] * measured.pixel_size_um
+    return {
+        "class_true_um": float(length_um[told != ""].sum()),
+        "class_said_um": float(length_um[(told != "") & (said != "")].sum()),
+        "class_right_um": float(length_um[(told != "") & (said == told)].sum()),
+    }
 
 
 def _places(bed: Bed, name: str) -> FloatArray:
