@@ -10,7 +10,7 @@ from vasohm.results.columns_images import DISC, FAILURES, IMAGE, NETWORKS, SCENA
 from vasohm.results.columns_shape import BRANCHINGS, CLASS_SHAPES, HORTON, ORDERS, SCALES
 from vasohm.results.columns_vessels import CROSSINGS, NODES, POINTS, SEGMENTS
 
-SCHEMA_VERSION = 6  # goes up with every change of a column
+SCHEMA_VERSION = 7  # goes up with every change of a column
 
 COLUMNS: Mapping[str, tuple[Column, ...]] = {
     "image": IMAGE,
