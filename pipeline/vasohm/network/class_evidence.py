@@ -29,7 +29,6 @@ class Circumstances:
     """What changes a vessel's colour beside its class, by segment."""
 
     radius_px: FloatArray  # (n_segments,)
-    length_px: FloatArray
     place_px: FloatArray  # (n_segments, 2) middle
     disc_distance_px: FloatArray | None
 

@@ -114,12 +114,12 @@ def _no_colour(raw: RawImage, prepared: PreparedImage) -> str:
 
 
 def _circumstances(measured: MeasuredGraph, disc: OpticDisc | None) -> tuple[Circumstances, BoolArray]:
-    graph, pixel = measured.graph, measured.pixel_size_um
+    graph = measured.graph
     segment, n = owner(graph.offsets), graph.n_segments
-    radius = median_by(segment, measured.radius_um / pixel, n)
+    radius = median_by(segment, measured.radius_um / measured.pixel_size_um, n)
     place = np.column_stack([median_by(segment, at, n) for at in (graph.x_px, graph.y_px)])
     if disc is None:
-        return Circumstances(radius, measured.length_um / pixel, place, None), np.zeros(graph.n_nodes, dtype=bool)
+        return Circumstances(radius, place, None), np.zeros(graph.n_nodes, dtype=bool)
     distance = np.hypot(place[:, 0] - disc.x_px, place[:, 1] - disc.y_px)
     at_disc = np.hypot(graph.node_x_px - disc.x_px, graph.node_y_px - disc.y_px) < disc.radius_px
-    return Circumstances(radius, measured.length_um / pixel, place, distance), at_disc
+    return Circumstances(radius, place, distance), at_disc

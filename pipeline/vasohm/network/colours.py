@@ -101,8 +101,10 @@ def measure_colours(measured: MeasuredGraph, pixels: AnyArray, fov: BoolArray, w
     """
     n = measured.graph.n_segments
     rgb = pixels[..., :3].astype(np.float32)
+    finite = np.isfinite(rgb).all(axis=2)
+    rgb[~finite] = 0.0
     luminance = rgb @ LUMINANCE.astype(np.float32)
-    valid = fov if white is None else fov & (rgb < white).all(axis=2)
+    valid = fov & finite if white is None else fov & finite & (rgb < white).all(axis=2)
     frame = make_frame(measured.graph.x_px, measured.graph.y_px, measured.graph.offsets)
     radius = measured.radius_um / measured.pixel_size_um
     psf = measured.blur_px if np.isfinite(measured.blur_px) else TYPICAL_BLUR_PX
