@@ -24,6 +24,7 @@ from vasohm.study.dask_meeting import safe_address
 distributed = pytest.importorskip("distributed")
 
 MakeStudy = Callable[..., DrawnStudy]
+HANG_S = 12
 DEADLINE_S = 120.0  # for something to come about on a busy machine; not a measure of anything
 
 
@@ -169,6 +170,27 @@ def test_an_image_that_ends_its_workers_is_given_up_and_the_others_are_measured(
     for name in ("segments.csv", "overlay.png", "record.json"):
         for image_id in ("image-0", "image-2"):
             assert now[f"images/{image_id}/{name}"] == undisturbed[f"images/{image_id}/{name}"]
+
+
+@pytest.mark.slow
+def test_an_image_that_takes_too_long_is_ended_and_its_worker_goes_on(
+    make_study: MakeStudy, make_cluster: MakeCluster, tmp_path: Path, undisturbed: dict[str, str]
+) -> None:
+    """Wrong if one picture held a worker for ever; the limit is above what the others take on a busy machine."""
+    study, out = make_study(), tmp_path / "out"
+    text = study.file.read_text()
+    study.file.write_text(f"{text}\n[run]\nimage_timeout_s = {HANG_S}\n")
+    cluster = make_cluster(study, DEEDS=f"{SIZE_PX}:hang")
+    cluster.worker()
+    status, told, complained = ended(start_run(study, cluster, out))
+    assert status == 1, complained
+    assert told.splitlines()[-1] == "3 images: 2 measured, 0 empty, 1 failed; exit status 1"
+    row = (out / "failures.csv").read_text().splitlines()[1]
+    assert row.startswith("image-0,segment,timeout,")
+    assert f"took longer than image_timeout_s = {HANG_S} and was ended" in row
+    now = contents(out)
+    for image_id in ("image-1", "image-2"):
+        assert now[f"images/{image_id}/segments.csv"] == undisturbed[f"images/{image_id}/segments.csv"]
 
 
 @pytest.mark.slow

@@ -1,19 +1,26 @@
 """Before work on a Dask cluster: which addresses are safe, and whether each worker would measure the same bytes."""
 
 import ipaddress
+import logging
 import os
 import secrets
+import warnings
 from collections.abc import Iterable, Iterator, Mapping
-from contextlib import contextmanager
+from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 from urllib.parse import urlsplit
 
 from vasohm.errors import Problem, RequestError
 from vasohm.study.state import environment, read_json
 
+if TYPE_CHECKING:
+    from distributed import Client
+
+CONNECT_S = 20.0  # for the scheduler to answer
+ANSWER_S = 30.0  # of a scheduler that is there and busy
 _SAMPLES = 20  # folders that are looked for on each worker
 
 
@@ -76,6 +83,38 @@ def safe_address(text: str, *, insecure: bool) -> str:
         )
         raise _refused(text, message)
     return address
+
+
+@contextmanager
+def connected(address: str) -> Iterator["Client"]:
+    """Connect to a scheduler while the block runs; certificates are those of Dask's own configuration.
+
+    Raises
+    ------
+    RequestError
+        When Dask is not installed, or no scheduler answers at the address.
+    """
+    try:
+        from distributed import Client  # noqa: PLC0415  an optional dependency
+    except ImportError:
+        message = "needs Dask, which is not installed. Install the extra: pip install 'vasohm[dask]'."
+        raise RequestError([Problem(file="--dask", value=address, message=message)]) from None
+    for name in list(logging.root.manager.loggerDict):
+        if name.partition(".")[0] == "distributed":  # what matters of it is told in our own words
+            logging.getLogger(name).setLevel(logging.CRITICAL)
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")  # of versions: what matters of them is compared in the meeting
+            client = Client(address, timeout=CONNECT_S, set_as_default=False, name="vasohm")
+    except (OSError, ValueError, TypeError) as fault:
+        why = " ".join(str(fault).split())
+        message = f"no Dask scheduler answers at {address} ({why}). Start one, or mend the address."
+        raise RequestError([Problem(file="--dask", value=address, message=message)]) from None
+    try:
+        yield client
+    finally:
+        with suppress(OSError):
+            client.close(timeout=ANSWER_S)
 
 
 @contextmanager

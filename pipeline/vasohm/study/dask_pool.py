@@ -5,10 +5,8 @@ image runs again; it is given up when it ends two workers that had nothing else 
 moments when no other worker was lost (the end of an allotted time takes many at once, and is no image's fault).
 """
 
-import logging
 import secrets
 import time
-import warnings
 from collections import Counter, deque
 from collections.abc import Callable, Iterable, Iterator
 from concurrent.futures import CancelledError
@@ -18,17 +16,15 @@ from typing import TYPE_CHECKING, Any
 from urllib.parse import urlsplit
 
 from vasohm.errors import Problem, RequestError
-from vasohm.study.dask_meeting import Meeting, introduce, objections
-from vasohm.study.outcome import CRASHED, Failure, LostError, Outcome, Task, failed
+from vasohm.study.dask_meeting import ANSWER_S, Meeting, connected, introduce, objections
+from vasohm.study.outcome import CRASHED, Failure, LostError, Outcome, Task, failed, too_long
 from vasohm.study.pool import GRACE_S, Work, tell_nobody
 
 if TYPE_CHECKING:
     from distributed import Client, Future
 
-CONNECT_S = 20.0  # for the scheduler to answer
 MEET_S = 120.0  # for workers to answer: their first word loads the program, perhaps from a slow shared disk
 PATIENCE_S = 120.0  # without any worker, then the run ends; a nanny starts a worker anew within seconds
-_ANSWER_S = 30.0  # of a scheduler that is there and busy
 _POLL_S = 0.05
 _LOOK_S = 1.0  # between two looks at who is there
 _SETTLE_S = 1.0  # workers that are lost for one reason are missed within it
@@ -77,38 +73,6 @@ def joined(
         yield pool
 
 
-@contextmanager
-def connected(address: str) -> Iterator["Client"]:
-    """Connect to a scheduler while the block runs; certificates are those of Dask's own configuration.
-
-    Raises
-    ------
-    RequestError
-        When Dask is not installed, or no scheduler answers at the address.
-    """
-    try:
-        from distributed import Client  # noqa: PLC0415  an optional dependency
-    except ImportError:
-        message = "needs Dask, which is not installed. Install the extra: pip install 'vasohm[dask]'."
-        raise RequestError([Problem(file="--dask", value=address, message=message)]) from None
-    for name in list(logging.root.manager.loggerDict):
-        if name.partition(".")[0] == "distributed":  # what matters of it is told in our own words
-            logging.getLogger(name).setLevel(logging.CRITICAL)
-    try:
-        with warnings.catch_warnings():
-            warnings.simplefilter("ignore")  # of versions: what matters of them is compared in the meeting
-            client = Client(address, timeout=CONNECT_S, set_as_default=False, name="vasohm")
-    except (OSError, ValueError, TypeError) as fault:
-        why = " ".join(str(fault).split())
-        message = f"no Dask scheduler answers at {address} ({why}). Start one, or mend the address."
-        raise RequestError([Problem(file="--dask", value=address, message=message)]) from None
-    try:
-        yield client
-    finally:
-        with suppress(OSError):
-            client.close(timeout=_ANSWER_S)
-
-
 class DaskPool:
     """Runs tasks on the workers of a Dask cluster.
 
@@ -136,6 +100,7 @@ class DaskPool:
         self._suspects: deque[Task] = deque()
         self._deaths: Counter[str] = Counter()
         self._losses: Counter[str] = Counter()
+        self._begun: dict[str, float] = {}  # when an image was seen at work
         self._exhausted = False
         self._looked = self._seen_any = 0.0
 
@@ -224,6 +189,7 @@ class DaskPool:
                 with _asking():
                     future.cancel()
                 yield from self._bury(one, on_retry, among_others=len(lost) > 1)
+        yield from self._end_late()
         now = time.monotonic()
         self._looked = now
         if self._admitted:
@@ -231,6 +197,26 @@ class DaskPool:
         elif now > self._seen_any + PATIENCE_S:
             msg = f"no Dask worker was left for {PATIENCE_S:.0f} s"
             raise LostError(msg)
+
+    def _end_late(self) -> Iterator[Outcome]:
+        """End the workers of images that take too long; one without a nanny, which would do that, is used no more."""
+        now = time.monotonic()
+        for future, one in list(self._running.items()):
+            limit_s, stage = one.task.limits.image_timeout_s, _last_stage(one.task)
+            if limit_s is None or not stage or future.status != _PENDING:
+                continue
+            if now <= self._begun.setdefault(one.task.image_id, now) + limit_s:
+                continue
+            del self._running[future]
+            self._admitted.discard(one.worker)
+            with _asking():
+                future.cancel()
+                try:
+                    self._client.restart_workers([one.worker], timeout=ANSWER_S, raise_for_error=False)
+                except ValueError:
+                    self._refused.add(one.worker)
+                    self._tell(f"worker {one.worker} is used no more: it has no nanny to end {one.task.image_id}")
+            yield too_long(one.task, stage)
 
     def _greet(self) -> set[str]:
         """Ask workers that are new who they are; return all that are there."""
@@ -267,7 +253,7 @@ class DaskPool:
         if self._client.status != "running":
             raise _scheduler_lost()
         with _asking():
-            return dict(self._client.nthreads(callback_timeout=_ANSWER_S))
+            return dict(self._client.nthreads(callback_timeout=ANSWER_S))
 
     def _hand_out(self, waiting: Iterator[Task]) -> None:
         """Give each free worker an image; a suspect gets one whose machine has no other image of this run."""
@@ -293,6 +279,7 @@ class DaskPool:
 
     def _submit(self, task: Task, worker: str, *, alone: bool) -> None:
         task.trail.unlink(missing_ok=True)
+        self._begun.pop(task.image_id, None)
         with _asking():
             future = self._client.submit(self._work, task, workers=[worker], pure=False, key=_key(task.image_id))
         self._running[future] = _Running(task, worker, alone)

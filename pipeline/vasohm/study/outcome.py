@@ -65,3 +65,12 @@ def failed(task: Task, failure: Failure) -> Outcome:
         warnings=(),
         traceback="",
     )
+
+
+def too_long(task: Task, stage: str) -> Outcome:
+    """Return the outcome of a task that has used its time up and was ended in `stage`."""
+    message = (
+        f"took longer than image_timeout_s = {task.limits.image_timeout_s:g} and was ended, in stage {stage}. "
+        "Raise it in [run], or see what is odd in this picture."
+    )
+    return failed(task, Failure(stage=stage, error=TIMEOUT, message=message))

@@ -23,7 +23,7 @@ from typing import Protocol
 
 from vasohm.study.cores import THREAD_VARIABLES
 from vasohm.study.interrupt import ENDING_SIGNALS, signals_held
-from vasohm.study.outcome import CRASHED, TIMEOUT, Failure, Outcome, Task, failed
+from vasohm.study.outcome import CRASHED, Failure, Outcome, Task, failed, too_long
 
 GRACE_S = 30.0  # that running images have after the first request to stop
 _POLL_S = 0.1
@@ -181,11 +181,7 @@ class SupervisedPool:
         innocent = [task for task in self._running.values() if task.image_id not in {one.image_id for one in late}]
         self._end(by_force=True)
         for task, stage in causes:
-            message = (
-                f"took longer than image_timeout_s = {task.limits.image_timeout_s:g} and was ended, in stage {stage}. "
-                "Raise it in [run], or see what is odd in this picture."
-            )
-            yield failed(task, Failure(stage=stage, error=TIMEOUT, message=message))
+            yield too_long(task, stage)
         for task in innocent:
             self._suspects.append(task)
             on_retry(task, f"its worker was ended with that of {late[0].image_id}, which took too long")
