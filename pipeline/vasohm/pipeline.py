@@ -15,6 +15,7 @@ from vasohm.image.calibrate import calibrate, guess_for_disc, rests_on_disc
 from vasohm.image.disc import OpticDisc, check_disc
 from vasohm.image.eye import check_side
 from vasohm.image.prepare import prepare
+from vasohm.image.prepare_blocks import prepare_in_blocks
 from vasohm.image.read import RawImage, read_image, read_labels, read_mask
 from vasohm.image.segment import segment
 from vasohm.network.centreline import extend_ends, refine_centrelines
@@ -48,7 +49,8 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     stage("prepare")
     if source.disc is None and settings.shape.disc == "find" and rests_on_disc(raw, source.scale, settings.scale):
         source = replace(source, disc=_find_disc_first(raw, settings, given, fov))
-    prepared = prepare(calibrate(raw, source.scale, settings.scale, disc=source.disc), settings.prepare, fov)
+    flatten = prepare_in_blocks if raw.block_px else prepare
+    prepared = flatten(calibrate(raw, source.scale, settings.scale, disc=source.disc), settings.prepare, fov)
     stage("segment")
     mask = segment(prepared, settings.segment, given)
     stage("graph")
@@ -99,7 +101,8 @@ def _find_disc_first(
     raw: RawImage, settings: Settings, given: BoolArray | None, fov: BoolArray | None
 ) -> OpticDisc | None:
     """Find the optic disc at a guessed pixel size, where only the disc can tell the true one."""
-    guessed = prepare(guess_for_disc(raw, settings.scale), settings.prepare, fov)
+    flatten = prepare_in_blocks if raw.block_px else prepare
+    guessed = flatten(guess_for_disc(raw, settings.scale), settings.prepare, fov)
     mask = segment(guessed, settings.segment, given)
     graph = build_graph(skeletonize(mask, guessed, settings.skeletonize))
     return find_disc(graph, guessed, mask.pixels).disc

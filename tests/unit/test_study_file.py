@@ -58,6 +58,7 @@ CONTRACT = """
     plane    = "max"
     gamma    = 2.2
     max_megapixels = 100
+    block_megapixels = 25
     [scale]
     pixel_size_um    = 7
     pixel_size_se_um = 0.1

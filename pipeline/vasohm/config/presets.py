@@ -12,6 +12,7 @@ DEFAULTS: Mapping[str, Any] = {
     "study.allow_outside": False,
     "image.gamma": 1.0,  # a linear camera
     "image.max_megapixels": 400.0,
+    "image.block_megapixels": 25.0,  # a worker then needs less than 4 GB, and pictures of usual cameras stay whole
     "scale.pixel_size_um": None,
     "scale.pixel_size_se_um": None,
     "scale.scale_conflict": "stop",

@@ -313,7 +313,12 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
     blur_px = values["radius.blur_px"]
     return Settings(
         preset=values["image.preset"],
-        read=ReadSettings(values["image.plane"], values["image.max_megapixels"], values["image.channel"]),
+        read=ReadSettings(
+            values["image.plane"],
+            values["image.max_megapixels"],
+            values["image.channel"],
+            values["image.block_megapixels"],
+        ),
         scale=scale_settings(values),
         prepare=PrepareSettings(
             values["image.channel"], values["image.polarity"], values["image.gamma"], radius_um=(low, high)

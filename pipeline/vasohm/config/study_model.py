@@ -81,6 +81,7 @@ class ImageTable(Table):
     plane: Annotated[int | str, PlainValidator(lambda value: word_or_index(value, PLANES))] | None = None
     gamma: Annotated[float, Field(gt=0, le=10)] | None = None
     max_megapixels: Annotated[float, Field(gt=0, le=100_000)] | None = None
+    block_megapixels: Annotated[float, Field(ge=0.25, le=1000)] | None = None
 
 
 class ScaleTable(Table):

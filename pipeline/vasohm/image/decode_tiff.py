@@ -13,6 +13,7 @@ from tifffile import PHOTOMETRIC, TiffFile, TiffPage, TiffPageSeries
 
 from vasohm.arrays import AnyArray
 from vasohm.errors import NotAnImageError, ReadError, TruncatedError, UnsupportedPixelsError
+from vasohm.image.blocks import on_disk
 from vasohm.image.decoded import NO_SCALE, Decoded, FileScale, expand_palette, invert, refuse_too_large
 from vasohm.image.file_scale import imagej_scale, ome_scale, refuse_entities
 
@@ -47,13 +48,14 @@ class _Layout:
         return math.prod(size for axis, size in enumerate(self.shape) if axis not in apart)
 
 
-def decode_tiff(data: bytes, limit_px: float, *, expand_palettes: bool) -> Decoded:
+def decode_tiff(data: bytes, limits_px: tuple[float, float], *, expand_palettes: bool) -> Decoded:
     """Decode the first image of a TIFF with all its planes.
 
     Parameters
     ----------
     data : the file.
-    limit_px : more declared pixels, all planes together, are refused before decoding.
+    limits_px : more declared pixels, all planes together, than the first are refused before decoding; more than the
+        second are decoded onto disk, one strip or tile after the other.
     expand_palettes : False keeps the indices of a palette, as label images mean them.
 
     Raises
@@ -70,10 +72,12 @@ def decode_tiff(data: bytes, limit_px: float, *, expand_palettes: bool) -> Decod
         page = series.keyframe
         _check_samples(page)
         layout = _layout(series)
-        refuse_too_large(layout.shape[layout.x], layout.shape[layout.y], layout.n_planes, limit_px)
+        refuse_too_large(layout.shape[layout.x], layout.shape[layout.y], layout.n_planes, limits_px[0])
         _check_segments(series, len(data))
         _check_planes(tif, series)
-        planes = _planes(series.asarray(maxworkers=1), layout)
+        is_large = layout.shape[layout.x] * layout.shape[layout.y] * layout.n_planes > limits_px[1]
+        out = on_disk(series.shape, series.dtype) if is_large else None
+        planes = _planes(series.asarray(maxworkers=1, out=out), layout)
         pixels, is_colour, bits, notes = _brightness(planes, page, layout, expand_palettes=expand_palettes)
         scale = _scale(tif, page)
         orientation = page.tags.valueof(ORIENTATION_TAG, 1)

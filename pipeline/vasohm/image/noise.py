@@ -29,24 +29,36 @@ def noise_against_brightness(
     -------
     a (file units squared) and b (file units).
     """
-    floor = step**2 / 12
+    floor = max(step**2 / 12, least_variance(float(np.ptp(brightness))))
     inside = ndimage.binary_erosion(valid, iterations=2)
-    if inside.sum() < LEAST_IN_BIN:
-        return max(floor, _least_variance(brightness)), 0.0
-    residual = np.abs(ndimage.convolve(brightness, LAPLACIAN_DIFFERENCE.astype(np.float32), mode="nearest"))
     every = 1 + int(inside.sum()) // ENOUGH_PX
-    residual, level = residual[inside][::every] / GAIN, smooth[inside][::every]
+    residual, level = noise_samples(brightness, smooth, inside, every)
+    return fit_noise(residual, level, floor)
+
+
+def noise_samples(
+    brightness: Float32Array, smooth: Float32Array, inside: BoolArray, every: int
+) -> tuple[Float32Array, Float32Array]:
+    """Take what is not smooth about every so-manieth pixel inside, as a standard deviation, and its brightness."""
+    residual = np.abs(ndimage.convolve(brightness, LAPLACIAN_DIFFERENCE.astype(np.float32), mode="nearest"))
+    return residual[inside][::every] / GAIN, smooth[inside][::every]
+
+
+def fit_noise(residual: Float32Array, level: Float32Array, floor: float) -> tuple[float, float]:
+    """Fit variance = a + b x brightness to such samples, a being `floor` at least."""
+    if len(residual) < LEAST_IN_BIN:
+        return floor, 0.0
     order = np.argsort(level, kind="stable")
     groups = np.array_split(order, min(BRIGHTNESS_BINS, len(order) // LEAST_IN_BIN))
     variance = np.array([(np.median(residual[group]) * MAD_TO_SD) ** 2 for group in groups])
     mean = np.array([np.median(level[group]) for group in groups])
     base, slope = _line(mean, variance)
-    return max(base, floor, _least_variance(brightness)), slope
+    return max(base, floor), slope
 
 
-def _least_variance(brightness: Float32Array) -> float:
+def least_variance(range_of_brightness: float) -> float:
     """Return a variance below which float rounding rules; keeps noise-free pictures divisible."""
-    return float((1e-6 * max(float(np.ptp(brightness)), 1e-30)) ** 2)
+    return float((1e-6 * max(range_of_brightness, 1e-30)) ** 2)
 
 
 def _line(x: FloatArray, y: FloatArray) -> tuple[float, float]:

@@ -5,7 +5,7 @@ import math
 import re
 import stat
 import warnings
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -23,6 +23,7 @@ from vasohm.errors import (
     VasohmError,
 )
 from vasohm.flags import Flag
+from vasohm.image.blocks import is_on_disk, kept_on_disk, release
 from vasohm.image.decode_dicom import decode_dicom
 from vasohm.image.decode_flat import decode_flat
 from vasohm.image.decode_tiff import decode_tiff
@@ -65,6 +66,7 @@ class ReadSettings:
     plane: int | str  # of a stack: "max", "mean" or a number counted from 0
     max_megapixels: float  # more declared pixels are refused before decoding
     channel: int | str  # files whose channels are not red, green and blue need a number
+    block_megapixels: float = math.inf  # larger pictures lie on disk and are worked on in blocks of so many
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -82,6 +84,7 @@ class RawImage:
     notes: tuple[str, ...]  # facts for record.json: ignored dots per inch, orientation, plane taken
     flags: Flag
     is_maximum: bool = False  # each pixel is the brightest of several planes
+    block_px: int = 0  # edge of the blocks that a large picture is worked on in; 0: in one piece
     file_pixel_size_rel_se: float = math.nan  # NaN where such a file tells none
     subject: Subject = NO_SUBJECT
 
@@ -109,10 +112,11 @@ def read_image(path: Path, settings: ReadSettings) -> RawImage:
     """
     limit_px = settings.max_megapixels * 1e6
     data = _file_bytes(path, HEADER_BYTES + BYTES_PER_PIXEL * limit_px)
-    decoded = _decode(path, data, limit_px, expand_palettes=True)
+    memory_px = settings.block_megapixels * 1e6
+    decoded = _decode(path, data, (limit_px, memory_px), expand_palettes=True)
     _check_channels(path, decoded, settings.channel)
     pixels, plane_notes = _one_plane(path, decoded.planes, settings.plane)
-    return RawImage(
+    raw = RawImage(
         pixels=pixels,
         white_level=_white_level(decoded),
         sha256=hashlib.sha256(data).hexdigest(),
@@ -124,6 +128,21 @@ def read_image(path: Path, settings: ReadSettings) -> RawImage:
         file_pixel_size_rel_se=decoded.scale.rel_se,
         subject=decoded.subject,
     )
+    return in_blocks(raw, settings.block_megapixels)
+
+
+def in_blocks(raw: RawImage, block_megapixels: float) -> RawImage:
+    """Lay a picture of more than so many megapixels on disk, to be worked on in blocks; a smaller one stays as it is.
+
+    Raises
+    ------
+    ImageError : the disk for temporary files has not room enough.
+    """
+    if raw.pixels.shape[0] * raw.pixels.shape[1] <= block_megapixels * 1e6:
+        return raw
+    pixels = raw.pixels if is_on_disk(raw.pixels) else kept_on_disk(raw.pixels)
+    release(pixels)
+    return replace(raw, pixels=pixels, block_px=int(np.sqrt(block_megapixels * 1e6)))
 
 
 def read_mask(path: Path, shape: tuple[int, int]) -> BoolArray:
@@ -213,8 +232,11 @@ def _kind_of_entry(mode: int) -> str:
     return kinds.get(stat.S_IFMT(mode), "device")
 
 
-def _decode(path: Path, data: bytes, limit_px: float, *, expand_palettes: bool) -> Decoded:
-    """Turn bytes into planes; whatever a decoder raises becomes one line that names the file."""
+def _decode(path: Path, data: bytes, limits_px: tuple[float, float], *, expand_palettes: bool) -> Decoded:
+    """Turn bytes into planes; whatever a decoder raises becomes one line that names the file.
+
+    `limits_px`: more pixels are refused, and more are decoded onto disk where the format allows it.
+    """
     name = shown(path)
     kind = next((kind for magic, kind in MAGIC.items() if data.startswith(magic)), None)
     if data[DICOM_AT : DICOM_AT + len(DICOM_MAGIC)] == DICOM_MAGIC:
@@ -226,10 +248,10 @@ def _decode(path: Path, data: bytes, limit_px: float, *, expand_palettes: bool) 
         with warnings.catch_warnings():
             warnings.simplefilter("ignore")
             if kind == "DICOM":
-                return decode_dicom(data, limit_px)
+                return decode_dicom(data, limits_px[0])
             if kind == "TIFF":
-                return decode_tiff(data, limit_px, expand_palettes=expand_palettes)
-            return decode_flat(data, kind, limit_px, expand_palettes=expand_palettes)
+                return decode_tiff(data, limits_px, expand_palettes=expand_palettes)
+            return decode_flat(data, kind, limits_px[0], expand_palettes=expand_palettes)
     except VasohmError as error:
         msg = f"{name}: {error}{COPY_AGAIN if isinstance(error, TruncatedError) else ''}"
         raise type(error)(msg) from error
@@ -280,7 +302,7 @@ def _one_plane(path: Path, planes: AnyArray, plane: int | str) -> tuple[AnyArray
             raise ReadError(msg)
         taken = planes[plane]
     elif n == 1:
-        return np.ascontiguousarray(planes[0]), ()
+        return planes[0] if is_on_disk(planes) else np.ascontiguousarray(planes[0]), ()
     else:
         taken = planes.max(axis=0) if plane == "max" else planes.mean(axis=0, dtype=np.float64)
     return np.ascontiguousarray(taken), (f"plane: {plane} of {n}",)
@@ -300,7 +322,7 @@ def _read_single(path: Path, shape: tuple[int, int], *, expand_palettes: bool) -
     limit_px = float(MASK_LIMIT * shape[0] * shape[1])
     try:
         data = _file_bytes(path, HEADER_BYTES + BYTES_PER_PIXEL * limit_px)
-        decoded = _decode(path, data, limit_px, expand_palettes=expand_palettes)
+        decoded = _decode(path, data, (limit_px, limit_px), expand_palettes=expand_palettes)
     except TooLargeError as error:
         msg = f"{shown(path)}: is more than {MASK_LIMIT} times as large as its image of {_size(shape)}."
         raise MaskError(msg) from error

@@ -1,16 +1,18 @@
 """From a prepared picture to a vessel mask, by a registered method."""
 
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from vasohm.arrays import BoolArray, freeze
 from vasohm.errors import ImageError, PluginError
-from vasohm.image.prepare import PreparedImage
+from vasohm.image.blocks import on_disk, release, working_blocks
+from vasohm.image.prepare import PreparedImage, crop
 from vasohm.image.segmenters import hessian, ridge
 from vasohm.plugins import PluginKind, load_plugin, plugin_names, refuse_plugin
 
+SAMPLED_BLOCKS = 5  # of a large picture that are asked for what all its blocks share
 FULL_SHARE = 0.98  # of the field: a mask that holds everything holds no vessel
 
 
@@ -37,15 +39,20 @@ class VesselMask:
 
 @dataclass(frozen=True, slots=True)
 class Segmenter:
-    """A method that finds vessels: `find(prepared, parameters) -> bool mask (h, w)`, and where it was published."""
+    """A method that finds vessels: `find(prepared, parameters) -> bool mask (h, w)`, and where it was published.
+
+    A large picture is searched in blocks. `learn(prepared, parameters)` reads from one of them what all should share;
+    the medians over some blocks are added to the parameters of `find`.
+    """
 
     find: Callable[[PreparedImage, Mapping[str, float]], BoolArray]
     citation: str
+    learn: Callable[[PreparedImage, Mapping[str, float]], Mapping[str, float]] | None = None
 
 
 SEGMENTERS = {
-    "ridge": Segmenter(ridge.segment_ridges, ridge.CITATION),
-    "hessian": Segmenter(hessian.segment_hessian, hessian.CITATION),
+    "ridge": Segmenter(ridge.segment_ridges, ridge.CITATION, ridge.learn_ridges),
+    "hessian": Segmenter(hessian.segment_hessian, hessian.CITATION, hessian.learn_hessian),
 }
 MASK_METHOD = "mask"  # the sheet's mask_file
 GIVEN = "mask_file"  # source of a mask made elsewhere
@@ -72,7 +79,8 @@ def segment(prepared: PreparedImage, settings: SegmentSettings, given: BoolArray
     ImageError : method "mask" without a mask, or a mask that covers the whole field of view.
     """
     if given is not None:
-        return _checked(given & prepared.fov, prepared, GIVEN)
+        inside: BoolArray = np.logical_and(given, prepared.fov)
+        return _checked(inside, prepared, GIVEN)
     if settings.method == MASK_METHOD:
         msg = 'method = "mask" needs a mask_file in the image sheet for this image.'
         raise ImageError(msg)
@@ -85,11 +93,44 @@ def segment(prepared: PreparedImage, settings: SegmentSettings, given: BoolArray
         "radius_hi_px": settings.radius_um[1] / pixel,
         "false_alarms_per_mpx": settings.false_alarms_per_mpx,
     }
-    mask = get_segmenter(settings.method).find(prepared, parameters)
-    if not isinstance(mask, np.ndarray) or mask.shape != prepared.fov.shape or mask.dtype != np.bool_:
-        msg = f"segmenter {settings.method!r} must return a bool array of shape {prepared.fov.shape}."
-        raise PluginError(msg)
-    return _checked(mask & prepared.fov, prepared, settings.method)
+    segmenter = _checking(get_segmenter(settings.method), settings.method)
+    find = _find_in_blocks if prepared.block_px else _find_at_once
+    return _checked(find(prepared, segmenter, parameters), prepared, settings.method)
+
+
+def _checking(segmenter: Segmenter, name: str) -> Segmenter:
+    """Return the method with a look at what it returns, cut to the field of view."""
+
+    def find(prepared: PreparedImage, parameters: Mapping[str, float]) -> BoolArray:
+        mask = segmenter.find(prepared, parameters)
+        if not isinstance(mask, np.ndarray) or mask.shape != prepared.fov.shape or mask.dtype != np.bool_:
+            msg = f"segmenter {name!r} must return a bool array of shape {prepared.fov.shape}."
+            raise PluginError(msg)
+        return np.asarray(mask & prepared.fov, dtype=np.bool_)
+
+    return replace(segmenter, find=find)
+
+
+def _find_at_once(prepared: PreparedImage, segmenter: Segmenter, parameters: Mapping[str, float]) -> BoolArray:
+    return segmenter.find(prepared, parameters)
+
+
+def _find_in_blocks(prepared: PreparedImage, segmenter: Segmenter, parameters: Mapping[str, float]) -> BoolArray:
+    """Search a large picture block by block, each with enough around it, with what some of them tell together."""
+    blocks = working_blocks(prepared.fov.shape, prepared.block_px, parameters["radius_hi_px"])
+    blocks = [block for block in blocks if prepared.fov[block.core].any()]
+    release(prepared.fov)
+    if segmenter.learn is not None:
+        rank = np.linspace(0, len(blocks) - 1, min(len(blocks), SAMPLED_BLOCKS)).round().astype(int)
+        told = [segmenter.learn(crop(prepared, blocks[k].window), parameters) for k in rank]
+        parameters = {**parameters, **{key: float(np.nanmedian([one[key] for one in told])) for key in told[0]}}
+    mask = on_disk(prepared.fov.shape, np.bool_)
+    for block in blocks:
+        piece = crop(prepared, block.window)
+        if np.any(piece.signal):
+            mask[block.core] = segmenter.find(piece, parameters)[block.inner]
+        release(mask)
+    return mask
 
 
 def get_segmenter(name: str) -> Segmenter:

@@ -6,6 +6,7 @@ import numpy as np
 from scipy import ndimage
 
 from vasohm.arrays import BoolArray, Float32Array, FloatArray, IntArray
+from vasohm.image.blocks import filtered
 from vasohm.image.prepare import PreparedImage
 from vasohm.network.graph import NodeKind, VesselGraph, branch_directions, centre_junctions, end_radius, in_fixed_order
 from vasohm.network.groups import median_by
@@ -23,6 +24,7 @@ BORDER_RADII = 4.0  # and a wide vessel's line well before the border: there fil
 TIP_PX = 4  # and this many pixels more of it are drawn anew
 NEW_POINT_PX = 0.5
 LEAST_POINTS = 4  # a segment keeps at least so many
+SMOOTHING_REACH_PX = 8
 CHUNK_POINTS = 8192  # profiles of so many points at once: memory stays small, and they fit a processor's cache
 BORDER_STEP_PX = 0.25
 BORDER_HALVINGS = 20  # to a millionth of a pixel
@@ -40,7 +42,7 @@ def refine_centrelines(graph: VesselGraph, prepared: PreparedImage) -> VesselGra
     """
     if graph.n_segments == 0:
         return graph
-    signal = ndimage.gaussian_filter(prepared.signal, 0.7, mode="nearest")
+    signal = _smoothed(prepared, 0.7)
     if graph.seed_radius_px.max() <= LINE_PX:
         graph = _with_seen_radius(graph, signal)
     x, y, offsets, seed = graph.x_px, graph.y_px, graph.offsets, graph.seed_radius_px
@@ -64,6 +66,13 @@ def refine_centrelines(graph: VesselGraph, prepared: PreparedImage) -> VesselGra
     return centre_junctions(
         replace(graph, x_px=x, y_px=y, offsets=offsets, seed_radius_px=seed, node_x_px=node_x, node_y_px=node_y)
     )
+
+
+def _smoothed(prepared: PreparedImage, sigma_px: float) -> Float32Array:
+    def smooth(signal: Float32Array) -> Float32Array:
+        return np.asarray(ndimage.gaussian_filter(signal, sigma_px, mode="nearest"))
+
+    return filtered(prepared.signal, smooth, SMOOTHING_REACH_PX)
 
 
 def _with_seen_radius(graph: VesselGraph, signal: Float32Array) -> VesselGraph:
@@ -201,7 +210,7 @@ def _without_tips(graph: VesselGraph, prepared: PreparedImage) -> tuple[VesselGr
     nodes = np.column_stack((graph.node_a, graph.node_b))
     count = np.diff(graph.offsets)[:, None]
     segment, k = owner(graph.offsets), position(graph.offsets)
-    signal = ndimage.gaussian_filter(prepared.signal, 1.0, mode="nearest")
+    signal = _smoothed(prepared, 1.0)
     row = np.clip(np.rint(graph.y_px), 0, graph.shape[0] - 1).astype(np.int64)
     column = np.clip(np.rint(graph.x_px), 0, graph.shape[1] - 1).astype(np.int64)
     on_axis = signal[row, column].astype(np.float64)

@@ -61,20 +61,24 @@ class KnownContrasts:
         return KnownContrasts(self.vessel_class[keep], self.ln_contrast[keep], self.variance[keep], self.answer[keep])
 
 
-def learn_contrast(known: KnownContrasts, vessel_class: IntArray, guess: FloatArray) -> ContrastPrior:
+def learn_contrast(
+    known: KnownContrasts, vessel_class: IntArray, guess: FloatArray, classes: IntArray | None = None
+) -> ContrastPrior:
     """Build the prior of every segment (n_segments,) from the segments that tell their contrast.
 
-    A class with fewer than `FEW` such segments takes the prior of all.
+    A class with fewer than `FEW` such segments takes the prior of all. `classes` are those of the whole picture, where
+    the segments are only some of it.
     """
     n = len(vessel_class)
+    classes = np.unique(vessel_class) if classes is None else classes
     mean, spread = guess.copy(), np.full(n, UNKNOWN_SPREAD)
     group = np.full(n, -1, np.int64)
     means, answers = [], []
     if len(known.ln_contrast):
-        classes = [c for c in np.unique(vessel_class) if np.sum(known.vessel_class == c) >= FEW]
-        rest = ~np.isin(vessel_class, classes)
-        parts = [(vessel_class == c, known.select(known.vessel_class == c)) for c in classes]
-        if rest.any():
+        told_apart = [c for c in classes if np.sum(known.vessel_class == c) >= FEW]
+        rest = ~np.isin(vessel_class, told_apart)
+        parts = [(vessel_class == c, known.select(known.vessel_class == c)) for c in told_apart]
+        if len(told_apart) < len(classes):
             parts.append((rest, known))
         for number, (members, told) in enumerate(parts):
             centre, width, se, weight = _population(told.ln_contrast, told.variance)

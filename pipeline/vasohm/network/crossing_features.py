@@ -6,6 +6,7 @@ import numpy as np
 from scipy import ndimage
 
 from vasohm.arrays import Float32Array, FloatArray, IntArray, freeze
+from vasohm.image.blocks import filtered
 from vasohm.image.prepare import PreparedImage
 from vasohm.network.graph import JUNCTION_RADII, NodeKind, VesselGraph, end_radius
 from vasohm.network.paths import arc_length, offsets_of
@@ -18,6 +19,7 @@ SIDEWAYS_PX = (-0.7, 0.0, 0.7)  # a skeleton lies up to so far off the axis
 CORE_RADII = 0.6  # of the thinner vessel: the disc in which the overlap is looked at
 CORE_SHIFTS_PX = ((0.0, 0.0), (1.0, 0.0), (-1.0, 0.0), (0.0, 1.0), (0.0, -1.0))
 SMOOTHING_PX = 0.7
+SMOOTHING_REACH_PX = 4
 LEAST_LIGHT = 0.02  # share of light below which a dark vessel's density is only noise
 LEAST_EXCESS, LARGEST_EXCESS = -0.6, 1.2  # beyond these a place tells no more
 LEAST_DEPTH = 1e-6
@@ -216,9 +218,12 @@ def look_at_overlaps(meetings: Meetings, arms: Arms, prepared: PreparedImage) ->
     -----
     Depth is a bright vessel's light, or a dark one's optical density: in these, vessels that lie over each other add.
     """
-    light = prepared.signal
-    depth_of = -np.log(np.maximum(1 - light, LEAST_LIGHT)) if prepared.polarity == "dark" else light
-    smooth = ndimage.gaussian_filter(depth_of, SMOOTHING_PX, mode="nearest")
+
+    def smooth_depth(light: Float32Array) -> Float32Array:
+        depth_of = -np.log(np.maximum(1 - light, LEAST_LIGHT)) if prepared.polarity == "dark" else light
+        return np.asarray(ndimage.gaussian_filter(depth_of, SMOOTHING_PX, mode="nearest"))
+
+    smooth = filtered(prepared.signal, smooth_depth, SMOOTHING_REACH_PX)
     ends = meetings.ends
     x, y, towards = arms.x_px[ends], arms.y_px[ends], arms.towards[ends][:, :, None, :]
     beside = [_sample(smooth, x - t * towards[..., 1], y + t * towards[..., 0]).mean(axis=2) for t in SIDEWAYS_PX]

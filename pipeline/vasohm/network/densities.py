@@ -7,9 +7,13 @@ from scipy import ndimage
 
 from vasohm.arrays import AnyArray, BoolArray, FloatArray, IntArray, freeze
 from vasohm.flags import Flag
+from vasohm.image.blocks import blocks_of, enlarged, is_on_disk, on_disk, release
 
 BOXES_ACROSS = 4  # larger boxes are all occupied
 LEAST_EDGES = 3  # that a line through box counts needs
+AROUND_RADII = 6.0  # of the largest empty circle: the avascular area around it is looked for so far, then further
+BLOCK_PX = 2048  # of pictures on disk
+ROWS_AT_ONCE = 512
 STEPS_A_BOX = 4  # boxes wider than this glide by a quarter of their edge
 QUANTILES = (0.05, 0.5, 0.95)
 
@@ -111,19 +115,41 @@ def describe_filling(
 def _nearest(vessels: BoolArray, fov: BoolArray) -> tuple[IntArray, BoolArray]:
     """Squared distance (h, w) of each pixel to the nearest vessel or end of the field; whether that is a vessel.
 
-    One row and column around the picture count as beyond the field.
+    One row and column around the picture count as beyond the field. A picture on disk is looked at in blocks, each with
+    so much around it that no pixel of its own is further away from a vessel.
     """
-    height, width = fov.shape
-    free, target = (np.zeros((height + 2, width + 2), dtype=bool) for _ in range(2))
-    free[1:-1, 1:-1], target[1:-1, 1:-1] = fov & ~vessels, vessels
+    if not is_on_disk(fov):
+        return _nearest_in(vessels, fov, (slice(0, fov.shape[0]), slice(0, fov.shape[1])))
+    squared, seen = on_disk(fov.shape, np.int32), on_disk(fov.shape, np.bool_)
+    for core_block in blocks_of(fov.shape, BLOCK_PX, 0):
+        halo = BLOCK_PX // 8
+        while True:
+            block = enlarged(core_block, halo, fov.shape)
+            near, told = _nearest_in(vessels, fov, block.window)
+            if float(near[block.inner].max()) < halo**2 or block.window == tuple(slice(0, n) for n in fov.shape):
+                break
+            halo *= 2
+        squared[block.core], seen[block.core] = near[block.inner], told[block.inner]
+        release(squared, seen, fov)
+    return squared, seen
+
+
+def _nearest_in(vessels: BoolArray, fov: BoolArray, window: tuple[slice, slice]) -> tuple[IntArray, BoolArray]:
+    """Do so within a window of the picture; what lies beyond it is left out."""
+    pads = [(int(part.start == 0), int(part.stop == n)) for part, n in zip(window, fov.shape, strict=True)]
+    target = np.pad(vessels[window], pads)
+    free = np.pad(fov[window] & ~vessels[window], pads)
+    if free.all():  # nothing to measure a distance to
+        return np.full(fov[window].shape, np.iinfo(np.int32).max, np.int32), np.zeros(fov[window].shape, dtype=bool)
     row, column = ndimage.distance_transform_edt(free, return_distances=False, return_indices=True)
-    seen = np.take(target, row * np.int32(width + 2) + column)
-    row -= np.arange(height + 2, dtype=np.int32)[:, None]
-    column -= np.arange(width + 2, dtype=np.int32)[None, :]
+    seen = np.take(target, row * np.int32(free.shape[1]) + column)
+    row -= np.arange(free.shape[0], dtype=np.int32)[:, None]
+    column -= np.arange(free.shape[1], dtype=np.int32)[None, :]
     row *= row
     column *= column
     row += column
-    return row[1:-1, 1:-1], seen[1:-1, 1:-1]
+    inner = tuple(slice(before, n - after) for (before, after), n in zip(pads, free.shape, strict=True))
+    return row[inner], seen[inner]
 
 
 def tissue_distances(
@@ -144,18 +170,24 @@ def tissue_distances(
     Baddeley A, Gill RD (1997) Kaplan-Meier estimators of distance distributions for spatial point processes. Ann Stat
     25:263-292, doi:10.1214/aos/1034276629.
     """
-    tissue = fov & ~vessels
-    if not vessels.any() or not tissue.any():
+    if not vessels.any():
         return NO_DISTANCES
-    squared, told = squared_px2[tissue], seen[tissue]
-    counts = np.bincount(squared)
-    events = np.bincount(squared[told], minlength=len(counts))
+    counts, events = np.zeros((2, int(squared_px2.max(initial=0)) + 1), dtype=np.int64)
+    for top in range(0, len(fov), ROWS_AT_ONCE):
+        rows = slice(top, top + ROWS_AT_ONCE)
+        tissue = fov[rows] & ~vessels[rows]
+        squared = squared_px2[rows][tissue]
+        counts += np.bincount(squared, minlength=len(counts))
+        events += np.bincount(squared[seen[rows][tissue]], minlength=len(counts))
+        release(fov, squared_px2, seen)
+    if not counts.any():
+        return NO_DISTANCES
     at = np.flatnonzero(counts)
     counts, events = counts[at], events[at]
     at_risk = np.cumsum(counts[::-1])[::-1]
     survival = np.cumprod(1.0 - events / at_risk)
     upto, unseen = 1.0 - survival, float(survival[-1])
-    if not told.any():
+    if not events.any():
         return replace(NO_DISTANCES, unseen=unseen, flags=Flag.TISSUE_UNSEEN)
     part = -np.diff(survival, prepend=1.0)
     part[-1] += unseen
@@ -178,27 +210,50 @@ def avascular_area(squared_px2: IntArray, vessels: BoolArray, fov: BoolArray, pi
     gap between vessels that is narrower than that circle's radius. In mathematical terms the opening of the tissue by
     that disc, and of it the part around the circle (of equal circles the first in the order of rows).
     """
-    tissue = fov & ~vessels
-    if not vessels.any() or not tissue.any():
+    centre = int(np.argmax(squared_px2))
+    most = float(squared_px2.flat[centre])
+    if not vessels.any() or most == 0:
         return NO_AVASCULAR_AREA
-    squared = np.where(tissue, squared_px2, 0)
-    centre = int(np.argmax(squared))
-    most = float(squared.flat[centre])
-    core = squared > most / 4
-    label, _ = ndimage.label(core)
-    core = label == label.flat[centre]
+    centre_y, centre_x = divmod(centre, fov.shape[1])
     reach = int(np.ceil(np.sqrt(most) / 2)) + 1
+    look = int(AROUND_RADII * np.sqrt(most)) + 1
+    while True:
+        seen, inner = _around((centre_y, centre_x), look, fov.shape)
+        label, _ = ndimage.label(squared_px2[seen] > most / 4)
+        core = label == label[inner]
+        if not _comes_near_border(core, reach, seen, fov.shape):
+            break
+        look *= 2
     rows, columns = np.flatnonzero(core.any(axis=1)), np.flatnonzero(core.any(axis=0))
     top, left = max(rows[0] - reach, 0), max(columns[0] - reach, 0)
     window = (slice(top, rows[-1] + reach + 1), slice(left, columns[-1] + reach + 1))
     away = ndimage.distance_transform_edt(~core[window])
-    reached = (away <= np.sqrt(most) / 2) & tissue[window]
+    reached = (away <= np.sqrt(most) / 2) & (fov[seen] & ~vessels[seen])[window]
+    top, left = top + seen[0].start, left + seen[1].start
+    release(squared_px2)
     y, x = np.nonzero(reached)
     return AvascularArea(
         area_um2=float(len(y) * pixel_size_um**2),
         radius_um=float((np.sqrt(most) - 0.5) * pixel_size_um),
         x_px=float(x.mean() + left),
         y_px=float(y.mean() + top),
+    )
+
+
+def _around(at: tuple[int, int], reach: int, shape: tuple[int, ...]) -> tuple[tuple[slice, slice], tuple[int, int]]:
+    """Window of a picture around a pixel, and where in it that is."""
+    rows, columns = (slice(max(k - reach, 0), min(k + reach + 1, n)) for k, n in zip(at, shape, strict=True))
+    return (rows, columns), (at[0] - rows.start, at[1] - columns.start)
+
+
+def _comes_near_border(core: BoolArray, reach: int, window: tuple[slice, slice], shape: tuple[int, ...]) -> bool:
+    """Whether a piece comes within `reach` of a border of its window that is none of the picture."""
+    rows, columns = window
+    return bool(
+        (rows.start > 0 and core[:reach].any())
+        or (rows.stop < shape[0] and core[-reach:].any())
+        or (columns.start > 0 and core[:, :reach].any())
+        or (columns.stop < shape[1] and core[:, -reach:].any())
     )
 
 
@@ -253,9 +308,12 @@ def _double(sums: AnyArray, edge: int) -> AnyArray:
 
 
 def _lacunarity(mass: AnyArray, whole: BoolArray) -> float:
-    held = (mass * whole).astype(float).ravel()
-    total = held.sum()
-    return float(np.count_nonzero(whole) * (held @ held) / total**2) if total > 0 else np.nan
+    total = squares = 0.0
+    for top in range(0, len(mass), ROWS_AT_ONCE):
+        held = (mass[top : top + ROWS_AT_ONCE] * whole[top : top + ROWS_AT_ONCE]).astype(float).ravel()
+        total += float(held.sum())
+        squares += float(held @ held)
+    return float(np.count_nonzero(whole) * squares / total**2) if total > 0 else np.nan
 
 
 def fit_dimension(scales: Scales) -> BoxDimension:

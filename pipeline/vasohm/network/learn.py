@@ -74,6 +74,7 @@ class ImageKnowledge:
     table: ProfileTable
     covariance: FloatArray  # of ln blur, ln absorption
     contrast: ContrastPrior
+    contrasts: KnownContrasts  # what that prior is made of
     reflex: tuple[float, float] | None  # mean height in all vessels, and its spread; None where there is none
     profile_se: float  # of ln r: that another family may be right
     flags: Flag
@@ -115,7 +116,15 @@ def learn_image(scene: Scene, guess: Guess, table: ProfileTable, settings: TubeS
         profile_se = max(profile_se, PROFILE_SE if told.optics.family == "cylinder" else 0.0)
     if told.optics.family == "absorber":
         profile_se = float(np.hypot(profile_se, FORM_SE))
-    return ImageKnowledge(table_like(full, told.optics), told.covariance, prior, common, profile_se, flags)
+    return ImageKnowledge(table_like(full, told.optics), told.covariance, prior, known, common, profile_se, flags)
+
+
+def recall_image(
+    told: ImageKnowledge, lines: TubeLines, guess: Guess, table: ProfileTable, classes: IntArray
+) -> ImageKnowledge:
+    """Bring what was learnt from another part of the picture to these lines; `classes` are all that there are."""
+    prior = learn_contrast(told.contrasts, lines.vessel_class, mean_contrast(lines, guess), classes)
+    return replace(told, table=table_like(table, told.table.optics), contrast=prior)
 
 
 def _pooled_strips(
@@ -240,7 +249,7 @@ def _nothing_learnt(lines: TubeLines, guess: Guess, table: ProfileTable, setting
     nobody = KnownContrasts(np.zeros(0, np.int64), np.zeros(0), np.zeros(0), np.zeros((0, len(variances))))
     prior = learn_contrast(nobody, lines.vessel_class, mean_contrast(lines, guess))
     profile_se = PROFILE_SE if settings.profile == "auto" else 0.0
-    return ImageKnowledge(table, np.diag(variances), prior, None, profile_se, flags)
+    return ImageKnowledge(table, np.diag(variances), prior, nobody, None, profile_se, flags)
 
 
 def mean_contrast(lines: TubeLines, guess: Guess) -> FloatArray:

@@ -9,6 +9,7 @@ from vasohm.arrays import FloatArray, IntArray, freeze
 from vasohm.flags import Flag
 from vasohm.image.prepare import PreparedImage
 from vasohm.network.graph import NodeKind, VesselGraph
+from vasohm.network.grouped import fit_in_groups
 from vasohm.network.learn import TubeSettings
 from vasohm.network.paths import offsets_of, owner, position
 from vasohm.network.strips import TubeLines
@@ -88,7 +89,13 @@ def fit_lumens(graph: VesselGraph, prepared: PreparedImage, settings: RadiusSett
         graph.node_a,
         graph.node_b,
     )
-    found = fit_tubes(image, lines, TubeSettings(settings.profile, settings.blur_px, dark=prepared.polarity == "dark"))
+    asked = TubeSettings(settings.profile, settings.blur_px, dark=prepared.polarity == "dark")
+    covariance: RadiusCovariance
+    if prepared.block_px:
+        found, covariance = fit_in_groups(image, lines, asked)
+    else:
+        found = fit_tubes(image, lines, asked)
+        covariance = found.covariance
     source = np.searchsorted(fitted, np.arange(graph.n_points))
     segment = owner(graph.offsets)
     source = np.clip(source, offsets[segment], offsets[segment + 1] - 1)
@@ -101,7 +108,7 @@ def fit_lumens(graph: VesselGraph, prepared: PreparedImage, settings: RadiusSett
         point_flags=found.point_flags[source] | np.where(outside, int(Flag.INFERRED), 0),
         shared=found.shared[source],
         shared_causes=found.shared_causes,
-        covariance=DrawnCovariance(found.covariance, len(fitted), source, np.ones(graph.n_points)),
+        covariance=DrawnCovariance(covariance, len(fitted), source, np.ones(graph.n_points)),
         noise_sign=1,
         blur_px=found.blur_px,
         blur_se_px=found.blur_se_px,

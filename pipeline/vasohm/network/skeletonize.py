@@ -7,7 +7,8 @@ from scipy import ndimage
 from skimage import morphology
 
 from vasohm.arrays import BoolArray, Float32Array, IntArray, freeze
-from vasohm.image.prepare import PreparedImage
+from vasohm.image.blocks import on_disk, release, working_blocks
+from vasohm.image.prepare import PreparedImage, crop
 from vasohm.image.segment import GIVEN, VesselMask
 from vasohm.network.attach import attach_ends
 from vasohm.network.bridges import unseen_pixels
@@ -33,6 +34,7 @@ class Skeleton:
         freeze(self)
 
 
+WIDEST_PX = 40.0  # of the vessels of a large picture whose centre lines do not depend on how it is cut into blocks
 PRUNING_ROUNDS = 3  # a spur on a spur needs a second look; more never changed a picture in trials
 
 
@@ -46,6 +48,8 @@ def skeletonize(mask: VesselMask, prepared: PreparedImage, settings: Skeletonize
         bridges background or follows an edge.
     settings : how long a spur may be.
     """
+    if prepared.block_px:
+        return _in_blocks(mask, prepared, settings)
     distance = ndimage.distance_transform_edt(np.pad(mask.pixels, 1))[1:-1, 1:-1].astype(np.float32)
     pixels = _thin(mask.pixels, distance, settings)
     if mask.source == GIVEN:
@@ -59,6 +63,20 @@ def skeletonize(mask: VesselMask, prepared: PreparedImage, settings: Skeletonize
         pixels = pixels.copy()
         pixels[traced.row[unseen], traced.column[unseen]] = False
         pixels = _pruned(pixels, distance, settings)
+    return Skeleton(pixels, distance)
+
+
+def _in_blocks(mask: VesselMask, prepared: PreparedImage, settings: SkeletonizeSettings) -> Skeleton:
+    """Thin a large mask block by block: what a pixel becomes is settled within a few widths of its vessel."""
+    shape = prepared.fov.shape
+    pixels, distance = on_disk(shape, np.bool_), on_disk(shape, np.float32)
+    for block in working_blocks(shape, prepared.block_px, WIDEST_PX):
+        inside = np.array(mask.pixels[block.window])
+        if inside.any():
+            piece = skeletonize(VesselMask(inside, mask.source), crop(prepared, block.window), settings)
+            pixels[block.core] = piece.pixels[block.inner]
+            distance[block.core] = piece.distance_px[block.inner]
+        release(mask.pixels, pixels, distance)
     return Skeleton(pixels, distance)
 
 

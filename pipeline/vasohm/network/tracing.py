@@ -84,15 +84,20 @@ def select_paths(traced: Trace, keep: BoolArray) -> Trace:
 
 def _links(skeleton: BoolArray, row: IntArray, column: IntArray) -> tuple[IntArray, IntArray]:
     """Pairs of linked pixels, as indices into the list of pixels."""
-    height, width = skeleton.shape
-    index = np.full((height + 2, width + 2), -1, dtype=np.int64)
-    index[row + 1, column + 1] = np.arange(len(row))
+    stride = skeleton.shape[1] + 2
+    place = (row + 1) * stride + column + 1  # ascending, with a free pixel all around the picture
+
+    def at(down: int, right: int) -> IntArray:
+        wanted = place + (down * stride + right)
+        found = np.minimum(np.searchsorted(place, wanted), len(place) - 1)
+        return np.where(place[found] == wanted, found, -1)
+
     pairs = []
     for down, right in ((0, 1), (1, 0), (1, 1), (1, -1)):
-        other = index[row + 1 + down, column + 1 + right]
+        other = at(down, right)
         linked = other >= 0
         if down and right:
-            linked &= (index[row + 1, column + 1 + right] < 0) & (index[row + 1 + down, column + 1] < 0)
+            linked &= (at(0, right) < 0) & (at(down, 0) < 0)
         pairs.append((np.nonzero(linked)[0], other[linked]))
     return np.concatenate([a for a, _ in pairs]), np.concatenate([b for _, b in pairs])
 

@@ -38,6 +38,7 @@ from vasohm.network.learn import (
     expected_reflex,
     first_unknowns,
     learn_image,
+    recall_image,
     segment_mean,
     wide_segments,
 )
@@ -112,7 +113,17 @@ class TubeFit:
         freeze(self)
 
 
-def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> TubeFit:
+@dataclass(frozen=True, slots=True, eq=False)
+class Told:
+    """What some part of a large picture tells of all of it."""
+
+    known: ImageKnowledge
+    covariance: FloatArray  # of pixels of noise by squared distance
+    cnr: float
+    classes: IntArray  # of vessels that there are in the whole picture
+
+
+def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings, told: Told | None = None) -> TubeFit:
     """Measure the radius at every point of every line.
 
     Parameters
@@ -120,6 +131,7 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
     image : signal proportional to what the vessel does to the light (dark vessels: 1 - I / background).
     lines : smoothed centrelines, points about 1 px apart, up to .3 px off the axis.
     settings : profile and blur where the study says them.
+    told : what is known of the whole picture, where this is a part of it; None: this picture tells.
 
     Returns
     -------
@@ -132,16 +144,10 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
     """
     if lines.n_points == 0:
         return _no_tubes(settings)
-    scene, table = _open(image, lines, settings)
-    windows = average_strips(scene.picture, scene.frame, lines, table, scene.owners)
-    guess = guess_radii(windows, scene.frame, lines, table)
-    scene, known = _sharp(image, scene, learn_image(scene, guess, table, settings))
-    if abs(np.log(known.table.optics.s_px / table.optics.s_px)) > OTHER_BLUR:
-        windows = average_strips(scene.picture, scene.frame, lines, known.table, scene.owners)
-    theta = _start(scene, guess_radii(windows, scene.frame, lines, known.table), known)
+    scene, _, known, theta = _begin(image, lines, settings, told)
     reach = np.exp(theta[:, LN_R]) + NEIGHBOUR_BLURS * known.table.optics.s_px
-    cnr, contrast_sd = _typical_cnr(scene, theta, known.table.optics), float(np.median(known.contrast.spread))
-    noise = noise_factor(known.table, scene.covariance, cnr, contrast_sd)
+    cnr = _typical_cnr(scene, theta, known.table.optics) if told is None else told.cnr
+    noise = noise_factor(known.table, scene.covariance, cnr, float(np.median(known.contrast.spread)))
     scene = replace(scene, owners=paint_owners(scene.frame, reach, scene.shape), noise=noise)
     everything = np.arange(lines.n_segments)
     theta = _near(scene, everything, theta, known)
@@ -156,10 +162,33 @@ def fit_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> Tub
     return _report(scene, observed, known, (theta, priors, normal), doubt)
 
 
+def learn_tubes(image: TubeImage, lines: TubeLines, settings: TubeSettings, classes: IntArray) -> Told:
+    """Ask some part of a large picture, with at least one line, what all of it shares; as `fit_tubes`."""
+    scene, learnt, known, theta = _begin(image, lines, settings, None)
+    return Told(learnt, scene.covariance, _typical_cnr(scene, theta, known.table.optics), classes)
+
+
+def _begin(
+    image: TubeImage, lines: TubeLines, settings: TubeSettings, told: Told | None
+) -> tuple[Scene, ImageKnowledge, ImageKnowledge, FloatArray]:
+    """Return the scene, what the picture tells, the same as meant for the scene's sampling, and first unknowns."""
+    scene, table = _open(image, lines, settings, told)
+    windows = average_strips(scene.picture, scene.frame, lines, table, scene.owners)
+    guess = guess_radii(windows, scene.frame, lines, table)
+    if told is None:
+        learnt = learn_image(scene, guess, table, settings)
+    else:
+        learnt = recall_image(told.known, lines, guess, table, told.classes)
+    scene, known = _sharp(image, scene, learnt)
+    if abs(np.log(known.table.optics.s_px / table.optics.s_px)) > OTHER_BLUR:
+        windows = average_strips(scene.picture, scene.frame, lines, known.table, scene.owners)
+    return scene, learnt, known, _start(scene, guess_radii(windows, scene.frame, lines, known.table), known)
+
+
 # --- what the picture tells -----------------------------------------------------------------------------------------
 
 
-def _open(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> tuple[Scene, ProfileTable]:
+def _open(image: TubeImage, lines: TubeLines, settings: TubeSettings, told: Told | None) -> tuple[Scene, ProfileTable]:
     """Prepare picture and noise, and a table for first guesses that serves all radii to come."""
     frame = make_frame(lines.x_px, lines.y_px, lines.offsets)
     family = "cylinder" if settings.profile == "auto" else settings.profile
@@ -171,8 +200,11 @@ def _open(image: TubeImage, lines: TubeLines, settings: TubeSettings) -> tuple[S
     shape = (image.signal.shape[0], image.signal.shape[1])
     picture = make_picture(image.signal, image.noise_sd, image.valid, image.clipped)
     owners = paint_owners(frame, 1.5 * lines.seed_radius_px + 3 * blur, shape)
-    free = (owners[0].reshape(shape) < 0) & (picture.precision > 0)
-    covariance = noise_correlation(image.signal, image.noise_sd, free)
+    if told is None:
+        free = (owners[0].reshape(shape) < 0) & (picture.precision > 0)
+        covariance = noise_correlation(image.signal, image.noise_sd, free)
+    else:
+        covariance = told.covariance
     noise = noise_factor(table, covariance, USUAL_CNR * float(np.sqrt(covariance[0])), FREE_SPREAD)
     return Scene(picture, lines, frame, owners, covariance, noise), table
 

@@ -8,14 +8,14 @@ import re
 import secrets
 import shutil
 import time
-from collections.abc import Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import IO, Any
 
 from vasohm.results.column import Column
 from vasohm.results.columns_images import DISC
-from vasohm.results.encode import frame_bytes, graphml_bytes, json_bytes, mask_bytes
+from vasohm.results.encode import frame_pieces, graphml_bytes, json_bytes, mask_bytes
 from vasohm.results.image_page import image_page
 from vasohm.results.overlay import ColourBy, draw_overlay
 from vasohm.results.schema import COLUMNS, OWN_IMAGE_NAMES, SCHEMA_VERSION, image_columns
@@ -33,9 +33,9 @@ IMAGE_FILES = frozenset(
 
 @dataclass(frozen=True, slots=True)
 class EncodedFile:
-    """A file's bytes; `rows` is None where it is no table."""
+    """A file's bytes, piece by piece as they are wanted; `rows` is None where it is no table."""
 
-    content: bytes
+    pieces: Iterable[bytes]
     rows: int | None = None
 
 
@@ -82,25 +82,24 @@ def write_image(
     OSError : the folder cannot be written; nothing of it is left half done under its own name.
     ValueError : a key of `record` is one of our own, or a value that JSON cannot hold.
     """
-    files = _encode(tables, colour if overlay else None)
-    own = {
+    own: dict[str, Any] = {
         "schema_version": SCHEMA_VERSION,
         "image_id": tables.image_id,
         "status": tables.status,
         "notes": tables.notes,
-        "files": {name: _fingerprint(file) for name, file in files.items()},
+        "files": {},
     }
     taken = sorted(own.keys() & record.keys())
     if taken:
         msg = f"record of image {tables.image_id}: keys {', '.join(taken)} are written here; give them other names."
         raise ValueError(msg)
-    files[RECORD] = EncodedFile(json_bytes({**own, **record}))
     folder.parent.mkdir(exist_ok=True)
     partial = folder.with_name(f".{folder.name}.{tag()}{PARTIAL_SUFFIX}")
     partial.mkdir()
     try:
-        for name, file in files.items():
-            _write_durably(partial / name, file.content)
+        for name, file in _encode(tables, colour if overlay else None):
+            own["files"][name] = _write_pieces(partial / name, file)
+        _write_durably(partial / RECORD, json_bytes({**own, **record}))
         _sync_folder(partial)
         _put_folder(partial, folder)
     finally:
@@ -150,21 +149,19 @@ def remove_partials(parent: Path, name: str = "") -> None:
             path.unlink(missing_ok=True)
 
 
-def _encode(tables: ImageTables, colour: ColourBy | None) -> dict[str, EncodedFile]:
-    """Make the bytes of every file but the record."""
-    files = {}
+def _encode(tables: ImageTables, colour: ColourBy | None) -> Iterator[tuple[str, EncodedFile]]:
+    """Make every file but the record, one at a time: all at once would need more memory than the measurement."""
     for table, frame in tables.tables.items():
         if table == "scenarios" and frame.empty:
             continue
         columns = _image_table_columns(tables) if table == "image" else COLUMNS[table]
-        files[f"{table}.csv"] = EncodedFile(frame_bytes(frame, columns), len(frame))
-    files["graph.graphml"] = EncodedFile(graphml_bytes(tables.graph))
-    files["mask.tif"] = EncodedFile(mask_bytes(tables.mask, tables.pixel_size_um))
-    files["fov.tif"] = EncodedFile(mask_bytes(tables.fov, tables.pixel_size_um))
+        yield f"{table}.csv", EncodedFile(frame_pieces(frame, columns), len(frame))
+    yield "graph.graphml", EncodedFile([graphml_bytes(tables.graph)])
+    yield "mask.tif", EncodedFile([mask_bytes(tables.mask, tables.pixel_size_um)])
+    yield "fov.tif", EncodedFile([mask_bytes(tables.fov, tables.pixel_size_um)])
     if colour is not None:
-        files["overlay.png"] = EncodedFile(draw_overlay(tables, colour))
-    files["index.html"] = EncodedFile(image_page(tables, colour).encode())
-    return files
+        yield "overlay.png", EncodedFile([draw_overlay(tables, colour)])
+    yield "index.html", EncodedFile([image_page(tables, colour).encode()])
 
 
 def _image_table_columns(tables: ImageTables) -> tuple[Column, ...]:
@@ -172,8 +169,16 @@ def _image_table_columns(tables: ImageTables) -> tuple[Column, ...]:
     return image_columns(carried, with_disc=DISC[0].name in tables.image)
 
 
-def _fingerprint(file: EncodedFile) -> dict[str, Any]:
-    held: dict[str, Any] = {"sha256": hashlib.sha256(file.content).hexdigest(), "bytes": len(file.content)}
+def _write_pieces(path: Path, file: EncodedFile) -> dict[str, Any]:
+    """Write a file and return what the record says of it."""
+    digest, n_bytes = hashlib.sha256(), 0
+    with path.open("xb") as stream:
+        for piece in file.pieces:
+            stream.write(piece)
+            digest.update(piece)
+            n_bytes += len(piece)
+        sync_file(stream)
+    held: dict[str, Any] = {"sha256": digest.hexdigest(), "bytes": n_bytes}
     if file.rows is not None:
         held["rows"] = file.rows
     return held

@@ -15,7 +15,7 @@ from vasohm.flow.rheology import HIGHEST_HEMATOCRIT
 from vasohm.image.calibrate import TypedScale
 from vasohm.image.disc import OpticDisc
 from vasohm.image.eye import Eye
-from vasohm.image.read import RawImage, read_image
+from vasohm.image.read import RawImage, in_blocks, read_image
 from vasohm.pipeline import measure_pixels
 from vasohm.results.tables import ImageTables
 
@@ -105,7 +105,10 @@ def measure_image(  # noqa: PLR0913  one keyword a column of the sheet and a sec
         hematocrit=hematocrit,
         design={"subject": subject, "eye": eye, "group": group, "condition": condition, "time": time},
     )
-    raw = read_image(source.file, settings.read) if isinstance(image, str | Path) else _from_array(image)
+    if isinstance(image, str | Path):
+        raw = read_image(source.file, settings.read)
+    else:
+        raw = in_blocks(_from_array(image), settings.read.block_megapixels)
     return measure_pixels(raw, source, settings, lambda _: None)
 
 

@@ -65,6 +65,9 @@ LEAST_SHAPED = 0.38  # of the length of a piece: where less looks like a vessel,
 # Of the thin vessels' median, and how it grows with width (a projected tube's: 1)
 WIDE_CONTRAST, WIDE_CONTRAST_POWER = 0.4, 0.5
 LEAST_LENGTH_RADII = 4.0  # a vessel is longer than it is wide
+# What blocks of a large picture share, among their parameters
+NOISE_RATIO, FINE_TEXTURE, WIDE_TEXTURE = "noise_ratio", "fine_texture", "wide_texture"
+THIN_RADIUS, THIN_CONTRAST = "thin_radius_px", "thin_contrast"
 REACH_SIGMAS = 3.0
 REACH_EXTRA_PX = 3.0
 
@@ -82,29 +85,52 @@ def segment_ridges(prepared: PreparedImage, parameters: Mapping[str, float]) -> 
     -------
     (h, w) bool mask.
     """
+    return _find(prepared, parameters)[0]
+
+
+def learn_ridges(prepared: PreparedImage, parameters: Mapping[str, float]) -> Mapping[str, float]:
+    """Read from one block of a large picture what its other blocks should share: noise, texture, thin vessels."""
+    return _find(prepared, parameters)[1]
+
+
+def _find(prepared: PreparedImage, parameters: Mapping[str, float]) -> tuple[BoolArray, Mapping[str, float]]:
+    """Find vessels; what `parameters` does not know of the whole picture yet is read from this one, and returned."""
     even = prepared.signal / np.maximum(prepared.noise_sd, np.float32(1e-30))
     stack = bank.pyramid(even, bank.levels_for(parameters["radius_hi_px"], even.shape))
     responses = list(bank.respond(stack))
     false_px = parameters["false_alarms_per_mpx"]
-    smooth = max(1.0, float(np.median(responses[1].unit) / np.median(responses[0].unit))) ** SMOOTH_POWER
+    noise_ratio = parameters.get(NOISE_RATIO, float(np.median(responses[1].unit) / np.median(responses[0].unit)))
+    smooth = max(1.0, noise_ratio) ** SMOOTH_POWER
     widths = (NARROWEST_RATIO * parameters["radius_lo_px"], WIDEST_RATIO * parameters["radius_hi_px"])
     field = Field.of(prepared.fov)
     fine = [r for r in responses if r.sigma_px <= WIDE_SIGMA_PX]
     wide = [r for r in responses if r.sigma_px >= WIDE_SIGMA_PX]
-    limits = (smooth * _least_excess(FINE_EXCESS, false_px), *widths)
+    limits = Limits(smooth * _least_excess(FINE_EXCESS, false_px), *widths, parameters.get(FINE_TEXTURE))
     thin_vessels = _find_group(merge_scales(fine), stack, field, limits, None)
     mask = _painted(even.shape, thin_vessels)
+    told = {NOISE_RATIO: noise_ratio, FINE_TEXTURE: thin_vessels.texture, **thin_vessels.typical()}
     if len(wide) > 1:
         found = merge_scales(wide)
-        seen = Seen(_fine_contrast(fine, found), thin_vessels)
-        mask |= _painted(
-            even.shape, _find_group(found, stack, field, (_least_excess(WIDE_EXCESS, false_px), *widths), seen)
-        )
+        seen = Seen(_fine_contrast(fine, found), {**told, **parameters})
+        limits = Limits(_least_excess(WIDE_EXCESS, false_px), *widths, parameters.get(WIDE_TEXTURE))
+        wide_vessels = _find_group(found, stack, field, limits, seen)
+        mask |= _painted(even.shape, wide_vessels)
+        told[WIDE_TEXTURE] = wide_vessels.texture
     mask &= prepared.fov
     mask = ndimage.binary_closing(mask, structure=np.ones((3, 3), dtype=bool)) & prepared.fov
     narrow, wide_px = sorted(mask.shape)
     across = STRIP_WIDTHS * narrow if wide_px > STRIP_SHAPE * narrow else 0.0
-    return _without_small(mask, max(LEAST_ALONE_PX * thin_vessels.texture, across))
+    return _without_small(mask, max(LEAST_ALONE_PX * thin_vessels.texture, across)), told
+
+
+@dataclass(frozen=True, slots=True)
+class Limits:
+    """What is asked of a line: summed excess, half width, and how much more excess where the picture has texture."""
+
+    excess: float
+    smallest_px: float
+    largest_px: float
+    texture: float | None  # None: this picture is asked
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -138,13 +164,19 @@ class Vessels:
     def __post_init__(self) -> None:
         freeze(self)
 
+    def typical(self) -> dict[str, float]:
+        """Medians of radius and contrast; NaN where there is no vessel."""
+        n = len(self.radius_px)
+        radius, contrast = (float(np.median(v)) if n else np.nan for v in (self.radius_px, self.contrast))
+        return {THIN_RADIUS: radius, THIN_CONTRAST: contrast}
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Seen:
     """What the fine scales know when the wide ones are searched."""
 
     contrast: Float32Array  # greatest of fine scales, on the wide group's grid
-    vessels: Vessels
+    told: Mapping[str, float]  # of the whole picture
 
 
 def _least_excess(noise: tuple[float, float], false_px: float) -> float:
@@ -213,19 +245,17 @@ def _find_group(
     found: Strength,
     stack: list[Float32Array],
     field: Field,
-    limits: tuple[float, float, float],
+    limits: Limits,
     seen: Seen | None,
 ) -> Vessels:
-    """Ridge lines of one group of scales, checked on their own profiles.
-
-    `limits` are the least summed excess of a line and the smallest and largest half width of a vessel.
-    """
-    limit, smallest_px, largest_px = limits
+    """Ridge lines of one group of scales, checked on their own profiles."""
     factor = 2**found.level
     image = ndimage.gaussian_filter(stack[found.level], 0.7)
     lines = ridge_lines(found.bright, found, field.inside[::factor, ::factor])
-    texture = _texture_factor(found, lines, field.inside[::factor, ::factor], limit)
-    lines = lines.keep(summed_excess(lines)[lines.line] >= texture * limit)
+    texture = limits.texture
+    if texture is None:
+        texture = _texture_factor(found, lines, field.inside[::factor, ::factor], limits.excess)
+    lines = lines.keep(summed_excess(lines)[lines.line] >= texture * limits.excess)
     reach = REACH_SIGMAS * lines.sigma_px / factor + REACH_EXTRA_PX
     pairs = neighbours(image.shape, lines.row, lines.column)
     ribbon = measure_ribbons(image, _on_grid(lines, factor), pairs, reach)
@@ -235,9 +265,9 @@ def _find_group(
     if seen is not None:
         own = np.sqrt(np.maximum(width**2 - (BLUR_HALF_WIDTHS * factor) ** 2, 0))
         thin = _seen_finer(lines, found, seen.contrast) | (own < BUNDLE_SIGMAS * lines.sigma_px)
-        clear = clear & ~thin & (ribbon.contrast >= _least_contrast(width, seen.vessels))
+        clear = clear & ~thin & (ribbon.contrast >= _least_contrast(width, seen.told))
     shaped = ribbon.is_shaped & clear & (ribbon.balance >= (WIDE_BALANCE if seen else 0))
-    good = shaped & (width >= smallest_px) & (width <= np.minimum(largest_px, BLOB_SIGMAS * sigma))
+    good = shaped & (width >= limits.smallest_px) & (width <= np.minimum(limits.largest_px, BLOB_SIGMAS * sigma))
     near_border = field.near_border[::factor, ::factor][lines.row, lines.column]
     good, width = bridge(pairs, good, width, near_border, clear)
     at_rim = field.short_is_shade[::factor, ::factor][lines.row, lines.column]
@@ -246,12 +276,12 @@ def _find_group(
     return Vessels(ribbon.x_px[good] * factor, ribbon.y_px[good] * factor, radius[good], ribbon.contrast[good], texture)
 
 
-def _least_contrast(width_px: FloatArray, thin: Vessels) -> FloatArray:
+def _least_contrast(width_px: FloatArray, told: Mapping[str, float]) -> FloatArray:
     """Contrast below which a wide line is texture: a wide vessel is no fainter than the thin ones of its picture."""
-    if len(thin.contrast) == 0:
+    if np.isnan(told[THIN_RADIUS]):
         return np.zeros(len(width_px))
-    ratio = np.maximum(width_px / np.median(thin.radius_px), 1)
-    return np.asarray(WIDE_CONTRAST * np.median(thin.contrast) * ratio**WIDE_CONTRAST_POWER)
+    ratio = np.maximum(width_px / told[THIN_RADIUS], 1)
+    return np.asarray(WIDE_CONTRAST * told[THIN_CONTRAST] * ratio**WIDE_CONTRAST_POWER)
 
 
 def _holds_together(
