@@ -1,5 +1,6 @@
 """How large a picture is, from its header alone: nothing is decoded and hardly anything is read."""
 
+import warnings
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -7,8 +8,6 @@ from tifffile import TiffFile
 
 from vasohm.image.decode_flat import READERS
 from vasohm.image.read import DICOM_AT, DICOM_MAGIC, MAGIC
-
-LONGEST_MAGIC = 8
 
 
 @dataclass(frozen=True, slots=True)
@@ -34,14 +33,20 @@ def declared_size(path: Path) -> Declared | None:
     if not path.is_file():
         return None
     try:
-        with path.open("rb") as stream:
-            head = stream.read(DICOM_AT + len(DICOM_MAGIC))
-        if head[DICOM_AT:] == DICOM_MAGIC:
-            return _of_dicom(path)
-        kind = next((kind for magic, kind in MAGIC.items() if head.startswith(magic)), "")
-        return _of_tiff(path) if kind == "TIFF" else _of_flat(path, kind)
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")  # they may quote what the header holds
+            return _declared(path)
     except Exception:  # noqa: BLE001  headers raise whatever they like, and the reader says so in words
         return None
+
+
+def _declared(path: Path) -> Declared:
+    with path.open("rb") as stream:
+        head = stream.read(DICOM_AT + len(DICOM_MAGIC))
+    if head[DICOM_AT:] == DICOM_MAGIC:
+        return _of_dicom(path)
+    kind = next((kind for magic, kind in MAGIC.items() if head.startswith(magic)), "")
+    return _of_tiff(path) if kind == "TIFF" else _of_flat(path, kind)
 
 
 def _of_flat(path: Path, kind: str) -> Declared:
