@@ -17,6 +17,7 @@ LAYERS = (
     "flow",
     "results",
     "config",
+    "cohorts",
     "pipeline",
     "study",
     "cli",

@@ -9,7 +9,7 @@ from scipy.spatial import cKDTree
 from skimage.morphology import skeletonize
 
 from vasohm.arrays import BoolArray, FloatArray
-from vasohm.study.matching import LEAST_REACH_PX, REACH_RADII
+from vasohm.cohorts.matching import LEAST_REACH_PX, REACH_RADII
 
 # Half the steps from a pixel of a centreline to its eight neighbours: their sum is the length that it stands for
 _HALF_DIAGONAL = np.sqrt(0.5)

@@ -18,7 +18,7 @@ from vasohm.results.write import write_atomically
 from vasohm.study.annotation import Agreement, agreement
 from vasohm.study.appraise import few, finished_study, read_table, truth_ids
 from vasohm.study.folder import image_folder, probe
-from vasohm.study.matching import track
+from vasohm.cohorts.matching import track
 from vasohm.study.outcome import EMPTY, MEASURED
 
 MASK_SUFFIXES = frozenset((".png", ".tif", ".tiff", ".bmp", ".gif", ".jpg", ".jpeg"))
@@ -156,7 +156,7 @@ def _held_against(folder: Path, path: Path) -> Agreement:
         message = "holds no vessel inside the field of view: all its pixels are 0. Leave it out, or draw the vessels."
         raise RequestError([Problem(file=str(path), message=message)])
     points, segments = (read_table(folder / f"{table}.csv", ours=True) for table in ("points", "segments"))
-    line = track(points, segments, float(image["pixel_size_um"].iloc[0]), true=False)
+    line = track(points, segments, float(image["pixel_size_um"].iloc[0]), reaching=False)
     measured = read_mask(folder / "mask.tif", shape)
     return agreement(measured, drawn, fov, (line.x_px, line.y_px, line.weight_px))
 

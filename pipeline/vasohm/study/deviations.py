@@ -9,7 +9,7 @@ import pandas as pd
 from vasohm.arrays import AnyArray, BoolArray, FloatArray, IntArray
 from vasohm.flow.rheology import Blood
 from vasohm.network.groups import sum_by
-from vasohm.study.matching import LEAST_REACH_PX, Feet, Pieces, Track, feet, pair_places, pieces, track
+from vasohm.cohorts.matching import LEAST_REACH_PX, Feet, Pieces, Track, feet, pair_places, pieces, track
 from vasohm.uncertainty import quadrature
 from vasohm.units import M_PER_UM, PA_S_PER_MPA_S
 
@@ -99,8 +99,8 @@ def deviations(measured: Bed, true: Bed, blood: Blood, hematocrit: float) -> Dev
 
 
 def _match(measured: Bed, true: Bed) -> _Match:
-    a = track(measured.tables["points"], measured.tables["segments"], measured.pixel_size_um, true=False)
-    b = track(true.tables["points"], true.tables["segments"], true.pixel_size_um, true=True)
+    a = track(measured.tables["points"], measured.tables["segments"], measured.pixel_size_um, reaching=False)
+    b = track(true.tables["points"], true.tables["segments"], true.pixel_size_um, reaching=True)
     on_truth = feet(a, b)
     return _Match(a, b, on_truth, pieces(a, on_truth), feet(b, a).found)
 

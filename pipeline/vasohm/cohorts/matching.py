@@ -1,4 +1,4 @@
-"""Which measured place belongs to which true one: by distance and direction, however segments are cut. Arrays only."""
+"""Which place on one set of centrelines belongs to which on another: by distance and direction, however they are cut."""
 
 from dataclasses import dataclass
 from typing import Any
@@ -66,8 +66,11 @@ class Track:
         return along / np.where(length > 0, length, 1.0)[:, None]
 
 
-def track(points: pd.DataFrame, segments: pd.DataFrame, pixel_size_um: float, *, true: bool) -> Track:
-    """Take the centrelines of a table of points; the index of a segment is its row in the table of segments."""
+def track(points: pd.DataFrame, segments: pd.DataFrame, pixel_size_um: float, *, reaching: bool) -> Track:
+    """Take the centrelines of a table of points; the index of a segment is its row in the table of segments.
+
+    `reaching` ones are the same vessel as others within their lumen, the rest only where the others reach them.
+    """
     row = pd.Series(np.arange(len(segments)), index=segments["segment_id"])
     segment = row.reindex(points["segment_id"]).to_numpy(np.int64)
     order = np.lexsort((points["point"].to_numpy(), segment))
@@ -82,7 +85,7 @@ def track(points: pd.DataFrame, segments: pd.DataFrame, pixel_size_um: float, *,
         s_px=column("s_um") / pixel_size_um,
         radius_px=radius_px,
         segment=segment[order],
-        reach_px=np.maximum(LEAST_REACH_PX, REACH_RADII * radius_px) if true else np.zeros(len(order)),
+        reach_px=np.maximum(LEAST_REACH_PX, REACH_RADII * radius_px) if reaching else np.zeros(len(order)),
     )
 
 
@@ -112,7 +115,7 @@ def feet(points: Track, lines: Track) -> Feet:
         Of the length of `points`. A point has none where the nearest place lies out of the reach of both, or where
         the other track has ended before.
     """
-    at = _nearest(points, lines)
+    at = nearest(points, lines)
     n = len(at)
     if not len(lines.segment):
         nothing = np.full(n, np.nan)
@@ -152,7 +155,7 @@ def _on_piece(here: FloatArray, a: FloatArray, b: FloatArray) -> tuple[FloatArra
     return share, here - (a + share[:, None] * along)
 
 
-def _nearest(points: Track, lines: Track) -> IntArray:
+def nearest(points: Track, lines: Track) -> IntArray:
     """Index of the nearest point of `lines` with the direction and within reach; -1 where there is none."""
     found = np.full(len(points.segment), -1)
     n_lines = len(lines.segment)
