@@ -24,6 +24,7 @@ from vasohm_synthetic.tone import retone
 from vasohm_synthetic.trees import Root, grow_trees
 from vasohm_synthetic.truth import truth_tables
 from vasohm_synthetic.tubes import tube_scene
+from vasohm_synthetic.view import look
 
 _GEOMETRY, _PICTURE = 0, 1  # streams of random numbers
 
@@ -52,7 +53,7 @@ def make_phantoms(recipe: Recipe, out_dir: Path) -> tuple[str, ...]:
         picture = draw(recipe, image, scene)
         tables = truth_tables(
             scene,
-            image.pixel_size_um,
+            image.picture_pixel_size_um,
             recipe.blood,
             image_id=image.image_id,
             drive_mmhg=recipe.drive_mmhg,
@@ -86,7 +87,7 @@ def _scenes(recipe: Recipe) -> list[Scene]:
                 if all(a is b for a, b in zip(scene.vessels, toned.vessels, strict=True)):
                     problems.append(f"image {image.image_id!r} tone {number}: changes no vessel; none is of its kind")
                 scene = toned
-            scenes.append(scene)
+            scenes.append(look(scene, image.view))
         except RecipeError as wrong:
             problems += [f"image {image.image_id!r}: {problem}" for problem in wrong.problems]
     refuse(problems)
@@ -190,9 +191,9 @@ def _root(entry: Entry, number: int, size: tuple[int, int]) -> Root:
 
 
 def _row(recipe: Recipe, image: ImageRecipe, scene: Scene) -> dict[str, object]:
-    row: dict[str, object] = {"pixel_size_um": image.pixel_size_um}
+    row: dict[str, object] = {"pixel_size_um": image.picture_pixel_size_um}
     if recipe.pixel_size_se_um is not None:
-        row["pixel_size_se_um"] = recipe.pixel_size_se_um * image.pixel_size_um / recipe.pixel_size_um
+        row["pixel_size_se_um"] = recipe.pixel_size_se_um * image.picture_pixel_size_um / recipe.pixel_size_um
     if scene.disc is not None:
         row |= {
             "disc_x_px": scene.disc.x_px,
@@ -205,7 +206,7 @@ def _row(recipe: Recipe, image: ImageRecipe, scene: Scene) -> dict[str, object]:
 def _image(image: ImageRecipe, scene: Scene) -> pd.DataFrame:
     """Size and scale of the picture: truth of another picture can be told from it."""
     height, width = scene.shape
-    pixel_size_um = image.pixel_size_um
+    pixel_size_um = image.picture_pixel_size_um
     return pd.DataFrame(
         [{"image_id": image.image_id, "width_px": width, "height_px": height, "pixel_size_um": pixel_size_um}]
     )

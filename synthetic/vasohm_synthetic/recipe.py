@@ -16,6 +16,7 @@ from vasohm_synthetic.scene import CLASSES, MAX_SIDE_PX
 from vasohm_synthetic.tone import Tone, tone_problems
 from vasohm_synthetic.trees import TreeShape, tree_shape_problems
 from vasohm_synthetic.tubes import Tube, tube_problems
+from vasohm_synthetic.view import STILL, View, view_problems
 
 KINDS = ("tubes", "tree", "mesh", "fundus")
 SIDES = ("left", "right", "top", "bottom")
@@ -62,6 +63,12 @@ class ImageRecipe:
     optics: Optics
     tones: tuple[Tone, ...]
     design: Mapping[str, str]  # columns of the image sheet
+    view: View = STILL
+
+    @property
+    def picture_pixel_size_um(self) -> float:
+        """Edge of a pixel of the picture; `pixel_size_um` is that of the bed before it is enlarged."""
+        return self.pixel_size_um / self.view.zoom
 
 
 @dataclass(frozen=True, slots=True)
@@ -148,7 +155,7 @@ def _images(top: Mapping[str, Any], pixel_size_um: float, problems: list[str]) -
         return ()
     for number, entry in enumerate(entries, 1):
         fields = Fields(f"image {number}", problems)
-        said = fields.known(entry, ("image_id", "bed", "scene", "optics", "tone", "pixel_size_um", *DESIGN))
+        said = fields.known(entry, ("image_id", "bed", "scene", "optics", "tone", "view", "pixel_size_um", *DESIGN))
         image_id = fields.text(said, "image_id", f"phantom-{number:02d}")
         own = {part: fields.table(said, part) for part in common}
         scene, optics = (merge(common[part], own[part]) for part in ("scene", "optics"))
@@ -162,6 +169,7 @@ def _images(top: Mapping[str, Any], pixel_size_um: float, problems: list[str]) -
                 optics=_optics(optics, Fields(f"image {number} optics", problems)),
                 tones=tuple(fields.build(Tone, tone, f"image {number} tone") for tone in fields.tables(said, "tone")),
                 design={key: fields.text(said, key, "") for key in DESIGN if key in said},
+                view=fields.build(View, fields.table(said, "view"), f"image {number} view"),
             )
         )
     return tuple(images)
@@ -261,6 +269,8 @@ def recipe_problems(recipe: Recipe) -> list[str]:
         problems += [f"{where} {problem}" for problem in _scene_problems(image.scene)]
         problems += [f"{where} optics: {problem}" for problem in optics_problems(image.optics)]
         problems += [f"{where} tone: {problem}" for tone in image.tones for problem in tone_problems(tone)]
+        size = (image.scene.height_px, image.scene.width_px)
+        problems += [f"{where} view: {problem}" for problem in view_problems(image.view, size)]
         if image.optics.polarity != recipe.images[0].optics.polarity:
             problems.append(
                 f"{where} optics: polarity {image.optics.polarity!r} is not that of image 1; the study file beside the "
