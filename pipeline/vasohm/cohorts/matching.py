@@ -1,4 +1,4 @@
-"""Which place on one set of centrelines belongs to which on another: by distance and direction, however they are cut."""
+"""Which place on one set of centrelines belongs to which on another, however both are cut. Arrays only."""
 
 from dataclasses import dataclass
 from typing import Any

@@ -10,6 +10,7 @@ from pathlib import Path
 import pandas as pd
 
 from vasohm.arrays import BoolArray
+from vasohm.cohorts.matching import track
 from vasohm.errors import Problem, RequestError, VasohmError
 from vasohm.image.read import read_mask
 from vasohm.results.columns_appraisal import APPRAISAL
@@ -18,7 +19,6 @@ from vasohm.results.write import write_atomically
 from vasohm.study.annotation import Agreement, agreement
 from vasohm.study.appraise import few, finished_study, read_table, truth_ids
 from vasohm.study.folder import image_folder, probe
-from vasohm.cohorts.matching import track
 from vasohm.study.outcome import EMPTY, MEASURED
 
 MASK_SUFFIXES = frozenset((".png", ".tif", ".tiff", ".bmp", ".gif", ".jpg", ".jpeg"))

@@ -7,9 +7,9 @@ import numpy as np
 import pandas as pd
 
 from vasohm.arrays import AnyArray, BoolArray, FloatArray, IntArray
+from vasohm.cohorts.matching import LEAST_REACH_PX, Feet, Pieces, Track, feet, pair_places, pieces, track
 from vasohm.flow.rheology import Blood
 from vasohm.network.groups import sum_by
-from vasohm.cohorts.matching import LEAST_REACH_PX, Feet, Pieces, Track, feet, pair_places, pieces, track
 from vasohm.uncertainty import quadrature
 from vasohm.units import M_PER_UM, PA_S_PER_MPA_S
 
