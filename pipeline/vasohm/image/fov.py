@@ -30,10 +30,10 @@ def find_field_of_view(brightness: Float32Array, *, vessels_are_dark: bool) -> B
         return np.ones(brightness.shape, dtype=bool)
     lowest = float(brightness.min())
     if vessels_are_dark:
-        smooth = ndimage.uniform_filter(brightness, 5, mode="nearest")
-        dark = smooth < lowest + BLACK_SHARE * (float(np.percentile(smooth, 90)) - lowest)
+        smooth = _smooth(brightness)
+        dark = smooth < black_limit(lowest, float(np.percentile(smooth, 90)))
     else:
-        dark = ndimage.binary_opening(brightness <= lowest, iterations=3)
+        dark = dark_places(brightness, lowest, vessels_are_dark=False)
     labels, count = ndimage.label(dark)
     if count == 0:
         return np.ones(brightness.shape, dtype=bool)
@@ -48,6 +48,22 @@ def find_field_of_view(brightness: Float32Array, *, vessels_are_dark: bool) -> B
     if not vessels_are_dark and not _is_solid(inside):
         return np.ones(brightness.shape, dtype=bool)  # background without noise: what is left are the vessels
     return inside
+
+
+def black_limit(lowest: float, bright: float) -> float:
+    """Brightness below which dark vessels' surroundings are no tissue; `bright` is exceeded by a tenth of the pixels."""
+    return lowest + BLACK_SHARE * (bright - lowest)
+
+
+def dark_places(brightness: Float32Array, limit: float, *, vessels_are_dark: bool) -> BoolArray:
+    """Tell where a picture is so dark (below `limit`, or at it where vessels are bright) that it may be masked off."""
+    if vessels_are_dark:
+        return np.asarray(_smooth(brightness) < limit)
+    return np.asarray(ndimage.binary_opening(brightness <= limit, iterations=3))
+
+
+def _smooth(brightness: Float32Array) -> Float32Array:
+    return np.asarray(ndimage.uniform_filter(brightness, 5, mode="nearest"))
 
 
 def _is_solid(inside: BoolArray) -> bool:

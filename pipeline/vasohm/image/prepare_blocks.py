@@ -14,7 +14,7 @@ from vasohm.arrays import AnyArray, BoolArray, Float32Array
 from vasohm.errors import ImageError
 from vasohm.image.blocks import Block, blocks_of, on_disk, release
 from vasohm.image.calibrate import ScaledImage
-from vasohm.image.fov import find_field_of_view, mirror_outside
+from vasohm.image.fov import black_limit, dark_places, find_field_of_view, mirror_outside
 from vasohm.image.noise import ENOUGH_PX, fit_noise, least_variance, noise_samples
 from vasohm.image.prepare import (
     BACKGROUND_GRID,
@@ -43,6 +43,7 @@ HALO_PX = 16  # small filters reach no further
 MIRROR_HALO_PX = 448  # where there is an outside, its mirror image is looked for so far away
 SAMPLE_PX = 1_000_000  # for medians and percentiles of the picture
 SMOOTH_PX = 1.5
+BORDER_CELLS = 3  # of the grid: so far from where the coarse picture is masked off, pixels are asked themselves
 
 
 @dataclass(frozen=True, slots=True)
@@ -68,7 +69,7 @@ def prepare_in_blocks(scaled: ScaledImage, settings: PrepareSettings, fov: BoolA
 
     Notes
     -----
-    Percentiles are those of a million pixels. A field of view that is found has steps of 4 px.
+    Percentiles are those of a million pixels.
     """
     raw = scaled.raw
     shape = (raw.pixels.shape[0], raw.pixels.shape[1])
@@ -182,26 +183,48 @@ def _look(
         clipped[block.core] = clipped_pixels(replace(raw, pixels=np.array(raw.pixels[block.core])), settings)
         mean[_on_grid(block.core)] = block_mean(brightness[block.inner], grid)
         release(raw.pixels, invalid, clipped)
-    found = find_field_of_view(mean, vessels_are_dark=settings.polarity == "dark") if fov is None else None
+    border = None if fov is not None else _border(mean, settings, levels)
     level, valid = np.zeros(coarse, np.float32), on_disk(shape, np.bool_)
     n_inside = n_clipped = n_invalid = 0
-    for block in blocks_of(shape, CORE_PX, 0):
+    for block in blocks_of(shape, CORE_PX, HALO_PX):
         core = block.core
-        if found is not None:
-            inside = np.repeat(np.repeat(found[_on_grid(core)], grid, axis=0), grid, axis=1)
-            inside = inside[: core[0].stop - core[0].start, : core[1].stop - core[1].start]
+        brightness, _ = _brightness(scaled, settings, levels, block)
+        if fov is not None:
+            inside = fov[core]
         else:
-            inside = np.asarray(fov)[core]
+            inside = _inside(brightness, settings, border, block)[block.inner]
         here = inside & ~invalid[core]
         valid[core] = here
-        brightness, _ = _brightness(scaled, settings, levels, block)
-        level[_on_grid(core)] = block_mean(np.where(here, brightness, 0), grid)
+        level[_on_grid(core)] = block_mean(np.where(here, brightness[block.inner], 0), grid)
         n_inside += int(here.sum())
         n_clipped += int((clipped[core] & here).sum())
         n_invalid += int(invalid[core].sum())
         release(raw.pixels, valid, invalid, clipped)
     counts = _Counts(n_inside, n_clipped, n_invalid, n_inside == shape[0] * shape[1])
     return level, valid, clipped, counts
+
+
+def _border(mean: Float32Array, settings: PrepareSettings, levels: _Levels) -> tuple[BoolArray, float] | None:
+    """Where, on the background's grid, the picture may be masked off, and how dark it is there; None: nowhere."""
+    dark = settings.polarity == "dark"
+    found = find_field_of_view(mean, vessels_are_dark=dark)
+    if found.all():
+        return None
+    limit = black_limit(levels.low, float(np.percentile(mean, 90))) if dark else levels.low
+    return ndimage.binary_dilation(~found, iterations=BORDER_CELLS), limit
+
+
+def _inside(
+    brightness: Float32Array, settings: PrepareSettings, border: tuple[BoolArray, float] | None, block: Block
+) -> BoolArray:
+    """Field of view in a block's window, to the pixel."""
+    if border is None:
+        return np.ones(brightness.shape, dtype=bool)
+    near, limit = border
+    seen = np.repeat(np.repeat(near[_on_grid(block.window)], BACKGROUND_GRID, axis=0), BACKGROUND_GRID, axis=1)
+    top, left = (part.start % BACKGROUND_GRID for part in block.window)
+    seen = seen[top : top + brightness.shape[0], left : left + brightness.shape[1]]
+    return ~(seen & dark_places(brightness, limit, vessels_are_dark=settings.polarity == "dark"))
 
 
 def _on_grid(core: tuple[slice, slice]) -> tuple[slice, slice]:
