@@ -6,7 +6,6 @@ carries on, and the bytes of an undisturbed run.
 
 import errno
 import os
-import resource
 import shutil
 import signal
 import subprocess
@@ -17,7 +16,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from conftest import SIZE_PX, DrawnStudy, contents, draw, failures, states
+from conftest import SIZE_PX, DrawnStudy, contents, failures, states
 from PIL import Image
 from test_faults_files import as_nobody
 
@@ -215,6 +214,7 @@ def test_a_disk_that_is_really_full_is_carried_on(
 
 
 @pytest.mark.slow
+@pytest.mark.usefixtures("one_process")
 def test_killed_at_any_write_the_same_command_gives_the_same_bytes(
     make_study: MakeStudy, tmp_path: Path, undisturbed: dict[str, str]
 ) -> None:
@@ -225,7 +225,7 @@ def test_killed_at_any_write_the_same_command_gives_the_same_bytes(
     counted = hook / "count"
     path = os.pathsep.join([str(hook), os.environ.get("PYTHONPATH", "")])
     n_killed = 0
-    for at in (1, 3, 6, 10, 15, 22, 35, 60, 85, 110):
+    for at in (3, 12, 25, 60, 100):
         out = tmp_path / "out"
         counted.unlink(missing_ok=True)
         words = ("measure", study.file, "--out", out, "--workers", 1)
@@ -238,7 +238,7 @@ def test_killed_at_any_write_the_same_command_gives_the_same_bytes(
         assert study.measure(out).status == 0
         assert contents(out) == undisturbed
         shutil.rmtree(out)
-    assert n_killed >= 8  # else the test did not do what it says
+    assert n_killed >= 4  # else the test did not do what it says
 
 
 KILL_AT = """
@@ -404,19 +404,3 @@ def test_only_what_depends_on_a_change_is_measured_again(make_study: MakeStudy, 
     sheet.write_bytes(b"\xef\xbb\xbf" + sheet.read_bytes().replace(b"\n", b"\r\n"))
     os.utime(sheet, (2e9, 2e9))
     assert runs() == {}
-
-
-@pytest.mark.slow
-@pytest.mark.usefixtures("one_process")
-def test_memory_does_not_grow_from_image_to_image(make_study: MakeStudy, tmp_path: Path) -> None:
-    """Sixty pictures after the first twenty: a slope of 50 kB an image would add 3 MB, a leaked picture far more."""
-    study = make_study(1)
-    picture = study.folder / "image-0.png"
-    sizes = []
-    for n in range(80):
-        Image.fromarray(draw(n)).save(picture)
-        assert study.measure(tmp_path / "out").status == 0
-        pages = int(Path("/proc/self/statm").read_text().split()[1])
-        sizes.append(pages * resource.getpagesize() / 1024)
-    slope_kb = np.polyfit(np.arange(60), sizes[20:], 1)[0]
-    assert slope_kb < 50
