@@ -8,15 +8,17 @@ from importlib import import_module
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from vasohm.cohorts.compare import compare_groups
     from vasohm.flow.hydraulics import solve_network
     from vasohm.flow.poiseuille import segment_resistance
     from vasohm.flow.rheology import apparent_viscosity
     from vasohm.study.single import measure_image
 
-__all__ = ["apparent_viscosity", "measure_image", "segment_resistance", "solve_network"]
+__all__ = ["apparent_viscosity", "compare_groups", "measure_image", "segment_resistance", "solve_network"]
 
 HOMES = {
     "apparent_viscosity": "vasohm.flow.rheology",
+    "compare_groups": "vasohm.cohorts.compare",
     "measure_image": "vasohm.study.single",
     "segment_resistance": "vasohm.flow.poiseuille",
     "solve_network": "vasohm.flow.hydraulics",

@@ -208,11 +208,11 @@ def _study_or_images(
 def check(study_file: Path) -> int:
     """Read all files of a study, measure nothing, and name every problem at once."""
     from vasohm.config.study_file import read_study
-    from vasohm.study.check import not_yet_used, problems_of
+    from vasohm.study.check import problems_of
     from vasohm.study.progress import counted
 
     study = read_study(study_file)
-    for warning in (*study.warnings, *not_yet_used(study)):
+    for warning in study.warnings:
         _say(warning)
     problems = problems_of(study)
     if problems:
@@ -263,6 +263,24 @@ def appraise(results: Path, truth: Path, out: Path | None) -> int:
         write_appraisal(appraisal, out)
     for line in summary_lines(appraisal):
         click.echo(line)
+    return EXIT_OK
+
+
+@commands.command(epilog=CAUTION)
+@_STUDY
+@click.option("--results", required=True, type=_FOLDER, help="Folder that was --out of measure, run to its end.")
+@click.option("--out", required=True, type=_FOLDER, help="Folder of its own for tables, plots and page.")
+def compare(study_file: Path, results: Path, out: Path) -> int:
+    """Compare groups of subjects, or states of the same subjects, as [compare] of the study asks."""
+    from vasohm.config.study_file import read_study
+    from vasohm.study.comparing import compare_study, write_comparison
+    from vasohm.study.comparison_words import summary_lines
+
+    found = compare_study(read_study(study_file), results)
+    write_comparison(found, out)
+    for line in summary_lines(found.comparison.tables["comparison"], found.comparison.notes):
+        click.echo(line)
+    click.echo(f"tables, plots and page are in {out}")
     return EXIT_OK
 
 

@@ -88,6 +88,12 @@ class PluginError(VasohmError):
     code = "plugin"
 
 
+class CohortError(VasohmError, ValueError):
+    """A table of observations from which the groups or states asked for cannot be compared."""
+
+    code = "cohort"
+
+
 @dataclass(frozen=True, slots=True)
 class Problem:
     """One thing wrong with a request: where it stands, what stands there, what to do."""

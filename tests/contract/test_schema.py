@@ -88,7 +88,8 @@ SUFFIX_UNITS = {
     "_per_s": "/s",
     "_s": "s",
 }
-NO_SUFFIX_UNITS = {"1", "{signal}"}  # ratios and counts; intensities in the picture's own units
+# Ratios and counts; intensities in the picture's own units; what is compared, in the unit of its own column.
+NO_SUFFIX_UNITS = {"1", "{signal}", "{outcome}"}
 
 
 def all_columns() -> Collection[Column]:

@@ -72,3 +72,4 @@ class CompareSettings:
     covariates: tuple[str, ...]  # columns of the sheet
     plan_ratio: float | None  # the ratio that a next study should be able to see
     radius_um: tuple[tuple[float, float], ...]  # classes of calibre, compared apart; empty: all vessels together
+    outcomes_named: bool = True  # whether the study names them; else they are what is usual

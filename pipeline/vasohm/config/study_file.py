@@ -33,6 +33,7 @@ from vasohm.results.schema import COLUMNS
 
 MOST_BYTES = 1_000_000
 OUTCOME_TABLES = ("image", "networks", "segments")  # those that give one value an image and class
+USUAL_OUTCOMES = ("networks.resistance_pa_s_m3", "segments.radius_hydraulic_um", "image.length_density_per_mm")
 AT_LINE = re.compile(r"\(at line (\d+), column \d+\)")
 BARE_COMMA = re.compile(r"\s*[\w.-]+\s*=\s*([+-]?\d+),(\d+)\s*(?:#.*)?$")
 BARE_WORD = re.compile(r"\s*([\w.-]+)\s*=\s*([^\W\d][\w ./-]*?)\s*(?:#.*)?$")
@@ -238,7 +239,7 @@ def _compare(table: CompareTable, sheet: Sheet | None, file: str) -> tuple[Compa
         problems.append(Problem(file, message, column=f"compare.{key}", value=value))
 
     outcomes = []
-    for outcome in table.outcomes:
+    for outcome in table.outcomes or USUAL_OUTCOMES:
         found = _outcomes_named(outcome)
         if len(found) == 1:
             outcomes.append(found[0])
@@ -266,7 +267,13 @@ def _compare(table: CompareTable, sheet: Sheet | None, file: str) -> tuple[Compa
         wrong("covariates", f"{table.by!r} is what is compared; it cannot be a covariate too.", table.by)
     radius_um = tuple((low, high) for low, high in table.radius_um)
     settings = CompareSettings(
-        tuple(outcomes), table.by, table.reference, tuple(table.covariates), table.plan_ratio, radius_um
+        tuple(outcomes),
+        table.by,
+        table.reference,
+        tuple(table.covariates),
+        table.plan_ratio,
+        radius_um,
+        outcomes_named=table.outcomes is not None,
     )
     return settings, problems
 

@@ -187,7 +187,7 @@ class ScenarioTable(Table):
 class CompareTable(Table):
     """Which cohorts are compared, in what."""
 
-    outcomes: Annotated[Names, Field(min_length=1)]
+    outcomes: Annotated[Names, Field(min_length=1)] | None = None
     by: Name
     reference: Name
     covariates: Names = []

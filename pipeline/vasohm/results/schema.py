@@ -6,6 +6,7 @@ from typing import Any
 from vasohm.errors import DomainError
 from vasohm.results.column import Column, text
 from vasohm.results.columns_appraisal import APPRAISAL
+from vasohm.results.columns_cohorts import COHORTS, COHORTS_KEYS, COHORTS_MEANING
 from vasohm.results.columns_images import DISC, FAILURES, IMAGE, NETWORKS, SCENARIOS
 from vasohm.results.columns_shape import BRANCHINGS, CLASS_SHAPES, HORTON, ORDERS, SCALES
 from vasohm.results.columns_vessels import CROSSINGS, NODES, POINTS, SEGMENTS
@@ -29,7 +30,7 @@ COLUMNS: Mapping[str, tuple[Column, ...]] = {
 }
 
 # Tables that a command other than `measure` writes into a folder of its own.
-FURTHER_COLUMNS: Mapping[str, tuple[Column, ...]] = {**APPRAISAL}
+FURTHER_COLUMNS: Mapping[str, tuple[Column, ...]] = {**APPRAISAL, **COHORTS}
 
 TABLE_MEANING: Mapping[str, str] = {
     "image": "One row an image: morphometry and quality; the sheet's own columns follow.",
@@ -45,6 +46,7 @@ TABLE_MEANING: Mapping[str, str] = {
     "crossings": "One row a place where two vessels merely cross in the picture.",
     "scenarios": "One row a network and scenario: what becomes of its resistance when some radii change.",
     "failures": "One row an image that could not be measured.",
+    **COHORTS_MEANING,
 }
 
 PRIMARY_KEYS: Mapping[str, tuple[str, ...]] = {
@@ -59,6 +61,7 @@ PRIMARY_KEYS: Mapping[str, tuple[str, ...]] = {
     "scales": ("image_id", "vessel_class", "edge_px"),
     "scenarios": ("image_id", "network_id", "scenario"),
     "failures": ("image_id",),
+    **COHORTS_KEYS,
 }
 
 GATHERED: Mapping[str, str] = {  # file at the root: the table whose rows it collects

@@ -18,14 +18,6 @@ from vasohm.image.segment import MASK_METHOD, get_segmenter
 _FIRST_ROW = 2  # of the sheet, after its header
 
 
-def not_yet_used(study: Study) -> list[str]:
-    """What a study asks or tells that this version checks and then leaves aside, one line each."""
-    lines = []
-    if study.compare is not None:
-        lines.append("[compare] is valid, but comparing is not part of this version: the images are measured only.")
-    return lines
-
-
 def problems_of(study: Study) -> list[Problem]:
     """Decode all files of a study and return what is wrong, in the order of the sheet.
 
