@@ -26,6 +26,7 @@ LEAST_EXCESS = 1.3  # over the texture's deviation, of a place that is looked at
 LEAST_TEXTURE = 0.5  # of 255 grey levels
 MOST_PLACES = 12  # whose margin is fitted
 ALIKE_RADII, ALIKE_LN = 0.35, 0.3  # places so near each other, of sizes so like, lead to the same margin
+WIDER = 1.15  # times as wide: another margin around the first, not the same one
 NEAR = (1.1, 3.0)  # radii from the centre, between which vessels are asked whether they point at it
 RING = (1.1, 1.7)  # and between which trunks are counted
 NO_WIDTH = 0.5  # of vessels where there are none, over the typical one
@@ -67,8 +68,9 @@ def find_disc(graph: VesselGraph, prepared: PreparedImage, vessels: BoolArray) -
     steepest fall of light in each direction, and its radius taken from the median over all directions. The confidence
     is a logistic rule on how complete, sharp, even and round that margin is and how the vessels lie to it; its weights
     come from phantoms with and without discs, with bright spots elsewhere, and say how probable it is that the centre
-    is right within a tenth of the disc's diameter. A disc that is seen in part is found where at least a quarter of its
-    margin is in the field.
+    is right within a tenth of the disc's diameter. Where one probable place lies inside another, as the cup does in the
+    disc, the outer one is taken; a rival elsewhere takes its part of the confidence, for an eye has one disc. A disc
+    that is seen in part is found where at least a quarter of its margin is in the field.
     """
     if graph.n_points == 0:
         return _refuse("no vessel leads to one")
@@ -77,12 +79,35 @@ def find_disc(graph: VesselGraph, prepared: PreparedImage, vessels: BoolArray) -
     found = [(probability(features), circle) for circle, features in candidates(graph, ground, (edge, diameter))]
     if not found:
         return _refuse("no place is bright, round and has a margin")
-    confidence, circle = max(found, key=lambda one: one[0])
+    alone, circle = _outermost(found)
+    elsewhere = [share for share, other in found if np.hypot(other.x - circle.x, other.y - circle.y) > circle.radius]
+    confidence = _before_rival(alone, max(elsewhere, default=0.0))
     x, y, radius = (float(value) for value in (*_pixels(circle.x, circle.y, edge), circle.radius * edge))
     if confidence < LEAST_CONFIDENCE:
         where = f"the likeliest place, x {x:.0f}, y {y:.0f} with a radius of {radius:.0f} px, is one with a probability"
         return _refuse(f"{where} of {confidence:.2f}, less than {LEAST_CONFIDENCE:g}")
     return DiscSearch(OpticDisc(x, y, radius, "image", confidence))
+
+
+def _outermost(found: list[tuple[float, Circle]]) -> tuple[float, Circle]:
+    """Most probable place; or, while a wider one around it is probable too, that one: the cup lies inside the disc."""
+    best = max(found, key=lambda one: one[0])
+    while around := [
+        (share, circle) for share, circle in found if share >= LEAST_CONFIDENCE and _holds(circle, best[1])
+    ]:
+        best = max(around, key=lambda one: one[0])
+    return best
+
+
+def _holds(outer: Circle, inner: Circle) -> bool:
+    apart = float(np.hypot(outer.x - inner.x, outer.y - inner.y))
+    return outer.radius > WIDER * inner.radius and apart + inner.radius < WIDER * outer.radius
+
+
+def _before_rival(share: float, rival: float) -> float:
+    """Probability of one of two places of which at most one is the disc, from those that each has alone."""
+    odds, rival_odds = (one / max(1.0 - one, np.finfo(float).tiny) for one in (share, rival))
+    return float(odds / (1.0 + odds + rival_odds))
 
 
 def _refuse(why: str) -> DiscSearch:
@@ -109,7 +134,7 @@ def candidates(graph: VesselGraph, ground: Ground, scale: tuple[int, float]) -> 
     scale : a block's edge in pixels, and the field's diameter in blocks.
     """
     edge, diameter = scale
-    found = []
+    found: list[tuple[Circle, dict[str, float]]] = []
     for circle, excess in _promising(graph, edge, _bright_places(ground, diameter)):
         is_known = any(_is_alike(circle, other) for other, _ in found)
         margin = None if is_known else fit_margin(ground, circle)
