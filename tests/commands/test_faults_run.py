@@ -59,7 +59,7 @@ def test_an_image_that_hangs_or_hoards_costs_itself(
     assert (rows["image-3"]["stage"], rows["image-3"]["error"]) == ("segment", "memory")
     assert "MB were predicted, memory_limit_mb is 400" in rows["image-3"]["message"]
     assert (rows["image-4"]["stage"], rows["image-4"]["error"]) == ("start", "memory")  # before it was decoded
-    assert "will take about 457 MB, more than memory_limit_mb = 400" in rows["image-4"]["message"]
+    assert "will take about 630 MB, more than memory_limit_mb = 400" in rows["image-4"]["message"]
     assert "timeout" in ended.told  # the last lines tell every reason
     good = ("image-0", "image-2")
     assert of_images(contents(out), *good) == of_images(undisturbed, *good)
