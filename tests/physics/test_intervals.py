@@ -102,7 +102,7 @@ def test_beyond_it_the_program_draws_by_itself_and_says_so(make):
         plain = find_intervals(measured, flow, newtonian(), IntervalSettings("delta", 2000, 1))
         assert (found.draws[0] == 2000) == by_draws
         assert (found.network_flags[0] == Flag.MONTE_CARLO) == by_draws
-        assert found.notes == (("network 1: 95 % interval from 2000 random draws (seed 1).",) if by_draws else ())
+        assert found.notes == (("95 % intervals from 2000 random draws (seed 1): network 1.",) if by_draws else ())
         assert (np.abs(misfit(plain, found)).max() > 0.1) == by_draws
 
 

@@ -115,7 +115,9 @@ def find_intervals(
             low[place], high[place] = _bounds(value[place], measured.noise_sign * ln_drawn)
         draws[k] = made[k]
         flags[k] |= int(Flag.MONTE_CARLO)
-        notes.append(f"network {k + 1}: 95 % interval from {made[k]} random draws (seed {settings.seed}).")
+    for number in sorted({made[k] for k in drawn}):
+        which = ", ".join(str(k + 1) for k in sorted(drawn) if made[k] == number)
+        notes.append(f"95 % intervals from {number} random draws (seed {settings.seed}): network {which}.")
     return ResistanceIntervals(
         segment_lo, segment_hi, network_lo, network_hi, flags, draws, settings.seed, tuple(notes)
     )
