@@ -74,16 +74,17 @@ def _fit(
     columns = [[[str(j) for j in range(held.shape[1])] for held in one] for one in matrices]
     nested = VCSpec(names, columns, matrices) if factors else None
     model = MixedLM(value, design, groups=subject, exog_re=np.ones((len(value), 1)), exog_vc=nested)
-    with warnings.catch_warnings():
-        warnings.simplefilter("ignore")  # of a variance that comes out as none: looked at by the caller
-        try:
-            fitted = model.fit(reml=True, method=["lbfgs", "bfgs"])
-        except (np.linalg.LinAlgError, ValueError):
-            return None
-    parts = (float(fitted.cov_re[0, 0]), *map(float, fitted.vcomp), float(fitted.scale))
-    if not fitted.converged or not np.all(np.isfinite(parts)):
-        return None
-    return parts[0], parts[1:-1], parts[-1]
+    for method in ("bfgs", "powell"):  # the second needs no slope, where the first steps out of what can be inverted
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore")  # of a variance that comes out as none: looked at by the caller
+            try:
+                fitted = model.fit(reml=True, method=[method])
+            except (np.linalg.LinAlgError, ValueError):
+                continue
+        parts = (float(fitted.cov_re[0, 0]), *map(float, fitted.vcomp), float(fitted.scale))
+        if fitted.converged and np.all(np.isfinite(parts)):
+            return parts[0], parts[1:-1], parts[-1]
+    return None
 
 
 def _indicators(codes: IntArray) -> FloatArray:

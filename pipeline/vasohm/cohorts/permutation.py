@@ -8,7 +8,7 @@ import numpy as np
 
 from vasohm.arrays import FloatArray, IntArray
 
-MOST_EXACT = 20_000  # ways that are all tried
+MOST_EXACT = 40_000  # ways that are all tried
 DRAWS = 9_999
 CHUNK = 2_000_000  # numbers held at once
 ROUNDING = 1e-9  # relative; statistics of equal arrangements differ in the last digits
@@ -21,7 +21,7 @@ def permute_groups(y: FloatArray, is_level: FloatArray, rng: np.random.Generator
     ----------
     y : (n,) one value a subject.
     is_level : (n,) 1 on the one side, 0 on the other.
-    rng : where there are more than 20 000 ways, 9 999 of them are drawn.
+    rng : where there are more than 40 000 ways, 9 999 of them are drawn.
 
     Returns
     -------
@@ -55,7 +55,7 @@ def permute_residuals(
     ----------
     y : (n,) one value, or one difference, a subject.
     design : (n, p) of full rank, p < n.
-    rng : for the draws where there are more than 20 000 ways.
+    rng : for the draws where there are more than 40 000 ways.
     by_sign : whether residuals change their signs, as differences may, or their places.
 
     Returns

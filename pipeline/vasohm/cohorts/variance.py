@@ -8,7 +8,7 @@ from vasohm.arrays import FloatArray, IntArray
 from vasohm.cohorts.mixed import split_variance
 from vasohm.cohorts.observations import Observations
 
-REPEATABILITY_FACTOR = 1.959963984540054 * np.sqrt(2.0)  # Bland and Altman 1999, section 3
+REPEATABILITY_FACTOR = 1.96 * np.sqrt(2.0)  # Bland and Altman 1999, section 3
 
 
 @dataclass(frozen=True, slots=True)

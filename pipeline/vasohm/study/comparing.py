@@ -26,6 +26,7 @@ from vasohm.config.study_file import Study
 from vasohm.errors import CohortError, Problem, RequestError
 from vasohm.results.cells import unguard_text
 from vasohm.results.columns_cohorts import COHORTS
+from vasohm.results.columns_pairs import PAIRED
 from vasohm.results.encode import frame_bytes, json_bytes
 from vasohm.results.schema import COLUMNS, GATHERED, SCHEMA_VERSION
 from vasohm.results.write import write_atomically
@@ -37,6 +38,8 @@ from vasohm.study.comparison_words import FAMILY, REFERENCES, methods_paragraph
 from vasohm.study.current import versions_used
 from vasohm.study.folder import probe
 from vasohm.study.outcome import PENDING
+from vasohm.study.paired import compare_pairs
+from vasohm.study.paired_page import paired_part
 from vasohm.study.state import StudyState
 
 SEED = 0
@@ -54,6 +57,7 @@ class StudyComparison:
     outcomes: tuple[Outcome, ...]
     comparison: Comparison
     state: StudyState
+    paired: Mapping[str, pd.DataFrame]  # two states of one bed, where conditions or times are compared
 
 
 def compare_study(study: Study, results_dir: Path) -> StudyComparison:
@@ -94,7 +98,9 @@ def compare_study(study: Study, results_dir: Path) -> StudyComparison:
     held = {name: table[table["image_id"].isin(compared)] for name, table in tables.items()}
     values = [image_values(outcome, held) for outcome in outcomes]
     _check_values(study, settings, outcomes, values)
-    return StudyComparison(study, settings, outcomes, compare_all(outcomes, values, sheet, question), state)
+    comparison = compare_all(outcomes, values, sheet, question)
+    paired = compare_pairs(results_dir, sheet, settings, study.settings)
+    return StudyComparison(study, settings, outcomes, comparison, state, paired)
 
 
 def write_comparison(found: StudyComparison, out_dir: Path) -> None:
@@ -112,9 +118,10 @@ def write_comparison(found: StudyComparison, out_dir: Path) -> None:
         raise RequestError([Problem(file=str(out_dir), message=message)])
     probe(out_dir)
     written = []
-    for name, columns in COHORTS.items():
-        frame = found.comparison.tables[name]
-        if name == "planning" and frame.empty:
+    frames = {**found.comparison.tables, **found.paired}
+    for name, columns in {**COHORTS, **PAIRED}.items():
+        frame = frames.get(name, pd.DataFrame())
+        if frame.empty and (name == "planning" or name not in frames):
             (out_dir / f"{name}.csv").unlink(missing_ok=True)
             continue
         content = frame_bytes(frame, columns)
@@ -142,6 +149,7 @@ def write_comparison(found: StudyComparison, out_dir: Path) -> None:
         found.comparison,
         found.state.methods.cautions,
         {"pictures": tuple(pictures), "files": tuple(files)},
+        further=paired_part(found.paired),
     )
     write_atomically(out_dir / "index.html", page.encode())
 

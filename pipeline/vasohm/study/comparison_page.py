@@ -54,6 +54,8 @@ def comparison_page(
     comparison: Comparison,
     cautions: Sequence[str],
     beside: Mapping[str, Sequence[str]],
+    *,
+    further: Sequence[Html] = (),
 ) -> str:
     """Build the page.
 
@@ -64,6 +66,7 @@ def comparison_page(
     comparison : what was found.
     cautions : those of the measurement.
     beside : names of `pictures`, without their ending, and of `files` in the same folder.
+    further : what stands before the cautions.
     """
     tables = comparison.tables
     contrasts = _rows(tables["comparison"])
@@ -78,6 +81,7 @@ def comparison_page(
     body += [heading("Where the spread comes from", 2), _variance(_rows(tables["variance"]))]
     if not tables["planning"].empty:
         body += [heading("How many subjects a next study needs", 2), _planning(_rows(tables["planning"]))]
+    body += further
     body += [heading("Cautions", 2), listing([CAUTION, *OWN_CAUTIONS, *(one for one in cautions if one != CAUTION)])]
     body += [heading("Methods", 2), paragraph(methods_paragraph(settings, tables["comparison"]))]
     body += [heading("References", 2), listing(REFERENCES, numbered=True)]
