@@ -66,6 +66,11 @@ class Flag(IntFlag):
     DISC_NOT_FOUND = 1 << 51
     BURNED_IN = 1 << 52
     FIELD_ANGLE = 1 << 53
+    # pairs of images
+    CLASS_DIFFERS = 1 << 58
+    SCALES_DISAGREE = 1 << 59
+    NO_COMMON_WAY = 1 << 60
+    COMMON_ENDS = 1 << 61
 
 
 MEANING: dict[Flag, str] = {
@@ -121,6 +126,10 @@ MEANING: dict[Flag, str] = {
     Flag.DISC_NOT_FOUND: "no place in the picture is the optic disc surely enough: nothing that needs one is told",
     Flag.BURNED_IN: "the file says that text is drawn into its picture: it may name the patient, and cover vessels",
     Flag.FIELD_ANGLE: "the angle of view that the file tells does not fit its pixel size",
+    Flag.CLASS_DIFFERS: "arteriole or venule: the two images say it differently",
+    Flag.SCALES_DISAGREE: "one image lies on the other at a scale that their pixel sizes do not explain",
+    Flag.NO_COMMON_WAY: "what both images show holds no way from an inlet to an outlet: no ratio",
+    Flag.COMMON_ENDS: "inlets or outlets were put where what both images show ends",
 }
 
 

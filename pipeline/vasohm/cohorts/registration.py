@@ -304,7 +304,7 @@ def _field_overlap(a: Picture, b: Picture, b_to_a: Similarity) -> float:
     x, y = 4.0 * column, 4.0 * row
     common = float(np.sum(b.sees(*b_to_a.inverse().apply(x, y))))
     of_b = np.count_nonzero(b.fov) * b_to_a.scale**2 / 16.0
-    return common / max(min(float(len(x)), of_b), 1.0)
+    return min(common / max(min(float(len(x)), of_b), 1.0), 1.0)
 
 
 def _distance_px(b: Picture, one: Similarity, other: Similarity) -> float:

@@ -8,6 +8,7 @@ from vasohm.results.column import Column, text
 from vasohm.results.columns_appraisal import APPRAISAL
 from vasohm.results.columns_cohorts import COHORTS, COHORTS_KEYS, COHORTS_MEANING
 from vasohm.results.columns_images import DISC, FAILURES, IMAGE, NETWORKS, SCENARIOS
+from vasohm.results.columns_pairs import PAIRED, PAIRED_KEYS, PAIRED_MEANING
 from vasohm.results.columns_shape import BRANCHINGS, CLASS_SHAPES, HORTON, ORDERS, SCALES
 from vasohm.results.columns_vessels import CROSSINGS, NODES, POINTS, SEGMENTS
 
@@ -30,7 +31,7 @@ COLUMNS: Mapping[str, tuple[Column, ...]] = {
 }
 
 # Tables that a command other than `measure` writes into a folder of its own.
-FURTHER_COLUMNS: Mapping[str, tuple[Column, ...]] = {**APPRAISAL, **COHORTS}
+FURTHER_COLUMNS: Mapping[str, tuple[Column, ...]] = {**APPRAISAL, **COHORTS, **PAIRED}
 
 TABLE_MEANING: Mapping[str, str] = {
     "image": "One row an image: morphometry and quality; the sheet's own columns follow.",
@@ -47,6 +48,7 @@ TABLE_MEANING: Mapping[str, str] = {
     "scenarios": "One row a network and scenario: what becomes of its resistance when some radii change.",
     "failures": "One row an image that could not be measured.",
     **COHORTS_MEANING,
+    **PAIRED_MEANING,
 }
 
 PRIMARY_KEYS: Mapping[str, tuple[str, ...]] = {
@@ -62,6 +64,7 @@ PRIMARY_KEYS: Mapping[str, tuple[str, ...]] = {
     "scenarios": ("image_id", "network_id", "scenario"),
     "failures": ("image_id",),
     **COHORTS_KEYS,
+    **PAIRED_KEYS,
 }
 
 GATHERED: Mapping[str, str] = {  # file at the root: the table whose rows it collects
