@@ -93,7 +93,7 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
         ln_resistance_shared_se=flow.ln_resistance_shared_se,
     )
     shape_of = describe_shape(measured, around, settings.shape)
-    findings = Findings(prepared, mask, measured, flow, shape_of, scenarios, intervals)
+    findings = Findings(prepared, mask, measured, flow, shape_of, scenarios, intervals, source.edits)
     return tabulate(source.image_id, source.design, findings)
 
 

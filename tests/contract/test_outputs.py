@@ -4,6 +4,7 @@ import csv
 import hashlib
 import json
 import math
+import re
 import os
 from dataclasses import dataclass, replace
 from io import BytesIO
@@ -38,9 +39,10 @@ from vasohm.network.morphometry import Morphometry, ShapeSettings, Surroundings,
 from vasohm.network.radius import MeasuredGraph
 from vasohm.results.cells import guard_text, unguard_text
 from vasohm.results.encode import json_bytes
+from vasohm.results.colouring import COLOURED, ColourBy
 from vasohm.results.image_page import image_page
 from vasohm.results.methods import Methods, MethodsUsed, bibtex, describe_methods
-from vasohm.results.overlay import COLOURED, ColourBy, draw_overlay, round_length_um
+from vasohm.results.overlay import draw_for_print, draw_overlay, round_length_um
 from vasohm.results.pages import Study, images_without_resistance, lines_without_resistance, write_study_page
 from vasohm.results.schema import COLUMNS, column_names
 from vasohm.results.tables import Findings, ImageTables, tabulate
@@ -714,7 +716,9 @@ def test_pages_show_text_as_text(results: Path) -> None:
     """A group, an error or a note from a file must not run in the reader's browser."""
     for page in (results / "index.html", results / "images/a/index.html"):
         text = page.read_text(encoding="utf-8")
-        assert "<script" not in text.lower()
+        assert "<script>" not in text.lower()
+        inside = re.findall(r"<script([^>]*)>([^<]*)</script>", text)
+        assert all(not held or 'type="application/json"' in kind for kind, held in inside)  # data only, never run
         assert "&lt;script&gt;alert(1)" in text
         assert "default-src 'none'" in text
         assert "http://" not in text
@@ -726,12 +730,12 @@ def test_study_page_tells_failures_cautions_and_every_image(results: Path) -> No
     """A reader must not overlook a failed image, nor take research for diagnosis."""
     text = (results / "index.html").read_text(encoding="utf-8")
     assert "4 images: 2 measured, 1 empty (no vessel found), 1 failed." in text
-    assert text.index("Failed images") < text.index("<h2>Images</h2>")
+    assert text.index("<h2>Failed images") < text.index("<h2>Images</h2>")
     assert "no basis for the diagnosis or treatment of a person" in text
     assert "local rules and licensed practice come first" in text
     for name in ("a", "b", "e"):
         assert f'href="images/{name}/index.html"' in text
-        assert f'src="images/{name}/overlay.png"' in text
+        assert f'src="images/{name}/thumbnail.jpg"' in text
     assert (
         "1.00&nbsp;×&nbsp;10<sup>14</sup> <br>(3.75&nbsp;×&nbsp;10<sup>13</sup> to 2.66&nbsp;×&nbsp;10<sup>14</sup>)"
         in text

@@ -147,7 +147,7 @@ def test_every_key_reaches_its_setting(tmp_path: Path) -> None:
     assert (study.name, study.path) == ("demo", tmp_path / "study.toml")
     assert [source.image_id for source in study.images] == ["a", "b"]
     assert (study.sheet, study.lines) == ("images.csv", {"a": 2, "b": 3})
-    assert (chosen.preset, chosen.output) == ("fundus", OutputSettings(overlay=False, colour="share"))
+    assert (chosen.preset, chosen.output) == ("fundus", OutputSettings(overlay=False, colour="share", for_print=False))
     assert chosen.classes == ClassSettings("none", 0.9)
     assert (chosen.read.plane, chosen.read.max_megapixels, chosen.read.channel) == ("max", 100.0, "green")
     assert (chosen.prepare.channel, chosen.prepare.polarity, chosen.prepare.gamma) == ("green", "dark", 2.2)

@@ -60,6 +60,7 @@ DEFAULTS: Mapping[str, Any] = {
     "run.memory_limit_mb": None,
     "output.overlay": True,
     "output.colour": "radius",
+    "output.print": False,
 }
 
 # Largest vessels asked for: retinal trunks are below 100 um in radius; the field of a microscope holds smaller ones.

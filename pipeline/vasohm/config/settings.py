@@ -17,7 +17,7 @@ from vasohm.network.crossings import CrossingSettings
 from vasohm.network.lumenfit import RadiusSettings
 from vasohm.network.morphometry import ShapeSettings
 from vasohm.network.skeletonize import SkeletonizeSettings
-from vasohm.results.overlay import ColourBy
+from vasohm.results.colouring import ColourBy
 
 
 @dataclass(frozen=True, slots=True)
@@ -26,6 +26,7 @@ class OutputSettings:
 
     overlay: bool
     colour: ColourBy
+    for_print: bool  # whether the overlay is drawn for print too
 
 
 @dataclass(frozen=True, slots=True)

@@ -358,7 +358,7 @@ def _settings(values: Mapping[str, Any], scenarios: Sequence[ScenarioTable]) -> 
         targets=end_targets(values),
         intervals=IntervalSettings(values["network.intervals"], values["network.draws"], values["network.seed"]),
         scenarios=scenarios_asked(scenarios),
-        output=OutputSettings(values["output.overlay"], values["output.colour"]),
+        output=OutputSettings(values["output.overlay"], values["output.colour"], values["output.print"]),
     )
 
 

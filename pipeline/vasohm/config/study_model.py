@@ -207,6 +207,7 @@ class OutputTable(Table):
 
     overlay: bool | None = None
     colour: Literal["radius", "share", "resistance", "uncertainty", "class"] | None = None
+    print: bool | None = None
 
 
 class StudyModel(Table):

@@ -5,10 +5,15 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from vasohm.results.colouring import COLOURED, ColourBy, is_doubtful
+from vasohm.results.explorer import explorer
 from vasohm.results.markup import (
+    ASSETS,
+    PLOTTING,
     Html,
     flag_codes,
     flag_meanings,
+    folded,
     heading,
     interval,
     link,
@@ -16,14 +21,17 @@ from vasohm.results.markup import (
     page,
     paragraph,
     picture,
+    section,
     shown,
     table,
+    tiles,
 )
 from vasohm.results.methods import CAUTIONS
-from vasohm.results.overlay import COLOURED, ColourBy
+from vasohm.results.page_data import page_data
 from vasohm.results.schema import image_columns
 from vasohm.results.tables import ImageTables
 from vasohm.results.wording import pixel_size_words, why_no_resistance
+from vasohm.units import UM_PER_MM
 
 ROWS_SHOWN = 50
 NETWORK_NAMES = (
@@ -63,37 +71,51 @@ TEXT_NAMES = {"class", "terminals", "scenario", "flags"}
 def image_page(tables: ImageTables, overlay: ColourBy | None) -> str:
     """Build the page of one image from its tables; `overlay` is what colours the picture beside it, if there is one."""
     row = tables.image.iloc[0]
-    body = [
-        paragraph(link("../../index.html", "All images")),
-        heading(tables.image_id, 1),
-        paragraph("No vessel was found." if tables.status == "empty" else _summary(tables)),
-        _without_resistance(tables.networks),
-    ]
-    if overlay is not None:
-        alternative = f"Segments of {tables.image_id} at their measured width, coloured by {COLOURED[overlay][1]}"
-        body.append(Html(f'<p><a href="overlay.png">{picture("overlay.png", alternative).source}</a></p>'))
-    body += [heading("Networks", 2), _networks(tables.networks), *_estimated(tables.networks)]
+    lives = tables.status != "empty"
+    top = [paragraph(link("../../index.html", "All images")), heading(tables.image_id, 1)]
+    body = [_summary(tables) if lives else paragraph("No vessel was found.")]
+    body.append(_without_resistance(tables.networks))
+    if lives:
+        body.append(explorer())
+    body += [_plain(tables, overlay), folded("networks", "Networks", _networks(tables.networks))]
+    body += _estimated(tables.networks)
     body += _scenarios(tables.scenarios)
-    body += [heading("Segments", 2), _segments(tables.segments, tables.networks)]
-    body += [heading("The image", 2), _quality(row)]
+    body.append(folded("image", "The image", _quality(row)))
     asked = tables.scenarios["flags"]
     flags = [row["flags"], *tables.networks["flags"], *tables.segments["flags"], *asked]
-    body += [heading("What the flags mean", 2), flag_meanings(flags)]
+    body.append(section("flags", "What the flags mean", flag_meanings(flags)))
     if tables.notes:
-        body += [heading("Notes", 2), listing(tables.notes)]
-    body += [heading("Cautions", 2), listing(CAUTIONS)]
+        body.append(folded("notes", "Notes", listing(tables.notes)))
+    body.append(section("cautions", "Cautions", listing(CAUTIONS)))
     names = sorted(f"{name}.csv" for name, frame in tables.tables.items() if name != "scenarios" or not frame.empty)
-    body += [
-        heading("Files", 2),
-        listing(link(name, name) for name in (*names, "graph.graphml", "mask.tif", "record.json")),
-    ]
-    return page(f"{tables.image_id} - vasohm", body)
+    names += ["graph.graphml", "mask.tif", "record.json", *([] if overlay is None else ["overlay.png"])]
+    body.append(section("files", "Files", listing(link(name, name) for name in names)))
+    scripts = [f"../../{ASSETS}/{name}" for name in (*PLOTTING, "image.js")] if lives else []
+    data = page_data(tables, overlay) if lives else ""
+    return page(f"{tables.image_id} - vasohm", top, body, scripts, data)
 
 
-def _summary(tables: ImageTables) -> str:
+def _summary(tables: ImageTables) -> Html:
     row = tables.image.iloc[0]
     size = pixel_size_words(row["pixel_size_um"], row["pixel_size_se_um"], row["pixel_size_source"])
-    return f"Segments: {row['n_segments']}; networks: {row['n_networks']}; pixel size: {size}."
+    doubtful = int(is_doubtful(tables.segments).sum())
+    numbers: list[tuple[str | Html, str, bool]] = [
+        (str(row["n_segments"]), "segments", False),
+        (str(row["n_networks"]), "networks", False),
+        (Html(f"{shown(row['length_um'] / UM_PER_MM).source} mm"), "length of vessels", False),
+        (str(doubtful), "segments of doubtful radius", bool(doubtful)),
+    ]
+    return Html(tiles(numbers).source + paragraph(f"Pixel size: {size}.").source)
+
+
+def _plain(tables: ImageTables, overlay: ColourBy | None) -> Html:
+    """What stands in the place of the picture to explore where no script runs: the drawn one, and first segments."""
+    drawn = Html("")
+    if overlay is not None:
+        alternative = f"Segments of {tables.image_id} at their measured width, coloured by {COLOURED[overlay][1]}"
+        drawn = Html(f'<p><a href="overlay.png">{picture("overlay.png", alternative).source}</a></p>')
+    told = heading("Segments", 2).source + _segments(tables.segments, tables.networks).source
+    return Html(f'<div id="plain">{drawn.source}{told}</div>')
 
 
 def _without_resistance(networks: pd.DataFrame) -> Html:
@@ -166,7 +188,7 @@ def _scenarios(scenarios: pd.DataFrame) -> list[Html]:
         for row in solved.head(ROWS_SHOWN).to_dict("records")
     ]
     found = table(SCENARIO_NAMES, rows, set(SCENARIO_NAMES) - TEXT_NAMES)
-    return [heading("Scenarios", 2), _shortened(found, len(solved), "networks and scenarios")]
+    return [folded("scenarios", "Scenarios", _shortened(found, len(solved), "networks and scenarios"))]
 
 
 def _segments(segments: pd.DataFrame, networks: pd.DataFrame) -> Html:

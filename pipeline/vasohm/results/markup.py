@@ -1,4 +1,4 @@
-"""Pieces of the result pages: everything that came from outside is escaped; no script, no network."""
+"""Pieces of the result pages: everything that came from outside is escaped; no network."""
 
 import math
 from collections.abc import Iterable, Sequence
@@ -6,41 +6,22 @@ from dataclasses import dataclass
 from html import escape
 
 from vasohm.flags import MEANING, Flag, code
+from vasohm.results.page_style import STYLE
 
-POLICY = "default-src 'none'; img-src 'self'; style-src 'unsafe-inline'; base-uri 'none'; form-action 'none'"
+POLICY = "default-src 'none'; img-src 'self' data:; style-src 'unsafe-inline'; base-uri 'none'; form-action 'none'"
+SCRIPTS = "; script-src 'self' file:"  # files beside the page, by web server or from disk; never text inside of it
+NOTICE = (
+    "For research. Results are no basis for the diagnosis or treatment of a person; local rules and licensed practice "
+    "come first."
+)
+ASSETS = "assets"  # folder of scripts, once at the root of the results
+PLOTTING = ("bokeh.min.js", "bokeh-api.min.js")  # of the library that draws on the pages, as it came
 FLAG_MEANING = {code(flag): meaning for flag, meaning in MEANING.items()}
 # Flags that tell how a thing was done and cast no doubt: explained, not marked.
 FACTS = {code(Flag.TERMINALS_JOINED), code(Flag.MONTE_CARLO)}
-
-STYLE = """
-:root { color-scheme: light; }
-body { font: 16px/1.5 system-ui, sans-serif; color: #1a1a1a; background: #fff; margin: 0 auto; padding: 1rem;
-  max-width: 92rem; }
-h1 { font-size: 1.6rem; line-height: 1.2; overflow-wrap: anywhere; }
-h2 { font-size: 1.2rem; margin-top: 2rem; border-bottom: 1px solid #767676; }
-a { color: #0b4a8f; }
-.wide { overflow-x: auto; }
-table { border-collapse: collapse; font-size: .9rem; width: 100%; }
-th, td { text-align: left; vertical-align: top; padding: .35rem .6rem; border-bottom: 1px solid #c8c8c8; }
-th { background: #f0f0f0; }
-td { overflow-wrap: break-word; max-width: 24rem; }
-td.number, th.number { text-align: right; font-variant-numeric: tabular-nums; }
-td.number { white-space: nowrap; }
-img { max-width: 100%; height: auto; }
-img.small { width: 10rem; max-width: 40vw; }
-dt { font-weight: 600; }
-dd { margin: 0 0 .4rem 0; }
-.alert { border-left: .4rem solid #a30000; background: #fdf1f0; padding: .2rem 1rem; }
-.alert h2 { margin-top: .5rem; border: 0; }
-@media (max-width: 48rem) {
-  table.cards thead { display: none; }
-  table.cards, table.cards tbody, table.cards tr, table.cards td { display: block; max-width: none; }
-  table.cards tr { border: 1px solid #767676; margin-bottom: .8rem; }
-  table.cards td.number { text-align: left; white-space: normal; }
-  table.cards td[data-name]::before { content: attr(data-name) ": "; font-weight: 600; }
-}
-@media print { body { max-width: none; } }
-"""
+WORD_LETTERS = 14  # of a cell that is never parted within a word
+BAD = ' class="bad"'
+_RAISED = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,6 +29,7 @@ class Html:
     """Markup that is already safe; a plain text is escaped wherever it is put."""
 
     source: str
+    value: str = ""  # of a number shown in words: what a column is sorted by
 
 
 def html(value: "str | Html") -> str:
@@ -55,15 +37,54 @@ def html(value: "str | Html") -> str:
     return value.source if isinstance(value, Html) else escape(value, quote=True)
 
 
-def page(title: str, body: Iterable[Html]) -> str:
-    """Build a whole page that works from disk."""
+def page(title: str, top: Iterable[Html], body: Iterable[Html], scripts: Sequence[str] = (), data: str = "") -> str:
+    """Build a whole page that works from disk.
+
+    Parameters
+    ----------
+    title : of the window.
+    top : what stands in the page's head: where one is, and what this is.
+    body : the rest.
+    scripts : files beside the page, run in this order when the page has been read.
+    data : JSON for them, in which no "<" occurs.
+    """
+    held = f'<script type="application/json" id="data">{data}</script>\n' if data else ""
     return (
         '<!DOCTYPE html>\n<html lang="en">\n<head>\n<meta charset="utf-8">\n'
-        f'<meta http-equiv="Content-Security-Policy" content="{POLICY}">\n'
+        f'<meta http-equiv="Content-Security-Policy" content="{POLICY}{SCRIPTS if scripts else ""}">\n'
         '<meta name="viewport" content="width=device-width, initial-scale=1">\n'
-        f"<title>{html(title)}</title>\n<style>{STYLE}</style>\n</head>\n<body>\n"
+        f"<title>{html(title)}</title>\n<style>{STYLE}</style>\n"
+        + "".join(f'<script defer src="{html(script)}"></script>\n' for script in scripts)
+        + "</head>\n<body>\n<header>\n"
+        + "\n".join(piece.source for piece in top)
+        + "\n</header>\n<main>\n"
         + "\n".join(piece.source for piece in body)
-        + "\n</body>\n</html>\n"
+        + f"\n</main>\n<footer><p>{NOTICE}</p></footer>\n{held}</body>\n</html>\n"
+    )
+
+
+def section(name: str, title: str, *pieces: Html) -> Html:
+    """Group pieces under a heading that a link can lead to."""
+    return Html(
+        f'<section id="{html(name)}">{heading(title, 2).source}{"".join(one.source for one in pieces)}</section>'
+    )
+
+
+def folded(name: str, title: str, *pieces: Html) -> Html:
+    """Group pieces under a heading that opens them: what few look at, or what is long."""
+    opened = f"<details><summary>{heading(title, 2).source}</summary>{''.join(one.source for one in pieces)}</details>"
+    return Html(f'<section id="{html(name)}">{opened}</section>')
+
+
+def tiles(pairs: Iterable[tuple["str | Html", str, bool]]) -> Html:
+    """Show a few numbers large: each with its words, and whether it is bad news."""
+    return Html(
+        '<ul class="tiles">'
+        + "".join(
+            f"<li{BAD if bad else ''}><b>{html(number)}</b><span>{html(words)}</span></li>"
+            for number, words, bad in pairs
+        )
+        + "</ul>"
     )
 
 
@@ -93,20 +114,27 @@ def terms(pairs: Iterable[tuple["str | Html", "str | Html"]]) -> Html:
     return Html("<dl>" + "".join(f"<dt>{html(term)}</dt><dd>{html(said)}</dd>" for term, said in pairs) + "</dl>")
 
 
-def table(names: Sequence[str], rows: Iterable[Sequence["str | Html"]], numbers: Iterable[str] = ()) -> Html:
+def table(
+    names: Sequence[str], rows: Iterable[Sequence["str | Html"]], numbers: Iterable[str] = (), *, sortable: bool = False
+) -> Html:
     """Build a table that turns into one card a row on a narrow screen; columns in `numbers` stand to the right."""
     kinds = [' class="number"' if name in set(numbers) else "" for name in names]
     head = "".join(f'<th scope="col"{kind}>{html(name)}</th>' for name, kind in zip(names, kinds, strict=True))
     lines = []
     for row in rows:
         cells = zip(names, kinds, row, strict=True)
-        lines.append(
-            "<tr>" + "".join(f'<td data-name="{html(n)}"{kind}>{html(cell)}</td>' for n, kind, cell in cells) + "</tr>"
-        )
+        lines.append("<tr>" + "".join(_cell(name, kind, cell) for name, kind, cell in cells) + "</tr>")
     body = "\n".join(lines)
+    style = "cards sortable" if sortable else "cards"
     return Html(
-        f'<div class="wide"><table class="cards"><thead><tr>{head}</tr></thead>\n<tbody>{body}</tbody></table></div>'
+        f'<div class="wide"><table class="{style}"><thead><tr>{head}</tr></thead>\n<tbody>{body}</tbody></table></div>'
     )
+
+
+def _cell(name: str, kind: str, cell: "str | Html") -> str:
+    value = f' data-value="{html(cell.value)}"' if isinstance(cell, Html) and cell.value else ""
+    loose = ' class="long"' if not kind and len(html(cell)) > WORD_LETTERS else ""  # may be parted anywhere
+    return f'<td data-name="{html(name)}"{kind}{loose}{value}>{html(cell)}</td>'
 
 
 def shown(value: float, digits: int = 3) -> Html:
@@ -115,16 +143,25 @@ def shown(value: float, digits: int = 3) -> Html:
         return Html("")
     if value == 0 or 1e-3 <= abs(value) < 1e6:
         decimals = max(0, digits - 1 - math.floor(math.log10(abs(value)))) if value else 0
-        return Html(f"{value:.{decimals}f}")
+        return Html(f"{value:.{decimals}f}", repr(float(value)))
     mantissa, exponent = f"{value:.{digits - 1}e}".split("e")
-    return Html(f"{mantissa}&nbsp;×&nbsp;10<sup>{int(exponent)}</sup>")
+    return Html(f"{mantissa}&nbsp;×&nbsp;10<sup>{int(exponent)}</sup>", repr(float(value)))
+
+
+def plain_number(value: float, digits: int = 3) -> str:
+    """Show a number where there is no markup, as in a drawing."""
+    if value == 0 or 1e-3 <= abs(value) < 1e6:
+        return f"{value:.{digits}g}" if abs(value) < 10**digits else f"{value:.0f}"
+    mantissa, exponent = f"{value:.{digits - 1}e}".split("e")
+    told = "" if float(mantissa) == 1 else f"{float(mantissa):g}×"
+    return f"{told}10{str(int(exponent)).translate(_RAISED)}"
 
 
 def interval(value: float, low: float, high: float) -> Html:
     """Show a number with its 95 % interval; empty where it is missing."""
     if math.isnan(value):
         return Html("")
-    return Html(f"{shown(value).source} <br>({shown(low).source} to {shown(high).source})")
+    return Html(f"{shown(value).source} <br>({shown(low).source} to {shown(high).source})", repr(float(value)))
 
 
 def flag_codes(flags: str) -> Html:

@@ -17,6 +17,7 @@ from vasohm.network.class_trees import TreeSettings
 from vasohm.network.graph import VesselClass
 from vasohm.network.lumenfit import RadiusSettings
 from vasohm.network.morphometry import ShapeSettings
+from vasohm.results.markup import NOTICE
 from vasohm.results.shape_methods import shape_sentences
 
 POISEUILLE = (
@@ -82,10 +83,7 @@ DISC_CAUTION = (
     "within one picture, not by size."
 )
 CAUTIONS: tuple[str, ...] = (
-    (
-        "For research. Results are no basis for the diagnosis or treatment of a person; local rules and licensed "
-        "practice come first."
-    ),
+    NOTICE,
     (
         "A two-dimensional picture foreshortens vessels that run out of its plane; a fundus image holds only part of a "
         "circulation."

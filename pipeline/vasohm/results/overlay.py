@@ -1,17 +1,21 @@
 """What was measured, drawn on the picture: from the tables, so that the picture shows what the files say."""
 
 import textwrap
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass
 from io import BytesIO
-from typing import Any, Literal, TypeAlias
+from typing import Any, Literal
 
 import matplotlib as mpl
 import numpy as np
 import pandas as pd
 from matplotlib.axes import Axes
 from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.backends.backend_pdf import FigureCanvasPdf
 from matplotlib.cm import ScalarMappable
 from matplotlib.collections import PolyCollection
-from matplotlib.colors import ListedColormap, LogNorm, Normalize
+from matplotlib.colors import LogNorm, Normalize
 from matplotlib.figure import Figure
 from matplotlib.lines import Line2D
 from matplotlib.patches import Circle as CirclePatch
@@ -19,26 +23,23 @@ from matplotlib.patches import Patch
 from matplotlib.ticker import FuncFormatter, LogLocator, NullFormatter
 from PIL import Image
 
-from vasohm.arrays import AnyArray, BoolArray, FloatArray, IntArray
-from vasohm.flags import Flag, code
+from vasohm.arrays import AnyArray, FloatArray, IntArray
+from vasohm.results.colouring import (
+    CLASS_COLOURS,
+    COLOURED,
+    GREY,
+    ColourBy,
+    class_colours,
+    colour_map,
+    coloured_values,
+    colours_span,
+    is_doubtful,
+    is_known,
+    value_colours,
+)
 from vasohm.results.tables import ImageTables
 from vasohm.units import UM_PER_MM
 
-ColourBy: TypeAlias = Literal["radius", "share", "resistance", "uncertainty", "class"]
-
-COLOURED: dict[ColourBy, tuple[str, str]] = {  # what colours a segment: the colour bar's label; and in words
-    "radius": ("lumen radius (µm)", "lumen radius"),
-    "share": ("share of the network's resistance (%)", "share of the network's resistance"),
-    "resistance": ("resistance (Pa·s/m³)", "resistance"),
-    "uncertainty": ("standard uncertainty of the radius (%)", "relative standard uncertainty of the radius"),
-    "class": ("class", "class of vessel"),
-}
-# Yellow, purple and green of Okabe & Ito (Color Universal Design, 2008), apart for all kinds of colour vision.
-CLASS_COLOURS = {"arteriole": "#f0e442", "venule": "#cc79a7", "capillary": "#009e73"}
-DARKEST = 0.12  # start of the colour map: its first tenth is lost on a dark picture
-LOGARITHMIC_FROM = 5.0  # ratio of largest to smallest value from which the colours are spread in the logarithm
-DOUBTFUL = (Flag.RIM, Flag.UNRESOLVED, Flag.INFERRED)
-COLOURED_SHARES = (0.02, 0.98)  # of the length of the sound segments, between which the colours are spread
 OPAQUE, PALE, STUB = 0.75, 0.5, 0.6  # opacity of sound segments, of doubtful ones, of stubs inside a parent
 WHITE_PALE, WHITE_STUB = 0.65, 0.35  # this share of their colour is white: over a dark vessel they are light too
 LEAST_STUB_PX = 0.5  # a shorter gap between a node and a segment's first point does not show
@@ -48,14 +49,39 @@ LINE_SPACING = 1.4  # of a letter's height
 LONGEST_SIDE = 2000  # pixels of the drawing
 SHORTEST_SIDE = 900  # a small picture is enlarged so that labels do not hide it
 DPI = 100
+BAR_LETTERS = 9.5  # letters' room beside the picture for the colour bar
+LINE_PT, PRINT_LINE_PT = 0.8, 0.4  # width of outlines
+COMPRESSION = 3  # of zlib's 9: half the time of the usual 6 for a file a tenth larger
+PRINT_WIDTH_MM, PRINT_DPI, PRINT_LETTER_PT = 170.0, 300, 7.0  # two columns of a journal; common practice, no source
+MM_PER_INCH = 25.4
 BAR_SHARE = 0.2  # the scale bar is at most this share of the width
-WIDEST_RATIO = 1e4  # of the colours' range; smaller values take the darkest colour
-SHARES_SHOWN = 300.0  # largest over smallest share that has a colour of its own
 TICKS = ((1.0, 1.5, 2.0, 3.0, 5.0, 7.0), (1.0, 2.0, 5.0), (1.0,))  # within one decade, two, and more
-GREY = "#d0d0d0"
 DISC_OPACITY = 0.8
 DASH_PT = (7.0, 4.0)  # on and off, of a broken circle
 LABEL_SIZE, LABEL_LETTERS = 0.8, 2.0  # of a letter: a circle's label, and the room above that it needs
+
+
+@dataclass(frozen=True, slots=True)
+class _Sheet:
+    """Sizes of the drawing, in pixels of 1/DPI inch."""
+
+    wide: int  # of the picture on it
+    high: int
+    letter_pt: float
+    caption: tuple[str, ...]
+
+    @property
+    def letter(self) -> float:
+        return self.letter_pt * DPI / 72
+
+    @property
+    def foot(self) -> int:
+        """Room below the picture."""
+        return round((1.6 + LINE_SPACING * len(self.caption)) * self.letter)
+
+    @property
+    def total(self) -> FloatArray:
+        return np.array([self.wide + round(BAR_LETTERS * self.letter), self.high + self.foot], dtype=np.float64)
 
 
 def draw_overlay(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
@@ -77,51 +103,100 @@ def draw_overlay(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
     """
     height, width = tables.picture.shape
     scale = _drawing_scale(height, width)
-    size = np.maximum(np.array([width, height]) * scale, 1.0)
-    letter_pt = max(float(size.max()) / 130, 8.0)  # margins grow with the letters
-    letter = letter_pt * DPI / 72
-    caption = _caption(tables, colour_by, int(CAPTION_SHARE * size[0] / (LETTER_WIDTH * letter)))
-    foot = (1.6 + LINE_SPACING * len(caption)) * letter  # pixels below the picture
-    total = size + np.array([9.5 * letter, foot])
-    with mpl.rc_context():
-        mpl.rcdefaults()
-        mpl.rcParams["font.size"] = letter_pt
-        figure = Figure(figsize=tuple(total / DPI), dpi=DPI, facecolor="white")
-        canvas = FigureCanvasAgg(figure)
-        axes = figure.add_axes((0, foot / total[1], size[0] / total[0], size[1] / total[1]))
-        _draw_picture(axes, tables.picture, scale)
-        label, _ = COLOURED[colour_by]
-        values = _coloured_values(tables.segments, colour_by)
-        norm = _share_range(values) if colour_by == "share" else _colour_range(values, tables.segments)
-        colours = _class_colours(tables.segments) if colour_by == "class" else _colours(values, norm)
-        _draw_segments(axes, tables, colours, pale=colour_by != "share")
-        _draw_disc(axes, tables.image.iloc[0], letter_pt)
-        if colour_by == "class":
-            _draw_class_legend(figure, (size[0] + 0.5 * letter) / total[0])
-        elif norm is not None:
-            low_left = ((size[0] + 1.5 * letter) / total[0], (foot + 0.05 * size[1]) / total[1])
-            bar = figure.add_axes((*low_left, 1.5 * letter / total[0], 0.9 * size[1] / total[1]))
-            _draw_colour_bar(figure, bar, norm, label, _beyond(values, norm))
-        figure.text(
-            0.5 * letter / total[0],
-            0.5 * foot / total[1],
-            "\n".join(caption),
-            va="center",
-            linespacing=LINE_SPACING,
-        )
-        length_um = round_length_um(BAR_SHARE * width * tables.pixel_size_um)
-        length_px = length_um / tables.pixel_size_um * scale
-        shown = f"{length_um / UM_PER_MM:g} mm" if length_um >= UM_PER_MM else f"{length_um:g} µm"
-        _draw_scale_bar(figure, size[0] - length_px - 0.5 * letter, 0.5 * foot, length_px=length_px, label=shown)
+    wide, high = max(round(width * scale), 1), max(round(height * scale), 1)
+    sheet = _sheet(tables, colour_by, wide, high, letter_pt=max(max(wide, high) / 130, 8.0))
+    with _drawing_rules(sheet):
+        figure, axes = _blank(sheet)
+        renderer = FigureCanvasAgg(figure).get_renderer()  # type: ignore[no-untyped-call]
+        ground = np.asarray(
+            renderer.buffer_rgba()
+        )  # the picture goes in as it is: resampling costs half of the drawing
+        ground[:] = 255
+        shown = Image.fromarray(tables.picture).resize((wide, high), Image.Resampling[_how(scale)])
+        ground[:high, :wide, :3] = np.asarray(shown)[:, :, None]
+        figure.patch.set_visible(False)
+        _draw(figure, axes, tables, colour_by, sheet, line_pt=LINE_PT)
+        figure.draw(renderer)
+        drawn = Image.fromarray(ground[:, :, :3])
         buffer = BytesIO()
-        canvas.print_png(buffer, metadata={"Software": None})  # type: ignore[no-untyped-call]
+        drawn.save(buffer, "PNG", compress_level=COMPRESSION, dpi=(DPI, DPI))
     return buffer.getvalue()
 
 
-def _class_colours(segments: pd.DataFrame) -> FloatArray:
-    """Return the colour (n, 4) of each segment's class, grey where none is said."""
-    colours = [mpl.colors.to_rgba(CLASS_COLOURS.get(word, GREY)) for word in segments["vessel_class"]]
-    return np.array(colours, dtype=np.float64).reshape(-1, 4)
+def draw_for_print(tables: ImageTables, colour_by: ColourBy = "radius") -> bytes:
+    """Draw the same for print: 170 mm wide, the picture at no more than 300 dots an inch, all else as vectors and text.
+
+    Returns
+    -------
+    A PDF with its fonts embedded; the same tables give the same bytes.
+    """
+    height, width = tables.picture.shape
+    wide = round(PRINT_WIDTH_MM / MM_PER_INCH * DPI - BAR_LETTERS * PRINT_LETTER_PT * DPI / 72)
+    sheet = _sheet(tables, colour_by, wide, max(round(wide * height / width), 1), letter_pt=PRINT_LETTER_PT)
+    with _drawing_rules(sheet):
+        mpl.rcParams["pdf.fonttype"] = 42  # fonts as TrueType: text stays text in other programs
+        figure, axes = _blank(sheet)
+        most = (wide * PRINT_DPI // DPI, sheet.high * PRINT_DPI // DPI)
+        picture = Image.fromarray(tables.picture)
+        if width > most[0]:
+            picture = picture.resize(most, Image.Resampling.BOX)
+        extent = (-0.5, width - 0.5, height - 0.5, -0.5)
+        axes.imshow(np.asarray(picture), "gray", vmin=0, vmax=255, extent=extent, aspect="auto", interpolation="none")
+        _draw(figure, axes, tables, colour_by, sheet, line_pt=PRINT_LINE_PT)
+        buffer = BytesIO()
+        no_dates = {"CreationDate": None, "Producer": None, "Creator": None}
+        FigureCanvasPdf(figure).print_pdf(buffer, metadata=no_dates)  # type: ignore[no-untyped-call]
+    return buffer.getvalue()
+
+
+def _sheet(tables: ImageTables, colour_by: ColourBy, wide: int, high: int, *, letter_pt: float) -> _Sheet:
+    letters = int(CAPTION_SHARE * wide / (LETTER_WIDTH * letter_pt * DPI / 72))  # margins grow with the letters
+    return _Sheet(wide, high, letter_pt, tuple(_caption(tables, colour_by, letters)))
+
+
+@contextmanager
+def _drawing_rules(sheet: _Sheet) -> Iterator[None]:
+    """Draw by the library's own defaults, whatever the person's machine says."""
+    with mpl.rc_context():
+        mpl.rcdefaults()
+        mpl.rcParams["font.size"] = sheet.letter_pt
+        yield
+
+
+def _blank(sheet: _Sheet) -> tuple[Figure, Axes]:
+    """Make the figure and the axes of the picture on it."""
+    figure = Figure(figsize=tuple(sheet.total / DPI), dpi=DPI, facecolor="white")
+    axes = figure.add_axes((0, sheet.foot / sheet.total[1], sheet.wide / sheet.total[0], sheet.high / sheet.total[1]))
+    return figure, axes
+
+
+def _draw(
+    figure: Figure, axes: Axes, tables: ImageTables, colour_by: ColourBy, sheet: _Sheet, *, line_pt: float
+) -> None:
+    """Draw everything but the picture."""
+    height, width = tables.picture.shape
+    total, letter = sheet.total, sheet.letter
+    axes.set_xlim(-0.5, width - 0.5)
+    axes.set_ylim(height - 0.5, -0.5)
+    axes.set_axis_off()
+    values = coloured_values(tables.segments, colour_by)
+    norm = colours_span(values, tables.segments, colour_by)
+    colours = class_colours(tables.segments) if colour_by == "class" else value_colours(values, norm)
+    _draw_segments(axes, tables, colours, pale=colour_by != "share", line_pt=line_pt)
+    _draw_disc(axes, tables.image.iloc[0], sheet.letter_pt)
+    if colour_by == "class":
+        _draw_class_legend(figure, (sheet.wide + 0.5 * letter) / total[0])
+    elif norm is not None:
+        low_left = ((sheet.wide + 1.5 * letter) / total[0], (sheet.foot + 0.05 * sheet.high) / total[1])
+        bar = figure.add_axes((*low_left, 1.5 * letter / total[0], 0.9 * sheet.high / total[1]))
+        _draw_colour_bar(figure, bar, norm, COLOURED[colour_by][0], _beyond(values, norm))
+    at = (0.5 * letter / total[0], 0.5 * sheet.foot / total[1])
+    figure.text(*at, "\n".join(sheet.caption), va="center", linespacing=LINE_SPACING)
+    length_um = round_length_um(BAR_SHARE * width * tables.pixel_size_um)
+    length_px = length_um / tables.pixel_size_um * sheet.wide / width
+    shown = f"{length_um / UM_PER_MM:g} mm" if length_um >= UM_PER_MM else f"{length_um:g} µm"
+    left = sheet.wide - length_px - 0.5 * letter
+    _draw_scale_bar(figure, left, 0.5 * sheet.foot, length_px=length_px, label=shown)
 
 
 def _draw_class_legend(figure: Figure, left: float) -> None:
@@ -129,19 +204,6 @@ def _draw_class_legend(figure: Figure, left: float) -> None:
     shown = {**CLASS_COLOURS, "not said": GREY}
     handles = [Patch(facecolor=colour, edgecolor="black", label=word) for word, colour in shown.items()]
     figure.legend(handles=handles, loc="center left", bbox_to_anchor=(left, 0.5), frameon=False, handlelength=1.0)
-
-
-def _coloured_values(segments: pd.DataFrame, colour_by: ColourBy) -> FloatArray:
-    def column(name: str) -> FloatArray:
-        return segments[name].to_numpy(np.float64)
-
-    if colour_by == "class":
-        return np.full(len(segments), np.nan)
-    if colour_by == "share":
-        return 100.0 * column("resistance_share")
-    if colour_by == "uncertainty":
-        return 100.0 * column("radius_hydraulic_se_um") / column("radius_hydraulic_um")
-    return column("radius_mean_um" if colour_by == "radius" else "resistance_pa_s_m3")
 
 
 def _share_caption(tables: ImageTables) -> str:
@@ -160,7 +222,7 @@ def _share_caption(tables: ImageTables) -> str:
 
 def _caption(tables: ImageTables, colour_by: ColourBy, letters: int) -> list[str]:
     """Return the caption in lines of at most so many letters."""
-    n_doubtful = int(_is_doubtful(tables.segments).sum())
+    n_doubtful = int(is_doubtful(tables.segments).sum())
     caption = f"{tables.image_id}: {len(tables.segments)} segments, coloured by {COLOURED[colour_by][1]}."
     if colour_by == "share":
         caption += _share_caption(tables)
@@ -212,68 +274,24 @@ def _drawing_scale(height: int, width: int) -> float:
     return max(1.0, SHORTEST_SIDE / longest)
 
 
-def _draw_picture(axes: Axes, picture: AnyArray, scale: float) -> None:
-    height, width = picture.shape
-    shown: AnyArray = picture
-    if scale < 0.5:  # means of blocks first: cheaper than the plotting library's own resampling
-        shown = np.asarray(Image.fromarray(picture).reduce(int(1 / scale)))
-    extent = (-0.5, width - 0.5, height - 0.5, -0.5)
-    axes.imshow(shown, cmap="gray", vmin=0, vmax=255, extent=extent, aspect="auto", interpolation="nearest")
-    axes.set_axis_off()
-
-
-def _colour_map() -> ListedColormap:
-    """Perceptually uniform and readable without red-green vision."""
-    return ListedColormap(mpl.colormaps["viridis"](np.linspace(DARKEST, 1, 256)))
-
-
-def _colour_range(values: FloatArray, segments: pd.DataFrame) -> Normalize | None:
-    """Range of the colour bar; None where there is nothing to colour by.
-
-    One false segment, far thinner or wider than all vessels, must not make the others look alike: doubtful segments
-    have no say where there are others, and what is left counts by its length.
-    """
-    known = _is_known(values)
-    sound = known & ~_is_doubtful(segments)
-    chosen = sound if sound.any() else known
-    if not chosen.any():
-        return None
-    order = np.argsort(values[chosen], kind="stable")
-    sorted_values = values[chosen][order]
-    length = np.nan_to_num(segments["length_um"].to_numpy(np.float64)[chosen][order])
-    reached = np.cumsum(length) - 0.5 * length
-    shares = np.array(COLOURED_SHARES) * length.sum()
-    low, high = (float(value) for value in np.interp(shares, reached, sorted_values))
-    if high > LOGARITHMIC_FROM * low:
-        return LogNorm(max(low, high / WIDEST_RATIO), high, clip=True)
-    return Normalize(low, high, clip=True) if low < high else Normalize(0.9 * low, 1.1 * high, clip=True)
-
-
-def _share_range(values: FloatArray) -> Normalize | None:
-    """Range for shares: up to the largest, however short and doubtful its segment is, for it is what matters."""
-    known = values[_is_known(values)]
-    if not known.size:
-        return None
-    return LogNorm(float(known.max()) / SHARES_SHOWN, float(known.max()), clip=True)
+def _how(scale: float) -> str:
+    """Name the way to change the picture's size: enlarged it keeps its pixels, made smaller it takes their means."""
+    return "NEAREST" if scale >= 1 else "BOX"
 
 
 def _beyond(values: FloatArray, norm: Normalize) -> Literal["neither", "min", "max", "both"]:
     """Ends of the colour bar beyond which there are values."""
-    known = values[_is_known(values)]
+    known = values[is_known(values)]
     below, above = bool((known < (norm.vmin or 0)).any()), bool((known > (norm.vmax or 0)).any())
     if below and above:
         return "both"
     return "min" if below else "max" if above else "neither"
 
 
-def _is_known(values: FloatArray) -> BoolArray:
-    return np.asarray(np.isfinite(values) & (values > 0))
-
-
 def _draw_colour_bar(
     figure: Figure, place: Axes, norm: Normalize, label: str, beyond: Literal["neither", "min", "max", "both"]
 ) -> None:
-    bar = figure.colorbar(ScalarMappable(norm, _colour_map()), cax=place, label=label, extend=beyond, extendfrac=0.03)
+    bar = figure.colorbar(ScalarMappable(norm, colour_map()), cax=place, label=label, extend=beyond, extendfrac=0.03)
     if isinstance(norm, LogNorm):
         decades = np.log10(float(norm.vmax or 1) / float(norm.vmin or 1))
         bar.ax.yaxis.set_major_locator(LogLocator(subs=TICKS[min(int(decades), 2)]))
@@ -281,26 +299,17 @@ def _draw_colour_bar(
         bar.ax.yaxis.set_minor_formatter(NullFormatter())
 
 
-def _colours(values: FloatArray, norm: Normalize | None) -> FloatArray:
-    """Return the colour (n, 4) of each value, grey where it is not known."""
-    colours = np.tile(mpl.colors.to_rgba(GREY), (len(values), 1))
-    if norm is not None:
-        known = _is_known(values)
-        colours[known] = _colour_map()(norm(values[known]))
-    return colours
-
-
-def _draw_segments(axes: Axes, tables: ImageTables, colours: FloatArray, *, pale: bool) -> None:
+def _draw_segments(axes: Axes, tables: ImageTables, colours: FloatArray, *, pale: bool, line_pt: float) -> None:
     """Draw all segments; `pale` tells whether doubtful ones recede: where shares are shown they may matter most."""
-    doubtful = _is_doubtful(tables.segments)
-    outlines = _ribbons(tables.points, tables.segments["n_points"].to_numpy(), tables.pixel_size_um)
-    stubs, owners = _stubs(tables)
-    _draw_outlines(axes, stubs, _lightened(colours[owners], WHITE_STUB), alpha=STUB)
+    doubtful = is_doubtful(tables.segments)
+    outlines = ribbons(tables.points, tables.segments["n_points"].to_numpy(), tables.pixel_size_um)
+    inner, owners = stubs(tables)
+    _draw_outlines(axes, inner, _lightened(colours[owners], WHITE_STUB), alpha=STUB)
     if pale:
         colours[doubtful] = _lightened(colours[doubtful], WHITE_PALE)
     for chosen, alpha, style in ((doubtful, PALE if pale else OPAQUE, (0, (3, 2))), (~doubtful, OPAQUE, "solid")):
         shapes = [outlines[i] for i in np.flatnonzero(chosen)]
-        _draw_outlines(axes, shapes, colours[chosen], alpha=alpha, style=style)
+        _draw_outlines(axes, shapes, colours[chosen], alpha=alpha, style=style, line_pt=line_pt)
 
 
 def _lightened(colours: FloatArray, white: float) -> FloatArray:
@@ -314,6 +323,7 @@ def _draw_outlines(
     *,
     alpha: float,
     style: str | tuple[int, tuple[int, int]] | None = None,
+    line_pt: float = 0.0,
 ) -> None:
     """Fill the outlines; they are edged where a style of line is given."""
     if not outlines:
@@ -324,13 +334,13 @@ def _draw_outlines(
         outlines,
         facecolors=faces,
         edgecolors=colours if style else "none",
-        linewidths=0.8 if style else 0.0,
+        linewidths=line_pt,
         linestyles=[style or "solid"],
     )
     axes.add_collection(drawn, autolim=False)
 
 
-def _stubs(tables: ImageTables) -> tuple[list[FloatArray], IntArray]:
+def stubs(tables: ImageTables) -> tuple[list[FloatArray], IntArray]:
     """Outline of each piece between a node and the segment that begins beyond its lumen; and the segment's index."""
     segments = tables.segments
     n_points = segments["n_points"].to_numpy(np.int64)
@@ -353,7 +363,7 @@ def _stubs(tables: ImageTables) -> tuple[list[FloatArray], IntArray]:
     return outlines, np.array(owners, dtype=np.int64)
 
 
-def _ribbons(points: pd.DataFrame, n_points: AnyArray, pixel_size_um: float) -> list[FloatArray]:
+def ribbons(points: pd.DataFrame, n_points: AnyArray, pixel_size_um: float) -> list[FloatArray]:
     """Outline of each segment's lumen, (2 n, 2) x and y in pixels of the picture."""
     centre = points[["x_px", "y_px"]].to_numpy(np.float64)
     radius_px = np.nan_to_num(points["radius_um"].to_numpy(np.float64), nan=0.0) / pixel_size_um
@@ -366,11 +376,6 @@ def _ribbons(points: pd.DataFrame, n_points: AnyArray, pixel_size_um: float) -> 
     left, right = centre + across * radius_px[:, None], centre - across * radius_px[:, None]
     cuts = ends[:-1]
     return [np.concatenate([a, b[::-1]]) for a, b in zip(np.split(left, cuts), np.split(right, cuts), strict=True)]
-
-
-def _is_doubtful(segments: pd.DataFrame) -> BoolArray:
-    wanted = {code(flag) for flag in DOUBTFUL}
-    return np.array([not wanted.isdisjoint(text.split(";")) for text in segments["flags"]], dtype=bool)
 
 
 def round_length_um(longest_um: float) -> float:

@@ -2,13 +2,17 @@
 
 import csv
 import math
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+import re
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field
 from pathlib import Path
 from statistics import median
 
 from vasohm.results.cells import unguard_text
 from vasohm.results.markup import (
+    ASSETS,
+    FACTS,
+    FLAG_MEANING,
     Html,
     flag_codes,
     flag_meanings,
@@ -20,10 +24,13 @@ from vasohm.results.markup import (
     page,
     paragraph,
     picture,
+    section,
     shown,
     table,
+    tiles,
 )
 from vasohm.results.methods import Methods
+from vasohm.results.page_charts import Chart, charts_for_page, charts_for_print
 from vasohm.results.wording import SCALE_SOURCES, why_no_resistance
 from vasohm.results.write import write_atomically
 from vasohm.results.write_study import Failure
@@ -31,6 +38,15 @@ from vasohm.units import UM_PER_MM
 
 DESIGN_NAMES = ("subject", "eye", "group", "condition", "time")
 IDS_SHOWN = 5
+MOST_GROUPS = 12  # that a chart holds
+CHARTS_FILE = "distributions.svg"
+CHARTS_TOLD = "One dot an image, the line the median of its group. Groups are compared by the command compare."
+FURTHER = {  # what other commands may have laid here
+    "certificate.svg": "Certificate of measurement",
+    "appraisal.txt": "How far measured is from truth",
+    "compare/index.html": "Comparison of cohorts",
+}
+_SECTION = re.compile(r'<section id="([a-z]+)"[^>]*><h2>(.*?)</h2>')
 ROOT_FILES = (
     "images_all.csv",
     "networks_all.csv",
@@ -57,6 +73,7 @@ class Study:
     failures: tuple[Failure, ...]
     methods: Methods
     n_pending: int = 0  # images that no run has come to yet
+    versions: Mapping[str, str] = field(default_factory=dict)
 
 
 @dataclass(frozen=True, slots=True)
@@ -66,30 +83,147 @@ class _Glance:
     image: Mapping[str, str]
     median_radius_um: float
     largest: Mapping[str, str] | None  # the network that holds most length
-    has_overlay: bool
+
+
+def _longest_resistance(glance: _Glance) -> float:
+    return _number(glance.largest["resistance_pa_s_m3"]) if glance.largest is not None else math.nan
+
+
+MEASURES: dict[str, Callable[[_Glance], float]] = {
+    "Median lumen radius (µm)": lambda glance: glance.median_radius_um,
+    "Length density (mm/mm²)": lambda glance: _number(glance.image["length_density_per_mm"]),
+    "Resistance of the longest network (Pa·s/m³)": _longest_resistance,
+    "Mean tortuosity": lambda glance: _number(glance.image["tortuosity_mean"]),
+}
 
 
 def write_study_page(out_dir: Path, study: Study) -> None:
-    """Write index.html at the root of the results.
+    """Write index.html at the root of the results, and its charts for print beside it.
 
     Raises
     ------
     OSError : an image's tables cannot be read, or the page cannot be written.
     """
     glances = [_glance(out_dir / "images" / image_id) for image_id in study.image_ids]
-    body = [heading(study.name, 1), paragraph(_counts(study, glances))]
-    lacking = [(glance.image["image_id"], why) for glance in glances if (why := _why_none(glance.largest))]
-    body += [paragraph(line) for line in lines_without_resistance(lacking, len(glances))]
-    body.append(_failures(study.failures))
-    body += [heading("Cautions", 2), listing(study.methods.cautions)]
-    body += [heading("Images", 2), _images(glances)]
+    charts = _charts(glances)
+    drawing = out_dir / CHARTS_FILE
+    if charts:
+        write_atomically(drawing, charts_for_print(charts))
+    else:
+        drawing.unlink(missing_ok=True)
+    body = [_failures(study.failures), *_lacking(glances), _quality(glances)]
+    body.append(section("images", "Images", _images(glances)))
+    if charts:
+        print_link = paragraph("For print: ", link(CHARTS_FILE, CHARTS_FILE), ".")
+        body.append(
+            section("distributions", "Distributions", paragraph(CHARTS_TOLD), charts_for_page(charts), print_link)
+        )
+    body += _scenarios(out_dir / "scenarios_all.csv")
+    further = [(name, words) for name, words in FURTHER.items() if (out_dir / name).exists()]
+    if further:
+        body.append(section("further", "Certificate and comparison", listing(link(*one) for one in further)))
+    body.append(section("methods", "Methods", paragraph(study.methods.paragraph)))
+    bib = paragraph("As BibTeX: ", link("references.bib", "references.bib"), ".")
+    body.append(section("references", "References", listing(study.methods.references, numbered=True), bib))
+    body.append(section("cautions", "Cautions", listing(study.methods.cautions)))
     flags = [g.image["flags"] for g in glances] + [g.largest["flags"] for g in glances if g.largest]
-    body += [heading("What the flags mean", 2), flag_meanings(flags)]
-    body += [heading("Methods", 2), paragraph(study.methods.paragraph)]
-    body += [heading("References", 2), listing(study.methods.references, numbered=True)]
+    body.append(section("flags", "What the flags mean", flag_meanings(flags)))
+    versions = ", ".join(f"{name} {version}" for name, version in study.versions.items())
+    body.append(section("versions", "Versions", paragraph(versions or "Not told.")))
     files = [name for name in ROOT_FILES if (out_dir / name).exists()]
-    body += [heading("Files", 2), listing(link(name, name) for name in files)]
-    write_atomically(out_dir / "index.html", page(f"{study.name} - vasohm", body).encode())
+    body.append(section("files", "Files", listing(link(name, name) for name in files)))
+    top = [heading(study.name, 1), paragraph(_counts(study, glances)), _tiles(study, glances), _contents(body)]
+    text = page(f"{study.name} - vasohm", top, body, [f"{ASSETS}/study.js"])
+    write_atomically(out_dir / "index.html", text.encode())
+
+
+def _tiles(study: Study, glances: Sequence[_Glance]) -> Html:
+    measured = sum(glance.image["status"] == "measured" for glance in glances)
+    length_mm = sum(_known(glance.image["length_um"]) for glance in glances) / UM_PER_MM
+    segments = sum(int(glance.image["n_segments"] or 0) for glance in glances)
+    numbers: list[tuple[str | Html, str, bool]] = [
+        (str(len(study.failures)), "failed", bool(study.failures)),
+        (str(measured), "measured", False),
+        (str(len(glances) - measured), "empty", False),
+        (str(segments), "segments", False),
+        (Html(f"{shown(length_mm).source} mm"), "length of vessels", False),
+    ]
+    if study.n_pending:
+        numbers.insert(1, (str(study.n_pending), "not measured yet", True))
+    return tiles(numbers)
+
+
+def _contents(body: Sequence[Html]) -> Html:
+    """Links to the sections."""
+    found = [_SECTION.match(piece.source) for piece in body]
+    links = "".join(f'<a href="#{one[1]}">{one[2]}</a>' for one in found if one)
+    return Html(f'<nav aria-label="On this page">{links}</nav>')
+
+
+def _lacking(glances: Sequence[_Glance]) -> list[Html]:
+    lacking = [(glance.image["image_id"], why) for glance in glances if (why := _why_none(glance.largest))]
+    return [paragraph(line) for line in lines_without_resistance(lacking, len(glances))]
+
+
+def _quality(glances: Sequence[_Glance]) -> Html:
+    """Every flag of the images and their longest networks: how many images carry it, and which."""
+    ids: dict[str, list[str]] = {}
+    for glance in glances:
+        for flag in _flags(glance).split(";"):
+            if flag and flag not in FACTS:
+                ids.setdefault(flag, []).append(glance.image["image_id"])
+    if not ids:
+        return section("quality", "Quality", paragraph("No doubt is marked at any image or its longest network."))
+    common = sorted(ids.items(), key=lambda one: (-len(one[1]), one[0]))
+    rows = [(flag_codes(flag), str(len(found)), FLAG_MEANING.get(flag, ""), named(found)) for flag, found in common]
+    return section("quality", "Quality", table(("flag", "images", "what it means", "which"), rows, ["images"]))
+
+
+def _charts(glances: Sequence[_Glance]) -> list[Chart]:
+    measured = [glance for glance in glances if glance.image["status"] == "measured"]
+    if not measured:
+        return []
+    columns = _grouping(measured)
+    groups = [", ".join(filter(None, (glance.image[name] for name in columns))) for glance in measured]
+    charts = []
+    for title, value in MEASURES.items():
+        held: dict[str, dict[str, float]] = {name: {} for name in sorted(set(groups))}
+        for glance, name in zip(measured, groups, strict=True):
+            if not math.isnan(number := value(glance)):
+                held[name][glance.image["image_id"]] = number
+        charts.append(Chart(title, held))
+    return charts
+
+
+def _grouping(glances: Sequence[_Glance]) -> list[str]:
+    """Columns of the sheet that part the images into a few groups; as many of them as leave the charts readable."""
+    columns: list[str] = []
+    for name in ("group", "condition", "time"):
+        if len({glance.image.get(name, "") for glance in glances}) < 2:
+            continue
+        if len({tuple(glance.image[one] for one in (*columns, name)) for glance in glances}) <= MOST_GROUPS:
+            columns.append(name)
+    return columns
+
+
+def _scenarios(path: Path) -> list[Html]:
+    """What becomes of resistances, each scenario over all networks that have one."""
+    if not path.exists():
+        return []
+    ratios: dict[str, list[float]] = {}
+    images: dict[str, set[str]] = {}
+    for row in _read(path):
+        if not math.isnan(ratio := _number(row["ratio"])):
+            ratios.setdefault(row["scenario"], []).append(ratio)
+            images.setdefault(row["scenario"], set()).add(row["image_id"])
+    if not ratios:
+        return []
+    rows = [
+        (name, str(len(images[name])), str(len(found)), shown(median(found)), shown(min(found)), shown(max(found)))
+        for name, found in ratios.items()
+    ]
+    names = ("scenario", "images", "networks", "median of after / before", "smallest", "largest")
+    return [section("scenarios", "Scenarios", table(names, rows, names[1:]))]
 
 
 def images_without_resistance(out_dir: Path) -> list[tuple[str, str]]:
@@ -141,7 +275,7 @@ def _failures(failures: Sequence[Failure]) -> Html:
         return paragraph("No image failed.")
     rows = [(f.image_id, f.stage, f.error, f.message) for f in failures]
     told = table(("image", "stage", "error", "what was wrong and what to do"), rows)
-    return Html(f'<section class="alert">{heading("Failed images", 2).source}{told.source}</section>')
+    return Html(f'<section id="failed" class="alert">{heading("Failed images", 2).source}{told.source}</section>')
 
 
 def _images(glances: Sequence[_Glance]) -> Html:
@@ -154,42 +288,51 @@ def _images(glances: Sequence[_Glance]) -> Html:
         "resistance of the longest network (Pa·s/m³), 95 % interval",
     )
     names = ("picture", "image", "status", *design, *numbers, "flags")
-    return table(names, [_line(glance, design) for glance in glances], numbers)
+    found = table(names, [_line(glance, design) for glance in glances], numbers, sortable=True)
+    narrow = (
+        '<label>Only those with <input type="search" id="filter"></label><span id="count" aria-live="polite"></span>'
+    )
+    return Html(f'<div class="tools scripted" hidden>{narrow}</div>{found.source}')
 
 
 def _line(glance: _Glance, design: Sequence[str]) -> list[str | Html]:
     image = glance.image
     target = f"images/{image['image_id']}/"
-    thumbnail: str | Html = ""
-    if glance.has_overlay:
-        small = picture(f"{target}overlay.png", f"Segments of {image['image_id']}", "small")
-        thumbnail = link(f"{target}overlay.png", small)
+    small = picture(f"{target}thumbnail.jpg", f"Segments of {image['image_id']}", "small")
     resistance: str | Html = ""
-    flags = image["flags"]
     if glance.largest is not None:
         columns = ("resistance_pa_s_m3", "resistance_lo_pa_s_m3", "resistance_hi_pa_s_m3")
         resistance = interval(*(_number(glance.largest[name]) for name in columns))
         if _why_none(glance.largest):
             resistance = "none"
-        flags = ";".join(dict.fromkeys(filter(None, f"{flags};{glance.largest['flags']}".split(";"))))
     return [
-        thumbnail,
+        link(f"{target}index.html", small),
         link(f"{target}index.html", image["image_id"]),
         image["status"],
         *(image.get(name, "") for name in design),
         _pixel_size(image),
-        image["n_segments"],
+        Html(image["n_segments"], image["n_segments"]),
         shown(_number(image["length_um"]) / UM_PER_MM),
         shown(glance.median_radius_um),
         resistance,
-        flag_codes(flags),
+        flag_codes(_flags(glance)),
     ]
+
+
+def _flags(glance: _Glance) -> str:
+    """Flags of an image and of its longest network."""
+    more = glance.largest["flags"] if glance.largest is not None else ""
+    return ";".join(dict.fromkeys(filter(None, f"{glance.image['flags']};{more}".split(";"))))
+
+
+def _known(cell: str) -> float:
+    return float(cell) if cell else 0.0
 
 
 def _pixel_size(image: Mapping[str, str]) -> Html:
     size, se = shown(_number(image["pixel_size_um"])), shown(_number(image["pixel_size_se_um"]), 2)
     source = html(SCALE_SOURCES.get(image["pixel_size_source"], image["pixel_size_source"]))
-    return Html(f"{size.source}{f' ± {se.source}' if se.source else ''} <br>({source})")
+    return Html(f"{size.source}{f' ± {se.source}' if se.source else ''} <br>({source})", size.value)
 
 
 def _glance(folder: Path) -> _Glance:
@@ -201,7 +344,6 @@ def _glance(folder: Path) -> _Glance:
         image=image,
         median_radius_um=median(known) if known else math.nan,
         largest=max(networks, key=lambda row: _number(row["length_um"]), default=None),
-        has_overlay=(folder / "overlay.png").exists(),
     )
 
 

@@ -15,6 +15,7 @@ from vasohm.flow.monte_carlo import ResistanceIntervals
 from vasohm.flow.scenarios import ScenarioOutcomes
 from vasohm.image.prepare import PreparedImage
 from vasohm.image.segment import VesselMask
+from vasohm.network.edits import Edit
 from vasohm.network.graph import NodeKind
 from vasohm.network.morphometry import Morphometry
 from vasohm.network.radius import MeasuredGraph
@@ -58,6 +59,7 @@ class ImageTables:
     picture: AnyArray  # (h, w) uint8, the measured channel stretched for showing
     pixel_size_um: float
     notes: tuple[str, ...]
+    edits: tuple[Edit, ...] = ()  # a person's corrections that went into it
 
     @property
     def image(self) -> pd.DataFrame:
@@ -111,6 +113,7 @@ class Findings:
     shape: Morphometry
     scenarios: ScenarioOutcomes
     intervals: ResistanceIntervals
+    edits: tuple[Edit, ...] = ()  # as a person gave them
 
 
 def tabulate(image_id: str, design: Mapping[str, str], findings: Findings) -> ImageTables:
@@ -163,6 +166,7 @@ def tabulate(image_id: str, design: Mapping[str, str], findings: Findings) -> Im
         picture=findings.prepared.picture,
         pixel_size_um=findings.prepared.pixel_size_um,
         notes=findings.prepared.notes + findings.flow.terminals.notes + findings.intervals.notes,
+        edits=findings.edits,
     )
 
 

@@ -13,13 +13,15 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import IO, Any
 
+from vasohm.results.colouring import ColourBy
 from vasohm.results.column import Column
 from vasohm.results.columns_images import DISC
 from vasohm.results.encode import frame_pieces, graphml_bytes, json_bytes, mask_bytes
 from vasohm.results.image_page import image_page
-from vasohm.results.overlay import ColourBy, draw_overlay
+from vasohm.results.overlay import draw_for_print, draw_overlay
 from vasohm.results.schema import COLUMNS, OWN_IMAGE_NAMES, SCHEMA_VERSION, image_columns
 from vasohm.results.tables import ImageTables
+from vasohm.results.thumbnail import draw_thumbnail
 
 RECORD = "record.json"
 PARTIAL_SUFFIX = ".partial"  # of files and folders that a run has begun and not finished
@@ -27,7 +29,7 @@ RENAME_TRIES = 5  # a virus scanner or an open viewer can hold a file for a mome
 RENAME_WAIT_S = 0.2
 IMAGE_FILES = frozenset(
     [f"{table}.csv" for table in COLUMNS if table != "failures"]
-    + ["graph.graphml", "mask.tif", "fov.tif", "overlay.png", "index.html", RECORD]
+    + ["graph.graphml", "mask.tif", "fov.tif", "overlay.png", "overlay.pdf", "thumbnail.jpg", "index.html", RECORD]
 )
 
 
@@ -64,7 +66,13 @@ def replace_durably(partial: Path, path: Path) -> None:
 
 
 def write_image(
-    tables: ImageTables, folder: Path, record: Mapping[str, Any], *, overlay: bool, colour: ColourBy = "radius"
+    tables: ImageTables,
+    folder: Path,
+    record: Mapping[str, Any],
+    *,
+    overlay: bool,
+    colour: ColourBy = "radius",
+    for_print: bool = False,
 ) -> None:
     """Write all files of one image; the folder is complete when its record is there.
 
@@ -76,6 +84,7 @@ def write_image(
         image_id, status, notes and files.
     overlay : whether the picture is drawn.
     colour : what colours its segments.
+    for_print : whether it is drawn for print too.
 
     Raises
     ------
@@ -97,7 +106,7 @@ def write_image(
     partial = folder.with_name(f".{folder.name}.{tag()}{PARTIAL_SUFFIX}")
     partial.mkdir()
     try:
-        for name, file in _encode(tables, colour if overlay else None):
+        for name, file in _encode(tables, colour, overlay=overlay, for_print=for_print):
             own["files"][name] = _write_pieces(partial / name, file)
         _write_durably(partial / RECORD, json_bytes({**own, **record}))
         _sync_folder(partial)
@@ -149,7 +158,9 @@ def remove_partials(parent: Path, name: str = "") -> None:
             path.unlink(missing_ok=True)
 
 
-def _encode(tables: ImageTables, colour: ColourBy | None) -> Iterator[tuple[str, EncodedFile]]:
+def _encode(
+    tables: ImageTables, colour: ColourBy, *, overlay: bool, for_print: bool
+) -> Iterator[tuple[str, EncodedFile]]:
     """Make every file but the record, one at a time: all at once would need more memory than the measurement."""
     for table, frame in tables.tables.items():
         if table == "scenarios" and frame.empty:
@@ -159,9 +170,12 @@ def _encode(tables: ImageTables, colour: ColourBy | None) -> Iterator[tuple[str,
     yield "graph.graphml", EncodedFile([graphml_bytes(tables.graph)])
     yield "mask.tif", EncodedFile([mask_bytes(tables.mask, tables.pixel_size_um)])
     yield "fov.tif", EncodedFile([mask_bytes(tables.fov, tables.pixel_size_um)])
-    if colour is not None:
+    if overlay:
         yield "overlay.png", EncodedFile([draw_overlay(tables, colour)])
-    yield "index.html", EncodedFile([image_page(tables, colour).encode()])
+    if for_print:
+        yield "overlay.pdf", EncodedFile([draw_for_print(tables, colour)])
+    yield "thumbnail.jpg", EncodedFile([draw_thumbnail(tables, colour)])
+    yield "index.html", EncodedFile([image_page(tables, colour if overlay else None).encode()])
 
 
 def _image_table_columns(tables: ImageTables) -> tuple[Column, ...]:

@@ -6,6 +6,7 @@ import re
 import shutil
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
+from importlib.resources import files
 from pathlib import Path
 from typing import IO, Any
 
@@ -13,6 +14,7 @@ from vasohm.results.cells import guard_text
 from vasohm.results.column import Column
 from vasohm.results.columns_images import DISC
 from vasohm.results.encode import csv_bytes, json_bytes
+from vasohm.results.markup import ASSETS, PLOTTING
 from vasohm.results.methods import bibtex
 from vasohm.results.schema import (
     COLUMNS,
@@ -27,6 +29,7 @@ from vasohm.results.schema import (
 from vasohm.results.write import PARTIAL_SUFFIX, replace_durably, sync_file, tag, write_atomically
 
 PACKAGE_PROFILE = "https://datapackage.org/profiles/2.0/datapackage.json"
+OWN_SCRIPTS = ("image.js", "study.js")
 PER_IMAGE_TABLES = ("nodes", "points", "scales")  # too many rows to gather: described where they are
 
 
@@ -133,6 +136,22 @@ def write_study_json(out_dir: Path, content: Mapping[str, Any]) -> None:
 def write_references(out_dir: Path, references: Sequence[str]) -> None:
     """Write references.bib, the sources that the run's methods lean on."""
     write_atomically(out_dir / "references.bib", bibtex(references).encode())
+
+
+def write_scripts(out_dir: Path) -> None:
+    """Write the scripts of the pages, the plotting library's and our own, that all pages share.
+
+    Raises
+    ------
+    OSError : they cannot be read where they are installed, or not written.
+    """
+    folder = out_dir / ASSETS
+    folder.mkdir(exist_ok=True)
+    plotting = files("bokeh").joinpath("server", "static", "js")
+    own = files("vasohm.results").joinpath("scripts")
+    for place, names in ((plotting, PLOTTING), (own, OWN_SCRIPTS)):
+        for name in names:
+            write_atomically(folder / name, place.joinpath(name).read_bytes())
 
 
 def _resource(table: StudyTable) -> dict[str, Any]:

@@ -18,6 +18,7 @@ from vasohm.results.write_study import (
     write_datapackage,
     write_failures,
     write_references,
+    write_scripts,
     write_study_json,
 )
 from vasohm.study.ending import EXIT_OK, EXIT_SOME_FAILED
@@ -80,7 +81,13 @@ def write_root(out: Path, state: StudyState) -> None:
     write_datapackage(out, state.study, tables, image_ids)
     write_references(out, state.methods.references)
     write_study_json(out, state.plain())
-    write_study_page(out, StudyAtAGlance(state.study, image_ids, failures, state.methods))
+    write_scripts(out)
+    write_study_page(
+        out,
+        StudyAtAGlance(
+            state.study, image_ids, failures, state.methods, n_pending=state.counts[PENDING], versions=state.versions
+        ),
+    )
 
 
 def write_state(out: Path, state: StudyState) -> None:

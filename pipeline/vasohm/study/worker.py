@@ -74,7 +74,7 @@ def _measure(task: Task, trail: "Trail") -> str:
         raise ImageError(msg)
     record: dict[str, Any] = key.plain()
     output = task.settings.output
-    write_image(tables, task.folder, record, overlay=output.overlay, colour=output.colour)
+    write_image(tables, task.folder, record, overlay=output.overlay, colour=output.colour, for_print=output.for_print)
     return tables.status
 
 
