@@ -4,8 +4,8 @@ import csv
 import hashlib
 import json
 import math
-import re
 import os
+import re
 from dataclasses import dataclass, replace
 from io import BytesIO
 from pathlib import Path
@@ -33,16 +33,17 @@ from vasohm.image.disc import OpticDisc
 from vasohm.image.eye import EyeSettings
 from vasohm.image.prepare import ImageQuality, PreparedImage, PrepareSettings
 from vasohm.image.segment import SegmentSettings, VesselMask
+from vasohm.network.class_trees import TreeSettings
 from vasohm.network.graph import Crossings, NodeKind, VesselClass, VesselGraph
 from vasohm.network.lumenfit import RadiusSettings
 from vasohm.network.morphometry import Morphometry, ShapeSettings, Surroundings, describe_shape
 from vasohm.network.radius import MeasuredGraph
 from vasohm.results.cells import guard_text, unguard_text
-from vasohm.results.encode import json_bytes
 from vasohm.results.colouring import COLOURED, ColourBy
+from vasohm.results.encode import json_bytes
 from vasohm.results.image_page import image_page
 from vasohm.results.methods import Methods, MethodsUsed, bibtex, describe_methods
-from vasohm.results.overlay import draw_for_print, draw_overlay, round_length_um
+from vasohm.results.overlay import draw_overlay, round_length_um
 from vasohm.results.pages import Study, images_without_resistance, lines_without_resistance, write_study_page
 from vasohm.results.schema import COLUMNS, column_names
 from vasohm.results.tables import Findings, ImageTables, tabulate
@@ -304,6 +305,9 @@ def methods_used(law: str = "constant", method: str = "ridge", n_masked: int = 0
         n_masked=n_masked,
         intervals=IntervalSettings("auto", 1000, 0),
         targets=None,
+        shape=ShapeSettings((0.5, 1.0), "knudtson", (8.5,), "none"),
+        trees=TreeSettings(by_class=False),
+        with_disc=True,
     )
 
 
@@ -723,7 +727,7 @@ def test_pages_show_text_as_text(results: Path) -> None:
         assert "default-src 'none'" in text
         assert "http://" not in text
         assert 'src="http' not in text
-    assert "<b>" not in (results / "index.html").read_text(encoding="utf-8")
+    assert "Demo <b>" not in (results / "index.html").read_text(encoding="utf-8")
 
 
 def test_study_page_tells_failures_cautions_and_every_image(results: Path) -> None:
@@ -784,11 +788,11 @@ def test_pages_tell_scale_order_and_why_there_is_no_resistance(tmp_path: Path) -
     """Who reads only the page must learn how sure the scale is, and why the main result is missing."""
     tables = make_tables("a")
     page = image_page(tables, None)
-    assert "pixel size: 2 µm, its uncertainty is not told, from the image sheet" in page
+    assert "Pixel size: 2 µm, its uncertainty is not told, from the image sheet" in page
     assert pixel_size_words(7.0, 0.7, "study") == "7 µm ± 0.7 µm (k = 1), from [scale] of the study"
     assert 'href="#flag-terminals_joined"' not in page  # how it was done, no doubt; explained once at the end
     assert page.index("No doubt, and therefore not marked") < page.index('<span id="flag-terminals_joined">')
-    order = [page.index(f'<td data-name="share" class="number">{share}</td>') for share in ("0.600", "0.400", "0")]
+    order = [page.index(f'<td data-name="share" class="number" data-value="{share}') for share in ("0.6", "0.4", "0")]
     assert order == sorted(order)
     assert "has no resistance" not in page
     networks = tables.networks.assign(resistance_pa_s_m3=math.nan, flags="no_terminals;mesh")

@@ -137,6 +137,7 @@ CONTRACT = """
     [output]
     overlay = false
     colour = "share"
+    print = true
 """
 
 
@@ -147,7 +148,7 @@ def test_every_key_reaches_its_setting(tmp_path: Path) -> None:
     assert (study.name, study.path) == ("demo", tmp_path / "study.toml")
     assert [source.image_id for source in study.images] == ["a", "b"]
     assert (study.sheet, study.lines) == ("images.csv", {"a": 2, "b": 3})
-    assert (chosen.preset, chosen.output) == ("fundus", OutputSettings(overlay=False, colour="share", for_print=False))
+    assert (chosen.preset, chosen.output) == ("fundus", OutputSettings(overlay=False, colour="share", for_print=True))
     assert chosen.classes == ClassSettings("none", 0.9)
     assert (chosen.read.plane, chosen.read.max_megapixels, chosen.read.channel) == ("max", 100.0, "green")
     assert (chosen.prepare.channel, chosen.prepare.polarity, chosen.prepare.gamma) == ("green", "dark", 2.2)
@@ -230,6 +231,7 @@ NONSENSE = [True, float("nan"), float("inf"), -1, "nonsense", [], {"a": {"b": 1}
 SWITCHES = {
     ("study", "allow_outside"),
     ("output", "overlay"),
+    ("output", "print"),
     ("blood", "hematocrit_split"),
     ("segment", "overlap_adds"),
     ("network", "trees_by_class"),

@@ -92,7 +92,7 @@ def image_page(tables: ImageTables, overlay: ColourBy | None) -> str:
     body.append(section("files", "Files", listing(link(name, name) for name in names)))
     scripts = [f"../../{ASSETS}/{name}" for name in (*PLOTTING, "image.js")] if lives else []
     data = page_data(tables, overlay) if lives else ""
-    return page(f"{tables.image_id} - vasohm", top, body, scripts, data)
+    return page(f"{tables.image_id} - vasohm", body, top=top, scripts=scripts, data=data)
 
 
 def _summary(tables: ImageTables) -> Html:

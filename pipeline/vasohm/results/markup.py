@@ -37,17 +37,20 @@ def html(value: "str | Html") -> str:
     return value.source if isinstance(value, Html) else escape(value, quote=True)
 
 
-def page(title: str, top: Iterable[Html], body: Iterable[Html], scripts: Sequence[str] = (), data: str = "") -> str:
+def page(
+    title: str, body: Iterable[Html], *, top: Iterable[Html] = (), scripts: Sequence[str] = (), data: str = ""
+) -> str:
     """Build a whole page that works from disk.
 
     Parameters
     ----------
     title : of the window.
-    top : what stands in the page's head: where one is, and what this is.
-    body : the rest.
+    body : what it tells.
+    top : what stands above it: where one is, and what this is.
     scripts : files beside the page, run in this order when the page has been read.
     data : JSON for them, in which no "<" occurs.
     """
+    head = "\n".join(piece.source for piece in top)
     held = f'<script type="application/json" id="data">{data}</script>\n' if data else ""
     return (
         '<!DOCTYPE html>\n<html lang="en">\n<head>\n<meta charset="utf-8">\n'
@@ -55,9 +58,9 @@ def page(title: str, top: Iterable[Html], body: Iterable[Html], scripts: Sequenc
         '<meta name="viewport" content="width=device-width, initial-scale=1">\n'
         f"<title>{html(title)}</title>\n<style>{STYLE}</style>\n"
         + "".join(f'<script defer src="{html(script)}"></script>\n' for script in scripts)
-        + "</head>\n<body>\n<header>\n"
-        + "\n".join(piece.source for piece in top)
-        + "\n</header>\n<main>\n"
+        + "</head>\n<body>\n"
+        + (f"<header>\n{head}\n</header>\n" if head else "")
+        + "<main>\n"
         + "\n".join(piece.source for piece in body)
         + f"\n</main>\n<footer><p>{NOTICE}</p></footer>\n{held}</body>\n</html>\n"
     )

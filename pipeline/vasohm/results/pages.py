@@ -133,7 +133,7 @@ def write_study_page(out_dir: Path, study: Study) -> None:
     files = [name for name in ROOT_FILES if (out_dir / name).exists()]
     body.append(section("files", "Files", listing(link(name, name) for name in files)))
     top = [heading(study.name, 1), paragraph(_counts(study, glances)), _tiles(study, glances), _contents(body)]
-    text = page(f"{study.name} - vasohm", top, body, [f"{ASSETS}/study.js"])
+    text = page(f"{study.name} - vasohm", body, top=top, scripts=[f"{ASSETS}/study.js"])
     write_atomically(out_dir / "index.html", text.encode())
 
 
