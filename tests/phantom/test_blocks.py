@@ -98,7 +98,7 @@ def test_a_full_disk_is_told_before_it_kills(monkeypatch):
         raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC))
 
     monkeypatch.setattr(os, "posix_fallocate", full)
-    with pytest.raises(ImageError, match="1 MB more where .* TMPDIR"):
+    with pytest.raises(ImageError, match=r"1 MB more where .* TMPDIR"):
         blocks.on_disk((1000, 1000), np.uint8)
 
 
@@ -188,7 +188,7 @@ def test_lines_longer_than_a_group_keep_their_variance():
         np.arange(50.0), np.zeros(50), np.array([0, 30, 50]), np.ones(50), np.zeros(2, int), np.array([0, 1]),
         np.array([1, 2]),
     )  # fmt: skip
-    cut = grouped._cut_where(lines, np.repeat([0, 1], [30, 20]), np.arange(50), 12)  # noqa: SLF001
+    cut = grouped._cut_where(lines, np.repeat([0, 1], [30, 20]), np.arange(50), 12)
     assert np.diff(cut.offsets).tolist() == [10, 10, 10, 10, 10]
     assert cut.line.tolist() == [0, 0, 0, 1, 1]
     assert (cut.node_a[0], cut.node_b[2], cut.node_a[3], cut.node_b[4]) == (0, 1, 1, 2)

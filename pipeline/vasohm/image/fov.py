@@ -51,7 +51,7 @@ def find_field_of_view(brightness: Float32Array, *, vessels_are_dark: bool) -> B
 
 
 def black_limit(lowest: float, bright: float) -> float:
-    """Brightness below which dark vessels' surroundings are no tissue; `bright` is exceeded by a tenth of the pixels."""
+    """Brightness below which there is no tissue around dark vessels; `bright` is that of the brightest tenth."""
     return lowest + BLACK_SHARE * (bright - lowest)
 
 

@@ -189,10 +189,7 @@ def _look(
     for block in blocks_of(shape, CORE_PX, HALO_PX):
         core = block.core
         brightness, _ = _brightness(scaled, settings, levels, block)
-        if fov is not None:
-            inside = fov[core]
-        else:
-            inside = _inside(brightness, settings, border, block)[block.inner]
+        inside = fov[core] if fov is not None else _inside(brightness, settings, border, block)[block.inner]
         here = inside & ~invalid[core]
         valid[core] = here
         level[_on_grid(core)] = block_mean(np.where(here, brightness[block.inner], 0), grid)

@@ -7,12 +7,13 @@ import numpy as np
 
 from vasohm.arrays import BoolArray, freeze
 from vasohm.errors import ImageError, PluginError
-from vasohm.image.blocks import on_disk, release, working_blocks
+from vasohm.image.blocks import Block, on_disk, release, working_blocks
 from vasohm.image.prepare import PreparedImage, crop
 from vasohm.image.segmenters import hessian, ridge
 from vasohm.plugins import PluginKind, load_plugin, plugin_names, refuse_plugin
 
 SAMPLED_BLOCKS = 5  # of a large picture that are asked for what all its blocks share
+SAMPLED_PX = 1500  # edge of the piece of each that is looked at
 FULL_SHARE = 0.98  # of the field: a mask that holds everything holds no vessel
 
 
@@ -122,15 +123,27 @@ def _find_in_blocks(prepared: PreparedImage, segmenter: Segmenter, parameters: M
     release(prepared.fov)
     if segmenter.learn is not None:
         rank = np.linspace(0, len(blocks) - 1, min(len(blocks), SAMPLED_BLOCKS)).round().astype(int)
-        told = [segmenter.learn(crop(prepared, blocks[k].window), parameters) for k in rank]
+        told = [segmenter.learn(crop(prepared, _middle(blocks[k])), parameters) for k in rank]
         parameters = {**parameters, **{key: float(np.nanmedian([one[key] for one in told])) for key in told[0]}}
-    mask = on_disk(prepared.fov.shape, np.bool_)
+    mask: BoolArray = on_disk(prepared.fov.shape, np.bool_)
     for block in blocks:
         piece = crop(prepared, block.window)
         if np.any(piece.signal):
             mask[block.core] = segmenter.find(piece, parameters)[block.inner]
         release(mask)
     return mask
+
+
+def _middle(block: Block) -> tuple[slice, slice]:
+    """Window around the middle of a block, large enough to tell what is to be learnt."""
+    rows, columns = (
+        slice(
+            max(part.start, (part.start + part.stop - SAMPLED_PX) // 2),
+            min(part.stop, (part.start + part.stop + SAMPLED_PX) // 2),
+        )
+        for part in block.window
+    )
+    return rows, columns
 
 
 def get_segmenter(name: str) -> Segmenter:

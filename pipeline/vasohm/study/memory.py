@@ -12,21 +12,26 @@ from vasohm.image.read import shown
 # Peak resident memory of whole measurements, fundus pictures of 0.5, 2 and 8 megapixels: 315, 598 and 1102 MB
 PROGRAM_MB = 340.0
 BYTES_PER_PIXEL = 135.0
+BYTES_BEYOND_BLOCK = 12.0  # a pixel of a picture that is measured in blocks, beyond what the first block takes
 BYTES_PER_FURTHER_PLANE = 8.0  # decoded, with its share of a mean
 MB = 1024.0 * 1024.0
-_PAGE_BYTES = resource.getpagesize()
 
 
-def predicted_mb(path: Path) -> float | None:
-    """Return the peak memory that measuring a picture will take, in MB; None where its header is unreadable."""
+def predicted_mb(path: Path, block_megapixels: float) -> float | None:
+    """Return the peak memory that measuring a picture will take, in MB; None where its header is unreadable.
+
+    Larger pictures than `block_megapixels` are measured in blocks of so many.
+    """
     declared = declared_size(path)
     if declared is None:
         return None
-    per_pixel = BYTES_PER_PIXEL + BYTES_PER_FURTHER_PLANE * (declared.planes - 1)
-    return PROGRAM_MB + declared.width_px * declared.height_px * per_pixel / MB
+    n_pixels = declared.width_px * declared.height_px
+    at_once = min(n_pixels, block_megapixels * 1e6)
+    further = BYTES_PER_FURTHER_PLANE * (declared.planes - 1) * n_pixels
+    return PROGRAM_MB + (BYTES_PER_PIXEL * at_once + BYTES_BEYOND_BLOCK * (n_pixels - at_once) + further) / MB
 
 
-def refuse_beyond(path: Path, limit_mb: float) -> None:
+def refuse_beyond(path: Path, limit_mb: float, block_megapixels: float) -> None:
     """Stop before a picture is decoded that will not fit.
 
     Raises
@@ -34,7 +39,7 @@ def refuse_beyond(path: Path, limit_mb: float) -> None:
     MemoryLimitError
         Naming what is predicted, and the limit.
     """
-    wanted_mb = predicted_mb(path)
+    wanted_mb = predicted_mb(path, block_megapixels)
     if wanted_mb is not None and wanted_mb > limit_mb:
         msg = (
             f"{shown(path)}: measuring it will take about {wanted_mb:.0f} MB, more than memory_limit_mb = "
@@ -47,7 +52,8 @@ def refuse_beyond(path: Path, limit_mb: float) -> None:
 def memory_limited(limit_mb: float | None) -> Iterator[None]:
     """Let allocations in this block fail, as MemoryError, that would take this process beyond a limit.
 
-    The kernel counts addresses and not memory in use, so that what the program has mapped and not touched is added.
+    The kernel counts what the program may write to, files apart, and not memory in use, so that what it has mapped and
+    not touched is added.
 
     Parameters
     ----------
@@ -57,21 +63,22 @@ def memory_limited(limit_mb: float | None) -> Iterator[None]:
     if limit_mb is None:
         yield
         return
-    before = resource.getrlimit(resource.RLIMIT_AS)
+    before = resource.getrlimit(resource.RLIMIT_DATA)
     limit = int(limit_mb * MB) + _untouched_bytes()
     if before[0] != resource.RLIM_INFINITY:
         limit = min(limit, before[0])
-    resource.setrlimit(resource.RLIMIT_AS, (limit, before[1]))
+    resource.setrlimit(resource.RLIMIT_DATA, (limit, before[1]))
     try:
         yield
     finally:
-        resource.setrlimit(resource.RLIMIT_AS, before)
+        resource.setrlimit(resource.RLIMIT_DATA, before)
 
 
 def _untouched_bytes() -> int:
-    """Mapped and not resident so far, from proc(5), statm."""
+    """Bytes that are mapped for writing and not resident so far, from proc(5), status."""
     try:
-        mapped, resident, *_ = Path("/proc/self/statm").read_text(encoding="ascii").split()
-    except OSError:  # a system that does not tell: the limit is then on addresses
+        lines = Path("/proc/self/status").read_text(encoding="ascii", errors="replace").splitlines()
+    except OSError:  # a system that does not tell: the limit is then on what is mapped
         return 0
-    return (int(mapped) - int(resident)) * _PAGE_BYTES
+    kilobytes = {line.split(":")[0]: int(line.split()[1]) for line in lines if line.startswith(("VmData:", "RssAnon:"))}
+    return max(kilobytes.get("VmData", 0) - kilobytes.get("RssAnon", 0), 0) * 1024

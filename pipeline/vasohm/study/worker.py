@@ -63,7 +63,7 @@ def measure_and_write(task: Task) -> Outcome:
 
 def _measure(task: Task, trail: "Trail") -> str:
     if task.limits.memory_limit_mb is not None:
-        refuse_beyond(task.source.file, task.limits.memory_limit_mb)
+        refuse_beyond(task.source.file, task.limits.memory_limit_mb, task.settings.read.block_megapixels)
     key = content_key(task.source, task.settings, task.versions)
     tables = measure_source(task.source, task.settings, trail.stage)
     trail.stage("write")
@@ -124,7 +124,8 @@ def _failure(fault: BaseException, stage: str, task: Task) -> Failure:
 
 
 def _wanted(task: Task) -> str:
-    limit_mb, wanted_mb = task.limits.memory_limit_mb, predicted_mb(task.source.file)
+    limit_mb = task.limits.memory_limit_mb
+    wanted_mb = predicted_mb(task.source.file, task.settings.read.block_megapixels)
     wanted = f"About {wanted_mb:.0f} MB were predicted" if wanted_mb is not None else "What it takes is not known"
     limit = f"memory_limit_mb is {limit_mb:g}" if limit_mb is not None else "no memory_limit_mb is set"
     return f"{wanted}, {limit}. Use fewer workers, a higher limit in [run], or a machine with more memory."
