@@ -792,7 +792,7 @@ def test_pages_tell_scale_order_and_why_there_is_no_resistance(tmp_path: Path) -
     assert pixel_size_words(7.0, 0.7, "study") == "7 µm ± 0.7 µm (k = 1), from [scale] of the study"
     assert 'href="#flag-terminals_joined"' not in page  # how it was done, no doubt; explained once at the end
     assert page.index("No doubt, and therefore not marked") < page.index('<span id="flag-terminals_joined">')
-    order = [page.index(f'<td data-name="share" class="number" data-value="{share}') for share in ("0.6", "0.4", "0")]
+    order = [page.index(f'">{share}</td>', page.index('<td data-name="share"')) for share in ("0.600", "0.400", "0")]
     assert order == sorted(order)
     assert "has no resistance" not in page
     networks = tables.networks.assign(resistance_pa_s_m3=math.nan, flags="no_terminals;mesh")
