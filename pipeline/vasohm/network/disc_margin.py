@@ -16,7 +16,7 @@ LOOKED_FOR = (0.65, 1.45)  # radii between which a margin may lie
 SEEN_BEYOND = 1.2  # radii: where the field ends before, its border would be taken for the margin
 TOLERANCE = 0.12  # of the radius: margins further off the circle count as another thing's
 TURNS = 8
-LEAST_DIRECTIONS = 18  # a quarter of the round: a circle through less says little of its radius
+LEAST_DIRECTIONS = 12  # a sixth of the round: a circle through less says little of its radius
 FURTHEST = 1.0  # radii that a circle may wander from where it began
 GROWTH = (0.5, 1.6)  # of the radius in one turn; beyond it the circle runs away
 STILL = 0.015  # of the radius: a circle that moves less has arrived
@@ -89,7 +89,7 @@ def fit_margin(ground: Ground, start: Circle) -> Margin | None:
     Returns
     -------
     Margin
-        None where fewer than a quarter of the directions are seen, or the circle runs away.
+        None where fewer than a sixth of the directions are seen, or the circle runs away.
 
     Notes
     -----

@@ -70,7 +70,7 @@ def find_disc(graph: VesselGraph, prepared: PreparedImage, vessels: BoolArray) -
     come from phantoms with and without discs, with bright spots elsewhere, and say how probable it is that the centre
     is right within a tenth of the disc's diameter. Where one probable place lies inside another, as the cup does in the
     disc, the outer one is taken; a rival elsewhere takes its part of the confidence, for an eye has one disc. A disc
-    that is seen in part is found where at least a quarter of its margin is in the field.
+    that is seen in part is found where at least a sixth of its margin is seen between vessels.
     """
     if graph.n_points == 0:
         return _refuse("no vessel leads to one")
