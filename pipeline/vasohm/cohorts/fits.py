@@ -124,7 +124,8 @@ def shared_variance(weights: FloatArray, design: FloatArray, shared: FloatArray)
     residual = float(np.sum(np.square(shared)) - np.sum(np.square(basis.T @ shared)))
     whole = float(np.sum(np.square(weights @ shared)))
     kept = whole - max(residual, 0.0) / (n - p) * float(weights @ weights)
-    return kept if kept > ROUNDING * whole else 0.0
+    largest = float(np.sum(np.abs(weights) @ np.abs(shared))) ** 2  # were all of one sign
+    return kept if kept > ROUNDING * largest else 0.0
 
 
 def fit_regression(

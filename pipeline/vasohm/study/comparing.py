@@ -129,12 +129,10 @@ def write_comparison(found: StudyComparison, out_dir: Path) -> None:
         digest = hashlib.sha256(content).hexdigest()
         written.append(StudyTable(f"{name}.csv", name, columns, len(content), digest))
     tables, by = found.comparison.tables, found.settings.by
-    pictures = {"forest": {kind: draw_forest(tables["comparison"], kind) for kind in ("svg", "png")}}
+    pictures = {"forest": draw_forest(tables["comparison"])}
     for number, outcome in enumerate(dict.fromkeys(one.name for one in found.outcomes), start=1):
         if (tables["levels"]["outcome"] == outcome).any():
-            pictures[f"levels-{number}"] = {
-                kind: draw_levels(tables, outcome, by, found.settings.reference, kind) for kind in ("svg", "png")
-            }
+            pictures[f"levels-{number}"] = draw_levels(tables, outcome, by, found.settings.reference)
     for name, drawn in pictures.items():
         for kind, content in drawn.items():
             write_atomically(out_dir / f"{name}.{kind}", content)

@@ -44,17 +44,16 @@ _STYLE: dict[Any, Any] = {
 
 
 @mpl.rc_context(_STYLE)
-def draw_forest(comparison: pd.DataFrame, kind: str) -> bytes:
+def draw_forest(comparison: pd.DataFrame) -> dict[str, bytes]:
     """Draw the ratio of every contrast with its 95 % interval, one a line.
 
     Parameters
     ----------
     comparison : the table of contrasts; those without an interval are named as such.
-    kind : png or svg.
 
     Returns
     -------
-    A picture; the same table gives the same bytes.
+    The picture as svg and as png; the same table gives the same bytes.
     """
     rows: list[dict[Any, Any]] = comparison.to_dict("records")
     figure = _figure(1.0 + ROW_IN * max(len(rows), 2))
@@ -77,11 +76,11 @@ def draw_forest(comparison: pd.DataFrame, kind: str) -> bytes:
     axes.tick_params(axis="y", length=0)
     axes.set_xlabel("ratio of geometric means, with 95 % interval")
     axes.annotate("ratio (95 % interval), p adjusted", (1.01, len(rows) - 0.35), xycoords=of_line, fontsize=7)
-    return _encoded(figure, kind)
+    return _encoded(figure)
 
 
 @mpl.rc_context(_STYLE)
-def draw_levels(tables: Mapping[str, pd.DataFrame], outcome: str, by: str, reference: str, kind: str) -> bytes:
+def draw_levels(tables: Mapping[str, pd.DataFrame], outcome: str, by: str, reference: str) -> dict[str, bytes]:
     """Draw an outcome by level: each subject a point, pairs joined, the mean with its 95 % interval.
 
     Parameters
@@ -90,11 +89,10 @@ def draw_levels(tables: Mapping[str, pd.DataFrame], outcome: str, by: str, refer
     outcome : table.column.
     by : column of the levels.
     reference : the level that stands first.
-    kind : png or svg.
 
     Returns
     -------
-    A picture; the same tables give the same bytes.
+    The picture as svg and as png; the same tables give the same bytes.
     """
     levels, subjects = (_of(tables[name], outcome) for name in ("levels", "subjects"))
     panels: list[Any] = list(levels.groupby(["calibre_class", "vessel_class"], sort=False).groups)
@@ -112,7 +110,7 @@ def draw_levels(tables: Mapping[str, pd.DataFrame], outcome: str, by: str, refer
         axes.set_xlabel(by)
         if (number - 1) % PANELS_A_ROW == 0:
             axes.set_ylabel(f"{outcome_words(outcome)}{f' ({unit})' if unit else ''}")
-    return _encoded(figure, kind)
+    return _encoded(figure)
 
 
 def _draw_panel(axes: Axes, levels: pd.DataFrame, subjects: pd.DataFrame, reference: str) -> None:
@@ -216,11 +214,9 @@ def _figure(height_in: float, share: float = 1.0) -> Figure:
     return Figure(figsize=(WIDTH_IN * share, height_in), dpi=DPI, facecolor="white", layout="constrained")
 
 
-def _encoded(figure: Figure, kind: str) -> bytes:
-    buffer = BytesIO()
-    if kind == "png":
-        FigureCanvasAgg(figure).print_png(buffer, metadata={"Software": None})  # type: ignore[no-untyped-call]
-    else:
-        metadata = {"Date": None, "Creator": None}
-        FigureCanvasSVG(figure).print_svg(buffer, metadata=metadata)  # type: ignore[no-untyped-call]
-    return buffer.getvalue()
+def _encoded(figure: Figure) -> dict[str, bytes]:
+    svg, png = BytesIO(), BytesIO()
+    metadata = {"Date": None, "Creator": None}
+    FigureCanvasSVG(figure).print_svg(svg, metadata=metadata)  # type: ignore[no-untyped-call]
+    FigureCanvasAgg(figure).print_png(png, metadata={"Software": None})  # type: ignore[no-untyped-call]
+    return {"svg": svg.getvalue(), "png": png.getvalue()}
