@@ -29,7 +29,9 @@ BLUR_CELLS = 2.0  # bridges what one step of turn and scale leaves
 PEAKS = 2  # of each turn and scale that are kept
 CANDIDATES = 5  # that are refined
 REFINEMENTS = 30  # 10 to 20 are usual
-LAST_REACHES = 8  # of them with the least reach, in which the answer settles
+LAST_REACHES = 10  # of them with the least reach and all points, in which the answer settles
+SETTLED_PX = 1e-9
+ENOUGH_POINTS = 700  # before that
 ROBUST_PX = 1.0  # distances beyond count linearly (Huber, Ann Math Stat 1964;35:73-101)
 
 
@@ -227,17 +229,19 @@ def _middle_to_middle(a: Picture, b: Picture, c: float, s: float) -> Similarity:
 
 def _refine(a: Picture, b: Picture, start: Similarity) -> tuple[Similarity, float]:
     """Iterate least squares of distances to lines; also how little the least certain shift would change them."""
-    x, y, weight = b.track.x_px, b.track.y_px, b.track.weight_px
+    x, y = b.track.x_px, b.track.y_px
     middle_x, middle_y = float(np.mean(x)), float(np.mean(y))
     size = float(np.sqrt(np.mean((x - middle_x) ** 2 + (y - middle_y) ** 2))) + 1.0
     first = 4.0 * BLUR_CELLS * max(a.fov.shape) / GRID
     shrinking = np.geomspace(first, LEAST_REACH_PX, REFINEMENTS - LAST_REACHES)
-    tangent, information = a.track.tangent, 0.0
+    line = replace(a.track, reach_px=np.zeros(len(a.track.segment)))
+    tangent, information = line.tangent, 0.0
+    few = _thinned(b.track)
     for reach in (*shrinking, *np.full(LAST_REACHES, LEAST_REACH_PX)):
-        laid = registered(b.track, start)
-        n = len(laid.segment)
-        wide = replace(laid, reach_px=np.full(n, reach))
-        at = nearest(wide, replace(a.track, reach_px=np.full(len(a.track.segment), 0.0)))
+        of_b = few if reach > LEAST_REACH_PX else b.track
+        x, y, weight = of_b.x_px, of_b.y_px, of_b.weight_px
+        laid = registered(of_b, start)
+        at = nearest(replace(laid, reach_px=np.full(len(x), reach)), line)
         found = np.flatnonzero(at >= 0)
         if len(found) < len(Similarity.__slots__):
             return start, np.inf
@@ -261,7 +265,15 @@ def _refine(a: Picture, b: Picture, start: Similarity) -> tuple[Similarity, floa
             float(at_middle[0][0] + step[2] - c * middle_x + s * middle_y),
             float(at_middle[1][0] + step[3] - s * middle_x - c * middle_y),
         )
+        if reach == LEAST_REACH_PX and np.abs(step).max() < SETTLED_PX:
+            break
     return start, information
+
+
+def _thinned(track: Track) -> Track:
+    """Every so manyth point, where there are more than enough."""
+    at = np.arange(0, len(track.segment), max(1, len(track.segment) // ENOUGH_POINTS))
+    return Track(*(getattr(track, name)[at] for name in ("x_px", "y_px", "s_px", "radius_px", "segment", "reach_px")))
 
 
 def _judged(a: Picture, b: Picture, b_to_a: Similarity) -> Registration:

@@ -5,7 +5,7 @@ from collections.abc import Mapping
 from vasohm.results.column import Column, count, number, text
 from vasohm.results.columns_vessels import CLASSES, FLAGS
 
-_SUBJECT = text("subject", "The subject, as named in the image sheet.")
+_SUBJECT = text("subject", "The subject that both images show, as named in the image sheet.")
 _EYE = text("eye", "The eye, as named in the image sheet; empty where the sheet has none.")
 _GROUP = text("group", "The group, as named in the image sheet; empty where the sheet has none.")
 _STATES = (

@@ -36,16 +36,16 @@ def paired_part(tables: Mapping[str, pd.DataFrame]) -> list[Html]:
             f"{row['image_id_b']} over {row['image_id_a'] or '(none)'}",
             row["reason"] or row["status"],
             _number(row["overlap"], "{:.0%}"),
-            _number(row["shift_x_um"], "{:.1f}") + " " + _number(row["shift_y_um"], "{:.1f}"),
-            _number(row["turn_deg"], "{:.2f}"),
+            " ".join(_number(row[side], "{:z.1f}") for side in ("shift_x_um", "shift_y_um")),
+            _number(row["turn_deg"], "{:z.2f}"),
             _number(row["scale"], "{:.4f}"),
             _number(row["common_fraction"], "{:.0%}"),
         ]
         for row in pairs
     ]
-    body.append(table(names, lines, names[5:]))
+    body += [heading("Images on each other", 3), table(names, lines, names[5:])]
     if tone:
-        body.append(_tone(tone))
+        body += [heading("Change of tone", 3), _tone(tone)]
     return body
 
 
