@@ -8,7 +8,7 @@ from statistics import median
 
 from vasohm.results.markup import Html, plain_number
 
-WIDTH, LEFT, RIGHT = 360.0, 104.0, 46.0  # of a chart, in the units of its view box
+WIDTH, LEFT, RIGHT = 360.0, 104.0, 58.0  # of a chart, in the units of its view box
 TOP, FOOT = 30.0, 34.0
 DOT, STEP = 2.8, 4.2  # radius of a dot, and from a dot to the one stacked on it
 LEAST_BAND, MOST_STACKED = 30.0, 9

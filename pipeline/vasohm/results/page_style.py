@@ -35,13 +35,13 @@ th button { font: inherit; font-weight: 600; color: var(--accent); background: n
 th[aria-sort=ascending] button::after { content: " ▲"; }
 th[aria-sort=descending] button::after { content: " ▼"; }
 img { max-width: 100%; height: auto; }
-img.small { width: 9rem; max-width: 40vw; display: block; margin: 0; }
+img.small { width: 8rem; max-width: 40vw; display: block; margin: 0; }
 dt { font-weight: 600; }
 dd { margin: 0 0 .4rem 0; }
 .alert { border-left: .4rem solid var(--alert); background: #fdf3f1; padding: .4rem 1rem; }
 .alert h2 { margin-top: .5rem; color: var(--alert); }
 .charts { display: grid; grid-template-columns: repeat(auto-fill, minmax(min(100%, 26rem), 1fr)); gap: 1rem; }
-.charts svg { width: 100%; height: auto; display: block; }
+.charts svg { width: 100%; max-width: 32rem; height: auto; display: block; }
 footer { margin-top: 2.5rem; border-top: 1px solid var(--edge); padding-top: .5rem; font-size: .85rem; }
 button, select, input { font: inherit; color: inherit; }
 .tools button, .tools select, .tools input[type=search], aside button, #edit-list button, #rows button {
@@ -56,6 +56,8 @@ button.main:enabled { background: var(--accent); color: #fff; }
 .tools span { display: inline-flex; gap: .3rem; }
 .tools input[type=search] { width: 14rem; max-width: 100%; }
 .tools label { max-width: 100%; }
+.tools label > * { margin-left: .3rem; }
+.tools label > [type=checkbox] { margin: 0 .2rem 0 0; }
 .tools select { max-width: 100%; }
 header p { margin: .2rem 0; }
 details { margin: .6rem 0; }
