@@ -16,7 +16,8 @@ from vasohm.flags import Flag
 from vasohm.image.calibrate import ScaledImage
 from vasohm.image.prepare import PrepareSettings, prepare
 from vasohm.image.read import RawImage
-from vasohm.network.class_inference import Links, infer
+from vasohm.network.class_evidence import LEAST_GAIN, Circumstances, weigh_colours
+from vasohm.network.class_inference import Links, infer, links_of
 from vasohm.network.classes import ClassSettings, classify_vessels
 from vasohm.network.colours import measure_colours
 from vasohm.network.graph import VesselClass
@@ -153,6 +154,34 @@ def test_a_persons_word_stays_and_speaks_for_its_neighbours():
     assert classed.graph.vessel_class[0] == other
     assert classed.graph.class_probability[0] == 1.0
     assert classed.graph.vessel_class[-1] == other
+
+
+@pytest.mark.parametrize("kind", [A, V])
+def test_true_words_do_not_silence_the_colours(kind):
+    """The likelihood of two groups must hold the colours of told segments too: the word is no substitute for them."""
+    drawn, measured, truth = scene()
+    kinds = np.where((truth == kind) & (np.arange(len(truth)) < len(truth) // 2), kind, NONE)
+    sure = np.where(kinds != NONE, 1.0, np.nan)
+    said = replace(measured, graph=replace(measured.graph, vessel_class=kinds, class_probability=sure))
+    classed, (note,) = told(said, picture(drawn, optics(), 0))
+    assert (classed.graph.vessel_class == truth).all(), note
+
+
+def test_words_make_no_two_groups_of_one_colour():
+    """Four venules told: whether the colours part, only the colours may tell."""
+    drawn, measured, truth = scene()
+    first = np.flatnonzero(truth == V)[:4]
+    own = np.zeros(len(truth), dtype=np.int64)
+    own[first] = 1
+    pixels = picture(drawn, optics(red=(0.3, 0.3), green=(1.0, 1.0)))
+    colours = measure_colours(measured, pixels, np.ones((HIGH, WIDE), dtype=bool), 255.0)
+    radius = np.array(RADII_PX)
+    place = np.column_stack((np.full(len(radius), WIDE / 2), np.linspace(24, HIGH - 24, len(radius))))
+    links = links_of(measured.graph, np.zeros(measured.graph.n_nodes, dtype=bool))
+    evidence = weigh_colours(colours, Circumstances(radius, place, None), links, own)
+    gain = float(evidence.fault.rsplit("gain ", 1)[1].rstrip(")"))
+    assert gain < LEAST_GAIN
+    assert not evidence.log_odds.any()
 
 
 def test_neighbours_on_a_tree_are_weighed_exactly():

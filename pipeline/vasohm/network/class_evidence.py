@@ -77,7 +77,7 @@ def weigh_colours(colours: VesselColours, around: Circumstances, links: Links, t
         return ClassEvidence(np.zeros(n), np.nan, f"only {used.sum()} segments show a colour, fewer than {LEAST_USED}")
     data = Data(value[used], noise[used], _explaining(around, used)[used])
     one = fit_groups(data, None, _alone, FEW_ROUNDS)
-    two, gain = _two_groups(data, _Vessels(links, told, used), one)
+    two, gain = _two_groups(data, _Vessels(links, TOLD_ODDS * told, used), one)
     measured_well = np.quantile(two.inflation * data.noise[:, 0, 0], WELL_MEASURED)
     distance = float(two.shift[0] / np.sqrt(two.spread[0, 0] + measured_well))
     if gain < LEAST_GAIN or distance < LEAST_DISTANCE:
@@ -93,19 +93,24 @@ class _Vessels:
     """How the segments that show a colour speak through all that are linked."""
 
     links: Links
-    told: IntArray
+    said: FloatArray  # (n_segments,) log odds of what persons said
     used: BoolArray
 
-    def ask(self, log_odds: FloatArray, rounds: int = FEW_ROUNDS) -> tuple[FloatArray, float]:
-        """Probability of the second group, and the log likelihood beyond that of the first group alone."""
-        own = np.where(self.told != 0, TOLD_ODDS * self.told, 0.0)
-        own[self.used] = np.where(self.told[self.used] != 0, own[self.used], log_odds)
-        probability, gain = infer(self.links, own, rounds)
-        return probability[self.used], gain
-
     def probability(self, log_odds: FloatArray) -> FloatArray:
-        """Probability of the second group."""
-        return self.ask(log_odds)[0]
+        """Probability of the second group; where a person classed a segment, its colour has no say."""
+        own = self.said.copy()
+        own[self.used] = np.where(own[self.used] != 0, own[self.used], log_odds)
+        return infer(self.links, own, FEW_ROUNDS)[0][self.used]
+
+    def weigh(self, log_odds: FloatArray) -> tuple[FloatArray, float]:
+        """Probability of the second group by word and colour, and the log likelihood beyond the first group alone.
+
+        The likelihood is that of the colours given the words: that persons said much makes no two groups of colours.
+        """
+        own = self.said.copy()
+        own[self.used] += log_odds
+        probability, both = infer(self.links, own, FEW_ROUNDS)
+        return probability[self.used], both - infer(self.links, self.said, FEW_ROUNDS)[1]
 
 
 def _alone(log_odds: FloatArray) -> FloatArray:
@@ -136,7 +141,7 @@ def _two_groups(data: Data, vessels: _Vessels, one: Groups) -> tuple[Groups, flo
 
 def _gain(groups: Groups, data: Data, vessels: _Vessels) -> float:
     """Log likelihood of two groups that share vessels; nothing where one of them has too few members."""
-    probability, beyond = vessels.ask(groups.log_ratio(data))
+    probability, beyond = vessels.weigh(groups.log_ratio(data))
     if not LEAST_GROUP < float(probability.mean()) < 1 - LEAST_GROUP:
         return -np.inf
     return float(groups.log_density(data, -0.5).sum()) + beyond
