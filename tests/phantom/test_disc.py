@@ -151,7 +151,9 @@ def test_a_turned_picture_turns_its_disc(eye: Eye) -> None:
     assert turned.y_px == pytest.approx(SIDE - 1 - plain.x_px, abs=1.0)
 
 
-@pytest.mark.parametrize(("x", "y", "fits"), [(-9.0, 50.0, True), (-11.0, 50.0, False), (50.0, 1e4, False)])
+@pytest.mark.parametrize(
+    ("x", "y", "fits"), [(-9.0, 50.0, True), (-11.0, 50.0, False), (50.0, 1e4, False), (np.nan, 50.0, False)]
+)
 def test_a_told_disc_outside_the_picture_is_refused_by_name(x: float, y: float, fits: bool) -> None:
     """A slip of typing would silently give no calibres."""
     told = OpticDisc(x, y, 10.0, "sheet", 1.0)

@@ -31,7 +31,7 @@ DEFAULTS: Mapping[str, Any] = {
     "radius.plasma_layer_um": 0.0,
     "radius.plasma_layer_se_um": 0.0,
     "classes.probability": 0.8,
-    "shape.zone_dd": [0.5, 1.0],  # zone B: Knudtson et al., Curr Eye Res 2003;27:143-149
+    "shape.zone_dd": [0.5, 1.0],  # Knudtson et al., Curr Eye Res 2003;27:143-149
     "shape.calibre_formula": "knudtson",
     "shape.calibre_um": [10.0, 25.0, 50.0],
     "blood.law": "pries-in-vivo",

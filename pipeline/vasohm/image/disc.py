@@ -27,12 +27,12 @@ def check_disc(disc: OpticDisc, shape: tuple[int, int]) -> None:
 
     Raises
     ------
-    ImageError : the circle lies wholly outside the picture.
+    ImageError : the circle lies wholly outside the picture, or one of its numbers is not finite.
     """
     height, width = shape
     nearest_x = min(max(disc.x_px, -0.5), width - 0.5)
     nearest_y = min(max(disc.y_px, -0.5), height - 0.5)
-    if np.hypot(disc.x_px - nearest_x, disc.y_px - nearest_y) >= disc.radius_px:
+    if not np.hypot(disc.x_px - nearest_x, disc.y_px - nearest_y) < disc.radius_px < np.inf:
         msg = (
             f"the optic disc told, at x {disc.x_px:g}, y {disc.y_px:g} with a radius of {disc.radius_px:g} px, lies "
             f"outside the picture of {width} x {height} px. Correct disc_x_px, disc_y_px, disc_radius_px: pixels from "
