@@ -16,18 +16,19 @@ from vasohm.results.columns_cohorts import COHORTS
 MakeStudy = Callable[..., DrawnStudy]
 COMPARE = """
 [compare]
-outcomes = ["segments.radius_hydraulic_um", "image.length_density_per_mm"]
+outcomes = ["segments.radius_hydraulic_um", "image.length_density_per_mm", "zone.radius_um"]
 by = "group"
 reference = "control"
 """
-NAMES = "image_id,file,subject,eye,group,age_years,pixel_size_um,pixel_size_se_um"
+NAMES = "image_id,file,subject,eye,group,age_years,pixel_size_um,pixel_size_se_um,disc_x_px,disc_y_px,disc_radius_px"
 
 
 def measured(make_study: MakeStudy, n: int = 4, compare: str = COMPARE) -> tuple[DrawnStudy, Path]:
     """Measure pictures of two subjects a group; the second group's are wider by its pixel size."""
     study = make_study(n, method="ridge")
+    group, pixel_um = ("control", "=treated"), (2.0, 2.4)
     rows = {
-        image_id: f"{image_id}.png,s{k},L,{('control', '=treated')[k % 2]},{60 + k * k},{2 + 0.4 * (k % 2)},0.02"
+        image_id: f"{image_id}.png,s{k},L,{group[k % 2]},{60 + k * k},{pixel_um[k % 2]},0.02,48,48,8"
         for k, image_id in enumerate(study.ids)
     }
     study.sheet(rows, NAMES)
@@ -51,7 +52,7 @@ def test_cohorts_are_compared_from_results_to_page(make_study: MakeStudy) -> Non
     assert ended.status == 0, ended.complained
     comparison = table(to, "comparison")
     assert list(comparison.columns) == [column.name for column in COHORTS["comparison"]]
-    assert comparison["level"].tolist() == ["'=treated"] * 2  # no formula for a spreadsheet
+    assert comparison["level"].tolist() == ["'=treated"] * 3  # no formula for a spreadsheet
     images = pd.read_csv(out / "images_all.csv")
     density = np.log(images["length_density_per_mm"].to_numpy())
     by_hand = np.exp(density[1::2].mean() - density[::2].mean())
@@ -60,14 +61,15 @@ def test_cohorts_are_compared_from_results_to_page(make_study: MakeStudy) -> Non
     assert of_density["method"] == "welch"
     assert "two_calibrations" in of_density["flags"]
     attrition = table(to, "attrition")
-    assert attrition["n_with_value"].tolist() == [2] * 4
+    assert attrition["n_with_value"].tolist() == [2] * 6
+    assert table(to, "zone")["image_id"].tolist() == list(study.ids)
     package = Package(str(to / "datapackage.json"))
     assert package.validate().valid, package.validate().flatten(["message"])
     page = (to / "index.html").read_text()
     assert "For research. Results are no basis for the diagnosis" in page
     assert "Content-Security-Policy" in page
     pictures = set(re.findall(r'src="([^"]+)"', page))
-    assert pictures == {"forest.svg", "levels-1.svg", "levels-2.svg"}
+    assert pictures == {"forest.svg", "levels-1.svg", "levels-2.svg", "levels-3.svg"}
     for name in pictures:
         assert "<text" in (to / name).read_text()  # text as text, for whoever sets it in print
         assert (to / name).with_suffix(".png").exists()
@@ -97,7 +99,9 @@ def test_what_cannot_be_compared_is_refused_with_what_is_there(make_study: MakeS
     assert "was measured with blood.hematocrit = 0.45; the study now says 0.4. Measure again" in told(
         text.replace("[network]", "[blood]\nhematocrit = 0.4\n[network]")
     )
-    assert "lacks image-9 of 5 images" in told(sheet_text=f"{sheet}image-9,image-0.png,s9,L,control,70,2,0.02\n")
+    assert "lacks image-9 of 5 images" in told(
+        sheet_text=f"{sheet}image-9,image-0.png,s9,L,control,70,2,0.02,48,48,8\n"
+    )
     assert "column subject" in told(sheet_text=sheet.replace("subject", "animal"))
     assert "are of one subject" in told(sheet_text=re.sub(r",s\d,", ",s1,", sheet))
     assert "nothing to compare with" in told(sheet_text=sheet.replace("=treated", "control"))

@@ -21,6 +21,7 @@ from vasohm.cohorts.outcomes import Outcome, image_values
 from vasohm.cohorts.permutation import permute_groups, permute_residuals
 from vasohm.cohorts.planning import power_of, subjects_needed
 from vasohm.cohorts.variance import REPEATABILITY_FACTOR, repeats
+from vasohm.cohorts.zone import zone_rows
 from vasohm.errors import CohortError
 
 ROUNDING = 1e-9  # relative; sums of some tens of terms in double precision, and roots found to 1e-12
@@ -346,6 +347,38 @@ def test_networks_of_an_image_are_side_by_side_and_segments_weighted_by_length()
     small = Outcome("segments.radius_hydraulic_um", (0.0, 10.0))
     radius = image_values(small, {"image": image, "segments": segments})["the value"][0]
     assert radius == pytest.approx(5.0**0.25 * 8.0**0.75, rel=ROUNDING)
+
+
+def test_zone_around_the_disc_is_poiseuilles_of_what_crosses_it() -> None:
+    """A network's resistance depends on where the picture ends; that of the zone must not.
+
+    Two straight radial vessels and one at 60 degrees to the radius, which is twice as long: conductances add, and what
+    lies outside the zone or runs along a ring counts nothing (closed form of Poiseuille's law).
+    """
+    mu_mpa_s, radius_um, pixel_um = 3.0, 20.0, 2.0
+    rows = []
+    away = np.arange(10.0, 200.0, 0.5)
+    for segment, angle in ((1, 0.0), (2, 2.0)):
+        rows += [(segment, r * np.cos(angle), r * np.sin(angle), r * pixel_um, radius_um) for r in away]
+    turned = 4.0 + np.sqrt(3.0) * np.log(away)  # a logarithmic spiral keeps its angle to the radius
+    rows += [(3, r * np.cos(t), r * np.sin(t), 2 * r * pixel_um, radius_um) for r, t in zip(away, turned, strict=True)]
+    ring = np.linspace(0.0, 1.0, 400)
+    rows += [(4, 75.2 * np.cos(a), 75.2 * np.sin(a), 75.2 * a * pixel_um, radius_um) for a in ring]
+    points = pd.DataFrame(rows, columns=["segment_id", "x_px", "y_px", "s_um", "radius_um"])
+    segments = pd.DataFrame({"segment_id": [1, 2, 3, 4], "vessel_class": "venule", "viscosity_mpa_s": mu_mpa_s})
+    segments["ln_resistance_random_se"], segments["ln_resistance_shared_se"] = 0.1, 0.05
+    image = pd.Series(
+        {"image_id": "a", "disc_x_px": 0.0, "disc_y_px": 0.0, "zone_inner_px": 50.0, "zone_outer_px": 100.0}
+    )
+    row = zone_rows(image, points, segments).iloc[0]
+    straight = 8 * mu_mpa_s * 1e-3 * 50 * pixel_um * 1e-6 / (np.pi * (radius_um * 1e-6) ** 4)
+    on_the_grid = 1e-3  # relative: steps of half a pixel are chords of the spiral
+    assert row["resistance_pa_s_m3"] == pytest.approx(straight / 2.5, rel=on_the_grid)
+    assert row["radius_um"] == pytest.approx(radius_um, rel=ROUNDING)
+    assert row["ln_resistance_random_se"] == pytest.approx(0.1 * sqrt(0.4**2 + 0.4**2 + 0.2**2), rel=on_the_grid)
+    assert row["ln_resistance_shared_se"] == pytest.approx(0.05, rel=ROUNDING)
+    alone = zone_rows(image, points[points["segment_id"] == 4], segments).iloc[0]
+    assert np.isnan(alone["resistance_pa_s_m3"])
 
 
 REFUSED = {

@@ -9,7 +9,7 @@ import pandas as pd
 
 from vasohm.arrays import AnyArray, FloatArray
 from vasohm.results.column import Column
-from vasohm.results.schema import COLUMNS
+from vasohm.results.schema import outcome_columns
 
 # How quantities go with the edge of a pixel: by unit, and of numbers without one. Resistance is length over the fourth
 # power of radius; flows and velocities are those at a given drop of pressure.
@@ -31,6 +31,7 @@ RADIUS_POWER = 4.0  # resistance goes with the inverse fourth power of radius
 SUMMED_UNITS = ("um", "um2", "um3", "nL/min")  # of a network: lengths, areas, volumes, flows add up
 # Names with a blank, which no column of the results has.
 VALUE, REL_SE, SHARED_REL_SE = "the value", "its relative se", "its shared relative se"
+ZONE_OF_IMAGE = ("disc_x_px", "disc_y_px", "zone_inner_px", "zone_outer_px")
 VALUES = ("image_id", "vessel_class", VALUE, REL_SE, SHARED_REL_SE)
 
 
@@ -48,7 +49,7 @@ class Outcome:
     @property
     def column(self) -> Column:
         name = self.name.partition(".")[2]
-        return next(column for column in COLUMNS[self.table] if column.name == name)
+        return next(column for column in outcome_columns(self.table) if column.name == name)
 
     @property
     def calibre_class(self) -> str:
@@ -64,6 +65,9 @@ def columns_needed(outcomes: Sequence[Outcome]) -> dict[str, set[str]]:
         "image": {"image_id", "pixel_size_um", "pixel_size_se_um", "pixel_size_source", "flags"}
     }
     for outcome in outcomes:
+        if outcome.table == "zone":  # made from the images' own tables
+            needed["image"] |= set(ZONE_OF_IMAGE)
+            continue
         name = outcome.column.name
         own = {"image_id", name, *_se_names(outcome.table, name)}
         if outcome.table != "image":
@@ -165,7 +169,7 @@ def _pixel_rel_se(images: pd.DataFrame) -> "pd.Series[float]":
 
 def _se_names(table: str, name: str) -> tuple[str, ...]:
     """Columns that tell the uncertainty of another one."""
-    known = {column.name for column in COLUMNS[table]}
+    known = {column.name for column in outcome_columns(table)}
     resistive = ("ln_resistance_random_se", "ln_resistance_shared_se")
     if name == RESISTANCE:
         return resistive

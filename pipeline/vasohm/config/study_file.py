@@ -29,10 +29,9 @@ from vasohm.network.crossings import CrossingSettings
 from vasohm.network.lumenfit import RadiusSettings
 from vasohm.network.morphometry import ShapeSettings
 from vasohm.network.skeletonize import SkeletonizeSettings
-from vasohm.results.schema import COLUMNS
+from vasohm.results.schema import OUTCOME_TABLES, outcome_columns
 
 MOST_BYTES = 1_000_000
-OUTCOME_TABLES = ("image", "networks", "segments")  # those that give one value an image and class
 USUAL_OUTCOMES = ("networks.resistance_pa_s_m3", "segments.radius_hydraulic_um", "image.length_density_per_mm")
 AT_LINE = re.compile(r"\(at line (\d+), column \d+\)")
 BARE_COMMA = re.compile(r"\s*[\w.-]+\s*=\s*([+-]?\d+),(\d+)\s*(?:#.*)?$")
@@ -282,13 +281,15 @@ def _numeric_columns() -> list[str]:
     return [
         f"{table}.{column.name}"
         for table in OUTCOME_TABLES
-        for column in COLUMNS[table]
+        for column in outcome_columns(table)
         if column.type in {"number", "integer"} and not column.name.endswith("_id")
     ]
 
 
 def _outcomes_named(name: str) -> list[str]:
-    return [full for full in _numeric_columns() if name in {full, full.partition(".")[2]}]
+    """Full names that a name may mean; of the zone none is meant unless it is named."""
+    known = [full.partition(".") for full in _numeric_columns()]
+    return ["".join(full) for full in known if name == "".join(full) or (name == full[2] and full[0] != "zone")]
 
 
 def _resolve(model: StudyModel, path: Path) -> dict[str, dict[str, Any]]:

@@ -3,7 +3,7 @@
 from collections.abc import Mapping
 
 from vasohm.results.column import Column, count, number, text
-from vasohm.results.columns_vessels import CLASSES
+from vasohm.results.columns_vessels import CLASSES, IMAGE_ID
 
 OUTCOME = text("outcome", "What is compared: table and column of the results; one value an image and class.")
 VESSEL_CLASS = text("vessel_class", "Class of the vessels or networks; empty for all together.", CLASSES)
@@ -146,6 +146,27 @@ ATTRITION: tuple[Column, ...] = (
     text("left_out", "The other images by name, each with the reason."),
 )
 
+ZONE: tuple[Column, ...] = (
+    IMAGE_ID,
+    text("vessel_class", "Class of the vessels inside the zone; empty for those of which none is said.", CLASSES),
+    count("n_segments", "Number of segments with a part inside the zone."),
+    number("length_um", "um", "Length of vessels inside the zone."),
+    number("radius_um", "um", "Geometric mean of the local lumen radius inside the zone, weighted by length."),
+    number(
+        "resistance_pa_s_m3",
+        "Pa.s/m3",
+        "Resistance of the zone from its inner to its outer edge: vessels side by side in each of ten rings, the "
+        "rings in series; empty where a ring holds none. It does not depend on where the picture ends outside the "
+        "zone.",
+    ),
+    number("ln_resistance_random_se", "1", "Standard uncertainty of ln(resistance of the zone) from noise (k = 1)."),
+    number(
+        "ln_resistance_shared_se",
+        "1",
+        "Standard uncertainty of ln(resistance of the zone) from what the whole image has in common (k = 1).",
+    ),
+)
+
 COHORTS: Mapping[str, tuple[Column, ...]] = {
     "comparison": COMPARISON,
     "levels": LEVELS,
@@ -162,6 +183,7 @@ COHORTS_MEANING: Mapping[str, str] = {
     "variance": "One row an outcome and class: where its spread comes from.",
     "planning": "One row a contrast: how many subjects a next study needs.",
     "attrition": "One row an outcome, class and level: which images of the sheet gave no value, and why.",
+    "zone": "One row an image and class: vessels inside the zone around the optic disc.",
 }
 
 _KEY = ("outcome", "vessel_class", "calibre_class")
@@ -172,4 +194,5 @@ COHORTS_KEYS: Mapping[str, tuple[str, ...]] = {
     "variance": _KEY,
     "planning": (*_KEY, "level"),
     "attrition": (*_KEY, "level"),
+    "zone": ("image_id", "vessel_class"),
 }

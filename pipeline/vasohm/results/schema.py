@@ -6,7 +6,7 @@ from typing import Any
 from vasohm.errors import DomainError
 from vasohm.results.column import Column, text
 from vasohm.results.columns_appraisal import APPRAISAL
-from vasohm.results.columns_cohorts import COHORTS, COHORTS_KEYS, COHORTS_MEANING
+from vasohm.results.columns_cohorts import COHORTS, COHORTS_KEYS, COHORTS_MEANING, ZONE
 from vasohm.results.columns_images import DISC, FAILURES, IMAGE, NETWORKS, SCENARIOS
 from vasohm.results.columns_pairs import PAIRED, PAIRED_KEYS, PAIRED_MEANING
 from vasohm.results.columns_shape import BRANCHINGS, CLASS_SHAPES, HORTON, ORDERS, SCALES
@@ -31,7 +31,7 @@ COLUMNS: Mapping[str, tuple[Column, ...]] = {
 }
 
 # Tables that a command other than `measure` writes into a folder of its own.
-FURTHER_COLUMNS: Mapping[str, tuple[Column, ...]] = {**APPRAISAL, **COHORTS, **PAIRED}
+FURTHER_COLUMNS: Mapping[str, tuple[Column, ...]] = {**APPRAISAL, **COHORTS, "zone": ZONE, **PAIRED}
 
 TABLE_MEANING: Mapping[str, str] = {
     "image": "One row an image: morphometry and quality; the sheet's own columns follow.",
@@ -80,6 +80,15 @@ GATHERED: Mapping[str, str] = {  # file at the root: the table whose rows it col
 }
 
 OWN_IMAGE_NAMES = frozenset(column.name for column in IMAGE + DISC)
+
+
+# Tables whose numbers give one value an image and class, so that cohorts can be compared in them.
+OUTCOME_TABLES = ("image", "networks", "segments", "zone")
+
+
+def outcome_columns(table: str) -> tuple[Column, ...]:
+    """Columns of a table of outcomes; of images those of an optic disc too."""
+    return {**COLUMNS, "image": IMAGE + DISC, "zone": ZONE}[table]
 
 
 def column_names(table: str) -> tuple[str, ...]:

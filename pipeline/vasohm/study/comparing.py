@@ -24,14 +24,14 @@ from vasohm.cohorts.outcomes import Outcome, columns_needed, image_values
 from vasohm.config.settings import CompareSettings
 from vasohm.config.study_file import Study
 from vasohm.errors import CohortError, Problem, RequestError
-from vasohm.results.cells import unguard_text
-from vasohm.results.columns_cohorts import COHORTS
+from vasohm.results.columns_cohorts import COHORTS, ZONE
 from vasohm.results.columns_pairs import PAIRED
 from vasohm.results.encode import frame_bytes, json_bytes
-from vasohm.results.schema import COLUMNS, GATHERED, SCHEMA_VERSION
+from vasohm.results.schema import SCHEMA_VERSION
 from vasohm.results.write import write_atomically
 from vasohm.results.write_study import StudyTable, write_datapackage, write_references
 from vasohm.study.appraise import few, finished_study
+from vasohm.study.compared_tables import read_outcome_tables, read_zone
 from vasohm.study.comparison_page import comparison_page
 from vasohm.study.comparison_plots import draw_forest, draw_levels
 from vasohm.study.comparison_words import FAMILY, REFERENCES, methods_paragraph
@@ -58,6 +58,7 @@ class StudyComparison:
     comparison: Comparison
     state: StudyState
     paired: Mapping[str, pd.DataFrame]  # two states of one bed, where conditions or times are compared
+    zone: pd.DataFrame | None  # vessels around the optic disc, where an outcome is of them
 
 
 def compare_study(study: Study, results_dir: Path) -> StudyComparison:
@@ -83,7 +84,7 @@ def compare_study(study: Study, results_dir: Path) -> StudyComparison:
     state = finished_study(results_dir)
     _check_results(study, state, results_dir)
     outcomes = _outcomes(study, settings)
-    tables = _tables(results_dir, outcomes)
+    tables = read_outcome_tables(results_dir, columns_needed(outcomes))
     sheet = _sheet(study, settings, state, tables["image"])
     question = Question(
         settings.by,
@@ -96,11 +97,13 @@ def compare_study(study: Study, results_dir: Path) -> StudyComparison:
     _check_design(study, sheet, question)
     compared = set(sheet.loc[sheet[settings.by] != "", "image_id"])
     held = {name: table[table["image_id"].isin(compared)] for name, table in tables.items()}
+    if any(outcome.table == "zone" for outcome in outcomes):
+        held["zone"] = read_zone(results_dir, held["image"])
     values = [image_values(outcome, held) for outcome in outcomes]
     _check_values(study, settings, outcomes, values)
     comparison = compare_all(outcomes, values, sheet, question)
     paired = compare_pairs(results_dir, sheet, settings, study.settings)
-    return StudyComparison(study, settings, outcomes, comparison, state, paired)
+    return StudyComparison(study, settings, outcomes, comparison, state, paired, held.get("zone"))
 
 
 def write_comparison(found: StudyComparison, out_dir: Path) -> None:
@@ -118,8 +121,8 @@ def write_comparison(found: StudyComparison, out_dir: Path) -> None:
         raise RequestError([Problem(file=str(out_dir), message=message)])
     probe(out_dir)
     written = []
-    frames = {**found.comparison.tables, **found.paired}
-    for name, columns in {**COHORTS, **PAIRED}.items():
+    frames = {**found.comparison.tables, **found.paired} | ({} if found.zone is None else {"zone": found.zone})
+    for name, columns in {**COHORTS, "zone": ZONE, **PAIRED}.items():
         frame = frames.get(name, pd.DataFrame())
         if frame.empty and (name == "planning" or name not in frames):
             (out_dir / f"{name}.csv").unlink(missing_ok=True)
@@ -133,6 +136,9 @@ def write_comparison(found: StudyComparison, out_dir: Path) -> None:
     for number, outcome in enumerate(dict.fromkeys(one.name for one in found.outcomes), start=1):
         if (tables["levels"]["outcome"] == outcome).any():
             pictures[f"levels-{number}"] = draw_levels(tables, outcome, by, found.settings.reference)
+    for stale in (*out_dir.glob("levels-*.svg"), *out_dir.glob("levels-*.png")):
+        if stale.stem not in pictures:
+            stale.unlink()
     for name, drawn in pictures.items():
         for kind, content in drawn.items():
             write_atomically(out_dir / f"{name}.{kind}", content)
@@ -206,36 +212,6 @@ def _outcomes(study: Study, settings: CompareSettings) -> tuple[Outcome, ...]:
     return tuple(outcomes)
 
 
-def _tables(results_dir: Path, outcomes: tuple[Outcome, ...]) -> dict[str, pd.DataFrame]:
-    files = {table: file for file, table in GATHERED.items()}
-    return {
-        table: _read(results_dir / files[table], table, needed) for table, needed in columns_needed(outcomes).items()
-    }
-
-
-def _read(path: Path, table: str, needed: set[str]) -> pd.DataFrame:
-    """Read columns of a gathered table: numbers as float64, texts as they stand, empty for none."""
-    kinds = {column.name: column.type for column in COLUMNS[table] if column.name in needed}
-    numbers = [name for name, kind in kinds.items() if kind in ("number", "integer")]
-    texts = [name for name in kinds if name not in numbers]
-    again = "Gather the results again."
-    try:
-        frame = pd.read_csv(
-            path,
-            usecols=list(kinds),
-            dtype=dict.fromkeys(texts, str) | dict.fromkeys(numbers, np.float64),
-            keep_default_na=False,
-            na_values={name: [""] for name in numbers},
-        )
-    except FileNotFoundError:
-        raise RequestError([Problem(file=str(path), message=f"is not there. {again}")]) from None
-    except (OSError, ValueError) as fault:
-        reason = getattr(fault, "strerror", None) or " ".join(str(fault).split())
-        message = f"cannot be read as a table of {table}: {reason}. {again}"
-        raise RequestError([Problem(file=str(path), message=message)]) from None
-    return frame.assign(**{name: frame[name].map(unguard_text) for name in texts})
-
-
 def _sheet(study: Study, settings: CompareSettings, state: StudyState, images: pd.DataFrame) -> pd.DataFrame:
     """One row an image of the sheet: its design, what became of it, and on which calibration it rests."""
     first = study.images[0].design
@@ -283,8 +259,10 @@ def _check_values(
         if settings.outcomes_named and all(
             v.empty for one, v in zip(outcomes, values, strict=True) if one.name == name
         ):
+            hint = "It needs an optic disc; look" if name.startswith("zone.") else "Look"
             message = (
-                f"{name!r} has no value in any image that is compared. Look at the flags of its table, or leave it out."
+                f"{name!r} has no value in any image that is compared. {hint} at the flags of the results, or leave "
+                "it out."
             )
             problems.append(Problem(study.path.name, message, column="compare.outcomes", value=name))
     if problems or all(found.empty for found in values):

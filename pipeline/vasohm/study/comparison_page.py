@@ -94,15 +94,15 @@ def _lead(settings: CompareSettings, contrasts: Sequence[Mapping[str, Any]]) -> 
     known = sum(not math.isnan(row["p"]) for row in contrasts)
     covariates = f" Accounted for: {', '.join(settings.covariates)}." if settings.covariates else ""
     return (
-        f"{settings.by}, each level against {settings.reference}. {known} of {len(contrasts)} contrasts could be made; "
-        f"{called} have an adjusted p below 0.05.{covariates} The subject is the unit. The family of the adjustment "
-        f"is {FAMILY}."
+        f"Compared: {settings.by}, each level against {settings.reference}. {known} of {len(contrasts)} contrasts "
+        f"could be made; {called} have an adjusted p below 0.05.{covariates} The subject is the unit. The family of "
+        f"the adjustment is {FAMILY}."
     )
 
 
 def _attrition(rows: Sequence[Mapping[str, Any]], by: str) -> Html:
     names = (
-        *_WHAT,
+        "outcome",
         by,
         "subjects in the sheet",
         "with a value",
@@ -115,11 +115,13 @@ def _attrition(rows: Sequence[Mapping[str, Any]], by: str) -> Html:
         "left out, and why",
     )
     counts = ("n_subjects_sheet", "n_subjects", "n_images_sheet", "n_measured", "n_empty", "n_failed", "n_flagged")
-    lines = [
-        [*_what(row), row["level"] or "(none)", *(str(row[one]) for one in (*counts, "n_with_value")), row["left_out"]]
-        for row in rows
-    ]
-    return table(names, lines, names[3:-1])
+    alike: dict[tuple[str, ...], list[str]] = {}
+    for row in rows:
+        told = (row["level"] or "(none)", *(str(row[one]) for one in (*counts, "n_with_value")), row["left_out"])
+        alike.setdefault(told, []).append(", ".join(part for part in _what(row) if part != "all"))
+    every = len({_what(row) for row in rows})
+    lines = [["all" if len(what) == every else "; ".join(what), *told] for told, what in alike.items()]
+    return table(names, lines, names[2:-1])
 
 
 def _contrasts(rows: Sequence[Mapping[str, Any]]) -> Html:

@@ -7,7 +7,7 @@ import pandas as pd
 
 from vasohm.cohorts.contrast import DIFFERENCES, MIXED, REGRESSED_DIFFERENCES, REGRESSION, WELCH
 from vasohm.config.settings import CompareSettings
-from vasohm.results.schema import COLUMNS
+from vasohm.results.schema import outcome_columns
 
 LEAST_P = 0.001  # below which a p-value is not told exactly
 FAMILY = "all rows of comparison.csv: every outcome, class, range of calibre and level of this comparison"
@@ -58,6 +58,11 @@ _WORDS = {
     "segments.resistance_pa_s_m3": "resistance of segments",
     "segments.radius_hydraulic_um": "hydraulic radius",
     "image.length_density_per_mm": "length density",
+    "image.crae_um": "arteriolar equivalent (CRAE)",
+    "image.crve_um": "venular equivalent (CRVE)",
+    "image.avr": "arteriole-to-venule ratio",
+    "zone.resistance_pa_s_m3": "resistance of the zone around the disc",
+    "zone.radius_um": "radius in the zone around the disc",
 }
 _UNITS = {"Pa.s/m3": "Pa·s/m³", "um": "µm", "um2": "µm²", "um3": "µm³", "1": "", "/mm": "mm⁻¹", "{pixel}": "px"}
 
@@ -70,7 +75,7 @@ def outcome_words(outcome: str) -> str:
 def outcome_unit(outcome: str) -> str:
     """Unit of an outcome as it is written; empty where it has none."""
     table, _, name = outcome.partition(".")
-    unit = next(column.unit for column in COLUMNS[table] if column.name == name)
+    unit = next(column.unit for column in outcome_columns(table) if column.name == name)
     return _UNITS.get(unit, unit)
 
 
