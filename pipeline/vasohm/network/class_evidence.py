@@ -150,7 +150,7 @@ def _gain(groups: Groups, data: Data, vessels: _Vessels) -> float:
 def _red_first(groups: Groups) -> Groups:
     """Return the same groups, the second denser in red."""
     turned = -1.0 if groups.shift[0] < 0 else 1.0
-    return Groups(groups.line, turned * groups.shift, groups.spread, groups.inflation, groups.share)
+    return Groups(groups.line, turned * groups.shift, groups.spread, groups.inflation)
 
 
 def _features(colours: VesselColours) -> tuple[FloatArray, FloatArray]:

@@ -41,7 +41,6 @@ class Groups:
     shift: FloatArray  # (f,) second group minus first
     spread: FloatArray  # (f, f) covariance within a group
     inflation: float
-    share: float  # of the second group
 
     def __post_init__(self) -> None:
         freeze(self)
@@ -78,7 +77,7 @@ def fit_groups(data: Data, second: FloatArray | None, neighbours: Neighbours, ro
     single = second is None
     member = np.full(n, 0.5) if second is None else second
     groups = Groups(
-        np.zeros((1 + data.x.shape[1], f)), np.zeros(f), np.diag(np.var(data.value, axis=0) + SMALLEST_SD**2), 1.0, 0.5
+        np.zeros((1 + data.x.shape[1], f)), np.zeros(f), np.diag(np.var(data.value, axis=0) + SMALLEST_SD**2), 1.0
     )
     weight = np.ones(n)
     for _ in range(rounds):
@@ -111,14 +110,12 @@ def _maximised(groups: Groups, data: Data, second: FloatArray, weight: FloatArra
     inflation = groups.inflation
     if noisy.sum() > LEAST_NOISY:
         inflation *= float(np.sqrt((noisy * square[:, 0, 0] / total[:, 0, 0]).sum() / noisy.sum()))
-    share = float((second * weight).sum() / weight.sum())
     line = np.delete(found, 1, axis=0)
     return Groups(
         line,
         np.zeros(f) if single else found[1],
         _positive(spread),
         float(np.clip(inflation, 1.0, MOST_INFLATION)),
-        float(np.clip(share, 1e-3, 1 - 1e-3)),
     )
 
 

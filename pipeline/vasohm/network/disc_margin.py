@@ -54,12 +54,10 @@ class Margin:
     """A circle and how well light tells it."""
 
     circle: Circle
-    fall: float  # of light from well inside to well outside, median over the directions
     complete: float  # share of the directions seen in which light falls at the circle
-    sharp: float  # share of the fall that lies within a fifth of the radius around the circle
+    sharp: float  # share of the fall from well inside to well outside that lies within a fifth of the radius around it
     scatter: float  # of the margin around the circle, over the radius
     steady: float  # how evenly light falls at the circle: ln of 1 + median over deviation, between the directions
-    seen: float  # share of all directions in which the circle lies in the field
 
 
 def _read_round(ground: Ground, circle: Circle) -> tuple[FloatArray, FloatArray]:
@@ -162,12 +160,10 @@ def _describe(ground: Ground, circle: Circle) -> Margin | None:
     place = at[band][np.argmax(np.where(np.isfinite(smooth[:, band]), smooth[:, band], -np.inf), axis=1)]
     return Margin(
         circle=Circle(circle.x, circle.y, circle.radius * radius),
-        fall=fall,
         complete=float(np.mean(at_margin[both] > FALLING * fall)),
         sharp=float(np.median(at_margin[both]) / fall),
         scatter=float(np.median(np.abs(place[both] - 1))),
         steady=_steadiness(at_margin[both]),
-        seen=float(both.mean()),
     )
 
 

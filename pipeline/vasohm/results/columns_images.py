@@ -14,7 +14,12 @@ IMAGE: tuple[Column, ...] = (
     count("width_px", "Columns of the stored picture.", "{pixel}"),
     count("height_px", "Rows of the stored picture.", "{pixel}"),
     number("pixel_size_um", "um", "Edge of a pixel."),
-    number("pixel_size_se_um", "um", "Standard uncertainty of the pixel size (k = 1); empty where nobody told it."),
+    number(
+        "pixel_size_se_um",
+        "um",
+        "Standard uncertainty of the pixel size (k = 1), with the part of the eye or the optic disc that it was fitted "
+        "by; empty where nothing is known of it.",
+    ),
     text(
         "pixel_size_source",
         "Where the pixel size comes from: the sheet, the study, a carrier in the file, the camera factor, or the optic "
