@@ -25,7 +25,7 @@ NAMES = "image_id,file,subject,eye,group,age_years,pixel_size_um,pixel_size_se_u
 
 def measured(make_study: MakeStudy, n: int = 4, compare: str = COMPARE) -> tuple[DrawnStudy, Path]:
     """Measure pictures of two subjects a group; the second group's are wider by its pixel size."""
-    study = make_study(n, method="ridge")
+    study = make_study(n)
     group, pixel_um = ("control", "=treated"), (2.0, 2.4)
     rows = {
         image_id: f"{image_id}.png,s{k},L,{group[k % 2]},{60 + k * k},{pixel_um[k % 2]},0.02,48,48,8"

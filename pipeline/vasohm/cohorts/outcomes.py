@@ -27,6 +27,7 @@ PIXEL_POWERS: Mapping[str, float] = {
 PIXEL_POWERS_BY_NAME: Mapping[str, float] = {"reynolds": 2.0, "womersley": 1.0}
 RESISTANCE = "resistance_pa_s_m3"
 HYDRAULIC = "radius_hydraulic_um"
+ROUNDING = 1e-12  # relative; what is left of equal squares
 RADIUS_POWER = 4.0  # resistance goes with the inverse fourth power of radius
 SUMMED_UNITS = ("um", "um2", "um3", "nL/min")  # of a network: lengths, areas, volumes, flows add up
 # Names with a blank, which no column of the results has.
@@ -194,4 +195,5 @@ def _own_and_common(rows: pd.DataFrame, table: str, name: str, calibration_se: F
 
 
 def _without(whole: FloatArray, part: FloatArray) -> FloatArray:
-    return np.sqrt(np.maximum(np.square(whole) - np.square(part), 0.0))
+    left = np.square(whole) - np.square(part)
+    return np.sqrt(np.where(left > ROUNDING * np.square(whole), left, 0.0))

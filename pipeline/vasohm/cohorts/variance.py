@@ -5,7 +5,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from vasohm.arrays import FloatArray, IntArray
-from vasohm.cohorts.mixed import split_variance
+from vasohm.cohorts.mixed import is_singular, split_variance
 from vasohm.cohorts.observations import Observations
 
 REPEATABILITY_FACTOR = 1.96 * np.sqrt(2.0)  # Bland and Altman 1999, section 3
@@ -64,7 +64,8 @@ def spread(observed: Observations, occasion: IntArray) -> Spread:
     between = eyes = images = np.nan
     components = split_variance(observed, design)
     if components is not None:
-        between, images = np.sqrt(components.subject), np.sqrt(max(components.residual - own, 0.0))
+        between = 0.0 if is_singular(components) else np.sqrt(components.subject)
+        images = np.sqrt(max(components.residual - own, 0.0))
         if components.nested:
             eyes = float(np.sqrt(sum(components.nested)))
         elif observed.within and len(np.unique(observed.within[0])) == len(observed.value):

@@ -81,13 +81,17 @@ VARIANCE: tuple[Column, ...] = (
     text("scale", "ln, where standard deviations are of logarithms; linear, where of values.", ("ln", "linear")),
     count("n_subjects", "Number of subjects with a value at any level."),
     count("n_observations", "Number of values at all levels, one an image and class."),
-    number("between_subjects_sd", "{outcome}", f"Standard deviation between subjects, {_SCALE_NOTE}."),
+    number(
+        "between_subjects_sd",
+        "{outcome}",
+        f"Standard deviation between subjects, {_SCALE_NOTE}. With one image a subject, that between images is in it.",
+    ),
     number("between_eyes_sd", "{outcome}", f"Standard deviation between eyes of a subject, {_SCALE_NOTE}."),
     number(
         "between_images_sd",
         "{outcome}",
-        f"Standard deviation between images of an eye without the measurement's own, {_SCALE_NOTE}. Empty where no eye "
-        "or subject has more than one image: then it is in the spread above it.",
+        f"Standard deviation between images of an eye without the measurement's own, {_SCALE_NOTE}; where subjects "
+        "were seen at several levels, also between their responses. Empty where no eye has several images.",
     ),
     number(
         "measurement_sd", "{outcome}", f"Root mean square of the stated uncertainty of a value's own, {_SCALE_NOTE}."

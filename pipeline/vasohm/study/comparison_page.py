@@ -1,6 +1,7 @@
 """The page of a comparison: who was compared, what differs, what is doubtful, how it was done. Opens no file."""
 
 import math
+import re
 from collections.abc import Iterable, Mapping, Sequence
 from typing import Any
 
@@ -23,6 +24,7 @@ from vasohm.results.markup import (
     table,
     terms,
 )
+from vasohm.results.pages import named
 from vasohm.study.comparison_words import (
     FAMILY,
     REFERENCES,
@@ -35,6 +37,7 @@ from vasohm.study.comparison_words import (
 from vasohm.study.ending import CAUTION
 
 _WHAT = ("outcome", "vessels")
+_LEFT_OUT = re.compile(r"(\S+) \(([^)]*)\)")
 OWN_CAUTIONS = (
     (
         "A difference between cohorts is not its cause: groups that were not drawn by lot may differ in more than "
@@ -117,11 +120,23 @@ def _attrition(rows: Sequence[Mapping[str, Any]], by: str) -> Html:
     counts = ("n_subjects_sheet", "n_subjects", "n_images_sheet", "n_measured", "n_empty", "n_failed", "n_flagged")
     alike: dict[tuple[str, ...], list[str]] = {}
     for row in rows:
-        told = (row["level"] or "(none)", *(str(row[one]) for one in (*counts, "n_with_value")), row["left_out"])
+        told = (
+            row["level"] or "(none)",
+            *(str(row[one]) for one in (*counts, "n_with_value")),
+            _reasons(row["left_out"]),
+        )
         alike.setdefault(told, []).append(", ".join(part for part in _what(row) if part != "all"))
     every = len({_what(row) for row in rows})
     lines = [["all" if len(what) == every else "; ".join(what), *told] for told, what in alike.items()]
     return table(names, lines, names[2:-1])
+
+
+def _reasons(left_out: str) -> str:
+    """Say each reason once, with how many images and the first of them by name."""
+    by_reason: dict[str, list[str]] = {}
+    for image_id, reason in _LEFT_OUT.findall(left_out):
+        by_reason.setdefault(reason, []).append(image_id)
+    return "; ".join(f"{len(ids)} {reason} ({named(ids)})" for reason, ids in by_reason.items())
 
 
 def _contrasts(rows: Sequence[Mapping[str, Any]]) -> Html:

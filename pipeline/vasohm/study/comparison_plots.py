@@ -217,6 +217,7 @@ def _figure(height_in: float, share: float = 1.0) -> Figure:
 def _encoded(figure: Figure) -> dict[str, bytes]:
     svg, png = BytesIO(), BytesIO()
     metadata = {"Date": None, "Creator": None}
-    FigureCanvasSVG(figure).print_svg(svg, metadata=metadata)  # type: ignore[no-untyped-call]
     FigureCanvasAgg(figure).print_png(png, metadata={"Software": None})  # type: ignore[no-untyped-call]
+    # Second: it leaves the figure at the 72 dots per inch of its own format.
+    FigureCanvasSVG(figure).print_svg(svg, metadata=metadata)  # type: ignore[no-untyped-call]
     return {"svg": svg.getvalue(), "png": png.getvalue()}

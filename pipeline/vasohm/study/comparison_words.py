@@ -121,5 +121,6 @@ def summary_lines(comparison: pd.DataFrame, notes: Sequence[str]) -> list[str]:
         told = f"{row['ratio']:.3f} ({row['ratio_lo']:.3f} to {row['ratio_hi']:.3f}), {p_words(row['p'])}"
         told = told if np.isfinite(row["ratio"]) else f"no ratio, {p_words(row['p']) or 'no p'}"
         flags = f" [{row['flags']}]" if row["flags"] else ""
-        lines.append(f"{what}: {row['level']} / {row['reference']} {told}, adjusted {row['p_adjusted']:.2g}{flags}")
+        told += f", adjusted {row['p_adjusted']:.2g}" if np.isfinite(row["p_adjusted"]) else ""
+        lines.append(f"{what}: {row['level']} / {row['reference']} {told}{flags}")
     return [*lines, *notes]
