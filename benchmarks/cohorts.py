@@ -133,7 +133,7 @@ def main() -> None:
     """Print the table."""
     repeats = int(sys.argv[1]) if len(sys.argv) > 1 else 400
     print(
-        f"{repeats} studies each; per cent. Nothing to find: p < 0.05. Coverage of 95 % intervals. Power for a ratio of 1.3"
+        f"{repeats} studies each, per cent: p < 0.05 with nothing to find, coverage of 95 %, power for a ratio of 1.3"
     )
     for design in DESIGNS:
         told = ", ".join(f"{name} {rate:.1f}" for name, rate in rates(design, float(np.log(1.3)), repeats).items())
