@@ -103,10 +103,12 @@ def calibrate(
     if settings.disc_diameter_um is not None and disc is not None:
         return _of_disc(raw, disc, settings.disc_diameter_um, settings.disc_diameter_se_um)
     ignored = "".join(f"; {note}" for note in raw.notes if "ignored" in note)
-    no_disc = "; no optic disc is known either" if settings.disc_diameter_um is not None else ""
+    no_disc, or_disc = "", ""
+    if settings.disc_diameter_um is not None:
+        no_disc, or_disc = "; no optic disc is known either", ", or tell disc_x_px, disc_y_px and disc_radius_px"
     msg = (
         f"no pixel size found (looked in {SOURCES}{ignored}{no_disc}). Give pixel_size_um in the image sheet or in "
-        "[scale], or --pixel-size where images are named on the command line."
+        f"[scale], or --pixel-size where images are named on the command line{or_disc}."
     )
     raise ScaleError(msg)
 

@@ -63,8 +63,9 @@ def knudtson_vein(wide: Width, narrow: Width) -> Width:
 
 
 def hubbard_artery(wide: Width, narrow: Width) -> Width:
-    """Trunk of two arterioles in micrometres; Parr and Spears 1974."""
-    return np.sqrt(np.maximum(0.87 * narrow**2 + 1.01 * wide**2 - 0.22 * wide * narrow - 10.76, 0.0))
+    """Trunk of two arterioles in micrometres, NaN for a pair too thin to have one; Parr and Spears 1974."""
+    square = 0.87 * narrow**2 + 1.01 * wide**2 - 0.22 * wide * narrow - 10.76
+    return np.sqrt(np.where(square > 0, square, np.nan))
 
 
 def hubbard_vein(wide: Width, narrow: Width) -> Width:
