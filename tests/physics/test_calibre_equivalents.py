@@ -57,7 +57,7 @@ def test_worked_examples_of_parr_and_hubbard():
         formula = FORMULAS[PARR_HUBBARD][0 if "CRAE" in kind or "arteriolar" in kind else 1]
         widths = inputs.get("widths_um", inputs.get("pair_um"))
         assert combine(np.array(widths, dtype=float), formula) == pytest.approx(told, rel=1e-9)
-    assert np.isnan(combine(np.full(6, 1e-3), FORMULAS[PARR_HUBBARD][0]))  # the square is below 0: no trunk, and not 0 um
+    assert np.isnan(combine(np.full(6, 1e-3), FORMULAS[PARR_HUBBARD][0]))  # no root: no trunk, and not 0 um
 
 
 def test_an_eye_gives_the_worked_example():
