@@ -67,6 +67,7 @@ class Flag(IntFlag):
     BURNED_IN = 1 << 52
     FIELD_ANGLE = 1 << 53
     # pairs of images
+    PROFILES_DIFFER = 1 << 57
     CLASS_DIFFERS = 1 << 58
     SCALES_DISAGREE = 1 << 59
     NO_COMMON_WAY = 1 << 60
@@ -126,6 +127,7 @@ MEANING: dict[Flag, str] = {
     Flag.DISC_NOT_FOUND: "no place in the picture is the optic disc surely enough: nothing that needs one is told",
     Flag.BURNED_IN: "the file says that text is drawn into its picture: it may name the patient, and cover vessels",
     Flag.FIELD_ANGLE: "the angle of view that the file tells does not fit its pixel size",
+    Flag.PROFILES_DIFFER: "each image took its vessels to be imaged in another way: say [radius] profile for both",
     Flag.CLASS_DIFFERS: "arteriole or venule: the two images say it differently",
     Flag.SCALES_DISAGREE: "one image lies on the other at a scale that their pixel sizes do not explain",
     Flag.NO_COMMON_WAY: "what both images show holds no way from an inlet to an outlet: no ratio",

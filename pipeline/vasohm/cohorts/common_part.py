@@ -5,10 +5,11 @@ from dataclasses import dataclass
 import numpy as np
 import pandas as pd
 
-from vasohm.arrays import FloatArray, IntArray, freeze
+from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.cohorts.matching import Track, feet, pieces
 from vasohm.cohorts.registration import Registration, registered
 from vasohm.cohorts.states import (
+    Discord,
     Doubt,
     Setup,
     State,
@@ -17,7 +18,7 @@ from vasohm.cohorts.states import (
     ratio_shared_se,
     shared_causes,
 )
-from vasohm.flags import Flag, code
+from vasohm.flags import Flag, codes
 from vasohm.network.groups import sum_by
 from vasohm.uncertainty import ln_interval
 
@@ -100,7 +101,8 @@ def common_part(a: State, b: State, registration: Registration, setup: Setup) ->
         sum_by(pair[enough, 0], common[enough], len(whole_a)), whole_a, out=np.zeros(len(whole_a)), where=whole_a > 0
     )
     chosen = _Chosen(pair[enough, 0], pair[enough, 1], common[enough], mean[enough])
-    doubts = (doubt_of(a, setup), doubt_of(b, setup, float(np.log(registration.scale))))
+    discord = Discord(float(np.log(registration.scale)), a.image["profile"] != b.image["profile"])
+    doubts = (doubt_of(a, setup, Discord()), doubt_of(b, setup, discord))
     shares = [
         integral[enough] / _whole_integral(state, setup)[row]
         for state, integral, row in ((a, integral_a, chosen.segment_a), (b, integral_b, chosen.segment_b))
@@ -176,10 +178,10 @@ def segment_rows(a: State, b: State, common: CommonPart) -> pd.DataFrame:
     random = np.hypot(common.random_a, common.random_b)
     low, high = ln_interval(ratio, np.hypot(random, of_causes))
     class_a, class_b = (table["vessel_class"].to_numpy(object) for table in (segments_a, segments_b))
-    flags = [
-        joined_flags(of_a, of_b, code(Flag.CLASS_DIFFERS) if one != other else "")
-        for of_a, of_b, one, other in zip(segments_a["flags"], segments_b["flags"], class_a, class_b, strict=True)
-    ]
+    own = np.where(class_a != class_b, int(Flag.CLASS_DIFFERS), 0) | np.where(
+        is_short(a, b, common), int(Flag.SHORT), 0
+    )
+    flags = [joined_flags(*texts) for texts in zip(segments_a["flags"], segments_b["flags"], codes(own), strict=True)]
     return pd.DataFrame(
         {
             "segment_id_a": segments_a["segment_id"].to_numpy(np.int64),
@@ -197,6 +199,15 @@ def segment_rows(a: State, b: State, common: CommonPart) -> pd.DataFrame:
             "flags": flags,
         }
     )
+
+
+def is_short(a: State, b: State, common: CommonPart) -> BoolArray:
+    """Whether a stretch is shorter than it is wide: its radius borrows from its neighbours, or is of a stub, (n,)."""
+    wider = np.maximum(
+        a.column("segments", "radius_mean_um")[common.segment_a],
+        b.column("segments", "radius_mean_um")[common.segment_b],
+    )
+    return np.asarray(common.length_um < 2.0 * wider)
 
 
 def joined_flags(*texts: str) -> str:

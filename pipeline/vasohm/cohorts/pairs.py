@@ -8,7 +8,7 @@ import numpy as np
 import pandas as pd
 
 from vasohm.cohorts.common_networks import common_networks, network_rows
-from vasohm.cohorts.common_part import common_part, segment_rows
+from vasohm.cohorts.common_part import common_part, joined_flags, segment_rows
 from vasohm.cohorts.registration import Registration, register
 from vasohm.cohorts.states import Setup, State, relative_pixel_se
 from vasohm.cohorts.tone import group_tone, pair_tone
@@ -162,7 +162,10 @@ def _compare(pair: ImagePair, a: State, b: State, setup: Setup) -> dict[str, pd.
     tone = pd.DataFrame(pair_tone(a, b, common, networks))
     whole = {"subject": pair.subject, "eye": pair.eye, "group": pair.group}
     whole |= {"condition_a": pair.condition_a, "condition_b": pair.condition_b}
-    flags = code(Flag.SCALES_DISAGREE) if _scales_disagree(a, b, found) else ""
+    flags = joined_flags(
+        code(Flag.SCALES_DISAGREE) if _scales_disagree(a, b, found) else "",
+        code(Flag.PROFILES_DIFFER) if a.image["profile"] != b.image["profile"] else "",
+    )
     return {
         "image_pairs": _image_row(pair, "", told, n_segments=len(common.length_um), flags=flags),
         "pairs": segment_rows(a, b, common).assign(**pair.names),

@@ -11,6 +11,7 @@ from vasohm.cohorts.matching import track
 from vasohm.cohorts.registration import Picture
 from vasohm.flow.poiseuille import local_exponent
 from vasohm.flow.rheology import Blood
+from vasohm.network.learn import PROFILE_SE
 from vasohm.uncertainty import quadrature
 
 PIXEL, HEMATOCRIT, PLASMA, LAYER, SCALE, OPTICS = range(6)
@@ -66,15 +67,23 @@ class Doubt:
         freeze(self)
 
 
-def doubt_of(state: State, setup: Setup, ln_scale: float = 0.0) -> Doubt:
+@dataclass(frozen=True, slots=True)
+class Discord:
+    """In what a picture disagrees with the one it is held against."""
+
+    ln_scale: float = 0.0  # of the pixel sizes
+    profile: bool = False  # whether each took its vessels to be imaged in another way
+
+
+def doubt_of(state: State, setup: Setup, discord: Discord) -> Doubt:
     """Take apart the doubt of a state's segments by cause.
 
     Parameters
     ----------
     state : State
     setup : Setup
-    ln_scale : float
-        How far the picture's pixel size disagrees with that of the picture it is held against.
+    discord : Discord
+        What adds to the doubt of one of the two states.
 
     Notes
     -----
@@ -96,11 +105,14 @@ def doubt_of(state: State, setup: Setup, ln_scale: float = 0.0) -> Doubt:
     of_resistance[:, PLASMA] = setup.blood.ln_change_with_plasma(radius, cells, viscosity)
     of_resistance[:, LAYER] = exponent * setup.plasma_layer_se_um / radius
     rest = np.square(state.column("segments", "ln_resistance_shared_se")) - np.square(of_resistance).sum(axis=1)
-    of_resistance[:, OPTICS] = -np.sqrt(np.maximum(rest, 0.0))
+    rest = np.maximum(rest, 0.0) + np.square(exponent * PROFILE_SE * discord.profile)
+    of_resistance[:, OPTICS] = -np.sqrt(rest)
     of_radius = of_resistance / exponent[:, None]
     of_radius[:, PIXEL] = column * pixel
     of_radius[:, [HEMATOCRIT, PLASMA]] = 0.0
-    of_resistance[:, SCALE], of_radius[:, SCALE] = (1.0 + exponent * column) * ln_scale, column * ln_scale
+    of_resistance[:, SCALE], of_radius[:, SCALE] = (1.0 + exponent * column), column
+    of_resistance[:, SCALE] *= discord.ln_scale
+    of_radius[:, SCALE] *= discord.ln_scale
     length_var = np.square(state.column("segments", "length_se_um")) - np.square(length * pixel)
     of_length = np.divide(np.maximum(length_var, 0.0), length**2, out=np.zeros(len(length)), where=length > 0)
     random = np.sqrt(np.maximum(np.square(state.column("segments", "ln_resistance_random_se")) - of_length, 0.0))

@@ -8,7 +8,7 @@ from scipy import stats
 
 from vasohm.arrays import BoolArray, FloatArray
 from vasohm.cohorts.common_networks import CommonNetworks
-from vasohm.cohorts.common_part import CommonPart, segment_rows
+from vasohm.cohorts.common_part import CommonPart, is_short, segment_rows
 from vasohm.cohorts.states import State, ratio_shared_se, shared_causes
 from vasohm.results.columns_vessels import CLASSES
 from vasohm.uncertainty import ln_interval
@@ -21,14 +21,14 @@ def pair_tone(a: State, b: State, common: CommonPart, networks: CommonNetworks) 
 
     Notes
     -----
-    ln of the radius ratio is averaged over the common length. Networks lie in parallel: conductances add. Noise
-    averages out, what the pair has in common does not.
+    ln of the radius ratio is averaged over the common length, without stretches shorter than they are wide. Networks
+    lie in parallel: conductances add. Noise averages out, what the pair has in common does not.
     """
     of_segment = segment_rows(a, b, common)["vessel_class"].to_numpy(object)
     of_network = a.tables["networks"]["vessel_class"].to_numpy(object)
     rows = []
     for name in ("", *CLASSES):
-        chosen = (of_segment == name) | (name == "")
+        chosen = ((of_segment == name) | (name == "")) & ~is_short(a, b, common)
         if not chosen.any():
             continue
         radius = _radius_change(a, b, common, chosen)

@@ -103,7 +103,7 @@ TONE: tuple[Column, ...] = (
     *_STATES,
     text("vessel_class", "Kind of vessel; empty for all together.", CLASSES),
     count("n_subjects", "Number of subjects; eyes of a subject are averaged first."),
-    count("n_segments", "Number of matched segments."),
+    count("n_segments", "Number of matched segments, without stretches shorter than they are wide."),
     _COMMON,
     number(
         "radius_ratio",
