@@ -76,17 +76,28 @@ def find_disc(graph: VesselGraph, prepared: PreparedImage, vessels: BoolArray) -
         return _refuse("no vessel leads to one")
     ground, edge = lay_ground(prepared, vessels)
     diameter = 2 * float(np.sqrt(prepared.fov.sum() / np.pi)) / edge
-    found = [(probability(features), circle) for circle, features in candidates(graph, ground, (edge, diameter))]
+    places = candidates(graph, ground, (edge, diameter))
+    found = [(probability(WEIGHTS, features), circle) for circle, features in places]
     if not found:
         return _refuse("no place is bright, round and has a margin")
-    alone, circle = _outermost(found)
-    elsewhere = [share for share, other in found if np.hypot(other.x - circle.x, other.y - circle.y) > circle.radius]
-    confidence = _before_rival(alone, max(elsewhere, default=0.0))
+    confidence, circle = likeliest(found)
     x, y, radius = (float(value) for value in (*_pixels(circle.x, circle.y, edge), circle.radius * edge))
     if confidence < LEAST_CONFIDENCE:
         where = f"the likeliest place, x {x:.0f}, y {y:.0f} with a radius of {radius:.0f} px, is one with a probability"
         return _refuse(f"{where} of {confidence:.2f}, less than {LEAST_CONFIDENCE:g}")
     return DiscSearch(OpticDisc(x, y, radius, "image", confidence))
+
+
+def likeliest(found: list[tuple[float, Circle]]) -> tuple[float, Circle]:
+    """Place that is most probably the disc, and how probable that is beside its rivals.
+
+    Parameters
+    ----------
+    found : one or more places, each with the probability that it is the disc, seen alone.
+    """
+    alone, circle = _outermost(found)
+    elsewhere = [share for share, other in found if np.hypot(other.x - circle.x, other.y - circle.y) > circle.radius]
+    return _before_rival(alone, max(elsewhere, default=0.0)), circle
 
 
 def _outermost(found: list[tuple[float, Circle]]) -> tuple[float, Circle]:
@@ -119,9 +130,9 @@ def _pixels(x: float, y: float, edge: int) -> tuple[float, float]:
     return (x + 0.5) * edge - 0.5, (y + 0.5) * edge - 0.5
 
 
-def probability(features: Mapping[str, float]) -> float:
+def probability(weights: Mapping[str, float], features: Mapping[str, float]) -> float:
     """Probability that a place with these features is the disc."""
-    return float(expit(WEIGHTS["intercept"] + sum(WEIGHTS[name] * value for name, value in features.items())))
+    return float(expit(weights["intercept"] + sum(weights[name] * value for name, value in features.items())))
 
 
 def candidates(graph: VesselGraph, ground: Ground, scale: tuple[int, float]) -> list[tuple[Circle, dict[str, float]]]:
