@@ -2,10 +2,11 @@
 
 import numpy as np
 import pytest
-from beds import bed, published, straight
+from beds import bed, published, straight, y_bed
 from shapes import shape_of
 
 from vasohm.flags import Flag
+from vasohm.network.graph import VesselClass
 from vasohm.network.orders import SCHEMES
 
 STRAHLER, DIAMETER = (SCHEMES.index(name) for name in ("strahler", "diameter"))
@@ -198,6 +199,16 @@ def test_a_mesh_and_a_rootless_tree_are_left_out_by_name():
     assert not two.order.size
     alone = shape_of(measured, fov=np.ones((8, 8), dtype=bool)).orders  # nothing known: the widest end is the root
     assert alone.highest.tolist() == [3, 3]
+
+
+@pytest.mark.parametrize(("kind", "sign"), [(VesselClass.ARTERIOLE, 1), (VesselClass.VENULE, -1)])
+def test_two_trunks_that_end_in_one_place_are_not_ordered_upside_down(kind, sign):
+    """Blood of arterioles flows from wide to thin vessels: a distal end as root would make twigs of the trunks."""
+    role = sign * np.array([-1, 0, 1, 1])
+    one = shape_of(y_bed(classes=[kind] * 3), role=role, fov=np.ones((8, 8), dtype=bool)).orders
+    assert one.ratio_flags.tolist() == [Flag.ORDER_ROOTLESS] * 2
+    other = shape_of(y_bed(classes=[kind] * 3), role=-role, fov=np.ones((8, 8), dtype=bool)).orders
+    assert other.highest.tolist() == [2, 2]
 
 
 def test_an_image_without_vessels_has_no_orders():

@@ -8,7 +8,7 @@ from scipy.sparse.csgraph import connected_components, dijkstra
 
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
 from vasohm.flags import Flag
-from vasohm.network.graph import NodeKind
+from vasohm.network.graph import NodeKind, VesselClass
 from vasohm.network.groups import mean_by, sum_by
 from vasohm.network.radius import MeasuredGraph
 
@@ -174,7 +174,11 @@ def _root(measured: MeasuredGraph, rooting: Rooting, n_networks: int) -> tuple[_
 
 
 def _roots(measured: MeasuredGraph, rooting: Rooting, n_networks: int) -> IntArray:
-    """Root node (n_networks,) of each network; -1 where it cannot be told."""
+    """Root node (n_networks,) of each network; -1 where it cannot be told.
+
+    It is the only inlet or the only outlet; of a tree that is mostly of one class it must be the one that its trunk has:
+    several trunks that leave the disc together and end in one place are no tree that begins there.
+    """
     graph = measured.graph
     nodes = np.concatenate((graph.node_a, graph.node_b))
     widest = np.zeros(graph.n_nodes)
@@ -187,7 +191,10 @@ def _roots(measured: MeasuredGraph, rooting: Rooting, n_networks: int) -> IntArr
     inlets, outlets = rooting.role > 0, rooting.role < 0
     n_in, n_out = count(inlets), count(outlets)
     network = rooting.node_network
-    only = (inlets & (n_in == 1)[network]) | (outlets & (n_out == 1)[network])
+    arteriolar, venular = (
+        _mostly(measured, rooting, kind, n_networks) for kind in (VesselClass.ARTERIOLE, VesselClass.VENULE)
+    )
+    only = (inlets & ((n_in == 1) & ~venular)[network]) | (outlets & ((n_out == 1) & ~arteriolar)[network])
     only |= is_end & ((n_in == 0) & (n_out == 0))[network]
     candidates = np.flatnonzero(only)
     order = candidates[np.lexsort((candidates, -widest[candidates], network[candidates]))]
@@ -195,6 +202,13 @@ def _roots(measured: MeasuredGraph, rooting: Rooting, n_networks: int) -> IntArr
     root = np.full(n_networks, -1, np.int64)
     root[found] = order[first]
     return root
+
+
+def _mostly(measured: MeasuredGraph, rooting: Rooting, kind: VesselClass, n_networks: int) -> BoolArray:
+    """Whether more than half of a network's length (n_networks,) is of a class."""
+    of_kind = np.where(measured.graph.vessel_class == kind, measured.length_um, 0.0)
+    whole = sum_by(rooting.segment_network, measured.length_um, n_networks)
+    return np.asarray(sum_by(rooting.segment_network, of_kind, n_networks) > 0.5 * whole)
 
 
 def _levels(trees: _Trees) -> list[IntArray]:
