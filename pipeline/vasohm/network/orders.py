@@ -176,8 +176,8 @@ def _root(measured: MeasuredGraph, rooting: Rooting, n_networks: int) -> tuple[_
 def _roots(measured: MeasuredGraph, rooting: Rooting, n_networks: int) -> IntArray:
     """Root node (n_networks,) of each network; -1 where it cannot be told.
 
-    It is the only inlet or the only outlet; of a tree that is mostly of one class it must be the one that its trunk has:
-    several trunks that leave the disc together and end in one place are no tree that begins there.
+    It is the only inlet or the only outlet; of a tree that is mostly of one class it must be the one that its trunk
+    has: several trunks that leave the disc together and end in one place are no tree that begins there.
     """
     graph = measured.graph
     nodes = np.concatenate((graph.node_a, graph.node_b))
