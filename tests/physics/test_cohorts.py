@@ -421,6 +421,7 @@ REFUSED = {
         {},
         "1 of 16 subjects have more than one group .'s0'",
     ),
+    "seed below 0": (lambda t: t, {"seed": -1}, "seed -1 is below 0"),
     "doubt below 0": (lambda t: t.assign(se=-0.1), {"outcome_rel_se": "se"}, "'se' holds -0.1"),
 }
 

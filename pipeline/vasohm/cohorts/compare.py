@@ -66,9 +66,7 @@ def compare_groups(  # noqa: PLR0913  every column of the table that takes part 
     ------
     CohortError
         A column is missing or empty, there is one level or one subject only, the reference is not there, a covariate
-        tells the same as the levels.
-    DomainError
-        The seed is below 0.
+        tells the same as the levels, an uncertainty or the seed is below 0.
 
     Notes
     -----
@@ -78,6 +76,8 @@ def compare_groups(  # noqa: PLR0913  every column of the table that takes part 
     subjects; stated, it gives less weight to what is measured worse and bounds the variance from below. What a
     calibration shares cancels between levels that have it in common and enters in full where they do not.
     """
+    if seed < 0:
+        raise CohortError(f"seed {seed} is below 0.")
     names = Names(
         outcome, by, subject, tuple(within), tuple(covariates), outcome_rel_se, outcome_shared_rel_se, calibration
     )

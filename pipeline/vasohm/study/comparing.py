@@ -4,6 +4,7 @@ import hashlib
 import json
 from collections.abc import Mapping
 from dataclasses import dataclass
+from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
@@ -172,7 +173,7 @@ def _told(found: StudyComparison) -> dict[str, Any]:
         "family": FAMILY,
         "methods": methods_paragraph(settings, found.comparison.tables["comparison"]),
         "notes": list(found.comparison.notes),
-        "versions": versions_used(found.study.settings),
+        "versions": versions_used(found.study.settings) | {"statsmodels": version("statsmodels")},
         "measured_with": dict(found.state.versions),
     }
 
