@@ -15,6 +15,8 @@ from vasohm.image.disc import OpticDisc, check_disc
 from vasohm.image.prepare import prepare
 from vasohm.image.read import RawImage
 from vasohm.image.segment import segment
+from vasohm.network.disc_margin import Circle as Blocks
+from vasohm.network.disc_margin import Ground, _describe
 from vasohm.network.graph import build_graph
 from vasohm.network.optic_disc import LEAST_CONFIDENCE, DiscSearch, find_disc
 from vasohm.network.skeletonize import skeletonize
@@ -139,6 +141,14 @@ def test_pictures_of_nothing_are_refused_by_name() -> None:
     found = search(np.clip(noise, 0, 255).astype(np.uint8))
     assert found.disc is None
     assert found.flags == Flag.DISC_NOT_FOUND
+
+
+def test_a_margin_beyond_which_nothing_is_seen_is_none() -> None:
+    """The median of no light at all would warn, and stop a run that takes warnings for errors."""
+    y, x = np.mgrid[:120, :120].astype(np.float32)
+    at = np.hypot(x - 60, y - 60)
+    ground = Ground(np.where(at < 42, 1.0, 0.0).astype(np.float32), at < 46)
+    assert _describe(ground, Blocks(60.0, 60.0, 28.0)) is None
 
 
 def test_a_turned_picture_turns_its_disc(eye: Eye) -> None:

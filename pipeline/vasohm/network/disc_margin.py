@@ -150,6 +150,8 @@ def _describe(ground: Ground, circle: Circle) -> Margin | None:
     radius = at[k] + STEP * _vertex(falls[k - 1 : k + 2])
     at = at / radius
     inner, outer, inside, outside = (_level(light, at, ring) for ring in (INNER, OUTER, INSIDE, OUTSIDE))
+    if not (np.isfinite(inner).any() and np.isfinite(outer).any()):
+        return None
     fall = float(np.nanmedian(inner) - np.nanmedian(outer))
     at_margin = inside - outside
     both = np.isfinite(at_margin)
