@@ -3,7 +3,7 @@
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.signal import fftconvolve
+from scipy import fft
 
 from vasohm.arrays import FloatArray, freeze
 from vasohm.network.jointfit import LN_C, LN_R, Observed, factor, model_strips, solve
@@ -80,6 +80,14 @@ def _factor_at(table: ProfileTable, kernel: FloatArray, ln_r: float, cnr: float,
     for _ in range(ROUNDS):
         matrix = np.broadcast_to(design @ design.T / result, (n, 5, 5))
         influence = solve(factor(matrix, priors.full(segment), priors.hold), mean) @ design
-        spread = float(np.sum(influence * fftconvolve(influence, kernel, mode="same")))
+        spread = float(np.sum(influence * _convolved(influence, kernel)))
         result = float(np.clip(spread / np.sum(influence**2), *FACTOR_RANGE))
     return result
+
+
+def _convolved(values: FloatArray, kernel: FloatArray) -> FloatArray:
+    """Convolve with a kernel of odd edges at the size of `values`, which are 0 beyond their border."""
+    full = [fft.next_fast_len(n + k - 1, real=True) for n, k in zip(values.shape, kernel.shape, strict=True)]
+    whole = fft.irfft2(fft.rfft2(values, full) * fft.rfft2(kernel, full), full)
+    inner = (slice((k - 1) // 2, (k - 1) // 2 + n) for n, k in zip(values.shape, kernel.shape, strict=True))
+    return np.asarray(whole[tuple(inner)])

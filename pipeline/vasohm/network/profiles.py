@@ -10,8 +10,8 @@ from functools import lru_cache
 
 import numpy as np
 from numpy.lib.stride_tricks import sliding_window_view
+from scipy import fft
 from scipy.interpolate import CubicSpline
-from scipy.signal import fftconvolve
 from scipy.special import ndtr
 
 from vasohm.arrays import Float32Array, FloatArray, IntArray, freeze
@@ -203,11 +203,18 @@ def _blur_layers(weights: FloatArray, x: FloatArray, s: float) -> tuple[FloatArr
     high = np.cumsum(weights[:, ::-1], axis=1)[:, ::-1]
     stairs = np.concatenate([high[:, :0:-1], high[:, 1:]], axis=1)
     edges = np.concatenate([weights[:, :0:-1], 0 * weights[:, :1], -weights[:, 1:]], axis=1)
-    value, slope = fftconvolve(stairs, share, axes=1), fftconvolve(edges, bell, axes=1)
+    value, slope = _convolved(stairs, share), _convolved(edges, bell)
     first, step = weights.shape[1] - 1 + reach, LAYERS_PER_PX // PHASES
     value, slope = value[:, first::step][:, : len(x)], slope[:, first::step][:, : len(x)]
     beyond = ((0, 0), (0, len(x) - value.shape[1])), ((0, 0), (0, len(x) - slope.shape[1]))
     return np.pad(value, beyond[0]), np.pad(slope, beyond[1])
+
+
+def _convolved(rows: FloatArray, kernel: FloatArray) -> FloatArray:
+    """Convolve every row with one kernel (1, k), at full length."""
+    full = rows.shape[1] + kernel.shape[1] - 1
+    n = fft.next_fast_len(full, real=True)
+    return np.asarray(fft.irfft(fft.rfft(rows, n) * fft.rfft(kernel, n), n)[:, :full])
 
 
 @lru_cache(maxsize=16)

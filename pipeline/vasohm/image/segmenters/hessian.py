@@ -3,8 +3,7 @@
 from collections.abc import Mapping
 
 import numpy as np
-from skimage.filters import apply_hysteresis_threshold, sato
-from skimage.morphology import remove_small_objects
+from skimage import filters, morphology  # they load their parts at first use; the filters' take half a second
 
 from vasohm.arrays import BoolArray, Float32Array
 from vasohm.image.prepare import PreparedImage
@@ -23,8 +22,8 @@ def segment_hessian(prepared: PreparedImage, parameters: Mapping[str, float]) ->
     response = _response(prepared, parameters)
     middle, unit = (parameters.get(key, value) for key, value in _levels(response[prepared.fov]).items())
     level = (response - middle) / unit
-    mask = apply_hysteresis_threshold(np.where(prepared.fov, level, 0), LOW, HIGH)
-    return np.asarray(remove_small_objects(mask, max_size=LEAST_PX), dtype=bool)
+    mask = filters.apply_hysteresis_threshold(np.where(prepared.fov, level, 0), LOW, HIGH)
+    return np.asarray(morphology.remove_small_objects(mask, max_size=LEAST_PX), dtype=bool)
 
 
 def learn_hessian(prepared: PreparedImage, parameters: Mapping[str, float]) -> Mapping[str, float]:
@@ -41,4 +40,4 @@ def _response(prepared: PreparedImage, parameters: Mapping[str, float]) -> Float
     even = prepared.signal / np.maximum(prepared.noise_sd, np.float32(1e-30))
     lowest = max(1.0, 0.6 * parameters["radius_lo_px"])
     highest = min(LARGEST_SIGMA_PX, max(lowest * 1.5, 0.6 * parameters["radius_hi_px"]))
-    return np.asarray(sato(even, sigmas=np.geomspace(lowest, highest, N_SCALES), black_ridges=False))
+    return np.asarray(filters.sato(even, sigmas=np.geomspace(lowest, highest, N_SCALES), black_ridges=False))
