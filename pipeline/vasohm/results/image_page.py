@@ -27,7 +27,7 @@ from vasohm.results.markup import (
     tiles,
 )
 from vasohm.results.methods import CAUTIONS
-from vasohm.results.page_data import page_data
+from vasohm.results.page_data import MOST_SEGMENTS, page_data
 from vasohm.results.schema import image_columns
 from vasohm.results.tables import ImageTables
 from vasohm.results.wording import pixel_size_words, why_no_resistance
@@ -76,6 +76,9 @@ def image_page(tables: ImageTables, overlay: ColourBy | None) -> str:
     body = [_summary(tables) if lives else paragraph("No vessel was found.")]
     body.append(_without_resistance(tables.networks))
     if lives:
+        if len(tables.segments) > MOST_SEGMENTS:
+            told = f"To explore: the {MOST_SEGMENTS} longest of {len(tables.segments)} segments; the files hold all."
+            body.append(paragraph(told))
         body.append(explorer())
     body += [_plain(tables, overlay), folded("networks", "Networks", _networks(tables.networks))]
     body += _estimated(tables.networks)

@@ -34,22 +34,20 @@ def seen_points(x: FloatArray, y: FloatArray, radius: FloatArray, offsets: IntAr
     whole = last >= first
     kept[first[whole]] = kept[last[whole]] = True
     place = np.column_stack([x, y, radius])
-    line = np.repeat(np.arange(len(first)), np.diff(offsets))
+    open_ = np.flatnonzero(~kept)  # points whose piece is not yet known to be straight
     for _ in range(ROUNDS):
-        knots = np.flatnonzero(kept)
-        piece = np.cumsum(kept) - 1
-        start = knots[piece]
-        end = knots[np.minimum(piece + 1, len(knots) - 1)]
-        inner = ~kept & (line[end] == line[start])
-        index = np.flatnonzero(inner)
-        away = _distance(place[index], place[start[index]], place[end[index]])
-        order = np.lexsort((index, -away, piece[index]))
-        _, firsts = np.unique(piece[index][order], return_index=True)
-        farthest = order[firsts]
-        farthest = farthest[away[farthest] > tolerance]
-        if not farthest.size:
+        if not open_.size:
             break
-        kept[index[farthest]] = True
+        knots = np.flatnonzero(kept)
+        piece = np.searchsorted(knots, open_) - 1
+        away = _distance(place[open_], place[knots[piece]], place[knots[piece + 1]])
+        begins = np.flatnonzero(np.diff(piece, prepend=-1))
+        lengths = np.diff(begins, append=len(piece))
+        most = np.repeat(np.maximum.reduceat(away, begins), lengths)
+        strays = most > tolerance
+        at_most = np.flatnonzero(strays & (away == most))
+        kept[open_[at_most[np.flatnonzero(np.diff(piece[at_most], prepend=-1))]]] = True  # the first of equal ones
+        open_ = open_[strays & ~kept[open_]]
     return kept
 
 

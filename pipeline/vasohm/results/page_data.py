@@ -3,6 +3,7 @@
 import base64
 import json
 import math
+from dataclasses import replace
 from io import BytesIO
 from typing import Any
 
@@ -40,10 +41,12 @@ DIGITS = 4  # significant ones of the numbers shown
 ALONG = (0.5, 0.4, 0.6, 0.3, 0.7, 0.2, 0.8)  # of a segment: where an edit of it may point
 CLEAR_PX = 4.0  # an edit's point should be so far from every other segment
 COLOURS_SENT = 64
+MOST_SEGMENTS = 10_000  # on one page: what a browser draws anew in a fraction of a second
 
 
 def page_data(tables: ImageTables, colour: ColourBy | None) -> str:
     """Build the data of the page; nothing in it can end the element that holds it."""
+    tables = _longest(tables)
     height, width = tables.picture.shape
     segments, nodes, crossings = tables.segments, tables.nodes, tables.tables["crossings"]
     branchings = nodes[nodes["kind"] == "branching"]
@@ -73,6 +76,17 @@ def page_data(tables: ImageTables, colour: ColourBy | None) -> str:
     }
     text = json.dumps(data, ensure_ascii=True, allow_nan=False, separators=(",", ":"))
     return text.replace("&", "\\u0026").replace("<", "\\u003c").replace(">", "\\u003e")
+
+
+def _longest(tables: ImageTables) -> ImageTables:
+    """Keep as many segments as a browser draws at once, the longest ones, in their order."""
+    segments = tables.segments
+    if len(segments) <= MOST_SEGMENTS:
+        return tables
+    kept = np.sort(np.argsort(-segments["length_um"].to_numpy(np.float64), kind="stable")[:MOST_SEGMENTS])
+    segments = segments.iloc[kept]
+    points = tables.points[np.isin(tables.points["segment_id"], segments["segment_id"])]
+    return replace(tables, tables={**tables.tables, "segments": segments, "points": points})
 
 
 def _picture(picture: AnyArray) -> str:

@@ -11,6 +11,7 @@
   const ROWS = 100; // of the table at a time
   const PLACES = ["crossing", "branching"], FATES = ["drop", "keep"];
   const state = { colouring: data.colour, chosen: -1, place: -1, from: 0, sort: "share", down: true, saved: true };
+  if (segments.share.every((one) => one === null)) state.sort = "length";
   const edits = data.edits.map((edit) => ({ ...edit, former: true }));
   const facts = new Set(data.facts);
 
@@ -83,7 +84,7 @@
   const painted = () => ({ xs, ys, colour: all.map(colourOf), opacity: all.map(opacityOf) });
   const drawn = source(painted()), around = source({ xs: [], ys: [] }), under = source({ xs: [], ys: [] });
   const inside = data.stubs.map((stub) => [0, 1].map((k) => [0, 2, 4, 6].map((c) => stub[1 + k + c] / 10))); // of a wider vessel
-  const stubs = () => ({ xs: inside.map((o) => o[0]), ys: inside.map((o) => o[1]), colour: data.stubs.map((stub) => colourOf(stub[0])), opacity: data.stubs.map((stub) => 0.6 * opacityOf(stub[0])) });
+  const stubs = () => ({ xs: inside.map((o) => o[0]), ys: inside.map((o) => o[1]), colour: data.stubs.map((stub) => colourOf(stub[0])), opacity: data.stubs.map((stub) => 0.75 * opacityOf(stub[0])) });
   const pieces = source(stubs());
   const rings = source({ x: [], y: [] }), marks = source({ x: [], y: [] });
   const whole = { x: [-0.5, data.width - 0.5], y: [data.height - 0.5, -0.5] };
@@ -313,6 +314,7 @@
     state.saved = false;
     showEdits();
     repaint();
+    showLegend();
     showTable();
     showChosen();
   }
