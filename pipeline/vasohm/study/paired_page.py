@@ -6,7 +6,7 @@ from typing import Any
 
 import pandas as pd
 
-from vasohm.results.markup import Html, heading, interval, paragraph, shown, table
+from vasohm.results.markup import FLAG_MEANING, Html, heading, interval, paragraph, shown, table
 
 _HOW = (
     "Two images of one subject and eye are laid on each other by their centrelines: shifted by at most 30 % of the "
@@ -34,7 +34,7 @@ def paired_part(tables: Mapping[str, pd.DataFrame]) -> list[Html]:
             row["eye"],
             f"{row['condition_b']} over {row['condition_a']}",
             f"{row['image_id_b']} over {row['image_id_a'] or '(none)'}",
-            row["reason"] or row["status"],
+            "; ".join([row["reason"] or row["status"], *(FLAG_MEANING[one] for one in row["flags"].split(";") if one)]),
             _number(row["overlap"], "{:.0%}"),
             " ".join(_number(row[side], "{:z.1f}") for side in ("shift_x_um", "shift_y_um")),
             _number(row["turn_deg"], "{:z.2f}"),
