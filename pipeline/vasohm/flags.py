@@ -66,6 +66,7 @@ class Flag(IntFlag):
     DISC_NOT_FOUND = 1 << 51
     BURNED_IN = 1 << 52
     FIELD_ANGLE = 1 << 53
+    CLASS_UNSAID = 1 << 54
     # pairs of images
     PROFILES_DIFFER = 1 << 57
     CLASS_DIFFERS = 1 << 58
@@ -108,7 +109,7 @@ MEANING: dict[Flag, str] = {
     Flag.TERMINAL_MISSED: "a terminal of the terminals file is not near any vessel end and was left out",
     Flag.EDIT_MISSED: "an edit of the edits file is not near any vessel and was left out",
     Flag.ORIENTATION_TAG: "the file carries an orientation tag; coordinates are those of the stored picture",
-    Flag.PIXEL_SIZE_SE_UNKNOWN: "no uncertainty of the told pixel size or camera factor was given; intervals hold none",
+    Flag.PIXEL_SIZE_SE_UNKNOWN: "no uncertainty of pixel size or camera factor was given; intervals leave it out",
     Flag.INVALID_PIXELS: "pixels that are not finite were taken out of the field of view",
     Flag.SATURATED: "more than 1 % of the field of view is at the limit of the file's scale",
     Flag.BLANK: "the picture holds no contrast above its noise",
@@ -127,6 +128,7 @@ MEANING: dict[Flag, str] = {
     Flag.DISC_NOT_FOUND: "no place in the picture is the optic disc surely enough: nothing that needs one is told",
     Flag.BURNED_IN: "the file says that text is drawn into its picture: it may name the patient, and cover vessels",
     Flag.FIELD_ANGLE: "the angle of view that the file tells does not fit its pixel size",
+    Flag.CLASS_UNSAID: "vessels of no class hold over a tenth of its resistance: it may mix arterioles and venules",
     Flag.PROFILES_DIFFER: "each image took its vessels to be imaged in another way: say [radius] profile for both",
     Flag.CLASS_DIFFERS: "arteriole or venule: the two images say it differently",
     Flag.SCALES_DISAGREE: "one image lies on the other at a scale that their pixel sizes do not explain",

@@ -7,7 +7,7 @@ from vasohm.arrays import BoolArray
 from vasohm.config.settings import Settings
 from vasohm.config.sheet import ImageSource
 from vasohm.flow.estimated_ends import estimate_ends
-from vasohm.flow.hydraulics import solve_flow
+from vasohm.flow.hydraulics import solve_flow, tell_unsaid
 from vasohm.flow.monte_carlo import find_intervals
 from vasohm.flow.scenarios import run_scenarios
 from vasohm.flow.terminals import place_terminals
@@ -79,6 +79,8 @@ def measure_pixels(raw: RawImage, source: ImageSource, settings: Settings, stage
     placed = place_terminals(measured, source.terminals, settings.network, sought.disc)
     terminals = estimate_ends(measured, placed, blood, settings.targets)
     flow = solve_flow(measured, terminals, blood)
+    if settings.trees.by_class:
+        flow = tell_unsaid(measured, flow)
     intervals = find_intervals(measured, flow, blood, settings.intervals)
     scenarios = run_scenarios(measured, terminals, blood, settings.scenarios, intervals)
     stage("tables")

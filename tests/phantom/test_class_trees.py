@@ -4,9 +4,10 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from beds import CommonErrors, bed, straight
+from beds import CommonErrors, bed, flow_of, straight, y_bed
 
 from vasohm.flags import Flag
+from vasohm.flow.hydraulics import tell_unsaid
 from vasohm.network.class_trees import TreeSettings, part_trees
 from vasohm.network.graph import NodeKind, VesselClass, label_networks
 from vasohm.network.radius import MeasuredGraph
@@ -151,3 +152,14 @@ def test_ids_follow_from_the_places_and_other_pictures_stay_as_they_are():
     apart = [*CROSS, (300.0, 300.0), (400.0, 300.0)]
     separate = bed(apart, [straight(apart, 0, 1, 6.0), straight(apart, 5, 6, 6.0)], classes=[A, V])
     assert part_trees(separate, BY_CLASS) is separate
+
+
+def test_vessels_of_no_class_that_hold_much_of_a_resistance_are_told():
+    """An artery's trunk of no class, joined to a venular tree, must not pass in silence as part of its resistance."""
+    told = []
+    for classes in ([V, V, V], [NONE, V, V], [NONE, NONE, NONE]):
+        measured = y_bed(classes=classes)
+        told.append(bool(tell_unsaid(measured, flow_of(measured)).network_flags[0] & Flag.CLASS_UNSAID))
+    assert told == [False, True, True]
+    alone = meeting([NONE], pairs=((0, 1),), nodes=CROSS[:2])
+    assert not tell_unsaid(alone, flow_of(alone)).network_flags[0] & Flag.CLASS_UNSAID

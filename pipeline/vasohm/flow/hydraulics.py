@@ -1,7 +1,7 @@
 """From a measured graph with terminals to flow, pressure, shares and each network's resistance."""
 
 from collections.abc import Hashable, Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import cast
 
 import numpy as np
@@ -18,10 +18,12 @@ from vasohm.flow.medians import ln_median_shift, pressure_drives
 from vasohm.flow.poiseuille import SegmentResistances
 from vasohm.flow.rheology import BloodSettings, make_blood
 from vasohm.flow.terminals import Terminals
-from vasohm.network.graph import NodeKind, VesselGraph
+from vasohm.network.graph import NodeKind, VesselClass, VesselGraph
 from vasohm.network.groups import sum_by
 from vasohm.network.radius import MeasuredGraph
 from vasohm.units import NL_MIN_PER_M3_S, PA_PER_MMHG
+
+UNSAID_SHARE = 0.1  # of a network's resistance
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -131,6 +133,17 @@ def solve_flow(measured: MeasuredGraph, terminals: Terminals, blood: BloodSettin
         network_flags=circulation.network_flags,
         hematocrit_turns=state.hematocrit_turns,
     )
+
+
+def tell_unsaid(measured: MeasuredGraph, flow: NetworkFlow) -> NetworkFlow:
+    """Flag networks, meant as trees of one class each, in which vessels of no class hold much of the resistance."""
+    network = flow.terminals.segment_network
+    n_networks = len(flow.network_flags)
+    is_unsaid = measured.graph.vessel_class == VesselClass.NONE
+    held = sum_by(network, np.where(is_unsaid, np.nan_to_num(flow.share), 0.0), n_networks)
+    several = np.bincount(network, minlength=n_networks) > 1  # a vessel by itself mixes nothing
+    told = np.where(several & (held > UNSAID_SHARE), int(Flag.CLASS_UNSAID), 0)
+    return replace(flow, network_flags=flow.network_flags | told)
 
 
 def drive_is_given(terminals: Terminals) -> BoolArray:
