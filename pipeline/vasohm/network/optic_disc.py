@@ -146,11 +146,12 @@ def candidates(graph: VesselGraph, ground: Ground, scale: tuple[int, float]) -> 
     """
     edge, diameter = scale
     found: list[tuple[Circle, dict[str, float]]] = []
-    for circle, excess in _promising(graph, edge, _bright_places(ground, diameter)):
+    vessels = _Vessels.of(graph, edge)
+    for circle, excess in _promising(vessels, _bright_places(ground, diameter)):
         is_known = any(_is_alike(circle, other) for other, _ in found)
         margin = None if is_known else fit_margin(ground, circle)
         if margin is not None:
-            found.append((margin.circle, _describe(graph, edge, margin, excess)))
+            found.append((margin.circle, _describe(vessels, margin, excess)))
     return found
 
 
@@ -223,11 +224,11 @@ def _mean_within(
     return np.divide(total, weight, out=np.full(shape, np.nan), where=weight > LEAST_SEEN * kernel.sum())
 
 
-def _promising(graph: VesselGraph, edge: int, places: list[tuple[Circle, float]]) -> list[tuple[Circle, float]]:
+def _promising(vessels: "_Vessels", places: list[tuple[Circle, float]]) -> list[tuple[Circle, float]]:
     """Places worth a look: bright ones to which vessels lead, each but once."""
     rated = []
     for circle, excess in places:
-        around = _vessels_around(graph, edge, circle)
+        around = vessels.around(circle)
         rated.append((np.log(excess) + around["pointing"] + 0.7 * around["trunks"] + around["width"], circle, excess))
     rated.sort(key=lambda one: (-one[0], one[1].y, one[1].x, one[1].radius))
     chosen: list[tuple[Circle, float]] = []
@@ -242,32 +243,51 @@ def _is_alike(one: Circle, other: Circle) -> bool:
     return bool(is_near and abs(np.log(one.radius / other.radius)) < ALIKE_LN)
 
 
-def _vessels_around(graph: VesselGraph, edge: int, circle: Circle) -> dict[str, float]:
-    """How vessels lie to a place: whether they point at it, how many trunks reach it, how wide they are."""
-    x, y = _pixels(circle.x, circle.y, edge)
-    dx, dy = graph.x_px - x, graph.y_px - y
-    at = np.hypot(dx, dy) / (edge * circle.radius)
-    wide = graph.seed_radius_px
-    near = (at > NEAR[0]) & (at < NEAR[1])
-    if not near.any():
-        return {"pointing": 0.0, "trunks": 0.0, "width": float(np.log(NO_WIDTH))}
-    along_x, along_y = tangents(graph.x_px, graph.y_px, graph.offsets)
-    towards = np.abs(along_x * dx + along_y * dy)[near] / (at[near] * edge * circle.radius)
-    in_ring, wide_near = at[near] < RING[1], wide[near]
-    crossing = (wide_near * towards)[in_ring].sum() / (edge * circle.radius * (RING[1] - RING[0]))
-    return {
-        "pointing": float(np.average(2 * towards**2 - 1, weights=wide_near**2)),  # mean cos 2 angle: 0 at random
-        "trunks": float(np.log1p(crossing / np.quantile(wide, 0.95))),
-        "width": float(0.5 * np.log(np.mean(wide_near**2) / np.mean(wide**2))),
-    }
+@dataclass(frozen=True, slots=True, eq=False)
+class _Vessels:
+    """The vessels' centrelines and what is asked of them for every place."""
+
+    edge: int  # of a block, px
+    x_px: FloatArray  # (n_points,)
+    y_px: FloatArray
+    along_x: FloatArray
+    along_y: FloatArray
+    wide: FloatArray
+    trunk: float  # radius of wide ones, px
+    mean_square: float  # of the radius
+
+    @classmethod
+    def of(cls, graph: VesselGraph, edge: int) -> "_Vessels":
+        wide = graph.seed_radius_px
+        along_x, along_y = tangents(graph.x_px, graph.y_px, graph.offsets)
+        trunk, mean_square = float(np.quantile(wide, 0.95)), float(np.mean(wide**2))
+        return cls(edge, graph.x_px, graph.y_px, along_x, along_y, wide, trunk, mean_square)
+
+    def around(self, circle: Circle) -> dict[str, float]:
+        """How vessels lie to a place: whether they point at it, how many trunks reach it, how wide they are."""
+        x, y = _pixels(circle.x, circle.y, self.edge)
+        dx, dy = self.x_px - x, self.y_px - y
+        radius = self.edge * circle.radius
+        at = np.hypot(dx, dy) / radius
+        near = np.flatnonzero((at > NEAR[0]) & (at < NEAR[1]))
+        if not len(near):
+            return {"pointing": 0.0, "trunks": 0.0, "width": float(np.log(NO_WIDTH))}
+        at, wide = at[near], self.wide[near]
+        towards = np.abs(self.along_x[near] * dx[near] + self.along_y[near] * dy[near]) / (at * radius)
+        crossing = (wide * towards)[at < RING[1]].sum() / (radius * (RING[1] - RING[0]))
+        return {
+            "pointing": float(np.average(2 * towards**2 - 1, weights=wide**2)),  # mean cos 2 angle: 0 at random
+            "trunks": float(np.log1p(crossing / self.trunk)),
+            "width": float(0.5 * np.log(np.mean(wide**2) / self.mean_square)),
+        }
 
 
-def _describe(graph: VesselGraph, edge: int, margin: Margin, excess: float) -> dict[str, float]:
+def _describe(vessels: _Vessels, margin: Margin, excess: float) -> dict[str, float]:
     return {
         "excess": float(np.log(max(excess, 1.0))),
         "complete": min(margin.complete, MOST_COMPLETE),
         "sharp": min(max(margin.sharp, 0.0), MOST_SHARP),
         "scatter": margin.scatter,
         "steady": margin.steady,
-        **_vessels_around(graph, edge, margin.circle),
+        **vessels.around(margin.circle),
     }

@@ -3,6 +3,7 @@
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.linalg.blas import dtbsv
 
 from vasohm.arrays import FloatArray, IntArray, freeze
 from vasohm.network.jointfit import (
@@ -40,9 +41,11 @@ class StiffnessDoubt:
 
     def segment_variance(self, gradient: FloatArray, segment: IntArray) -> FloatArray:
         """Variance (n_segments,) of sum(gradient * ln r) over each segment's points."""
-        n = len(self.probability)
-        moves = [np.bincount(segment, gradient * column, n) for column in self.move.T]
-        return _spread(self.probability, np.array(moves).T)
+        moves = np.zeros(self.probability.shape)
+        if len(segment):
+            first = np.flatnonzero(np.diff(segment, prepend=-1))
+            moves[segment[first]] = np.add.reduceat(gradient[:, None] * self.move, first, axis=0)
+        return _spread(self.probability, moves)
 
 
 def _spread(probability: FloatArray, move: FloatArray) -> FloatArray:
@@ -64,11 +67,14 @@ class BandedCovariance:
         freeze(self)
 
     def segment_variance(self, gradient: FloatArray) -> FloatArray:
-        """Variance (n_segments,) of sum(gradient * ln r) over each segment's points; gradient is (n_points,)."""
+        """Variance (n_segments,) of sum(gradient * ln r) over each segment's points; gradient is (n_points,).
+
+        With the inverse covariance factored as L L', that is the square of L^-1 gradient: half a solution tells it.
+        """
         right = np.zeros((len(self.segment), self.n_unknowns))
         right[:, LN_R] = gradient
-        response = solve(self.factored, right)[:, LN_R]
-        known = np.bincount(self.segment, gradient * response, self.n_segments)
+        half = dtbsv(len(self.factored) - 1, self.factored, right.ravel(), lower=1, overwrite_x=1)
+        known = np.bincount(self.segment, np.sum(np.square(half.reshape(right.shape)), axis=1), self.n_segments)
         return known + self.doubt.segment_variance(gradient, self.segment)
 
 

@@ -85,9 +85,8 @@ def ln_area(optics: Optics, ln_r: FloatArray) -> tuple[FloatArray, FloatArray]:
         return np.log(2.0) + ln_r, np.ones_like(ln_r)
     if optics.family == "cylinder":
         return np.log(np.pi) + 2.0 * ln_r, np.full_like(ln_r, 2.0)
-    ln_tau, ln_kappa = _absorbed_area()
+    ln_tau, ln_kappa, slope = _absorbed_area()
     where = np.log(2.0 * optics.mu_per_px) + ln_r
-    slope = np.gradient(ln_kappa, ln_tau)
     return ln_r + np.interp(where, ln_tau, ln_kappa), 1.0 + np.interp(where, ln_tau, slope)
 
 
@@ -117,11 +116,13 @@ def photometric_ln_radius(optics: Optics, ln_k: FloatArray) -> FloatArray:
 
 
 @lru_cache(maxsize=1)
-def _absorbed_area() -> tuple[FloatArray, FloatArray]:
+def _absorbed_area() -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Ln tau, ln kappa(tau) and the slope of the one over the other."""
     angle, weight = _quadrature(400)
     ln_tau = np.linspace(np.log(1e-6), np.log(1e3), 2200)
     absorbed = -np.expm1(-np.exp(ln_tau)[:, None] * np.sin(angle))
-    return ln_tau, np.log(2.0 * absorbed @ (weight * np.sin(angle)))
+    ln_kappa = np.log(2.0 * absorbed @ (weight * np.sin(angle)))
+    return ln_tau, ln_kappa, np.gradient(ln_kappa, ln_tau)
 
 
 @lru_cache(maxsize=8)
@@ -295,8 +296,16 @@ def _place(table: ProfileTable, ln_r: FloatArray, x: FloatArray) -> _Place:
 def _hermite(t: FloatArray, step: float) -> tuple[FloatArray, FloatArray]:
     """Weights (4, n): value and slope at one end, then at the other, of a cubic and of its derivative."""
     u = 1.0 - t
-    value = np.stack([(1 + 2 * t) * u**2, step * t * u**2, t**2 * (1 + 2 * u), -step * t**2 * u])
-    slope = np.stack([-6 * t * u / step, u * (u - 2 * t), 6 * t * u / step, t * (t - 2 * u)])
+    tu = t * u
+    value, slope = np.empty((2, 4, len(t)))
+    value[2] = t**2 * (1 + 2 * u)
+    value[0] = 1 - value[2]
+    np.multiply(step * tu, u, out=value[1])
+    np.multiply(-step * tu, t, out=value[3])
+    np.multiply(6 / step, tu, out=slope[2])
+    np.negative(slope[2], out=slope[0])
+    np.multiply(u, u - 2 * t, out=slope[1])
+    np.multiply(t, t - 2 * u, out=slope[3])
     return value, slope
 
 

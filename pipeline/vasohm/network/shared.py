@@ -106,6 +106,7 @@ class Marginal:
     gradient: FloatArray  # (n_segments, k)
     information: FloatArray  # (n_segments, k, k)
     answer: FloatArray  # (n_points, B, k): change of the unknowns for a unit change of each parameter
+    factored: FloatArray  # banded Cholesky factor of the normal equations of the unknowns
 
     def __post_init__(self) -> None:
         freeze(self)
@@ -123,7 +124,7 @@ def marginalise(observed: Observed, priors: Priors, theta: FloatArray, normal: N
     information = np.stack(
         [np.stack([observed.by_segment(width[:, i, j]) for j in range(k)], axis=1) for i in range(k)], axis=1
     )
-    return Marginal(gradient, information, -answer)
+    return Marginal(gradient, information, -answer, factored)
 
 
 def in_focus(marginal: Marginal) -> BoolArray:

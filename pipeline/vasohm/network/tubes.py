@@ -23,7 +23,6 @@ from vasohm.network.jointfit import (
     Normal,
     Observed,
     Priors,
-    factor,
     fit_joint,
     solve,
     with_stiffness,
@@ -286,12 +285,10 @@ def _report(
 ) -> TubeFit:
     theta, priors, normal = fit
     optics, lines = known.table.optics, scene.lines
-    factored = factor(normal.matrix, priors.full(observed.segment), priors.hold)
-    covariance = BandedCovariance(factored, observed.segment, observed.n_segments, theta.shape[1], doubt)
-    names = parameters_of(optics)
-    response = optics_response(observed, known.table, theta, names)
+    response = optics_response(observed, known.table, theta, parameters_of(optics))
     marginal = marginalise(observed, priors, theta, normal, response)
-    shared, causes = _shared_columns(observed, known, factored, priors, marginal)
+    covariance = BandedCovariance(marginal.factored, observed.segment, observed.n_segments, theta.shape[1], doubt)
+    shared, causes = _shared_columns(observed, known, priors, marginal)
     psf = optical_blur_px(optics.s_px, scene.picture.order)
     blur_se = float(np.sqrt(known.covariance[0, 0])) * optics.s_px**2 / max(psf, 0.3)
     return TubeFit(
@@ -312,7 +309,7 @@ def _report(
 
 
 def _shared_columns(
-    observed: Observed, known: ImageKnowledge, factored: FloatArray, priors: Priors, marginal: Marginal
+    observed: Observed, known: ImageKnowledge, priors: Priors, marginal: Marginal
 ) -> tuple[FloatArray, tuple[str, ...]]:
     """Change of ln r for one standard uncertainty of each independent cause."""
     prior, segment = known.contrast, observed.segment
@@ -322,7 +319,7 @@ def _shared_columns(
     for number, mean_se in enumerate(prior.mean_se):
         right = np.zeros(priors.hold.shape)
         right[:, LN_C] = np.where(group == number, priors.hold[:, LN_C], 0.0)
-        to_mean = solve(factored, right)[:, LN_R]
+        to_mean = solve(marginal.factored, right)[:, LN_R]
         to_optics = to_optics + to_mean[:, None] * prior.answer[number]
         columns.append(to_mean * mean_se)
         causes.append("contrast" if len(prior.mean_se) == 1 else f"contrast {number + 1}")
