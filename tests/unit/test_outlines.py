@@ -1,5 +1,7 @@
 """Lines thinned for a page look like the whole ones."""
 
+import itertools
+
 import numpy as np
 
 from vasohm.results.outlines import seen_points
@@ -10,7 +12,7 @@ TOLERANCE = 0.3
 def farthest(place: np.ndarray, kept: np.ndarray) -> float:
     """Largest distance of a line's points from the straight pieces between its kept ones, slowly and plainly."""
     knots, worst = np.flatnonzero(kept), 0.0
-    for start, end in zip(knots[:-1], knots[1:], strict=True):
+    for start, end in itertools.pairwise(knots):
         for point in place[start : end + 1]:
             along = place[end] - place[start]
             share = np.clip(np.dot(point - place[start], along) / max(np.dot(along, along), 1e-30), 0.0, 1.0)
