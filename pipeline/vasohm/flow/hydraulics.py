@@ -136,13 +136,17 @@ def solve_flow(measured: MeasuredGraph, terminals: Terminals, blood: BloodSettin
 
 
 def tell_unsaid(measured: MeasuredGraph, flow: NetworkFlow) -> NetworkFlow:
-    """Flag networks, meant as trees of one class each, in which vessels of no class hold much of the resistance."""
+    """Flag networks, meant as trees of one class each, in which vessels of no class hold much of the resistance.
+
+    Not those whose terminals a person told: who knows where blood enters and leaves knows the network.
+    """
     network = flow.terminals.segment_network
     n_networks = len(flow.network_flags)
     is_unsaid = measured.graph.vessel_class == VesselClass.NONE
     held = sum_by(network, np.where(is_unsaid, np.nan_to_num(flow.share), 0.0), n_networks)
     several = np.bincount(network, minlength=n_networks) > 1  # a vessel by itself mixes nothing
-    told = np.where(several & (held > UNSAID_SHARE), int(Flag.CLASS_UNSAID), 0)
+    by_shape = np.array(flow.terminals.source) == "auto"
+    told = np.where(several & by_shape & (held > UNSAID_SHARE), int(Flag.CLASS_UNSAID), 0)
     return replace(flow, network_flags=flow.network_flags | told)
 
 
