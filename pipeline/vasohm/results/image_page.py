@@ -65,6 +65,11 @@ SEGMENT_NAMES = (
     "share",
     "flags",
 )
+EYE = (
+    ("crae_um", "central retinal artery equivalent", " µm"),
+    ("crve_um", "central retinal vein equivalent", " µm"),
+    ("avr", "artery over vein", ""),
+)
 TEXT_NAMES = {"class", "terminals", "scenario", "flags"}
 
 
@@ -108,7 +113,28 @@ def _summary(tables: ImageTables) -> Html:
         (Html(f"{shown(row['length_um'] / UM_PER_MM).source} mm"), "length of vessels", False),
         (str(doubtful), "segments of doubtful radius", bool(doubtful)),
     ]
-    return Html(tiles(numbers).source + paragraph(f"Pixel size: {size}.").source)
+    return Html(tiles(numbers).source + paragraph(f"Pixel size: {size}.").source + _eye(tables).source)
+
+
+def _eye(tables: ImageTables) -> Html:
+    """Show what an eye is asked for first: calibre equivalents, and the resistance of its trees by class."""
+    row, told = tables.image.iloc[0], []
+    for name, words, unit in EYE:
+        if name in row.index and not np.isnan(row[name]):
+            se = shown(row[f"{name.removesuffix('_um')}_se{unit and '_um'}"], 2).source
+            told.append((Html(f"{shown(row[name]).source} ± {se}{unit}"), f"{words} (k = 1)", False))
+    for kind in ("arteriole", "venule"):
+        trees = tables.networks[
+            (tables.networks["vessel_class"] == kind) & tables.networks["resistance_pa_s_m3"].notna()
+        ]
+        if len(trees):
+            tree = _longest_first(trees).iloc[0]
+            columns = ("resistance_pa_s_m3", "resistance_lo_pa_s_m3", "resistance_hi_pa_s_m3")
+            words = (
+                f"Pa·s/m³, 95 % interval, of the longest {kind[:-1]}ar tree that has one, network {tree['network_id']}"
+            )
+            told.append((interval(*(float(tree[name]) for name in columns)), words, False))
+    return tiles(told) if told else Html("")
 
 
 def _plain(tables: ImageTables, overlay: ColourBy | None) -> Html:

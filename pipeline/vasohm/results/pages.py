@@ -303,6 +303,8 @@ def _line(glance: _Glance, design: Sequence[str]) -> list[str | Html]:
     if glance.largest is not None:
         columns = ("resistance_pa_s_m3", "resistance_lo_pa_s_m3", "resistance_hi_pa_s_m3")
         resistance = interval(*(_number(glance.largest[name]) for name in columns))
+        if kind := glance.largest["vessel_class"]:
+            resistance = Html(f"{resistance.source}<br>{html(kind)}s", resistance.value)
         if _why_none(glance.largest):
             resistance = "none"
     return [

@@ -31,7 +31,7 @@ def why_no_resistance(resistance_pa_s_m3: float, flags: str) -> str:
 
 def pixel_size_words(size_um: float, se_um: float, source: str) -> str:
     """Pixel size with its standard uncertainty and where it comes from."""
-    doubt = "its uncertainty is not told" if math.isnan(se_um) else f"± {se_um:g} µm (k = 1)"
+    doubt = "its uncertainty is not told" if math.isnan(se_um) else f"± {se_um:.2g} µm (k = 1)"
     return f"{size_um:g} µm{', ' if math.isnan(se_um) else ' '}{doubt}, from {SCALE_SOURCES.get(source, source)}"
 
 
