@@ -13,6 +13,7 @@ import sys
 import time
 from collections.abc import Callable
 from pathlib import Path
+from typing import Any
 
 import numpy as np
 import pytest
@@ -142,16 +143,16 @@ def test_a_write_that_fails_costs_the_image_and_leaves_no_rest(
 ) -> None:
     """The second image's points cannot be written once: nothing half done may stand there, the next one is tried."""
     study, out = make_study(), tmp_path / "out"
-    whole = write._write_durably
+    whole = write._write_pieces
 
-    def failing(path: Path, content: bytes) -> None:
+    def failing(path: Path, file: write.EncodedFile) -> dict[str, Any]:
         if path.name == "points.csv" and "image-1" in path.parent.name:
-            path.write_bytes(content[:100])
+            path.write_bytes(next(iter(file.pieces))[:100])
             raise OSError(number, os.strerror(number), str(path))
-        whole(path, content)
+        return whole(path, file)
 
     with monkeypatch.context() as patch:
-        patch.setattr(write, "_write_durably", failing)
+        patch.setattr(write, "_write_pieces", failing)
         ended = study.measure(out)
     assert ended.status == 1
     assert states(out) == {"image-0": "measured", "image-1": "failed", "image-2": "measured"}
