@@ -9,12 +9,12 @@ import numpy as np
 import pandas as pd
 import pytest
 
+from vasohm.cohorts.matching import pair_places
 from vasohm.flow.rheology import Blood, BloodSettings, make_blood
 from vasohm.study.accuracy import Appraisal, sum_up
 from vasohm.study.annotation import Agreement, agreement
 from vasohm.study.certificate import draw_certificate, summary_lines
 from vasohm.study.deviations import Bed, deviations
-from vasohm.cohorts.matching import pair_places
 from vasohm_synthetic import blood as true_blood
 from vasohm_synthetic.clearance import Field
 from vasohm_synthetic.mesh import MeshShape, mesh_scene
