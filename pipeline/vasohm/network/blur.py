@@ -14,6 +14,7 @@ from vasohm.network.jointfit import (
     Normal,
     Observed,
     Priors,
+    banded,
     factor,
     fit_joint,
     normal_equations,
@@ -344,7 +345,7 @@ def _ln_width(case: _Case, normal: Normal) -> float:
     flat one would depend on whether radius or area is meant, and thin vessels would tell the blur by it.
     """
     observed = case.observed
-    factored = factor(normal.matrix, case.priors.full(observed.segment), case.priors.hold)
+    factored = factor(banded(normal.matrix), case.priors.full(observed.segment), case.priors.hold)
     share = 1.0 / np.diff(observed.offsets)[observed.segment]
     n_unknowns = normal.gradient.shape[1]
     kept = [LN_R, LN_C, *range(REFLEX, n_unknowns)]

@@ -5,7 +5,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from vasohm.arrays import BoolArray, FloatArray, IntArray, freeze
-from vasohm.network.jointfit import LN_C, LN_R, Normal, Observed, Priors, factor, solve
+from vasohm.network.jointfit import LN_C, LN_R, Normal, Observed, Priors, banded, factor, solve
 
 RESOLVED_SE = 0.05  # of ln r: segments known better tell their contrast
 SMALLEST_SPREAD = 0.03  # of ln contrast between segments
@@ -38,7 +38,7 @@ def segment_contrasts(
     """Mean ln contrast of each segment, its variance, and the variance of the mean ln r."""
     counts = np.maximum(np.diff(observed.offsets), 1)
     share = 1.0 / counts[observed.segment]
-    factored = factor(normal.matrix, priors.full(observed.segment), priors.hold)
+    factored = factor(banded(normal.matrix), priors.full(observed.segment), priors.hold)
     right = np.zeros((*theta.shape, 2))
     right[:, LN_C, 0] = share
     right[:, LN_R, 1] = share

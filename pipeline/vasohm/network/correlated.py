@@ -6,7 +6,7 @@ import numpy as np
 from scipy import fft
 
 from vasohm.arrays import FloatArray, freeze
-from vasohm.network.jointfit import LN_C, LN_R, Observed, factor, model_strips, solve
+from vasohm.network.jointfit import LN_C, LN_R, Observed, banded, factor, model_strips, solve
 from vasohm.network.noise import LAGS_PX
 from vasohm.network.priors import Expected, make_priors
 from vasohm.network.profiles import ProfileTable, ln_height
@@ -79,7 +79,7 @@ def _factor_at(table: ProfileTable, kernel: FloatArray, ln_r: float, cnr: float,
     result = float(kernel[LAGS_PX, LAGS_PX])
     for _ in range(ROUNDS):
         matrix = np.broadcast_to(design @ design.T / result, (n, 5, 5))
-        influence = solve(factor(matrix, priors.full(segment), priors.hold), mean) @ design
+        influence = solve(factor(banded(matrix), priors.full(segment), priors.hold), mean) @ design
         spread = float(np.sum(influence * _convolved(influence, kernel)))
         result = float(np.clip(spread / np.sum(influence**2), *FACTOR_RANGE))
     return result

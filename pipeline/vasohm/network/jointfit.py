@@ -225,17 +225,24 @@ def prior_pull(priors: Priors, theta: FloatArray, segment: IntArray) -> tuple[Fl
 # --- solving --------------------------------------------------------------------------------------------------------
 
 
-def factor(matrix: FloatArray, diagonals: FloatArray, hold: FloatArray) -> FloatArray:
-    """Banded Cholesky factor (2 B + 1, n B) of data plus priors, lower form."""
-    n, n_unknowns = hold.shape
+def banded(matrix: FloatArray) -> FloatArray:
+    """Lower form (n, B, 2 B + 1) of (n, B, B) blocks on the diagonal: each unknown's own, and those that come after."""
+    n, n_unknowns = matrix.shape[:2]
     band = np.zeros((n, n_unknowns, 2 * n_unknowns + 1))
-    for a in range(n_unknowns):
-        for b in range(a + 1):
-            band[:, b, a - b] = matrix[:, a, b]
+    for low in range(0, n, CHUNK):
+        part = slice(low, low + CHUNK)
+        for one in range(n_unknowns):
+            band[part, one, : n_unknowns - one] = matrix[part, one:, one]
+    return band
+
+
+def factor(band: FloatArray, diagonals: FloatArray, hold: FloatArray) -> FloatArray:
+    """Cholesky factor (2 B + 1, n B), lower form, of `banded` data, which is overwritten, plus priors."""
+    n_unknowns = hold.shape[1]
     band[:, :, 0] += diagonals[0] + hold
     band[:, :, n_unknowns] = diagonals[1]
     band[:, :, 2 * n_unknowns] = diagonals[2]
-    flat = band.reshape(n * n_unknowns, -1).T
+    flat = band.reshape(-1, band.shape[2]).T
     done: FloatArray = cholesky_banded(flat, overwrite_ab=True, lower=True, check_finite=False)
     return done
 
@@ -277,8 +284,9 @@ def fit_joint(
         if len(points) == 0:
             break
         own = segment[points]
-        extra = damping[own, None] * np.einsum("nii->ni", best.matrix[points])
-        factored = factor(best.matrix[points], diagonals[:, points], priors.hold[points] + extra)
+        band = banded(best.matrix[points])
+        extra = damping[own, None] * band[:, :, 0]
+        factored = factor(band, diagonals[:, points], priors.hold[points] + extra)
         slope = best.gradient[points] + pull[points]
         step = solve(factored, slope)
         step /= _overlong(step / limit, own, observed.n_segments)[own, None]

@@ -11,6 +11,7 @@ from vasohm.network.jointfit import (
     Normal,
     Observed,
     Priors,
+    banded,
     factor,
     prior_pull,
     solve,
@@ -100,13 +101,14 @@ def _evidence(observed: Observed, priors: Priors, theta: FloatArray, normal: Nor
     pull, cost = prior_pull(zero, theta, observed.segment)
     bent = times(priors.bend, theta[:, LN_R])
     right, diagonals = normal.gradient + pull, zero.full(observed.segment)
+    band = banded(normal.matrix)
     columns, moves = [], []
     for log10 in LOG10_STIFFNESS:
         stiffness = 10.0**log10
         stiff, drawn = diagonals.copy(), right.copy()
         stiff[:, :, LN_R] += stiffness * priors.bend
         drawn[:, LN_R] -= stiffness * bent
-        factored = factor(normal.matrix, stiff, priors.hold)
+        factored = factor(band.copy(), stiff, priors.hold)
         step = solve(factored, drawn)
         gain = 0.5 * np.sum(drawn * step, axis=1)
         moves.append(step[:, LN_R])

@@ -12,6 +12,7 @@ from vasohm.network.jointfit import (
     Normal,
     Observed,
     Priors,
+    banded,
     factor,
     model_strips,
     prior_pull,
@@ -114,7 +115,7 @@ class Marginal:
 
 def marginalise(observed: Observed, priors: Priors, theta: FloatArray, normal: Normal, response: Response) -> Marginal:
     """Take the unknowns of the points out (Schur complement of the joint normal equations)."""
-    factored = factor(normal.matrix, priors.full(observed.segment), priors.hold)
+    factored = factor(banded(normal.matrix), priors.full(observed.segment), priors.hold)
     answer = solve(factored, response.mixed)
     pull = normal.gradient + prior_pull(priors, theta, observed.segment)[0]
     k = response.gradient.shape[1]
