@@ -33,7 +33,8 @@ def column_cells(values: "pd.Series[Any]", column: Column) -> list[str]:
     DomainError : an infinite value, which no quantity of ours can have.
     """
     if column.type == "boolean":
-        return ["" if pd.isna(value) else _TRUTH[bool(value)] for value in values.tolist()]
+        missing = values.isna().tolist()
+        return ["" if none else _TRUTH[bool(value)] for value, none in zip(values.tolist(), missing, strict=True)]
     if column.type in ("integer", "number"):
         numbers = values.to_numpy(dtype=np.float64, na_value=np.nan)
         if np.isinf(numbers).any():
@@ -43,7 +44,8 @@ def column_cells(values: "pd.Series[Any]", column: Column) -> list[str]:
         if column.type == "integer":
             return ["" if value != value else str(int(value)) for value in numbers.tolist()]  # noqa: PLR0124 (NaN)
         return ["" if value != value else repr(value) for value in numbers.tolist()]  # noqa: PLR0124 (NaN)
-    texts = ["" if pd.isna(value) else str(value) for value in values.tolist()]
+    missing = values.isna().tolist()
+    texts = ["" if none else str(value) for value, none in zip(values.tolist(), missing, strict=True)]
     safe = {value: guard_text(value) for value in set(texts)}
     return [safe[value] for value in texts]
 
