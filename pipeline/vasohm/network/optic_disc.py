@@ -27,6 +27,7 @@ LEAST_TEXTURE = 0.5  # of 255 grey levels
 MOST_PLACES = 12  # whose margin is fitted
 ALIKE_RADII, ALIKE_LN = 0.35, 0.3  # places so near each other, of sizes so like, lead to the same margin
 WIDER = 1.15  # times as wide: another margin around the first, not the same one
+MIDDLE = 0.5  # of the disc's radius: a cup's centre lies no further from the disc's; common practice, no source
 NEAR = (1.1, 3.0)  # radii from the centre, between which vessels are asked whether they point at it
 RING = (1.1, 1.7)  # and between which trunks are counted
 NO_WIDTH = 0.5  # of vessels where there are none, over the typical one
@@ -112,7 +113,8 @@ def _outermost(found: list[tuple[float, Circle]]) -> tuple[float, Circle]:
 
 def _holds(outer: Circle, inner: Circle) -> bool:
     apart = float(np.hypot(outer.x - inner.x, outer.y - inner.y))
-    return outer.radius > WIDER * inner.radius and apart + inner.radius < WIDER * outer.radius
+    is_about_its_middle = apart < MIDDLE * outer.radius and apart + inner.radius < WIDER * outer.radius
+    return outer.radius > WIDER * inner.radius and is_about_its_middle
 
 
 def _before_rival(share: float, rival: float) -> float:
