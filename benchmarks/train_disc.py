@@ -43,15 +43,15 @@ ROOT = Path(__file__).resolve().parents[1]
 MODULE = ROOT / "pipeline" / "vasohm" / "network" / "disc_weights.py"
 Seeds = Mapping[str, tuple[int, ...]]
 TRAINED: Seeds = {
-    "fundus": tuple(range(1101, 1113)),
-    "border": tuple(range(1201, 1205)),
-    "tree": tuple(range(1301, 1305)),
-    "mesh": tuple(range(1401, 1405)),
+    "fundus": (*range(1101, 1113), *range(3101, 3107)),
+    "border": (*range(1201, 1205), *range(3201, 3204)),
+    "tree": (*range(1301, 1305), 3301, 3302),
+    "mesh": (*range(1401, 1405), 3401, 3402),
 }
 FRESH: Mapping[str, Seeds] = {
     "clean": {"fundus": tuple(range(2101, 2107)), "border": (2201, 2202)},
     "hard": {
-        "fundus": tuple(range(3101, 3107)), "border": (3201, 3202, 3203), "tree": (3301, 3302), "mesh": (3401, 3402),
+        "fundus": tuple(range(4101, 4107)), "border": (4201, 4202, 4203), "tree": (4301, 4302), "mesh": (4401, 4402),
     },
 }  # fmt: skip
 LOOKS = (("sharp", "dim", "spots", "none"), ("soft", "ragged", "spots", "none-spots"))  # of a scene, seed by seed
@@ -61,7 +61,7 @@ EVEN_BRIGHTNESS = {"bright": (0.4, 0.8), "even": (0.3, 0.6), "faint": (0.2, 0.5)
 SIDE_PX = (420, 540)
 FIELD_SHARE = 0.48  # radius of a round field of view over the side; one picture in five is seen whole
 DISC_SHARE = (0.045, 0.12)  # radius over the field's diameter: fields of 60 to 25 degrees
-MOST_TRIES = 30  # layouts drawn before one finds room
+MOST_TRIES = 100  # layouts drawn before one finds room
 PIXEL_UM, RADII_UM = 7.0, (7.0, 70.0)
 GREEN = Channel(0.38, {"arteriole": 0.9, "venule": 1.1})
 BRIGHTEST = 0.9  # of full scale: pictures are exposed for their brightest part
@@ -120,7 +120,7 @@ def fundus(side: int, rng: np.random.Generator, *, at_border: bool) -> Scene:
     side_on = rng.uniform(0, 2 * np.pi)
     trunks = int(rng.integers(2, 6))
     if at_border:
-        away = reach - radius * rng.uniform(-0.3, 0.9)
+        away = reach - radius * rng.uniform(0.05, 0.9)
         headings = np.degrees(side_on) + 180 + np.linspace(-60, 60, trunks) + rng.uniform(-8, 8, trunks)
     else:
         away = min(reach * rng.uniform(0, 0.62), reach - 1.15 * radius)
