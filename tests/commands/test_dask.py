@@ -151,7 +151,7 @@ def test_two_workers_give_the_bytes_of_one_machine_and_losing_one_costs_nothing(
     assert contents(out) == undisturbed
 
 
-@pytest.mark.slow
+@pytest.mark.heavy
 def test_an_image_that_ends_its_workers_is_given_up_and_the_others_are_measured(
     make_study: MakeStudy, make_cluster: MakeCluster, tmp_path: Path, undisturbed: dict[str, str]
 ) -> None:
@@ -172,7 +172,7 @@ def test_an_image_that_ends_its_workers_is_given_up_and_the_others_are_measured(
             assert now[f"images/{image_id}/{name}"] == undisturbed[f"images/{image_id}/{name}"]
 
 
-@pytest.mark.slow
+@pytest.mark.heavy
 def test_an_image_that_takes_too_long_is_ended_and_its_worker_goes_on(
     make_study: MakeStudy, make_cluster: MakeCluster, tmp_path: Path, undisturbed: dict[str, str]
 ) -> None:
@@ -193,7 +193,7 @@ def test_an_image_that_takes_too_long_is_ended_and_its_worker_goes_on(
         assert now[f"images/{image_id}/segments.csv"] == undisturbed[f"images/{image_id}/segments.csv"]
 
 
-@pytest.mark.slow
+@pytest.mark.heavy
 def test_workers_that_all_end_at_once_are_no_images_fault(
     make_study: MakeStudy, make_cluster: MakeCluster, tmp_path: Path, undisturbed: dict[str, str]
 ) -> None:
@@ -246,7 +246,7 @@ def test_a_lost_scheduler_is_a_clear_end_and_the_same_command_goes_on(
     assert contents(out) == undisturbed
 
 
-@pytest.mark.slow
+@pytest.mark.heavy
 def test_an_interrupt_lets_images_on_workers_finish(
     make_study: MakeStudy, make_cluster: MakeCluster, tmp_path: Path, undisturbed: dict[str, str]
 ) -> None:
@@ -263,7 +263,7 @@ def test_an_interrupt_lets_images_on_workers_finish(
     assert contents(out) == undisturbed
 
 
-@pytest.mark.slow
+@pytest.mark.heavy
 @pytest.mark.filterwarnings("ignore::distributed.versions.VersionMismatchWarning")
 def test_workers_that_would_measure_otherwise_are_refused_by_name(
     make_study: MakeStudy, make_cluster: MakeCluster, tmp_path: Path

@@ -81,7 +81,7 @@ def test_gather_names_the_images_of_missing_parts_and_of_parts_that_were_interru
     assert whole["counts"] == {"measured": 1, "empty": 0, "failed": 0, "pending": 3}
 
 
-@pytest.mark.slow
+@pytest.mark.heavy
 def test_the_same_part_again_changes_nothing(make_study: MakeStudy, tmp_path: Path) -> None:
     """Batch systems start tasks twice: after a requeue, or because somebody did."""
     study, out = make_study(2), tmp_path / "out"
@@ -145,7 +145,7 @@ def test_the_ready_scripts_run_one_part(make_study: MakeStudy, script: str) -> N
     assert part["sheet"] == list(study.ids)
 
 
-@pytest.mark.slow
+@pytest.mark.heavy
 def test_two_machines_that_run_one_part_at_once_leave_it_whole(
     make_study: MakeStudy, tmp_path: Path, undisturbed: dict[str, str]
 ) -> None:

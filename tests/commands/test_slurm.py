@@ -25,7 +25,7 @@ SCRIPT = Path(__file__).parents[2] / "configs" / "slurm-array.sh"
 ABSENT = [name for name in NEEDED if shutil.which(name, path=f"{os.environ['PATH']}:/usr/sbin") is None]
 
 pytestmark = [
-    pytest.mark.slow,
+    pytest.mark.heavy,
     pytest.mark.skipif(
         bool(ABSENT),
         reason=f"{', '.join(ABSENT)} not installed (Debian: apt-get install slurmctld slurmd slurm-client munge)",
