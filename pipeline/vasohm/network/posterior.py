@@ -72,6 +72,8 @@ class BandedCovariance:
 
         With the inverse covariance factored as L L', that is the square of L^-1 gradient: half a solution tells it.
         """
+        if not len(self.segment):  # of which the library makes a fault
+            return np.zeros(self.n_segments)
         right = np.zeros((len(self.segment), self.n_unknowns))
         right[:, LN_R] = gradient
         half = dtbsv(len(self.factored) - 1, self.factored, right.ravel(), lower=1, overwrite_x=1)
