@@ -75,18 +75,22 @@ def classify_vessels(
     """
     if settings.method == "none" or measured.graph.n_segments == 0:
         return measured, ()
+    graph = measured.graph
+    given = graph.vessel_class != VesselClass.NONE
+    person = f"{given.sum()} of {len(given)} segments told by class file or edits" if given.any() else ""
+    if given.all():
+        return measured, (f"classes: {person}",)
+    person += "; " if person else ""
     fault = _no_colour(raw, prepared)
     if fault:
-        return measured, (f"classes: none from colour: {fault}",)
-    graph = measured.graph
+        return measured, (f"classes: {person}none from colour: {fault}",)
     around, at_disc = _circumstances(measured, disc)
     told = SIDE[graph.vessel_class]
     colours = measure_colours(measured, raw.pixels, prepared.fov & ~prepared.clipped, raw.white_level)
     links = links_of(graph, at_disc)
     evidence = weigh_colours(colours, around, links, told)
     if evidence.fault:
-        return measured, (f"classes: none from colour: {evidence.fault}",)
-    given = graph.vessel_class != VesselClass.NONE
+        return measured, (f"classes: {person}none from colour: {evidence.fault}",)
     sure = np.clip(np.where(told == 0, 0.5, graph.class_probability), 0.5, SUREST)
     own = np.where(given, told * np.log(sure / (1 - sure)), evidence.log_odds)
     venule, _ = infer(links, own)
@@ -99,8 +103,8 @@ def classify_vessels(
         class_probability=np.where(given, graph.class_probability, probability),
     )
     n_said = int((said[~given] != VesselClass.NONE).sum())
-    note = f"classes: {n_said} of {int((~given).sum())} segments by colour (distance {evidence.distance:.1f})"
-    return replace(measured, graph=new), (note,)
+    others = f"{n_said} of {int((~given).sum())} {'others' if person else 'segments'} told by colour"
+    return replace(measured, graph=new), (f"classes: {person}{others}, its groups {evidence.distance:.1f} sd apart",)
 
 
 def _no_colour(raw: RawImage, prepared: PreparedImage) -> str:

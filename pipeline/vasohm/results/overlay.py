@@ -185,7 +185,7 @@ def _draw(
     _draw_segments(axes, tables, colours, pale=colour_by != "share", line_pt=line_pt)
     _draw_disc(axes, tables.image.iloc[0], sheet.letter_pt)
     if colour_by == "class":
-        _draw_class_legend(figure, (sheet.wide + 0.5 * letter) / total[0])
+        _draw_class_legend(figure, set(tables.segments["vessel_class"]), (sheet.wide + 0.5 * letter) / total[0])
     elif norm is not None:
         low_left = ((sheet.wide + 1.5 * letter) / total[0], (sheet.foot + 0.05 * sheet.high) / total[1])
         bar = figure.add_axes((*low_left, 1.5 * letter / total[0], 0.9 * sheet.high / total[1]))
@@ -199,9 +199,11 @@ def _draw(
     _draw_scale_bar(figure, left, 0.5 * sheet.foot, length_px=length_px, label=shown)
 
 
-def _draw_class_legend(figure: Figure, left: float) -> None:
-    """Name the colours beside the picture."""
-    shown = {**CLASS_COLOURS, "not said": GREY}
+def _draw_class_legend(figure: Figure, there: set[str], left: float) -> None:
+    """Name the colours of the classes that are there beside the picture."""
+    shown = {word: colour for word, colour in CLASS_COLOURS.items() if word in there}
+    if there - set(CLASS_COLOURS):
+        shown["not said"] = GREY
     handles = [Patch(facecolor=colour, edgecolor="black", label=word) for word, colour in shown.items()]
     figure.legend(handles=handles, loc="center left", bbox_to_anchor=(left, 0.5), frameon=False, handlelength=1.0)
 
