@@ -1,10 +1,11 @@
-"""The table of blurred profiles against quadrature, and its areas against closed forms."""
+"""The table of blurred profiles against quadrature, its areas against closed forms, and who votes on a profile."""
 
 import numpy as np
 import pytest
 from radius_truth import gaussian_profile, height
 from scipy.special import iv, modstruve
 
+from vasohm.network.blur import advantage
 from vasohm.network.profiles import (
     Optics,
     ln_area,
@@ -109,3 +110,16 @@ def test_half_height_width_of_a_projected_cylinder_is_too_small():
     blur_lowers_the_top = 0.005
     assert ratio == pytest.approx(np.sqrt(3) / 2, abs=blur_lowers_the_top)
     assert ratio**-4 == pytest.approx(16 / 9, rel=4 * blur_lowers_the_top)
+
+
+def test_a_segment_traced_across_two_vessels_has_no_vote_on_the_profile():
+    """One such segment, which no profile explains, outvoted a whole photograph: its vessels became slabs."""
+    segment = np.repeat(np.arange(6), 20)
+    cylinder = np.full(len(segment), 4.0)
+    slab = cylinder + 0.5  # every sound strip says cylinder, by half a unit of log likelihood
+    wrong = segment == 5
+    cylinder[wrong], slab[wrong] = 40.0, 15.0
+    cylinder[np.flatnonzero(wrong)[:8]], slab[np.flatnonzero(wrong)[:8]] = 400.0, 250.0
+    assert advantage(cylinder, slab, segment) == pytest.approx(0.5 * np.count_nonzero(~wrong))
+    swapped = advantage(slab, cylinder, segment)
+    assert swapped == pytest.approx(-0.5 * np.count_nonzero(~wrong))
