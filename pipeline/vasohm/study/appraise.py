@@ -20,6 +20,7 @@ from vasohm.study.deviations import Bed, deviations
 from vasohm.study.folder import image_folder, probe
 from vasohm.study.outcome import EMPTY, MEASURED
 from vasohm.study.state import StudyState, read_json, state_from
+from vasohm.study.table_file import read_columns
 
 # What is needed of each table; true tables may lack what is stated about a measurement only.
 NEEDED: Mapping[str, tuple[str, ...]] = {
@@ -177,25 +178,9 @@ def read_table(path: Path, *, ours: bool) -> pd.DataFrame:
     RequestError
         When it is not there, is no table, or lacks columns.
     """
-    columns = COLUMNS[path.stem]
-    numbers = [column.name for column in columns if column.type in ("number", "integer")]
-    texts = [column.name for column in columns if column.type in ("string", "list")]
-    wanted = {*numbers, *texts}
+    columns = [column for column in COLUMNS[path.stem] if column.type != "boolean"]
     again = "Measure this image again." if ours else "Make the phantoms again, or give the folder as it was written."
-    try:
-        table = pd.read_csv(
-            path,
-            usecols=lambda name: name in wanted,
-            dtype=dict.fromkeys(texts, str) | dict.fromkeys(numbers, np.float64),
-            keep_default_na=False,
-            na_values={name: [""] for name in numbers},
-        )
-    except FileNotFoundError:
-        raise RequestError([Problem(file=str(path), message=f"is not there. {again}")]) from None
-    except (OSError, ValueError) as fault:
-        reason = getattr(fault, "strerror", None) or " ".join(str(fault).split())
-        message = f"cannot be read as a table of {path.stem}: {reason}. {again}"
-        raise RequestError([Problem(file=str(path), message=message)]) from None
+    table = read_columns(path, path.stem, columns, again)
     needed = (*NEEDED[path.stem], *(NEEDED_OF_OURS if ours else NEEDED_OF_TRUTH).get(path.stem, ()))
     wanting = sorted(set(needed) - set(table.columns))
     if wanting or (path.stem == "image" and len(table) != 1):

@@ -13,6 +13,7 @@ from vasohm.results.columns_cohorts import ZONE
 from vasohm.results.columns_images import DISC
 from vasohm.results.schema import COLUMNS, GATHERED, outcome_columns
 from vasohm.study.folder import image_folder
+from vasohm.study.table_file import read_columns
 
 _OF_DISC = {column.name for column in DISC}
 
@@ -70,24 +71,10 @@ def read_zone(results_dir: Path, images: pd.DataFrame) -> pd.DataFrame:
 def _read(path: Path, table: str, needed: Collection[str], again: str) -> pd.DataFrame:
     """Read columns of a table: numbers as float64, texts as they stand, empty for none."""
     columns = outcome_columns(table) if table == "image" else COLUMNS[table]
-    kinds = {column.name: column.type for column in columns if column.name in needed}
-    numbers = [name for name, kind in kinds.items() if kind in ("number", "integer")]
-    texts = [name for name in kinds if name not in numbers]
-    try:
-        frame = pd.read_csv(
-            path,
-            usecols=lambda name: name in kinds,
-            dtype=dict.fromkeys(texts, str) | dict.fromkeys(numbers, np.float64),
-            keep_default_na=False,
-            na_values={name: [""] for name in numbers},
-        )
-    except FileNotFoundError:
-        raise RequestError([Problem(file=str(path), message=f"is not there. {again}")]) from None
-    except (OSError, ValueError) as fault:
-        reason = getattr(fault, "strerror", None) or " ".join(str(fault).split())
-        message = f"cannot be read as a table of {table}: {reason}. {again}"
-        raise RequestError([Problem(file=str(path), message=message)]) from None
-    absent = set(kinds) - set(frame.columns)
+    wanted = [column for column in columns if column.name in needed]
+    frame = read_columns(path, table, wanted, again)
+    texts = [column.name for column in wanted if column.type not in ("number", "integer")]
+    absent = {column.name for column in wanted} - set(frame.columns)
     if absent - _OF_DISC:
         message = f"lacks {', '.join(sorted(absent - _OF_DISC))}. {again}"
         raise RequestError([Problem(file=str(path), message=message)])
